@@ -1,0 +1,26 @@
+package vcov
+
+import "github.com/tallrow/tallrow/accum"
+
+// Kind asks for standard errors of one kind.
+type Kind struct {
+	Name    string // classical, hc0, hc1, hc2, hc3, cr0, cr1
+	Cluster int    // index into Design.Keys for cr0 and cr1, else -1
+}
+
+// Options say what to compute and how.
+type Options struct {
+	Errors []Kind
+	Level  float64 // of intervals; 0 means 0.95
+	// Passes forces one or two passes; 0 lets the planner choose.
+	Passes int
+	// Workers is the number of goroutines that read and sum; 0 means one for
+	// each processor.
+	Workers int
+	// Memory bounds what the sums may take, in bytes; 0 means 2 GiB.
+	Memory int64
+	// Covariance asks for the matrix beyond 200 terms.
+	Covariance bool
+	// Meter, if not nil, is counted up while the scan runs.
+	Meter *accum.Meter
+}

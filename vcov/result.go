@@ -1,0 +1,196 @@
+package vcov
+
+import (
+	"math"
+	"strconv"
+)
+
+// Format is the name and version of the JSON form of a Result.
+const Format = "tallrow-fit/1"
+
+// Number is a float64 whose JSON form is the shortest decimal that gives the
+// same bits back, and null for NaN and infinities: "does not exist".
+type Number float64
+
+// MarshalJSON implements json.Marshaler.
+func (n Number) MarshalJSON() ([]byte, error) {
+	f := float64(n)
+	if math.IsNaN(f) || math.IsInf(f, 0) {
+		return []byte("null"), nil
+	}
+	return strconv.AppendFloat(nil, f, 'g', -1, 64), nil
+}
+
+// UnmarshalJSON implements json.Unmarshaler; null gives NaN.
+func (n *Number) UnmarshalJSON(b []byte) error {
+	if string(b) == "null" {
+		*n = Number(math.NaN())
+		return nil
+	}
+	f, err := strconv.ParseFloat(string(b), 64)
+	*n = Number(f)
+	return err
+}
+
+// Exists reports whether the number is there.
+func (n Number) Exists() bool { return !math.IsNaN(float64(n)) && !math.IsInf(float64(n), 0) }
+
+// Result is a fitted model: plain data, the same as its JSON form.
+type Result struct {
+	Format     string            `json:"format"`
+	Version    string            `json:"version"`
+	Outcome    string            `json:"outcome"`
+	Model      Model             `json:"model"`
+	Input      Input             `json:"input"`
+	Rows       Rows              `json:"rows"`
+	N          int64             `json:"n"`
+	Weight     WeightSum         `json:"weight"`
+	Rank       int               `json:"rank"`
+	Terms      []string          `json:"terms"`
+	Estimates  []Number          `json:"estimates"`
+	Aliased    []Alias           `json:"aliased"`
+	BaseLevels map[string]string `json:"base_levels"`
+	Residual   Residual          `json:"residual"`
+	R2         Number            `json:"r2"`
+	R2Adjusted Number            `json:"r2_adjusted"`
+	R2Kind     string            `json:"r2_kind"` // "centred" or "uncentred"
+	Errors     []Errors          `json:"errors"`
+	Hypotheses []Hypothesis      `json:"hypotheses"`
+	Run        Run               `json:"run"`
+	Warnings   []Warning         `json:"warnings"`
+}
+
+// Model echoes what was asked.
+type Model struct {
+	Outcome    string   `json:"outcome"`
+	Terms      []string `json:"terms"`
+	Constant   bool     `json:"constant"`
+	Weight     *string  `json:"weight"`
+	WeightKind *string  `json:"weight_kind"` // "frequency", "precision", "sampling"
+	Where      *string  `json:"where"`
+	Cluster    []string `json:"cluster"`
+	Errors     []string `json:"errors"`
+	Missing    string   `json:"missing"`  // "skip" or "stop"
+	BadRows    string   `json:"bad_rows"` // "skip" or "stop"
+	Level      Number   `json:"level"`
+	Zone       string   `json:"zone"`
+}
+
+// Input identifies what was read.
+type Input struct {
+	Fingerprint string `json:"fingerprint"`
+	Files       int    `json:"files"`
+	Bytes       int64  `json:"bytes"`
+}
+
+// Rows accounts for every row: Read is the sum of the others.
+type Rows struct {
+	Read       int64            `json:"read"`
+	Used       int64            `json:"used"`
+	Missing    int64            `json:"missing"`
+	Excluded   int64            `json:"excluded"`
+	Malformed  int64            `json:"malformed"`
+	ZeroWeight int64            `json:"zero_weight"`
+	MissingBy  map[string]int64 `json:"missing_by"`
+	// Problems describes the first malformed rows, one line each.
+	Problems []string `json:"-"`
+}
+
+// WeightSum says which weights were used; Kind is nil without weights.
+type WeightSum struct {
+	Kind *string `json:"kind"`
+	Sum  Number  `json:"sum"`
+}
+
+// Alias names a term that is a linear combination of others.
+type Alias struct {
+	Term      string   `json:"term"`
+	DependsOn []string `json:"depends_on"` // empty: the term is zero in every row
+}
+
+// Residual describes the residuals.
+type Residual struct {
+	DF int64  `json:"df"`
+	SD Number `json:"sd"`
+	SS Number `json:"ss"`
+}
+
+// Errors holds the standard errors of one kind and all that follows from them.
+// Slices run over Result.Terms; what does not exist is NaN (JSON null).
+type Errors struct {
+	Kind      string   `json:"kind"`     // classical, hc0, hc1, ..., cr0, cr1
+	Clusters  []string `json:"clusters"` // the clustering expression of a cr kind
+	Groups    []int64  `json:"groups"`   // number of clusters
+	GroupRows *Spread  `json:"group_rows,omitempty"`
+	Status    string   `json:"status"` // "ok" or "unavailable"
+	Reason    *string  `json:"reason"`
+	Factor    Number   `json:"factor"`
+	SE        []Number `json:"se"`
+	DF        []Number `json:"df"`
+	T         []Number `json:"t"`
+	P         []Number `json:"p"`
+	Log10P    []Number `json:"log10_p"`
+	Low       []Number `json:"low"`
+	High      []Number `json:"high"`
+	Overall   *Overall `json:"overall"`
+	// Covariance is present up to 200 terms, or on request.
+	Covariance [][]Number `json:"covariance,omitempty"`
+}
+
+// Name gives "hc1" or "cr1(quay)".
+func (e *Errors) Name() string {
+	if len(e.Clusters) == 0 {
+		return e.Kind
+	}
+	s := e.Kind + "(" + e.Clusters[0]
+	for _, c := range e.Clusters[1:] {
+		s += ", " + c
+	}
+	return s + ")"
+}
+
+// Spread describes the sizes of clusters, in rows.
+type Spread struct {
+	Min    int64  `json:"min"`
+	Median Number `json:"median"`
+	Max    int64  `json:"max"`
+}
+
+// Overall is the joint test that all terms but the constant are zero.
+type Overall struct {
+	DF1 Number `json:"df1"`
+	DF2 Number `json:"df2"`
+	F   Number `json:"f"`
+	P   Number `json:"p"`
+}
+
+// Hypothesis is a joint test that was asked for.
+type Hypothesis struct {
+	Text   string `json:"text"`
+	Errors string `json:"errors"`
+	DF1    Number `json:"df1"`
+	DF2    Number `json:"df2"`
+	F      Number `json:"f"`
+	P      Number `json:"p"`
+}
+
+// Run says how the numbers came about.
+type Run struct {
+	Passes     int    `json:"passes"`
+	Route      string `json:"route"` // "second moments", "fourth moments", "row pass", "cluster sums"
+	Arithmetic string `json:"arithmetic"`
+	Workers    int    `json:"workers"`
+	Segments   int64  `json:"segments"`
+	Bytes      int64  `json:"bytes"` // read, all passes
+	Seconds    Number `json:"seconds"`
+	PeakBytes  int64  `json:"peak_bytes"` // of the process; set by the caller
+	Condition  Number `json:"condition"`  // of the terms as the sums hold them
+}
+
+// Warning is something the reader of the numbers must know.
+type Warning struct {
+	Code string  `json:"code"` // lower-case words joined by -
+	Term *string `json:"term"`
+	Kind *string `json:"kind"` // name of an error kind
+	Text string  `json:"text"`
+}
