@@ -33,7 +33,7 @@ const (
 	numCols
 )
 
-// Outcome and Terms are the model that Truth is about.
+// Outcome is what the demo's model explains.
 const Outcome = "minutes"
 
 // Terms returns the terms of the demo's model, as they are written in one.
@@ -41,28 +41,27 @@ func Terms() []string {
 	return []string{"pallets", "tonnes", "crew", "wet", "night", "each(barge)"}
 }
 
-// Constant is the true constant of the model, with Barges[0] as base level.
-const Constant = 60.0
-
-// Truth returns the true coefficient of each term with one column.
+// Truth returns the true coefficients of the model of Outcome by Terms with a
+// constant, named as in the result of a fit: constant, pallets, barge=deck, ...
 func Truth() map[string]float64 {
-	return map[string]float64{"pallets": truePallets, "tonnes": trueTonnes, "crew": trueCrew, "wet": trueWet, "night": trueNight}
+	m := map[string]float64{"constant": trueConstant, "pallets": truePallets, "tonnes": trueTonnes, "crew": trueCrew, "wet": trueWet, "night": trueNight}
+	for i, b := range Barges()[1:] {
+		m["barge="+b] = trueBarge[i+1]
+	}
+	return m
 }
 
-// Barges are the classes of barges in the order of their labels, and
-// BargeTruth the true difference of each to the first.
+// Barges are the classes of barges in the order of their labels; the first is
+// the base level.
 func Barges() []string { return []string{"canal", "deck", "hatch", "lighter", "motor"} }
 
-// BargeTruth returns the true coefficients of the classes, in the order of
-// Barges.
-func BargeTruth() []float64 { return append([]float64(nil), trueBarge[:]...) }
-
 const (
-	truePallets = 1.9
-	trueTonnes  = 0.35
-	trueCrew    = -3.0
-	trueWet     = 7.0
-	trueNight   = 4.0
+	trueConstant = 60.0
+	truePallets  = 1.9
+	trueTonnes   = 0.35
+	trueCrew     = -3.0
+	trueWet      = 7.0
+	trueNight    = 4.0
 
 	sdQuay, sdDay, sdCrane = 4.0, 4.0, 3.0
 	sdRow, sdRowPallet     = 1.5, 0.15
@@ -305,7 +304,7 @@ func (d *Data) row(b *stream.Batch, i int, r int64) {
 	}
 	gone := s.below(1000)
 
-	m := Constant + float64(truePallets*pallets)
+	m := trueConstant + float64(truePallets*pallets)
 	m += float64(trueTonnes * tonnes)
 	m += float64(trueCrew * float64(crew))
 	if sh.wet {

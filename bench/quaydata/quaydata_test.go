@@ -181,6 +181,8 @@ func TestRowsArePlausible(t *testing.T) {
 	}
 }
 
+var truth = Truth()
+
 // errorOf is the outcome without its systematic part; ok is false where a cell
 // is missing.
 func errorOf(b *stream.Batch, i int) (e float64, ok bool) {
@@ -188,10 +190,9 @@ func errorOf(b *stream.Batch, i int) (e float64, ok bool) {
 	if b.Cols[ColCrew].Null[i] || math.IsNaN(tonnes) {
 		return 0, false
 	}
-	tr := Truth()
-	return b.Cols[ColMinutes].F64[i] - Constant - BargeTruth()[b.Cols[ColBarge].Code[i]] - tr["tonnes"]*tonnes -
-		tr["pallets"]*float64(b.Cols[ColPallets].I64[i]) - tr["crew"]*float64(b.Cols[ColCrew].I64[i]) -
-		tr["wet"]*float64(b.Cols[ColWet].I64[i]) - tr["night"]*float64(b.Cols[ColNight].I64[i]), true
+	return b.Cols[ColMinutes].F64[i] - truth["constant"] - truth["barge="+Barges()[b.Cols[ColBarge].Code[i]]] - truth["tonnes"]*tonnes -
+		truth["pallets"]*float64(b.Cols[ColPallets].I64[i]) - truth["crew"]*float64(b.Cols[ColCrew].I64[i]) -
+		truth["wet"]*float64(b.Cols[ColWet].I64[i]) - truth["night"]*float64(b.Cols[ColNight].I64[i]), true
 }
 
 type sums struct{ n, s, ss float64 }
@@ -332,7 +333,7 @@ func TestWhatVariesBetweenWhom(t *testing.T) {
 func TestMinutesCannotBeNegative(t *testing.T) {
 	for class, name := range Barges() {
 		for p := 4.0; p <= 4+bargeRoom[class]; p++ {
-			low := Constant + truePallets*p + trueTonnes*11 + trueCrew*7 + BargeTruth()[class] -
+			low := trueConstant + truePallets*p + trueTonnes*11 + trueCrew*7 + trueBarge[class] -
 				3*(sdQuay+sdDay+sdCrane+sdRow+sdRowPallet*p)
 			if low <= 0 {
 				t.Errorf("%s with %g pallets can take %.1f minutes", name, p, low)
