@@ -1,0 +1,698 @@
+package stream
+
+import (
+	"fmt"
+	"math"
+	"math/big"
+	"slices"
+	"strconv"
+	"strings"
+	"time"
+)
+
+// NewDesign parses a model and binds it to a schema: every name is resolved and
+// every type checked. Its errors are UseErrors of one line that say where in
+// which expression what was found and what would be right.
+//
+// Terms that are the same but for spacing or the order of factors and summands
+// are refused, as are the outcome among the terms, terms that read no column,
+// and one category with two bases. A cluster may be named twice.
+func NewDesign(spec Spec, schema *Schema) (*Design, error) {
+	d := &Design{Spec: spec}
+	c := &compiler{d: d, schema: schema, known: map[string]int{}, useOf: map[int]int{}, prog: &program{where: -1, weight: -1}}
+	if err := c.design(); err != nil {
+		return nil, err
+	}
+	d.prog = c.prog
+	return d, nil
+}
+
+// Uses returns the columns that the design reads, each once: as numbers where
+// nothing more is wanted, else in their own kind.
+func (d *Design) Uses() []Use {
+	uses := make([]Use, len(d.prog.uses))
+	for i, u := range d.prog.uses {
+		uses[i] = Use{Column: u.column, AsNumber: u.asNumber()}
+	}
+	return uses
+}
+
+// OutcomeText is the canonical text of the outcome, also the last of Dense.
+func (d *Design) OutcomeText() string { return d.Dense[len(d.Dense)-1] }
+
+// WeightText is the canonical text of the weight, "" for none.
+func (d *Design) WeightText() string { return d.prog.weightText }
+
+// WhereText is the canonical text of the row filter, "" for none.
+func (d *Design) WhereText() string { return d.prog.whereText }
+
+// program is a design compiled for blocks. Instruction i writes register i and
+// reads only registers below i.
+type program struct {
+	uses   []use
+	code   []instr
+	nWhere int // code[:nWhere] is the row filter
+	where  int // register, -1 for none
+	weight int // register, -1 for none
+	dense  []int
+	cats   []keyOutput
+	keys   []keyOutput
+	// checked are the uses outside where and missing(...): their cells must not
+	// be infinite, and a dropped row is put down to those that are missing.
+	checked []int
+	// lost are the names under which dropped rows are counted: one for each of
+	// checked, then the texts of outputs.
+	lost []string
+	// denseLost, weightLost, ... are indexes into lost for the values that do
+	// not exist although every cell is there.
+	denseLost  [][]int
+	catLost    [][]int
+	keyLost    [][]int
+	weightLost []int
+	noValue    []string // texts of operations without value
+	weightText string
+	whereText  string
+	frequency  bool
+	zone       *time.Location
+	textCaches int
+}
+
+// use is a column that the program reads.
+type use struct {
+	column int
+	name   string
+	kind   Kind
+	raw    bool // wanted in its own kind
+}
+
+func (u *use) asNumber() bool { return u.kind == Float64 || !u.raw && u.kind.Numeric() }
+
+// vectorKind is the kind of the vector that a batch brings.
+func (u *use) vectorKind() Kind {
+	if u.asNumber() {
+		return Float64
+	}
+	return u.kind
+}
+
+// keyOutput says where a key comes from: straight from a column, or from a
+// register.
+type keyOutput struct {
+	kind Kind
+	use  int // index into uses, -1 if computed
+	reg  int
+	time bool // reg is a time register
+}
+
+type code uint8
+
+const (
+	codeConst     code = iota + 1 // k
+	codeCell                      // column use as float64
+	codeSeconds                   // time register a
+	codeTimeCell                  // column use, a time register
+	codeDate                      // time register a to a time register
+	codeHour                      // time register a
+	codeWeekday                   // time register a
+	codeMonth                     // time register a
+	codeNoText                    // missing(text column)
+	codeNoTime                    // missing(time register a)
+	codeNoNumber                  // missing(register a)
+	codeTextConst                 // column use compared with text
+	codeTextText                  // column use compared with column use b
+	codeBigConst                  // whole-number column use compared with bound
+	codeTimeConst                 // time register a compared with ns
+	codeTimeTime                  // time register a compared with b
+	codeNeg
+	codeNot
+	codeAdd
+	codeSub
+	codeMul
+	codeDiv
+	codeAnd
+	codeOr
+	codeCompare // register a compared with b
+	codeLog
+	codeExp
+	codeSqrt
+	codeAbs
+	codeMin
+	codeMax
+	codeHinge
+	codePow
+	codeSquare
+	codePowInt // exponent ns
+)
+
+type instr struct {
+	code  code
+	cmp   op // comparison
+	a, b  int
+	use   int
+	k     float64
+	ns    int64
+	text  string
+	bound bound
+	zoned bool
+	cache int // index of a text cache
+	// label is an index into program.noValue, -1 for operations that always
+	// have a value or are not counted.
+	label int
+}
+
+// bound is a number that whole-number cells are compared with exactly.
+type bound struct {
+	side  int // every cell is smaller (-1) or larger (+1); 0 if floor decides
+	floor uint64
+	whole bool // the number is floor itself
+}
+
+type compiler struct {
+	d      *Design
+	schema *Schema
+	prog   *program
+	known  map[string]int // instruction by its operands
+	useOf  map[int]int    // use by column
+	bind   binder
+	counts bool // outside where and missing(...)
+}
+
+// read parses and binds the expression.
+func (c *compiler) read(role, text string) (*node, error) {
+	n, err := c.parse(role, text)
+	if err == nil {
+		err = c.bind.bind(n)
+	}
+	return n, err
+}
+
+func (c *compiler) parse(role, text string) (*node, error) {
+	c.bind = binder{exprText{role, text}, c.schema, c.d.Spec.Zone}
+	return c.bind.parse()
+}
+
+func (c *compiler) readNumber(role, text string) (*node, error) {
+	n, err := c.read(role, text)
+	if err == nil {
+		err = c.bind.number(n)
+	}
+	return n, err
+}
+
+func (c *compiler) design() error {
+	d, p, spec := c.d, c.prog, &c.d.Spec
+	p.zone = spec.Zone
+	if p.zone == nil {
+		p.zone = time.UTC
+	}
+	if spec.Weight == "" && spec.WeightKind != NoWeight {
+		return Usef("a weight kind is given without a weight, want both or none")
+	}
+	if spec.Weight != "" && spec.WeightKind == NoWeight {
+		return Usef("the weight %s has no kind, want frequency, precision or sampling", quoteExpr(spec.Weight, 0))
+	}
+	if len(spec.Terms) == 0 && spec.NoConstant {
+		return Usef("the model has neither terms nor a constant, want at least one term")
+	}
+	if spec.Where != "" {
+		n, err := c.read(roleWhere, spec.Where)
+		if err != nil {
+			return err
+		}
+		if n.typ != boolValue {
+			return c.bind.errorf(n.pos, "%s is %s, want true or false%s", n, n.typ, truthHint(n))
+		}
+		p.where, p.whereText = c.number(n), n.String()
+		p.nWhere = len(p.code)
+	}
+	c.counts = true
+	outcome, err := c.readNumber(roleOutcome, spec.Outcome)
+	if err != nil {
+		return err
+	}
+	if !outcome.readsColumn() {
+		return c.bind.errorf(0, "the outcome reads no column, want one that does")
+	}
+	outcomeReg := c.number(outcome)
+	if err := c.terms(outcome); err != nil {
+		return err
+	}
+	d.Dense = append(d.Dense, outcome.String())
+	p.dense = append(p.dense, outcomeReg)
+	if spec.Weight != "" {
+		n, err := c.readNumber(roleWeight, spec.Weight)
+		if err != nil {
+			return err
+		}
+		p.weight, p.weightText = c.number(n), n.String()
+		p.frequency = spec.WeightKind == Frequency
+	}
+	for _, text := range spec.Keys {
+		n, err := c.read(roleKey, text)
+		if err != nil {
+			return err
+		}
+		if !n.readsColumn() {
+			return c.bind.errorf(0, "the cluster reads no column, want one that does")
+		}
+		col, out := c.key(n)
+		d.Keys, p.keys = append(d.Keys, col), append(p.keys, out)
+	}
+	c.names()
+	return nil
+}
+
+// parsedTerm is a term before columns of the block are given out.
+type parsedTerm struct {
+	text    string
+	numeric *node // nil for a pure category
+	cats    []int
+}
+
+func (c *compiler) terms(outcome *node) error {
+	d := c.d
+	seen := map[string]string{}
+	outcomeID := outcome.identity()
+	var parsed []parsedTerm
+	for _, text := range d.Spec.Terms {
+		n, err := c.parse(roleTerm, text)
+		if err != nil {
+			return err
+		}
+		t, err := c.term(n)
+		if err != nil {
+			return err
+		}
+		id := n.identity()
+		if id == outcomeID {
+			return c.bind.errorf(0, "the outcome is also a term, want it only once")
+		}
+		if first, ok := seen[id]; ok {
+			if first == t.text {
+				return c.bind.errorf(0, "the term %s is there twice, want it once", t.text)
+			}
+			return c.bind.errorf(0, "the term %s is there twice, first as %s, want it once", t.text, first)
+		}
+		seen[id] = t.text
+		parsed = append(parsed, t)
+	}
+	column := map[string]int{}
+	dense := func(n *node) int {
+		text := n.String()
+		j, ok := column[text]
+		if !ok {
+			j = len(d.Dense)
+			column[text] = j
+			d.Dense = append(d.Dense, text)
+			c.prog.dense = append(c.prog.dense, c.number(n))
+		}
+		return j
+	}
+	d.Terms = make([]Term, len(parsed))
+	for i, t := range parsed {
+		d.Terms[i] = Term{Text: t.text, Dense: -1, Categories: t.cats}
+		if t.cats == nil {
+			d.Terms[i].Dense = dense(t.numeric)
+		}
+	}
+	for i, t := range parsed {
+		if t.cats != nil && t.numeric != nil {
+			d.Terms[i].Dense = dense(t.numeric)
+		}
+	}
+	return nil
+}
+
+// term binds one term and collects its categories.
+func (c *compiler) term(n *node) (parsedTerm, error) {
+	b := &c.bind
+	if !n.hasEach() {
+		if err := b.bind(n); err != nil {
+			return parsedTerm{}, err
+		}
+		if err := b.number(n); err != nil {
+			return parsedTerm{}, err
+		}
+		if !n.readsColumn() {
+			hint := "the constant is there by itself, and --no-constant leaves it out"
+			if c.d.Spec.NoConstant {
+				hint = "leave out --no-constant to have a constant"
+			}
+			return parsedTerm{}, b.errorf(0, "the term reads no column; %s", hint)
+		}
+		return parsedTerm{text: n.String(), numeric: n}, nil
+	}
+	var t parsedTerm
+	for _, f := range factors(n, nil) {
+		if !f.each {
+			if f.n.hasEach() {
+				return t, b.eachInside(f.n)
+			}
+			if err := b.bind(f.n); err != nil {
+				return t, err
+			}
+			if err := b.number(f.n); err != nil {
+				return t, err
+			}
+			if !f.n.readsColumn() {
+				return t, b.errorf(f.n.pos, "the factor %s reads no column, want it left out", f.n)
+			}
+			if t.numeric == nil {
+				t.numeric = f.n
+			} else {
+				t.numeric = &node{op: opMul, args: []*node{t.numeric, f.n}, pos: f.n.pos, typ: numberValue}
+			}
+			continue
+		}
+		cat, err := c.category(f.n)
+		if err != nil {
+			return t, err
+		}
+		if slices.Contains(t.cats, cat) {
+			return t, b.errorf(f.n.pos, "%s is there twice in one product, want it once", f.n)
+		}
+		t.cats = append(t.cats, cat)
+	}
+	t.text = n.String()
+	return t, nil
+}
+
+// category finds or adds the category of an each(...).
+func (c *compiler) category(n *node) (int, error) {
+	b, d, arg := &c.bind, c.d, n.args[0]
+	n.typ = numberValue
+	if err := b.bind(arg); err != nil {
+		return 0, err
+	}
+	if !arg.readsColumn() {
+		return 0, b.errorf(arg.pos, "%s reads no column, want one that does", n)
+	}
+	cat := Category{Text: arg.String(), Base: n.base, HasBase: n.hasBase}
+	if n.hasBase && n.base == "none" {
+		cat.Base, cat.HasBase, cat.NoBase = "", false, true
+	}
+	at := slices.IndexFunc(d.Categories, func(o Category) bool { return o.Text == cat.Text })
+	if at < 0 {
+		var out keyOutput
+		cat.KeyColumn, out = c.key(arg)
+		if err := c.base(n, &cat); err != nil {
+			return 0, err
+		}
+		d.Categories, c.prog.cats = append(d.Categories, cat), append(c.prog.cats, out)
+		return len(d.Categories) - 1, nil
+	}
+	cat.KeyColumn = d.Categories[at].KeyColumn
+	if err := c.base(n, &cat); err != nil {
+		return 0, err
+	}
+	if old := d.Categories[at]; old != cat {
+		return 0, b.errorf(n.pos, "%s stands beside %s, want one base for one category", n, eachText(old))
+	}
+	return at, nil
+}
+
+func eachText(c Category) string {
+	switch {
+	case c.NoBase:
+		return "each(" + c.Text + `, base="none")`
+	case c.HasBase:
+		return "each(" + c.Text + ", base=" + strconv.Quote(c.Base) + ")"
+	}
+	return "each(" + c.Text + ")"
+}
+
+// base checks that a base can be a label of the column and spells it as labels
+// are.
+func (c *compiler) base(n *node, cat *Category) error {
+	if !cat.HasBase {
+		return nil
+	}
+	v, err := ParseKey(cat.KeyColumn, c.prog.zone, cat.Base)
+	if err != nil {
+		return c.bind.errorf(n.pos, "the base of %s: %s", n, err)
+	}
+	cat.Base = FormatKey(cat.KeyColumn, c.d.Spec.Zone, v)
+	return nil
+}
+
+// key compiles a category or cluster expression.
+func (c *compiler) key(n *node) (KeyColumn, keyOutput) {
+	col := KeyColumn{Text: n.String()}
+	if n.op == opColumn {
+		u := c.use(n.col, true)
+		col.Kind, col.Zoned, col.DateOnly = n.kind, n.zoned, n.dateOnly
+		return col, keyOutput{kind: n.kind, use: u, reg: -1}
+	}
+	switch {
+	case n.typ == timeValue:
+		col.Kind, col.DateOnly = Time, true
+		return col, keyOutput{kind: Time, use: -1, reg: c.time(n), time: true}
+	case n.typ == boolValue:
+		col.Kind = Bool
+	case n.isCall("hour") || n.isCall("weekday") || n.isCall("month"):
+		col.Kind = Int64
+	default:
+		col.Kind = Float64
+	}
+	return col, keyOutput{kind: col.Kind, use: -1, reg: c.number(n)}
+}
+
+// use returns the index of a column among the uses.
+func (c *compiler) use(column int, raw bool) int {
+	p := c.prog
+	i, ok := c.useOf[column]
+	if !ok {
+		i = len(p.uses)
+		c.useOf[column] = i
+		s := &c.schema.Columns[column]
+		p.uses = append(p.uses, use{column: column, name: s.Name, kind: s.Kind})
+	}
+	p.uses[i].raw = p.uses[i].raw || raw
+	if c.counts && !slices.Contains(p.checked, i) {
+		p.checked = append(p.checked, i)
+	}
+	return i
+}
+
+// emit adds an instruction unless the same one is there, and returns its
+// register.
+func (c *compiler) emit(in instr) int {
+	in.label = -1
+	key := fmt.Sprint(in.code, in.cmp, in.a, in.b, in.use, math.Float64bits(in.k), in.ns, in.bound, in.zoned, strconv.Quote(in.text))
+	if r, ok := c.known[key]; ok {
+		return r
+	}
+	if in.code == codeTextConst {
+		in.cache = c.prog.textCaches
+		c.prog.textCaches++
+	}
+	r := len(c.prog.code)
+	c.prog.code = append(c.prog.code, in)
+	c.known[key] = r
+	return r
+}
+
+// time compiles an expression of type time.
+func (c *compiler) time(n *node) int {
+	if n.op == opColumn {
+		return c.emit(instr{code: codeTimeCell, use: c.use(n.col, true)})
+	}
+	return c.emit(instr{code: codeDate, a: c.time(n.args[0]), zoned: n.args[0].zoned})
+}
+
+// number compiles an expression whose value is a number, a truth value, or a
+// time taken as a number.
+func (c *compiler) number(n *node) int {
+	switch n.op {
+	case opNumber, opBool:
+		return c.emit(instr{code: codeConst, k: n.num})
+	case opColumn:
+		if n.typ == timeValue {
+			return c.emit(instr{code: codeSeconds, a: c.time(n)})
+		}
+		return c.emit(instr{code: codeCell, use: c.use(n.col, false)})
+	case opCall:
+		return c.call(n)
+	case opNeg:
+		return c.emit(instr{code: codeNeg, a: c.number(n.args[0])})
+	case opNot:
+		return c.emit(instr{code: codeNot, a: c.number(n.args[0])})
+	}
+	if n.op.comparison() {
+		return c.comparison(n)
+	}
+	codes := map[op]code{opAdd: codeAdd, opSub: codeSub, opMul: codeMul, opDiv: codeDiv, opAnd: codeAnd, opOr: codeOr}
+	in := instr{code: codes[n.op], a: c.number(n.args[0]), b: c.number(n.args[1])}
+	if n.op == opDiv {
+		return c.fallible(in, n)
+	}
+	return c.emit(in)
+}
+
+// fallible emits an operation that can have no value for present operands.
+func (c *compiler) fallible(in instr, n *node) int {
+	r := c.emit(in)
+	if p := c.prog; c.counts && p.code[r].label < 0 {
+		p.code[r].label = len(p.noValue)
+		p.noValue = append(p.noValue, n.String())
+	}
+	return r
+}
+
+func (c *compiler) call(n *node) int {
+	switch n.fn {
+	case "missing":
+		return c.missing(n.args[0])
+	case "date":
+		return c.emit(instr{code: codeSeconds, a: c.time(n)})
+	case "hour", "weekday", "month":
+		codes := map[string]code{"hour": codeHour, "weekday": codeWeekday, "month": codeMonth}
+		return c.emit(instr{code: codes[n.fn], a: c.time(n.args[0]), zoned: n.args[0].zoned})
+	}
+	a := c.number(n.args[0])
+	switch n.fn {
+	case "log":
+		return c.fallible(instr{code: codeLog, a: a}, n)
+	case "sqrt":
+		return c.fallible(instr{code: codeSqrt, a: a}, n)
+	case "exp":
+		return c.emit(instr{code: codeExp, a: a})
+	case "abs":
+		return c.emit(instr{code: codeAbs, a: a})
+	case "hinge":
+		return c.emit(instr{code: codeHinge, a: a, b: c.number(n.args[1])})
+	case "pow":
+		return c.pow(n, a)
+	}
+	codes := map[string]code{"min": codeMin, "max": codeMax}
+	for _, arg := range n.args[1:] {
+		a = c.emit(instr{code: codes[n.fn], a: a, b: c.number(arg)})
+	}
+	return a
+}
+
+// pow picks the most accurate form for the exponent.
+func (c *compiler) pow(n *node, a int) int {
+	e := n.args[1]
+	negative := e.op == opNeg && e.args[0].op == opNumber
+	if e.op == opNumber || negative {
+		k := e.num
+		if negative {
+			k = -e.args[0].num
+		}
+		switch {
+		case k == 1:
+			return a
+		case k == 2:
+			return c.emit(instr{code: codeSquare, a: a})
+		case k == 0.5:
+			return c.fallible(instr{code: codeSqrt, a: a}, n)
+		case k != 0 && k == math.Trunc(k) && math.Abs(k) <= maxPowInt:
+			return c.fallible(instr{code: codePowInt, a: a, ns: int64(k)}, n)
+		}
+	}
+	return c.fallible(instr{code: codePow, a: a, b: c.number(e)}, n)
+}
+
+func (c *compiler) missing(n *node) int {
+	defer func(old bool) { c.counts = old }(c.counts)
+	c.counts = false
+	switch n.typ {
+	case textValue:
+		return c.emit(instr{code: codeNoText, use: c.use(n.col, true)})
+	case timeValue:
+		return c.emit(instr{code: codeNoTime, a: c.time(n)})
+	}
+	return c.emit(instr{code: codeNoNumber, a: c.number(n)})
+}
+
+func (c *compiler) comparison(n *node) int {
+	l, r, o := n.args[0], n.args[1], n.op
+	if l.op == opString || exactNumber(l) != nil && exactNumber(r) == nil {
+		l, r, o = r, l, mirror(o)
+	}
+	switch {
+	case l.typ == textValue && r.op == opString:
+		return c.emit(instr{code: codeTextConst, cmp: o, use: c.use(l.col, true), text: r.str})
+	case l.typ == textValue:
+		return c.emit(instr{code: codeTextText, cmp: o, use: c.use(l.col, true), b: c.use(r.col, true)})
+	case l.typ == timeValue && r.op == opString:
+		return c.emit(instr{code: codeTimeConst, cmp: o, a: c.time(l), ns: r.ns})
+	case l.typ == timeValue && r.typ == timeValue:
+		return c.emit(instr{code: codeTimeTime, cmp: o, a: c.time(l), b: c.time(r)})
+	case l.op == opColumn && (l.kind == Int64 || l.kind == Uint64):
+		// Below 2^53 comparing as float64 is exact, and lets a CSV column hold
+		// 12.5 after all.
+		if v := exactNumber(r); v != nil && new(big.Rat).Abs(v).Cmp(big.NewRat(1<<53, 1)) >= 0 {
+			return c.emit(instr{code: codeBigConst, cmp: o, use: c.use(l.col, true), bound: newBound(v, l.kind)})
+		}
+	}
+	return c.emit(instr{code: codeCompare, cmp: o, a: c.number(l), b: c.number(r)})
+}
+
+// exactNumber is the value of a literal, its sign included, or nil.
+func exactNumber(n *node) *big.Rat {
+	switch n.op {
+	case opNeg:
+		if v := exactNumber(n.args[0]); v != nil {
+			return v.Neg(v)
+		}
+	case opNumber:
+		if strings.Trim(n.lit, "0123456789") == "" {
+			i, ok := new(big.Int).SetString(n.lit, 10)
+			if !ok {
+				return nil
+			}
+			return new(big.Rat).SetInt(i)
+		}
+		return new(big.Rat).SetFloat64(n.num)
+	}
+	return nil
+}
+
+func newBound(v *big.Rat, k Kind) bound {
+	floor := new(big.Int).Div(v.Num(), v.Denom()) // Euclidean: floor for a positive denominator
+	switch {
+	case k == Int64 && floor.IsInt64():
+		return bound{floor: uint64(floor.Int64()), whole: v.IsInt()}
+	case k == Uint64 && floor.IsUint64():
+		return bound{floor: floor.Uint64(), whole: v.IsInt()}
+	}
+	return bound{side: -floor.Sign()}
+}
+
+// names lays out the names that dropped rows are counted under.
+func (c *compiler) names() {
+	p, d := c.prog, c.d
+	at := map[string]int{}
+	for _, u := range p.checked {
+		p.lost = append(p.lost, p.uses[u].name)
+	}
+	index := func(text string) int {
+		i, ok := at[text]
+		if !ok {
+			i = len(p.lost)
+			at[text] = i
+			p.lost = append(p.lost, text)
+		}
+		return i
+	}
+	p.denseLost = make([][]int, len(p.dense))
+	p.catLost = make([][]int, len(p.cats))
+	for _, t := range d.Terms {
+		if t.Dense >= 0 {
+			p.denseLost[t.Dense] = append(p.denseLost[t.Dense], index(t.Text))
+		}
+		for _, k := range t.Categories {
+			p.catLost[k] = append(p.catLost[k], index(t.Text))
+		}
+	}
+	last := len(p.dense) - 1
+	p.denseLost[last] = append(p.denseLost[last], index(d.OutcomeText()))
+	if p.weight >= 0 {
+		p.weightLost = []int{index(p.weightText)}
+	}
+	for _, k := range d.Keys {
+		p.keyLost = append(p.keyLost, []int{index(k.Text)})
+	}
+}
