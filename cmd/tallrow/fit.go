@@ -1,0 +1,58 @@
+package main
+
+import (
+	_ "embed"
+
+	"github.com/spf13/cobra"
+)
+
+//go:embed tallrow-fit-1.schema.json
+var resultSchema []byte
+
+func newFit(a *app) *cobra.Command {
+	cmd := &cobra.Command{
+		Use:   "fit [MODEL.toml] DATA...",
+		Short: "read the data, fit the model, print it with its errors",
+		Long: `DATA are files, globs, folders (names such as quay=7 become columns) or - for standard input;
+CSV and TSV, also .gz and .zst, and Parquet. A model file has the options as keys; what the
+command line says goes before it.`,
+		Example: `  tallrow fit --outcome minutes --terms "pallets, tonnes, each(barge)" --cluster quay unloading.parquet
+  zcat days.csv.gz | tallrow fit --outcome "log(minutes)" --terms "log(pallets), wet" --json -`,
+	}
+	cmd.DisableFlagsInUseLine = true
+	addOptions(cmd, onFit)
+	cmd.RunE = func(cmd *cobra.Command, args []string) error {
+		s, err := settingsFor(cmd, args, onFit)
+		if err != nil {
+			return err
+		}
+		if s.jsonSchema {
+			_, err := a.stdout.Write(resultSchema)
+			return err
+		}
+		if err := s.checkModel(); err != nil {
+			return err
+		}
+		if err := s.needData(cmd); err != nil {
+			return err
+		}
+		out, err := a.openSink(s)
+		if err != nil {
+			return err
+		}
+		f, err := a.fit(cmd.Context(), s)
+		if err != nil {
+			return err
+		}
+		v := newView(f.res, f.req.names())
+		if !s.json {
+			return out.write([]byte(renderText(v, out.width())))
+		}
+		text, err := jsonLine(v.document())
+		if err != nil {
+			return err
+		}
+		return out.write(text)
+	}
+	return cmd
+}

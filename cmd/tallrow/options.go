@@ -1,0 +1,200 @@
+package main
+
+import (
+	"fmt"
+	"strings"
+)
+
+// form says what values an option takes, on the command line and in a model
+// file.
+type form uint8
+
+const (
+	formText   form = iota // one text
+	formList               // a list of texts
+	formSwitch             // true or false; no value on the command line
+	formWhole              // a whole number
+	formNumber             // a number
+	formSize               // bytes, such as 1GiB
+	formPasses             // auto, 1 or 2
+	formKinds              // column = kind
+)
+
+// Commands that take an option.
+const (
+	onFit = 1 << iota
+	onPlan
+	onColumns
+	onModel = onFit | onPlan
+	onAll   = onFit | onPlan | onColumns
+)
+
+// option is one word of the program. The table below is the only place that
+// knows them: flags, model files, help and the reference are made from it.
+type option struct {
+	name  string
+	short string
+	value string // what stands for the value in help
+	form  form
+	group string
+	on    int
+	file  bool // may stand in a model file
+	def   string
+	help  string
+	set   func(*settings, value) error
+}
+
+// value is what was given for an option: one text from the command line, or
+// the elements of an array or table in a model file.
+type value struct {
+	parts []string
+	exact bool // the parts are elements: commas do not split them
+}
+
+func (v value) text() string { return strings.Join(v.parts, ", ") }
+
+// Groups of options, in the order of the help.
+var groups = []string{"Model", "Errors", "Rows", "Reading", "Resources", "Output"}
+
+var options = []option{
+	{name: "outcome", value: "EXPR", group: "Model", on: onModel, file: true,
+		help: "what is explained: a column or an expression such as log(minutes)",
+		set:  func(s *settings, v value) error { s.outcome = strings.TrimSpace(v.text()); return nil }},
+	{name: "terms", value: "LIST", form: formList, group: "Model", on: onModel, file: true,
+		help: "terms, separated by commas; each(barge) makes one indicator for each level",
+		set:  func(s *settings, v value) (err error) { s.terms, err = splitExprs(v); return err }},
+	{name: "no-constant", form: formSwitch, group: "Model", on: onModel, file: true, def: "false",
+		help: "leave the constant out",
+		set:  func(s *settings, v value) error { return setSwitch(&s.noConstant, v) }},
+	{name: "weight", value: "EXPR", group: "Model", on: onModel, file: true,
+		help: "weight of a row; needs --weight-kind",
+		set:  func(s *settings, v value) error { s.weight = strings.TrimSpace(v.text()); return nil }},
+	{name: "weight-kind", value: "KIND", group: "Model", on: onModel, file: true,
+		help: "frequency (a row stands for that many), precision (inverse variance) or sampling (inverse chance of being drawn)",
+		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
+
+	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onModel, file: true, def: "classical, hc1, and cr1 with --cluster",
+		help: "kinds of errors: classical, hc0, hc1, hc2, hc3, cr0, cr1; cr1(quay) names its clusters in place; the last one leads",
+		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
+	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
+		help: "rows that move together: a column or an expression such as date(t)",
+		set:  func(s *settings, v value) (err error) { s.cluster, err = splitExprs(v); return err }},
+	{name: "level", value: "P", form: formNumber, group: "Errors", on: onModel, file: true, def: "0.95",
+		help: "probability of the intervals, above 0 and below 1",
+		set:  setLevel},
+
+	{name: "where", value: "EXPR", group: "Rows", on: onModel, file: true,
+		help: "use only rows for which this holds, such as \"tonnes > 0 && !night\"",
+		set:  func(s *settings, v value) error { s.where = strings.TrimSpace(v.text()); return nil }},
+	{name: "missing", value: "skip|stop", group: "Rows", on: onModel, file: true, def: "skip",
+		help: "what to do with a row with a missing cell",
+		set:  choose(func(s *settings) *string { return &s.missing }, "skip", "stop")},
+	{name: "bad-rows", value: "stop|skip", group: "Rows", on: onAll, file: true, def: "stop",
+		help: "what to do with a row that cannot be read; skipped ones are counted",
+		set:  choose(func(s *settings) *string { return &s.badRows }, "stop", "skip")},
+	{name: "first", value: "N", form: formWhole, group: "Rows", on: onAll, file: true,
+		help: "read only the first N rows",
+		set:  setFirst},
+
+	{name: "format", value: "auto|csv|parquet", group: "Reading", on: onAll, file: true, def: "auto",
+		help: "format of the data",
+		set:  choose(func(s *settings) *string { return &s.format }, "auto", "csv", "parquet")},
+	{name: "no-header", form: formSwitch, group: "Reading", on: onAll, file: true, def: "false",
+		help: "the first line is data; columns are named c1, c2, ...",
+		set:  func(s *settings, v value) error { return setSwitch(&s.noHeader, v) }},
+	{name: "decimal", value: "point|comma", group: "Reading", on: onAll, file: true, def: "point",
+		help: "decimal mark of numbers in text files",
+		set:  choose(func(s *settings) *string { return &s.decimal }, "point", "comma")},
+	{name: "null", value: "LIST", form: formList, group: "Reading", on: onAll, file: true, def: "NA, null, NaN",
+		help: "cells that are missing, besides the empty one",
+		set:  setNull},
+	{name: "kinds", value: "LIST", form: formKinds, group: "Reading", on: onAll, file: true,
+		help: "kinds of columns where the first rows mislead: \"crane=text, code=int64\"",
+		set:  setKinds},
+	{name: "zone", value: "ZONE", group: "Reading", on: onModel, file: true, def: "UTC",
+		help: "time zone for hour, weekday, month and date of instants, such as Europe/Rome",
+		set:  setZone},
+
+	{name: "passes", value: "auto|1|2", form: formPasses, group: "Resources", on: onModel, file: true, def: "auto",
+		help: "how often the data are read",
+		set:  setPasses},
+	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onAll, file: true, def: "one for each processor",
+		help: "goroutines that read and sum; the result never depends on it",
+		set:  setWorkers},
+	{name: "memory", value: "SIZE", form: formSize, group: "Resources", on: onAll, file: true, def: "half of what the machine gives",
+		help: "bound for the whole process, such as 1GiB or 512MB",
+		set:  setMemory},
+	{name: "scratch", value: "DIR", group: "Resources", on: onAll, file: true, def: "the system's folder",
+		help: "folder for temporary files, such as the copy of a pipe that is read twice",
+		set:  func(s *settings, v value) error { s.scratch = v.text(); return nil }},
+	{name: "plan", value: "FILE", group: "Resources", on: onFit,
+		help: "use the plan that `tallrow plan -o FILE` wrote; refused if model or data differ",
+		set:  func(s *settings, v value) error { s.plan = v.text(); return nil }},
+
+	{name: "json", form: formSwitch, group: "Output", on: onAll, def: "false",
+		help: "print JSON and nothing else",
+		set:  func(s *settings, v value) error { return setSwitch(&s.json, v) }},
+	{name: "output", short: "o", value: "FILE", group: "Output", on: onAll,
+		help: "write there instead of standard output; the file appears only when it is complete",
+		set:  func(s *settings, v value) error { s.output = v.text(); return nil }},
+	{name: "quiet", form: formSwitch, group: "Output", on: onAll, def: "false",
+		help: "no progress on standard error",
+		set:  func(s *settings, v value) error { return setSwitch(&s.quiet, v) }},
+	{name: "json-schema", form: formSwitch, group: "Output", on: onFit, def: "false",
+		help: "print the JSON Schema of the result and stop",
+		set:  func(s *settings, v value) error { return setSwitch(&s.jsonSchema, v) }},
+}
+
+// later names what is known and refused: it must never be ignored.
+var (
+	laterOptions = []string{"lags", "kernel", "period", "unit", "hypothesis", "draws", "seed", "keep", "checkpoint",
+		"hide-ids", "frame-from", "at", "sweep", "part", "arithmetic", "timings"}
+	laterKinds    = []string{"hc4", "hc4m", "hc5", "cr2", "cr3", "hac", "driscoll-kraay"}
+	laterCommands = []string{"digest", "pool", "launch"}
+)
+
+func optionNamed(name string) *option {
+	for i := range options {
+		if options[i].name == name {
+			return &options[i]
+		}
+	}
+	return nil
+}
+
+// optionNames lists the options of a command, or the keys of a model file.
+func optionNames(on int, file bool) []string {
+	var names []string
+	for _, o := range options {
+		if o.on&on != 0 && (!file || o.file) {
+			names = append(names, o.name)
+		}
+	}
+	return names
+}
+
+// reference is the table of options for readers, in Markdown.
+func reference() string {
+	var b strings.Builder
+	b.WriteString("| option and key | value | default | meaning |\n|---|---|---|---|\n")
+	for _, g := range groups {
+		for _, o := range options {
+			if o.group != g {
+				continue
+			}
+			name := "`--" + o.name + "`"
+			if o.short != "" {
+				name = "`-" + o.short + "`, " + name
+			}
+			if !o.file {
+				name += " (command line only)"
+			}
+			val := "`" + strings.ReplaceAll(o.value, "|", "\\|") + "`"
+			if o.form == formSwitch {
+				val = "switch"
+			}
+			fmt.Fprintf(&b, "| %s | %s | %s | %s |\n", name, val, o.def, strings.ReplaceAll(o.help, "|", "\\|"))
+		}
+	}
+	return b.String()
+}

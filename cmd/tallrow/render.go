@@ -1,0 +1,476 @@
+package main
+
+import (
+	"fmt"
+	"math"
+	"sort"
+	"strings"
+
+	"github.com/tallrow/tallrow/vcov"
+)
+
+// Widths of the text result.
+const (
+	plainWidth  = 120 // into files and pipes, so that outputs compare
+	narrowest   = 80
+	widest      = 160
+	termWidth   = 26 // of the term column
+	numberWidth = 13 // up to which numbers are aligned at the point
+)
+
+// renderText writes the result as text for a reader, width columns wide.
+func renderText(v *view, width int) string {
+	width = min(max(width, narrowest), widest)
+	var b strings.Builder
+	n := notes{&b, width}
+	r := v.res
+	head := fmt.Sprintf("%s explained by %s over %s.", r.Outcome, v.termCount(), plural(r.Rows.Used, "row", "rows"))
+	if v.weighted("frequency") {
+		head = strings.TrimSuffix(head, ".") + fmt.Sprintf(" that stand for %s.", count(r.N))
+	}
+	for _, l := range wrap(head, width) {
+		b.WriteString(l + "\n")
+	}
+	b.WriteByte('\n')
+	short := v.writeTerms(&b, width)
+	b.WriteByte('\n')
+	v.writeLegend(&b, width)
+	for _, s := range short {
+		n.add("", s)
+	}
+	b.WriteByte('\n')
+	v.writeFooter(n)
+	if list := findings(v); len(list) > 0 {
+		b.WriteString("\nWhat the errors say\n")
+		for _, f := range list {
+			n.point(f)
+		}
+	}
+	b.WriteByte('\n')
+	for _, l := range wrap(caution, width) {
+		b.WriteString(l + "\n")
+	}
+	return b.String()
+}
+
+const caution = "Take care: these numbers describe how things go together in these rows, not what causes what, and no kind of error mends a bias of the estimates."
+
+func (v *view) termCount() string {
+	k := int64(len(v.res.Terms))
+	if v.isConstant(0) {
+		k--
+		switch k {
+		case 0:
+			return "the constant alone"
+		}
+		return "the constant and " + plural(k, "term", "terms")
+	}
+	return plural(k, "term", "terms")
+}
+
+// writeTerms writes the table of terms: on one line each if that fits, else in
+// two or more tables. It returns lines that give shortened names in full.
+func (v *view) writeTerms(b *strings.Builder, width int) []string {
+	names, between, cut := v.termNames()
+	term := column{head: []string{"term"}, cells: names, left: true}
+	est := v.estimateColumns()
+	errs := v.errorColumns()
+	ends := v.intervalColumns()
+	flat := func(groups ...[]column) []column {
+		cols := []column{term}
+		for _, g := range groups {
+			cols = append(cols, g...)
+		}
+		return cols
+	}
+	var all []column
+	for _, e := range errs {
+		all = append(all, e...)
+	}
+	one := flat(est, all, ends)
+	if tableWidth(one) <= width {
+		writeTable(b, one, between)
+		return cut
+	}
+	// Too many kinds of errors for one line: as many beside each other as fit,
+	// then the intervals in a table of their own.
+	for len(errs) > 0 {
+		cols := flat(est, errs[0])
+		errs = errs[1:]
+		for len(errs) > 0 && tableWidth(append(cols[:len(cols):len(cols)], errs[0]...)) <= width {
+			cols = append(cols, errs[0]...)
+			errs = errs[1:]
+		}
+		writeTable(b, cols, between)
+		b.WriteByte('\n')
+	}
+	writeTable(b, flat(est, ends), between)
+	return cut
+}
+
+// termNames gives the names as they stand in the table. Runs of levels of one
+// category stand indented under a line of their own.
+func (v *view) termNames() (names []string, between map[int]string, cut []string) {
+	between = map[int]string{}
+	terms := v.res.Terms
+	for j := 0; j < len(terms); {
+		group, _, ok := splitLevel(terms[j])
+		end := j + 1
+		for ok && end < len(terms) {
+			g, _, same := splitLevel(terms[end])
+			if !same || g != group {
+				break
+			}
+			end++
+		}
+		if !ok || end-j < 3 {
+			names = append(names, shorten(terms[j], termWidth))
+			if runes(oneLine(terms[j])) > termWidth {
+				cut = append(cut, names[len(names)-1]+" is "+oneLine(terms[j]))
+			}
+			j++
+			continue
+		}
+		line := oneLine(group)
+		if base, ok := v.res.BaseLevels[group]; ok {
+			line += fmt.Sprintf(", against %s", oneLine(base))
+		}
+		between[j] = line
+		for ; j < end; j++ {
+			_, level, _ := splitLevel(terms[j])
+			names = append(names, "  "+shorten(level, termWidth-2))
+		}
+	}
+	return names, between, cut
+}
+
+// splitLevel parts the name of an indicator, such as barge=b, into category and
+// level. A comparison such as tonnes == 3 is none.
+func splitLevel(term string) (group, level string, ok bool) {
+	i := strings.IndexByte(term, '=')
+	if i <= 0 || i+1 >= len(term) || term[i+1] == '=' || strings.IndexByte("=!<> ", term[i-1]) >= 0 {
+		return "", "", false
+	}
+	return term[:i], term[i+1:], true
+}
+
+func (v *view) estimateColumns() []column {
+	cells := make([]string, len(v.res.Terms))
+	for j := range cells {
+		cells[j] = digits(at(v.res.Estimates, j), 5)
+	}
+	cells = align(cells, numberWidth)
+	for j, t := range v.res.Terms {
+		if v.aliasOf(t) != nil {
+			cells[j] = "aliased"
+		}
+	}
+	cols := []column{{head: []string{"estimate"}, cells: cells}}
+	if v.truth != nil {
+		cells := make([]string, len(v.res.Terms))
+		for j, t := range v.res.Terms {
+			if x, ok := v.truth[t]; ok {
+				cells[j] = digits(x, 5)
+			}
+		}
+		cols = append(cols, column{head: []string{"true"}, cells: align(cells, numberWidth)})
+	}
+	return cols
+}
+
+// errorColumns gives, for each kind shown, a column of errors and, but for the
+// classical kind, one of ratios.
+func (v *view) errorColumns() [][]column {
+	var groups [][]column
+	for _, e := range v.shown {
+		se := make([]string, len(v.res.Terms))
+		ratio := make([]string, len(v.res.Terms))
+		some := false
+		for j := range se {
+			if x := at(e.SE, j); !math.IsNaN(x) {
+				se[j] = digits(x, 4)
+			} else if v.aliasOf(v.res.Terms[j]) == nil {
+				se[j] = none
+			}
+			if ratio[j] = ratioText(v.ratio(e, j)); ratio[j] != "" {
+				some = true
+			}
+		}
+		c := column{head: []string{"error", shorten(e.Name(), 18)}, cells: align(se, numberWidth)}
+		g := []column{c}
+		if some {
+			g = append(g, column{cells: ratio, left: true, gap: 1})
+		}
+		groups = append(groups, g)
+	}
+	return groups
+}
+
+// intervalColumns gives interval, strip and p under the leading errors.
+func (v *view) intervalColumns() []column {
+	if v.lead == nil {
+		return nil
+	}
+	e := v.lead
+	k := len(v.res.Terms)
+	low, high, drawn, p := make([]string, k), make([]string, k), make([]string, k), make([]string, k)
+	for j := range k {
+		if v.aliasOf(v.res.Terms[j]) != nil {
+			continue
+		}
+		l, h := at(e.Low, j), at(e.High, j)
+		if math.IsNaN(l) || math.IsNaN(h) {
+			low[j], high[j] = none, none
+		} else {
+			low[j], high[j] = digits(l, 5), digits(h, 5)
+			drawn[j] = strip(at(v.res.Estimates, j), l, h)
+		}
+		p[j] = none
+		if j < len(e.P) && j < len(e.Log10P) {
+			p[j] = pText(e.P[j], e.Log10P[j])
+		}
+	}
+	low, high = align(low, numberWidth), align(high, numberWidth)
+	span := make([]string, k)
+	for j := range span {
+		if strings.TrimSpace(low[j]) != "" {
+			span[j] = low[j] + " to " + high[j]
+		}
+	}
+	return []column{
+		{head: []string{levelText(v.res.Model.Level) + " interval", "by " + shorten(e.Name(), 18)}, cells: span},
+		{head: []string{"against", "zero"}, cells: drawn, left: true},
+		{head: []string{"p"}, cells: p, left: true},
+	}
+}
+
+func (v *view) writeLegend(b *strings.Builder, width int) {
+	var parts []string
+	if v.classical != nil {
+		for _, e := range v.shown {
+			if e != v.classical && e.Status == "ok" {
+				parts = append(parts, "x1.50 after an error: so many times the classical one.")
+				break
+			}
+		}
+	}
+	if v.lead != nil {
+		parts = append(parts, "The strip draws the interval (-) and the estimate (o) against zero (|, or + inside the interval), each line on a scale of its own.")
+	}
+	for _, l := range wrap(strings.Join(parts, " "), width) {
+		b.WriteString(l + "\n")
+	}
+}
+
+// writeFooter writes rows, clusters, fit, run and warnings.
+func (v *view) writeFooter(n notes) {
+	r := v.res
+	n.add("rows", rowsText(r.Rows))
+	for _, p := range r.Rows.Problems {
+		n.add("", oneLine(p))
+	}
+	if more := r.Rows.Malformed - int64(len(r.Rows.Problems)); more > 0 && len(r.Rows.Problems) > 0 {
+		n.add("", fmt.Sprintf("and %s more", count(more)))
+	}
+	if r.Weight.Kind != nil {
+		w := *r.Weight.Kind + " weights"
+		if r.Model.Weight != nil {
+			w += " " + *r.Model.Weight
+		}
+		n.add("weights", fmt.Sprintf("%s, sum %s", w, digits(float64(r.Weight.Sum), 6)))
+	}
+	seen := map[string]bool{}
+	for _, e := range v.shown {
+		c := strings.Join(e.Clusters, " and ")
+		if len(e.Groups) == 0 || seen[c] {
+			continue
+		}
+		seen[c] = true
+		n.add("clusters", clustersText(c, e))
+	}
+	n.add("fit", v.fitText())
+	if t := v.overallText(); t != "" {
+		n.add("together", t)
+	}
+	for _, e := range v.shown {
+		if e.Status != "ok" {
+			why := "no reason given"
+			if e.Reason != nil {
+				why = *e.Reason
+			}
+			n.add("no "+shorten(e.Name(), 6), fmt.Sprintf("%s: %s", e.Name(), oneLine(why)))
+		}
+	}
+	for _, a := range r.Aliased {
+		if len(a.DependsOn) == 0 {
+			n.add("aliased", oneLine(a.Term)+" is zero in every row: it has no estimate")
+		} else {
+			n.add("aliased", fmt.Sprintf("%s follows exactly from %s: it has no estimate", oneLine(a.Term), both(shortList(a.DependsOn, 8))))
+		}
+	}
+	n.add("run", runText(r))
+	for _, w := range r.Warnings {
+		n.add("warning", oneLine(w.Text))
+	}
+	if bases := v.otherBases(); bases != "" {
+		n.add("base", bases)
+	}
+}
+
+// otherBases names the base levels of categories too small for a group line.
+func (v *view) otherBases() string {
+	counts := map[string]int{}
+	for _, t := range v.res.Terms {
+		if g, _, ok := splitLevel(t); ok {
+			counts[g]++
+		}
+	}
+	var list []string
+	for c, base := range v.res.BaseLevels {
+		if counts[c] < 3 {
+			list = append(list, fmt.Sprintf("%s against %s", oneLine(c), oneLine(base)))
+		}
+	}
+	sort.Strings(list)
+	return strings.Join(list, "; ")
+}
+
+func rowsText(r vcov.Rows) string {
+	t := fmt.Sprintf("%s read, %s used", count(r.Read), count(r.Used))
+	var lost []string
+	if r.Malformed > 0 {
+		lost = append(lost, count(r.Malformed)+" could not be read")
+	}
+	if r.Excluded > 0 {
+		lost = append(lost, count(r.Excluded)+" outside --where")
+	}
+	if r.Missing > 0 {
+		lost = append(lost, fmt.Sprintf("%s with a missing cell%s", count(r.Missing), missingBy(r.MissingBy)))
+	}
+	if r.ZeroWeight > 0 {
+		lost = append(lost, count(r.ZeroWeight)+" with weight zero")
+	}
+	if len(lost) == 0 {
+		return t + ", none lost"
+	}
+	return t + "; not used: " + strings.Join(lost, ", ")
+}
+
+// missingBy gives " (crew 12, wet 3)", the most frequent first.
+func missingBy(m map[string]int64) string {
+	names := make([]string, 0, len(m))
+	for c, n := range m {
+		if n > 0 {
+			names = append(names, c)
+		}
+	}
+	if len(names) == 0 {
+		return ""
+	}
+	sort.Slice(names, func(i, j int) bool {
+		if m[names[i]] != m[names[j]] {
+			return m[names[i]] > m[names[j]]
+		}
+		return names[i] < names[j]
+	})
+	for i, c := range names {
+		names[i] = fmt.Sprintf("%s %s", oneLine(c), count(m[c]))
+	}
+	return " (" + strings.Join(shortList(names, 8), ", ") + ")"
+}
+
+// shortList keeps the first n of a list and says how many more there are.
+func shortList(list []string, n int) []string {
+	if len(list) <= n+1 {
+		return list
+	}
+	return append(list[:n:n], fmt.Sprintf("%d more", len(list)-n))
+}
+
+func clustersText(name string, e *vcov.Errors) string {
+	var g []string
+	for _, x := range e.Groups {
+		g = append(g, count(x))
+	}
+	t := fmt.Sprintf("%s: %s", oneLine(name), strings.Join(g, " and "))
+	if s := e.GroupRows; s != nil {
+		t += fmt.Sprintf("; rows in the smallest %s, in the median one %s, in the largest %s",
+			count(s.Min), halves(float64(s.Median)), count(s.Max))
+	}
+	return t
+}
+
+// halves writes a median of counts: 12 or 12.5.
+func halves(x float64) string {
+	switch {
+	case math.IsNaN(x):
+		return none
+	case x == math.Trunc(x):
+		return count(int64(x))
+	}
+	return count(int64(x)) + ".5"
+}
+
+func (v *view) fitText() string {
+	r := v.res
+	var parts []string
+	if r.R2.Exists() {
+		t := fmt.Sprintf("R2 %s", digits(float64(r.R2), 5))
+		if r.R2Adjusted.Exists() {
+			t += fmt.Sprintf(" (%s; adjusted %s)", r.R2Kind, digits(float64(r.R2Adjusted), 5))
+		} else {
+			t += fmt.Sprintf(" (%s)", r.R2Kind)
+		}
+		parts = append(parts, t)
+	} else {
+		parts = append(parts, "no R2")
+	}
+	if r.Residual.SD.Exists() {
+		parts = append(parts, fmt.Sprintf("residual sd %s on %s degrees of freedom", digits(float64(r.Residual.SD), 5), count(r.Residual.DF)))
+	} else {
+		parts = append(parts, fmt.Sprintf("no residual sd: %s degrees of freedom are left", count(r.Residual.DF)))
+	}
+	return strings.Join(parts, "; ")
+}
+
+func (v *view) overallText() string {
+	if v.lead == nil || v.lead.Overall == nil {
+		return ""
+	}
+	o := v.lead.Overall
+	if !o.F.Exists() {
+		return fmt.Sprintf("no joint test of all terms by %s", v.lead.Name())
+	}
+	t := fmt.Sprintf("test that all terms but the constant are zero, by %s: F %s on %s and %s, p %s", v.lead.Name(),
+		digits(float64(o.F), 5), wholeOr(o.DF1), wholeOr(o.DF2), pText(o.P, vcov.Number(math.NaN())))
+	if !v.isConstant(0) {
+		t = strings.Replace(t, "all terms but the constant", "all terms", 1)
+	}
+	return t
+}
+
+// wholeOr writes degrees of freedom.
+func wholeOr(n vcov.Number) string {
+	x := float64(n)
+	if n.Exists() && x == math.Trunc(x) && math.Abs(x) < 1e15 {
+		return count(int64(x))
+	}
+	return digits(x, 5)
+}
+
+func runText(r *vcov.Result) string {
+	run := r.Run
+	t := fmt.Sprintf("%s (%s, %s arithmetic), %s, %s", plural(int64(run.Passes), "pass", "passes"), run.Route, run.Arithmetic,
+		plural(int64(run.Workers), "worker", "workers"), plural(run.Segments, "segment", "segments"))
+	sec := float64(run.Seconds)
+	if run.Seconds.Exists() && sec > 0 {
+		t += fmt.Sprintf("; %s s, %s rows a second", three(sec), rate(float64(r.Rows.Read)/sec))
+	}
+	if run.Bytes > 0 {
+		t += fmt.Sprintf("; %s read", sizeText(run.Bytes))
+	}
+	if run.PeakBytes > 0 {
+		t += fmt.Sprintf(", memory at most %s", sizeText(run.PeakBytes))
+	}
+	return t
+}
