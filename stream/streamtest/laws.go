@@ -64,7 +64,7 @@ func (s *suite) readSample(src stream.Source, uses []stream.Use, at float64) ([]
 		}
 		if seg.Locate(b.Marks[0]).File == "" {
 			seg.Close()
-			return nil, errors.New("Locate names no file")
+			return nil, errors.New("a position names no file")
 		}
 		out = append(out, rows(&b)...)
 	}

@@ -220,7 +220,7 @@ func (s *suite) drain(seg stream.Segment, uses []stream.Use) (part, error) {
 func (s *suite) scan(ctx context.Context, src stream.Source, uses []stream.Use, goroutines int) ([]part, error) {
 	sc, err := src.Scan(ctx, uses)
 	if err != nil {
-		return nil, fmt.Errorf("Scan: %w", err)
+		return nil, fmt.Errorf("starting a scan: %w", err)
 	}
 	var (
 		mu    sync.Mutex
@@ -237,7 +237,7 @@ func (s *suite) scan(ctx context.Context, src stream.Source, uses []stream.Use, 
 				}
 				var p part
 				if err != nil {
-					err = fmt.Errorf("Next: %w", err)
+					err = fmt.Errorf("asking for a segment: %w", err)
 				} else {
 					p, err = s.drain(seg, uses)
 				}
@@ -253,14 +253,14 @@ func (s *suite) scan(ctx context.Context, src stream.Source, uses []stream.Use, 
 			}
 			if _, err := sc.Next(ctx); err != io.EOF {
 				mu.Lock()
-				errs = append(errs, fmt.Errorf("Next after io.EOF: %v", err))
+				errs = append(errs, fmt.Errorf("asking for a segment after io.EOF: %v", err))
 				mu.Unlock()
 			}
 		})
 	}
 	wg.Wait()
 	if err := sc.Close(); err != nil {
-		errs = append(errs, fmt.Errorf("Scan.Close: %w", err))
+		errs = append(errs, fmt.Errorf("closing a scan: %w", err))
 	}
 	if err := errors.Join(errs...); err != nil {
 		return nil, err
