@@ -13,7 +13,7 @@ import (
 // Limits that keep a pasted file or a generated monster from taking the
 // machine down; no model written by hand comes near them.
 const (
-	maxExprBytes = 32 << 10
+	maxExprBytes = 16 << 10
 	maxExprDepth = 200
 )
 
@@ -25,7 +25,18 @@ type exprText struct{ role, text string }
 func (x exprText) errorf(off int, format string, args ...any) error {
 	off = max(0, min(off, len(x.text)))
 	return Usef("%s %s, character %d: %s", x.role, quoteExpr(x.text, off),
-		utf8.RuneCountInString(x.text[:off])+1, fmt.Sprintf(format, args...))
+		utf8.RuneCountInString(x.text[:off])+1, plainLine(fmt.Sprintf(format, args...)))
+}
+
+// plainLine makes blanks of line breaks and other control characters, which
+// names and pieces of a text can bring into a message.
+func plainLine(s string) string {
+	return strings.Map(func(r rune) rune {
+		if unicode.IsControl(r) {
+			return ' '
+		}
+		return r
+	}, s)
 }
 
 // quoteExpr quotes an expression on one line, cut to the neighbourhood of off
