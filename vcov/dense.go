@@ -1,0 +1,162 @@
+package vcov
+
+import "math"
+
+func dot(a, b []float64) float64 {
+	var s float64
+	for i := range a {
+		s = math.FMA(a[i], b[i], s)
+	}
+	return s
+}
+
+func axpy(t float64, x, y []float64) {
+	if t == 0 {
+		return
+	}
+	for i := range x {
+		y[i] = math.FMA(t, x[i], y[i])
+	}
+}
+
+// inverseUpper inverts an n x n upper triangle given row by row.
+func inverseUpper(a []float64, n int) []float64 {
+	inv := make([]float64, n*n)
+	for j := range n {
+		inv[j*n+j] = 1 / a[j*n+j]
+		for i := j - 1; i >= 0; i-- {
+			var s float64
+			for t := i + 1; t <= j; t++ {
+				s = math.FMA(a[i*n+t], inv[t*n+j], s)
+			}
+			inv[i*n+j] = -s / a[i*n+i]
+		}
+	}
+	return inv
+}
+
+// sandwich returns A B A' for k x k matrices, exactly symmetric.
+func sandwich(a, b []float64, k int) []float64 {
+	t := make([]float64, k*k)
+	for i := range k {
+		for j, x := range a[i*k : (i+1)*k] {
+			axpy(x, b[j*k:(j+1)*k], t[i*k:(i+1)*k])
+		}
+	}
+	out := make([]float64, k*k)
+	for i := range k {
+		for j := 0; j <= i; j++ {
+			x := dot(t[i*k:(i+1)*k], a[j*k:(j+1)*k])
+			out[i*k+j], out[j*k+i] = x, x
+		}
+	}
+	return out
+}
+
+// elimination is the ordered Cholesky factorisation of a positive semidefinite
+// matrix with unit-scaled diagonal, leaving out each column whose pivot is at most
+// tol: it depends on the columns before it.
+type elimination struct {
+	k    int
+	kept []int
+	drop []int
+	u    []float64 // upper factor over kept columns, m x m
+	d    []float64 // scales: G = D U'U D on kept columns
+	inv  []float64 // inverse of U, m x m
+	// pivots are 1 - R^2 of each column on the kept ones before it.
+	pivots []float64
+	g      []float64
+}
+
+func eliminate(g []float64, k int, tol float64) *elimination {
+	e := &elimination{k: k, d: make([]float64, k), pivots: make([]float64, k), g: g}
+	for j := range k {
+		if x := g[j*k+j]; x > 0 {
+			e.d[j] = math.Sqrt(x)
+		}
+	}
+	cols := make([][]float64, 0, k) // column of U for each kept column
+	for j := range k {
+		if e.d[j] == 0 {
+			e.drop = append(e.drop, j)
+			continue
+		}
+		c := make([]float64, len(e.kept)+1)
+		s := 1.0
+		for i, p := range e.kept {
+			x := g[p*k+j]/e.d[p]/e.d[j] - dot(cols[i][:i], c[:i])
+			c[i] = x / cols[i][i]
+			s = math.FMA(-c[i], c[i], s)
+		}
+		e.pivots[j] = s
+		if !(s > tol) {
+			e.drop = append(e.drop, j)
+			continue
+		}
+		c[len(e.kept)] = math.Sqrt(s)
+		cols = append(cols, c)
+		e.kept = append(e.kept, j)
+	}
+	m := len(e.kept)
+	e.u = make([]float64, m*m)
+	for j, c := range cols {
+		for i, x := range c {
+			e.u[i*m+j] = x
+		}
+	}
+	e.inv = inverseUpper(e.u, m)
+	return e
+}
+
+// solve returns x with G x = b on the kept columns, 0 elsewhere.
+func (e *elimination) solve(b []float64) []float64 {
+	m := len(e.kept)
+	y := make([]float64, m)
+	for i, p := range e.kept {
+		s := b[p] / e.d[p]
+		for t := range i {
+			s = math.FMA(-e.u[t*m+i], y[t], s)
+		}
+		y[i] = s / e.u[i*m+i]
+	}
+	for i := m - 1; i >= 0; i-- {
+		s := y[i]
+		for t := i + 1; t < m; t++ {
+			s = math.FMA(-e.u[i*m+t], y[t], s)
+		}
+		y[i] = s / e.u[i*m+i]
+	}
+	x := make([]float64, e.k)
+	for i, p := range e.kept {
+		x[p] = y[i] / e.d[p]
+	}
+	return x
+}
+
+// half returns the k x m matrix H with G^-1 = H H' on the kept columns.
+func (e *elimination) half() []float64 {
+	m := len(e.kept)
+	h := make([]float64, e.k*m)
+	for i, p := range e.kept {
+		for t := i; t < m; t++ {
+			h[p*m+t] = e.inv[i*m+t] / e.d[p]
+		}
+	}
+	return h
+}
+
+// inverse returns G^-1 on the kept columns, zero elsewhere, k x k.
+func (e *elimination) inverse() []float64 {
+	m, k := len(e.kept), e.k
+	h := e.half()
+	out := make([]float64, k*k)
+	for _, i := range e.kept {
+		for _, j := range e.kept {
+			if j <= i {
+				x := dot(h[i*m:(i+1)*m], h[j*m:(j+1)*m])
+				out[i*k+j], out[j*k+i] = x, x
+			}
+		}
+	}
+	return out
+}

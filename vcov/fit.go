@@ -1,0 +1,350 @@
+package vcov
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"math"
+	"time"
+
+	"github.com/tallrow/tallrow/accum"
+	"github.com/tallrow/tallrow/stream"
+)
+
+const (
+	// lossLimit is the bound of relative error above which errors from one-pass
+	// sums are replaced by a second pass.
+	lossLimit = 1e-12
+	// lossRefuse: beyond it nothing is printed.
+	lossRefuse = 1e-6
+	// loneShare of a coefficient's variance factor that one row may decide.
+	loneShare = 1e-9
+)
+
+// Fit reads the source once or twice and returns estimates and errors. src is
+// not closed. Same input and model give the same bits for any o.Workers.
+//
+// Errors: a *stream.UseError for a wrong model or option, the source's errors,
+// *accum.NoRowsError, *accum.MemoryError, *accum.ChangedError, the context's.
+func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*Result, error) {
+	start := time.Now()
+	o = o.withDefaults()
+	p, err := PlanFit(ctx, src, d, o)
+	if err != nil {
+		return nil, err
+	}
+	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p,
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Meter: o.Meter}}
+	if err := f.first(); err != nil {
+		return nil, err
+	}
+	if err := f.second(); err != nil {
+		return nil, err
+	}
+	r := f.result()
+	r.Run.Seconds = Number(time.Since(start).Seconds())
+	return r, nil
+}
+
+type fitter struct {
+	ctx    context.Context
+	src    stream.Source
+	d      *stream.Design
+	o      Options
+	plan   *Plan
+	scan   accum.Options
+	state  *accum.State
+	sol    *solution
+	sums   *accum.RowSums
+	kinds  []string // of sums.Meats
+	keys   []int    // of sums.Scores
+	fourth []float64
+	loss   float64 // of the fourth-moment errors
+	passes int
+	bytes  int64
+	warn   []Warning
+	route  string
+}
+
+// first runs pass one, again in a better frame if the data ask for it.
+func (f *fitter) first() error {
+	s, err := accum.First(f.ctx, f.src, f.d, f.plan.needs, f.scan)
+	if err != nil {
+		return err
+	}
+	f.passes++
+	f.bytes += s.Bytes
+	if err := f.solve(s); err != nil {
+		return err
+	}
+	if f.sol.needsFrame() && f.src.Info().Rewindable {
+		s, err := accum.Again(f.ctx, f.src, s, f.plan.needs, f.scan)
+		if err != nil {
+			return err
+		}
+		f.passes++
+		f.bytes += s.Bytes
+		f.warn = append(f.warn, Warning{Code: "frame-renewed", Text: "the first pass was repeated: the rows that set shift and scale did not stand for the whole input"})
+		return f.solve(s)
+	}
+	return nil
+}
+
+func (f *fitter) solve(s *accum.State) error {
+	b, err := newBasis(s)
+	if err != nil {
+		return err
+	}
+	f.state, f.sol = s, solve(b)
+	return nil
+}
+
+// second runs pass two where the plan says so, or where pass one lost digits.
+func (f *fitter) second() error {
+	x, s := f.sol, f.state
+	f.route = f.plan.Route
+	rows := f.plan.rows
+	if x.df() <= 0 || x.perfect {
+		rows = false // no errors to compute
+		if f.plan.needs.Fourth {
+			f.fourth, _ = s.Fourth(x.theta, false)
+		}
+		return nil
+	}
+	if f.plan.needs.Fourth {
+		f.fourth, _ = s.Fourth(x.theta, false)
+		gross, _ := s.Fourth(x.theta, true)
+		f.loss = x.cancellation(f.fourth, gross)
+		if f.loss > lossLimit {
+			if f.src.Info().Rewindable {
+				rows = true
+				f.fourth = nil
+				f.note("second-pass", "fourth moments lost digits (relative error up to %.1e); a second pass was made", f.loss)
+			} else {
+				f.note("digits", "hc0 and hc1 have about %d digits left: fourth moments cancel, and the input can be read once only", digits(f.loss))
+			}
+		}
+	}
+	if len(f.plan.needs.Clusters) > 0 && s.Dropped {
+		if !f.src.Info().Rewindable {
+			return &accum.MemoryError{What: "second moments of clusters on a pipe", Need: f.o.Memory/8 + 1, Have: f.o.Memory / 8}
+		}
+		rows = true
+		f.note("second-pass", "the clusters' second moments outgrew an eighth of --memory; a second pass kept scores only")
+	}
+	if !rows {
+		return nil
+	}
+	if !f.src.Info().Rewindable {
+		return stream.Usef("the errors asked for need a second pass, and the input can be read once only: give --passes 2 to copy it to --scratch while it is read")
+	}
+	f.route = "row pass"
+	rp := accum.RowPass{Theta: x.theta}
+	seen := map[string]bool{}
+	lever := false
+	for _, k := range f.o.Errors {
+		g, ok := hcWeight[k.Name]
+		if k.Name == "hc1" {
+			k.Name = "hc0"
+		}
+		switch {
+		case ok && !seen[k.Name]:
+			seen[k.Name] = true
+			f.kinds = append(f.kinds, k.Name)
+			rp.Weights = append(rp.Weights, func(h float64) float64 { return g(1 - h) })
+			lever = true
+		case !ok && k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
+			seen[fmt.Sprint(k.Cluster)] = true
+			f.keys = append(f.keys, k.Cluster)
+		}
+	}
+	rp.Scores = f.keys
+	if lever {
+		rp.Whitener, rp.K = x.whitener()
+	}
+	sums, err := accum.Second(f.ctx, f.src, s, rp, f.scan)
+	if err != nil {
+		return err
+	}
+	f.passes++
+	f.bytes += sums.Bytes
+	f.sums = sums
+	if (seen["hc2"] || seen["hc3"]) && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency {
+		return f.heavy(rp)
+	}
+	return nil
+}
+
+// heavy repeats pass two for rows of leverage near 1.
+func (f *fitter) heavy(rp accum.RowPass) error {
+	rp.Heavy = true
+	rp.Scores = nil
+	sums, err := accum.Second(f.ctx, f.src, f.state, rp, f.scan)
+	if err != nil {
+		return err
+	}
+	f.passes++
+	f.bytes += sums.Bytes
+	for i, k := range f.kinds {
+		if !f.sol.heavyMeat(sums, hcWeight[k], sums.Meats[i]) {
+			return nil // keep the plain sums
+		}
+	}
+	f.sums.Meats = sums.Meats
+	f.note("high-leverage", "%d rows have leverage above %.2f; they were summed once more, one by one, to keep digits", sums.HeavyRows, accum.HeavyAt)
+	return nil
+}
+
+func (f *fitter) note(code, format string, args ...any) {
+	f.warn = append(f.warn, Warning{Code: code, Text: fmt.Sprintf(format, args...)})
+}
+
+func digits(loss float64) int {
+	if !(loss > 0) {
+		return 15
+	}
+	return max(0, int(-math.Log10(loss)))
+}
+
+// errorsFor computes one kind.
+func (f *fitter) errorsFor(k Kind) Errors {
+	x, s := f.sol, f.state
+	e := Errors{Kind: k.Name, Clusters: []string{}, Groups: []int64{}}
+	isCluster := k.Cluster >= 0 && (k.Name == "cr0" || k.Name == "cr1")
+	if isCluster {
+		e.Clusters = append(e.Clusters, f.d.Keys[k.Cluster].Text)
+	}
+	if x.df() <= 0 {
+		x.unavailable(&e, "%d rows for %d terms leave no degrees of freedom", x.n, x.rank())
+		return e
+	}
+	switch {
+	case k.Name == "classical":
+		if x.kind == stream.Sampling {
+			x.unavailable(&e, "classical errors have no meaning under sampling weights")
+			return e
+		}
+		x.infer(&e, x.classical(), f.o.Level, f.o.Covariance)
+	case isCluster:
+		f.cluster(&e, k)
+	default:
+		f.heteroskedastic(&e, k)
+	}
+	if x.perfect && e.Status == "ok" {
+		e.Overall = nil
+	}
+	_ = s
+	return e
+}
+
+func (f *fitter) heteroskedastic(e *Errors, k Kind) {
+	x := f.sol
+	if x.perfect {
+		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: float64(x.df()), joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
+		return
+	}
+	var meat []float64
+	if f.sums != nil {
+		for i, name := range f.kinds {
+			if name == k.Name || (name == "hc0" && k.Name == "hc1") {
+				meat = f.sums.Meats[i]
+			}
+		}
+	} else {
+		meat = f.fourth
+		if f.loss > lossRefuse {
+			x.unavailable(e, "fourth moments cancel (relative error up to %.1e) and the input can be read once only; use --passes 2", f.loss)
+			return
+		}
+	}
+	r := x.hc(k.Name, meat)
+	lone := f.loneTerms()
+	r.noP = lone
+	if k.Name == "hc2" || k.Name == "hc3" {
+		r.noSE = lone
+	}
+	x.infer(e, r, f.o.Level, f.o.Covariance)
+}
+
+// loneTerms marks coefficients that a single row decides.
+func (f *fitter) loneTerms() []bool {
+	x, s := f.sol, f.state
+	out := make([]bool, x.k())
+	if f.sums != nil {
+		if f.sums.LoneGram == nil {
+			return nil
+		}
+		for j, q := range x.share(f.sums.LoneGram) {
+			out[j] = q > loneShare
+		}
+		return out
+	}
+	any := false
+	for j, u := range x.cols {
+		c := &s.Columns[u.column]
+		switch {
+		case u.term < 0:
+		case c.Group < 0:
+			n := s.NonZero[c.Dense-1]
+			out[j] = n == 1 || (n == s.Rows-1 && !s.Design.Spec.NoConstant)
+		default:
+			out[j] = c.Rows == 1
+		}
+		any = any || out[j]
+	}
+	if !any {
+		return nil
+	}
+	return out
+}
+
+func (f *fitter) cluster(e *Errors, k Kind) {
+	x, s := f.sol, f.state
+	var sc *accum.Scores
+	if f.sums != nil {
+		for i, key := range f.keys {
+			if key == k.Cluster {
+				sc = f.sums.Scores[i]
+			}
+		}
+	} else if !x.perfect || len(f.plan.needs.Clusters) > 0 {
+		var err error
+		if sc, err = s.Scores(k.Cluster, x.theta); err != nil {
+			sc = nil
+		}
+	}
+	if sc != nil {
+		e.Groups = []int64{int64(len(sc.Keys))}
+		e.GroupRows = groupRows(sc.Rows)
+	}
+	switch {
+	case x.perfect:
+		df := 1.0
+		if sc != nil {
+			df = float64(len(sc.Keys) - 1)
+		}
+		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
+		return
+	case sc == nil:
+		x.unavailable(e, "the sums of the clusters were not kept")
+		return
+	case len(sc.Keys) < 2:
+		x.unavailable(e, "all rows are in one cluster; at least two are needed")
+		return
+	case s.Coarse:
+		x.unavailable(e, "the clusters' sums lost digits and the input can be read once only; use --passes 2")
+		return
+	}
+	if loss := scoreLoss(sc); loss > lossRefuse {
+		x.unavailable(e, "the clusters' sums cancel (relative error up to %.1e); use --passes 2", loss)
+		return
+	} else if loss > lossLimit {
+		f.note("digits", "%s has about %d digits left: the clusters' sums cancel; --passes 2 keeps them", e.Name(), digits(loss))
+	}
+	x.infer(e, x.clusterRobust(k.Name, sc), f.o.Level, f.o.Covariance)
+}
+
+// IsInterrupted reports whether err comes from a cancelled context.
+func IsInterrupted(err error) bool {
+	return errors.Is(err, context.Canceled) || errors.Is(err, context.DeadlineExceeded)
+}

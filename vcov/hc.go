@@ -1,0 +1,139 @@
+package vcov
+
+import (
+	"math"
+
+	"github.com/tallrow/tallrow/accum"
+)
+
+// The heteroskedasticity-consistent family: errors of unequal spread that do not
+// move together,
+//
+//	V = c (X'WX)^-1 [ sum_i m_i e_i^2 g(h_i) x_i x_i' ] (X'WX)^-1,  t on N - k
+//
+//	kind  c        g(h)
+//	hc0   1        1              White 1980; Eicker 1967
+//	hc1   N/(N-k)  1              Hinkley 1977
+//	hc2   1        1/(1-h)        Horn, Horn, Duncan 1975
+//	hc3   1        1/(1-h)^2      MacKinnon & White 1985
+//
+// where m_i is 1 without weights, f_i for frequencies, w_i^2 for precision and
+// sampling weights, and h_i the leverage, x'(X'WX)^-1 x, times w_i for precision
+// and sampling weights. hc0 and hc1 come from fourth moments in one pass, or from
+// rows in a second; hc2 and hc3 need the second pass. Cost O(k^2) a row.
+//
+// A row of leverage 1 has residual 0 and adds nothing; a coefficient that it
+// decides has no p, no interval, and no hc2 or hc3 error.
+
+// hcWeight is g as a function of 1-h.
+var hcWeight = map[string]func(gap float64) float64{
+	"hc0": func(float64) float64 { return 1 },
+	"hc1": func(float64) float64 { return 1 },
+	"hc2": func(gap float64) float64 { return 1 / gap },
+	"hc3": func(gap float64) float64 { return 1 / (gap * gap) },
+}
+
+// hc returns the estimate from a meat over internal columns.
+func (x *solution) hc(kind string, meat []float64) *estimate {
+	df := float64(x.df())
+	v := sandwich(x.inverse, x.project(meat), x.k())
+	r := &estimate{v: v, factor: 1, df: df, joint: plainJoint(df)}
+	if kind == "hc1" {
+		r.factor = float64(x.n) / df
+		for i := range v {
+			v[i] *= r.factor
+		}
+	}
+	return r
+}
+
+// cancellation bounds the relative error of each standard error that was
+// contracted from fourth moments: eps times the ratio of what was added to what
+// is left, for each coefficient.
+func (x *solution) cancellation(meat, gross []float64) float64 {
+	k := x.k()
+	abs := func(a []float64) []float64 {
+		out := make([]float64, len(a))
+		for i, v := range a {
+			out[i] = math.Abs(v)
+		}
+		return out
+	}
+	l := make([]float64, k*k) // W G^-1
+	for i := range k {
+		for j, w := range x.wAlias[i*k : (i+1)*k] {
+			axpy(w, x.inverse[j*k:(j+1)*k], l[i*k:(i+1)*k])
+		}
+	}
+	net := sandwich(l, x.project(meat), k)
+	all := sandwich(abs(l), x.projectAbs(gross), k)
+	worst := 0.0
+	for j := range k {
+		if math.IsNaN(x.est[j]) {
+			continue
+		}
+		r := all[j*k+j] / net[j*k+j]
+		if !(r >= 0) {
+			r = math.Inf(1)
+		}
+		worst = max(worst, r)
+	}
+	return 0x1p-53 * worst
+}
+
+// projectAbs is project with the absolute values of Q.
+func (b *basis) projectAbs(m []float64) []float64 {
+	if b.sel != nil {
+		return b.project(m)
+	}
+	c := *b
+	c.q = make([]float64, len(b.q))
+	for i, x := range b.q {
+		c.q[i] = math.Abs(x)
+	}
+	return c.project(m)
+}
+
+// heavyMeat adds the rows of high leverage to a meat, with 1-h and the residual
+// formed without cancellation: with A_-i, b_-i the sums and the fit without row i,
+//
+//	1 - h_i = 1 / (1 + x_i'A_-i^-1 x_i),  e_i = (1 - h_i)(y_i - x_i'b_-i).
+//
+// Light holds the second moments of all other rows. It returns false if leaving
+// out a row makes the terms dependent. Rows carry the root of a precision weight;
+// frequencies are not for this.
+func (x *solution) heavyMeat(sums *accum.RowSums, g func(gap float64) float64, meat []float64) bool {
+	s := x.state
+	p := len(s.Columns)
+	n := p + 1
+	for i := range sums.Heavy {
+		a := append([]float64(nil), sums.Light...)
+		for j := range sums.Heavy {
+			if j != i {
+				z := sums.Heavy[j].Z
+				for r := range n {
+					axpy(z[r], z, a[r*n:(r+1)*n])
+				}
+			}
+		}
+		z := sums.Heavy[i].Z
+		k := x.k()
+		ga := x.project(a)
+		c := make([]float64, k)
+		x.projectVec(a[p*n:p*n+p], c)
+		e := eliminate(ga, k, aliasPivot)
+		if len(e.kept) < x.rank() {
+			return false
+		}
+		xi := make([]float64, k)
+		x.projectVec(z, xi)
+		loo := dot(xi, e.solve(xi))
+		gap := 1 / (1 + loo)
+		res := gap * (z[p] - dot(xi, e.solve(c)))
+		m := res * res * g(gap)
+		for r := range p {
+			axpy(m*z[r], z[:p], meat[r*n:r*n+p])
+		}
+	}
+	return true
+}

@@ -1,0 +1,131 @@
+package vcov
+
+import (
+	"fmt"
+	"math"
+
+	"github.com/tallrow/tallrow/vcov/internal/tail"
+)
+
+// estimate is what an estimator hands over: a covariance of the solved
+// coordinates g and how to read it.
+type estimate struct {
+	v      []float64 // K x K, covariance of g, units of v
+	factor float64
+	df     float64 // of t
+	// joint gives F and its second df from the Wald statistic of q restrictions;
+	// ok is false with a reason where no test exists.
+	joint func(w float64, q int) (f, df2 float64, ok bool, reason string)
+	noP   []bool // coefficients without t, p and interval
+	noSE  []bool // coefficients without an error at all
+}
+
+// plainJoint is W/q on F(q, df).
+func plainJoint(df float64) func(float64, int) (float64, float64, bool, string) {
+	return func(w float64, q int) (float64, float64, bool, string) {
+		return w / float64(q), df, df > 0, "no degrees of freedom"
+	}
+}
+
+// infer fills an Errors entry: se = sqrt(V_jj), t = b/se, p = P(|T_df| >= |t|),
+// interval b -+ t_{df,level} se.
+func (x *solution) infer(e *Errors, r *estimate, level float64, full bool) {
+	k := x.k()
+	v := x.covariance(r.v)
+	e.Status = "ok"
+	e.Factor = Number(r.factor)
+	crit := tail.TQuantileTail(1-level, r.df)
+	for j := range k {
+		se, df, t, p, lp, lo, hi := nan, nan, nan, nan, nan, nan, nan
+		if !math.IsNaN(x.est[j]) && !(r.noSE != nil && r.noSE[j]) {
+			se = math.Sqrt(max(0, v[j*k+j]))
+			df = r.df
+			if x.perfect {
+				se, lo, hi = 0, x.est[j], x.est[j]
+			} else if !(r.noP != nil && r.noP[j]) && se > 0 {
+				t = x.est[j] / se
+				p, lp = tail.T(t, r.df)
+				lo, hi = x.est[j]-crit*se, x.est[j]+crit*se
+			}
+		}
+		e.SE = append(e.SE, Number(se))
+		e.DF = append(e.DF, Number(df))
+		e.T = append(e.T, Number(t))
+		e.P = append(e.P, Number(p))
+		e.Log10P = append(e.Log10P, Number(lp))
+		e.Low = append(e.Low, Number(lo))
+		e.High = append(e.High, Number(hi))
+	}
+	e.Overall = x.overall(r)
+	if k <= 200 || full {
+		for i := range k {
+			row := make([]Number, k)
+			for j := range k {
+				row[j] = Number(v[i*k+j])
+				switch {
+				case math.IsNaN(x.est[i]) || math.IsNaN(x.est[j]), r.noSE != nil && (r.noSE[i] || r.noSE[j]):
+					row[j] = Number(nan)
+				case x.perfect:
+					row[j] = 0
+				}
+			}
+			e.Covariance = append(e.Covariance, row)
+		}
+	}
+}
+
+var nan = math.NaN()
+
+// overall tests that all kept terms but the constant are zero:
+// W = g'V^-1 g over their coordinates, which is invariant to the basis.
+func (x *solution) overall(r *estimate) *Overall {
+	out := &Overall{Number(nan), Number(nan), Number(nan), Number(nan)}
+	if x.perfect {
+		return out
+	}
+	var idx []int
+	for _, p := range x.e.kept {
+		if x.cols[p].term >= 0 {
+			idx = append(idx, p)
+		}
+	}
+	q := len(idx)
+	if q == 0 {
+		return nil
+	}
+	for j := range x.k() {
+		if (r.noP != nil && r.noP[j]) || (r.noSE != nil && r.noSE[j]) {
+			return out
+		}
+	}
+	v := make([]float64, q*q)
+	g := make([]float64, q)
+	for i, p := range idx {
+		g[i] = x.full[p]
+		for j, o := range idx {
+			v[i*q+j] = r.v[p*x.k()+o]
+		}
+	}
+	e := eliminate(v, q, 1e-12)
+	if len(e.kept) < q {
+		return out
+	}
+	f, df2, ok, _ := r.joint(dot(g, e.solve(g)), q)
+	if !ok {
+		return out
+	}
+	p, _ := tail.F(f, float64(q), df2)
+	return &Overall{Number(q), Number(df2), Number(f), Number(p)}
+}
+
+// unavailable marks a kind that cannot be given.
+func (x *solution) unavailable(e *Errors, format string, args ...any) {
+	e.Status = "unavailable"
+	e.Reason = ptr(fmt.Sprintf(format, args...))
+	e.Factor = Number(nan)
+	for range x.k() {
+		for _, s := range []*[]Number{&e.SE, &e.DF, &e.T, &e.P, &e.Log10P, &e.Low, &e.High} {
+			*s = append(*s, Number(nan))
+		}
+	}
+}

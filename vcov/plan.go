@@ -1,0 +1,222 @@
+package vcov
+
+import (
+	"context"
+	"fmt"
+	"runtime"
+	"strings"
+
+	"github.com/tallrow/tallrow/accum"
+	"github.com/tallrow/tallrow/stream"
+)
+
+// Plan is the route of a fit: plain data, fixed by the input and the model
+// before the scan.
+type Plan struct {
+	Passes     int        `json:"passes"`
+	Route      string     `json:"route"`
+	Arithmetic string     `json:"arithmetic"`
+	Workers    int        `json:"workers"`
+	Segments   int        `json:"segments"` // -1: not known before the scan
+	Rows       int64      `json:"rows"`     // -1: not known
+	Bytes      int64      `json:"bytes"`    // -1: not known
+	Memory     int64      `json:"memory"`   // estimate, without clusters and levels
+	Reasons    []string   `json:"reasons"`
+	Costs      []PassCost `json:"costs"` // of the work of one row, all passes
+	Terms      []string   `json:"terms"`
+	// PerCluster and PerLevel are bytes for each cluster and each category level
+	// and worker; their numbers are not known before the scan.
+	PerCluster int64 `json:"per_cluster"`
+	PerLevel   int64 `json:"per_level"`
+
+	needs accum.Needs
+	rows  bool // a row pass is needed
+}
+
+// PassCost is a share of the work, estimated from measured costs on one machine:
+// for comparison only.
+type PassCost struct {
+	What  string  `json:"what"`
+	Share float64 `json:"share"` // of the whole
+}
+
+// Costs of one row in nanoseconds, measured on one core (BenchmarkFit in bench
+// prints what they are here).
+const (
+	costParquetColumn = 4.0
+	costCSVField      = 16.0
+	costGramPair      = 0.45 // for each product of two columns
+	costQuartic       = 0.45 // for each product of four
+	costRowPass       = 2.0  // for each term
+	maxPipeTerms      = 25   // beyond it fourth moments cost more than a copy of the input
+)
+
+// defaultMemory bounds the sums when the caller does not.
+const defaultMemory = 2 << 30
+
+func (o Options) withDefaults() Options {
+	if o.Level == 0 {
+		o.Level = 0.95
+	}
+	if o.Workers <= 0 {
+		o.Workers = runtime.GOMAXPROCS(0)
+	}
+	if o.Memory <= 0 {
+		o.Memory = defaultMemory
+	}
+	return o
+}
+
+func (o *Options) validate(d *stream.Design) error {
+	if !(o.Level > 0 && o.Level < 1) {
+		return stream.Usef("level: found %v, want a number between 0 and 1, such as 0.95", o.Level)
+	}
+	if o.Passes < 0 || o.Passes > 2 {
+		return stream.Usef("passes: found %d, want 1 or 2", o.Passes)
+	}
+	for _, k := range o.Errors {
+		switch k.Name {
+		case "classical", "hc0", "hc1", "hc2", "hc3":
+		case "cr0", "cr1":
+			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
+				return stream.Usef("errors: %s needs a clustering", k.Name)
+			}
+		default:
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, cr0 or cr1", k.Name)
+		}
+	}
+	return nil
+}
+
+// PlanFit chooses the route from the schema and the model; it reads no rows.
+func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) (*Plan, error) {
+	o = o.withDefaults()
+	if err := o.validate(d); err != nil {
+		return nil, err
+	}
+	info := src.Info()
+	p := &Plan{Arithmetic: "double", Workers: o.Workers, Segments: info.Segments, Rows: info.Rows, Bytes: info.Bytes}
+	k, cats := 1, false
+	for _, t := range d.Terms {
+		p.Terms = append(p.Terms, t.Text)
+		if len(t.Categories) > 0 {
+			cats = true
+		} else {
+			k++
+		}
+	}
+	var hc, rows bool
+	clusters := map[int]bool{}
+	for _, e := range o.Errors {
+		switch e.Name {
+		case "hc0", "hc1":
+			hc = true
+		case "hc2", "hc3":
+			rows = true
+			p.why("%s depends on the leverage of every row, which is known only after the first pass", e.Name)
+		case "cr0", "cr1":
+			clusters[e.Cluster] = true
+		}
+	}
+	if o.Passes == 1 && rows {
+		return nil, stream.Usef("passes: hc2 and hc3 need two passes; leave out --passes 1 or those errors")
+	}
+	if cats && (hc || len(clusters) > 0) {
+		if o.Passes == 1 {
+			return nil, stream.Usef("passes: robust errors with category terms need two passes; leave out --passes 1")
+		}
+		rows = true
+		p.why("robust errors with category terms are summed row by row")
+	}
+	columns := float64(len(d.Uses()))
+	read := columns * costCSVField
+	if info.Format == "parquet" {
+		read = columns * costParquetColumn
+	}
+	c := float64(k + 1)
+	gram := c * (c + 1) / 2 * costGramPair
+	quartic := (c + 2) * (c + 1) * c * (c + 3) / 24 * costQuartic
+	second := read + gram + c*costRowPass
+	if hc && !rows {
+		switch pipe := !info.Rewindable; {
+		case o.Passes == 2:
+			rows = true
+			p.why("two passes were asked for")
+		case o.Passes == 1:
+			p.why("one pass was asked for")
+		case pipe && k <= maxPipeTerms:
+			p.why("a pipe can be read once; fourth moments of %d terms fit", k)
+		case pipe:
+			rows = true
+			p.why("fourth moments of %d terms cost more than copying the pipe to scratch and reading it again", k)
+		case second < quartic:
+			rows = true
+			p.why("a second pass (about %.0f ns a row) is cheaper than fourth moments (about %.0f)", second, quartic)
+		default:
+			p.why("fourth moments (about %.0f ns a row) are cheaper than a second pass (about %.0f)", quartic, second)
+		}
+	}
+	if len(clusters) > 0 && !rows && o.Passes == 2 {
+		rows = true
+		p.why("two passes were asked for")
+	}
+	p.rows = rows
+	p.Passes = 1
+	var route []string
+	p.cost("read", read)
+	p.cost("second moments", gram)
+	if hc && !rows {
+		p.needs.Fourth = true
+		p.cost("fourth moments", quartic)
+		route = append(route, "fourth moments")
+	}
+	if len(clusters) > 0 && !rows {
+		for i := range d.Keys {
+			if clusters[i] {
+				p.needs.Clusters = append(p.needs.Clusters, i)
+			}
+		}
+		p.PerCluster = int64(c*(c+1)/2) * 24
+		p.cost("cluster sums", float64(len(clusters))*(c*(c+1)/2+20))
+		route = append(route, "cluster sums")
+		p.why("clusters keep their second moments; beyond %s of them a second pass keeps scores only", "an eighth of --memory")
+	}
+	if rows {
+		p.Passes = 2
+		p.PerCluster = int64(c) * 24
+		p.cost("second read", read)
+		p.cost("row pass", gram+c*costRowPass+float64(len(clusters))*(c+20))
+		route = append(route, "row pass")
+	}
+	if len(route) == 0 {
+		route = append(route, "second moments")
+	}
+	if cats {
+		p.PerLevel = int64(c) * 40
+	}
+	p.Route = strings.Join(route, ", ")
+	p.Memory = int64(o.Workers) * (info.WorkerBytes + 560*int64(c*(c+1)/2) + 2*8*stream.BatchRows*int64(c))
+	if p.needs.Fourth {
+		n := int64((c + 2) * (c + 1) * c * (c + 3) / 24)
+		p.Memory += int64(o.Workers) * n * (560 + 8)
+	}
+	if p.Memory > o.Memory {
+		return nil, &accum.MemoryError{What: fmt.Sprintf("%d terms over %d workers", k, o.Workers), Need: p.Memory, Have: o.Memory}
+	}
+	var all float64
+	for _, c := range p.Costs {
+		all += c.Share
+	}
+	for i := range p.Costs {
+		p.Costs[i].Share /= all
+	}
+	return p, nil
+}
+
+func (p *Plan) why(format string, args ...any) {
+	p.Reasons = append(p.Reasons, fmt.Sprintf(format, args...))
+}
+
+func (p *Plan) cost(what string, ns float64) {
+	p.Costs = append(p.Costs, PassCost{what, ns})
+}

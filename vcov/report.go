@@ -1,0 +1,163 @@
+package vcov
+
+import (
+	"fmt"
+	"maps"
+	"math"
+	"slices"
+
+	"github.com/tallrow/tallrow/stream"
+)
+
+// Version of the program, as results carry it.
+const Version = "0.1.0"
+
+var weightNames = map[stream.WeightKind]string{stream.Frequency: "frequency", stream.Precision: "precision", stream.Sampling: "sampling"}
+
+// result assembles the plain-data result.
+func (f *fitter) result() *Result {
+	x, s, d := f.sol, f.state, f.d
+	r := &Result{Format: Format, Version: Version, Outcome: d.OutcomeText(), N: x.n, Rank: x.rank(),
+		Aliased: append([]Alias{}, x.alias...), BaseLevels: x.bases, Hypotheses: []Hypothesis{}, Errors: []Errors{}}
+	info := f.src.Info()
+	r.Input = Input{Fingerprint: s.Fingerprint, Files: info.Files, Bytes: info.Bytes}
+	if r.Input.Bytes < 0 {
+		r.Input.Bytes = s.Bytes
+	}
+	r.Rows = Rows{Read: s.Read, Used: s.Tally.Used, Missing: s.Tally.Missing, Excluded: s.Tally.Excluded,
+		Malformed: s.Malformed, ZeroWeight: s.Tally.ZeroWeight, MissingBy: s.Tally.MissingBy}
+	if r.Rows.MissingBy == nil {
+		r.Rows.MissingBy = map[string]int64{}
+	}
+	for _, p := range s.Problems {
+		r.Rows.Problems = append(r.Rows.Problems, p.Error())
+	}
+	r.Weight = WeightSum{Sum: Number(s.Weight)}
+	if n, ok := weightNames[x.kind]; ok {
+		r.Weight.Kind = ptr(n)
+	}
+	for _, u := range x.cols {
+		r.Terms = append(r.Terms, u.label)
+	}
+	for _, b := range x.est {
+		r.Estimates = append(r.Estimates, Number(b))
+	}
+	f.fitQuality(r)
+	for _, k := range f.o.Errors {
+		r.Errors = append(r.Errors, f.errorsFor(k))
+	}
+	f.warnings(r)
+	r.Model = f.model()
+	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments,
+		Bytes: f.bytes, Condition: Number(x.condition())}
+	return r
+}
+
+// fitQuality fills residual, R2 and adjusted R2. With mean-1 weights for precision
+// and sampling weights,
+//
+//	sd^2 = RSS (N / sum w) / (N - k),  R2 = 1 - RSS/TSS,
+//	adjusted R2 = 1 - (1 - R2) (N - c)/(N - k),  c = 1 if centred, else 0.
+func (f *fitter) fitQuality(r *Result) {
+	x := f.sol
+	s2 := x.state.Frame.YInv * x.state.Frame.YInv
+	rss := x.rss / s2
+	if x.perfect {
+		rss = 0
+	}
+	n, df := float64(x.n), float64(x.df())
+	mean1 := 1.0
+	if x.kind == stream.Precision || x.kind == stream.Sampling {
+		mean1 = n / x.state.Weight
+	}
+	r.Residual = Residual{DF: x.df(), SS: Number(rss), SD: Number(math.Sqrt(rss * mean1 / df))}
+	if df <= 0 {
+		r.Residual.SD = Number(nan)
+	}
+	centred := x.constantSpanned()
+	r.R2Kind = "uncentred"
+	c := 0.0
+	if centred {
+		r.R2Kind, c = "centred", 1
+	}
+	tss := x.outcomeSquares(centred) / s2
+	total := x.outcomeSquares(false) / s2
+	r.R2, r.R2Adjusted = Number(nan), Number(nan)
+	if tss > perfectShare*perfectShare*total {
+		r2 := 1 - rss/tss
+		r.R2 = Number(r2)
+		if df > 0 {
+			r.R2Adjusted = Number(1 - (1-r2)*(n-c)/df)
+		}
+	}
+}
+
+func (f *fitter) warnings(r *Result) {
+	x, s := f.sol, f.state
+	r.Warnings = append([]Warning{}, x.warnings()...)
+	for _, e := range slices.Sorted(maps.Keys(s.Tally.NoValue)) {
+		r.Warnings = append(r.Warnings, Warning{Code: "no-value", Term: ptr(e),
+			Text: fmt.Sprintf("%s has no value in %d rows although its cells are there; those rows count as missing", e, s.Tally.NoValue[e])})
+	}
+	if x.perfect {
+		r.Warnings = append(r.Warnings, Warning{Code: "perfect-fit", Text: "the terms give the outcome exactly: errors are 0, and t and p do not exist"})
+	}
+	if x.df() <= 0 {
+		r.Warnings = append(r.Warnings, Warning{Code: "no-degrees-of-freedom", Text: fmt.Sprintf("%d rows for %d terms: there are no errors", x.n, x.rank())})
+	}
+	if !r.R2.Exists() && !x.perfect {
+		r.Warnings = append(r.Warnings, Warning{Code: "constant-outcome", Text: "the outcome is the same in every used row; R2 does not exist"})
+	}
+	for i := range r.Errors {
+		e := &r.Errors[i]
+		if e.Status != "ok" || x.perfect {
+			continue
+		}
+		for j, t := range r.Terms {
+			if !r.Estimates[j].Exists() || e.T[j].Exists() {
+				continue
+			}
+			what := "a single row"
+			if len(e.Clusters) > 0 {
+				what = "a single cluster"
+			}
+			r.Warnings = append(r.Warnings, Warning{Code: "lone", Term: ptr(t), Kind: ptr(e.Name()),
+				Text: fmt.Sprintf("%s is determined by %s; %s gives it no p and no interval", t, what, e.Name())})
+		}
+	}
+	r.Warnings = append(r.Warnings, f.warn...)
+}
+
+// model echoes what was asked.
+func (f *fitter) model() Model {
+	d, sp := f.d, f.d.Spec
+	m := Model{Outcome: d.OutcomeText(), Terms: []string{}, Constant: !sp.NoConstant, Cluster: []string{}, Errors: []string{},
+		Missing: "skip", BadRows: "stop", Level: Number(f.o.Level), Zone: "UTC"}
+	for i := range d.Terms {
+		m.Terms = append(m.Terms, d.Terms[i].Text)
+	}
+	if sp.Weight != "" {
+		m.Weight = ptr(d.WeightText())
+		m.WeightKind = ptr(weightNames[sp.WeightKind])
+	}
+	if sp.Where != "" {
+		m.Where = ptr(d.WhereText())
+	}
+	for _, k := range d.Keys {
+		m.Cluster = append(m.Cluster, k.Text)
+	}
+	for _, k := range f.o.Errors {
+		name := k.Name
+		if k.Cluster >= 0 && k.Cluster < len(d.Keys) && (k.Name == "cr0" || k.Name == "cr1") {
+			name += "(" + d.Keys[k.Cluster].Text + ")"
+		}
+		m.Errors = append(m.Errors, name)
+	}
+	if sp.Stop {
+		m.Missing = "stop"
+	}
+	if sp.Zone != nil {
+		m.Zone = sp.Zone.String()
+	}
+	return m
+}
