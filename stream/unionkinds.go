@@ -2,6 +2,7 @@ package stream
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"io"
 	"slices"
@@ -174,9 +175,12 @@ func joinColumns(a, b Column, aFixed, bFixed bool) (Column, bool) {
 
 func widens(k Kind) bool { return k == Int64 || k == Uint64 || k == Float64 }
 
-// emptyAtFirst reports whether the first segment has no cell in column j, so
-// that its kind says nothing. A segment reaches further than the rows from which
-// kinds are guessed.
+// guessRows is how many rows emptyAtFirst looks at: those that guesses of kinds
+// come from.
+const guessRows = 1000
+
+// emptyAtFirst reports whether the first rows have no cell in column j, so that
+// its kind says nothing.
 func (m *member) emptyAtFirst(ctx context.Context, j int) (empty bool, err error) {
 	src, err := m.acquire(ctx)
 	if err != nil {
@@ -188,27 +192,36 @@ func (m *member) emptyAtFirst(ctx context.Context, j int) (empty bool, err error
 		return false, err
 	}
 	defer func() { err = firstErr(err, sc.Close()) }()
-	seg, err := sc.Next(ctx)
-	if err == io.EOF {
-		return true, nil
-	}
-	if err != nil {
-		return false, err
-	}
-	defer func() { err = firstErr(err, seg.Close()) }()
 	var b Batch
-	for {
-		err := seg.Read(&b)
+	for rows := 0; rows < guessRows; {
+		seg, err := sc.Next(ctx)
 		if err == io.EOF {
-			return true, nil
+			break
 		}
 		if err != nil {
 			return false, err
 		}
-		if hasCell(&b.Cols[0]) {
-			return false, nil
+		for rows < guessRows && err == nil {
+			if err = seg.Read(&b); err == nil {
+				rows += b.Rows
+				if hasCell(&b.Cols[0]) {
+					return false, seg.Close()
+				}
+			}
+		}
+		if close := seg.Close(); err == io.EOF || err == nil {
+			err = close
+		}
+		if err != nil {
+			// A cell that does not fit the kind was not there for the guess.
+			var row *RowError
+			if errors.As(err, &row) && row.Pos.Column == m.schema.Columns[j].Name {
+				break
+			}
+			return false, err
 		}
 	}
+	return true, nil
 }
 
 // hasCell reports whether any cell is there.
