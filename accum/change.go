@@ -1,0 +1,153 @@
+package accum
+
+// denseMap returns the width x width matrix J with z_to = J z_from for the same
+// row in two frames.
+func denseMap(l *layout, from, to *Frame) []float64 {
+	w := l.width
+	j := make([]float64, w*w)
+	if from == to {
+		for i := range w {
+			j[i*w+i] = 1
+		}
+		return j
+	}
+	j[0] = 1
+	// c in units of from, as combinations of its (1, u).
+	var back []float64
+	if from.White {
+		back = invertUpper(from.T, l.p0, l.p0)
+	}
+	c := make([][]float64, l.p0) // rows of length p0+1
+	for i := range l.p0 {
+		row := make([]float64, l.p0+1)
+		r := to.Inv[i] / from.Inv[i]
+		row[0] = (from.Shift[i] - to.Shift[i]) * to.Inv[i]
+		if from.White {
+			for a := 0; a <= i; a++ {
+				row[1+a] = back[a*l.p0+i] * r
+			}
+		} else {
+			row[1+i] = r
+		}
+		c[i] = row
+	}
+	for k := range l.p0 {
+		row := j[(1+k)*w:]
+		for i := 0; i <= k; i++ {
+			t := 0.0
+			switch {
+			case to.White:
+				t = to.T[i*l.p0+k]
+			case i == k:
+				t = 1
+			}
+			if t == 0 {
+				continue
+			}
+			for a, x := range c[i] {
+				row[a] += t * x
+			}
+		}
+	}
+	// y = YShift + (v + H u) / YInv in both frames.
+	r := to.YInv / from.YInv
+	row := j[l.v()*w:]
+	row[0] = (from.YShift - to.YShift) * to.YInv
+	row[l.v()] = r
+	for a, h := range from.H {
+		row[1+a] = r * h
+	}
+	for k, h := range to.H {
+		for a := range l.p0 + 1 {
+			row[a] -= h * j[(1+k)*w+a]
+		}
+	}
+	for f, d := range l.factors {
+		i := l.p0 + 2 + f
+		j[i*w] = (from.Shift[d] - to.Shift[d]) * to.Inv[d]
+		j[i*w+i] = to.Inv[d] / from.Inv[d]
+	}
+	return j
+}
+
+// congruence returns J A J' for n x n matrices.
+func congruence(j, a []float64, n int) []float64 {
+	t := matmul(j, a, n, false)
+	return matmul(t, j, n, true)
+}
+
+// matmul returns A B or A B' for n x n matrices.
+func matmul(a, b []float64, n int, transposed bool) []float64 {
+	out := make([]float64, n*n)
+	for i := range n {
+		if transposed {
+			for k := range n {
+				out[i*n+k] = dotp(a[i*n:(i+1)*n], b[k*n:(k+1)*n])
+			}
+			continue
+		}
+		for t := range n {
+			if x := a[i*n+t]; x != 0 {
+				axpy(x, b[t*n:(t+1)*n], out[i*n:(i+1)*n])
+			}
+		}
+	}
+	return out
+}
+
+// sparseMap lists the nonzero entries of one row of the map between the internal
+// columns of two frames.
+type sparseMap struct {
+	col []int
+	val []float64
+}
+
+// internalMap gives, for each internal column of the last frame and v, its
+// combination of the columns of epoch i.
+func (s *State) internalMap(i int) []sparseMap {
+	l, w := s.lay, s.lay.width
+	j := s.maps[i]
+	at := s.denseAt()
+	out := make([]sparseMap, len(s.Columns)+1)
+	for a, dst := range at {
+		for b, src := range at {
+			if x := j[a*w+b]; x != 0 {
+				out[dst].col = append(out[dst].col, src)
+				out[dst].val = append(out[dst].val, x)
+			}
+		}
+	}
+	for c := range s.Columns {
+		col := &s.Columns[c]
+		if col.Group < 0 {
+			continue
+		}
+		if col.Part == 0 {
+			out[c] = sparseMap{[]int{c}, []float64{1}}
+			continue
+		}
+		f := l.groups[col.Group].parts[col.Part]
+		out[c] = sparseMap{[]int{c - col.Part, c}, []float64{j[f*w], j[f*w+f]}}
+	}
+	return out
+}
+
+// move maps the second moments of epoch i to the last frame.
+func (s *State) move(i int, m []float64, n int) []float64 {
+	rows := s.internalMap(i)
+	half := make([]float64, n*n)
+	for r, sp := range rows {
+		for k, c := range sp.col {
+			axpy(sp.val[k], m[c*n:(c+1)*n], half[r*n:(r+1)*n])
+		}
+	}
+	out := make([]float64, n*n)
+	for r, sp := range rows {
+		for k, c := range sp.col {
+			for q := range n {
+				out[q*n+r] += sp.val[k] * half[q*n+c]
+			}
+		}
+	}
+	return out
+}

@@ -1,0 +1,26 @@
+// Package accum sums the rows of a design in one pass over a source, or two.
+//
+// # Vocabulary
+//
+//   - A Frame is the coordinate system of the sums: shifted, scaled and, where
+//     terms are nearly collinear, whitened; chosen from fixed rows of the input.
+//   - z = (1, u, v, f) is a row in the frame: constant, numeric terms, outcome
+//     (about its residual), numeric factors of category products.
+//   - The internal columns of a state are 1, u and, for each combination of
+//     category levels that occurs, an indicator and its products with f; v last.
+//   - Second moments are sums of z z'. Fourth moments are sums of products of
+//     four entries of z. A keyed table holds sums for each key.
+//
+// # Why the bits are always the same
+//
+// Sums are made in row order within a segment (whole data) or within a fold of
+// 65,536 rows from the segment's start (keyed tables), with fixed lanes and
+// math.FMA. What is joined across segments is joined exactly: whole-data sums
+// in integer superaccumulators over the full range of float64, keyed sums in
+// 128-bit fixed point. Segments, folds and blocks are cut by the input alone, so
+// the result does not depend on the number of workers or on who came first.
+//
+// # Limits
+//
+// One worker holds its own keyed tables; they are joined at the end.
+package accum

@@ -1,0 +1,211 @@
+package accum
+
+import (
+	"context"
+	"errors"
+	"io"
+
+	"github.com/tallrow/tallrow/stream"
+)
+
+// epoch is the sums of a run of rows in one frame.
+type epoch struct {
+	frame    *Frame
+	gram     []float64 // packed, width columns
+	fourth   []float64
+	cats     []*interner
+	tups     []*tuples
+	tables   []*keyTable
+	keys     []*interner
+	clusters []*keyTable
+	lone     []*loneTracker
+	weight   superSum
+	freq     int64
+	rows     int64
+	nonzero  []int64
+	tally    stream.Tally
+}
+
+// joinWorkers joins the sums of workers exactly: the order does not show.
+func joinWorkers(ws []*firstWorker) *epoch {
+	w := ws[0]
+	e := &epoch{frame: w.frame, cats: w.cats, tups: w.tups, tables: w.tables, keys: w.keys, clusters: w.clusters,
+		lone: w.lone, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero}
+	e.tally.Add(&w.eval.Tally)
+	for _, o := range ws[1:] {
+		w.gramX.merge(o.gramX)
+		if w.q != nil {
+			w.fourX.merge(o.fourX)
+		}
+		cat := make([][]int32, len(o.cats))
+		for c, in := range o.cats {
+			cat[c] = joinKeys(e.cats[c], in)
+		}
+		for i, t := range o.tables {
+			to := joinTuples(e.tups[i], o.tups[i], w.lay.tables[i].cats, cat, len(t.rows))
+			e.tables[i].mergeFrom(t, func(id int32) int32 { return to[id] })
+		}
+		for k, t := range o.clusters {
+			if t == nil {
+				continue
+			}
+			to := joinKeys(e.keys[k], o.keys[k])
+			if !w.budget.dropped.Load() {
+				e.clusters[k].mergeFrom(t, func(id int32) int32 { return to[id] })
+			}
+			e.lone[k].mergeFrom(o.lone[k], to)
+		}
+		e.weight.merge(&o.weight)
+		e.freq += o.freq
+		e.rows += o.rows
+		for j, n := range o.nonzero {
+			e.nonzero[j] += n
+		}
+		e.tally.Add(&o.eval.Tally)
+	}
+	e.gram = make([]float64, len(w.gram))
+	w.gramX.values(e.gram)
+	if w.q != nil {
+		e.fourth = make([]float64, len(w.fourth))
+		w.fourX.values(e.fourth)
+	}
+	return e
+}
+
+func joinKeys(dst, src *interner) []int32 {
+	to := make([]int32, src.size())
+	for i := range to {
+		to[i] = dst.put(src.key(int32(i)))
+	}
+	return to
+}
+
+// joinTuples returns the ids in dst of the n combinations of src.
+func joinTuples(dst, src *tuples, cats []int, cat [][]int32, n int) []int32 {
+	to := make([]int32, n)
+	ids := make([]int32, len(cats))
+	one := make([][]int32, len(cats))
+	for i := range to {
+		src.split(int32(i), ids)
+		for c, id := range ids {
+			one[c] = []int32{cat[cats[c]][id]}
+		}
+		dst.join(one, to[i:i+1])
+	}
+	return to
+}
+
+// epochWorker sums the first segment of a source that cannot be sampled, in
+// epochs of 1, 1, 2, 4, ... blocks.
+type epochWorker struct {
+	*firstWorker
+	shift  bool
+	blocks int
+	next   int
+	epochs []*epoch
+}
+
+func (w *epochWorker) add() error {
+	if w.blocks == w.next {
+		if err := w.end(); err != nil {
+			return err
+		}
+		rows := previousRows(w.lay, w.epochs)
+		rows.addBlock(&w.block, w.lay)
+		w.frame = buildFrame(rows, w.lay.p0, w.shift)
+		w.next = max(1, 2*w.next)
+	}
+	w.blocks++
+	return w.firstWorker.add()
+}
+
+// end closes the present epoch.
+func (w *epochWorker) end() error {
+	if w.blocks == 0 {
+		return nil
+	}
+	if err := w.fold(); err != nil {
+		return err
+	}
+	if err := w.segment(0); err != nil {
+		return err
+	}
+	w.epochs = append(w.epochs, joinWorkers([]*firstWorker{w.firstWorker}))
+	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget)
+	w.eval.Tally = stream.Tally{}
+	return nil
+}
+
+// runEpochs reads a source that cannot be sampled. Within the first segment an
+// epoch is 1, 1, 2, 4, ... blocks, later 1, 2, 4, ... segments; each has a frame
+// from all rows before it and its own first block, so that a file sorted by a
+// term cannot spoil the sums.
+func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift bool, workers int) ([]*epoch, error) {
+	seg, err := scan.Next(ctx)
+	if errors.Is(err, io.EOF) {
+		return nil, nil
+	}
+	if err != nil {
+		return nil, err
+	}
+	ew := &epochWorker{shift: shift}
+	ew.firstWorker = newFirstWorker(l, newLoader(l, trivialFrame(l)), needs, b)
+	once := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
+	if err := p.run(ctx, []blockWorker{ew}, &begun{seg, false}, once); err != nil {
+		return nil, err
+	}
+	tail := ew.eval.Tally // rows that were read but not used still count
+	if err := ew.end(); err != nil {
+		return nil, err
+	}
+	epochs := ew.epochs
+	if len(epochs) == 0 {
+		epochs = append(epochs, joinWorkers([]*firstWorker{ew.firstWorker}))
+		epochs[0].tally = tail
+	}
+	for size := 1; ; size *= 2 {
+		seg, err := scan.Next(ctx)
+		if errors.Is(err, io.EOF) {
+			return epochs, nil
+		}
+		if err != nil {
+			return nil, err
+		}
+		ws := make([]*firstWorker, workers)
+		bw := make([]blockWorker, workers)
+		for i := range ws {
+			ws[i] = newFirstWorker(l, newLoader(l, nil), needs, b)
+			bw[i] = ws[i]
+		}
+		// The first block of the epoch takes part in its frame.
+		rows := previousRows(l, epochs)
+		ld := ws[0].loader
+		err = seg.Read(&ld.batch)
+		if err == nil {
+			err = ld.eval.Eval(&ld.batch, seg.Locate, &ld.block)
+		}
+		loaded := err == nil
+		if loaded {
+			rows.addBlock(&ld.block, l)
+		} else if !errors.Is(err, io.EOF) {
+			seg.Close()
+			return nil, err
+		}
+		f := buildFrame(rows, l.p0, shift)
+		for _, w := range ws {
+			w.frame = f
+		}
+		left := size - 1
+		next := func(ctx context.Context) (stream.Segment, error) {
+			if left == 0 {
+				return nil, io.EOF
+			}
+			left--
+			return scan.Next(ctx)
+		}
+		if err := p.run(ctx, bw, &begun{seg, loaded}, next); err != nil {
+			return nil, err
+		}
+		epochs = append(epochs, joinWorkers(ws))
+	}
+}

@@ -1,0 +1,338 @@
+package accum
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"math"
+	"sync/atomic"
+
+	"github.com/tallrow/tallrow/accum/internal/kernel"
+	"github.com/tallrow/tallrow/stream"
+)
+
+// firstWorker sums second moments, and on request fourth moments and the second
+// moments of clusters, in one frame.
+type firstWorker struct {
+	*loader
+	needs  *Needs
+	budget *budget
+
+	gram   []float64 // of the present segment
+	gramX  superVec
+	q      *quartic
+	fourth []float64
+	fourX  superVec
+	zs     []float64 // z times a root of the weight
+	root4  []float64
+
+	cats   []*interner
+	tups   []*tuples
+	tables []*keyTable
+	ids    [][]int32
+	tid    []int32
+	sel    [][]int32
+
+	keys     []*interner // nil for keys that are not wanted
+	clusters []*keyTable
+	lone     []*loneTracker
+	zrow     []float64
+
+	weight  superSum
+	freq    int64
+	rows    int64
+	nonzero []int64
+}
+
+// budget watches the memory of the keyed tables of all workers.
+type budget struct {
+	memory  int64
+	unit    int
+	dropped atomic.Bool // cluster sums outgrew their share and were dropped
+}
+
+func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker {
+	w := &firstWorker{loader: ld, needs: needs, budget: b}
+	w.gram = make([]float64, l.width*(l.width+1)/2)
+	w.gramX = make(superVec, len(w.gram))
+	w.zs = w.z
+	if w.root != nil {
+		w.zs = make([]float64, len(w.z))
+	}
+	if needs.Fourth {
+		w.q = newQuartic(l.p0 + 2)
+		w.fourth = make([]float64, w.q.size())
+		w.fourX = make(superVec, w.q.size())
+		w.root4 = make([]float64, stride)
+	}
+	for _, c := range l.design.Categories {
+		w.cats = append(w.cats, newInterner(c.Kind))
+		w.ids = append(w.ids, make([]int32, stride))
+	}
+	w.tid = make([]int32, stride)
+	for i := range l.tables {
+		w.tups = append(w.tups, newTuples(len(l.tables[i].cats)))
+		w.tables = append(w.tables, newKeyTable(len(l.tables[i].prods), b.unit))
+	}
+	w.keys = make([]*interner, len(l.design.Keys))
+	w.clusters = make([]*keyTable, len(l.design.Keys))
+	w.lone = make([]*loneTracker, len(l.design.Keys))
+	p := l.p0 + 2
+	for _, k := range needs.Clusters {
+		w.keys[k] = newInterner(l.design.Keys[k].Kind)
+		w.clusters[k] = newKeyTable(p*(p+1)/2, b.unit)
+		w.lone[k] = newLoneTracker(l.p0)
+	}
+	w.zrow = make([]float64, p)
+	w.nonzero = make([]int64, l.p0)
+	return w
+}
+
+func (w *firstWorker) loading() *loader { return w.loader }
+
+func (w *firstWorker) add() error {
+	w.load()
+	l, n := w.lay, w.block.Rows
+	if w.root != nil {
+		w.scaled(w.zs, w.root, l.width)
+		for _, x := range w.block.Weight[:n] {
+			w.weight.add(x)
+			w.freq += int64(x) // whole numbers when it matters
+		}
+	}
+	w.rows += int64(n)
+	kernel.Gram(w.gram, w.zs, stride, n, l.width)
+	for j := range l.p0 {
+		var nz int64
+		for _, x := range w.block.X[j][:n] {
+			if x != 0 {
+				nz++
+			}
+		}
+		w.nonzero[j] += nz
+	}
+	if w.q != nil {
+		z := w.zs
+		if w.root != nil && l.design.Spec.WeightKind == stream.Frequency {
+			// The meat takes a frequency once: each of four factors gets its fourth root.
+			z = w.fourthRoots()
+		}
+		w.q.add(w.fourth, z, n)
+	}
+	if len(l.tables) > 0 {
+		for c, in := range w.cats {
+			in.ids(&w.block.Cat[c], n, w.ids[c])
+		}
+		for i := range l.tables {
+			s := &l.tables[i]
+			w.sel = w.sel[:0]
+			for _, c := range s.cats {
+				w.sel = append(w.sel, w.ids[c])
+			}
+			tid := w.tid[:n]
+			w.tups[i].join(w.sel, tid)
+			addProducts(w.tables[i], tid, w.zs, s.prods)
+		}
+	}
+	if !w.budget.dropped.Load() {
+		for k, t := range w.clusters {
+			if t == nil {
+				continue
+			}
+			tid := w.tid[:n]
+			w.keys[k].ids(&w.block.Key[k], n, tid)
+			w.lone[k].add(tid, w.block.X)
+			w.clusterRows(t, tid)
+		}
+	}
+	return nil
+}
+
+func (w *firstWorker) fourthRoots() []float64 {
+	n := w.block.Rows
+	for r, x := range w.root[:n] {
+		w.root4[r] = math.Sqrt(x)
+	}
+	if len(w.zs) != len(w.z) || &w.zs[0] == &w.z[0] {
+		return w.z
+	}
+	// zs is only needed for the tables, which a fourth-moment pass does not have.
+	w.scaled(w.zs, w.root4, w.lay.p0+2)
+	return w.zs
+}
+
+// addProducts adds, for each row, the products of pairs of columns to the
+// partial sums of its key.
+func addProducts(t *keyTable, ids []int32, z []float64, prods [][2]int) {
+	for r, id := range ids {
+		part := t.at(id)
+		t.rows[id]++
+		for i, p := range prods {
+			part[i] = math.FMA(z[p[0]*stride+r], z[p[1]*stride+r], part[i])
+		}
+	}
+}
+
+// clusterRows adds the products of (1, u, v) of each row to its cluster.
+func (w *firstWorker) clusterRows(t *keyTable, ids []int32) {
+	p := len(w.zrow)
+	zr := w.zrow
+	for r, id := range ids {
+		part := t.at(id)
+		t.rows[id]++
+		for j := range zr {
+			zr[j] = w.zs[j*stride+r]
+		}
+		k := 0
+		for j := range p {
+			x := zr[j]
+			row := part[k : k+j+1]
+			for i := range row {
+				row[i] = math.FMA(zr[i], x, row[i])
+			}
+			k += j + 1
+		}
+	}
+}
+
+func (w *firstWorker) fold() error {
+	var held int64
+	for i, t := range w.tables {
+		t.flush()
+		held += t.memory() + w.tups[i].memory()
+	}
+	columns := int64(w.lay.p0 + 2)
+	for i := range w.lay.tables {
+		s := &w.lay.tables[i]
+		if g := w.lay.groupIndex(s.cats); g >= 0 {
+			columns += int64(len(w.tables[i].rows)) * int64(len(w.lay.groups[g].parts))
+		}
+	}
+	for _, c := range w.cats {
+		held += c.memory()
+	}
+	// The solve holds about four dense matrices of the internal columns.
+	if need := held + 4*8*columns*columns; len(w.tables) > 0 && need > w.budget.memory {
+		return &MemoryError{What: w.categoriesText(), Need: need, Have: w.budget.memory}
+	}
+	var cl int64
+	for k, t := range w.clusters {
+		if t != nil && !w.budget.dropped.Load() {
+			t.flush()
+			cl += w.clusterBytes(k)
+		}
+	}
+	if cl > w.budget.memory/8 {
+		w.budget.dropped.Store(true)
+	}
+	return nil
+}
+
+// clusterBytes is the size of the cluster sums proper: it depends on the number
+// of clusters alone, so that the same data always take the same route.
+func (w *firstWorker) clusterBytes(k int) int64 {
+	t := w.clusters[k]
+	return int64(len(t.rows)) * int64(t.width) * 16
+}
+
+func (w *firstWorker) categoriesText() string {
+	big, name := 0, ""
+	for c, in := range w.cats {
+		if n := in.size(); n > big {
+			big, name = n, w.lay.design.Categories[c].Text
+		}
+	}
+	return fmt.Sprintf("each(%s) has %d levels or more", name, big)
+}
+
+func (w *firstWorker) segment(int) error {
+	w.gramX.addVec(w.gram)
+	clear(w.gram)
+	if w.q != nil {
+		w.fourX.addVec(w.fourth)
+		clear(w.fourth)
+	}
+	return nil
+}
+
+// First is pass one: it chooses the frame from fixed rows of the input, reads all
+// segments with o.Workers goroutines and returns the state of the sums. Where the
+// source cannot be sampled the frame is renewed in doubling epochs. The result
+// does not depend on the number of workers.
+//
+// Errors are those of the source and the evaluator, *NoRowsError, *MemoryError,
+// and the context's.
+func First(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options) (*State, error) {
+	return first(ctx, src, d, needs, o, nil, defaultUnit)
+}
+
+// Again repeats pass one in a frame made from all rows that s has seen.
+func Again(ctx context.Context, src stream.Source, s *State, needs Needs, o Options) (*State, error) {
+	f := s.fullFrame()
+	return first(ctx, src, s.lay.design, needs, o, f, defaultUnit)
+}
+
+func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options, f *Frame, unit int) (*State, error) {
+	l := newLayout(d)
+	if len(l.groups) > 0 && (needs.Fourth || len(needs.Clusters) > 0) {
+		return nil, errors.New("accum: fourth moments and cluster sums of categories need a second pass")
+	}
+	stamp, err := src.Stamp()
+	if err != nil {
+		return nil, err
+	}
+	shift := l.shifted()
+	if f == nil && src.Info().Sampled {
+		if f, err = sampleFrame(ctx, src, l, shift); err != nil {
+			return nil, err
+		}
+	}
+	p := newPass(o.Meter)
+	p.meter.Pass.Store(1)
+	p.meter.Rows.Store(0)
+	p.meter.Bytes.Store(0)
+	p.meter.Total.Store(src.Info().Bytes)
+	b := &budget{memory: o.Memory, unit: unit}
+	scan, err := src.Scan(ctx, d.Uses())
+	if err != nil {
+		return nil, err
+	}
+	defer scan.Close()
+	var epochs []*epoch
+	if f != nil {
+		ws := make([]*firstWorker, max(1, o.Workers))
+		bw := make([]blockWorker, len(ws))
+		for i := range ws {
+			ws[i] = newFirstWorker(l, newLoader(l, f), &needs, b)
+			bw[i] = ws[i]
+		}
+		if err := p.run(ctx, bw, nil, scan.Next); err != nil {
+			return nil, err
+		}
+		epochs = append(epochs, joinWorkers(ws))
+	} else {
+		if epochs, err = runEpochs(ctx, p, scan, l, &needs, b, shift, max(1, o.Workers)); err != nil {
+			return nil, err
+		}
+	}
+	if err := scan.Close(); err != nil {
+		return nil, err
+	}
+	s, refit, err := newState(l, &needs, p, epochs, b)
+	if err != nil {
+		return nil, err
+	}
+	s.stamp = stamp
+	if refit != unit && src.Info().Rewindable && unit == defaultUnit {
+		// The unit of the keyed sums did not suit the data: sum again with one that does.
+		s2, err := first(ctx, src, d, needs, o, f, refit)
+		if err == nil {
+			s2.Repeated = append(s2.Repeated, "keyed sums needed another unit")
+		}
+		return s2, err
+	}
+	if refit != unit {
+		s.Coarse = true
+	}
+	return s, nil
+}

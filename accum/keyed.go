@@ -1,0 +1,141 @@
+package accum
+
+import (
+	"math"
+	"slices"
+)
+
+// defaultUnit is the exponent of the last binary place of fixed-point sums, in
+// frame units, where numbers are about 1: sums up to 2^56, places down to 2^-70.
+const defaultUnit = -70
+
+const pageKeys = 256 // keys in one page of fixed-point sums
+
+// keyTable sums vectors by key. A partial sum is made in float64, in row order,
+// for each key and each fold of foldRows rows counted from the segment's start,
+// and is then rounded once to 128-bit fixed point. Adding fixed-point numbers is
+// associative, so the sums do not depend on which worker saw which segment.
+//
+// Nothing wraps unnoticed: the sum of count x max over all partials bounds every
+// intermediate sum, and does not depend on order.
+type keyTable struct {
+	width int
+	unit  int
+	rows  []int64
+	pages [][]fixed
+
+	slot    []int32 // place in part, by id; -1 outside this fold
+	touched []int32
+	part    []float64
+
+	max   float64 // largest |partial|
+	count int64   // partials
+	bad   bool    // a partial was not finite or too large for the unit
+}
+
+func newKeyTable(width, unit int) *keyTable {
+	return &keyTable{width: width, unit: unit}
+}
+
+// at returns the partial sums of a key in the present fold.
+func (t *keyTable) at(id int32) []float64 {
+	for int(id) >= len(t.slot) {
+		t.slot = append(t.slot, -1)
+		t.rows = append(t.rows, 0)
+	}
+	s := t.slot[id]
+	if s < 0 {
+		s = int32(len(t.touched))
+		t.slot[id] = s
+		t.touched = append(t.touched, id)
+		n := len(t.touched) * t.width
+		if n > cap(t.part) {
+			t.part = slices.Grow(t.part, max(n-len(t.part), len(t.part)))
+		}
+		t.part = t.part[:n]
+		clear(t.part[n-t.width:])
+	}
+	return t.part[int(s)*t.width : (int(s)+1)*t.width]
+}
+
+// flush ends a fold.
+func (t *keyTable) flush() {
+	for i, id := range t.touched {
+		part := t.part[i*t.width : (i+1)*t.width]
+		for _, x := range part {
+			if a := math.Abs(x); a > t.max {
+				t.max = a
+			}
+		}
+		t.count++
+		if !addFixed(t.fix(id), part, t.unit) {
+			t.bad = true
+		}
+		t.slot[id] = -1
+	}
+	t.touched = t.touched[:0]
+	t.part = t.part[:0]
+}
+
+func (t *keyTable) fix(id int32) []fixed {
+	p := int(id) / pageKeys
+	for p >= len(t.pages) {
+		t.pages = append(t.pages, nil)
+	}
+	if t.pages[p] == nil {
+		t.pages[p] = make([]fixed, pageKeys*t.width)
+	}
+	o := (int(id) % pageKeys) * t.width
+	return t.pages[p][o : o+t.width]
+}
+
+// mergeFrom adds the sums of o, whose key i is key to(i) here.
+func (t *keyTable) mergeFrom(o *keyTable, to func(int32) int32) {
+	for i := range o.rows {
+		id := to(int32(i))
+		t.grow(id)
+		t.rows[id] += o.rows[i]
+		dst, src := t.fix(id), o.fix(int32(i))
+		for j := range dst {
+			dst[j] = dst[j].add(src[j])
+		}
+	}
+	t.max = math.Max(t.max, o.max)
+	t.count += o.count
+	t.bad = t.bad || o.bad
+}
+
+func (t *keyTable) grow(id int32) {
+	for int(id) >= len(t.slot) {
+		t.slot = append(t.slot, -1)
+		t.rows = append(t.rows, 0)
+	}
+}
+
+// memory is about what the table holds, in bytes.
+func (t *keyTable) memory() int64 {
+	return int64(len(t.pages))*int64(pageKeys*t.width*16) + int64(cap(t.part))*8 + int64(len(t.slot))*12
+}
+
+// fits reports whether no sum can have left the range of the unit, and whether
+// rounding to it can have cost digits: want is the size of sums that must keep
+// 1e-14 relative.
+func (t *keyTable) fits(want float64) (overflow, coarse bool) {
+	if t.count == 0 {
+		return false, false
+	}
+	if t.bad || t.max*float64(t.count) >= math.Ldexp(1, 126+t.unit) {
+		return true, false
+	}
+	return false, want > 0 && math.Ldexp(float64(t.count), t.unit-1) > 1e-14*want
+}
+
+// betterUnit chooses the unit from what was seen, order-free.
+func (t *keyTable) betterUnit() int {
+	bound := t.max * float64(max(t.count, 1))
+	if !(bound > 0) || math.IsInf(bound, 0) {
+		bound = math.MaxFloat64
+	}
+	_, e := math.Frexp(bound)
+	return e - 125
+}

@@ -1,0 +1,69 @@
+package accum
+
+import (
+	"fmt"
+
+	"github.com/tallrow/tallrow/stream"
+)
+
+// Needs says what pass one must leave behind beside second moments.
+type Needs struct {
+	// Fourth asks for fourth moments (no categories).
+	Fourth bool
+	// Clusters lists the indexes of design keys whose clusters' second moments
+	// are wanted (no categories).
+	Clusters []int
+}
+
+// Options say how to scan.
+type Options struct {
+	Workers int
+	Memory  int64 // bound of what the sums take, bytes
+	Meter   *Meter
+}
+
+// MemoryError says that the sums do not fit.
+type MemoryError struct {
+	What string // what takes the memory
+	Need int64
+	Have int64
+}
+
+func (e *MemoryError) Error() string {
+	return fmt.Sprintf("%s: the sums need at least %s, the bound is %s; raise --memory, or use coarser groups", e.What, size(e.Need), size(e.Have))
+}
+
+func size(n int64) string {
+	switch {
+	case n >= 10<<30:
+		return fmt.Sprintf("%d GiB", n>>30)
+	case n >= 1<<30:
+		return fmt.Sprintf("%.1f GiB", float64(n)/(1<<30))
+	case n >= 1<<20:
+		return fmt.Sprintf("%d MiB", n>>20)
+	}
+	return fmt.Sprintf("%d KiB", n>>10)
+}
+
+// ChangedError says that the input was not the same in both passes.
+type ChangedError struct{ What string }
+
+func (e *ChangedError) Error() string {
+	return "the input changed between the first and the second pass: " + e.What
+}
+
+// NoRowsError says that no row was left to use.
+type NoRowsError struct {
+	Tally     stream.Tally
+	Malformed int64
+}
+
+func (e *NoRowsError) Error() string {
+	t := &e.Tally
+	read := t.Excluded + t.Missing + t.ZeroWeight + e.Malformed
+	if read == 0 {
+		return "no rows: the input holds no data rows"
+	}
+	return fmt.Sprintf("no rows left to use: %d read, %d malformed, %d excluded by --where, %d with a missing cell, %d of zero weight",
+		read, e.Malformed, t.Excluded, t.Missing, t.ZeroWeight)
+}

@@ -1,0 +1,325 @@
+package accum
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"hash/fnv"
+	"io"
+	"math"
+	"sync"
+
+	"github.com/tallrow/tallrow/accum/internal/kernel"
+	"github.com/tallrow/tallrow/stream"
+	"golang.org/x/sync/errgroup"
+)
+
+// foldBatches is the length of a fold of keyed sums, in batches (65,536 rows).
+const foldBatches = 128
+
+const stride = stream.BatchRows
+
+// loader turns batches into rows z in a frame. Each worker has one.
+type loader struct {
+	lay   *layout
+	frame *Frame
+	eval  *stream.Evaluator
+	batch stream.Batch
+	block stream.Block
+	z     []float64 // width columns of stride rows
+	root  []float64 // square roots of weights, nil without
+	sums  []float64 // raw column sums of the present segment
+}
+
+func newLoader(l *layout, f *Frame) *loader {
+	w := &loader{lay: l, frame: f, eval: l.design.NewEvaluator(), z: make([]float64, l.width*stride), sums: make([]float64, l.nx+2)}
+	for r := range stride {
+		w.z[r] = 1
+	}
+	if l.design.Spec.Weight != "" {
+		w.root = make([]float64, stride)
+	}
+	return w
+}
+
+func (w *loader) col(j int) []float64 { return w.z[j*stride : j*stride+w.block.Rows] }
+
+// load computes z for the block.
+func (w *loader) load() {
+	l, f, n := w.lay, w.frame, w.block.Rows
+	for j := range l.p0 {
+		c := w.col(1 + j)
+		m, inv := f.Shift[j], f.Inv[j]
+		for r, x := range w.block.X[j][:n] {
+			c[r] = (x - m) * inv
+		}
+	}
+	for i, d := range l.factors {
+		c := w.col(l.p0 + 2 + i)
+		m, inv := f.Shift[d], f.Inv[d]
+		for r, x := range w.block.X[d][:n] {
+			c[r] = (x - m) * inv
+		}
+	}
+	if f.White {
+		for j := l.p0 - 1; j >= 0; j-- {
+			u := w.col(1 + j)
+			t := f.T[j*l.p0+j]
+			for r := range u {
+				u[r] *= t
+			}
+			for i := range j {
+				if t := f.T[i*l.p0+j]; t != 0 {
+					axpy(t, w.col(1+i), u)
+				}
+			}
+		}
+	}
+	v := w.col(l.v())
+	for r, y := range w.block.X[l.nx][:n] {
+		v[r] = (y - f.YShift) * f.YInv
+	}
+	for j, h := range f.H {
+		if h != 0 {
+			axpy(-h, w.col(1+j), v)
+		}
+	}
+	if w.root != nil {
+		for r, x := range w.block.Weight[:n] {
+			w.root[r] = math.Sqrt(x)
+		}
+	}
+	for j, x := range w.block.X {
+		w.sums[j] += sum4(x[:n])
+	}
+	if w.root != nil {
+		w.sums[l.nx+1] += sum4(w.block.Weight[:n])
+	}
+}
+
+// scaled writes the columns of z times w to dst.
+func (w *loader) scaled(dst, by []float64, cols int) {
+	n := w.block.Rows
+	for j := range cols {
+		kernel.Scale(dst[j*stride:j*stride+n], w.z[j*stride:j*stride+n], by[:n])
+	}
+}
+
+func sum4(x []float64) float64 {
+	var a, b, c, d float64
+	i := 0
+	for ; i+4 <= len(x); i += 4 {
+		a += x[i]
+		b += x[i+1]
+		c += x[i+2]
+		d += x[i+3]
+	}
+	for ; i < len(x); i++ {
+		a += x[i]
+	}
+	return (a + b) + (c + d)
+}
+
+// segCheck identifies what a segment held: two passes must see the same.
+type segCheck struct {
+	rows int64
+	sum  uint64
+}
+
+func (w *loader) check(rows int64) segCheck {
+	h := fnv.New64a()
+	var b [8]byte
+	for j, s := range w.sums {
+		u := math.Float64bits(s)
+		for i := range b {
+			b[i] = byte(u >> (8 * i))
+		}
+		h.Write(b[:])
+		w.sums[j] = 0
+	}
+	return segCheck{rows, h.Sum64()}
+}
+
+// blockWorker sums the blocks of one worker's segments.
+type blockWorker interface {
+	loading() *loader
+	// add sums the block of the loader.
+	add() error
+	// fold ends a fold; segment ends a segment.
+	fold() error
+	segment(number int) error
+}
+
+// pass drives workers over segments.
+type pass struct {
+	meter *Meter
+
+	mu       sync.Mutex
+	errAt    int // number of the segment of the error, or maxInt
+	err      error
+	problems []problem
+	read     int64
+	bad      int64
+	bytes    int64
+	segments int64
+	checks   map[int]segCheck
+}
+
+type problem struct {
+	segment, at int
+	err         *stream.RowError
+}
+
+func newPass(m *Meter) *pass {
+	if m == nil {
+		m = new(Meter)
+	}
+	return &pass{meter: m, errAt: math.MaxInt, checks: map[int]segCheck{}}
+}
+
+func (p *pass) fail(segment int, err error) {
+	p.mu.Lock()
+	defer p.mu.Unlock()
+	if segment < p.errAt || p.err == nil {
+		p.errAt, p.err = segment, err
+	}
+}
+
+func (p *pass) failed(segment int) bool {
+	p.mu.Lock()
+	defer p.mu.Unlock()
+	return p.err != nil && p.errAt < segment
+}
+
+// run lets the workers take segments from next until io.EOF. Segments come in
+// order, so when one fails all lower ones are done or under way: those are
+// finished, and the error of the lowest segment is returned. With begun set the
+// first worker starts with that segment.
+func (p *pass) run(ctx context.Context, workers []blockWorker, begun *begun, next func(context.Context) (stream.Segment, error)) error {
+	g, ctx := errgroup.WithContext(ctx)
+	var nextMu sync.Mutex
+	done := false
+	take := func() (stream.Segment, error) {
+		nextMu.Lock()
+		defer nextMu.Unlock()
+		p.mu.Lock()
+		stop := p.err != nil
+		p.mu.Unlock()
+		if done || stop {
+			return nil, io.EOF
+		}
+		seg, err := next(ctx)
+		if err != nil {
+			done = true
+		}
+		return seg, err
+	}
+	for i, w := range workers {
+		g.Go(func() (err error) {
+			defer func() {
+				if x := recover(); x != nil {
+					err = fmt.Errorf("internal error while summing: %v", x)
+				}
+			}()
+			for first := true; ; first = false {
+				var seg stream.Segment
+				loaded := false
+				if first && i == 0 && begun != nil {
+					seg, loaded = begun.seg, begun.loaded
+				} else if seg, err = take(); errors.Is(err, io.EOF) {
+					return nil
+				} else if err != nil {
+					if ctx.Err() != nil {
+						return ctx.Err()
+					}
+					p.fail(math.MaxInt-1, err)
+					return nil
+				}
+				if err := p.segment(ctx, w, seg, loaded); err != nil {
+					if ctx.Err() != nil {
+						return ctx.Err()
+					}
+					p.fail(seg.Number(), err)
+				}
+			}
+		})
+	}
+	if err := g.Wait(); err != nil {
+		return err
+	}
+	return p.err
+}
+
+// begun is a segment that was opened, and perhaps read one batch into.
+type begun struct {
+	seg    stream.Segment
+	loaded bool
+}
+
+// segment sums one segment. With loaded set the worker's block already holds
+// the first batch.
+func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, loaded bool) (err error) {
+	defer func() {
+		if cerr := seg.Close(); err == nil {
+			err = cerr
+		}
+	}()
+	ld := w.loading()
+	var seen, bytes int64
+	for b := 1; ; b++ {
+		if err := ctx.Err(); err != nil {
+			return err
+		}
+		if p.failed(seg.Number()) {
+			return nil
+		}
+		if !loaded {
+			err := seg.Read(&ld.batch)
+			if errors.Is(err, io.EOF) {
+				break
+			}
+			if err != nil {
+				return err
+			}
+			if err := ld.eval.Eval(&ld.batch, seg.Locate, &ld.block); err != nil {
+				return err
+			}
+		}
+		loaded = false
+		seen += int64(ld.batch.Rows)
+		p.meter.Rows.Add(int64(ld.batch.Rows))
+		if t := seg.Tally().Bytes; t != bytes {
+			p.meter.Bytes.Add(t - bytes)
+			bytes = t
+		}
+		if ld.block.Rows > 0 {
+			if err := w.add(); err != nil {
+				return err
+			}
+		}
+		if b%foldBatches == 0 {
+			if err := w.fold(); err != nil {
+				return err
+			}
+		}
+	}
+	if err := w.fold(); err != nil {
+		return err
+	}
+	if err := w.segment(seg.Number()); err != nil {
+		return err
+	}
+	t := seg.Tally()
+	p.meter.Bytes.Add(t.Bytes - bytes)
+	p.mu.Lock()
+	defer p.mu.Unlock()
+	p.checks[seg.Number()] = ld.check(seen)
+	p.read += t.Rows
+	p.bad += t.Malformed
+	p.bytes += t.Bytes
+	p.segments++
+	for i, e := range t.Problems {
+		p.problems = append(p.problems, problem{seg.Number(), i, e})
+	}
+	return nil
+}

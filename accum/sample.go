@@ -1,0 +1,206 @@
+package accum
+
+import (
+	"context"
+	"errors"
+	"io"
+	"math"
+
+	"github.com/tallrow/tallrow/stream"
+)
+
+const (
+	sampleRows     = 4096 // used rows a frame wants
+	sampleSpots    = 16   // places it looks at in any case, if the input is long enough
+	sampleMaxSpots = 256
+	sampleMin      = 64 // fewer used rows make epochs the better way
+)
+
+// sampleFrame makes a frame from the first batches at places spread over the
+// input: start, end, middle, quarters, and so on. It returns nil if too few rows
+// were found there although the input is longer.
+func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) (*Frame, error) {
+	rows := newFrameRows(l.nx)
+	ld := newLoader(l, trivialFrame(l))
+	uses := l.design.Uses()
+	whole := false
+	for spot := 0; spot < sampleMaxSpots && (spot < sampleSpots || rows.rows() < sampleRows); spot++ {
+		seg, err := src.Sample(ctx, uses, spread(spot))
+		if err != nil {
+			return nil, err
+		}
+		err = seg.Read(&ld.batch)
+		if err == nil {
+			// A row that cannot be used is reported by the scan, with its place.
+			if ld.eval.Eval(&ld.batch, seg.Locate, &ld.block) == nil {
+				rows.addBlock(&ld.block, l)
+			}
+			if spot == 0 {
+				more := seg.Read(&ld.batch)
+				whole = errors.Is(more, io.EOF) && src.Info().Segments <= 1
+			}
+		}
+		seg.Close()
+		if err != nil && !errors.Is(err, io.EOF) {
+			return nil, err
+		}
+		if whole || (spot == 0 && errors.Is(err, io.EOF)) {
+			whole = true
+			break
+		}
+		if err := ctx.Err(); err != nil {
+			return nil, err
+		}
+	}
+	if !whole && rows.rows() < sampleMin {
+		return nil, nil
+	}
+	return buildFrame(rows, l.p0, shift), nil
+}
+
+// spread gives 0, 1, 1/2, 1/4, 3/4, 1/8, ...: bit-reversed order.
+func spread(i int) float64 {
+	switch i {
+	case 0:
+		return 0
+	case 1:
+		return 1
+	}
+	i--
+	var x, f float64 = 0, 0.5
+	for ; i > 0; i >>= 1 {
+		if i&1 == 1 {
+			x += f
+		}
+		f /= 2
+	}
+	return x
+}
+
+// addBlock appends the rows of a block.
+func (r *frameRows) addBlock(b *stream.Block, l *layout) {
+	for i := range b.Rows {
+		s := 1.0
+		if b.Weight != nil {
+			s = math.Sqrt(b.Weight[i])
+		}
+		r.one = append(r.one, s)
+		for j := range r.x {
+			r.x[j] = append(r.x[j], (b.X[j][i]-r.origin[j])*s)
+		}
+		r.y = append(r.y, (b.X[l.nx][i]-r.yOrigin)*s)
+	}
+}
+
+func trivialFrame(l *layout) *Frame {
+	f := &Frame{Terms: l.p0, Shift: make([]float64, l.nx), Inv: make([]float64, l.nx), YInv: 1, H: make([]float64, l.p0), Cond: 1}
+	for j := range f.Inv {
+		f.Inv[j] = 1
+	}
+	return f
+}
+
+// shifted reports whether numeric terms may be shifted: the constant must lie in
+// the span of the terms as they are written.
+func (l *layout) shifted() bool {
+	return !l.design.Spec.NoConstant || l.carrier() >= 0
+}
+
+// carrier returns the term that is a single category with all its levels, whose
+// indicators add up to the constant; -1 if there is none.
+func (l *layout) carrier() int {
+	for i, t := range l.design.Terms {
+		if len(t.Categories) == 1 && t.Dense < 0 && l.design.Categories[t.Categories[0]].NoBase {
+			return i
+		}
+	}
+	return -1
+}
+
+// previousRows stands for all rows of the epochs so far by as many pseudo-rows as
+// there are columns: the triangle of the Cholesky factor of their sums.
+func previousRows(l *layout, epochs []*epoch) *frameRows {
+	r := newFrameRows(l.nx)
+	if len(epochs) == 0 {
+		return r
+	}
+	last := epochs[len(epochs)-1].frame
+	w := l.width
+	sum := make([]float64, w*w)
+	for _, e := range epochs {
+		g := unpack(e.gram, w)
+		if e.frame != last {
+			g = congruence(denseMap(l, e.frame, last), g, w)
+		}
+		for i, x := range g {
+			sum[i] += x
+		}
+	}
+	copy(r.origin, last.Shift)
+	r.yOrigin = last.YShift
+	tri := looseCholesky(sum, w)
+	// Row i of the factor is a pseudo-row in z; back to shifted raw columns.
+	var back []float64
+	if last.White {
+		back = invertUpper(last.T, l.p0, l.p0)
+	}
+	for i := range w {
+		z := tri[i*w : (i+1)*w]
+		r.one = append(r.one, z[0])
+		for j := range l.p0 {
+			c := z[1+j]
+			if last.White {
+				c = 0
+				for a := 0; a <= j; a++ {
+					c += back[a*l.p0+j] * z[1+a]
+				}
+			}
+			r.x[j] = append(r.x[j], c/last.Inv[j])
+		}
+		for f, d := range l.factors {
+			if d >= l.p0 {
+				r.x[d] = append(r.x[d], z[l.p0+2+f]/last.Inv[d])
+			}
+		}
+		v := z[l.v()]
+		for j, h := range last.H {
+			v += h * z[1+j]
+		}
+		r.y = append(r.y, v/last.YInv)
+	}
+	r.fixed = w
+	return r
+}
+
+// looseCholesky returns the upper factor of a positive semidefinite matrix, with
+// zero rows where a pivot has no digits left.
+func looseCholesky(a []float64, n int) []float64 {
+	u := make([]float64, n*n)
+	for j := range n {
+		for i := 0; i <= j; i++ {
+			s := a[i*n+j]
+			for t := range i {
+				s -= u[t*n+i] * u[t*n+j]
+			}
+			if i < j {
+				if u[i*n+i] != 0 {
+					u[i*n+j] = s / u[i*n+i]
+				}
+			} else if s > 1e-14*a[j*n+j] {
+				u[j*n+j] = math.Sqrt(s)
+			}
+		}
+	}
+	return u
+}
+
+func unpack(p []float64, n int) []float64 {
+	a := make([]float64, n*n)
+	for j := range n {
+		for i := 0; i <= j; i++ {
+			x := p[j*(j+1)/2+i]
+			a[i*n+j], a[j*n+i] = x, x
+		}
+	}
+	return a
+}

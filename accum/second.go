@@ -1,0 +1,634 @@
+package accum
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"math"
+	"slices"
+	"sync/atomic"
+
+	"github.com/tallrow/tallrow/accum/internal/kernel"
+	"github.com/tallrow/tallrow/stream"
+)
+
+// RowPass says what pass two sums. All vectors are over the internal columns of
+// the state (P of them).
+type RowPass struct {
+	// Theta has P+1 entries; the residual of a row, in units 1/YInv, is
+	// sum_c Theta_c z_c with v last.
+	Theta []float64
+	// Whitener is the P x K matrix W, row by row, with (X'X)^-1 = W W'. The
+	// leverage of a row is h = |W'z|^2, times w for precision and sampling
+	// weights. Nil if no leverage is wanted.
+	Whitener []float64
+	K        int
+	// Weights asks for one meat sum e^2 g(h) z z' for each function g (with w^2
+	// for precision and sampling weights, w for frequencies). g is called with
+	// h = 0 when Whitener is nil.
+	Weights []func(h float64) float64
+	// Scores lists the keys whose clusters' scores sum w e z are wanted.
+	Scores []int
+	// Heavy keeps rows of leverage above HeavyAt, but not those of leverage 1,
+	// out of the meats and returns them one by one, with the second moments of
+	// all other rows, so that 1-h can be formed without cancellation.
+	Heavy bool
+}
+
+const (
+	// HeavyAt is the leverage above which 1-h has lost digits worth saving.
+	HeavyAt = 0.99
+	// LoneGap: a row with 1-h below it alone determines a coefficient.
+	LoneGap = 1e-10
+	// maxHeavy bounds the rows that are returned one by one.
+	maxHeavy = 1000
+)
+
+// RowSums is what pass two leaves.
+type RowSums struct {
+	// Meats are (P+1) x (P+1) matrices of which the last row and column are
+	// unused, one for each of RowPass.Weights.
+	Meats  [][]float64
+	Scores []*Scores
+	// MaxLeverage is the largest leverage that is not 1.
+	MaxLeverage float64
+	// LoneRows counts rows of leverage 1; LoneGram is the sum of their w z z',
+	// (P+1) x (P+1), nil if there are none.
+	LoneRows int64
+	LoneGram []float64
+	// HeavyRows counts rows with HeavyAt < h < 1.
+	HeavyRows int64
+	// Heavy and Light are filled under RowPass.Heavy: root-weighted rows (P+1
+	// entries, v last) in segment order, and the second moments of all others.
+	Heavy []HeavyRow
+	Light []float64
+	Bytes int64
+}
+
+// HeavyRow is a row of high leverage, times the root of its weight.
+type HeavyRow struct {
+	Z      []float64
+	Weight float64
+	// segment and at order the rows.
+	segment, at int
+}
+
+// meat sums z z' times a multiplier of each row squared.
+type meat struct {
+	gram   []float64
+	gramX  superVec
+	tables []*keyTable
+	used   bool
+}
+
+func newMeat(l *layout, cols, unit int) *meat {
+	m := &meat{gram: make([]float64, cols*(cols+1)/2)}
+	m.gramX = make(superVec, len(m.gram))
+	for i := range l.tables {
+		m.tables = append(m.tables, newKeyTable(len(l.tables[i].prods), unit))
+	}
+	return m
+}
+
+type secondWorker struct {
+	*loader
+	state *State
+	pass  *RowPass
+	unit  int
+	over  *atomic.Bool
+	mem   int64
+
+	meats []*meat
+	lone  *meat
+	light *meat
+
+	cats []*interner
+	tups []*tuples
+	ids  [][]int32
+	tid  [][]int32 // for each table
+	base [][]int32 // internal column of each combination, by group and tuple id
+	rowb [][]int32 // internal column of each row, by group
+	quad []float64 // W W' when there are categories
+
+	keys   []*interner
+	scores []*keyTable
+	loneT  []*loneTracker
+	loneC  []*loneTracker // for the indicators
+	kid    []int32
+
+	e, h, mult, t []float64
+	zs            []float64
+	idx           []int
+	val           []float64
+
+	maxLever             float64
+	loneRows, heavyCount int64
+	heavy                []HeavyRow
+	block_               int
+}
+
+func newSecondWorker(s *State, rp *RowPass, unit int, over *atomic.Bool, mem int64, quad []float64) *secondWorker {
+	l := s.lay
+	w := &secondWorker{loader: newLoader(l, s.Frame), state: s, pass: rp, unit: unit, over: over, mem: mem, quad: quad}
+	for range rp.Weights {
+		w.meats = append(w.meats, newMeat(l, l.p0+1, unit))
+	}
+	w.lone = newMeat(l, l.p0+1, unit)
+	if rp.Heavy {
+		w.light = newMeat(l, l.p0+2, unit)
+	}
+	for _, c := range l.design.Categories {
+		w.cats = append(w.cats, newInterner(c.Kind))
+		w.ids = append(w.ids, make([]int32, stride))
+	}
+	for i := range l.tables {
+		w.tups = append(w.tups, newTuples(len(l.tables[i].cats)))
+		w.tid = append(w.tid, make([]int32, stride))
+	}
+	w.base = make([][]int32, len(l.groups))
+	for range l.groups {
+		w.rowb = append(w.rowb, make([]int32, stride))
+	}
+	for _, k := range rp.Scores {
+		w.keys = append(w.keys, newInterner(l.design.Keys[k].Kind))
+		w.scores = append(w.scores, newKeyTable(len(s.Columns), unit))
+		w.loneT = append(w.loneT, newLoneTracker(l.p0))
+		w.loneC = append(w.loneC, newLoneTracker(len(s.Columns)))
+	}
+	w.kid = make([]int32, stride)
+	w.e, w.h, w.mult, w.t = make([]float64, stride), make([]float64, stride), make([]float64, stride), make([]float64, stride)
+	w.zs = make([]float64, len(w.z))
+	return w
+}
+
+func (w *secondWorker) loading() *loader { return w.loader }
+
+func (w *secondWorker) add() error {
+	w.load()
+	if err := w.categories(); err != nil {
+		return err
+	}
+	l, n, rp := w.lay, w.block.Rows, w.pass
+	freq := w.root != nil && l.design.Spec.WeightKind == stream.Frequency
+	e := w.e[:n]
+	copy(e, w.col(l.v()))
+	for j := range l.p0 + 1 {
+		axpy(rp.Theta[j], w.col(j), e)
+	}
+	for g := range l.groups {
+		for p, c := range l.groups[g].parts {
+			z := w.col(c)
+			for r, b := range w.rowb[g][:n] {
+				e[r] = math.FMA(rp.Theta[int(b)+p], z[r], e[r])
+			}
+		}
+	}
+	h := w.h[:n]
+	clear(h)
+	anyLone := false
+	if rp.Whitener != nil {
+		w.leverages(h)
+		for r := range h {
+			if w.root != nil && !freq {
+				h[r] *= w.block.Weight[r]
+			}
+			if 1-h[r] < LoneGap {
+				anyLone = true
+				w.loneRows++
+				continue
+			}
+			if h[r] > HeavyAt {
+				w.heavyCount++
+			}
+			w.maxLever = max(w.maxLever, h[r])
+		}
+	}
+	heavy := func(r int) bool { return rp.Heavy && h[r] > HeavyAt && 1-h[r] >= LoneGap }
+	for i, g := range rp.Weights {
+		for r := range e {
+			switch {
+			case rp.Whitener != nil && (1-h[r] < LoneGap || heavy(r)):
+				w.mult[r] = 0
+				continue
+			default:
+				w.mult[r] = e[r] * math.Sqrt(g(h[r]))
+			}
+			if w.root != nil {
+				if freq {
+					w.mult[r] *= w.root[r]
+				} else {
+					w.mult[r] *= w.block.Weight[r]
+				}
+			}
+		}
+		w.addMeat(w.meats[i], l.p0+1)
+	}
+	rootOr1 := func(r int) float64 {
+		if w.root != nil {
+			return w.root[r]
+		}
+		return 1
+	}
+	if anyLone {
+		for r := range h {
+			w.mult[r] = 0
+			if 1-h[r] < LoneGap {
+				w.mult[r] = rootOr1(r)
+			}
+		}
+		w.addMeat(w.lone, l.p0+1)
+	}
+	if rp.Heavy {
+		for r := range h {
+			w.mult[r] = rootOr1(r)
+			if heavy(r) {
+				w.keepHeavy(r, w.mult[r])
+				w.mult[r] = 0
+			}
+		}
+		w.addMeat(w.light, l.p0+2)
+	}
+	for i, k := range rp.Scores {
+		w.keys[i].ids(&w.block.Key[k], n, w.kid[:n])
+		w.loneT[i].add(w.kid[:n], w.block.X)
+		w.addScores(w.scores[i], w.loneC[i])
+	}
+	return nil
+}
+
+// categories finds, for each row and group, the internal column of its indicator.
+func (w *secondWorker) categories() error {
+	l, n := w.lay, w.block.Rows
+	if len(l.tables) == 0 {
+		return nil
+	}
+	for c, in := range w.cats {
+		in.ids(&w.block.Cat[c], n, w.ids[c])
+	}
+	var sel [][]int32
+	for i := range l.tables {
+		s := &l.tables[i]
+		sel = sel[:0]
+		for _, c := range s.cats {
+			sel = append(sel, w.ids[c])
+		}
+		w.tups[i].join(sel, w.tid[i][:n])
+		g := l.groupIndex(s.cats)
+		if g < 0 {
+			continue
+		}
+		for r, id := range w.tid[i][:n] {
+			for int(id) >= len(w.base[g]) {
+				w.base[g] = append(w.base[g], -1)
+			}
+			b := w.base[g][id]
+			if b < 0 {
+				combo := make([]int32, len(s.cats))
+				w.tups[i].split(id, combo)
+				for j, c := range s.cats {
+					k := w.cats[c].key(combo[j])
+					if combo[j] = w.state.levels[c].find(k); combo[j] < 0 {
+						return &ChangedError{fmt.Sprintf("each(%s) has a level that was not there before", l.design.Categories[c].Text)}
+					}
+				}
+				if b = int32(w.state.Column(g, combo, 0)); b < 0 {
+					return &ChangedError{"levels occur together that did not before"}
+				}
+				w.base[g][id] = b
+			}
+			w.rowb[g][r] = b
+		}
+	}
+	return nil
+}
+
+func (w *secondWorker) leverages(h []float64) {
+	l, n, rp := w.lay, len(h), w.pass
+	if w.quad == nil {
+		t := w.t[:n]
+		for k := range rp.K {
+			clear(t)
+			for j := range l.p0 + 1 {
+				if x := rp.Whitener[j*rp.K+k]; x != 0 {
+					axpy(x, w.col(j), t)
+				}
+			}
+			for r, x := range t {
+				h[r] = math.FMA(x, x, h[r])
+			}
+		}
+		return
+	}
+	p := len(w.state.Columns)
+	for r := range h {
+		idx, val := w.sparse(r)
+		var s float64
+		for a, i := range idx {
+			row := w.quad[i*p : (i+1)*p]
+			var t float64
+			for b := range a {
+				t = math.FMA(row[idx[b]], val[b], t)
+			}
+			s = math.FMA(val[a], 2*t+row[i]*val[a], s)
+		}
+		h[r] = s
+	}
+}
+
+// sparse lists the nonzero internal columns of row r.
+func (w *secondWorker) sparse(r int) ([]int, []float64) {
+	l := w.lay
+	w.idx, w.val = w.idx[:0], w.val[:0]
+	for j := range l.p0 + 1 {
+		w.idx = append(w.idx, j)
+		w.val = append(w.val, w.z[j*stride+r])
+	}
+	for g := range l.groups {
+		for p, c := range l.groups[g].parts {
+			w.idx = append(w.idx, int(w.rowb[g][r])+p)
+			w.val = append(w.val, w.z[c*stride+r])
+		}
+	}
+	return w.idx, w.val
+}
+
+func (w *secondWorker) addMeat(m *meat, cols int) {
+	l, n := w.lay, w.block.Rows
+	m.used = true
+	if len(l.tables) == 0 {
+		w.scaled(w.zs, w.mult, cols)
+		kernel.Gram(m.gram, w.zs, stride, n, cols)
+		return
+	}
+	w.scaled(w.zs, w.mult, l.width)
+	kernel.Gram(m.gram, w.zs, stride, n, cols)
+	for i := range l.tables {
+		addProducts(m.tables[i], w.tid[i][:n], w.zs, l.tables[i].prods)
+	}
+}
+
+func (w *secondWorker) keepHeavy(r int, root float64) {
+	if len(w.heavy) > maxHeavy {
+		return
+	}
+	p := len(w.state.Columns)
+	z := make([]float64, p+1)
+	idx, val := w.sparse(r)
+	for i, c := range idx {
+		z[c] = val[i] * root
+	}
+	z[p] = w.z[w.lay.v()*stride+r] * root
+	wt := 1.0
+	if w.root != nil {
+		wt = w.block.Weight[r]
+	}
+	w.heavy = append(w.heavy, HeavyRow{Z: z, Weight: wt, segment: -1, at: len(w.heavy)})
+}
+
+func (w *secondWorker) addScores(t *keyTable, lone *loneTracker) {
+	l := w.lay
+	for r, id := range w.kid[:w.block.Rows] {
+		m := w.e[r]
+		if w.root != nil {
+			m *= w.block.Weight[r]
+		}
+		part := t.at(id)
+		t.rows[id]++
+		for j := range l.p0 + 1 {
+			part[j] = math.FMA(m, w.z[j*stride+r], part[j])
+		}
+		for g := range l.groups {
+			b := int(w.rowb[g][r])
+			lone.see(&lone.nonzero[b], id)
+			for p, c := range l.groups[g].parts {
+				part[b+p] = math.FMA(m, w.z[c*stride+r], part[b+p])
+			}
+		}
+	}
+}
+
+func (w *secondWorker) allMeats() []*meat {
+	ms := append(slices.Clone(w.meats), w.lone)
+	if w.light != nil {
+		ms = append(ms, w.light)
+	}
+	return ms
+}
+
+func (w *secondWorker) fold() error {
+	var held int64
+	for _, m := range w.allMeats() {
+		for _, t := range m.tables {
+			t.flush()
+			held += t.memory()
+		}
+	}
+	for i, t := range w.scores {
+		t.flush()
+		need := held + t.memory() + w.keys[i].memory()
+		if need > w.mem {
+			k := w.lay.design.Keys[w.pass.Scores[i]]
+			return &MemoryError{What: fmt.Sprintf("%s has %d clusters or more, %d numbers each", k.Text, len(t.rows), t.width), Need: need, Have: w.mem}
+		}
+		held = need
+	}
+	return nil
+}
+
+func (w *secondWorker) segment(number int) error {
+	for _, m := range w.allMeats() {
+		if m.used {
+			m.gramX.addVec(m.gram)
+			clear(m.gram)
+		}
+	}
+	for i := range w.heavy {
+		if w.heavy[i].segment < 0 {
+			w.heavy[i].segment = number
+		}
+	}
+	return nil
+}
+
+// Second is pass two over the same input: it sums what depends on single rows.
+// It fails with *ChangedError if the input is not the one that pass one saw:
+// sizes and times, and the column sums of every segment bit for bit.
+func Second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options) (*RowSums, error) {
+	out, retry, err := second(ctx, src, s, rp, o, defaultUnit)
+	if err == nil && retry != defaultUnit {
+		out, _, err = second(ctx, src, s, rp, o, retry)
+	}
+	return out, err
+}
+
+func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options, unit int) (*RowSums, int, error) {
+	if stamp, err := src.Stamp(); err != nil {
+		return nil, 0, err
+	} else if stamp != s.stamp && src.Info().Sampled {
+		return nil, 0, &ChangedError{"a file has another size or time"}
+	}
+	p := newPass(o.Meter)
+	p.meter.Pass.Store(2)
+	p.meter.Rows.Store(0)
+	p.meter.Bytes.Store(0)
+	scan, err := src.Scan(ctx, s.Design.Uses())
+	if err != nil {
+		return nil, 0, err
+	}
+	defer scan.Close()
+	var quad []float64
+	if rp.Whitener != nil && len(s.Groups) > 0 {
+		quad = outer(rp.Whitener, len(s.Columns), rp.K)
+	}
+	var over atomic.Bool
+	ws := make([]*secondWorker, max(1, o.Workers))
+	bw := make([]blockWorker, len(ws))
+	for i := range ws {
+		ws[i] = newSecondWorker(s, &rp, unit, &over, o.Memory, quad)
+		bw[i] = ws[i]
+	}
+	if err := p.run(ctx, bw, nil, scan.Next); err != nil {
+		return nil, 0, err
+	}
+	if err := scan.Close(); err != nil {
+		return nil, 0, err
+	}
+	if err := s.unchanged(p); err != nil {
+		return nil, 0, err
+	}
+	return s.joinSecond(ws, &rp, p, unit)
+}
+
+func (s *State) unchanged(p *pass) error {
+	if len(p.checks) != len(s.checks) {
+		return &ChangedError{fmt.Sprintf("%d segments, then %d", len(s.checks), len(p.checks))}
+	}
+	for n, c := range s.checks {
+		if q, ok := p.checks[n]; !ok || q != c {
+			return &ChangedError{fmt.Sprintf("segment %d holds other values", n)}
+		}
+	}
+	return nil
+}
+
+func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (*RowSums, int, error) {
+	w := ws[0]
+	for _, o := range ws[1:] {
+		cat := make([][]int32, len(o.cats))
+		for c, in := range o.cats {
+			cat[c] = joinKeys(w.cats[c], in)
+		}
+		to := make([][]int32, len(o.tups))
+		for i := range o.tups {
+			n := 0
+			for _, m := range o.allMeats() {
+				n = max(n, len(m.tables[i].rows))
+			}
+			to[i] = joinTuples(w.tups[i], o.tups[i], s.lay.tables[i].cats, cat, n)
+		}
+		mine := w.allMeats()
+		for k, m := range o.allMeats() {
+			if !m.used {
+				continue
+			}
+			mine[k].used = true
+			mine[k].gramX.merge(m.gramX)
+			for i, t := range m.tables {
+				mine[k].tables[i].mergeFrom(t, func(id int32) int32 { return to[i][id] })
+			}
+		}
+		for i, t := range o.scores {
+			kto := joinKeys(w.keys[i], o.keys[i])
+			w.scores[i].mergeFrom(t, func(id int32) int32 { return kto[id] })
+			w.loneT[i].mergeFrom(o.loneT[i], kto)
+			w.loneC[i].mergeFrom(o.loneC[i], kto)
+		}
+		w.maxLever = max(w.maxLever, o.maxLever)
+		w.loneRows += o.loneRows
+		w.heavyCount += o.heavyCount
+		w.heavy = append(w.heavy, o.heavy...)
+	}
+	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Bytes: p.bytes}
+	// Meats are judged by the unit's range; scores by their digits too.
+	need, best := false, -1074
+	see := func(t *keyTable) {
+		over, _ := t.fits(0)
+		need = need || over
+		best = max(best, t.betterUnit())
+	}
+	tups := w.tups
+	full := func(m *meat, cols int) []float64 {
+		n := len(s.Columns) + 1
+		out := make([]float64, n*n)
+		gram := make([]float64, len(m.gram))
+		m.gramX.values(gram)
+		at := s.denseAt()[:cols]
+		for j := range cols {
+			for i := 0; i <= j; i++ {
+				x := gram[j*(j+1)/2+i]
+				out[at[i]*n+at[j]], out[at[j]*n+at[i]] = x, x
+			}
+		}
+		for ti, t := range m.tables {
+			see(t)
+			vals := make([]float64, t.width)
+			for id := range t.rows {
+				for j, f := range t.fix(int32(id)) {
+					vals[j] = f.float(t.unit)
+				}
+				e := &epoch{cats: w.cats, tups: tups}
+				s.placeTable(out, ti, s.combo(e, ti, int32(id)), vals)
+			}
+		}
+		return out
+	}
+	for _, m := range w.meats {
+		out.Meats = append(out.Meats, full(m, s.lay.p0+1))
+	}
+	if w.lone.used {
+		out.LoneGram = full(w.lone, s.lay.p0+1)
+	}
+	if rp.Heavy {
+		if len(w.heavy) > maxHeavy {
+			return nil, 0, errors.New("accum: too many rows of high leverage to treat one by one")
+		}
+		out.Light = full(w.light, s.lay.p0+2)
+		slices.SortFunc(w.heavy, func(a, b HeavyRow) int {
+			if a.segment != b.segment {
+				return a.segment - b.segment
+			}
+			return a.at - b.at
+		})
+		out.Heavy = w.heavy
+	}
+	for i, t := range w.scores {
+		see(t)
+		lone := w.loneT[i].lone()
+		cols := make([]bool, len(s.Columns))
+		for j, b := range lone {
+			cols[1+j] = b
+		}
+		for c := range s.Columns {
+			if s.Columns[c].Group >= 0 {
+				cols[c] = w.loneC[i].nonzero[c-s.Columns[c].Part] >= 0
+			}
+		}
+		out.Scores = append(out.Scores, sortScores(w.keys[i], t, cols))
+	}
+	if need && unit == defaultUnit {
+		return out, best, nil
+	}
+	return out, unit, nil
+}
+
+// outer returns W W' for the n x k matrix W.
+func outer(w []float64, n, k int) []float64 {
+	out := make([]float64, n*n)
+	for i := range n {
+		for j := 0; j <= i; j++ {
+			x := dotp(w[i*k:(i+1)*k], w[j*k:(j+1)*k])
+			out[i*n+j], out[j*n+i] = x, x
+		}
+	}
+	return out
+}
