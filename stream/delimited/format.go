@@ -92,12 +92,18 @@ func (s *source) open(ctx context.Context) error {
 	if err != nil {
 		return err
 	}
-	s.head, err = readHead(t, s.in.Name, s.o, s.rules, s.overhang)
+	h, err := readHead(t, s.in.Name, s.o, s.rules, s.overhang)
 	if s.in.File != nil {
 		t.Close()
-		s.head.text = nil
 	}
-	return err
+	if err != nil {
+		return err
+	}
+	if s.in.File != nil {
+		h.text = nil
+	}
+	s.head = h
+	return nil
 }
 
 // reopen starts to read the text of a file.

@@ -2,7 +2,6 @@ package delimited
 
 import (
 	"bytes"
-	"errors"
 	"fmt"
 	"io"
 	"strings"
@@ -32,16 +31,20 @@ func readHead(r io.Reader, name string, o stream.Options, rules *rules, limit in
 	h := &head{}
 	var tidy []byte // whole rows, the last with a newline
 	for size := headBytes; ; size *= 2 {
-		old := len(h.text)
-		h.text = append(h.text, make([]byte, size-old)...)
-		n, err := io.ReadFull(r, h.text[old:])
-		h.text = h.text[:old+n]
-		end := errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF)
-		if err != nil && (!end || errors.Is(err, stream.ErrDamaged)) {
-			return nil, err
-		}
-		if err := notText(name, h.text[old:], h.text[:old]); err != nil {
-			return nil, err
+		end := false
+		for len(h.text) < size && !end {
+			old := len(h.text)
+			n := min(max(old, 64<<10), size-old)
+			h.text = append(h.text, make([]byte, n)...)
+			n, err := io.ReadFull(r, h.text[old:])
+			h.text = h.text[:old+n]
+			end = err == io.EOF || err == io.ErrUnexpectedEOF
+			if err != nil && !end {
+				return nil, err
+			}
+			if err := notText(name, h.text[old:], h.text[:old]); err != nil {
+				return nil, err
+			}
 		}
 		if end {
 			tidy = h.text[:len(h.text):len(h.text)]
@@ -87,10 +90,13 @@ func wholeRows(b []byte) (rows []byte, n int) {
 	}
 }
 
+// mark is the byte order mark of UTF-8.
+var mark = []byte{0xef, 0xbb, 0xbf}
+
 func (h *head) read(name string, text []byte, o stream.Options, rules *rules) error {
 	i := 0
-	if bytes.HasPrefix(text, []byte{0xef, 0xbb, 0xbf}) {
-		i = 3
+	if bytes.HasPrefix(text, mark) {
+		i = len(mark)
 	}
 	t := &tokens{text: text, delim: ','}
 	i = skipBlank(t, i)
@@ -127,7 +133,7 @@ func (h *head) nothing(name string, text []byte) error {
 		if k := bytes.IndexByte(h.text, '"'); k >= 0 {
 			found += fmt.Sprintf(" (a quote opened on line %d?)", lineAt(h.text, k))
 		}
-	case len(text) > 3:
+	case len(bytes.TrimPrefix(h.text, mark)) > 0:
 		found = "only empty lines"
 	}
 	return &stream.RowError{Pos: stream.Position{File: name}, Found: found, Want: "a header line and rows"}

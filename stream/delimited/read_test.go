@@ -74,7 +74,7 @@ var segmentSizes = []int{1, 2, 3, 7, 16, 64, 100, 1000, 4096, 1 << 20}
 
 func TestSegmentsHoldEveryRowOnce(t *testing.T) {
 	r := rand.New(rand.NewPCG(11, 12))
-	for round := range 12 {
+	for round := range 9 {
 		delim := ",\t;"[round%3]
 		crlf := round%4 == 3
 		text := quayText(r, 1+r.IntN(60), delim, crlf)
@@ -84,7 +84,7 @@ func TestSegmentsHoldEveryRowOnce(t *testing.T) {
 		want := textRows(t, strings.TrimPrefix(text, "\ufeff"), delim)
 		for _, way := range ways {
 			for _, size := range segmentSizes {
-				if way != "file" && way != "pipe" && size < 16 && round > 1 {
+				if size < 16 && (round > 2 || round > 0 && way != "file" && way != "pipe") {
 					continue
 				}
 				src := openWay(t, way, text, stream.Options{SegmentBytes: size})
@@ -109,7 +109,7 @@ func TestSegmentsHoldEveryRowOnce(t *testing.T) {
 func TestWaysGiveTheSameSegments(t *testing.T) {
 	r := rand.New(rand.NewPCG(21, 22))
 	text := quayText(r, 3000, ',', false)
-	for _, size := range []int{50, 999, 1 << 16, 1 << 22} {
+	for _, size := range []int{500, 1 << 16, 1 << 22} {
 		var want []string
 		for _, way := range ways {
 			src := openWay(t, way, text, stream.Options{SegmentBytes: size})

@@ -73,6 +73,7 @@ type parser struct {
 	steps   []step
 	columns int
 	bad     trouble
+	cells   []cell // of recheck
 }
 
 // read reads the row at i into row r of the columns and returns the index of
@@ -170,6 +171,23 @@ func (p *parser) read(i, r int) int {
 func (p *parser) fail(t trouble) int {
 	p.bad = t
 	return -1
+}
+
+// recheck looks at the whole row at i, which has a cell that does not fit: if
+// its structure is at fault too, that is what to report (a cell may be misplaced
+// only).
+func (p *parser) recheck(i int) {
+	p.scratch = p.scratch[:0]
+	cells, at, f := p.row(i, p.cells)
+	p.cells = cells
+	switch {
+	case f != sound:
+		p.bad = trouble{fault: f, at: at}
+	case len(cells) < p.columns:
+		p.bad = trouble{fault: tooFew}
+	case len(cells) > p.columns:
+		p.bad = trouble{fault: tooMany}
+	}
 }
 
 // slow reads the cell at i in the general way and returns the index of what

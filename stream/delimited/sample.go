@@ -17,8 +17,8 @@ const window = 256 << 10
 // Sample begins at the first row after the offset of that fraction of the text,
 // at the latest about a batch of rows before the end. Whether the offset is
 // inside quotes is guessed from the text behind it: the assumption that is first
-// contradicted by a quote or by the number of fields is dropped; if neither is,
-// the offset counts as outside.
+// contradicted by the place of a quote is dropped; if neither is, the one with
+// more sound rows stays; if there is nothing to tell, the offset is outside.
 func (s *source) Sample(ctx context.Context, uses []stream.Use, at float64) (stream.Segment, error) {
 	ra, size := s.plain()
 	if ra == nil {
@@ -112,14 +112,22 @@ func (p *samplePlace) rowStart() error {
 
 // guessInside reports whether b[1] is inside quotes.
 func (s *source) guessInside(b []byte) bool {
-	return s.contradiction(b, true) > s.contradiction(b, false)
+	in, out := s.suppose(b, true), s.suppose(b, false)
+	if in.contradiction != out.contradiction {
+		return in.contradiction > out.contradiction
+	}
+	return in.good > out.good || (out.good == 0 && out.bad > 0)
 }
 
-// contradiction returns the index at which the text proves that b[1] is not
-// inside quotes, or not outside.
-func (s *source) contradiction(b []byte, inside bool) int {
+// evidence is what follows from an assumption about b[1].
+type evidence struct {
+	contradiction int // index of the first quote that cannot stand there
+	good, bad     int // rows before it with the right and a wrong number of fields
+}
+
+func (s *source) suppose(b []byte, inside bool) evidence {
 	delim := s.head.delim
-	first := math.MaxInt
+	e := evidence{contradiction: math.MaxInt}
 	state := inside
 	for i := 1; ; {
 		k := bytes.IndexByte(b[i:], '"')
@@ -129,40 +137,40 @@ func (s *source) contradiction(b []byte, inside bool) int {
 		i += k + 1 // after the quote
 		if state {
 			if b[i] == '"' {
-				i++
-				if i >= len(b) {
+				if i++; i == len(b) {
 					break
 				}
 				continue
 			}
 			if c := b[i]; c != delim && c != '\n' && c != '\r' {
-				first = i - 1
+				e.contradiction = i - 1
 				break
 			}
-		} else if c := b[i-2]; c != delim && c != '\n' && (i-2 > 0 || c != '"') {
-			first = i - 1
+		} else if c := b[i-2]; c != delim && c != '\n' && (i > 2 || c != '"') {
+			// Between the two quotes of a doubled one the state is outside.
+			e.contradiction = i - 1
 			break
 		}
 		state = !state
 	}
-	rows, n := b[1:], 0
+	rows := b[1:]
 	end, _ := scan.RowEnd(rows, 0, inside)
-	for end >= 0 {
+	var cells []cell
+	for end >= 0 && e.good+e.bad < sampleRows {
 		start := end
-		if end, _ = scan.RowEnd(rows, start, false); end < 0 || start+1 >= first {
+		if end, _ = scan.RowEnd(rows, start, false); end < 0 || end >= e.contradiction {
 			break
 		}
 		t := tokens{text: rows[start:end], delim: delim}
 		if t.blank(0) != 0 {
 			continue
 		}
-		n++
-		if cells, _, f := t.row(0, nil); f != sound || len(cells) != len(s.head.schema.Columns) {
-			return min(first, start+1)
-		}
-		if n >= sampleRows {
-			break
+		var f fault
+		if cells, _, f = t.row(0, cells); f == sound && len(cells) == len(s.head.schema.Columns) {
+			e.good++
+		} else {
+			e.bad++
 		}
 	}
-	return first
+	return e
 }

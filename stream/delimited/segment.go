@@ -129,6 +129,9 @@ func (s *segment) fill() int {
 // malformed deals with the row at i. It returns false when reading ends there.
 func (s *segment) malformed(i, next int) bool {
 	p := &s.parser
+	if next < 0 && p.bad.fault == misfit {
+		p.recheck(i)
+	}
 	end, _ := scan.RowEnd(p.text, i, false)
 	// A row without end swallows all the rest, which is never passed over.
 	endless := end < 0 || (s.cut && end == len(p.text))

@@ -74,13 +74,17 @@ func (r *rawReader) Read(p []byte) (n int, err error) {
 func openText(ctx context.Context, name string, r io.Reader, c coding) (*textReader, error) {
 	raw := &rawReader{r: r, ctx: ctx}
 	t := &textReader{name: name, coding: c, raw: raw}
+	if c == plainText {
+		t.r = raw
+		return t, nil
+	}
 	return t, t.decode(bufio.NewReaderSize(raw, 256<<10))
 }
 
 func openPipe(ctx context.Context, in stream.Input) (*textReader, error) {
 	p := newPump(in.Pipe)
 	raw := &rawReader{r: p, ctx: ctx}
-	br := bufio.NewReaderSize(raw, 256<<10)
+	br := bufio.NewReaderSize(raw, 64<<10)
 	magic, err := br.Peek(4)
 	t := &textReader{name: in.Name, raw: raw, coding: sniffCoding(magic), free: p.stop}
 	if err != nil && err != io.EOF {
@@ -170,18 +174,24 @@ type pump struct {
 
 func newPump(r io.Reader) *pump {
 	p := &pump{full: make(chan []byte, 2), back: make(chan []byte, 4), done: make(chan struct{})}
-	for range 3 {
-		p.back <- make([]byte, 256<<10)
-	}
 	go func() {
 		defer close(p.full)
-		for {
+		for made := 0; ; {
 			var b []byte
 			select {
 			case b = <-p.back:
-			case <-p.done:
-				p.err = io.ErrClosedPipe
-				return
+			default:
+				if made < cap(p.back) {
+					b = make([]byte, 128<<10)
+					made++
+					break
+				}
+				select {
+				case b = <-p.back:
+				case <-p.done:
+					p.err = io.ErrClosedPipe
+					return
+				}
 			}
 			n, err := r.Read(b)
 			select {
