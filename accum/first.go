@@ -111,14 +111,6 @@ func (w *firstWorker) add() error {
 		}
 		w.nonzero[j] += nz
 	}
-	if w.q != nil {
-		z := w.zs
-		if w.root != nil && l.design.Spec.WeightKind == stream.Frequency {
-			// The meat takes a frequency once: each of four factors gets its fourth root.
-			z = w.fourthRoots()
-		}
-		w.q.add(w.fourth, z, n)
-	}
 	if len(l.tables) > 0 {
 		for c, in := range w.cats {
 			in.ids(&w.block.Cat[c], n, w.ids[c])
@@ -145,6 +137,15 @@ func (w *firstWorker) add() error {
 			w.clusterRows(t, tid)
 		}
 	}
+	// Last, since frequencies overwrite the scaled columns.
+	if w.q != nil {
+		z := w.zs
+		if w.root != nil && l.design.Spec.WeightKind == stream.Frequency {
+			// The meat takes a frequency once: each of four factors gets its fourth root.
+			z = w.fourthRoots()
+		}
+		w.q.add(w.fourth, z, n)
+	}
 	return nil
 }
 
@@ -153,10 +154,6 @@ func (w *firstWorker) fourthRoots() []float64 {
 	for r, x := range w.root[:n] {
 		w.root4[r] = math.Sqrt(x)
 	}
-	if len(w.zs) != len(w.z) || &w.zs[0] == &w.z[0] {
-		return w.z
-	}
-	// zs is only needed for the tables, which a fourth-moment pass does not have.
 	w.scaled(w.zs, w.root4, w.lay.p0+2)
 	return w.zs
 }

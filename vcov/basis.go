@@ -197,15 +197,51 @@ func (b *basis) carriers() []int {
 	return out
 }
 
+// spanningLevels is carriers, but prefers the indicators of a category of which
+// the model uses every level in products: on the data they add up to the constant,
+// and coordinates must not hold the same direction twice.
+func (b *basis) spanningLevels() []int {
+	s := b.state
+	carry := b.carriers()
+	if len(carry) != 1 || carry[0] != 0 {
+		return carry
+	}
+	used := map[int]bool{}
+	for _, u := range b.cols {
+		if c := &s.Columns[u.column]; c.Group >= 0 {
+			used[u.column-c.Part] = true
+		}
+	}
+	for gi := range s.Groups {
+		if len(s.Groups[gi].Categories) != 1 {
+			continue
+		}
+		var all []int
+		for c := range s.Columns {
+			if s.Columns[c].Group == gi && s.Columns[c].Part == 0 {
+				if !used[c] {
+					all = nil
+					break
+				}
+				all = append(all, c)
+			}
+		}
+		if all != nil {
+			return all
+		}
+	}
+	return carry
+}
+
 // internalOffset is YInv (y - residual direction v) as internal coordinates:
 // the provisional fit that the frame has taken out of the outcome.
-func (b *basis) internalOffset() []float64 {
+func (b *basis) internalOffset(carry []int) []float64 {
 	s := b.state
 	off := make([]float64, len(s.Columns))
 	for j, h := range s.Frame.H {
 		off[1+j] = h
 	}
-	for _, c := range b.carriers() {
+	for _, c := range carry {
 		off[c] += s.Frame.YShift * s.Frame.YInv
 	}
 	return off
@@ -223,12 +259,12 @@ func (b *basis) selection() {
 		b.sel[a] = u.column
 		place[u.column] = a
 	}
-	off := b.internalOffset()
+	carry := b.carriers()
+	off := b.internalOffset(carry)
 	b.offset = make([]float64, k)
 	for a, c := range b.sel {
 		b.offset[a] = off[c]
 	}
-	carry := b.carriers()
 	for a, u := range b.cols {
 		col := &s.Columns[u.column]
 		switch {
@@ -269,7 +305,7 @@ func (b *basis) selection() {
 // factor handles the general case by an orthonormal basis of the model's span.
 func (b *basis) factor() {
 	s, f, k, p := b.state, b.state.Frame, b.k(), len(b.state.Columns)
-	carry := b.carriers()
+	carry := b.spanningLevels()
 	var back []float64
 	if f.White {
 		back = inverseUpper(f.T, f.Terms)
@@ -280,7 +316,11 @@ func (b *basis) factor() {
 		col := &s.Columns[u.column]
 		v := make([]float64, p)
 		switch {
-		case col.Group < 0 && col.Dense == 0, col.Group >= 0 && col.Part == 0:
+		case col.Group < 0 && col.Dense == 0:
+			for _, c := range carry {
+				v[c] = 1
+			}
+		case col.Group >= 0 && col.Part == 0:
 			v[u.column] = 1
 		case col.Group < 0:
 			j := col.Dense - 1
@@ -329,7 +369,7 @@ func (b *basis) factor() {
 		}
 	}
 	b.w = inverseUpper(r, k)
-	off := b.internalOffset()
+	off := b.internalOffset(carry)
 	b.offset = make([]float64, k)
 	for a := range q {
 		b.offset[a] = dot(q[a], off)
