@@ -1,6 +1,7 @@
 package accum
 
 import (
+	"cmp"
 	"context"
 	"errors"
 	"fmt"
@@ -47,6 +48,7 @@ type firstWorker struct {
 // budget watches the memory of the keyed tables of all workers.
 type budget struct {
 	memory  int64
+	cluster int64
 	unit    int
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
 }
@@ -219,7 +221,7 @@ func (w *firstWorker) fold() error {
 			cl += w.clusterBytes(k)
 		}
 	}
-	if cl > w.budget.memory/8 {
+	if cl > w.budget.cluster {
 		w.budget.dropped.Store(true)
 	}
 	return nil
@@ -289,7 +291,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
-	b := &budget{memory: o.Memory, unit: unit}
+	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit}
 	scan, err := src.Scan(ctx, d.Uses())
 	if err != nil {
 		return nil, err

@@ -19,6 +19,10 @@ type Needs struct {
 type Options struct {
 	Workers int
 	Memory  int64 // bound of what the sums take, bytes
+	// Clusters bounds the second moments of clusters, in bytes; beyond it they are
+	// dropped and State.Dropped is set. It must not depend on Workers, so that the
+	// same input always takes the same route. 0 means a sixteenth of Memory.
+	Clusters int64
 	Meter   *Meter
 }
 
@@ -30,7 +34,7 @@ type MemoryError struct {
 }
 
 func (e *MemoryError) Error() string {
-	return fmt.Sprintf("%s: the sums need at least %s, the bound is %s; raise --memory, or use coarser groups", e.What, size(e.Need), size(e.Have))
+	return fmt.Sprintf("%s: the sums need at least %s and may take %s; raise --memory, or use coarser groups", e.What, size(e.Need), size(e.Have))
 }
 
 func size(n int64) string {

@@ -34,7 +34,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p,
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Meter: o.Meter}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter}}
 	if err := f.first(); err != nil {
 		return nil, err
 	}
@@ -127,10 +127,10 @@ func (f *fitter) second() error {
 	}
 	if len(f.plan.needs.Clusters) > 0 && s.Dropped {
 		if !f.src.Info().Rewindable {
-			return &accum.MemoryError{What: "second moments of clusters on a pipe", Need: f.o.Memory/8 + 1, Have: f.o.Memory / 8}
+			return &accum.MemoryError{What: "second moments of clusters on a pipe", Need: f.o.ClusterMemory + 1, Have: f.o.ClusterMemory}
 		}
 		rows = true
-		f.note("second-pass", "the clusters' second moments outgrew an eighth of --memory; a second pass kept scores only")
+		f.note("second-pass", "the clusters' second moments outgrew a sixteenth of --memory; a second pass kept scores only")
 	}
 	if !rows {
 		return nil

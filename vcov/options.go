@@ -19,6 +19,10 @@ type Options struct {
 	Workers int
 	// Memory bounds what the sums may take, in bytes; 0 means 2 GiB.
 	Memory int64
+	// ClusterMemory bounds the clusters' second moments: beyond it a second pass
+	// keeps scores only. 0 means a sixteenth of Memory. It must not be derived
+	// from Workers, or the last bits would depend on them.
+	ClusterMemory int64
 	// Covariance asks for the matrix beyond 200 terms.
 	Covariance bool
 	// Meter, if not nil, is counted up while the scan runs.

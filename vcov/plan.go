@@ -64,6 +64,9 @@ func (o Options) withDefaults() Options {
 	if o.Memory <= 0 {
 		o.Memory = defaultMemory
 	}
+	if o.ClusterMemory <= 0 {
+		o.ClusterMemory = o.Memory / 16
+	}
 	return o
 }
 
@@ -179,7 +182,7 @@ func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) 
 		p.PerCluster = int64(c*(c+1)/2) * 24
 		p.cost("cluster sums", float64(len(clusters))*(c*(c+1)/2+20))
 		route = append(route, "cluster sums")
-		p.why("clusters keep their second moments; beyond %s of them a second pass keeps scores only", "an eighth of --memory")
+		p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass keeps scores only")
 	}
 	if rows {
 		p.Passes = 2

@@ -149,7 +149,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		if pf, err = readPlan(s.plan); err != nil {
 			return nil, err
 		}
-		if err := pf.adopt(s, req, &o); err != nil {
+		if err := pf.adopt(s, &o); err != nil {
 			return nil, err
 		}
 	}
@@ -163,8 +163,14 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		return nil, err
 	}
 	p := &prepared{a: a, s: s, req: req, src: src}
-	if p.design, err = stream.NewDesign(s.spec(req.keys), src.Schema()); err == nil && pf != nil {
-		err = pf.check(p)
+	if p.design, err = stream.NewDesign(s.spec(req.keys), src.Schema()); err == nil {
+		// From here on clusterings go by their canonical text.
+		for i, k := range p.design.Keys {
+			p.req.keys[i] = k.Text
+		}
+		if pf != nil {
+			err = pf.check(p)
+		}
 	}
 	if err != nil {
 		src.Close()
@@ -175,6 +181,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		Level:  s.level, Passes: s.passes, Meter: new(accum.Meter),
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
+	p.opts.ClusterMemory = s.memoryBound() / 16
 	return p, nil
 }
 
@@ -195,7 +202,8 @@ func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
 		return nil, &internalError{fmt.Sprintf("%d kinds of errors for %d asked", len(res.Errors), len(p.opts.Errors))}
 	}
 	res.Version = version
-	res.Model = s.echo(p.req)
+	res.Model.Errors = p.req.names()
+	res.Model.BadRows = s.badRows
 	res.Run.PeakBytes = peakBytes()
 	if n := p.src.Info().Skipped; n > 0 {
 		res.Warnings = append(res.Warnings, vcov.Warning{Code: "skipped-files", Text: fmt.Sprintf("%s in folders passed over because the name starts with _ or .", plural(int64(n), "file", "files"))})
