@@ -5,6 +5,7 @@ import (
 	"errors"
 	"hash/crc32"
 	"io"
+	"slices"
 
 	"github.com/parquet-go/parquet-go/format"
 	"github.com/tallrow/tallrow/stream"
@@ -20,6 +21,10 @@ const (
 	// slack is the room the bit unpackers may read beyond the data.
 	slack = 64
 )
+
+// verifyChecksums is turned off by tests, to reach the decoders with damaged
+// bytes.
+var verifyChecksums = true
 
 // page is a decoded data page with a cursor.
 type page struct {
@@ -94,8 +99,9 @@ func (c *chunk) at(off int64, n int) ([]byte, error) {
 		b := c.buf.raw[:n]
 		return b, readFull(c.r, b, off, c.pos)
 	}
-	c.buf.win = grow(c.buf.win, windowBytes)
-	c.win, c.winAt = c.buf.win[:min(windowBytes-slack, c.end-off)], off
+	c.winAt = off
+	c.buf.win = grow(c.buf.win, int(min(windowBytes, c.end-off+slack)))
+	c.win = c.buf.win[:min(windowBytes-slack, c.end-off)]
 	if err := readFull(c.r, c.win, off, c.pos); err != nil {
 		c.win = nil
 		return nil, err
@@ -140,6 +146,13 @@ func (c *chunk) checkHeader(h *pageHeader) error {
 	}
 	if int64(h.uncompressed) > limit {
 		return c.damage("the page at byte %d with %d bytes (%s) claims to hold %d", c.off, h.compressed, c.meta.Codec, h.uncompressed)
+	}
+	switch enc := format.Encoding(h.encoding); enc {
+	case format.DeltaBinaryPacked, format.DeltaLengthByteArray, format.DeltaByteArray, format.ByteStreamSplit:
+		// The header has no checksum, and these can be taken for plain values.
+		if (h.typ == pageData || h.typ == pageDataV2) && !slices.Contains(c.meta.Encoding, enc) {
+			return c.damage("the page at byte %d has the encoding %s, which is not among those of its chunk", c.off, enc)
+		}
 	}
 	switch h.typ {
 	case pageDataV2:
@@ -258,7 +271,7 @@ func (c *chunk) body(h *pageHeader) ([]byte, error) {
 	if err != nil {
 		return nil, err
 	}
-	if h.hasCRC && crc32.ChecksumIEEE(b) != h.crc {
+	if h.hasCRC && verifyChecksums && crc32.ChecksumIEEE(b) != h.crc {
 		return nil, c.damage("the checksum of the page at byte %d is %08x, not %08x", c.off, crc32.ChecksumIEEE(b), h.crc)
 	}
 	return b, nil

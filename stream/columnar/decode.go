@@ -12,6 +12,10 @@ import (
 	"github.com/parquet-go/parquet-go/format"
 )
 
+// plainDictionary is the older name of the encodings of dictionary pages
+// (plain) and of indexes (RLE_DICTIONARY). Files still have it.
+const plainDictionary format.Encoding = 2
+
 // load decodes the data page whose header was just read.
 func (c *chunk) load(h *pageHeader) error {
 	b, err := c.body(h)
@@ -97,7 +101,7 @@ func (c *chunk) levels(b []byte) error {
 func (c *chunk) decode(enc format.Encoding, b []byte, n int) error {
 	p := &c.page
 	switch enc {
-	case format.PlainDictionary, format.RLEDictionary:
+	case plainDictionary, format.RLEDictionary:
 		return c.decodeIndexes(b, n)
 	case format.Plain:
 		v, err := c.plain(b, n, &c.buf)
@@ -305,7 +309,7 @@ func (c *chunk) loadDictionary(h *pageHeader) error {
 	if c.dict != nil {
 		return c.damage("a second dictionary lies at byte %d", c.off)
 	}
-	if e := format.Encoding(h.encoding); e != format.Plain && e != format.PlainDictionary {
+	if e := format.Encoding(h.encoding); e != format.Plain && e != plainDictionary {
 		return c.damage("the dictionary at byte %d has the encoding %s", c.off, e)
 	}
 	if c.col.phys == format.Boolean {

@@ -331,11 +331,12 @@ func (r *reader) integers(dst []int64) []int {
 
 // badOf lists the places of idx whose entries do not fit.
 func (d *dictionary) badOf(idx []int32) (bad []int) {
-	if d.bad != nil {
-		for i, k := range idx {
-			if d.bad[k] {
-				bad = append(bad, i)
-			}
+	if len(d.bad) == 0 {
+		return nil
+	}
+	for i, k := range idx {
+		if d.bad[k] {
+			bad = append(bad, i)
 		}
 	}
 	return bad
@@ -344,31 +345,21 @@ func (d *dictionary) badOf(idx []int32) (bad []int) {
 // addBad records that value k of the block at row at does not fit.
 func (s *segment) addBad(r *reader, at, k int, def []byte) {
 	row := k
-	if def != nil {
-		for i, d := range def {
-			if d == r.col.maxDef {
-				if k == 0 {
-					row = i
-					break
-				}
-				k--
+	for i, d := range def {
+		if d == r.col.maxDef {
+			if row == 0 {
+				row = i
+				break
 			}
+			row--
 		}
 	}
 	p := &r.page
-	v, i := &p.values, p.val+badIndex(def, row, r.col.maxDef)
+	v, i := &p.values, p.val+k
 	if p.idx != nil {
 		v, i = &r.dict.values, int(p.idx[i])
 	}
 	s.bad = append(s.bad, badCell{row: at + row, found: r.col.found(v, i)})
-}
-
-// badIndex counts the values before row.
-func badIndex(def []byte, row int, maxDef byte) int {
-	if def == nil {
-		return row
-	}
-	return bytes.Count(def[:row], []byte{maxDef})
 }
 
 // dropBad takes the bad rows out of rows at..at+n, or gives the error of the

@@ -56,7 +56,7 @@ var codecs = map[string]compress.Codec{
 // text in dictionaries. Not for several goroutines.
 type Writer struct {
 	cols     []WriteColumn
-	w        *parquet.Writer
+	w        *parquet.GenericWriter[any]
 	out      []*parquet.ColumnWriter
 	perGroup int
 	inGroup  int
@@ -138,7 +138,7 @@ func NewWriter(w io.Writer, cols []WriteColumn, o WriterOptions) (*Writer, error
 		root.Group[c.Name] = node
 		root.order = append(root.order, c.Name)
 	}
-	pw := parquet.NewWriter(w, parquet.NewSchema("rows", root),
+	pw := parquet.NewGenericWriter[any](w, parquet.NewSchema("rows", root),
 		parquet.Compression(codec), parquet.PageBufferSize(o.PageBytes), parquet.DataPageVersion(1),
 		parquet.DataPageStatistics(false), parquet.DictionaryMaxBytes(int64(o.DictBytes)),
 		parquet.CreatedBy("tallrow", "1", ""))
