@@ -113,12 +113,30 @@ func openStdin(ctx context.Context, paths []string, stdin io.ReadCloser, formats
 			if at, err := f.Seek(0, io.SeekCurrent); err == nil && at == 0 {
 				in := Input{Name: name, File: f, Size: info.Size(), ModTime: info.ModTime()}
 				src, _, err := openInput(ctx, in, formats, o)
-				return src, err
+				if err != nil {
+					return nil, err
+				}
+				return stdinFile{src, f}, nil
 			}
 		}
 	}
 	src, _, err := openInput(ctx, Input{Name: name, Pipe: stdin}, formats, o)
 	return src, err
+}
+
+// stdinFile is a file on standard input: it has no path by which its stamp could
+// be taken.
+type stdinFile struct {
+	Source
+	file *os.File
+}
+
+func (s stdinFile) Stamp() (string, error) {
+	info, err := s.file.Stat()
+	if err != nil {
+		return "", err
+	}
+	return fileStamp("standard input", info.Size(), info.ModTime()), nil
 }
 
 func otherThan(paths []string, not string) string {

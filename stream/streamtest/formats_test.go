@@ -153,6 +153,22 @@ func TestFormats(t *testing.T) {
 			return src
 		}
 	}
+	openStdin := func(name string) func(t *testing.T) stream.Source {
+		return func(t *testing.T) stream.Source {
+			f, err := os.Open(name)
+			if err != nil {
+				t.Fatal(err)
+			}
+			src, err := stream.Open(context.Background(), []string{"-"}, f, formats, o)
+			if err != nil {
+				t.Fatal(err)
+			}
+			if !src.Info().Rewindable {
+				t.Error("a file on standard input is read like a pipe")
+			}
+			return src
+		}
+	}
 	for _, c := range []struct {
 		name  string
 		open  func(t *testing.T) stream.Source
@@ -160,6 +176,8 @@ func TestFormats(t *testing.T) {
 	}{
 		{"csv", openPaths(nil, "all.csv"), table(File{"all.csv", rows})},
 		{"csv pipe", openPaths(whole, "-"), table(File{"standard input", rows})},
+		{"csv file on standard input", openStdin("all.csv"), table(File{"standard input", rows})},
+		{"parquet file on standard input", openStdin("all.parquet"), table(File{"standard input", rows})},
 		{"csv gzip", openPaths(nil, "all.csv.gz"), table(File{"all.csv.gz", rows})},
 		{"csv gzip pipe", openPaths(packed.Bytes(), "-"), table(File{"standard input", rows})},
 		{"csv folder", openPaths(nil, "text"), parts("text/part0.csv", "text/part1.csv", "text/part2.csv")},
