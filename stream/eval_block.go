@@ -13,7 +13,7 @@ type Evaluator struct {
 
 	prog *program
 	stop bool
-	num  [][]float64 // value of each number register, own buffer or a column
+	num  [][]float64 // value of each number register: own buffer or a column
 	buf  [][]float64 // own buffers
 	bad  []bool      // the register holds a NaN or an infinity
 	ns   [][]int64   // value of each time register
@@ -27,7 +27,7 @@ type Evaluator struct {
 	rows  int     // capacity of the buffers
 	state []uint8 // fate of each row
 	used  []int32 // rows that are used
-	cells []bool  // for each of prog.checked: holds missing or infinite cells
+	clean []bool  // for each of prog.uses: known to hold no missing or infinite cell
 
 	outX           [][]float64 // compacted columns, kept
 	outW           []float64
@@ -59,7 +59,7 @@ func (d *Design) NewEvaluator() *Evaluator {
 		ns: make([][]int64, n), null: make([][]bool, n), nbuf: make([][]int64, n),
 		clock: zoneClock{zone: p.zone, lo: 1, hi: 0},
 		texts: make([]textCache, p.textCaches),
-		cells: make([]bool, len(p.checked)),
+		clean: make([]bool, len(p.uses)),
 		outX:  make([][]float64, len(p.dense)), outCat: make([]Vector, len(p.cats)), outKey: make([]Vector, len(p.keys)),
 		lost: make([]int64, len(p.lost)), lostRow: make([]int, len(p.lost)), valueless: make([]int64, len(p.noValue)),
 	}
@@ -114,6 +114,7 @@ func (e *Evaluator) Eval(b *Batch, loc func(mark int64) Position, out *Block) er
 		e.grow(n)
 	}
 	e.events = e.events[:0]
+	e.survey(b)
 	e.prepare(out)
 	if p.where >= 0 {
 		e.run(p.code[:p.nWhere], 0, b)
@@ -124,7 +125,7 @@ func (e *Evaluator) Eval(b *Batch, loc func(mark int64) Position, out *Block) er
 		}
 	}
 	e.run(p.code[p.nWhere:], p.nWhere, b)
-	if e.allUsed(b) {
+	if e.allUsed() {
 		e.Tally.Used += int64(n)
 		e.pass(b, out)
 		return nil
@@ -189,7 +190,7 @@ func (e *Evaluator) run(code []instr, base int, b *Batch) {
 			v := &b.Cols[in.use]
 			if v.Kind == Float64 {
 				e.num[r] = v.F64[:n]
-				bad = anyBad(e.num[r])
+				bad = !e.clean[in.use]
 			} else {
 				bad = cellsToNumbers(dst, v)
 			}
@@ -283,26 +284,33 @@ func (e *Evaluator) noneInside(n int) bool {
 	return true
 }
 
-// allUsed reports whether every row of the batch is used, and notes which
-// checked columns are not clean.
-func (e *Evaluator) allUsed(b *Batch) bool {
-	p, n := e.prog, b.Rows
-	all := true
-	for i, u := range p.checked {
-		v := &b.Cols[u]
-		bad := false
+// survey notes which columns of a batch are clean.
+func (e *Evaluator) survey(b *Batch) {
+	for i := range b.Cols {
+		v := &b.Cols[i]
+		clean := true
 		switch v.Kind {
 		case Float64:
-			bad = anyBad(v.F64[:n])
+			clean = !anyBad(v.F64[:b.Rows])
 		case Text:
-			for _, c := range v.Code[:n] {
-				bad = bad || c < 0
+			for _, c := range v.Code[:b.Rows] {
+				if c < 0 {
+					clean = false
+					break
+				}
 			}
 		default:
-			bad = v.Null != nil
+			clean = v.Null == nil
 		}
-		e.cells[i] = bad
-		all = all && !bad
+		e.clean[i] = clean
+	}
+}
+
+// allUsed reports whether every row of the batch is used.
+func (e *Evaluator) allUsed() bool {
+	p, all := e.prog, len(e.events) == 0
+	for _, u := range p.checked {
+		all = all && e.clean[u]
 	}
 	for _, r := range p.dense {
 		all = all && !e.bad[r]
@@ -323,7 +331,7 @@ func (e *Evaluator) allUsed(b *Batch) bool {
 			all = all && w > 0 && w <= math.MaxFloat64 && (!p.frequency || w == math.Trunc(w))
 		}
 	}
-	return all && len(e.events) == 0
+	return all
 }
 
 // mark notes what is missing or infinite in a number register.
@@ -364,8 +372,7 @@ func (e *Evaluator) markKey(k *keyOutput, b *Batch) {
 	case k.use < 0 && !k.time:
 		e.mark(k.reg, b.Rows)
 		return
-	case k.use >= 0 && b.Cols[k.use].Kind != Text && b.Cols[k.use].Kind != Float64 && b.Cols[k.use].Null == nil,
-		k.time && e.null[k.reg] == nil:
+	case k.use >= 0 && e.clean[k.use], k.time && e.null[k.reg] == nil:
 		return
 	}
 	for i := range b.Rows {
@@ -386,8 +393,8 @@ func (e *Evaluator) sort(b *Batch, loc func(int64) Position) (t Tally, err error
 			}
 		}
 	}
-	for i, u := range p.checked {
-		if e.cells[i] && b.Cols[u].Kind == Float64 {
+	for _, u := range p.checked {
+		if !e.clean[u] && b.Cols[u].Kind == Float64 {
 			for j, v := range b.Cols[u].F64[:n] {
 				if v-v != 0 && v == v {
 					e.markRow(j, false)
@@ -455,7 +462,7 @@ func (e *Evaluator) sort(b *Batch, loc func(int64) Position) (t Tally, err error
 func (e *Evaluator) blame(b *Batch, row int) {
 	p, any := e.prog, false
 	for i, u := range p.checked {
-		if e.cells[i] && missingAt(&b.Cols[u], row) {
+		if !e.clean[u] && missingAt(&b.Cols[u], row) {
 			e.lost[i]++
 			any = true
 		}

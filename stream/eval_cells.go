@@ -60,20 +60,13 @@ func setMissing(dst []float64, null []bool) (bad bool) {
 
 // evalBound compares whole numbers exactly with a number beyond 2^53.
 func evalBound(in *instr, dst []float64, v *Vector) bool {
-	above := 0 // how a cell equal to floor compares
-	if !in.bound.whole {
-		above = -1
-	}
 	for i, cell := range v.I64[:len(dst)] {
 		c := in.bound.side
 		if c == 0 {
 			if v.Kind == Uint64 {
-				c = cmp.Compare(uint64(cell), in.bound.floor)
+				c = cmp.Compare(uint64(cell), in.bound.value)
 			} else {
-				c = cmp.Compare(cell, int64(in.bound.floor))
-			}
-			if c == 0 {
-				c = above
+				c = cmp.Compare(cell, int64(in.bound.value))
 			}
 		}
 		dst[i] = truthOf(in.cmp, c)

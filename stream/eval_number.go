@@ -9,7 +9,7 @@ import "math"
 // turns into NaN: it stays, so that the row is reported rather than dropped.
 //
 // Each kernel returns whether dst holds a NaN or an infinity; x-x is not zero
-// for exactly these.
+// for exactly these. True may be said needlessly: it only costs time.
 
 func evalNeg(dst, a []float64) (bad bool) {
 	a = a[:len(dst)]
@@ -382,17 +382,17 @@ func truthOf(o op, c int) float64 {
 	return truth(c != 0)
 }
 
-// anyBad reports whether v holds a NaN or an infinity.
+// anyBad reports whether v holds a NaN or an infinity, or numbers so large that
+// the sum of eight overflows.
 func anyBad(v []float64) bool {
-	i := 0
-	for ; i+4 <= len(v); i += 4 {
-		w := v[i : i+4 : i+4]
-		if (w[0]-w[0])+(w[1]-w[1])+(w[2]-w[2])+(w[3]-w[3]) != 0 {
+	for ; len(v) >= 8; v = v[8:] {
+		s := ((v[0] + v[1]) + (v[2] + v[3])) + ((v[4] + v[5]) + (v[6] + v[7]))
+		if s-s != 0 {
 			return true
 		}
 	}
-	for ; i < len(v); i++ {
-		if v[i]-v[i] != 0 {
+	for _, x := range v {
+		if x-x != 0 {
 			return true
 		}
 	}

@@ -237,15 +237,19 @@ func TestTimesAgainstTime(t *testing.T) {
 	schema := &Schema{Columns: []Column{{Name: "y", Kind: Float64}, {Name: "t", Kind: Time, Zoned: true}, {Name: "w", Kind: Time}}}
 	var rows []refRow
 	for _, start := range []string{
-		"1677-09-21T12:00:00Z", "1880-01-01T00:00:00Z", "1937-06-30T23:00:00Z", "1969-12-28T00:00:00Z",
+		"2024-03-31T00:50:00Z", "2024-10-27T00:50:00Z", "1677-09-21T12:00:00Z", "1880-01-01T00:00:00Z", "1937-06-30T23:00:00Z", "1969-12-28T00:00:00Z",
 		"2024-03-30T20:00:00Z", "2024-10-26T20:00:00Z", "2262-04-09T00:00:00Z",
 	} {
 		at, err := time.Parse(time.RFC3339, start)
 		if err != nil {
 			t.Fatal(err)
 		}
+		step := 37 * time.Minute
+		if at.Minute() == 50 { // just before the clock changes
+			step = 3 * time.Minute
+		}
 		for i := range 70 {
-			v := at.Add(time.Duration(i)*37*time.Minute + time.Duration(i)*123456789)
+			v := at.Add(time.Duration(i)*step + time.Duration(i)*123456789)
 			rows = append(rows, refRow{"y": 1.0, "t": v, "w": v})
 		}
 	}
@@ -331,6 +335,7 @@ func TestRowErrors(t *testing.T) {
 		{Spec{Outcome: "minutes", Terms: []string{"tonnes", "wet*exp(pallets)"}}, with("pallets", 1000.0), "quays.csv row 2 column wet * exp(pallets): found a value beyond float64 (1.8e308), want a finite number"},
 		{Spec{Outcome: "exp(pallets) - exp(pallets)"}, with("pallets", 1000.0), "quays.csv row 2 column exp(pallets) - exp(pallets): found a value beyond float64 (1.8e308), want a finite number"},
 		{Spec{Outcome: "minutes", Terms: []string{"each(barge) * exp(pallets)"}}, with("pallets", 1000.0), "quays.csv row 2 column each(barge) * exp(pallets): found a value beyond float64 (1.8e308), want a finite number"},
+		{Spec{Outcome: "minutes", Terms: []string{"each(exp(pallets))"}}, with("pallets", 1000.0), "quays.csv row 2 column each(exp(pallets)): found a value beyond float64 (1.8e308), want a finite number"},
 		{Spec{Outcome: "minutes", Keys: []string{"exp(pallets)"}}, with("pallets", 1000.0), "quays.csv row 2 column exp(pallets): found a value beyond float64 (1.8e308), want a finite number"},
 		{Spec{Outcome: "minutes", Weight: "tonnes - 2", WeightKind: Precision}, with("tonnes", 1.0), "quays.csv row 2 column tonnes - 2: found -1, want a finite weight of zero or more"},
 		{Spec{Outcome: "minutes", Weight: "tonnes", WeightKind: Precision}, with("tonnes", inf), "quays.csv row 2 column tonnes: found +Inf, want a finite weight of zero or more"},
@@ -404,6 +409,18 @@ func TestTallyNames(t *testing.T) {
 	}
 	if !sameTally(&e.Tally, &want) {
 		t.Errorf("got  %+v\nwant %+v", e.Tally, want)
+	}
+	// An operation without value that does not matter drops no row, but counts.
+	d, err = NewDesign(Spec{Outcome: "minutes", Terms: []string{"wet || log(pallets) > 1"}}, quays())
+	if err != nil {
+		t.Fatal(err)
+	}
+	e = d.NewEvaluator()
+	if err := e.Eval(batchOf([]refRow{{"minutes": 1.0, "wet": true, "pallets": 0.0}}, quays(), d.Uses()), nil, &out); err != nil {
+		t.Fatal(err)
+	}
+	if masked := (Tally{Used: 1, NoValue: map[string]int64{"log(pallets)": 1}}); !sameTally(&e.Tally, &masked) {
+		t.Errorf("got  %+v\nwant %+v", e.Tally, masked)
 	}
 	var sum Tally
 	sum.Add(&want)

@@ -9,8 +9,8 @@ import (
 	"time"
 )
 
-// KeyValue is one value of a key, comparable with == and usable as a map key:
-// the type of the column is not part of it. Bits holds the value of every kind
+// KeyValue is one value of a key, comparable with == and usable as a map key.
+// The kind of the column is not part of it. Bits holds the value of every kind
 // but Text: an int64, a uint64, 0 or 1, nanoseconds, or the bits of a canonical
 // float64.
 type KeyValue struct {
@@ -73,7 +73,9 @@ func FormatKey(c KeyColumn, zone *time.Location, v KeyValue) string {
 }
 
 // ParseKey reads a label of the key column: the inverse of FormatKey, which
-// also takes other spellings of the same value (3.0 for 3).
+// also takes other spellings of a float64 (3.0 for 3), 0 and 1 for truth values
+// and times in the forms of string literals in expressions. The error says what
+// was found and what would be right.
 func ParseKey(c KeyColumn, zone *time.Location, label string) (KeyValue, error) {
 	bad := func(want string) (KeyValue, error) {
 		return KeyValue{}, fmt.Errorf("found %q, want %s", label, want)
