@@ -23,7 +23,7 @@ type Options struct {
 	// dropped and State.Dropped is set. It must not depend on Workers, so that the
 	// same input always takes the same route. 0 means a sixteenth of Memory.
 	Clusters int64
-	Meter   *Meter
+	Meter    *Meter
 }
 
 // MemoryError says that the sums do not fit.
