@@ -159,13 +159,14 @@ func lineAt(text []byte, i int) int64 {
 // sniff returns the delimiter of the rows from i on: the one that stands in the
 // first row and equally often in most others, outside quotes; of equals, the one
 // that makes more columns. With decimal commas, a comma only if nothing else
-// separates. A text with none of them has one column.
+// separates; one that leaves quotes of the first row out of place only if all
+// do. A text with none of them has one column.
 func sniff(text []byte, i int, decimalComma bool) byte {
 	type tally struct{ first, equal int }
 	candidates := []byte{'\t', ';', ','}
 	counts := make([]tally, len(candidates))
 	t := tokens{text: text}
-	rows := 0
+	first, rows := i, 0
 	for rows < sniffRows {
 		i = skipBlank(&t, i)
 		end := -1
@@ -202,6 +203,11 @@ func sniff(text []byte, i int, decimalComma bool) byte {
 	}
 	best := -1
 	for k, c := range counts {
+		t.delim = candidates[k]
+		if _, _, f := t.row(first, nil); f != sound {
+			c.equal = 0 // quotes of the first row are out of place
+			counts[k] = c
+		}
 		switch {
 		case c.first == 0, decimalComma && candidates[k] == ',' && best >= 0:
 		case best < 0, c.equal > counts[best].equal,

@@ -16,6 +16,7 @@ type segment struct {
 	ctx    context.Context
 	number int
 	parser parser
+	uses   []stream.Use
 	out    []*column
 	vecs   []stream.Vector
 	marks  []int64
@@ -42,9 +43,8 @@ func newSegment(ctx context.Context, src *source, uses []stream.Use, number int)
 	s.parser.rules = src.rules
 	s.parser.delim = src.head.delim
 	s.parser.columns = len(src.head.schema.Columns)
-	s.parser.steps, s.out = program(&src.head.schema, uses)
+	s.uses = uses
 	s.vecs = make([]stream.Vector, len(uses))
-	s.marks = make([]int64, stream.BatchRows)
 	return s
 }
 
@@ -90,10 +90,15 @@ func (s *segment) fill() int {
 			return 0
 		}
 	}
+	p := &s.parser
+	if p.steps == nil && (len(p.text) > 0 || s.more != nil) {
+		// Not before: segments without rows, or never read, need no columns.
+		p.steps, s.out = program(&s.src.head.schema, s.uses)
+		s.marks = make([]int64, stream.BatchRows)
+	}
 	for _, o := range s.out {
 		o.begin()
 	}
-	p := &s.parser
 	n := 0
 	for n < stream.BatchRows {
 		i := s.pos
