@@ -344,3 +344,15 @@ func TestSpoolExists(t *testing.T) {
 		t.Error("the file was overwritten")
 	}
 }
+
+// TestBadRowLeavesNothing has rows that are given up after cells were stored.
+func TestBadRowLeavesNothing(t *testing.T) {
+	text := "a,b,c,d\n,,2024-01-01,5\n,,,bad\n1,x,2024-01-02,6\nNA,y,,bad\n"
+	o := stream.Options{SkipBad: true, Kinds: map[string]stream.Kind{"a": stream.Int64, "c": stream.Time, "d": stream.Int64}}
+	src := openWay(t, "file", text, o)
+	got, _, err := readAll(t, src, allUses(src), false)
+	if err != nil {
+		t.Fatal(err)
+	}
+	equalRows(t, "rows", got, []string{"-|-|2024-01-01T00:00:00Z|5", `1|"x"|2024-01-02T00:00:00Z|6`})
+}
