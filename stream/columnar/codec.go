@@ -20,14 +20,14 @@ import (
 
 // maxRatio is the largest expansion a codec can reach (0: no useful bound). A
 // snappy copy makes 64 bytes of 3, an LZ4 length byte 255 of 1, deflate at most
-// 1032 to 1.
+// 1032 of 1, a zstd block of 4 bytes at most 128 KiB.
 var maxRatio = map[format.CompressionCodec]int64{
 	format.Uncompressed: 1,
 	format.Snappy:       22,
 	format.Gzip:         1033,
 	format.Lz4Raw:       256,
 	format.Brotli:       0,
-	format.Zstd:         0,
+	format.Zstd:         1 << 15,
 }
 
 var (

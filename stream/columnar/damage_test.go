@@ -16,6 +16,8 @@ import (
 	"time"
 
 	"github.com/parquet-go/parquet-go"
+	"github.com/parquet-go/parquet-go/encoding/delta"
+	"github.com/parquet-go/parquet-go/format"
 	"github.com/tallrow/tallrow/stream"
 )
 
@@ -280,7 +282,7 @@ func TestDamageMessage(t *testing.T) {
 	}
 }
 
-// hugeClaims are lengths that a damaged or hostile file may claim.
+// Lengths that a damaged or hostile file may claim.
 func TestChecks(t *testing.T) {
 	uv := binary.AppendUvarint
 	for _, tc := range []struct {
@@ -300,6 +302,23 @@ func TestChecks(t *testing.T) {
 			t.Errorf("%s: %v", tc.name, tc.err)
 		}
 	}
+	// 10,000 values that repeat a prefix of a million bytes.
+	var e delta.BinaryPackedEncoding
+	lengths := make([]int32, 10000)
+	suffixes, err := e.EncodeInt32(nil, append([]int32{1e6}, lengths[1:]...))
+	if err != nil {
+		t.Fatal(err)
+	}
+	for i := range lengths[1:] {
+		lengths[i+1] = 1e6
+	}
+	prefixes, err := e.EncodeInt32(nil, lengths)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := checkLengths(append(prefixes, suffixes...), format.DeltaByteArray, len(lengths)); err == nil || !strings.Contains(err.Error(), "would unpack to 9") {
+		t.Errorf("long prefixes: %v", err)
+	}
 	// A list and a string of 2^31 items in the footer.
 	for _, b := range [][]byte{{0x19, 0xfc, 0xff, 0xff, 0xff, 0xff, 0x07}, {0x18, 0xff, 0xff, 0xff, 0xff, 0x07}, bytes.Repeat([]byte{0x1c}, 1000), bytes.Repeat([]byte{0x19}, 1000)} {
 		w := wire{b: b}
@@ -309,6 +328,8 @@ func TestChecks(t *testing.T) {
 	}
 }
 
+// FuzzParquet: mutated files, checksums not looked at. -fuzzminimizetime 5x
+// keeps it from spending its time on making inputs smaller.
 func FuzzParquet(f *testing.F) {
 	verifyChecksums = false
 	f.Cleanup(func() { verifyChecksums = true })

@@ -267,13 +267,32 @@ func (c *chunk) special(enc format.Encoding, b []byte, n int) (v values, err err
 	return v, nil
 }
 
+// maxUnpacked bounds the bytes that byte arrays with shared prefixes may unpack
+// to: a few bytes can stand for very many.
+const maxUnpacked = 1 << 30
+
 // checkLengths checks the lengths in front of delta-encoded byte arrays.
 func checkLengths(b []byte, enc format.Encoding, n int) error {
 	rest, err := checkDelta(b, 32, n)
-	if err == nil && enc == format.DeltaByteArray {
-		_, err = checkDelta(rest, 32, n)
+	if err != nil || enc != format.DeltaByteArray {
+		return err
 	}
-	return err
+	if _, err = checkDelta(rest, 32, n); err != nil {
+		return err
+	}
+	var e delta.BinaryPackedEncoding
+	prefixes, err := e.DecodeInt32(nil, b)
+	if err != nil {
+		return err
+	}
+	total := int64(len(b))
+	for _, p := range prefixes {
+		total += int64(p)
+	}
+	if total > maxUnpacked {
+		return fmt.Errorf("its %d bytes would unpack to %d", len(b), total)
+	}
+	return nil
 }
 
 // unsplit undoes the byte-stream-split encoding.

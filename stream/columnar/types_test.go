@@ -265,14 +265,14 @@ func TestTypes(t *testing.T) {
 
 func TestRefused(t *testing.T) {
 	root := orderedGroup{Group: parquet.Group{
-		"list": parquet.List(parquet.Int(64)), "tags": parquet.Repeated(parquet.String()), "bson": parquet.BSON(),
+		"list": parquet.List(parquet.Int(64)), "tags": parquet.Repeated(parquet.String()), "bson": parquet.BSON(), "span": parquet.IntervalNode(),
 		"crane": parquet.Int(64),
-	}, order: []string{"list", "tags", "crane", "bson"}}
+	}, order: []string{"list", "tags", "crane", "bson", "span"}}
 	var buf bytes.Buffer
 	w := parquet.NewGenericWriter[any](&buf, parquet.NewSchema("rows", root))
 	for i := range 10 {
 		row := parquet.Row{parquet.Int64Value(1).Level(0, 1, 0), parquet.Int64Value(2).Level(1, 1, 0), parquet.NullValue().Level(0, 0, 1),
-			parquet.Int64Value(int64(i)).Level(0, 0, 2), parquet.ByteArrayValue([]byte("x")).Level(0, 0, 3)}
+			parquet.Int64Value(int64(i)).Level(0, 0, 2), parquet.ByteArrayValue([]byte("x")).Level(0, 0, 3), parquet.FixedLenByteArrayValue(make([]byte, 12)).Level(0, 0, 4)}
 		if _, err := w.WriteRows([]parquet.Row{row}); err != nil {
 			t.Fatal(err)
 		}
@@ -287,8 +287,8 @@ func TestRefused(t *testing.T) {
 	if len(f.schema.Columns) != 1 || f.schema.Columns[0].Name != "crane" {
 		t.Fatalf("columns %+v, want crane alone", f.schema.Columns)
 	}
-	if len(f.Refused()) != 3 {
-		t.Errorf("refused %+v, want three columns", f.Refused())
+	if len(f.Refused()) != 4 {
+		t.Errorf("refused %+v, want four columns", f.Refused())
 	}
 	got, err := readAll(f, allUses(f))
 	if err != nil || len(got) != 10 || got[9][0] != "9" {

@@ -248,9 +248,12 @@ func (w *Writer) fill(j int, v *stream.Vector, at, n int) {
 	c := &w.cols[j]
 	vals := w.vals[:n]
 	null := parquet.NullValue().Level(0, 0, j)
-	def := 0
-	if c.Optional {
-		def = 1
+	// Columns that are not optional have no levels to look at.
+	level := func(v parquet.Value) parquet.Value {
+		if c.Optional {
+			v = v.Level(0, 1, j)
+		}
+		return v
 	}
 	isNull := func(i int) bool { return v.Null != nil && v.Null[at+i] }
 	switch c.Kind {
@@ -260,11 +263,11 @@ func (w *Writer) fill(j int, v *stream.Vector, at, n int) {
 				vals[i] = null
 				continue
 			}
-			vals[i] = parquet.DoubleValue(x).Level(0, def, j)
+			vals[i] = level(parquet.DoubleValue(x))
 		}
 	case stream.Bool:
 		for i, x := range v.I64[at : at+n] {
-			vals[i] = parquet.BooleanValue(x != 0).Level(0, def, j)
+			vals[i] = level(parquet.BooleanValue(x != 0))
 			if isNull(i) {
 				vals[i] = null
 			}
@@ -277,15 +280,15 @@ func (w *Writer) fill(j int, v *stream.Vector, at, n int) {
 			}
 			// The value is copied when it is written.
 			text := v.Dict.Values[k]
-			vals[i] = parquet.ByteArrayValue(unsafe.Slice(unsafe.StringData(text), len(text))).Level(0, def, j)
+			vals[i] = level(parquet.ByteArrayValue(unsafe.Slice(unsafe.StringData(text), len(text))))
 		}
 	default:
 		days := c.Kind == stream.Time && c.DateOnly
 		for i, x := range v.I64[at : at+n] {
 			if days {
-				vals[i] = parquet.Int32Value(int32(x/nanosOfDay)).Level(0, def, j)
+				vals[i] = level(parquet.Int32Value(int32(x / nanosOfDay)))
 			} else {
-				vals[i] = parquet.Int64Value(x).Level(0, def, j)
+				vals[i] = level(parquet.Int64Value(x))
 			}
 			if isNull(i) {
 				vals[i] = null
