@@ -103,13 +103,22 @@ func flagError(cmd *cobra.Command, err error) error {
 // flagValue is an option on the command line. Values are kept and applied
 // after the model file.
 type flagValue struct {
-	o    *option
-	text string
+	o     *option
+	text  string
+	given bool
 }
 
-func (f *flagValue) String() string     { return f.text }
-func (f *flagValue) Set(t string) error { f.text = t; return nil }
-func (f *flagValue) Type() string       { return f.o.value }
+func (f *flagValue) String() string { return f.text }
+func (f *flagValue) Type() string   { return f.o.value }
+
+// Set refuses a second value: one of the two would be ignored.
+func (f *flagValue) Set(t string) error {
+	if f.given {
+		return stream.Usef("--%s is given twice: %q and %q", f.o.name, f.text, t)
+	}
+	f.text, f.given = t, true
+	return nil
+}
 
 // IsBoolFlag lets a switch stand alone.
 func (f *flagValue) IsBoolFlag() bool { return f.o.form == formSwitch }

@@ -118,7 +118,7 @@ func againstClassical(v *view, e *vcov.Errors) []string {
 		list = append(list, s+".")
 	} else if far >= 0 && farSize > math.Log(tellRatio) {
 		c := all[far]
-		s := fmt.Sprintf("Under %s the error of %s is %s times the classical one", under(e), oneLine(c.term), strings.TrimPrefix(ratioText1(c.ratio), "x"))
+		s := fmt.Sprintf("Under %s the error of %s is %s times the classical one", under(e), brief(c.term), strings.TrimPrefix(ratioText1(c.ratio), "x"))
 		switch {
 		case remove(&gain, c.term):
 			s += "; its interval now contains zero"
@@ -129,11 +129,11 @@ func againstClassical(v *view, e *vcov.Errors) []string {
 	}
 	if len(gain) > 0 {
 		list = append(list, fmt.Sprintf("Under %s the %s of %s now %s zero, which the classical %s not.", under(e),
-			form2(gain, "interval", "intervals"), both(shortList(oneLines(gain), 5)), form2(gain, "contains", "contain"), form2(gain, "one did", "ones did")))
+			form2(gain, "interval", "intervals"), both(shortList(briefs(gain), 5)), form2(gain, "contains", "contain"), form2(gain, "one did", "ones did")))
 	}
 	if len(lose) > 0 {
 		list = append(list, fmt.Sprintf("Under %s the %s of %s no longer %s zero, which the classical %s.", under(e),
-			form2(lose, "interval", "intervals"), both(shortList(oneLines(lose), 5)), form2(lose, "contains", "contain"), form2(lose, "one did", "ones did")))
+			form2(lose, "interval", "intervals"), both(shortList(briefs(lose), 5)), form2(lose, "contains", "contain"), form2(lose, "one did", "ones did")))
 	}
 	return list
 }
@@ -161,6 +161,17 @@ func form2(list []string, one, many string) string {
 		return one
 	}
 	return many
+}
+
+// brief is a name short enough for a sentence.
+func brief(name string) string { return shorten(name, 40) }
+
+func briefs(list []string) []string {
+	out := make([]string, len(list))
+	for i, s := range list {
+		out[i] = brief(s)
+	}
+	return out
 }
 
 func oneLines(list []string) []string {
@@ -199,7 +210,7 @@ func heavyRows(v *view) []string {
 	if far < 0 {
 		return nil
 	}
-	return []string{fmt.Sprintf("The error of %s by hc3 is %.2f times the one by %s: single rows weigh heavily on it.", oneLine(v.res.Terms[far]), size, plain.Kind)}
+	return []string{fmt.Sprintf("The error of %s by hc3 is %.2f times the one by %s: single rows weigh heavily on it.", brief(v.res.Terms[far]), size, plain.Kind)}
 }
 
 // clusterShape warns of few or very unequal clusters.

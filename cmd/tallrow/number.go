@@ -48,36 +48,45 @@ func ratioText(x float64) string {
 	return "x" + strconv.FormatFloat(x, 'f', 2, 64)
 }
 
-// pText writes a probability; one that underflowed is written from its
-// logarithm.
+// pText writes a probability; very small ones only as a bound.
 func pText(p, log10p vcov.Number) string {
 	x := float64(p)
-	if !p.Exists() {
+	switch {
+	case !p.Exists():
 		return none
-	}
-	if x < 1e-4 && log10p.Exists() && float64(log10p) < -4 {
-		l := float64(log10p)
-		e := math.Floor(l)
-		m := math.Round(math.Pow(10, l-e)*10) / 10
-		if m >= 10 {
-			m, e = 1, e+1
-		}
-		return strconv.FormatFloat(m, 'f', 1, 64) + "e-" + pad2(int(-e))
-	}
-	if x == 0 {
+	case x < 1e-99 && (x > 0 || log10p.Exists()):
+		return "<1e-99"
+	case x == 0:
 		return "0"
-	}
-	if x > 0.9995 {
+	case x > 0.9995:
 		return "1.00"
+	case x < 1e-4:
+		return digits(x, 2)
 	}
 	return digits(x, 3)
 }
 
-func pad2(n int) string {
-	if n < 10 {
-		return "0" + strconv.Itoa(n)
+// fine writes x so that a difference of the size of scale shows with n digits,
+// and with at least least significant digits.
+func fine(x, scale float64, n, least int) string {
+	if math.IsNaN(scale) || scale <= 0 || x == 0 || math.IsNaN(x) || math.IsInf(scale, 0) {
+		return digits(x, least)
 	}
-	return strconv.Itoa(n)
+	// Significant digits from the first one of x down to the n-th of scale.
+	need := int(math.Floor(math.Log10(math.Abs(x)))) - int(math.Floor(math.Log10(scale))) + n
+	return digits(x, min(max(need, least), 15))
+}
+
+// ends writes the two ends of an interval with the same decimals, enough to
+// show three digits of its half-width.
+func ends(low, high float64) (string, string) {
+	half := (high - low) / 2
+	far := math.Max(math.Abs(low), math.Abs(high))
+	if !(half > 0) || far >= 1e7 || far < 1e-4 || half < far*1e-11 {
+		return fine(low, half, 3, 5), fine(high, half, 3, 5)
+	}
+	dec := max(0, 2-int(math.Floor(math.Log10(half))))
+	return strconv.FormatFloat(low, 'f', dec, 64), strconv.FormatFloat(high, 'f', dec, 64)
 }
 
 // count writes a whole number with separators: 1,234,567.

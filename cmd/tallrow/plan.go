@@ -74,7 +74,14 @@ func renderPlan(pf *planFile, width int) string {
 	n.add("terms", strings.Join(oneLines(pf.Terms), ", "))
 	n.add("errors", strings.Join(oneLines(pf.Model.Errors), ", "))
 	n.add("route", fmt.Sprintf("%s: %s, %s arithmetic, %s", plural(int64(pf.Passes), "pass", "passes"), pf.Route, pf.Arithmetic, plural(int64(pf.Workers), "worker", "workers")))
-	n.add("memory", fmt.Sprintf("about %s of %s", sizeText(pf.Memory), sizeText(pf.Bound)))
+	memory := fmt.Sprintf("about %s of %s", sizeText(pf.Memory), sizeText(pf.Bound))
+	if len(pf.Model.Cluster) > 0 && pf.PerCluster > 0 {
+		memory += fmt.Sprintf("; %s more for each cluster", sizeText(pf.PerCluster))
+	}
+	if pf.PerLevel > 0 {
+		memory += fmt.Sprintf("; %s more for each level of a category", sizeText(pf.PerLevel))
+	}
+	n.add("memory", memory)
 	var costs []string
 	for _, c := range pf.Costs {
 		costs = append(costs, fmt.Sprintf("%s %s", c.What, percent(c.Share)))

@@ -29,6 +29,8 @@ type planFile struct {
 	Arithmetic string       `json:"arithmetic"`
 	Workers    int          `json:"workers"`
 	Memory     int64        `json:"memory"`
+	PerCluster int64        `json:"memory_per_cluster"`
+	PerLevel   int64        `json:"memory_per_level"`
 	Bound      int64        `json:"memory_bound"`
 	Costs      []planCost   `json:"costs"`
 	Reasons    []string     `json:"reasons"`
@@ -83,7 +85,7 @@ func newPlanFile(p *prepared, plan *vcov.Plan) (*planFile, error) {
 		Model: p.s.echo(p.req), Reading: p.s.planReading(),
 		Input: planInput{Format: info.Format, Files: info.Files, Bytes: info.Bytes, Rows: info.Rows, Segments: info.Segments},
 		Terms: list(plan.Terms), Passes: plan.Passes, Route: plan.Route, Arithmetic: plan.Arithmetic,
-		Workers: plan.Workers, Memory: plan.Memory, Bound: p.s.memoryBound(),
+		Workers: plan.Workers, Memory: plan.Memory, PerCluster: plan.PerCluster, PerLevel: plan.PerLevel, Bound: p.s.memoryBound(),
 		Costs: []planCost{}, Reasons: list(plan.Reasons),
 	}
 	for _, c := range plan.Costs {
@@ -144,11 +146,9 @@ func readPlan(name string) (*planFile, error) {
 	return &pf, nil
 }
 
-// adopt refuses a plan of another model and takes over passes and kinds.
-func (pf *planFile) adopt(s *settings, req request, o *stream.Options) error {
-	if what, then, now := difference(pf.Model, s.echo(req)); what != "" {
-		return stream.Usef("--plan %s is of another model: %s is %s there and %s here", s.plan, what, then, now)
-	}
+// adopt refuses a plan that reads in another way and takes over passes and
+// kinds.
+func (pf *planFile) adopt(s *settings, o *stream.Options) error {
 	if what, then, now := difference(pf.Reading, s.planReading()); what != "" {
 		return stream.Usef("--plan %s reads the data in another way: %s is %s there and %s here", s.plan, what, then, now)
 	}
@@ -173,8 +173,11 @@ func (pf *planFile) adopt(s *settings, req request, o *stream.Options) error {
 	return nil
 }
 
-// check refuses a plan of another input.
+// check refuses a plan of another model or input.
 func (pf *planFile) check(p *prepared) error {
+	if what, then, now := difference(pf.Model, p.s.echo(p.req)); what != "" {
+		return stream.Usef("--plan %s is of another model: %s is %s there and %s here", p.s.plan, what, then, now)
+	}
 	stamp, err := p.stamp()
 	if err != nil {
 		return err

@@ -15,6 +15,7 @@ const (
 	narrowest   = 80
 	widest      = 160
 	termWidth   = 26 // of the term column
+	shortTerm   = 14 // to which it may shrink
 	numberWidth = 13 // up to which numbers are aligned at the point
 )
 
@@ -34,11 +35,12 @@ func renderText(v *view, width int) string {
 	b.WriteByte('\n')
 	short := v.writeTerms(&b, width)
 	b.WriteByte('\n')
-	v.writeLegend(&b, width)
-	for _, s := range short {
-		n.add("", s)
+	if v.writeLegend(&b, width) || len(short) > 0 {
+		for _, s := range short {
+			n.add("", s)
+		}
+		b.WriteByte('\n')
 	}
-	b.WriteByte('\n')
 	v.writeFooter(n)
 	if list := findings(v); len(list) > 0 {
 		b.WriteString("\nWhat the errors say\n")
@@ -68,96 +70,101 @@ func (v *view) termCount() string {
 	return plural(k, "term", "terms")
 }
 
-// writeTerms writes the table of terms: on one line each if that fits, else in
-// two or more tables. It returns lines that give shortened names in full.
+// writeTerms writes the table of terms: on one line each if that fits, with
+// names cut shorter if need be, else in two or more tables. It returns lines
+// that give cut names in full.
 func (v *view) writeTerms(b *strings.Builder, width int) []string {
-	names, between, cut := v.termNames()
-	term := column{head: []string{"term"}, cells: names, left: true}
 	est := v.estimateColumns()
 	errs := v.errorColumns()
 	ends := v.intervalColumns()
-	flat := func(groups ...[]column) []column {
-		cols := []column{term}
+	join := func(groups ...[]column) []column {
+		var cols []column
 		for _, g := range groups {
 			cols = append(cols, g...)
 		}
 		return cols
 	}
-	var all []column
-	for _, e := range errs {
-		all = append(all, e...)
-	}
-	one := flat(est, all, ends)
-	if tableWidth(one) <= width {
-		writeTable(b, one, between)
-		return cut
+	fits := func(cols []column) bool { return tableWidth(cols) <= width }
+	rest := join(append([][]column{est}, append(errs[:len(errs):len(errs)], ends)...)...)
+	for size := termWidth; size >= shortTerm; size -= 4 {
+		n := v.termNames(size)
+		if cols := join(n.column(), rest); fits(cols) {
+			writeTable(b, cols, n.between)
+			return n.cut
+		}
 	}
 	// Too many kinds of errors for one line: as many beside each other as fit,
-	// then the intervals in a table of their own.
-	for len(errs) > 0 {
-		cols := flat(est, errs[0])
-		errs = errs[1:]
-		for len(errs) > 0 && tableWidth(append(cols[:len(cols):len(cols)], errs[0]...)) <= width {
-			cols = append(cols, errs[0]...)
-			errs = errs[1:]
-		}
-		writeTable(b, cols, between)
-		b.WriteByte('\n')
+	// the rest and the intervals in tables below.
+	n := v.termNames(termWidth)
+	for size := termWidth - 4; size >= shortTerm && !fits(join(n.column(), est, ends)); size -= 4 {
+		n = v.termNames(size)
 	}
-	writeTable(b, flat(est, ends), between)
-	return cut
+	groups := errs
+	if len(ends) > 0 {
+		groups = append(groups[:len(groups):len(groups)], ends)
+	}
+	for len(groups) > 0 {
+		cols := join(n.column(), est, groups[0])
+		groups = groups[1:]
+		for len(groups) > 0 && fits(join(cols, groups[0])) {
+			cols = join(cols, groups[0])
+			groups = groups[1:]
+		}
+		writeTable(b, cols, n.between)
+		if len(groups) > 0 {
+			b.WriteByte('\n')
+		}
+	}
+	return n.cut
 }
 
-// termNames gives the names as they stand in the table. Runs of levels of one
-// category stand indented under a line of their own.
-func (v *view) termNames() (names []string, between map[int]string, cut []string) {
-	between = map[int]string{}
+// termNames are the names as they stand in the table.
+type termNames struct {
+	names   []string
+	between map[int]string // lines before a run of levels
+	cut     []string       // what the cut names are in full
+}
+
+func (n termNames) column() []column {
+	return []column{{head: []string{"term"}, cells: n.names, left: true}}
+}
+
+// termNames cuts names to size. Runs of levels of one category stand indented
+// under a line of their own.
+func (v *view) termNames(size int) termNames {
+	n := termNames{between: map[int]string{}}
 	terms := v.res.Terms
 	for j := 0; j < len(terms); {
-		group, _, ok := splitLevel(terms[j])
+		first := splitLevel(terms[j])
 		end := j + 1
-		for ok && end < len(terms) {
-			g, _, same := splitLevel(terms[end])
-			if !same || g != group {
-				break
-			}
+		for first.level != "" && end < len(terms) && splitLevel(terms[end]).group == first.group {
 			end++
 		}
-		if !ok || end-j < 3 {
-			names = append(names, shorten(terms[j], termWidth))
-			if runes(oneLine(terms[j])) > termWidth {
-				cut = append(cut, names[len(names)-1]+" is "+oneLine(terms[j]))
+		if end-j < minGroup {
+			name := shorten(terms[j], size)
+			n.names = append(n.names, name)
+			if full := oneLine(terms[j]); name != full {
+				n.cut = append(n.cut, name+" is "+full)
 			}
 			j++
 			continue
 		}
-		line := oneLine(group)
-		if base, ok := v.res.BaseLevels[group]; ok {
-			line += fmt.Sprintf(", against %s", oneLine(base))
-		}
-		between[j] = line
+		n.between[j] = shorten(first.group, 60) + v.against(first.categories)
 		for ; j < end; j++ {
-			_, level, _ := splitLevel(terms[j])
-			names = append(names, "  "+shorten(level, termWidth-2))
+			n.names = append(n.names, "  "+shorten(splitLevel(terms[j]).level, size-2))
 		}
 	}
-	return names, between, cut
-}
-
-// splitLevel parts the name of an indicator, such as barge=b, into category and
-// level. A comparison such as tonnes == 3 is none.
-func splitLevel(term string) (group, level string, ok bool) {
-	i := strings.IndexByte(term, '=')
-	if i <= 0 || i+1 >= len(term) || term[i+1] == '=' || strings.IndexByte("=!<> ", term[i-1]) >= 0 {
-		return "", "", false
-	}
-	return term[:i], term[i+1:], true
+	return n
 }
 
 func (v *view) estimateColumns() []column {
 	cells := make([]string, len(v.res.Terms))
 	for j := range cells {
-		cells[j] = digits(at(v.res.Estimates, j), 5)
+		se := math.NaN()
+		if v.lead != nil {
+			se = at(v.lead.SE, j)
+		}
+		cells[j] = fine(at(v.res.Estimates, j), se, 2, 5)
 	}
 	cells = align(cells, numberWidth)
 	for j, t := range v.res.Terms {
@@ -220,9 +227,9 @@ func (v *view) intervalColumns() []column {
 		}
 		l, h := at(e.Low, j), at(e.High, j)
 		if math.IsNaN(l) || math.IsNaN(h) {
-			low[j], high[j] = none, none
+			low[j], high[j] = none, ""
 		} else {
-			low[j], high[j] = digits(l, 5), digits(h, 5)
+			low[j], high[j] = ends(l, h)
 			drawn[j] = strip(at(v.res.Estimates, j), l, h)
 		}
 		p[j] = none
@@ -235,6 +242,9 @@ func (v *view) intervalColumns() []column {
 	for j := range span {
 		if strings.TrimSpace(low[j]) != "" {
 			span[j] = low[j] + " to " + high[j]
+			if strings.TrimSpace(high[j]) == "" {
+				span[j] = low[j] + strings.Repeat(" ", runes(" to "+high[j]))
+			}
 		}
 	}
 	return []column{
@@ -244,7 +254,8 @@ func (v *view) intervalColumns() []column {
 	}
 }
 
-func (v *view) writeLegend(b *strings.Builder, width int) {
+// writeLegend explains the signs in the table, if there are any.
+func (v *view) writeLegend(b *strings.Builder, width int) bool {
 	var parts []string
 	if v.classical != nil {
 		for _, e := range v.shown {
@@ -257,9 +268,13 @@ func (v *view) writeLegend(b *strings.Builder, width int) {
 	if v.lead != nil {
 		parts = append(parts, "The strip draws the interval (-) and the estimate (o) against zero (|, or + inside the interval), each line on a scale of its own.")
 	}
+	if len(parts) == 0 {
+		return false
+	}
 	for _, l := range wrap(strings.Join(parts, " "), width) {
 		b.WriteString(l + "\n")
 	}
+	return true
 }
 
 // writeFooter writes rows, clusters, fit, run and warnings.
@@ -298,7 +313,7 @@ func (v *view) writeFooter(n notes) {
 			if e.Reason != nil {
 				why = *e.Reason
 			}
-			n.add("no "+shorten(e.Name(), 6), fmt.Sprintf("%s: %s", e.Name(), oneLine(why)))
+			n.add("not given", fmt.Sprintf("%s: %s", e.Name(), oneLine(why)))
 		}
 	}
 	for _, a := range r.Aliased {
@@ -310,6 +325,9 @@ func (v *view) writeFooter(n notes) {
 	}
 	n.add("run", runText(r))
 	for _, w := range r.Warnings {
+		if !v.tells(w) {
+			continue
+		}
 		n.add("warning", oneLine(w.Text))
 	}
 	if bases := v.otherBases(); bases != "" {
@@ -321,13 +339,11 @@ func (v *view) writeFooter(n notes) {
 func (v *view) otherBases() string {
 	counts := map[string]int{}
 	for _, t := range v.res.Terms {
-		if g, _, ok := splitLevel(t); ok {
-			counts[g]++
-		}
+		counts[splitLevel(t).group]++
 	}
 	var list []string
 	for c, base := range v.res.BaseLevels {
-		if counts[c] < 3 {
+		if counts[c] < minGroup {
 			list = append(list, fmt.Sprintf("%s against %s", oneLine(c), oneLine(base)))
 		}
 	}

@@ -9,7 +9,7 @@ import (
 // sampleResult is a result made up for the tests of what is printed; its
 // numbers come from no fit.
 func sampleResult() *vcov.Result {
-	terms := []string{"constant", "pallets", "tonnes", "crew", "wet", "night", "barge=b", "barge=c", "barge=d"}
+	terms := []string{"constant", "pallets", "tonnes", "crew", "wet", "night", "barge = b", "barge = c", "barge = d"}
 	est := []float64{14.2031, 1.50312, 0.0203, -0.81234, 3.1, 0.0551, 2.25, -0.4, 10.5}
 	classical := []float64{0.0119, 0.000913, 0.0098, 0.0121, 0.051, 0.02, 0.031, 0.033, 0.04}
 	r := &vcov.Result{

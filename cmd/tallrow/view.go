@@ -63,7 +63,26 @@ func (v *view) document() *vcov.Result {
 	for _, e := range v.shown {
 		r.Errors = append(r.Errors, *e)
 	}
+	r.Warnings = []vcov.Warning{}
+	for _, w := range v.res.Warnings {
+		if v.tells(w) {
+			r.Warnings = append(r.Warnings, w)
+		}
+	}
 	return &r
+}
+
+// tells reports whether a warning is about something that is shown.
+func (v *view) tells(w vcov.Warning) bool {
+	if w.Kind == nil {
+		return true
+	}
+	for _, e := range v.shown {
+		if sameName(e.Name(), *w.Kind) {
+			return true
+		}
+	}
+	return false
 }
 
 // ratio is how many times the classical error of term j the error e is; NaN
