@@ -42,11 +42,11 @@ func Terms() []string {
 }
 
 // Truth returns the true coefficients of the model of Outcome by Terms with a
-// constant, named as in the result of a fit: constant, pallets, barge=deck, ...
+// constant, named as in the result of a fit: constant, pallets, barge = deck, ...
 func Truth() map[string]float64 {
 	m := map[string]float64{"constant": trueConstant, "pallets": truePallets, "tonnes": trueTonnes, "crew": trueCrew, "wet": trueWet, "night": trueNight}
 	for i, b := range Barges()[1:] {
-		m["barge="+b] = trueBarge[i+1]
+		m["barge = "+b] = trueBarge[i+1]
 	}
 	return m
 }

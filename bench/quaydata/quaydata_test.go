@@ -190,7 +190,7 @@ func errorOf(b *stream.Batch, i int) (e float64, ok bool) {
 	if b.Cols[ColCrew].Null[i] || math.IsNaN(tonnes) {
 		return 0, false
 	}
-	return b.Cols[ColMinutes].F64[i] - truth["constant"] - truth["barge="+Barges()[b.Cols[ColBarge].Code[i]]] - truth["tonnes"]*tonnes -
+	return b.Cols[ColMinutes].F64[i] - truth["constant"] - truth["barge = "+Barges()[b.Cols[ColBarge].Code[i]]] - truth["tonnes"]*tonnes -
 		truth["pallets"]*float64(b.Cols[ColPallets].I64[i]) - truth["crew"]*float64(b.Cols[ColCrew].I64[i]) -
 		truth["wet"]*float64(b.Cols[ColWet].I64[i]) - truth["night"]*float64(b.Cols[ColNight].I64[i]), true
 }
