@@ -2,7 +2,9 @@ package main
 
 import (
 	"context"
+	"errors"
 	"fmt"
+	"io"
 	"os"
 	"path/filepath"
 	"runtime/debug"
@@ -173,6 +175,9 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		}
 	}
 	if err != nil {
+		if headOnly(ctx, src) {
+			err = fmt.Errorf("%s: there is a header and no row, want data rows", strings.Join(s.data, ", "))
+		}
 		src.Close()
 		return nil, err
 	}
@@ -183,6 +188,33 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
 	p.opts.ClusterMemory = s.memoryBound() / 16
 	return p, nil
+}
+
+// headOnly reports whether the input has columns but not one row. Their kinds
+// are then unknown, and what is said of them would mislead.
+func headOnly(ctx context.Context, src stream.Source) bool {
+	for _, c := range src.Schema().Columns {
+		if c.Kind != stream.Text {
+			return false
+		}
+	}
+	scan, err := src.Scan(ctx, []stream.Use{{Column: 0}})
+	if err != nil {
+		return false
+	}
+	defer scan.Close()
+	for {
+		seg, err := scan.Next(ctx)
+		if err != nil {
+			return errors.Is(err, io.EOF)
+		}
+		var b stream.Batch
+		err = seg.Read(&b)
+		seg.Close()
+		if !errors.Is(err, io.EOF) {
+			return false
+		}
+	}
 }
 
 // fit reads, solves and completes the result with what only the program knows.

@@ -3,12 +3,16 @@ package main
 import (
 	"bytes"
 	"context"
+	"encoding/hex"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"io"
+	"math"
 	"os"
 	"path/filepath"
 	"regexp"
+	"strconv"
 	"strings"
 	"syscall"
 	"testing"
@@ -59,6 +63,53 @@ func TestScripts(t *testing.T) {
 				if fmt.Sprint(got) != args[0] {
 					ts.Fatalf("exit status %d, want %s", got, args[0])
 				}
+			},
+			// near PATH WANT compares a number in the last output, a JSON document, to
+			// 1e-12 relative; PATH is such as errors.1.se.0.
+			"near": func(ts *testscript.TestScript, neg bool, args []string) {
+				if neg || len(args) != 2 {
+					ts.Fatalf("usage: near path want")
+				}
+				var doc any
+				ts.Check(json.Unmarshal([]byte(ts.ReadFile("stdout")), &doc))
+				for _, key := range strings.Split(args[0], ".") {
+					switch d := doc.(type) {
+					case map[string]any:
+						doc = d[key]
+					case []any:
+						i, err := strconv.Atoi(key)
+						ts.Check(err)
+						if i >= len(d) {
+							ts.Fatalf("%s: only %d elements", args[0], len(d))
+						}
+						doc = d[i]
+					}
+				}
+				if args[1] == "null" {
+					if doc != nil {
+						ts.Fatalf("%s is %v, want null", args[0], doc)
+					}
+					return
+				}
+				want, err := strconv.ParseFloat(args[1], 64)
+				ts.Check(err)
+				got, ok := doc.(float64)
+				if !ok || math.Abs(got-want) > 1e-12*math.Abs(want) {
+					ts.Fatalf("%s is %v, want %v", args[0], doc, want)
+				}
+			},
+			// bytes FILE HEX... writes a file that is no text.
+			"bytes": func(ts *testscript.TestScript, neg bool, args []string) {
+				if neg || len(args) < 2 {
+					ts.Fatalf("usage: bytes file hex...")
+				}
+				data, err := hex.DecodeString(strings.Join(args[1:], ""))
+				ts.Check(err)
+				ts.Check(os.WriteFile(ts.MkAbs(args[0]), data, 0o644))
+			},
+			// valid checks the last output against the schema of results.
+			"valid": func(ts *testscript.TestScript, neg bool, args []string) {
+				ts.Check(validate(t, compiledSchema(t), []byte(ts.ReadFile("stdout"))))
 			},
 			// steady FILE writes the last output without times and memory to FILE.
 			"steady": func(ts *testscript.TestScript, neg bool, args []string) {
