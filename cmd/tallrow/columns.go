@@ -201,6 +201,9 @@ func renderColumns(d *columnsDoc, p *profile, width int) string {
 			if f := float64(x); f == math.Trunc(f) && math.Abs(f) < 1<<53 {
 				return strconv.FormatInt(int64(f), 10)
 			}
+			if short := strconv.FormatFloat(float64(x), 'g', -1, 64); len(short) <= 10 {
+				return short
+			}
 			return digits(float64(x), 8)
 		}
 		return shorten(fmt.Sprint(x), 20)

@@ -206,9 +206,9 @@ func asks(f func(*app, context.Context) error) (restore func()) {
 
 // A panic becomes one line and exit 1.
 func TestPanic(t *testing.T) {
-	defer asks(func(*app, context.Context) error { var m map[string]int; m["x"] = 1; return nil })()
+	defer asks(func(*app, context.Context) error { panic("a\nb") })()
 	code, out, errw := try(context.Background(), nil, "ask")
-	if code != exitFailed || out != "" || strings.Count(errw, "\n") != 1 || !strings.Contains(errw, "internal error: assignment to entry in nil map") || strings.Contains(errw, "goroutine") {
+	if code != exitFailed || out != "" || strings.Count(errw, "\n") != 1 || !strings.Contains(errw, "internal error: a\\nb; ") || strings.Contains(errw, "goroutine") {
 		t.Errorf("status %d, stdout %q, stderr %q", code, out, errw)
 	}
 	t.Setenv("TALLROW_TRACE", "1")

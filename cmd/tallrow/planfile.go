@@ -2,7 +2,6 @@ package main
 
 import (
 	"encoding/json"
-	"fmt"
 	"io"
 	"os"
 	"reflect"
@@ -212,7 +211,7 @@ func difference[T any](a, b T) (what, then, now string) {
 		j2, err2 := json.Marshal(g)
 		if err1 != nil || err2 != nil || string(j1) != string(j2) {
 			name, _, _ := strings.Cut(x.Type().Field(i).Tag.Get("json"), ",")
-			return strings.ReplaceAll(name, "_", "-"), fmt.Sprintf("%s", j1), fmt.Sprintf("%s", j2)
+			return strings.ReplaceAll(name, "_", "-"), string(j1), string(j2)
 		}
 	}
 	return "", "", ""

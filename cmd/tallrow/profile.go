@@ -34,8 +34,9 @@ type columnProfile struct {
 	infinite int64
 	n        int64 // finite numbers
 	mean, m2 float64
-	fraction bool // a whole-number column with fractions
-	beyond   bool // a whole-number column read as float64 with values past 2^53
+	low      float64 // what mean lacks, so that an offset costs m2 no digits
+	fraction bool    // a whole-number column with fractions
+	beyond   bool    // a whole-number column read as float64 with values past 2^53
 
 	seen     bool
 	min, max stream.KeyValue
@@ -224,20 +225,27 @@ func (c *columnProfile) moments(x []float64) {
 		rest += d
 		m2 += float64(d * d)
 	}
-	mean := sum + rest/float64(len(x))
 	m2 -= rest * rest / float64(len(x))
-	c.combine(int64(len(x)), mean, max(m2, 0))
+	c.combine(int64(len(x)), sum, rest/float64(len(x)), max(m2, 0))
 }
 
 // combine merges means and sums of squared deviations: Chan, Golub, LeVeque
 // (1983), The American Statistician 37, doi:10.1080/00031305.1983.10483115.
-func (c *columnProfile) combine(n int64, mean, m2 float64) {
+// The other mean is mean + low.
+func (c *columnProfile) combine(n int64, mean, low, m2 float64) {
 	if n == 0 {
 		return
 	}
+	if c.n == 0 {
+		c.n, c.mean, c.low, c.m2 = n, mean, low, m2
+		return
+	}
 	total := float64(c.n + n)
-	d := mean - c.mean
-	c.mean += d * (float64(n) / total)
+	d := (mean - c.mean) + (low - c.low)
+	step := c.low + d*(float64(n)/total)
+	moved := c.mean + step
+	c.low = step - (moved - c.mean)
+	c.mean = moved
 	c.m2 += m2 + d*d*(float64(c.n)/total)*float64(n)
 	c.n += n
 }
@@ -249,7 +257,7 @@ func (c *columnProfile) merge(o *columnProfile) {
 	c.infinite += o.infinite
 	c.fraction = c.fraction || o.fraction
 	c.beyond = c.beyond || o.beyond
-	c.combine(o.n, o.mean, o.m2)
+	c.combine(o.n, o.mean, o.low, o.m2)
 	if o.seen {
 		o.min.Text, o.max.Text = strings.Clone(o.min.Text), strings.Clone(o.max.Text)
 		c.noteEnds(o.min)
