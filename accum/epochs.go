@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"io"
+	"slices"
 
 	"github.com/tallrow/tallrow/stream"
 )
@@ -23,6 +24,8 @@ type epoch struct {
 	freq     int64
 	rows     int64
 	nonzero  []int64
+	value    []float64
+	varied   []bool
 	tally    stream.Tally
 }
 
@@ -30,7 +33,7 @@ type epoch struct {
 func joinWorkers(ws []*firstWorker) *epoch {
 	w := ws[0]
 	e := &epoch{frame: w.frame, cats: w.cats, tups: w.tups, tables: w.tables, keys: w.keys, clusters: w.clusters,
-		lone: w.lone, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero}
+		lone: w.lone, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
 	for _, o := range ws[1:] {
 		w.gramX.merge(o.gramX)
@@ -61,7 +64,18 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		for j, n := range o.nonzero {
 			e.nonzero[j] += n
 		}
+		joinVaried(e.value, e.varied, o.value, o.varied)
 		e.tally.Add(&o.eval.Tally)
+	}
+	// A worker saw only its share of the clusters; the route must not show that.
+	var held int64
+	for k, t := range e.clusters {
+		if t != nil && !w.budget.dropped.Load() {
+			held += w.clusterBytes(k)
+		}
+	}
+	if held > w.budget.cluster {
+		w.budget.dropped.Store(true)
 	}
 	e.gram = make([]float64, len(w.gram))
 	w.gramX.values(e.gram)
@@ -70,6 +84,17 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		w.fourX.values(e.fourth)
 	}
 	return e
+}
+
+// joinVaried joins what is known of the nonzero cells of numeric terms: one of
+// them (0: there is none) and whether they differ.
+func joinVaried(value []float64, varied []bool, v []float64, d []bool) {
+	for j, x := range v {
+		if value[j] == 0 {
+			value[j] = x
+		}
+		varied[j] = varied[j] || d[j] || (x != 0 && x != value[j])
+	}
 }
 
 func joinKeys(dst, src *interner) []int32 {
@@ -151,7 +176,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 	ew := &epochWorker{shift: shift}
 	ew.firstWorker = newFirstWorker(l, newLoader(l, trivialFrame(l)), needs, b)
 	once := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
-	if err := p.run(ctx, []blockWorker{ew}, &begun{seg, false}, once); err != nil {
+	if err := p.run(ctx, []blockWorker{ew}, &begun{seg: seg}, once); err != nil {
 		return nil, err
 	}
 	tail := ew.eval.Tally // rows that were read but not used still count
@@ -177,19 +202,37 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 			ws[i] = newFirstWorker(l, newLoader(l, nil), needs, b)
 			bw[i] = ws[i]
 		}
-		// The first block of the epoch takes part in its frame.
+		// The first block of the epoch takes part in its frame. As long as no row was
+		// used, the frame waits for the first that is.
 		rows := previousRows(l, epochs)
+		waiting := !slices.ContainsFunc(epochs, func(e *epoch) bool { return e.rows > 0 })
 		ld := ws[0].loader
-		err = seg.Read(&ld.batch)
-		if err == nil {
-			err = ld.eval.Eval(&ld.batch, seg.Locate, &ld.block)
+		start := &begun{seg: seg}
+		for {
+			err = seg.Read(&ld.batch)
+			if err == nil {
+				err = ld.eval.Eval(&ld.batch, seg.Locate, &ld.block)
+			}
+			if err != nil {
+				break
+			}
+			if start.loaded = ld.block.Rows > 0 || !waiting; start.loaded {
+				rows.addBlock(&ld.block, l)
+				break
+			}
+			start.batches++
+			start.seen += int64(ld.batch.Rows)
+			p.meter.Rows.Add(int64(ld.batch.Rows))
+			if err = ctx.Err(); err != nil {
+				break
+			}
 		}
-		loaded := err == nil
-		if loaded {
-			rows.addBlock(&ld.block, l)
-		} else if !errors.Is(err, io.EOF) {
+		if err != nil && !errors.Is(err, io.EOF) {
 			seg.Close()
 			return nil, err
+		}
+		if waiting && !start.loaded {
+			size = 1 // still nothing to make a frame of
 		}
 		f := buildFrame(rows, l.p0, shift)
 		for _, w := range ws {
@@ -203,7 +246,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 			left--
 			return scan.Next(ctx)
 		}
-		if err := p.run(ctx, bw, &begun{seg, loaded}, next); err != nil {
+		if err := p.run(ctx, bw, start, next); err != nil {
 			return nil, err
 		}
 		epochs = append(epochs, joinWorkers(ws))

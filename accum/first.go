@@ -43,6 +43,8 @@ type firstWorker struct {
 	freq    int64
 	rows    int64
 	nonzero []int64
+	value   []float64 // a nonzero cell of each numeric term
+	varied  []bool    // its nonzero cells are not all equal
 }
 
 // budget watches the memory of the keyed tables of all workers.
@@ -87,6 +89,7 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker
 	}
 	w.zrow = make([]float64, p)
 	w.nonzero = make([]int64, l.p0)
+	w.value, w.varied = make([]float64, l.p0), make([]bool, l.p0)
 	return w
 }
 
@@ -105,13 +108,7 @@ func (w *firstWorker) add() error {
 	w.rows += int64(n)
 	kernel.Gram(w.gram, w.zs, stride, n, l.width)
 	for j := range l.p0 {
-		var nz int64
-		for _, x := range w.block.X[j][:n] {
-			if x != 0 {
-				nz++
-			}
-		}
-		w.nonzero[j] += nz
+		w.countNonzero(j)
 	}
 	if len(l.tables) > 0 {
 		for c, in := range w.cats {
@@ -149,6 +146,30 @@ func (w *firstWorker) add() error {
 		w.q.add(w.fourth, z, n)
 	}
 	return nil
+}
+
+// countNonzero counts nonzero cells of a term, frequencies as often as they say,
+// and notes whether they differ.
+func (w *firstWorker) countNonzero(j int) {
+	var nz int64
+	freq := w.root != nil && w.lay.design.Spec.WeightKind == stream.Frequency
+	value, varied := w.value[j], w.varied[j]
+	for r, x := range w.block.X[j][:w.block.Rows] {
+		if x == 0 {
+			continue
+		}
+		if value == 0 {
+			value = x
+		}
+		varied = varied || x != value
+		if freq {
+			nz += int64(w.block.Weight[r])
+		} else {
+			nz++
+		}
+	}
+	w.value[j], w.varied[j] = value, varied
+	w.nonzero[j] += nz
 }
 
 func (w *firstWorker) fourthRoots() []float64 {

@@ -3,12 +3,13 @@ package accum
 import "slices"
 
 // loneTracker remembers, for each numeric term, whether its nonzero cells lie in
-// one cluster only, and whether its zero cells do. Such a term's effect is
-// confounded with that cluster: the cluster's score is zero by construction and
-// the cluster error of the term means nothing.
+// one cluster only, and whether its zero cells do while all others are equal.
+// Such a term's effect is confounded with that cluster: the cluster's score is
+// zero by construction and the cluster error of the term means nothing.
 type loneTracker struct {
-	nonzero, zero []int32 // cluster id, none, or many
-	open          int     // entries that are not many
+	nonzero, zero []int32   // cluster id, none, or many
+	value         []float64 // a nonzero cell, if there is one
+	open          int       // entries that are not many
 }
 
 const (
@@ -17,7 +18,7 @@ const (
 )
 
 func newLoneTracker(terms int) *loneTracker {
-	t := &loneTracker{nonzero: make([]int32, terms), zero: make([]int32, terms), open: 2 * terms}
+	t := &loneTracker{nonzero: make([]int32, terms), zero: make([]int32, terms), value: make([]float64, terms), open: 2 * terms}
 	for i := range terms {
 		t.nonzero[i], t.zero[i] = none, none
 	}
@@ -33,12 +34,30 @@ func (t *loneTracker) add(ids []int32, x [][]float64) {
 			continue
 		}
 		for r, id := range ids {
-			p := &t.zero[j]
-			if x[j][r] != 0 {
-				p = &t.nonzero[j]
+			v := x[j][r]
+			if v == 0 {
+				t.see(&t.zero[j], id)
+				continue
 			}
-			t.see(p, id)
+			t.equal(j, v)
+			t.see(&t.nonzero[j], id)
 		}
+	}
+}
+
+// equal notes a nonzero cell: zero cells count only beside a single other value.
+func (t *loneTracker) equal(j int, v float64) {
+	if t.nonzero[j] == none {
+		t.value[j] = v
+	} else if v != t.value[j] {
+		t.close(&t.zero[j])
+	}
+}
+
+func (t *loneTracker) close(p *int32) {
+	if *p != many {
+		*p = many
+		t.open--
 	}
 }
 
@@ -47,8 +66,7 @@ func (t *loneTracker) see(p *int32, id int32) {
 	case *p == none:
 		*p = id
 	case *p >= 0 && *p != id:
-		*p = many
-		t.open--
+		t.close(p)
 	}
 }
 
@@ -57,22 +75,25 @@ func (t *loneTracker) mergeFrom(o *loneTracker, to []int32) {
 		switch {
 		case q >= 0:
 			t.see(p, to[q])
-		case q == many && *p != many:
-			*p = many
-			t.open--
+		case q == many:
+			t.close(p)
 		}
 	}
 	for j := range t.nonzero {
+		if o.nonzero[j] != none {
+			t.equal(j, o.value[j])
+		}
 		join(&t.nonzero[j], o.nonzero[j])
 		join(&t.zero[j], o.zero[j])
 	}
 }
 
-// lone reports the terms that a single cluster identifies.
-func (t *loneTracker) lone() []bool {
+// lone reports the terms that a single cluster identifies. Without a constant a
+// term whose zero cells lie in one cluster is as good as any other.
+func (t *loneTracker) lone(constant bool) []bool {
 	out := make([]bool, len(t.nonzero))
 	for j := range out {
-		out[j] = t.nonzero[j] >= 0 || t.zero[j] >= 0
+		out[j] = t.nonzero[j] >= 0 || (constant && t.zero[j] >= 0)
 	}
 	return out
 }

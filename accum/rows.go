@@ -193,9 +193,9 @@ func (p *pass) failed(segment int) bool {
 
 // run lets the workers take segments from next until io.EOF. Segments come in
 // order, so when one fails all lower ones are done or under way: those are
-// finished, and the error of the lowest segment is returned. With begun set the
+// finished, and the error of the lowest segment is returned. With start set the
 // first worker starts with that segment.
-func (p *pass) run(ctx context.Context, workers []blockWorker, begun *begun, next func(context.Context) (stream.Segment, error)) error {
+func (p *pass) run(ctx context.Context, workers []blockWorker, start *begun, next func(context.Context) (stream.Segment, error)) error {
 	g, ctx := errgroup.WithContext(ctx)
 	var nextMu sync.Mutex
 	done := false
@@ -223,9 +223,9 @@ func (p *pass) run(ctx context.Context, workers []blockWorker, begun *begun, nex
 			}()
 			for first := true; ; first = false {
 				var seg stream.Segment
-				loaded := false
-				if first && i == 0 && begun != nil {
-					seg, loaded = begun.seg, begun.loaded
+				var from begun
+				if first && i == 0 && start != nil {
+					seg, from = start.seg, *start
 				} else if seg, err = take(); errors.Is(err, io.EOF) {
 					return nil
 				} else if err != nil {
@@ -235,7 +235,7 @@ func (p *pass) run(ctx context.Context, workers []blockWorker, begun *begun, nex
 					p.fail(math.MaxInt-1, err)
 					return nil
 				}
-				if err := p.segment(ctx, w, seg, loaded); err != nil {
+				if err := p.segment(ctx, w, seg, from); err != nil {
 					if ctx.Err() != nil {
 						return ctx.Err()
 					}
@@ -250,23 +250,26 @@ func (p *pass) run(ctx context.Context, workers []blockWorker, begun *begun, nex
 	return p.err
 }
 
-// begun is a segment that was opened, and perhaps read one batch into.
+// begun is a segment that was opened and perhaps read into: some batches without
+// used rows, then one that the worker's block holds.
 type begun struct {
-	seg    stream.Segment
-	loaded bool
+	seg     stream.Segment
+	loaded  bool
+	batches int
+	seen    int64 // rows in those batches
 }
 
-// segment sums one segment. With loaded set the worker's block already holds
-// the first batch.
-func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, loaded bool) (err error) {
+// segment sums one segment, from where it was begun.
+func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, from begun) (err error) {
 	defer func() {
 		if cerr := seg.Close(); err == nil {
 			err = cerr
 		}
 	}()
 	ld := w.loading()
-	var seen, bytes int64
-	for b := 1; ; b++ {
+	var bytes int64
+	seen, loaded := from.seen, from.loaded
+	for b := from.batches + 1; ; b++ {
 		if err := ctx.Err(); err != nil {
 			return err
 		}

@@ -11,7 +11,8 @@ import (
 
 const (
 	sampleRows     = 4096 // used rows a frame wants
-	sampleSpots    = 16   // places it looks at in any case, if the input is long enough
+	sampleSpots    = 16   // places it looks at in a long input
+	sampleFew      = 5    // and in a short one, where each place may cost a page of every column
 	sampleMaxSpots = 256
 	sampleMin      = 64 // fewer used rows make epochs the better way
 )
@@ -24,28 +25,32 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) 
 	ld := newLoader(l, trivialFrame(l))
 	uses := l.design.Uses()
 	whole := false
-	for spot := 0; spot < sampleMaxSpots && (spot < sampleSpots || rows.rows() < sampleRows); spot++ {
+	segments := src.Info().Segments
+	spots := sampleSpots
+	if segments >= 0 {
+		spots = min(max(segments, sampleFew), sampleSpots)
+	}
+	batches := (sampleRows/stream.BatchRows + spots - 1) / spots
+	for spot := 0; spot < sampleMaxSpots && (spot < spots || rows.rows() < sampleRows); spot++ {
 		seg, err := src.Sample(ctx, uses, spread(spot))
 		if err != nil {
 			return nil, err
 		}
-		err = seg.Read(&ld.batch)
-		if err == nil {
+		for b := 0; b < batches && err == nil; b++ {
+			if err = seg.Read(&ld.batch); err != nil {
+				break
+			}
 			// A row that cannot be used is reported by the scan, with its place.
 			if ld.eval.Eval(&ld.batch, seg.Locate, &ld.block) == nil {
 				rows.addBlock(&ld.block, l)
-			}
-			if spot == 0 {
-				more := seg.Read(&ld.batch)
-				whole = errors.Is(more, io.EOF) && src.Info().Segments <= 1
 			}
 		}
 		seg.Close()
 		if err != nil && !errors.Is(err, io.EOF) {
 			return nil, err
 		}
-		if whole || (spot == 0 && errors.Is(err, io.EOF)) {
-			whole = true
+		if spot == 0 && err != nil && segments <= 1 {
+			whole = true // the end was reached from the start
 			break
 		}
 		if err := ctx.Err(); err != nil {

@@ -70,7 +70,7 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 		place[id] = int32(i)
 		sc.Keys = append(sc.Keys, all.key(id))
 	}
-	for j, b := range lone.lone() {
+	for j, b := range lone.lone(l.shifted()) {
 		sc.Lone[1+j] = b
 	}
 	gross := make([]float64, k)

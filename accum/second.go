@@ -113,7 +113,7 @@ type secondWorker struct {
 	keys   []*interner
 	scores []*keyTable
 	loneT  []*loneTracker
-	loneC  []*loneTracker // for the indicators
+	loneC  []*loneTracker // for the category columns, by raw value
 	kid    []int32
 
 	e, h, mult, t []float64
@@ -399,8 +399,10 @@ func (w *secondWorker) addScores(t *keyTable, lone *loneTracker) {
 		}
 		for g := range l.groups {
 			b := int(w.rowb[g][r])
-			lone.see(&lone.nonzero[b], id)
 			for p, c := range l.groups[g].parts {
+				if p == 0 || w.block.X[l.factors[c-l.p0-2]][r] != 0 {
+					lone.see(&lone.nonzero[b+p], id)
+				}
 				part[b+p] = math.FMA(m, w.z[c*stride+r], part[b+p])
 			}
 		}
@@ -603,15 +605,18 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 	}
 	for i, t := range w.scores {
 		see(t)
-		lone := w.loneT[i].lone()
+		lone := w.loneT[i].lone(s.lay.shifted())
 		cols := make([]bool, len(s.Columns))
 		for j, b := range lone {
 			cols[1+j] = b
 		}
 		for c := range s.Columns {
 			if s.Columns[c].Group >= 0 {
-				cols[c] = w.loneC[i].nonzero[c-s.Columns[c].Part] >= 0
+				cols[c] = w.loneC[i].nonzero[c] >= 0
 			}
+		}
+		if s.lay.shifted() {
+			s.loneBases(w.loneC[i].nonzero, cols)
 		}
 		out.Scores = append(out.Scores, sortScores(w.keys[i], t, cols))
 	}
@@ -619,6 +624,28 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 		return out, best, nil
 	}
 	return out, unit, nil
+}
+
+// loneBases marks indicators whose zero cells lie in a single cluster: all other
+// combinations of the group do. where holds the only cluster of each indicator.
+func (s *State) loneBases(where []int32, cols []bool) {
+	for gi := range s.Groups {
+		g := &s.Groups[gi]
+		count := map[int32]int{}
+		for i := range g.n {
+			count[where[g.first+i*len(g.Parts)]]++
+		}
+		for i := range g.n {
+			c := g.first + i*len(g.Parts)
+			own := where[c]
+			others := len(count)
+			if count[own] == 1 {
+				others--
+			}
+			among := count[many] > 1 || (count[many] == 1 && own != many)
+			cols[c] = cols[c] || (others == 1 && !among)
+		}
+	}
 }
 
 // outer returns W W' for the n x k matrix W.

@@ -37,7 +37,8 @@ type State struct {
 	Rows      int64   // used rows
 	Freq      int64   // sum of the weights, as whole numbers
 	Weight    float64 // sum of the weights, correctly rounded
-	NonZero   []int64 // used rows in which each numeric term is not zero
+	NonZero   []int64 // used rows (or frequencies) in which each numeric term is not zero
+	Varied    []bool  // whether its nonzero values differ
 	Segments  int64
 	Bytes     int64
 	// Fingerprint identifies the used cells of the input.
@@ -125,7 +126,8 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, b *budget) (s *
 		s.Problems = append(s.Problems, q.err)
 	}
 	var weight superSum
-	s.NonZero = make([]int64, l.p0)
+	s.NonZero, s.Varied = make([]int64, l.p0), make([]bool, l.p0)
+	value := make([]float64, l.p0)
 	for _, e := range epochs {
 		s.Tally.Add(&e.tally)
 		s.Rows += e.rows
@@ -134,6 +136,7 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, b *budget) (s *
 		for j, n := range e.nonzero {
 			s.NonZero[j] += n
 		}
+		joinVaried(value, s.Varied, e.value, e.varied)
 	}
 	s.Weight = weight.value()
 	if l.design.Spec.Weight == "" {
