@@ -385,6 +385,9 @@ func gap(t *testing.T, a, b *vcov.Result, names []string) float64 {
 		for i := range a.Estimates {
 			see(a.Estimates[i], b.Estimates[i], math.Max(math.Abs(float64(a.Estimates[i])), float64(e.SE[i])))
 			see(e.SE[i], f.SE[i], float64(e.SE[i]))
+			if e.P[i].Exists() != f.P[i].Exists() || e.Low[i].Exists() != f.Low[i].Exists() {
+				worst = math.Inf(1)
+			}
 			for j := range a.Estimates {
 				see(e.Covariance[i][j], f.Covariance[i][j], float64(e.SE[i]*e.SE[j]))
 			}
