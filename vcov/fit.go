@@ -286,7 +286,7 @@ func (f *fitter) loneTerms() []bool {
 		case u.term < 0:
 		case c.Group < 0:
 			n := s.NonZero[c.Dense-1]
-			out[j] = n == 1 || (n == s.Rows-1 && !s.Design.Spec.NoConstant)
+			out[j] = n == 1 || (n == x.n-1 && !s.Varied[c.Dense-1] && s.Shifted())
 		default:
 			out[j] = c.Rows == 1
 		}

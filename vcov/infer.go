@@ -18,6 +18,7 @@ type estimate struct {
 	joint func(w float64, q int) (f, df2 float64, ok bool, reason string)
 	noP   []bool // coefficients without t, p and interval
 	noSE  []bool // coefficients without an error at all
+	zero  []bool // coefficients whose error is zero but for rounding
 }
 
 // plainJoint is W/q on F(q, df).
@@ -32,13 +33,18 @@ func plainJoint(df float64) func(float64, int) (float64, float64, bool, string) 
 func (x *solution) infer(e *Errors, r *estimate, level float64, full bool) {
 	k := x.k()
 	v := x.covariance(r.v)
+	x.zeroErrors(r, v)
 	e.Status = "ok"
 	e.Factor = Number(r.factor)
 	crit := tail.TQuantileTail(1-level, r.df)
 	for j := range k {
 		se, df, t, p, lp, lo, hi := nan, nan, nan, nan, nan, nan, nan
 		if !math.IsNaN(x.est[j]) && !(r.noSE != nil && r.noSE[j]) {
-			se = math.Sqrt(max(0, v[j*k+j]))
+			if !r.zero[j] {
+				se = math.Sqrt(max(0, v[j*k+j]))
+			} else {
+				se = 0
+			}
 			df = r.df
 			if x.perfect {
 				se, lo, hi = 0, x.est[j], x.est[j]
@@ -74,6 +80,22 @@ func (x *solution) infer(e *Errors, r *estimate, level float64, full bool) {
 	}
 }
 
+// zeroShare is the square of 1e-10, about what rounding leaves of nothing.
+const zeroShare = 1e-20
+
+// zeroErrors marks coefficients whose variance in v is rounding: below zeroShare
+// of what residuals of equal spread would give. All rows (clusters) that bear on
+// such a coefficient have residual (score) zero.
+func (x *solution) zeroErrors(r *estimate, v []float64) {
+	k := x.k()
+	r.zero = make([]bool, k)
+	m := x.covariance(x.inverse)
+	s2 := x.rss / float64(max(1, x.df()))
+	for j := range k {
+		r.zero[j] = v[j*k+j] <= zeroShare*s2*m[j*k+j]
+	}
+}
+
 var nan = math.NaN()
 
 // overall tests that all kept terms but the constant are zero:
@@ -94,14 +116,16 @@ func (x *solution) overall(r *estimate) *Overall {
 		return nil
 	}
 	for j := range x.k() {
-		if (r.noP != nil && r.noP[j]) || (r.noSE != nil && r.noSE[j]) {
+		lone := (r.noP != nil && r.noP[j]) || (r.noSE != nil && r.noSE[j])
+		if lone || (r.zero[j] && !math.IsNaN(x.est[j]) && x.cols[j].term >= 0) {
 			return out
 		}
 	}
+	fit := x.onKept(x.full)
 	v := make([]float64, q*q)
 	g := make([]float64, q)
 	for i, p := range idx {
-		g[i] = x.full[p]
+		g[i] = fit[p]
 		for j, o := range idx {
 			v[i*q+j] = r.v[p*x.k()+o]
 		}

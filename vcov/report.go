@@ -117,6 +117,15 @@ func (f *fitter) warnings(r *Result) {
 			if !r.Estimates[j].Exists() || e.T[j].Exists() {
 				continue
 			}
+			if e.SE[j] == 0 {
+				what := "rows"
+				if len(e.Clusters) > 0 {
+					what = "clusters"
+				}
+				r.Warnings = append(r.Warnings, Warning{Code: "zero-error", Term: ptr(t), Kind: ptr(e.Name()),
+					Text: fmt.Sprintf("the %s that decide %s leave no residual; %s gives it the error 0, no p and no interval", what, t, e.Name())})
+				continue
+			}
 			what := "a single row"
 			if len(e.Clusters) > 0 {
 				what = "a single cluster"

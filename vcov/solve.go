@@ -161,6 +161,25 @@ func (x *solution) estimates() {
 	}
 }
 
+// onKept moves the part of a combination of columns that dropped ones carry to
+// the kept ones on which they depend.
+func (x *solution) onKept(full []float64) []float64 {
+	out := append([]float64(nil), full...)
+	k := x.k()
+	for _, a := range x.e.drop {
+		out[a] = 0
+		if x.e.d[a] == 0 || full[a] == 0 {
+			continue
+		}
+		col := make([]float64, k)
+		for i := range k {
+			col[i] = x.e.g[i*k+a]
+		}
+		axpy(full[a], x.e.solve(col), out)
+	}
+	return out
+}
+
 // aliases names each dropped column with the kept ones it depends on, and
 // changes W so that its part of the fit goes to those.
 func (x *solution) aliases() {
