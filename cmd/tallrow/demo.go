@@ -100,8 +100,12 @@ func (a *app) demo(ctx context.Context, d *demo) error {
 		return out.write([]byte(strings.Join(wrap(fmt.Sprintf(format, args...), min(out.width(), widest)), "\n") + "\n"))
 	}
 	cfg := data.Config()
-	if err := say("Made %s of invented unloading times (%d quays, %s cranes, %d days) in %.1f s: %s, %s.",
-		plural(data.Rows(), "row", "rows"), cfg.Quays, count(int64(cfg.Cranes)), cfg.Days, time.Since(start).Seconds(), oneLine(file), sizeText(size)); err != nil {
+	fate := " (removed at the end; --dir DIR keeps it)"
+	if stays {
+		fate = ""
+	}
+	if err := say("Made %s of invented unloading times (%d quays, %s cranes, %d days) in %.1f s: %s, %s%s.",
+		plural(data.Rows(), "row", "rows"), cfg.Quays, count(int64(cfg.Cranes)), cfg.Days, time.Since(start).Seconds(), oneLine(file), sizeText(size), fate); err != nil {
 		return err
 	}
 	s, err := demoSettings(file)
