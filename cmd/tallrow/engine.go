@@ -24,7 +24,7 @@ func formats() []stream.Format {
 }
 
 // baseBytes is what the program holds beside readers and sums.
-const baseBytes = 24 << 20
+const baseBytes = 16 << 20
 
 // open opens the data of s. The source must be closed.
 func (a *app) open(ctx context.Context, s *settings, o stream.Options) (stream.Source, error) {

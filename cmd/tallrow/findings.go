@@ -216,6 +216,9 @@ func heavyRows(v *view) []string {
 // clusterShape warns of few or very unequal clusters.
 func clusterShape(v *view) []string {
 	var list []string
+	if v.res.Residual.SD == 0 {
+		return nil // a perfect fit: errors are 0 under any clusters
+	}
 	seen := map[string]bool{}
 	for _, e := range v.shown {
 		name := strings.Join(e.Clusters, " and ")

@@ -16,6 +16,7 @@ const (
 	widest      = 160
 	termWidth   = 26 // of the term column
 	shortTerm   = 14 // to which it may shrink
+	maxWarnings = 12
 	numberWidth = 13 // up to which numbers are aligned at the point
 )
 
@@ -257,13 +258,8 @@ func (v *view) intervalColumns() []column {
 // writeLegend explains the signs in the table, if there are any.
 func (v *view) writeLegend(b *strings.Builder, width int) bool {
 	var parts []string
-	if v.classical != nil {
-		for _, e := range v.shown {
-			if e != v.classical && e.Status == "ok" {
-				parts = append(parts, "x1.50 after an error: so many times the classical one.")
-				break
-			}
-		}
+	if v.anyRatio() {
+		parts = append(parts, "x1.50 after an error: so many times the classical one.")
 	}
 	if v.lead != nil {
 		parts = append(parts, "The strip draws the interval (-) and the estimate (o) against zero (|, or + inside the interval), each line on a scale of its own.")
@@ -324,11 +320,18 @@ func (v *view) writeFooter(n notes) {
 		}
 	}
 	n.add("run", runText(r))
+	told := 0
 	for _, w := range r.Warnings {
-		if !v.tells(w) {
+		// What is aliased stands above already.
+		if !v.tells(w) || w.Code == "aliased" {
 			continue
 		}
-		n.add("warning", oneLine(w.Text))
+		if told++; told <= maxWarnings {
+			n.add("warning", oneLine(w.Text))
+		}
+	}
+	if told > maxWarnings {
+		n.add("", fmt.Sprintf("and %d more; --json has them all", told-maxWarnings))
 	}
 	if bases := v.otherBases(); bases != "" {
 		n.add("base", bases)

@@ -98,6 +98,17 @@ func (v *view) ratio(e *vcov.Errors, j int) float64 {
 	return a / c
 }
 
+func (v *view) anyRatio() bool {
+	for _, e := range v.shown {
+		for j := range v.res.Terms {
+			if !math.IsNaN(v.ratio(e, j)) {
+				return true
+			}
+		}
+	}
+	return false
+}
+
 // at reads a number that may not be there.
 func at(s []vcov.Number, j int) float64 {
 	if j >= len(s) || !s[j].Exists() {
