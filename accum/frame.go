@@ -134,9 +134,8 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 		qs = append(qs, qcol{-1, normalised(append([]float64(nil), r.one...), math.Sqrt(ss))})
 		lead = 1
 	}
-	kept := make([]int, 0, p0)      // columns that are not dependent
-	tri := make([]float64, p0*p0)   // tri[a*p0+b]: c_kept[b] on q of kept[a]
-	ratio := make([]float64, 0, p0) // R_jj / norm
+	kept := make([]int, 0, p0)    // columns that are not dependent
+	tri := make([]float64, p0*p0) // tri[a*p0+b]: c_kept[b] on q of kept[a]
 	for j := range p0 {
 		v := append([]float64(nil), c[j]...)
 		norm := math.Sqrt(dotp(v, v))
@@ -155,7 +154,6 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 		tri[b*p0+b] = d
 		qs = append(qs, qcol{j, normalised(v, d)})
 		kept = append(kept, j)
-		ratio = append(ratio, d/norm)
 	}
 	m := len(kept)
 	lever := make([]float64, n)

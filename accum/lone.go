@@ -1,7 +1,5 @@
 package accum
 
-import "slices"
-
 // loneTracker remembers, for each numeric term, whether its nonzero cells lie in
 // one cluster only, and whether its zero cells do while all others are equal.
 // Such a term's effect is confounded with that cluster: the cluster's score is
@@ -97,5 +95,3 @@ func (t *loneTracker) lone(constant bool) []bool {
 	}
 	return out
 }
-
-func anyTrue(s []bool) bool { return slices.Contains(s, true) }

@@ -6,7 +6,6 @@ import (
 	"fmt"
 	"math"
 	"slices"
-	"sync/atomic"
 
 	"github.com/tallrow/tallrow/accum/internal/kernel"
 	"github.com/tallrow/tallrow/stream"
@@ -95,7 +94,6 @@ type secondWorker struct {
 	state *State
 	pass  *RowPass
 	unit  int
-	over  *atomic.Bool
 	mem   int64
 
 	meats []*meat
@@ -124,12 +122,11 @@ type secondWorker struct {
 	maxLever             float64
 	loneRows, heavyCount int64
 	heavy                []HeavyRow
-	block_               int
 }
 
-func newSecondWorker(s *State, rp *RowPass, unit int, over *atomic.Bool, mem int64, quad []float64) *secondWorker {
+func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, quad []float64) *secondWorker {
 	l := s.lay
-	w := &secondWorker{loader: newLoader(l, s.Frame), state: s, pass: rp, unit: unit, over: over, mem: mem, quad: quad}
+	w := &secondWorker{loader: newLoader(l, s.Frame), state: s, pass: rp, unit: unit, mem: mem, quad: quad}
 	for range rp.Weights {
 		w.meats = append(w.meats, newMeat(l, l.p0+1, unit))
 	}
@@ -482,11 +479,10 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	if rp.Whitener != nil && len(s.Groups) > 0 {
 		quad = outer(rp.Whitener, len(s.Columns), rp.K)
 	}
-	var over atomic.Bool
 	ws := make([]*secondWorker, max(1, o.Workers))
 	bw := make([]blockWorker, len(ws))
 	for i := range ws {
-		ws[i] = newSecondWorker(s, &rp, unit, &over, o.Memory, quad)
+		ws[i] = newSecondWorker(s, &rp, unit, o.Memory, quad)
 		bw[i] = ws[i]
 	}
 	if err := p.run(ctx, bw, nil, scan.Next); err != nil {
