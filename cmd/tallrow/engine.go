@@ -52,16 +52,28 @@ func (s *settings) memoryBound() int64 {
 	return s.memory
 }
 
-// share divides the memory: as many workers as leave half of it to the sums,
-// and what the sums may take.
+// share divides the memory: as many workers as leave two thirds of it to the
+// sums, and what the sums may take.
 func (s *settings) share(info stream.Info) (workers int, sums int64) {
 	bound := s.memoryBound()
 	workers = s.workers
 	if info.WorkerBytes > 0 {
-		fit := max(1, (bound-baseBytes)/2/info.WorkerBytes)
+		fit := max(1, (bound-baseBytes)/3/info.WorkerBytes)
 		workers = int(min(int64(workers), fit))
 	}
 	return workers, max(bound-baseBytes-int64(workers)*info.WorkerBytes, 1<<20)
+}
+
+// clusterMemory bounds the clusters' second moments, beyond which the route is
+// another one. It must depend neither on workers nor, unless the user bounds
+// the memory, on the machine: the last bits would.
+func (s *settings) clusterMemory() int64 {
+	const usual = 128 << 20
+	bound := s.memoryBound()
+	if s.given("memory") {
+		return bound / 16
+	}
+	return min(usual, bound/4)
 }
 
 // isPipe reports whether data of that name can be read only once.
@@ -186,6 +198,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		Level:  s.level, Passes: s.passes, Meter: new(accum.Meter),
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
+	p.opts.ClusterMemory = s.clusterMemory()
 	p.opts.ClusterMemory = s.memoryBound() / 16
 	return p, nil
 }

@@ -209,16 +209,32 @@ func TestPeakBytes(t *testing.T) {
 	}
 }
 
-// Workers give way when their buffers would take more than half the memory.
+// Workers give way when their buffers would take more than a third of the memory.
 func TestShare(t *testing.T) {
 	s := given(t, "memory", "124MiB", "workers", "8")
-	s.memory = 100<<20 + baseBytes
+	s.memory = 150<<20 + baseBytes
 	workers, sums := s.share(stream.Info{WorkerBytes: 10 << 20})
-	if workers != 5 || sums != 50<<20 {
+	if workers != 5 || sums != 100<<20 {
 		t.Errorf("got %d workers and %d bytes for sums", workers, sums)
 	}
 	if workers, _ := s.share(stream.Info{WorkerBytes: 1 << 30}); workers != 1 {
 		t.Errorf("got %d workers, want at least one", workers)
+	}
+}
+
+// The route of clusters never hangs on workers, nor on the machine.
+func TestClusterMemory(t *testing.T) {
+	for _, workers := range []string{"1", "8"} {
+		s := given(t, "workers", workers, "memory", "160MiB")
+		if got := s.clusterMemory(); got != 10<<20 {
+			t.Errorf("%s workers: %d", workers, got)
+		}
+		s = given(t, "workers", workers)
+		for _, s.memory = range []int64{1 << 30, 1 << 40} {
+			if got := s.clusterMemory(); got != 128<<20 {
+				t.Errorf("%s workers, machine of %d: %d", workers, s.memory, got)
+			}
+		}
 	}
 }
 
