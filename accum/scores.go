@@ -20,6 +20,9 @@ type Scores struct {
 	// form a column's scores to what is left, as root mean squares. 1 for scores
 	// that were summed row by row.
 	Cancelled []float64
+	// Gross is the sum over clusters of the square of what was added up; nil for
+	// scores that were summed row by row.
+	Gross []float64
 }
 
 // sortScores turns a table of scores into Scores.
@@ -114,7 +117,7 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 			}
 		}
 	}
-	sc.Cancelled = make([]float64, k)
+	sc.Cancelled, sc.Gross = make([]float64, k), gross
 	for a := range k {
 		var net float64
 		for g := range order {

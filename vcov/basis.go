@@ -422,6 +422,21 @@ func (b *basis) projectVec(v, dst []float64) {
 	}
 }
 
+// projectVecAbs is projectVec with the absolute values of Q.
+func (b *basis) projectVecAbs(v, dst []float64) {
+	if b.sel != nil {
+		b.projectVec(v, dst)
+		return
+	}
+	clear(dst)
+	k := b.k()
+	for i := range len(b.state.Columns) {
+		for a, q := range b.q[i*k : (i+1)*k] {
+			dst[a] += math.Abs(q) * v[i]
+		}
+	}
+}
+
 // expand returns Q g as internal coordinates, P entries.
 func (b *basis) expand(g []float64) []float64 {
 	k, p := b.k(), len(b.state.Columns)

@@ -68,17 +68,33 @@ func groupRows(rows []int64) *Spread {
 	return &Spread{Min: r[0], Median: Number(m), Max: r[len(r)-1]}
 }
 
-// scoreLoss bounds the relative error of errors from scores that were formed from
-// second moments.
-func scoreLoss(sc *accum.Scores) float64 {
-	worst := 0.0
-	for _, c := range sc.Cancelled {
-		if c > 0 || math.IsNaN(c) {
-			worst = max(worst, math.Sqrt(c))
-		}
-	}
-	if math.IsNaN(worst) {
+// scoreLoss bounds the relative error of the errors in r where scores were formed
+// from second moments: eps times what was added up for each coefficient over what
+// is left.
+func (x *solution) scoreLoss(sc *accum.Scores, r *estimate) float64 {
+	if sc.Gross == nil {
 		return 0
+	}
+	k := x.k()
+	size := make([]float64, k)
+	root := make([]float64, sc.P)
+	for i, g := range sc.Gross {
+		root[i] = math.Sqrt(g)
+	}
+	x.projectVecAbs(root, size)
+	l := absolute(x.bread())
+	net := sandwich(x.wAlias, r.v, k)
+	floor := x.zeroVariance()
+	worst := 0.0
+	for j := range k {
+		if math.IsNaN(x.est[j]) {
+			continue
+		}
+		loss := dot(l[j*k:(j+1)*k], size) / math.Sqrt(max(net[j*k+j]/r.factor, floor[j]))
+		if !(loss >= 0) {
+			loss = math.Inf(1)
+		}
+		worst = max(worst, loss)
 	}
 	return 0x1p-53 * worst
 }

@@ -69,9 +69,19 @@ type elimination struct {
 }
 
 func eliminate(g []float64, k int, tol float64) *elimination {
+	return eliminateGross(g, nil, k, tol)
+}
+
+// noiseShare of what was added up to form a diagonal entry is rounding.
+const noiseShare = 1e-13
+
+// eliminateGross is eliminate for a matrix whose diagonal is what is left of sums
+// of size gross: what is down to rounding is no column of its own, however much of
+// it the columns before leave.
+func eliminateGross(g, gross []float64, k int, tol float64) *elimination {
 	e := &elimination{k: k, d: make([]float64, k), pivots: make([]float64, k), g: g}
 	for j := range k {
-		if x := g[j*k+j]; x > 0 {
+		if x := g[j*k+j]; x > 0 && (gross == nil || x > noiseShare*gross[j*k+j]) {
 			e.d[j] = math.Sqrt(x)
 		}
 	}
@@ -89,7 +99,7 @@ func eliminate(g []float64, k int, tol float64) *elimination {
 			s = math.FMA(-c[i], c[i], s)
 		}
 		e.pivots[j] = s
-		if !(s > tol) {
+		if !(s > tol) || (gross != nil && s*g[j*k+j] <= noiseShare*gross[j*k+j]) {
 			e.drop = append(e.drop, j)
 			continue
 		}

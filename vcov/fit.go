@@ -335,13 +335,14 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		x.unavailable(e, "the clusters' sums lost digits and the input can be read once only; use --passes 2")
 		return
 	}
-	if loss := scoreLoss(sc); loss > lossRefuse {
+	r := x.clusterRobust(k.Name, sc)
+	if loss := x.scoreLoss(sc, r); loss > lossRefuse {
 		x.unavailable(e, "the clusters' sums cancel (relative error up to %.1e); use --passes 2", loss)
 		return
 	} else if loss > lossLimit {
 		f.note("digits", "%s has about %d digits left: the clusters' sums cancel; --passes 2 keeps them", e.Name(), digits(loss))
 	}
-	x.infer(e, x.clusterRobust(k.Name, sc), f.o.Level, f.o.Covariance)
+	x.infer(e, r, f.o.Level, f.o.Covariance)
 }
 
 // IsInterrupted reports whether err comes from a cancelled context.

@@ -52,33 +52,54 @@ func (x *solution) hc(kind string, meat []float64) *estimate {
 // is left, for each coefficient.
 func (x *solution) cancellation(meat, gross []float64) float64 {
 	k := x.k()
-	abs := func(a []float64) []float64 {
-		out := make([]float64, len(a))
-		for i, v := range a {
-			out[i] = math.Abs(v)
-		}
-		return out
-	}
-	l := make([]float64, k*k) // W G^-1
-	for i := range k {
-		for j, w := range x.wAlias[i*k : (i+1)*k] {
-			axpy(w, x.inverse[j*k:(j+1)*k], l[i*k:(i+1)*k])
-		}
-	}
+	l := x.bread()
 	net := sandwich(l, x.project(meat), k)
-	all := sandwich(abs(l), x.projectAbs(gross), k)
+	all := sandwich(absolute(l), x.projectAbs(gross), k)
+	floor := x.zeroVariance()
 	worst := 0.0
 	for j := range k {
 		if math.IsNaN(x.est[j]) {
 			continue
 		}
-		r := all[j*k+j] / net[j*k+j]
+		r := all[j*k+j] / max(net[j*k+j], floor[j])
 		if !(r >= 0) {
 			r = math.Inf(1)
 		}
 		worst = max(worst, r)
 	}
 	return 0x1p-53 * worst
+}
+
+// bread is W G^-1: its rows map scores to coefficients, in units of v.
+func (x *solution) bread() []float64 {
+	k := x.k()
+	l := make([]float64, k*k)
+	for i := range k {
+		for j, w := range x.wAlias[i*k : (i+1)*k] {
+			axpy(w, x.inverse[j*k:(j+1)*k], l[i*k:(i+1)*k])
+		}
+	}
+	return l
+}
+
+// zeroVariance is, for each coefficient in units of v, the variance below which
+// an error counts as zero.
+func (x *solution) zeroVariance() []float64 {
+	k := x.k()
+	m := sandwich(x.wAlias, x.inverse, k)
+	out := make([]float64, k)
+	for j := range k {
+		out[j] = zeroShare * x.rss / float64(max(1, x.df())) * m[j*k+j]
+	}
+	return out
+}
+
+func absolute(a []float64) []float64 {
+	out := make([]float64, len(a))
+	for i, v := range a {
+		out[i] = math.Abs(v)
+	}
+	return out
 }
 
 // projectAbs is project with the absolute values of Q.

@@ -89,10 +89,9 @@ const zeroShare = 1e-20
 func (x *solution) zeroErrors(r *estimate, v []float64) {
 	k := x.k()
 	r.zero = make([]bool, k)
-	m := x.covariance(x.inverse)
-	s2 := x.rss / float64(max(1, x.df()))
-	for j := range k {
-		r.zero[j] = v[j*k+j] <= zeroShare*s2*m[j*k+j]
+	s2 := x.state.Frame.YInv * x.state.Frame.YInv
+	for j, z := range x.zeroVariance() {
+		r.zero[j] = v[j*k+j]*s2 <= z
 	}
 }
 

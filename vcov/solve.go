@@ -54,7 +54,11 @@ func solve(b *basis) *solution {
 	g := b.project(s.S)
 	c := make([]float64, k)
 	b.projectVec(s.S[p*n:p*n+p], c)
-	x.e = eliminate(g, k, aliasPivot)
+	var gross []float64
+	if b.sel == nil {
+		gross = b.projectAbs(absolute(s.S))
+	}
+	x.e = eliminateGross(g, gross, k, aliasPivot)
 	x.gamma = x.e.solve(c)
 	x.inverse = x.e.inverse()
 	x.svv = s.S[p*n+p]
@@ -68,7 +72,9 @@ func solve(b *basis) *solution {
 		x.theta[i] = -x.theta[i]
 	}
 	x.estimates()
-	if yy := x.outcomeSquares(false); x.rss <= perfectShare*perfectShare*yy {
+	// rss has an error of some eps svv: only what is below the limit with that error
+	// is known to be perfect.
+	if yy := x.outcomeSquares(false); x.rss+8*0x1p-52*x.svv <= perfectShare*perfectShare*yy {
 		x.perfect = true
 	}
 	return x
@@ -100,8 +106,24 @@ func (x *solution) outcomeSquares(centred bool) float64 {
 		}
 	}
 	one = dot(s.S[:n], a)
-	if centred {
-		q -= one * one / s.S[0]
+	if !centred {
+		return max(0, q)
+	}
+	if s.Shifted() {
+		return max(0, q-one*one/s.S[0])
+	}
+	// Without shifts the mean is large: take it out of the combination, not of the
+	// sum of squares. The constant is a combination t of the terms.
+	c := make([]float64, x.k())
+	x.projectVec(s.S[:p], c)
+	for i, t := range x.expand(x.e.solve(c)) {
+		a[i] -= one / s.S[0] * t
+	}
+	q = 0
+	for i := range n {
+		if a[i] != 0 {
+			q += a[i] * dot(s.S[i*n:(i+1)*n], a)
+		}
 	}
 	return max(0, q)
 }
@@ -352,7 +374,7 @@ func (x *solution) condition() float64 {
 // needsFrame reports whether the frame fits the whole data so badly that digits
 // are lost, and a pass in a frame made from all rows would save them.
 func (x *solution) needsFrame() bool {
-	if x.perfect || x.rss == 0 {
+	if x.perfect {
 		return false
 	}
 	return x.condition() > 1e3 || x.svv > 1e4*x.rss
