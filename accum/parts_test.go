@@ -3,6 +3,7 @@ package accum
 import (
 	"fmt"
 	"math"
+	"math/big"
 	"math/rand/v2"
 	"testing"
 
@@ -308,6 +309,51 @@ func TestSpread(t *testing.T) {
 	for i, w := range want {
 		if got := spread(i); got != w {
 			t.Errorf("place %d is %v, want %v", i, got, w)
+		}
+	}
+}
+
+// In an ill-conditioned frame u must be the linear map of x to the last digits:
+// against big.Float arithmetic of 200 bits.
+func TestWhitenCarefully(t *testing.T) {
+	tab := randomTable(512, 12, nil)
+	src := tab.source(512)
+	d := design(t, src, stream.Spec{Outcome: "y", Terms: []string{"x1", "x2", "x1 * x2"}})
+	l := newLayout(d)
+	f := trivialFrame(l)
+	rng := rand.New(rand.NewPCG(6, 6))
+	f.White, f.Cond = true, 1e9
+	f.T = make([]float64, 9)
+	for i := range 3 {
+		f.Shift[i] = 0.1 * rng.Float64()
+		for j := i; j < 3; j++ {
+			f.T[i*3+j] = 1e9 * rng.NormFloat64()
+		}
+	}
+	ld := newLoader(l, f)
+	seg, err := src.Sample(t.Context(), d.Uses(), 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer seg.Close()
+	if err := seg.Read(&ld.batch); err != nil {
+		t.Fatal(err)
+	}
+	if err := ld.eval.Eval(&ld.batch, seg.Locate, &ld.block); err != nil {
+		t.Fatal(err)
+	}
+	ld.load()
+	for r := range 512 {
+		for j := range 3 {
+			sum := new(big.Float).SetPrec(200)
+			for i := 0; i <= j; i++ {
+				c := new(big.Float).SetPrec(200).Sub(big.NewFloat(ld.block.X[i][r]), big.NewFloat(f.Shift[i]))
+				sum.Add(sum, c.Mul(c, big.NewFloat(f.T[i*3+j])))
+			}
+			want, _ := sum.Float64()
+			if got := ld.z[(1+j)*stride+r]; math.Abs(got-want) > 1e-15*math.Abs(want)+1e-15 {
+				t.Fatalf("row %d: u%d = %v, want %v", r, j, got, want)
+			}
 		}
 	}
 }

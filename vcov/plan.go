@@ -20,7 +20,7 @@ type Plan struct {
 	Segments   int        `json:"segments"` // -1: not known before the scan
 	Rows       int64      `json:"rows"`     // -1: not known
 	Bytes      int64      `json:"bytes"`    // -1: not known
-	Memory     int64      `json:"memory"`   // estimate, without clusters and levels
+	Memory     int64      `json:"memory"`   // estimate of readers and sums, without clusters and levels
 	Reasons    []string   `json:"reasons"`
 	Costs      []PassCost `json:"costs"` // of the work of one row, all passes
 	Terms      []string   `json:"terms"`
@@ -200,14 +200,15 @@ func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) 
 		p.PerLevel = int64(c) * 40
 	}
 	p.Route = strings.Join(route, ", ")
-	p.Memory = int64(o.Workers) * (info.WorkerBytes + 560*int64(c*(c+1)/2) + 2*8*stream.BatchRows*int64(c))
+	sums := int64(o.Workers) * (560*int64(c*(c+1)/2) + 2*8*stream.BatchRows*int64(c))
 	if p.needs.Fourth {
 		n := int64((c + 2) * (c + 1) * c * (c + 3) / 24)
-		p.Memory += int64(o.Workers) * n * (560 + 8)
+		sums += int64(o.Workers) * n * (560 + 8)
 	}
-	if p.Memory > o.Memory {
-		return nil, &accum.MemoryError{What: fmt.Sprintf("%d terms over %d workers", k, o.Workers), Need: p.Memory, Have: o.Memory}
+	if sums > o.Memory {
+		return nil, &accum.MemoryError{What: fmt.Sprintf("%d terms over %d workers", k, o.Workers), Need: sums, Have: o.Memory}
 	}
+	p.Memory = sums + int64(o.Workers)*info.WorkerBytes
 	var all float64
 	for _, c := range p.Costs {
 		all += c.Share
