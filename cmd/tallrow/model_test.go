@@ -36,6 +36,7 @@ decimal = "comma"
 null = ["-999", "a, b"]
 zone = "Europe/Rome"
 passes = 2
+arithmetic = "double"
 workers = 0x10
 memory = "1GiB"
 scratch = "/tmp"
@@ -100,7 +101,7 @@ func TestModelRefuses(t *testing.T) {
 	for _, c := range []struct{ text, want string }{
 		{"outcome = \"minutes\"\ntrems = \"a\"\n", `m.toml line 2: unknown key "trems"; did you mean terms?`},
 		{"\nlags = 3\n", "m.toml line 2: lags is not in this version"},
-		{"arithmetic = \"extended\"\n", "m.toml line 1: arithmetic is not in this version"},
+		{"arithmetic = \"extended\"\n", "m.toml line 1: arithmetic: extended arithmetic is not in this version, want auto or double"},
 		{"json = true\n", "m.toml line 1: json belongs on the command line: --json"},
 		{"data = \"a.csv\"\n", "m.toml line 1: data are named on the command line"},
 		{"level = \"high\"\n", `m.toml line 1: level: found the string "high", want a number`},

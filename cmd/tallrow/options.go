@@ -118,6 +118,9 @@ var options = []option{
 	{name: "passes", value: "auto|1|2", form: formPasses, group: "Resources", on: onModel, file: true, def: "auto",
 		help: "how often the data are read",
 		set:  setPasses},
+	{name: "arithmetic", value: "auto|double", group: "Resources", on: onModel, file: true, def: "auto",
+		help: "auto is double in this version",
+		set:  setArithmetic},
 	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onAll, file: true, def: "one for each processor",
 		help: "goroutines that read and sum; the result never depends on it",
 		set:  setWorkers},
@@ -148,7 +151,7 @@ var options = []option{
 // later names what is known and refused: it must never be ignored.
 var (
 	laterOptions = []string{"lags", "kernel", "period", "unit", "hypothesis", "draws", "seed", "keep", "checkpoint",
-		"hide-ids", "frame-from", "at", "sweep", "part", "arithmetic", "timings"}
+		"hide-ids", "frame-from", "at", "sweep", "part", "timings"}
 	laterKinds    = []string{"hc4", "hc4m", "hc5", "cr2", "cr3", "hac", "driscoll-kraay"}
 	laterCommands = []string{"digest", "pool", "launch"}
 )

@@ -119,6 +119,17 @@ func choose(dst func(*settings) *string, words ...string) func(*settings, value)
 	}
 }
 
+// setArithmetic takes what there is one of: the word is checked and needs no place.
+func setArithmetic(_ *settings, v value) error {
+	switch v.text() {
+	case "auto", "double":
+		return nil
+	case "extended":
+		return fmt.Errorf("extended arithmetic is not in this version, want auto or double")
+	}
+	return fmt.Errorf("found %q, want auto or double", v.text())
+}
+
 // alternatives gives "a, b or c".
 func alternatives(words []string) string {
 	if len(words) < 2 {
