@@ -51,6 +51,7 @@ const (
 	whitenAbove = 30.0  // sample condition above which terms are whitened
 	dependent   = 1e-11 // R_jj / norm at or below which a column depends on earlier ones
 	heavyRow    = 0.99  // leverage above which a row must not shape the frame
+	worthShift  = 8.0   // mean over spread up to which a factor is not shifted
 )
 
 func newFrameRows(nx int) *frameRows {
@@ -100,8 +101,14 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 	f.Sample = ss
 	c := make([][]float64, nx)
 	mean := make([]float64, nx)
+	constant := make([]bool, nx)
 	for j := range nx {
-		f.Shift[j], f.Inv[j], mean[j], c[j] = centre(r.one, r.x[j], ss, r.origin[j], shift)
+		f.Shift[j], f.Inv[j], mean[j], c[j], constant[j] = centre(r.one, r.x[j], ss, r.origin[j], shift)
+		// The shift of a factor costs the digits of levels with small values: it must
+		// save more.
+		if j >= p0 && !constant[j] && math.Abs(f.Shift[j])*f.Inv[j] <= worthShift {
+			f.Shift[j] = 0
+		}
 	}
 	if n == 0 || ss == 0 {
 		return f, nil
@@ -139,8 +146,8 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 	for j := range p0 {
 		v := append([]float64(nil), c[j]...)
 		norm := math.Sqrt(dotp(v, v))
-		if len(qs) >= n {
-			continue
+		if len(qs) >= n || constant[j] {
+			continue // what is left of a constant is rounding, not a direction
 		}
 		coef := make([]float64, len(qs))
 		d := add(v, coef)
@@ -244,13 +251,13 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 	return f, lever
 }
 
-// centre returns shift, scale, the shift before rounding, and the scaled centred
-// column.
-func centre(one, x []float64, ss, origin float64, shift bool) (m, inv, exact float64, c []float64) {
+// centre returns shift, scale, the shift before rounding, the scaled centred
+// column, and whether the column is constant as far as doubles can tell.
+func centre(one, x []float64, ss, origin float64, shift bool) (m, inv, exact float64, c []float64, constant bool) {
 	inv = 1
 	c = make([]float64, len(x))
 	if ss == 0 {
-		return 0, inv, 0, c
+		return 0, inv, 0, c, false
 	}
 	var mean float64
 	if shift {
@@ -269,7 +276,7 @@ func centre(one, x []float64, ss, origin float64, shift bool) (m, inv, exact flo
 	}
 	sd := math.Sqrt(s / ss)
 	abs := math.Abs(origin + mean)
-	if sd <= 0x1p-45*abs { // constant as far as doubles can tell
+	if constant = sd <= constantShare*abs; constant {
 		if shift {
 			// Take a value that occurs, so that c is exactly zero there.
 			m = origin + mean
@@ -298,8 +305,11 @@ func centre(one, x []float64, ss, origin float64, shift bool) (m, inv, exact flo
 	for i := range x {
 		c[i] = (x[i] - one[i]*d) * inv
 	}
-	return m, inv, exact, c
+	return m, inv, exact, c, constant
 }
+
+// constantShare of a column's size is the spread up to which it is constant.
+const constantShare = 0x1p-45
 
 // roundTo rounds m to a multiple of an eighth of the power of two below sd, so
 // that x - m is exact for most columns.

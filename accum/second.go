@@ -611,7 +611,7 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 				cols[c] = w.loneC[i].nonzero[c] >= 0
 			}
 		}
-		if s.lay.shifted() {
+		if !s.Design.Spec.NoConstant {
 			s.loneBases(w.loneC[i].nonzero, cols)
 		}
 		out.Scores = append(out.Scores, sortScores(w.keys[i], t, cols))

@@ -102,6 +102,18 @@ func (s *State) Carrier() int { return s.lay.carrier() }
 // Shifted reports whether numeric columns are shifted.
 func (s *State) Shifted() bool { return s.lay.shifted() }
 
+// Constant reports whether numeric term j has one value in all used rows, as far
+// as doubles can tell, so that it repeats the constant. False without shifts.
+func (s *State) Constant(j int) bool {
+	f := s.Frame
+	if !s.lay.shifted() || (f.White && f.T[j*f.Terms+j] != 1) {
+		return false
+	}
+	n := len(s.Columns) + 1
+	spread := math.Sqrt(s.S[(1+j)*(n+1)] / s.S[0])
+	return spread <= constantShare*math.Abs(f.Shift[j]*f.Inv[j])
+}
+
 // comboIndex finds the place of a combination of levels.
 type comboIndex struct {
 	keys [][]int32

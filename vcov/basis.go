@@ -334,6 +334,9 @@ func (b *basis) factor() {
 				} else if i == j {
 					t = 1
 				}
+				if s.Constant(i) {
+					continue // only its shift is left
+				}
 				v[1+i] += t / f.Inv[j]
 			}
 		default:
@@ -353,7 +356,9 @@ func (b *basis) factor() {
 		if d <= 1e-13*norm {
 			clear(v) // the column is in the span of earlier ones whatever the data
 			d = 1
-			r[a*k+a] = norm
+			if r[a*k+a] = norm; norm == 0 {
+				r[a*k+a] = 1
+			}
 		} else {
 			for i := range v {
 				v[i] /= d

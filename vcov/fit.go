@@ -17,6 +17,8 @@ const (
 	lossLimit = 1e-12
 	// lossRefuse: beyond it nothing is printed.
 	lossRefuse = 1e-6
+	// blurLimit: second moments that may have lost more are told of.
+	blurLimit = 1e-9
 	// loneShare of a coefficient's variance factor that one row may decide.
 	loneShare = 1e-9
 )
@@ -47,23 +49,25 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 }
 
 type fitter struct {
-	ctx    context.Context
-	src    stream.Source
-	d      *stream.Design
-	o      Options
-	plan   *Plan
-	scan   accum.Options
-	state  *accum.State
-	sol    *solution
-	sums   *accum.RowSums
-	kinds  []string // of sums.Meats
-	keys   []int    // of sums.Scores
-	fourth []float64
-	loss   float64 // of the fourth-moment errors
-	passes int
-	bytes  int64
-	warn   []Warning
-	route  string
+	ctx     context.Context
+	src     stream.Source
+	d       *stream.Design
+	o       Options
+	plan    *Plan
+	scan    accum.Options
+	state   *accum.State
+	sol     *solution
+	sums    *accum.RowSums
+	kinds   []string // of sums.Meats
+	keys    []int    // of sums.Scores
+	heavyOK bool     // rows of high leverage were summed one by one
+	fourth  []float64
+	loss    float64 // of the fourth-moment errors
+	rssLoss float64 // of the residual sum of squares
+	passes  int
+	bytes   int64
+	warn    []Warning
+	route   string
 }
 
 // first runs pass one, again in a better frame if the data ask for it.
@@ -85,9 +89,30 @@ func (f *fitter) first() error {
 		f.passes++
 		f.bytes += s.Bytes
 		f.warn = append(f.warn, Warning{Code: "frame-renewed", Text: "the first pass was repeated: the rows that set shift and scale did not stand for the whole input"})
-		return f.solve(s)
+		if err := f.solve(s); err != nil {
+			return err
+		}
+		f.sol.settle()
 	}
+	if len(s.Groups) > 0 || f.sol.rss == f.sol.svv {
+		f.sol.settle() // levels are no part of the frame
+	}
+	f.sumLoss()
 	return nil
+}
+
+// sumLoss says where the second moments themselves have lost digits.
+func (f *fitter) sumLoss() {
+	x := f.sol
+	if x.blur > blurLimit {
+		f.note("digits", "some terms are so close to combinations of others, or so small beside them, that estimates and errors may have only about %d digits", digits(x.blur))
+	}
+	if x.perfect || x.df() <= 0 {
+		return
+	}
+	if f.rssLoss = 0x1p-53 * x.svv / x.rss; f.rssLoss > lossLimit {
+		f.note("digits", "the residual sum of squares has about %d digits left: the rows that set shift and scale did not stand for the whole input, and it can be read once only", digits(f.rssLoss))
+	}
 }
 
 func (f *fitter) solve(s *accum.State) error {
@@ -191,6 +216,7 @@ func (f *fitter) heavy(rp accum.RowPass) error {
 		}
 	}
 	f.sums.Meats = sums.Meats
+	f.heavyOK = true
 	f.note("high-leverage", "%d rows have leverage above %.2f; they were summed once more, one by one, to keep digits", sums.HeavyRows, accum.HeavyAt)
 	return nil
 }
@@ -222,6 +248,10 @@ func (f *fitter) errorsFor(k Kind) Errors {
 	case k.Name == "classical":
 		if x.kind == stream.Sampling {
 			x.unavailable(&e, "classical errors have no meaning under sampling weights")
+			return e
+		}
+		if f.rssLoss > lossRefuse {
+			x.unavailable(&e, "the residual sum of squares cancels (relative error up to %.1e) and the input can be read once only; use --passes 2", f.rssLoss)
 			return e
 		}
 		x.infer(&e, x.classical(), f.o.Level, f.o.Covariance)
@@ -262,6 +292,9 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	r.noP = lone
 	if k.Name == "hc2" || k.Name == "hc3" {
 		r.noSE = lone
+		if loss := 0x1p-50 / (1 - f.sums.MaxLeverage); loss > lossLimit && !f.heavyOK {
+			f.note("digits", "%s has about %d digits left: %d rows have leverage above %.2f, the largest %.12f", k.Name, digits(loss), f.sums.HeavyRows, accum.HeavyAt, f.sums.MaxLeverage)
+		}
 	}
 	x.infer(e, r, f.o.Level, f.o.Covariance)
 }

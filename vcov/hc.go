@@ -88,8 +88,9 @@ func (x *solution) zeroVariance() []float64 {
 	k := x.k()
 	m := sandwich(x.wAlias, x.inverse, k)
 	out := make([]float64, k)
+	share := max(zeroShare, 100*x.blur*x.blur)
 	for j := range k {
-		out[j] = zeroShare * x.rss / float64(max(1, x.df())) * m[j*k+j]
+		out[j] = share * x.rss / float64(max(1, x.df())) * m[j*k+j]
 	}
 	return out
 }

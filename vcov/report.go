@@ -36,6 +36,7 @@ func (f *fitter) result() *Result {
 	if n, ok := weightNames[x.kind]; ok {
 		r.Weight.Kind = ptr(n)
 	}
+	r.Terms, r.Estimates = []string{}, []Number{}
 	for _, u := range x.cols {
 		r.Terms = append(r.Terms, u.label)
 	}

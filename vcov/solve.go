@@ -33,6 +33,7 @@ type solution struct {
 	theta   []float64 // P+1: residual direction, see accum.RowPass
 	rss     float64   // units 1/YInv^2
 	svv     float64
+	blur    float64 // bound of the relative error that forming and solving G costs
 	est     []float64
 	alias   []Alias
 	n       int64 // sum of frequencies, or rows
@@ -54,11 +55,23 @@ func solve(b *basis) *solution {
 	g := b.project(s.S)
 	c := make([]float64, k)
 	b.projectVec(s.S[p*n:p*n+p], c)
+	for a, u := range b.cols {
+		if col := &s.Columns[u.column]; col.Group < 0 && col.Dense > 0 && s.Constant(col.Dense-1) {
+			g[a*k+a] = 0 // nothing of its own beside the constant
+		}
+	}
 	var gross []float64
 	if b.sel == nil {
 		gross = b.projectAbs(absolute(s.S))
 	}
 	x.e = eliminateGross(g, gross, k, aliasPivot)
+	for _, j := range x.e.kept {
+		r := x.e.pivots[j]
+		if gross != nil {
+			r *= g[j*k+j] / gross[j*k+j]
+		}
+		x.blur = max(x.blur, 0x1p-53/r)
+	}
 	x.gamma = x.e.solve(c)
 	x.inverse = x.e.inverse()
 	x.svv = s.S[p*n+p]
@@ -74,9 +87,7 @@ func solve(b *basis) *solution {
 	x.estimates()
 	// rss has an error of some eps svv: only what is below the limit with that error
 	// is known to be perfect.
-	if yy := x.outcomeSquares(false); x.rss+8*0x1p-52*x.svv <= perfectShare*perfectShare*yy {
-		x.perfect = true
-	}
+	x.perfect = x.rss+8*0x1p-52*x.svv <= perfectShare*perfectShare*x.outcomeSquares(false)
 	return x
 }
 
@@ -119,7 +130,7 @@ func (x *solution) outcomeSquares(centred bool) float64 {
 	for i, t := range x.expand(x.e.solve(c)) {
 		a[i] -= one / s.S[0] * t
 	}
-	q = 0
+	q = (one / s.S[0]) * (one / s.S[0]) * x.besideConstant()
 	for i := range n {
 		if a[i] != 0 {
 			q += a[i] * dot(s.S[i*n:(i+1)*n], a)
@@ -134,10 +145,20 @@ func (x *solution) constantSpanned() bool {
 	if !s.Design.Spec.NoConstant || s.Carrier() >= 0 {
 		return true
 	}
-	n := len(s.Columns) + 1
+	return x.besideConstant() <= aliasPivot*s.S[0]
+}
+
+// besideConstant is the sum of squares that regressing the constant on the terms
+// leaves, 0 if that is rounding.
+func (x *solution) besideConstant() float64 {
+	s := x.state
 	c := make([]float64, x.k())
-	x.projectVec(s.S[:n-1], c)
-	return s.S[0]-dot(x.e.solve(c), c) <= aliasPivot*s.S[0]
+	x.projectVec(s.S[:len(s.Columns)], c)
+	r := s.S[0] - dot(x.e.solve(c), c)
+	if r <= noiseShare*s.S[0] {
+		return 0
+	}
+	return r
 }
 
 func (x *solution) estimates() {
@@ -369,6 +390,12 @@ func (x *solution) condition() float64 {
 		return math.Inf(1)
 	}
 	return math.Sqrt(v[m-1] / v[0])
+}
+
+// settle calls a fit perfect whose residuals are rounding of what is left of the
+// outcome in a frame that fits the data.
+func (x *solution) settle() {
+	x.perfect = x.perfect || x.rss <= 8*0x1p-52*x.svv
 }
 
 // needsFrame reports whether the frame fits the whole data so badly that digits
