@@ -86,12 +86,12 @@ func (t *loneTracker) mergeFrom(o *loneTracker, to []int32) {
 	}
 }
 
-// lone reports the terms that a single cluster identifies. Without a constant a
-// term whose zero cells lie in one cluster is as good as any other.
-func (t *loneTracker) lone(constant bool) []bool {
-	out := make([]bool, len(t.nonzero))
-	for j := range out {
-		out[j] = t.nonzero[j] >= 0 || (constant && t.zero[j] >= 0)
+// lone reports the terms whose nonzero cells lie in one cluster, and those that are
+// zero in one cluster only and have one value elsewhere.
+func (t *loneTracker) lone() (nonzero, zero []bool) {
+	nonzero, zero = make([]bool, len(t.nonzero)), make([]bool, len(t.nonzero))
+	for j := range nonzero {
+		nonzero[j], zero[j] = t.nonzero[j] >= 0, t.zero[j] >= 0
 	}
-	return out
+	return nonzero, zero
 }

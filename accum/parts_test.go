@@ -278,7 +278,14 @@ func TestLoneTracker(t *testing.T) {
 	x := [][]float64{{1, 0, 0, 2}, {0, 0, 3, 0}, {0, 3, 3, 0}, {5, 5, 5, 5}, {0, 2, 3, 0}}
 	a := newLoneTracker(5)
 	a.add([]int32{0, 1, 2, 0}, x)
-	got := a.lone(true)
+	all := func(t *loneTracker) []bool {
+		nonzero, zero := t.lone()
+		for j, z := range zero {
+			nonzero[j] = nonzero[j] || z
+		}
+		return nonzero
+	}
+	got := all(a)
 	// Nonzero only in cluster 0; only in 2; zero only in 0 and 3 elsewhere; never
 	// zero; zero only in 0, but a number like any other.
 	want := []bool{true, true, true, false, false}
@@ -287,19 +294,19 @@ func TestLoneTracker(t *testing.T) {
 			t.Errorf("term %d lone %v, want %v", j, got[j], want[j])
 		}
 	}
-	if got := a.lone(false); !got[0] || got[2] {
-		t.Errorf("without a constant %v, want term 0 and not term 2", got)
+	if got, _ := a.lone(); !got[0] || got[2] {
+		t.Errorf("nonzero in one cluster %v, want term 0 and not term 2", got)
 	}
 	b := newLoneTracker(5)
 	b.add([]int32{0}, [][]float64{{1}, {1}, {3}, {1}, {2}})
 	a.mergeFrom(b, []int32{9})
-	if got := a.lone(true); got[0] || got[1] || !got[2] || got[3] {
+	if got := all(a); got[0] || got[1] || !got[2] || got[3] {
 		t.Errorf("after the merge %v, want only term 2", got)
 	}
 	c := newLoneTracker(5)
 	c.add([]int32{4}, [][]float64{{1}, {1}, {4}, {1}, {2}})
 	a.mergeFrom(c, []int32{0, 1, 2, 3, 4})
-	if got := a.lone(true); got[2] {
+	if got := all(a); got[2] {
 		t.Error("term 2 is 3 and 4 outside its zero cells: no single cluster decides it")
 	}
 }

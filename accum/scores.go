@@ -14,8 +14,10 @@ type Scores struct {
 	S []float64
 	P int
 	// Lone tells for each internal column (numeric terms by their raw values)
-	// whether a single cluster holds all its nonzero, or all its zero cells.
-	Lone []bool
+	// whether all its nonzero cells lie in one cluster; LoneZero whether it is zero
+	// in one cluster only and has one value elsewhere, so that it and the constant
+	// together live in that cluster.
+	Lone, LoneZero []bool
 	// Cancelled bounds the digits lost: the largest ratio of what was added up to
 	// form a column's scores to what is left, as root mean squares. 1 for scores
 	// that were summed row by row.
@@ -26,9 +28,9 @@ type Scores struct {
 }
 
 // sortScores turns a table of scores into Scores.
-func sortScores(in *interner, t *keyTable, lone []bool) *Scores {
+func sortScores(in *interner, t *keyTable) *Scores {
 	order := keyOrder(in)
-	sc := &Scores{P: t.width, Lone: lone, S: make([]float64, len(order)*t.width)}
+	sc := &Scores{P: t.width, S: make([]float64, len(order)*t.width)}
 	for i, id := range order {
 		sc.Keys = append(sc.Keys, in.key(id))
 		sc.Rows = append(sc.Rows, t.rows[id])
@@ -68,14 +70,14 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 	}
 	order := keyOrder(all)
 	place := make([]int32, len(order))
-	sc := &Scores{P: k, S: make([]float64, len(order)*k), Rows: make([]int64, len(order)), Lone: make([]bool, k)}
+	sc := &Scores{P: k, S: make([]float64, len(order)*k), Rows: make([]int64, len(order)), Lone: make([]bool, k), LoneZero: make([]bool, k)}
 	for i, id := range order {
 		place[id] = int32(i)
 		sc.Keys = append(sc.Keys, all.key(id))
 	}
-	for j, b := range lone.lone(l.shifted()) {
-		sc.Lone[1+j] = b
-	}
+	nonzero, zero := lone.lone()
+	copy(sc.Lone[1:], nonzero)
+	copy(sc.LoneZero[1:], zero)
 	gross := make([]float64, k)
 	z := make([]float64, p*(p+1)/2)
 	vec, mag := make([]float64, k), make([]float64, k)

@@ -601,20 +601,18 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 	}
 	for i, t := range w.scores {
 		see(t)
-		lone := w.loneT[i].lone(s.lay.shifted())
-		cols := make([]bool, len(s.Columns))
-		for j, b := range lone {
-			cols[1+j] = b
-		}
+		sc := sortScores(w.keys[i], t)
+		sc.Lone, sc.LoneZero = make([]bool, len(s.Columns)), make([]bool, len(s.Columns))
+		nonzero, zero := w.loneT[i].lone()
+		copy(sc.Lone[1:], nonzero)
+		copy(sc.LoneZero[1:], zero)
 		for c := range s.Columns {
 			if s.Columns[c].Group >= 0 {
-				cols[c] = w.loneC[i].nonzero[c] >= 0
+				sc.Lone[c] = w.loneC[i].nonzero[c] >= 0
 			}
 		}
-		if !s.Design.Spec.NoConstant {
-			s.loneBases(w.loneC[i].nonzero, cols)
-		}
-		out.Scores = append(out.Scores, sortScores(w.keys[i], t, cols))
+		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
+		out.Scores = append(out.Scores, sc)
 	}
 	if need && unit == defaultUnit {
 		return out, best, nil

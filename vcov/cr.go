@@ -30,7 +30,7 @@ func (x *solution) clusterRobust(kind string, sc *accum.Scores) *estimate {
 	}
 	v := sandwich(x.inverse, meat, k)
 	gf, n := float64(g), float64(x.n)
-	r := &estimate{v: v, factor: 1, df: gf - 1}
+	r := &estimate{v: v, meat: meat, factor: 1, df: gf - 1}
 	if kind == "cr1" {
 		r.factor = gf / (gf - 1) * ((n - 1) / float64(x.df()))
 		for i := range v {
@@ -44,14 +44,60 @@ func (x *solution) clusterRobust(kind string, sc *accum.Scores) *estimate {
 		qf := float64(q)
 		return (gf - qf) / ((gf - 1) * qf) * w, gf - qf, gf > qf, "too few clusters"
 	}
-	// A term that a single cluster identifies: its score is zero by construction.
-	r.noP = make([]bool, k)
-	for j, u := range x.cols {
-		if u.term >= 0 && u.column < len(sc.Lone) && sc.Lone[u.column] {
-			r.noP[j] = true
+	r.noP = x.loneClusters(sc)
+	return r
+}
+
+// loneClusters marks the coefficients of each direction of the terms that lives in
+// one cluster, whose score in that direction is zero by construction: a term that
+// is nonzero in one cluster only; with the constant, a term that is zero in one
+// cluster only and has one value elsewhere, or a category whose base level occurs
+// in one cluster only.
+func (x *solution) loneClusters(sc *accum.Scores) []bool {
+	s := x.state
+	out := make([]bool, x.k())
+	carry := map[int]bool{}
+	if s.Shifted() {
+		for _, c := range x.carriers() {
+			carry[c] = true
 		}
 	}
-	return r
+	withConstant := func() {
+		for j, u := range x.cols {
+			out[j] = out[j] || carry[u.column]
+		}
+	}
+	used := map[int]bool{}
+	for _, u := range x.cols {
+		used[u.column] = true
+	}
+	for j, u := range x.cols {
+		switch {
+		case u.term < 0:
+		case sc.Lone[u.column]:
+			out[j] = true
+		case sc.LoneZero[u.column] && len(carry) > 0:
+			out[j] = true
+			withConstant()
+		}
+	}
+	for t := range s.Design.Terms {
+		term := &s.Design.Terms[t]
+		if len(term.Categories) != 1 || term.Dense >= 0 || len(carry) == 0 {
+			continue
+		}
+		gi := s.Group(term.Categories)
+		for c := range s.Columns {
+			col := &s.Columns[c]
+			if col.Group == gi && col.Part == 0 && !used[c] && sc.Lone[c] {
+				withConstant()
+				for j, u := range x.cols {
+					out[j] = out[j] || u.term == t
+				}
+			}
+		}
+	}
+	return out
 }
 
 // groupRows describes the sizes of clusters.

@@ -35,7 +35,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	if err != nil {
 		return nil, err
 	}
-	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p,
+	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
 		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter}}
 	if err := f.first(); err != nil {
 		return nil, err
@@ -67,6 +67,7 @@ type fitter struct {
 	passes  int
 	bytes   int64
 	warn    []Warning
+	told    map[string]bool // kinds and terms of warnings that errors were left out
 	route   string
 }
 
@@ -141,12 +142,12 @@ func (f *fitter) second() error {
 		gross, _ := s.Fourth(x.theta, true)
 		f.loss = x.cancellation(f.fourth, gross)
 		if f.loss > lossLimit {
-			if f.src.Info().Rewindable {
+			if f.src.Info().Rewindable && f.o.Passes != 1 {
 				rows = true
 				f.fourth = nil
 				f.note("second-pass", "fourth moments lost digits (relative error up to %.1e); a second pass was made", f.loss)
 			} else {
-				f.note("digits", "hc0 and hc1 have about %d digits left: fourth moments cancel, and the input can be read once only", digits(f.loss))
+				f.note("digits", "hc0 and hc1 have about %d digits left: fourth moments cancel; a second pass would keep them", digits(f.loss))
 			}
 		}
 	}
@@ -297,6 +298,19 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 		}
 	}
 	x.infer(e, r, f.o.Level, f.o.Covariance)
+	f.tellLost(e, r)
+}
+
+// tellLost says which errors are left out because they cancelled.
+func (f *fitter) tellLost(e *Errors, r *estimate) {
+	for j, lost := range r.lost {
+		if lost && !math.IsNaN(f.sol.est[j]) {
+			term := f.sol.cols[j].label
+			f.told[e.Name()+"\x00"+term] = true
+			f.warn = append(f.warn, Warning{Code: "digits", Term: ptr(term), Kind: ptr(e.Name()),
+				Text: fmt.Sprintf("what forms %s of %s cancels to less than rounding; it is left out", e.Name(), term)})
+		}
+	}
 }
 
 // loneTerms marks coefficients that a single row decides.
@@ -313,15 +327,20 @@ func (f *fitter) loneTerms() []bool {
 		return out
 	}
 	any := false
+	// One pass has no categories: every column but the constant is a numeric term.
 	for j, u := range x.cols {
-		c := &s.Columns[u.column]
-		switch {
-		case u.term < 0:
-		case c.Group < 0:
-			n := s.NonZero[c.Dense-1]
-			out[j] = n == 1 || (n == x.n-1 && !s.Varied[c.Dense-1] && s.Shifted())
-		default:
-			out[j] = c.Rows == 1
+		if u.term < 0 {
+			continue
+		}
+		dense := s.Columns[u.column].Dense - 1
+		switch n := s.NonZero[dense]; {
+		case n == 1:
+			out[j] = true
+		case n == x.n-1 && !s.Varied[dense] && s.Shifted():
+			out[j] = true
+			for i, c := range x.cols { // the constant is the fit of that row
+				out[i] = out[i] || c.term < 0
+			}
 		}
 		any = any || out[j]
 	}
@@ -376,6 +395,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		f.note("digits", "%s has about %d digits left: the clusters' sums cancel; --passes 2 keeps them", e.Name(), digits(loss))
 	}
 	x.infer(e, r, f.o.Level, f.o.Covariance)
+	f.tellLost(e, r)
 }
 
 // IsInterrupted reports whether err comes from a cancelled context.

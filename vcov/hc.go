@@ -36,8 +36,9 @@ var hcWeight = map[string]func(gap float64) float64{
 // hc returns the estimate from a meat over internal columns.
 func (x *solution) hc(kind string, meat []float64) *estimate {
 	df := float64(x.df())
-	v := sandwich(x.inverse, x.project(meat), x.k())
-	r := &estimate{v: v, factor: 1, df: df, joint: plainJoint(df)}
+	m := x.project(meat)
+	v := sandwich(x.inverse, m, x.k())
+	r := &estimate{v: v, meat: m, factor: 1, df: df, joint: plainJoint(df)}
 	if kind == "hc1" {
 		r.factor = float64(x.n) / df
 		for i := range v {

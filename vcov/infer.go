@@ -11,6 +11,7 @@ import (
 // coordinates g and how to read it.
 type estimate struct {
 	v      []float64 // K x K, covariance of g, units of v
+	meat   []float64 // K x K, v = factor G^-1 meat G^-1; nil if v is not made so
 	factor float64
 	df     float64 // of t
 	// joint gives F and its second df from the Wald statistic of q restrictions;
@@ -19,6 +20,7 @@ type estimate struct {
 	noP   []bool // coefficients without t, p and interval
 	noSE  []bool // coefficients without an error at all
 	zero  []bool // coefficients whose error is zero but for rounding
+	lost  []bool // those of noSE that have no digits left
 }
 
 // plainJoint is W/q on F(q, df).
@@ -83,14 +85,34 @@ func (x *solution) infer(e *Errors, r *estimate, level float64, full bool) {
 // zeroShare is the square of 1e-10, about what rounding leaves of nothing.
 const zeroShare = 1e-20
 
-// zeroErrors marks coefficients whose variance in v is rounding: below zeroShare
-// of what residuals of equal spread would give. All rows (clusters) that bear on
+// zeroErrors marks coefficients whose variance in v is rounding: of what was added
+// up to form it, or below zeroShare of what residuals of equal spread would give.
+// All rows (clusters) that bear on
 // such a coefficient have residual (score) zero.
 func (x *solution) zeroErrors(r *estimate, v []float64) {
 	k := x.k()
 	r.zero = make([]bool, k)
 	s2 := x.state.Frame.YInv * x.state.Frame.YInv
-	for j, z := range x.zeroVariance() {
+	floor := x.zeroVariance()
+	if r.meat != nil {
+		gross := sandwich(absolute(x.bread()), absolute(r.meat), k)
+		for j := range k {
+			noise := 64 * 0x1p-52 * r.factor * gross[j*k+j]
+			if noise > 1e-8/zeroShare*floor[j] && v[j*k+j]*s2 <= noise {
+				// Rounding could hide an error of a size that matters.
+				if r.noSE == nil {
+					r.noSE = make([]bool, k)
+				}
+				if r.lost == nil {
+					r.lost = make([]bool, k)
+				}
+				r.lost[j] = !r.noSE[j]
+				r.noSE[j] = true
+			}
+			floor[j] = max(floor[j], noise)
+		}
+	}
+	for j, z := range floor {
 		r.zero[j] = v[j*k+j]*s2 <= z
 	}
 }
