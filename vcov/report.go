@@ -115,7 +115,7 @@ func (f *fitter) warnings(r *Result) {
 			continue
 		}
 		for j, t := range r.Terms {
-			if !r.Estimates[j].Exists() || e.T[j].Exists() {
+			if !r.Estimates[j].Exists() || e.T[j].Exists() || f.told[e.Name()+"\x00"+t] {
 				continue
 			}
 			if e.SE[j] == 0 {
