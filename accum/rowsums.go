@@ -1,0 +1,193 @@
+package accum
+
+import (
+	"errors"
+	"fmt"
+	"slices"
+)
+
+// RowSums is what pass two leaves.
+type RowSums struct {
+	// Meats are (P+1) x (P+1) matrices of which the last row and column are
+	// unused, one for each of RowPass.Weights.
+	Meats  [][]float64
+	Scores []*Scores
+	// MaxLeverage is the largest leverage that is not 1.
+	MaxLeverage float64
+	// LoneRows counts rows of leverage 1; LoneGram is the sum of their w z z',
+	// (P+1) x (P+1), nil if there are none.
+	LoneRows int64
+	LoneGram []float64
+	// HeavyRows counts rows with HeavyAt < h < 1.
+	HeavyRows int64
+	// Heavy and Light are filled under RowPass.Heavy: root-weighted rows (P+1
+	// entries, v last) in segment order, and the second moments of all others.
+	Heavy []HeavyRow
+	Light []float64
+	Bytes int64
+}
+
+// HeavyRow is a row of high leverage, times the root of its weight.
+type HeavyRow struct {
+	Z      []float64
+	Weight float64
+	// segment and at order the rows.
+	segment, at int
+}
+
+func (s *State) unchanged(p *pass) error {
+	if len(p.checks) != len(s.checks) {
+		return &ChangedError{fmt.Sprintf("%d segments, then %d", len(s.checks), len(p.checks))}
+	}
+	for n, c := range s.checks {
+		if q, ok := p.checks[n]; !ok || q != c {
+			return &ChangedError{fmt.Sprintf("segment %d holds other values", n)}
+		}
+	}
+	return nil
+}
+
+func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (*RowSums, int, error) {
+	w := ws[0]
+	for _, o := range ws[1:] {
+		cat := make([][]int32, len(o.cats))
+		for c, in := range o.cats {
+			cat[c] = joinKeys(w.cats[c], in)
+		}
+		to := make([][]int32, len(o.tups))
+		for i := range o.tups {
+			n := 0
+			for _, m := range o.allMeats() {
+				n = max(n, len(m.tables[i].rows))
+			}
+			to[i] = joinTuples(w.tups[i], o.tups[i], s.lay.tables[i].cats, cat, n)
+		}
+		mine := w.allMeats()
+		for k, m := range o.allMeats() {
+			if !m.used {
+				continue
+			}
+			mine[k].used = true
+			mine[k].gramX.merge(m.gramX)
+			for i, t := range m.tables {
+				mine[k].tables[i].mergeFrom(t, func(id int32) int32 { return to[i][id] })
+			}
+		}
+		for i, t := range o.scores {
+			kto := joinKeys(w.keys[i], o.keys[i])
+			w.scores[i].mergeFrom(t, func(id int32) int32 { return kto[id] })
+			w.loneT[i].mergeFrom(o.loneT[i], kto)
+			w.loneC[i].mergeFrom(o.loneC[i], kto)
+		}
+		w.maxLever = max(w.maxLever, o.maxLever)
+		w.loneRows += o.loneRows
+		w.heavyCount += o.heavyCount
+		w.heavy = append(w.heavy, o.heavy...)
+	}
+	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Bytes: p.bytes}
+	// Meats are judged by the unit's range; scores by their digits too.
+	need, best := false, -1074
+	see := func(t *keyTable) {
+		over, _ := t.fits(0)
+		need = need || over
+		best = max(best, t.betterUnit())
+	}
+	tups := w.tups
+	full := func(m *meat, cols int) []float64 {
+		n := len(s.Columns) + 1
+		out := make([]float64, n*n)
+		gram := make([]float64, len(m.gram))
+		m.gramX.values(gram)
+		at := s.denseAt()[:cols]
+		for j := range cols {
+			for i := 0; i <= j; i++ {
+				x := gram[j*(j+1)/2+i]
+				out[at[i]*n+at[j]], out[at[j]*n+at[i]] = x, x
+			}
+		}
+		for ti, t := range m.tables {
+			see(t)
+			vals := make([]float64, t.width)
+			for id := range t.rows {
+				for j, f := range t.fix(int32(id)) {
+					vals[j] = f.float(t.unit)
+				}
+				e := &epoch{cats: w.cats, tups: tups}
+				s.placeTable(out, ti, s.combo(e, ti, int32(id)), vals)
+			}
+		}
+		return out
+	}
+	for _, m := range w.meats {
+		out.Meats = append(out.Meats, full(m, s.lay.p0+1))
+	}
+	if w.lone.used {
+		out.LoneGram = full(w.lone, s.lay.p0+1)
+	}
+	if rp.Heavy {
+		if len(w.heavy) > maxHeavy {
+			return nil, 0, errors.New("accum: too many rows of high leverage to treat one by one")
+		}
+		out.Light = full(w.light, s.lay.p0+2)
+		slices.SortFunc(w.heavy, func(a, b HeavyRow) int {
+			if a.segment != b.segment {
+				return a.segment - b.segment
+			}
+			return a.at - b.at
+		})
+		out.Heavy = w.heavy
+	}
+	for i, t := range w.scores {
+		see(t)
+		sc := sortScores(w.keys[i], t)
+		sc.Lone, sc.LoneZero = make([]bool, len(s.Columns)), make([]bool, len(s.Columns))
+		nonzero, zero := w.loneT[i].lone()
+		copy(sc.Lone[1:], nonzero)
+		copy(sc.LoneZero[1:], zero)
+		for c := range s.Columns {
+			if s.Columns[c].Group >= 0 {
+				sc.Lone[c] = w.loneC[i].nonzero[c] >= 0
+			}
+		}
+		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
+		out.Scores = append(out.Scores, sc)
+	}
+	if need && unit == defaultUnit {
+		return out, best, nil
+	}
+	return out, unit, nil
+}
+
+// loneBases marks indicators whose zero cells lie in a single cluster: all other
+// combinations of the group do. where holds the only cluster of each indicator.
+func (s *State) loneBases(where []int32, cols []bool) {
+	for gi := range s.Groups {
+		g := &s.Groups[gi]
+		count := map[int32]int{}
+		for i := range g.n {
+			count[where[g.first+i*len(g.Parts)]]++
+		}
+		for i := range g.n {
+			c := g.first + i*len(g.Parts)
+			own := where[c]
+			others := len(count)
+			if count[own] == 1 {
+				others--
+			}
+			among := count[many] > 1 || (count[many] == 1 && own != many)
+			cols[c] = cols[c] || (others == 1 && !among)
+		}
+	}
+}
+
+// outer returns W W' for the n x k matrix W.
+func outer(w []float64, n, k int) []float64 {
+	out := make([]float64, n*n)
+	for i := range n {
+		for j := 0; j <= i; j++ {
+			x := dotp(w[i*k:(i+1)*k], w[j*k:(j+1)*k])
+			out[i*n+j], out[j*n+i] = x, x
+		}
+	}
+	return out
+}
