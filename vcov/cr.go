@@ -130,13 +130,19 @@ func (x *solution) scoreLoss(sc *accum.Scores, r *estimate) float64 {
 	x.projectVecAbs(root, size)
 	l := absolute(x.bread())
 	net := sandwich(x.wAlias, r.v, k)
+	r.noise = make([]float64, k)
 	floor := x.zeroVariance()
 	worst := 0.0
 	for j := range k {
 		if math.IsNaN(x.est[j]) {
 			continue
 		}
-		loss := dot(l[j*k:(j+1)*k], size) / math.Sqrt(max(net[j*k+j]/r.factor, floor[j]))
+		all := dot(l[j*k:(j+1)*k], size)
+		r.noise[j] = (64 * 0x1p-53 * all) * (64 * 0x1p-53 * all)
+		if net[j*k+j]/r.factor <= r.noise[j] && r.noise[j] <= harmless(floor[j]) {
+			continue // zero
+		}
+		loss := all / math.Sqrt(max(net[j*k+j]/r.factor, floor[j]))
 		if !(loss >= 0) {
 			loss = math.Inf(1)
 		}

@@ -62,8 +62,9 @@ type fitter struct {
 	keys    []int    // of sums.Scores
 	heavyOK bool     // rows of high leverage were summed one by one
 	fourth  []float64
-	loss    float64 // of the fourth-moment errors
-	rssLoss float64 // of the residual sum of squares
+	loss    float64   // of the fourth-moment errors
+	rssLoss float64   // of the residual sum of squares
+	noise   []float64 // of the fourth-moment variances
 	passes  int
 	bytes   int64
 	warn    []Warning
@@ -140,7 +141,7 @@ func (f *fitter) second() error {
 	if f.plan.needs.Fourth {
 		f.fourth, _ = s.Fourth(x.theta, false)
 		gross, _ := s.Fourth(x.theta, true)
-		f.loss = x.cancellation(f.fourth, gross)
+		f.loss, f.noise = x.cancellation(f.fourth, gross)
 		if f.loss > lossLimit {
 			if f.src.Info().Rewindable && f.o.Passes != 1 {
 				rows = true
@@ -237,6 +238,9 @@ func digits(loss float64) int {
 func (f *fitter) errorsFor(k Kind) Errors {
 	x, s := f.sol, f.state
 	e := Errors{Kind: k.Name, Clusters: []string{}, Groups: []int64{}}
+	for _, l := range []*[]Number{&e.SE, &e.DF, &e.T, &e.P, &e.Log10P, &e.Low, &e.High} {
+		*l = []Number{}
+	}
 	isCluster := k.Cluster >= 0 && (k.Name == "cr0" || k.Name == "cr1")
 	if isCluster {
 		e.Clusters = append(e.Clusters, f.d.Keys[k.Cluster].Text)
@@ -289,6 +293,9 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 		}
 	}
 	r := x.hc(k.Name, meat)
+	if f.sums == nil {
+		r.noise = f.noise
+	}
 	lone := f.loneTerms()
 	r.noP = lone
 	if k.Name == "hc2" || k.Name == "hc3" {

@@ -51,16 +51,23 @@ func (x *solution) hc(kind string, meat []float64) *estimate {
 // cancellation bounds the relative error of each standard error that was
 // contracted from fourth moments: eps times the ratio of what was added to what
 // is left, for each coefficient.
-func (x *solution) cancellation(meat, gross []float64) float64 {
+// Errors that are zero but for harmless noise do not count. noise bounds what
+// rounding leaves of each variance.
+func (x *solution) cancellation(meat, gross []float64) (loss float64, noise []float64) {
 	k := x.k()
 	l := x.bread()
 	net := sandwich(l, x.project(meat), k)
 	all := sandwich(absolute(l), x.projectAbs(gross), k)
 	floor := x.zeroVariance()
+	noise = make([]float64, k)
 	worst := 0.0
 	for j := range k {
 		if math.IsNaN(x.est[j]) {
 			continue
+		}
+		noise[j] = 64 * 0x1p-53 * all[j*k+j]
+		if net[j*k+j] <= noise[j] && noise[j] <= harmless(floor[j]) {
+			continue // zero
 		}
 		r := all[j*k+j] / max(net[j*k+j], floor[j])
 		if !(r >= 0) {
@@ -68,7 +75,7 @@ func (x *solution) cancellation(meat, gross []float64) float64 {
 		}
 		worst = max(worst, r)
 	}
-	return 0x1p-53 * worst
+	return 0x1p-53 * worst, noise
 }
 
 // bread is W G^-1: its rows map scores to coefficients, in units of v.
@@ -95,6 +102,10 @@ func (x *solution) zeroVariance() []float64 {
 	}
 	return out
 }
+
+// harmless is the noise in a variance, 1e-8 of what residuals of equal spread would
+// give, that is not worth telling from zero; floor is from zeroVariance.
+func harmless(floor float64) float64 { return 1e-8 / zeroShare * floor }
 
 func absolute(a []float64) []float64 {
 	out := make([]float64, len(a))

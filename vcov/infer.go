@@ -17,10 +17,11 @@ type estimate struct {
 	// joint gives F and its second df from the Wald statistic of q restrictions;
 	// ok is false with a reason where no test exists.
 	joint func(w float64, q int) (f, df2 float64, ok bool, reason string)
-	noP   []bool // coefficients without t, p and interval
-	noSE  []bool // coefficients without an error at all
-	zero  []bool // coefficients whose error is zero but for rounding
-	lost  []bool // those of noSE that have no digits left
+	noP   []bool    // coefficients without t, p and interval
+	noSE  []bool    // coefficients without an error at all
+	noise []float64 // bound of rounding in each variance of a coefficient, without factor, units of v
+	zero  []bool    // coefficients whose error is zero but for rounding
+	lost  []bool    // those of noSE that have no digits left
 }
 
 // plainJoint is W/q on F(q, df).
@@ -98,7 +99,7 @@ func (x *solution) zeroErrors(r *estimate, v []float64) {
 		gross := sandwich(absolute(x.bread()), absolute(r.meat), k)
 		for j := range k {
 			noise := 64 * 0x1p-52 * r.factor * gross[j*k+j]
-			if noise > 1e-8/zeroShare*floor[j] && v[j*k+j]*s2 <= noise {
+			if noise > harmless(floor[j]) && v[j*k+j]*s2 <= noise {
 				// Rounding could hide an error of a size that matters.
 				if r.noSE == nil {
 					r.noSE = make([]bool, k)
@@ -111,6 +112,9 @@ func (x *solution) zeroErrors(r *estimate, v []float64) {
 			}
 			floor[j] = max(floor[j], noise)
 		}
+	}
+	for j, n := range r.noise {
+		floor[j] = max(floor[j], r.factor*n)
 	}
 	for j, z := range floor {
 		r.zero[j] = v[j*k+j]*s2 <= z
