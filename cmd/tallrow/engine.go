@@ -188,7 +188,11 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 	}
 	if err != nil {
 		if headOnly(ctx, src) {
-			err = fmt.Errorf("%s: there is a header and no row, want data rows", strings.Join(s.data, ", "))
+			names := strings.Join(s.data, ", ")
+			if names == "-" {
+				names = "standard input"
+			}
+			err = fmt.Errorf("%s: there is a header and no row, want data rows", names)
 		}
 		src.Close()
 		return nil, err
