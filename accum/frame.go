@@ -44,7 +44,8 @@ type frameRows struct {
 	y       []float64
 	origin  []float64
 	yOrigin float64
-	fixed   int // the first rows stand for many and are never dropped
+	fixed   int     // the first rows stand for many and are never dropped
+	spread  float64 // of the outcome's residual in an earlier frame, 0 if unknown
 }
 
 const (
@@ -77,7 +78,7 @@ func buildFrame(r *frameRows, terms int, shift bool) *Frame {
 			break
 		}
 		keep := newFrameRows(len(r.x))
-		keep.origin, keep.yOrigin, keep.fixed = r.origin, r.yOrigin, r.fixed
+		keep.origin, keep.yOrigin, keep.fixed, keep.spread = r.origin, r.yOrigin, r.fixed, r.spread
 		for i, h := range lever {
 			if i >= r.fixed && h > heavyRow {
 				continue
@@ -151,7 +152,10 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 		}
 		coef := make([]float64, len(qs))
 		d := add(v, coef)
-		if !(d > dependent*norm) || norm == 0 {
+		// A column that is a combination of others but for the rounding of its own
+		// cells is dependent too.
+		ulp := 0x1p-52 * math.Abs(mean[j]) * f.Inv[j] * math.Sqrt(ss)
+		if !(d > math.Max(dependent*norm, ulp)) || norm == 0 {
 			continue
 		}
 		b := len(kept)
@@ -182,6 +186,11 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 	ynorm := math.Sqrt(dotp(yc, yc))
 	gamma := make([]float64, len(qs))
 	rest := add(yc, gamma)
+	if r.fixed == 0 && len(qs) >= n {
+		// As many columns as rows: the fit says nothing of the spread, nor of others.
+		clear(gamma)
+		rest = ynorm
+	}
 	sd := rest / math.Sqrt(ss)
 	var ymax float64
 	for i, y := range r.y {
@@ -192,6 +201,9 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 	}
 	if floor := 0x1p-52 * math.Max(ymax, ynorm/math.Sqrt(ss)); sd < floor {
 		sd = floor
+	}
+	if rest <= 1e-7*ynorm {
+		sd = math.Max(sd, r.spread) // sums of squares of earlier rows cannot tell less
 	}
 	f.YInv = invPow2(sd)
 	if shift {

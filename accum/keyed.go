@@ -132,6 +132,9 @@ func (t *keyTable) fits(want float64) (overflow, coarse bool) {
 
 // betterUnit chooses the unit from what was seen, order-free.
 func (t *keyTable) betterUnit() int {
+	if t.max == 0 && !t.bad {
+		return -1074 // nothing to hold
+	}
 	bound := t.max * float64(max(t.count, 1))
 	if !(bound > 0) || math.IsInf(bound, 0) {
 		bound = math.MaxFloat64

@@ -266,6 +266,9 @@ func TestKeyTable(t *testing.T) {
 	if u := big.betterUnit(); u <= defaultUnit || u > -60 {
 		t.Errorf("unit %d for sums of 2^58", u)
 	}
+	if u := newKeyTable(1, defaultUnit).betterUnit(); u > -1000 {
+		t.Errorf("a table that holds nothing wants unit %d", u)
+	}
 	small := newKeyTable(1, defaultUnit)
 	small.at(0)[0] = 1e-15
 	small.flush()

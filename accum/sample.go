@@ -143,6 +143,7 @@ func previousRows(l *layout, epochs []*epoch) *frameRows {
 	}
 	copy(r.origin, last.Shift)
 	r.yOrigin = last.YShift
+	r.spread = 1 / last.YInv
 	tri := looseCholesky(sum, w)
 	// Row i of the factor is a pseudo-row in z; back to shifted raw columns.
 	var back []float64

@@ -45,7 +45,8 @@ type State struct {
 	Fingerprint string
 	// Dropped: cluster sums were wanted and outgrew their share of memory.
 	Dropped bool
-	// Coarse: keyed sums may have lost digits and the input cannot be read again.
+	// Coarse: keyed sums may have lost digits, since their sizes differ too much or
+	// the input cannot be read again.
 	Coarse bool
 	// Repeated says why the pass was done more than once.
 	Repeated []string
@@ -360,9 +361,6 @@ func (s *State) placeTable(m []float64, ti int, combo []int32, vals []float64) {
 
 // refit returns the unit that the keyed sums should have had.
 func (s *State) refit(unit int) int {
-	if unit != defaultUnit {
-		return unit
-	}
 	n := len(s.Columns) + 1
 	size := math.Inf(1)
 	for j := range n {
@@ -386,7 +384,9 @@ func (s *State) refit(unit int) int {
 			}
 		}
 	}
-	if need {
+	if need && unit != defaultUnit {
+		s.Coarse = true // the best unit was not good enough
+	} else if need {
 		return best
 	}
 	return unit

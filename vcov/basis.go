@@ -31,6 +31,7 @@ type basis struct {
 	q      []float64 // P x K, row by row
 	w      []float64 // K x K, row by row
 	offset []float64 // K: coordinates of (provisional fit) of the outcome
+	beside []float64 // P: what of that fit the model does not span; nil if nothing
 	bases  map[string]string
 	notes  []Warning
 }
@@ -311,6 +312,10 @@ func (b *basis) factor() {
 		back = inverseUpper(f.T, f.Terms)
 	}
 	q := make([][]float64, k) // columns
+	place := make([]int, p)   // of numeric columns
+	for a, u := range b.cols {
+		place[u.column] = a
+	}
 	r := make([]float64, k*k)
 	for a, u := range b.cols {
 		col := &s.Columns[u.column]
@@ -324,6 +329,23 @@ func (b *basis) factor() {
 			v[u.column] = 1
 		case col.Group < 0:
 			j := col.Dense - 1
+			if !s.Design.Spec.NoConstant && !s.Constant(j) {
+				// The constant and the numeric terms before it are there already: the
+				// column's own direction is its coordinate, without any cancelling.
+				for i := 0; i <= j; i++ {
+					t := 0.0
+					if f.White {
+						t = back[i*f.Terms+j]
+					} else if i == j {
+						t = 1
+					}
+					r[place[1+i]*k+a] = t / f.Inv[j]
+				}
+				r[a] = f.Shift[j] * math.Sqrt(float64(len(carry)))
+				v[1+j] = 1
+				q[a] = v
+				continue
+			}
 			for _, c := range carry {
 				v[c] += f.Shift[j]
 			}
@@ -376,9 +398,32 @@ func (b *basis) factor() {
 	b.w = inverseUpper(r, k)
 	off := b.internalOffset(carry)
 	b.offset = make([]float64, k)
+	rest := append([]float64(nil), off...)
 	for a := range q {
 		b.offset[a] = dot(q[a], off)
+		axpy(-b.offset[a], q[a], rest)
 	}
+	if size := math.Sqrt(dot(off, off)); math.Sqrt(dot(rest, rest)) > 1e-14*size {
+		b.beside = rest
+	}
+}
+
+// outcome returns the sums of products of the internal columns with the outcome
+// about the part of the provisional fit that the model spans, and its square.
+func (b *basis) outcome() (v []float64, svv float64) {
+	s := b.state
+	p := len(s.Columns)
+	n := p + 1
+	v, svv = s.S[p*n:p*n+p], s.S[p*n+p]
+	if b.beside == nil {
+		return v, svv
+	}
+	v = append([]float64(nil), v...)
+	svv += dot(b.beside, v)
+	for i, x := range b.beside {
+		axpy(x, s.S[i*n:i*n+p], v)
+	}
+	return v, svv + dot(b.beside, v)
 }
 
 // project returns Q' m Q for a (P+1) x (P+1) internal matrix (its last row and

@@ -398,3 +398,43 @@ func TestModelsWithNothingInThem(t *testing.T) {
 		}
 	}
 }
+
+// Sums of levels are kept in fixed point, and are made again with another unit
+// where the first does not fit. Tables that hold nothing must not choose it: HC
+// errors are those of the definitions beside a far cell as well.
+func TestFarCellBesideLevels(t *testing.T) {
+	const n = 400
+	r := rand.New(rand.NewPCG(10, 1))
+	x, y := make([]float64, n), make([]float64, n)
+	barge := make([]string, n)
+	d := &dense{y: y}
+	for i := range n {
+		barge[i] = []string{"ark", "deck", "motor"}[i%3]
+		x[i] = r.NormFloat64()
+		if i == 57 {
+			x[i] = 1e5
+		}
+		y[i] = (1 + float64(i%3)) * r.NormFloat64()
+		row := []float64{1, 0, 0, x[i], 0, 0}
+		if i%3 > 0 {
+			row[i%3], row[3+i%3] = 1, x[i]
+		}
+		d.x = append(d.x, row)
+		d.w = append(d.w, 1)
+	}
+	d.solve()
+	tb := &table{}
+	tb.float("y", y)
+	tb.float("x", x)
+	tb.text("barge", barge)
+	res := fit(t, tb.source(100), stream.Spec{Outcome: "y", Terms: []string{"each(barge)", "x", "each(barge)*x"}}, vcov.Options{Errors: kinds("classical", "hc0")})
+	for _, kind := range []string{"classical", "hc0"} {
+		e := errorsOf(t, res, kind)
+		v := d.covariance(kind)
+		for j := range res.Terms {
+			if want := math.Sqrt(v.At(j, j)); !near(float64(e.SE[j]), want, want, 1e-8) {
+				t.Errorf("%s of %s: %v, want %v", kind, res.Terms[j], e.SE[j], want)
+			}
+		}
+	}
+}

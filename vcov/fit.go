@@ -159,6 +159,13 @@ func (f *fitter) second() error {
 		rows = true
 		f.note("second-pass", "the clusters' second moments outgrew a sixteenth of --memory; a second pass kept scores only")
 	}
+	if s.Coarse && f.src.Info().Rewindable && len(f.plan.needs.Clusters) > 0 {
+		rows = true
+		f.note("second-pass", "the clusters' second moments differ too much in size to keep their digits; a second pass kept scores only")
+	}
+	if s.Coarse && len(s.Groups) > 0 {
+		f.note("digits", "the sums of category levels differ too much in size: small ones have lost digits")
+	}
 	if !rows {
 		return nil
 	}
@@ -310,6 +317,9 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 
 // tellLost says which errors are left out because they cancelled.
 func (f *fitter) tellLost(e *Errors, r *estimate) {
+	if r.loss > blurLimit {
+		f.note("digits", "some errors of %s may have only about %d digits: parts of them cancel", e.Name(), digits(r.loss))
+	}
 	for j, lost := range r.lost {
 		if lost && !math.IsNaN(f.sol.est[j]) {
 			term := f.sol.cols[j].label
@@ -390,7 +400,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	case len(sc.Keys) < 2:
 		x.unavailable(e, "all rows are in one cluster; at least two are needed")
 		return
-	case s.Coarse:
+	case s.Coarse && f.sums == nil:
 		x.unavailable(e, "the clusters' sums lost digits and the input can be read once only; use --passes 2")
 		return
 	}

@@ -22,6 +22,7 @@ type estimate struct {
 	noise []float64 // bound of rounding in each variance of a coefficient, without factor, units of v
 	zero  []bool    // coefficients whose error is zero but for rounding
 	lost  []bool    // those of noSE that have no digits left
+	loss  float64   // relative error of the variances that cancelling may have cost
 }
 
 // plainJoint is W/q on F(q, df).
@@ -95,8 +96,9 @@ func (x *solution) zeroErrors(r *estimate, v []float64) {
 	r.zero = make([]bool, k)
 	s2 := x.state.Frame.YInv * x.state.Frame.YInv
 	floor := x.zeroVariance()
+	var gross []float64
 	if r.meat != nil {
-		gross := sandwich(absolute(x.bread()), absolute(r.meat), k)
+		gross = sandwich(absolute(x.bread()), absolute(r.meat), k)
 		for j := range k {
 			noise := 64 * 0x1p-52 * r.factor * gross[j*k+j]
 			if noise > harmless(floor[j]) && v[j*k+j]*s2 <= noise {
@@ -118,6 +120,9 @@ func (x *solution) zeroErrors(r *estimate, v []float64) {
 	}
 	for j, z := range floor {
 		r.zero[j] = v[j*k+j]*s2 <= z
+		if gross != nil && !r.zero[j] && !math.IsNaN(x.est[j]) && !(r.noSE != nil && r.noSE[j]) {
+			r.loss = max(r.loss, 0x1p-53*r.factor*gross[j*k+j]/(v[j*k+j]*s2))
+		}
 	}
 }
 

@@ -44,7 +44,6 @@ type solution struct {
 func solve(b *basis) *solution {
 	s := b.state
 	k, p := b.k(), len(s.Columns)
-	n := p + 1
 	x := &solution{basis: b, kind: s.Design.Spec.WeightKind, n: s.Rows}
 	if s.Design.Spec.Weight == "" {
 		x.kind = stream.NoWeight
@@ -53,8 +52,9 @@ func solve(b *basis) *solution {
 		x.n = s.Freq
 	}
 	g := b.project(s.S)
+	v, svv := b.outcome()
 	c := make([]float64, k)
-	b.projectVec(s.S[p*n:p*n+p], c)
+	b.projectVec(v, c)
 	for a, u := range b.cols {
 		if col := &s.Columns[u.column]; col.Group < 0 && col.Dense > 0 && s.Constant(col.Dense-1) {
 			g[a*k+a] = 0 // nothing of its own beside the constant
@@ -74,7 +74,7 @@ func solve(b *basis) *solution {
 	}
 	x.gamma = x.e.solve(c)
 	x.inverse = x.e.inverse()
-	x.svv = s.S[p*n+p]
+	x.svv = svv
 	x.rss = max(0, x.svv-dot(x.gamma, c))
 	x.full = make([]float64, k)
 	for i := range k {
@@ -83,6 +83,9 @@ func solve(b *basis) *solution {
 	x.theta = append(b.expand(x.gamma), -1)
 	for i := range x.theta {
 		x.theta[i] = -x.theta[i]
+		if i < p && b.beside != nil {
+			x.theta[i] += b.beside[i]
+		}
 	}
 	x.estimates()
 	// rss has an error of some eps svv: only what is below the limit with that error
