@@ -23,67 +23,123 @@ func flops(b *testing.B, rows, n int) {
 	b.ReportMetric(2*float64(rows)*float64(n)*float64(b.N)/float64(b.Elapsed().Nanoseconds()), "GFLOP/s")
 }
 
+// inGo runs f without assembly.
+func inGo(b *testing.B, f func()) {
+	defer DisableAVX2()()
+	for b.Loop() {
+		f()
+	}
+}
+
+// compare runs f with and without assembly, and other beside them, each doing n
+// products a row.
+func compare(b *testing.B, name string, rows, n int, bytes int64, f, other func()) {
+	run := func(impl string, loop func(b *testing.B)) {
+		b.Run(name+"/impl="+impl, func(b *testing.B) {
+			b.SetBytes(bytes)
+			loop(b)
+			flops(b, rows, n)
+		})
+	}
+	if useAVX2 {
+		run("avx2", func(b *testing.B) {
+			for b.Loop() {
+				f()
+			}
+		})
+	}
+	run("go", func(b *testing.B) { inGo(b, f) })
+	if other != nil {
+		run("gonum", func(b *testing.B) {
+			for b.Loop() {
+				other()
+			}
+		})
+	}
+}
+
+var benchCols = []int{8, 10, 16, 32, 64, 128, 256}
+
 func BenchmarkGram(b *testing.B) {
 	const rows = 512
-	for _, cols := range []int{4, 8, 10, 16, 32, 64} {
+	for _, cols := range benchCols {
 		x := benchBlock(rows, cols)
 		n := cols * (cols + 1) / 2
 		dst := make([]float64, n)
 		full := make([]float64, cols*cols)
-		for _, impl := range []struct {
-			name string
-			f    func()
-		}{
-			{"tile", func() { Gram(dst, x, rows, rows, cols) }},
-			{"ref", func() { gramRef(dst, x, rows, rows, cols) }},
-			{"gonum", func() {
+		compare(b, fmt.Sprintf("rows=%d/cols=%d", rows, cols), rows, n, int64(8*rows*cols),
+			func() { Gram(dst, x, rows, rows, cols) },
+			func() {
 				blas64.Syrk(blas.NoTrans, 1, blas64.General{Rows: cols, Cols: rows, Stride: rows, Data: x},
 					1, blas64.Symmetric{N: cols, Stride: cols, Data: full, Uplo: blas.Upper})
-			}},
-		} {
-			b.Run(fmt.Sprintf("rows=%d/cols=%d/impl=%s", rows, cols, impl.name), func(b *testing.B) {
-				b.SetBytes(int64(8 * rows * cols))
-				for b.Loop() {
-					impl.f()
-				}
-				flops(b, rows, n)
 			})
-		}
 	}
 }
 
 func BenchmarkCross(b *testing.B) {
 	const rows = 512
-	for _, cols := range []int{8, 32} {
+	for _, cols := range benchCols {
 		x, y := benchBlock(rows, cols), benchBlock(rows, cols)
 		dst := make([]float64, cols*cols)
 		mat := func(d []float64) blas64.General {
 			return blas64.General{Rows: cols, Cols: rows, Stride: rows, Data: d}
 		}
-		for _, impl := range []struct {
-			name string
-			f    func()
-		}{
-			{"tile", func() { Cross(dst, cols, x, rows, cols, y, rows, cols, rows) }},
-			{"gonum", func() {
+		compare(b, fmt.Sprintf("rows=%d/cols=%d", rows, cols), rows, cols*cols, int64(2*8*rows*cols),
+			func() { Cross(dst, cols, x, rows, cols, y, rows, cols, rows) },
+			func() {
 				blas64.Gemm(blas.NoTrans, blas.Trans, 1, mat(x), mat(y), 1, blas64.General{Rows: cols, Cols: cols, Stride: cols, Data: dst})
-			}},
-		} {
-			b.Run(fmt.Sprintf("rows=%d/cols=%d/impl=%s", rows, cols, impl.name), func(b *testing.B) {
-				b.SetBytes(int64(2 * 8 * rows * cols))
-				for b.Loop() {
-					impl.f()
-				}
-				flops(b, rows, cols*cols)
 			})
+	}
+}
+
+// BenchmarkCrossNarrow has one column on one side.
+func BenchmarkCrossNarrow(b *testing.B) {
+	const rows, cols = 512, 8
+	x, y := benchBlock(rows, 1), benchBlock(rows, cols)
+	dst := make([]float64, cols)
+	compare(b, fmt.Sprintf("rows=%d/cols=1x%d", rows, cols), rows, cols, 8*rows*(1+cols),
+		func() { Cross(dst, cols, x, rows, 1, y, rows, cols, rows) }, nil)
+	compare(b, fmt.Sprintf("rows=%d/cols=%dx1", rows, cols), rows, cols, 8*rows*(1+cols),
+		func() { Cross(dst, 1, y, rows, cols, x, rows, 1, rows) }, nil)
+}
+
+// BenchmarkGramShort shows what a call costs.
+func BenchmarkGramShort(b *testing.B) {
+	for _, rows := range []int{1, 3, 8, 33} {
+		for _, cols := range []int{1, 4, 9} {
+			x := benchBlock(rows, cols)
+			n := cols * (cols + 1) / 2
+			dst := make([]float64, n)
+			compare(b, fmt.Sprintf("rows=%d/cols=%d", rows, cols), rows, n, int64(8*rows*cols),
+				func() { Gram(dst, x, rows, rows, cols) }, nil)
 		}
 	}
 }
 
-func BenchmarkScale(b *testing.B) {
-	x := benchBlock(512, 3)
-	b.SetBytes(8 * 512)
-	for b.Loop() {
-		Scale(x[:512], x[512:1024], x[1024:])
+func BenchmarkElementwise(b *testing.B) {
+	for _, n := range []int{4, 128, 512} {
+		x := benchBlock(n, 3)
+		one := func(name string, f func()) {
+			b.Run(fmt.Sprintf("f=%s/rows=%d", name, n), func(b *testing.B) {
+				b.SetBytes(int64(8 * n))
+				for b.Loop() {
+					f()
+				}
+			})
+		}
+		scale := func() { Scale(x[:n], x[n:2*n], x[2*n:]) }
+		axpy := func() { Axpy(1e-9, x[n:2*n], x[2*n:]) }
+		one("copy", func() { copy(x[:n], x[n:2*n]) })
+		for _, f := range []struct {
+			name string
+			f    func()
+		}{{"scale", scale}, {"axpy", axpy}} {
+			if useAVX2 {
+				one(f.name+"/impl=avx2", f.f)
+			}
+			restore := DisableAVX2()
+			one(f.name+"/impl=go", f.f)
+			restore()
+		}
 	}
 }

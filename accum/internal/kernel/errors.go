@@ -9,6 +9,7 @@ const (
 	shortX    = "kernel: x too short"
 	shortA    = "kernel: a too short"
 	shortB    = "kernel: b too short"
+	shortY    = "kernel: y too short"
 	shortW    = "kernel: w too short"
 	shortDst  = "kernel: dst too short"
 )

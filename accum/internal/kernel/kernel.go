@@ -74,8 +74,19 @@ func Scale(dst, x, w []float64) {
 	if len(w) < len(dst) {
 		panic(shortW)
 	}
-	x, w = x[:len(dst)], w[:len(dst)]
-	for i := range dst {
-		dst[i] = x[i] * w[i]
+	scale(dst, x, w)
+}
+
+// Axpy adds a multiple of x to y:
+//
+//	y[i] = fma(t, x[i], y[i])    for 0 <= i < len(x)
+//
+// with one rounding, whatever the values. y may be x itself but must not overlap
+// it otherwise; elements of y from len(x) on stay as they are. Axpy panics when
+// y is shorter than x.
+func Axpy(t float64, x, y []float64) {
+	if len(y) < len(x) {
+		panic(shortY)
 	}
+	axpy(t, x, y)
 }

@@ -43,6 +43,10 @@ var grams = []struct {
 	f    gramFunc
 }{
 	{"Gram", Gram},
+	{"Gram in Go", func(d, x []float64, s, r, c int) {
+		defer DisableAVX2()()
+		Gram(d, x, s, r, c)
+	}},
 	{"width 2", func(d, x []float64, s, r, c int) { gramTiles(d, x, s, r, c, 2) }},
 	{"width 3", func(d, x []float64, s, r, c int) { gramTiles(d, x, s, r, c, 3) }},
 }
@@ -52,6 +56,10 @@ var crosses = []struct {
 	f    crossFunc
 }{
 	{"Cross", Cross},
+	{"Cross in Go", func(d []float64, ldd int, a []float64, sa, ca int, b []float64, sb, cb, r int) {
+		defer DisableAVX2()()
+		Cross(d, ldd, a, sa, ca, b, sb, cb, r)
+	}},
 	{"width 2", func(d []float64, ldd int, a []float64, sa, ca int, b []float64, sb, cb, r int) {
 		crossTiles(d, ldd, a, sa, ca, b, sb, cb, r, 2)
 	}},
@@ -264,37 +272,28 @@ func TestSpecialValues(t *testing.T) {
 // row in the last group are skipped (-0 stays) or padded (+0).
 func TestPaddedZero(t *testing.T) {
 	for rows := 1; rows <= 13; rows++ {
-		for cols := 1; cols <= 5; cols++ {
-			a, b := make([]float64, rows*cols), make([]float64, rows*cols)
+		for shape := range 8 * 8 {
+			colsA, colsB := 1+shape/8, 1+shape%8
+			a, b := make([]float64, rows*colsA), make([]float64, rows*colsB)
 			for i := range a {
-				a[i], b[i] = -1e-200, 1e-200
+				a[i] = -1e-200
+			}
+			for i := range b {
+				b[i] = 1e-200
 			}
 			for _, c := range crosses {
-				dst := make([]float64, cols*cols)
+				dst := make([]float64, colsA*colsB)
 				for i := range dst {
 					dst[i] = math.Copysign(0, -1)
 				}
-				c.f(dst, cols, a, rows, cols, b, rows, cols, rows)
+				c.f(dst, colsB, a, rows, colsA, b, rows, colsB, rows)
 				for i, v := range dst {
 					if v != 0 || math.Signbit(v) != (rows%4 == 0) {
-						t.Fatalf("%s: rows %d, columns %d, element %d: sign bit %v", c.name, rows, cols, i, math.Signbit(v))
+						t.Fatalf("%s: rows %d, %d x %d columns, element %d: sign bit %v", c.name, rows, colsA, colsB, i, math.Signbit(v))
 					}
 				}
 			}
 		}
-	}
-}
-
-func TestScale(t *testing.T) {
-	x, w := []float64{1, -2, 0.5, math.Inf(1), 9}, []float64{3, 4, 0.1, 0, 9}
-	dst := []float64{0, 0, 0, 0}
-	Scale(dst, x, w)
-	if want := []float64{3, -8, 0.05, math.NaN()}; dst[0] != want[0] || dst[1] != want[1] || dst[2] != want[2] || !math.IsNaN(dst[3]) {
-		t.Errorf("got %v, want %v", dst, want)
-	}
-	Scale(x[:3], x, w)
-	if x[0] != 3 || x[1] != -8 || x[2] != 0.05 || x[4] != 9 {
-		t.Errorf("in place: %v", x)
 	}
 }
 
@@ -320,6 +319,7 @@ func TestMisuse(t *testing.T) {
 		{shortDst, func() { Cross(f(4), 3, f(9), 3, 2, f(9), 3, 2, 3) }},
 		{shortX, func() { Scale(f(3), f(2), f(3)) }},
 		{shortW, func() { Scale(f(3), f(3), f(2)) }},
+		{shortY, func() { Axpy(1, f(3), f(2)) }},
 	} {
 		func() {
 			defer func() {
@@ -333,6 +333,8 @@ func TestMisuse(t *testing.T) {
 	Gram(nil, nil, 0, 0, 3)
 	Gram(nil, nil, 5, 5, 0)
 	Cross(nil, 4, nil, 0, 3, nil, 0, 4, 0)
+	Scale(nil, nil, f(1))
+	Axpy(1, nil, f(1))
 }
 
 func Example() {

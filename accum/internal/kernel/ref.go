@@ -34,3 +34,20 @@ func dotRef(a, b []float64, rows int) float64 {
 	}
 	return (lane[0] + lane[1]) + (lane[2] + lane[3])
 }
+
+// scaleRef and axpyRef round once an element, which leaves the bits no choice:
+// they are what runs wherever there is no assembly.
+
+func scaleRef(dst, x, w []float64) {
+	x, w = x[:len(dst)], w[:len(dst)]
+	for i := range dst {
+		dst[i] = x[i] * w[i]
+	}
+}
+
+func axpyRef(t float64, x, y []float64) {
+	y = y[:len(x)]
+	for i, v := range x {
+		y[i] = math.FMA(t, v, y[i])
+	}
+}

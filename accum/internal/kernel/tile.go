@@ -8,14 +8,6 @@ import "math"
 // A tile that reaches past the last column gets the last one again and its
 // surplus results are dropped, which costs no more than a narrower tile.
 
-func gram(dst []float64, x []float64, stride, rows, cols int) {
-	gramTiles(dst, x, stride, rows, cols, tileWidth)
-}
-
-func cross(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
-	crossTiles(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows, tileWidth)
-}
-
 func gramTiles(dst []float64, x []float64, stride, rows, cols, width int) {
 	var out [9]float64
 	for j := 0; j < cols; j += width {

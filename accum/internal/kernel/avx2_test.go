@@ -1,0 +1,63 @@
+//go:build amd64 && !noasm
+
+package kernel
+
+import (
+	"testing"
+
+	"golang.org/x/sys/cpu"
+)
+
+// peakFlops is what one call of peakAVX2 does a unit of n.
+const peakFlops = 2 * 48
+
+func BenchmarkPeak(b *testing.B) {
+	if !useAVX2 {
+		b.Skip("no AVX2 here")
+	}
+	const n = 1000
+	for b.Loop() {
+		peakAVX2(n)
+	}
+	b.ReportMetric(peakFlops*n*float64(b.N)/float64(b.Elapsed().Nanoseconds()), "GFLOP/s")
+}
+
+// TestDisableAVX2: the tests that name both paths do run both.
+func TestDisableAVX2(t *testing.T) {
+	before := useAVX2
+	if before != (cpu.X86.HasAVX2 && cpu.X86.HasFMA) {
+		t.Errorf("assembly in use: %v", before)
+	}
+	restore := DisableAVX2()
+	if useAVX2 {
+		t.Error("still in use when disabled")
+	}
+	inner := DisableAVX2()
+	inner()
+	if useAVX2 {
+		t.Error("the inner restore undid the outer call")
+	}
+	restore()
+	if useAVX2 != before {
+		t.Errorf("restored to %v", useAVX2)
+	}
+	if !before {
+		t.Skip("this processor has no AVX2 and FMA: the assembly is not tested")
+	}
+}
+
+// TestCuts: every tile is reached, and no tile of one column stands beside a
+// wider one.
+func TestCuts(t *testing.T) {
+	for _, most := range []int{3, 4} {
+		for n := 1; n < 50; n++ {
+			for left := n; left > 0; {
+				p := part(left, most)
+				if p < 1 || p > min(left, most) || p == 1 && n > 1 {
+					t.Fatalf("%d columns by %d: a tile of %d with %d left", n, most, p, left)
+				}
+				left -= p
+			}
+		}
+	}
+}

@@ -1,0 +1,144 @@
+//go:build amd64 && !noasm
+
+package kernel
+
+import "golang.org/x/sys/cpu"
+
+//go:generate sh -c "cd _gen && go run main.go -out ../avx2_amd64.s -stubs ../avx2_amd64.go -pkg kernel"
+
+// useAVX2 tells whether the processor and the operating system allow the
+// assembly. Only speed depends on it, no bit of a result.
+var useAVX2 = cpu.X86.HasAVX2 && cpu.X86.HasFMA
+
+// DisableAVX2 makes the package run its plain Go until restore is called, so
+// that a test can compare the two in one process. Neither call may run at the
+// same time as a kernel.
+func DisableAVX2() (restore func()) {
+	old := useAVX2
+	useAVX2 = false
+	return func() { useAVX2 = old }
+}
+
+func gram(dst []float64, x []float64, stride, rows, cols int) {
+	if useAVX2 {
+		gramAVX2(dst, x, stride, rows, cols)
+	} else {
+		gramTiles(dst, x, stride, rows, cols, tileWidth)
+	}
+}
+
+func cross(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
+	if useAVX2 {
+		crossAVX2(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows)
+	} else {
+		crossTiles(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows, tileWidth)
+	}
+}
+
+func scale(dst, x, w []float64) {
+	if n := len(dst); useAVX2 && n > 0 {
+		scaleAVX2(&dst[0], &x[0], &w[0], n)
+	} else {
+		scaleRef(dst, x, w)
+	}
+}
+
+func axpy(t float64, x, y []float64) {
+	if n := len(x); useAVX2 && n > 0 {
+		axpyAVX2(t, &x[0], &y[0], n)
+	} else {
+		axpyRef(t, x, y)
+	}
+}
+
+// The columns of a block are cut so that every tile has eight sums or more
+// where there are columns for it: fewer do not fill the time a multiply-add
+// takes. Four columns and what stands to the right of them come first; the last
+// five are one triangle, the last six two of three with a square between.
+
+func gramAVX2(dst []float64, x []float64, stride, rows, cols int) {
+	for i := 0; i < cols; {
+		p := min(cols-i, 4)
+		switch cols - i {
+		case 5:
+			p = 5
+		case 6:
+			p = 3
+		}
+		triangle(p, &dst[i*(i+1)/2+i], i+1, &x[i*stride], stride, rows)
+		for j := i + p; j < cols; {
+			q := part(cols-j, 3)
+			rectangle(p, q, &dst[j*(j+1)/2+i], j+1, 1, &x[i*stride], stride, &x[j*stride], stride, rows)
+			j += q
+		}
+		i += p
+	}
+}
+
+func crossAVX2(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
+	for j := 0; j < colsB; {
+		p := part(colsB-j, 4)
+		for i := 0; i < colsA; {
+			q := part(colsA-i, 3)
+			rectangle(p, q, &dst[i*ldd+j], ldd, 0, &b[j*strideB], strideB, &a[i*strideA], strideA, rows)
+			i += q
+		}
+		j += p
+	}
+}
+
+// part is how many of the n columns left a tile takes: most, or one fewer so
+// that the last tile is not a single column.
+func part(n, most int) int {
+	if n == most+1 {
+		return most - 1
+	}
+	return min(n, most)
+}
+
+// triangle and rectangle choose by a switch, not a table: through a table the
+// compiler would take the pointers to escape.
+
+func triangle(p int, dst *float64, step int, a *float64, stride, rows int) {
+	switch p {
+	case 1:
+		triangle1AVX2(dst, step, a, stride, rows)
+	case 2:
+		triangle2AVX2(dst, step, a, stride, rows)
+	case 3:
+		triangle3AVX2(dst, step, a, stride, rows)
+	case 4:
+		triangle4AVX2(dst, step, a, stride, rows)
+	case 5:
+		triangle5AVX2(dst, step, a, stride, rows)
+	}
+}
+
+func rectangle(p, q int, dst *float64, step, grow int, a *float64, strideA int, b *float64, strideB, rows int) {
+	switch 4*p + q {
+	case 4*1 + 1:
+		dots1x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*1 + 2:
+		dots1x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*1 + 3:
+		dots1x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*2 + 1:
+		dots2x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*2 + 2:
+		dots2x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*2 + 3:
+		dots2x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*3 + 1:
+		dots3x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*3 + 2:
+		dots3x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*3 + 3:
+		dots3x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*4 + 1:
+		dots4x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*4 + 2:
+		dots4x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*4 + 3:
+		dots4x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	}
+}

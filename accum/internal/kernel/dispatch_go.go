@@ -1,0 +1,21 @@
+//go:build !amd64 || noasm
+
+package kernel
+
+// useAVX2 is false where there is no assembly.
+const useAVX2 = false
+
+// DisableAVX2 does nothing in this build, which has no assembly.
+func DisableAVX2() (restore func()) { return func() {} }
+
+func gram(dst []float64, x []float64, stride, rows, cols int) {
+	gramTiles(dst, x, stride, rows, cols, tileWidth)
+}
+
+func cross(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
+	crossTiles(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows, tileWidth)
+}
+
+func scale(dst, x, w []float64) { scaleRef(dst, x, w) }
+
+func axpy(t float64, x, y []float64) { axpyRef(t, x, y) }
