@@ -216,24 +216,11 @@ func (w *firstWorker) clusterRows(t *keyTable, ids []int32) {
 }
 
 func (w *firstWorker) fold() error {
-	var held int64
-	for i, t := range w.tables {
+	for _, t := range w.tables {
 		t.flush()
-		held += t.memory() + w.tups[i].memory()
 	}
-	columns := int64(w.lay.p0 + 2)
-	for i := range w.lay.tables {
-		s := &w.lay.tables[i]
-		if g := w.lay.groupIndex(s.cats); g >= 0 {
-			columns += int64(len(w.tables[i].rows)) * int64(len(w.lay.groups[g].parts))
-		}
-	}
-	for _, c := range w.cats {
-		held += c.memory()
-	}
-	// The solve holds about four dense matrices of the internal columns.
-	if need := held + 4*8*columns*columns; len(w.tables) > 0 && need > w.budget.memory {
-		return &MemoryError{What: w.categoriesText(), Need: need, Have: w.budget.memory}
+	if err := checkLevels(w.lay, w.cats, w.tups, w.tables, w.budget.memory); err != nil {
+		return err
 	}
 	var cl int64
 	for k, t := range w.clusters {
@@ -255,14 +242,31 @@ func (w *firstWorker) clusterBytes(k int) int64 {
 	return int64(len(t.rows)) * int64(t.width) * 16
 }
 
-func (w *firstWorker) categoriesText() string {
-	big, name := 0, ""
-	for c, in := range w.cats {
-		if n := in.size(); n > big {
-			big, name = n, w.lay.design.Categories[c].Text
+// checkLevels refuses category sums, and the solve that follows, beyond memory.
+func checkLevels(l *layout, cats []*interner, tups []*tuples, tables []*keyTable, memory int64) error {
+	if len(tables) == 0 {
+		return nil
+	}
+	var held int64
+	columns := int64(l.p0 + 2)
+	for i, t := range tables {
+		held += t.memory() + tups[i].memory()
+		if g := l.groupIndex(l.tables[i].cats); g >= 0 {
+			columns += int64(len(t.rows)) * int64(len(l.groups[g].parts))
 		}
 	}
-	return fmt.Sprintf("each(%s) has %d levels or more", name, big)
+	most, name := 0, ""
+	for c, in := range cats {
+		held += in.memory()
+		if n := in.size(); n > most {
+			most, name = n, l.design.Categories[c].Text
+		}
+	}
+	// The solve holds about four dense matrices of the internal columns.
+	if need := held + 4*8*columns*columns; need > memory {
+		return &MemoryError{What: fmt.Sprintf("each(%s) has %d levels or more", name, most), Need: need, Have: memory}
+	}
+	return nil
 }
 
 func (w *firstWorker) segment(int) error {

@@ -165,6 +165,11 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, b *budget) (s *
 	if needs.Fourth {
 		s.quart = newQuartic(l.p0 + 2)
 	}
+	for _, e := range epochs { // one worker alone may not have seen how many there are
+		if err := checkLevels(l, e.cats, e.tups, e.tables, b.memory); err != nil {
+			return nil, 0, err
+		}
+	}
 	s.indexLevels()
 	if err := s.assemble(); err != nil {
 		return nil, 0, err

@@ -113,7 +113,7 @@ func (f *fitter) sumLoss() {
 		return
 	}
 	if f.rssLoss = 0x1p-53 * x.svv / x.rss; f.rssLoss > lossLimit {
-		f.note("digits", "the residual sum of squares has about %d digits left: the rows that set shift and scale did not stand for the whole input, and it can be read once only", digits(f.rssLoss))
+		f.note("digits", "the residual sum of squares has about %d digits left: the rows that set shift and scale did not stand for the whole input; --passes 2 keeps them", digits(f.rssLoss))
 	}
 }
 
@@ -263,7 +263,7 @@ func (f *fitter) errorsFor(k Kind) Errors {
 			return e
 		}
 		if f.rssLoss > lossRefuse {
-			x.unavailable(&e, "the residual sum of squares cancels (relative error up to %.1e) and the input can be read once only; use --passes 2", f.rssLoss)
+			x.unavailable(&e, "the residual sum of squares cancels (relative error up to %.1e); use --passes 2", f.rssLoss)
 			return e
 		}
 		x.infer(&e, x.classical(), f.o.Level, f.o.Covariance)
@@ -295,7 +295,7 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	} else {
 		meat = f.fourth
 		if f.loss > lossRefuse {
-			x.unavailable(e, "fourth moments cancel (relative error up to %.1e) and the input can be read once only; use --passes 2", f.loss)
+			x.unavailable(e, "fourth moments cancel (relative error up to %.1e); use --passes 2", f.loss)
 			return
 		}
 	}
@@ -401,7 +401,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		x.unavailable(e, "all rows are in one cluster; at least two are needed")
 		return
 	case s.Coarse && f.sums == nil:
-		x.unavailable(e, "the clusters' sums lost digits and the input can be read once only; use --passes 2")
+		x.unavailable(e, "the clusters' sums lost digits; use --passes 2")
 		return
 	}
 	r := x.clusterRobust(k.Name, sc)
