@@ -1,5 +1,7 @@
 package accum
 
+import "github.com/tallrow/tallrow/accum/internal/kernel"
+
 // denseMap returns the width x width matrix J with z_to = J z_from for the same
 // row in two frames.
 func denseMap(l *layout, from, to *Frame) []float64 {
@@ -88,7 +90,7 @@ func matmul(a, b []float64, n int, transposed bool) []float64 {
 		}
 		for t := range n {
 			if x := a[i*n+t]; x != 0 {
-				axpy(x, b[t*n:(t+1)*n], out[i*n:(i+1)*n])
+				kernel.Axpy(x, b[t*n:(t+1)*n], out[i*n:(i+1)*n])
 			}
 		}
 	}
@@ -138,7 +140,7 @@ func (s *State) move(i int, m []float64, n int) []float64 {
 	half := make([]float64, n*n)
 	for r, sp := range rows {
 		for k, c := range sp.col {
-			axpy(sp.val[k], m[c*n:(c+1)*n], half[r*n:(r+1)*n])
+			kernel.Axpy(sp.val[k], m[c*n:(c+1)*n], half[r*n:(r+1)*n])
 		}
 	}
 	out := make([]float64, n*n)

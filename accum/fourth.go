@@ -21,15 +21,18 @@ type quartic struct {
 }
 
 // quarticRows bounds the rows summed at once, so that the pairs fit the cache.
-const quarticRows = 128
+const (
+	quarticRows   = 128
+	quarticStride = quarticRows + 8 // not a power of two: see stride
+)
 
 func newQuartic(p int) *quartic {
 	q := &quartic{p: p, off: make([]int, p+1)}
 	for b := range p {
 		q.off[b+1] = q.off[b] + (b+1)*q.pairs(b)
 	}
-	q.pair = make([]float64, q.pairs(0)*quarticRows)
-	q.left = make([]float64, p*quarticRows)
+	q.pair = make([]float64, q.pairs(0)*quarticStride)
+	q.left = make([]float64, p*quarticStride)
 	return q
 }
 
@@ -69,17 +72,17 @@ func (q *quartic) add(dst, z []float64, rows int) {
 		k := 0
 		for c := range q.p {
 			for d := c; d < q.p; d++ {
-				kernel.Scale(q.pair[k*quarticRows:k*quarticRows+n], z[c*stride+r:c*stride+r+n], z[d*stride+r:d*stride+r+n])
+				kernel.Scale(q.pair[k*quarticStride:k*quarticStride+n], z[c*stride+r:c*stride+r+n], z[d*stride+r:d*stride+r+n])
 				k++
 			}
 		}
 		all := q.pairs(0)
 		for b := range q.p {
 			for a := 0; a <= b; a++ {
-				kernel.Scale(q.left[a*quarticRows:a*quarticRows+n], z[a*stride+r:a*stride+r+n], z[b*stride+r:b*stride+r+n])
+				kernel.Scale(q.left[a*quarticStride:a*quarticStride+n], z[a*stride+r:a*stride+r+n], z[b*stride+r:b*stride+r+n])
 			}
 			np := q.pairs(b)
-			kernel.Cross(dst[q.off[b]:q.off[b+1]], np, q.left, quarticRows, b+1, q.pair[(all-np)*quarticRows:], quarticRows, np, n)
+			kernel.Cross(dst[q.off[b]:q.off[b+1]], np, q.left, quarticStride, b+1, q.pair[(all-np)*quarticStride:], quarticStride, np, n)
 		}
 	}
 }

@@ -3,6 +3,7 @@ package accum
 import (
 	"math"
 
+	"github.com/tallrow/tallrow/accum/internal/kernel"
 	"gonum.org/v1/gonum/mat"
 )
 
@@ -126,7 +127,7 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 			for i := range qs {
 				d := dotp(qs[i].q, v)
 				coef[i] += d
-				axpy(-d, qs[i].q, v)
+				kernel.Axpy(-d, qs[i].q, v)
 			}
 		}
 		return math.Sqrt(dotp(v, v))
@@ -368,10 +369,4 @@ func dotp(a, b []float64) float64 {
 		s = math.FMA(a[i], b[i], s)
 	}
 	return s
-}
-
-func axpy(t float64, x, y []float64) {
-	for i := range x {
-		y[i] = math.FMA(t, x[i], y[i])
-	}
 }

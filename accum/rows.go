@@ -17,7 +17,9 @@ import (
 // foldBatches is the length of a fold of keyed sums, in batches (65,536 rows).
 const foldBatches = 128
 
-const stride = stream.BatchRows
+// stride separates the columns of a block: not a multiple of 4 KiB, so that they
+// do not compete for the same cache sets.
+const stride = stream.BatchRows + 8
 
 // loader turns batches into rows z in a frame. Each worker has one.
 type loader struct {
@@ -79,7 +81,7 @@ func (w *loader) load() {
 			}
 			for i := range j {
 				if t := f.T[i*l.p0+j]; t != 0 {
-					axpy(t, w.col(1+i), u)
+					kernel.Axpy(t, w.col(1+i), u)
 				}
 			}
 		}
@@ -90,7 +92,7 @@ func (w *loader) load() {
 	}
 	for j, h := range f.H {
 		if h != 0 {
-			axpy(-h, w.col(1+j), v)
+			kernel.Axpy(-h, w.col(1+j), v)
 		}
 	}
 	if w.root != nil {

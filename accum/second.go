@@ -140,7 +140,7 @@ func (w *secondWorker) add() error {
 	e := w.e[:n]
 	copy(e, w.col(l.v()))
 	for j := range l.p0 + 1 {
-		axpy(rp.Theta[j], w.col(j), e)
+		kernel.Axpy(rp.Theta[j], w.col(j), e)
 	}
 	for g := range l.groups {
 		for p, c := range l.groups[g].parts {
@@ -277,7 +277,7 @@ func (w *secondWorker) leverages(h []float64) {
 			clear(t)
 			for j := range l.p0 + 1 {
 				if x := rp.Whitener[j*rp.K+k]; x != 0 {
-					axpy(x, w.col(j), t)
+					kernel.Axpy(x, w.col(j), t)
 				}
 			}
 			for r, x := range t {

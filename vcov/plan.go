@@ -40,16 +40,18 @@ type PassCost struct {
 	Share float64 `json:"share"` // of the whole
 }
 
-// Costs of one row in nanoseconds, measured on one loaded core with the plain-Go
-// kernel, 2 to 11 columns, Parquet and CSV: only their ratios matter.
+// Costs of one row in nanoseconds, measured on one core with the AVX2 kernel, 3 to
+// 12 columns, Parquet and CSV: only their ratios matter. They are the same on every
+// machine, so that the route hangs on input and model alone; without AVX2 fourth
+// moments cost ten times as much, and --passes 2 is worth a try from 6 terms on.
 const (
 	costParquetColumn = 10.0
-	costCSVField      = 25.0
-	costGramPair      = 0.8 // for each product of two columns
-	costQuartic       = 1.0 // for each product of four
-	costRowTerm       = 3.0 // row pass, for each term
-	costRowPair       = 0.4 // row pass, leverage, for each pair of terms
-	maxPipeTerms      = 25  // beyond it fourth moments cost more than a copy of the input
+	costCSVField      = 22.0
+	costGramPair      = 0.1  // for each product of two columns
+	costQuartic       = 0.08 // for each product of four
+	costRowTerm       = 3.0  // row pass, for each term
+	costRowPair       = 0.1  // row pass, leverage, for each pair of terms
+	maxPipeTerms      = 25   // beyond it fourth moments cost more than a copy of the input
 )
 
 // defaultMemory bounds the sums when the caller does not.
