@@ -351,7 +351,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		// The unit of the keyed sums did not suit the data: sum again with one that does.
 		s2, err := first(ctx, src, d, needs, o, f, refit)
 		if err == nil {
-			s2.Repeated = append(s2.Repeated, "keyed sums needed another unit")
+			s2.Repeated = append(s2.Repeated, "sums by level or cluster were far larger or smaller than its first rows announced")
 		}
 		return s2, err
 	}

@@ -24,7 +24,9 @@ type RowSums struct {
 	// entries, v last) in segment order, and the second moments of all others.
 	Heavy []HeavyRow
 	Light []float64
-	Bytes int64
+	// Passes is 1, or 2 if the keyed sums needed another unit; Bytes is of all.
+	Passes int
+	Bytes  int64
 }
 
 // HeavyRow is a row of high leverage, times the root of its weight.
@@ -84,7 +86,7 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 		w.heavyCount += o.heavyCount
 		w.heavy = append(w.heavy, o.heavy...)
 	}
-	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Bytes: p.bytes}
+	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Passes: 1, Bytes: p.bytes}
 	// Meats are judged by the unit's range; scores by their digits too.
 	need, best := false, -1074
 	see := func(t *keyTable) {
@@ -152,8 +154,11 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
 		out.Scores = append(out.Scores, sc)
 	}
-	if need && unit == defaultUnit {
+	switch {
+	case need && unit == defaultUnit:
 		return out, best, nil
+	case need:
+		return nil, 0, errors.New("the sums of residuals leave the range of float64: values are too large; divide the outcome or a term by a power of ten")
 	}
 	return out, unit, nil
 }

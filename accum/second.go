@@ -425,7 +425,12 @@ func (w *secondWorker) segment(number int) error {
 func Second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options) (*RowSums, error) {
 	out, retry, err := second(ctx, src, s, rp, o, defaultUnit)
 	if err == nil && retry != defaultUnit {
-		out, _, err = second(ctx, src, s, rp, o, retry)
+		// The unit of the keyed sums did not suit the data: sum again with one that does.
+		first := out.Bytes
+		if out, _, err = second(ctx, src, s, rp, o, retry); err == nil {
+			out.Passes++
+			out.Bytes += first
+		}
 	}
 	return out, err
 }

@@ -78,8 +78,7 @@ func (f *fitter) first() error {
 	if err != nil {
 		return err
 	}
-	f.passes++
-	f.bytes += s.Bytes
+	f.count(s)
 	if err := f.solve(s); err != nil {
 		return err
 	}
@@ -88,8 +87,7 @@ func (f *fitter) first() error {
 		if err != nil {
 			return err
 		}
-		f.passes++
-		f.bytes += s.Bytes
+		f.count(s)
 		f.warn = append(f.warn, Warning{Code: "frame-renewed", Text: "the first pass was repeated: the rows that set shift and scale did not stand for the whole input"})
 		if err := f.solve(s); err != nil {
 			return err
@@ -101,6 +99,15 @@ func (f *fitter) first() error {
 	}
 	f.sumLoss()
 	return nil
+}
+
+// count adds the passes that made s.
+func (f *fitter) count(s *accum.State) {
+	f.passes += 1 + len(s.Repeated)
+	f.bytes += s.Bytes * int64(1+len(s.Repeated))
+	for _, why := range s.Repeated {
+		f.note("unit-renewed", "the first pass was repeated: %s", why)
+	}
 }
 
 // sumLoss says where the second moments themselves have lost digits.
@@ -200,7 +207,7 @@ func (f *fitter) second() error {
 	if err != nil {
 		return err
 	}
-	f.passes++
+	f.passes += sums.Passes
 	f.bytes += sums.Bytes
 	f.sums = sums
 	if (seen["hc2"] || seen["hc3"]) && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency {
@@ -217,7 +224,7 @@ func (f *fitter) heavy(rp accum.RowPass) error {
 	if err != nil {
 		return err
 	}
-	f.passes++
+	f.passes += sums.Passes
 	f.bytes += sums.Bytes
 	for i, k := range f.kinds {
 		if !f.sol.heavyMeat(sums, hcWeight[k], sums.Meats[i]) {
