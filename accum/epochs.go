@@ -14,8 +14,7 @@ type epoch struct {
 	frame    *Frame
 	gram     []float64 // packed, width columns
 	fourth   []float64
-	cats     []*interner
-	tups     []*tuples
+	cats     *categories
 	tables   []*keyTable
 	keys     []*interner
 	clusters []*keyTable
@@ -32,7 +31,7 @@ type epoch struct {
 // joinWorkers joins the sums of workers exactly: the order does not show.
 func joinWorkers(ws []*firstWorker) *epoch {
 	w := ws[0]
-	e := &epoch{frame: w.frame, cats: w.cats, tups: w.tups, tables: w.tables, keys: w.keys, clusters: w.clusters,
+	e := &epoch{frame: w.frame, cats: w.cats, tables: w.tables, keys: w.keys, clusters: w.clusters,
 		lone: w.lone, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
 	for _, o := range ws[1:] {
@@ -40,13 +39,9 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		if w.q != nil {
 			w.fourX.merge(o.fourX)
 		}
-		cat := make([][]int32, len(o.cats))
-		for c, in := range o.cats {
-			cat[c] = joinKeys(e.cats[c], in)
-		}
+		to := e.cats.join(o.cats, func(i int) int { return len(o.tables[i].rows) })
 		for i, t := range o.tables {
-			to := joinTuples(e.tups[i], o.tups[i], w.lay.tables[i].cats, cat, len(t.rows))
-			e.tables[i].mergeFrom(t, func(id int32) int32 { return to[id] })
+			e.tables[i].mergeFrom(t, to[i])
 		}
 		for k, t := range o.clusters {
 			if t == nil {
@@ -54,7 +49,7 @@ func joinWorkers(ws []*firstWorker) *epoch {
 			}
 			to := joinKeys(e.keys[k], o.keys[k])
 			if !w.budget.dropped.Load() {
-				e.clusters[k].mergeFrom(t, func(id int32) int32 { return to[id] })
+				e.clusters[k].mergeFrom(t, to)
 			}
 			e.lone[k].mergeFrom(o.lone[k], to)
 		}
@@ -95,29 +90,6 @@ func joinVaried(value []float64, varied []bool, v []float64, d []bool) {
 		}
 		varied[j] = varied[j] || d[j] || (x != 0 && x != value[j])
 	}
-}
-
-func joinKeys(dst, src *interner) []int32 {
-	to := make([]int32, src.size())
-	for i := range to {
-		to[i] = dst.put(src.key(int32(i)))
-	}
-	return to
-}
-
-// joinTuples returns the ids in dst of the n combinations of src.
-func joinTuples(dst, src *tuples, cats []int, cat [][]int32, n int) []int32 {
-	to := make([]int32, n)
-	ids := make([]int32, len(cats))
-	one := make([][]int32, len(cats))
-	for i := range to {
-		src.split(int32(i), ids)
-		for c, id := range ids {
-			one[c] = []int32{cat[cats[c]][id]}
-		}
-		dst.join(one, to[i:i+1])
-	}
-	return to
 }
 
 // epochWorker sums the first segment of a source that cannot be sampled, in

@@ -4,7 +4,6 @@ import (
 	"cmp"
 	"context"
 	"errors"
-	"fmt"
 	"math"
 	"sync/atomic"
 
@@ -27,12 +26,9 @@ type firstWorker struct {
 	zs     []float64 // z times a root of the weight
 	root4  []float64
 
-	cats   []*interner
-	tups   []*tuples
+	cats   *categories
 	tables []*keyTable
-	ids    [][]int32
 	tid    []int32
-	sel    [][]int32
 
 	keys     []*interner // nil for keys that are not wanted
 	clusters []*keyTable
@@ -69,13 +65,9 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker
 		w.fourX = make(superVec, w.q.size())
 		w.root4 = make([]float64, stride)
 	}
-	for _, c := range l.design.Categories {
-		w.cats = append(w.cats, newInterner(c.Kind))
-		w.ids = append(w.ids, make([]int32, stride))
-	}
+	w.cats = newCategories(l)
 	w.tid = make([]int32, stride)
 	for i := range l.tables {
-		w.tups = append(w.tups, newTuples(len(l.tables[i].cats)))
 		w.tables = append(w.tables, newKeyTable(len(l.tables[i].prods), b.unit))
 	}
 	w.keys = make([]*interner, len(l.design.Keys))
@@ -111,18 +103,9 @@ func (w *firstWorker) add() error {
 		w.countNonzero(j)
 	}
 	if len(l.tables) > 0 {
-		for c, in := range w.cats {
-			in.ids(&w.block.Cat[c], n, w.ids[c])
-		}
-		for i := range l.tables {
-			s := &l.tables[i]
-			w.sel = w.sel[:0]
-			for _, c := range s.cats {
-				w.sel = append(w.sel, w.ids[c])
-			}
-			tid := w.tid[:n]
-			w.tups[i].join(w.sel, tid)
-			addProducts(w.tables[i], tid, w.zs, s.prods)
+		w.cats.number(&w.block)
+		for i, t := range w.tables {
+			addProducts(t, w.cats.rows[i][:n], w.zs, l.tables[i].prods)
 		}
 	}
 	if !w.budget.dropped.Load() {
@@ -219,7 +202,7 @@ func (w *firstWorker) fold() error {
 	for _, t := range w.tables {
 		t.flush()
 	}
-	if err := checkLevels(w.lay, w.cats, w.tups, w.tables, w.budget.memory); err != nil {
+	if err := w.cats.check(w.tables, w.budget.memory); err != nil {
 		return err
 	}
 	var cl int64
@@ -240,33 +223,6 @@ func (w *firstWorker) fold() error {
 func (w *firstWorker) clusterBytes(k int) int64 {
 	t := w.clusters[k]
 	return int64(len(t.rows)) * int64(t.width) * 16
-}
-
-// checkLevels refuses category sums, and the solve that follows, beyond memory.
-func checkLevels(l *layout, cats []*interner, tups []*tuples, tables []*keyTable, memory int64) error {
-	if len(tables) == 0 {
-		return nil
-	}
-	var held int64
-	columns := int64(l.p0 + 2)
-	for i, t := range tables {
-		held += t.memory() + tups[i].memory()
-		if g := l.groupIndex(l.tables[i].cats); g >= 0 {
-			columns += int64(len(t.rows)) * int64(len(l.groups[g].parts))
-		}
-	}
-	most, name := 0, ""
-	for c, in := range cats {
-		held += in.memory()
-		if n := in.size(); n > most {
-			most, name = n, l.design.Categories[c].Text
-		}
-	}
-	// The solve holds about four dense matrices of the internal columns.
-	if need := held + 4*8*columns*columns; need > memory {
-		return &MemoryError{What: fmt.Sprintf("each(%s) has %d levels or more", name, most), Need: need, Have: memory}
-	}
-	return nil
 }
 
 func (w *firstWorker) segment(int) error {

@@ -89,16 +89,13 @@ func (t *keyTable) fix(id int32) []fixed {
 	return t.pages[p][o : o+t.width]
 }
 
-// mergeFrom adds the sums of o, whose key i is key to(i) here.
-func (t *keyTable) mergeFrom(o *keyTable, to func(int32) int32) {
+// mergeFrom adds the sums of o, whose key i is key to[i] here.
+func (t *keyTable) mergeFrom(o *keyTable, to []int32) {
 	for i := range o.rows {
-		id := to(int32(i))
+		id := to[i]
 		t.grow(id)
 		t.rows[id] += o.rows[i]
-		dst, src := t.fix(id), o.fix(int32(i))
-		for j := range dst {
-			dst[j] = dst[j].add(src[j])
-		}
+		mergeFixed(t.fix(id), o.fix(int32(i)))
 	}
 	t.max = math.Max(t.max, o.max)
 	t.count += o.count

@@ -52,18 +52,13 @@ func (s *State) unchanged(p *pass) error {
 func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (*RowSums, int, error) {
 	w := ws[0]
 	for _, o := range ws[1:] {
-		cat := make([][]int32, len(o.cats))
-		for c, in := range o.cats {
-			cat[c] = joinKeys(w.cats[c], in)
-		}
-		to := make([][]int32, len(o.tups))
-		for i := range o.tups {
+		to := w.cats.join(o.cats, func(i int) int {
 			n := 0
 			for _, m := range o.allMeats() {
 				n = max(n, len(m.tables[i].rows))
 			}
-			to[i] = joinTuples(w.tups[i], o.tups[i], s.lay.tables[i].cats, cat, n)
-		}
+			return n
+		})
 		mine := w.allMeats()
 		for k, m := range o.allMeats() {
 			if !m.used {
@@ -72,12 +67,12 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 			mine[k].used = true
 			mine[k].gramX.merge(m.gramX)
 			for i, t := range m.tables {
-				mine[k].tables[i].mergeFrom(t, func(id int32) int32 { return to[i][id] })
+				mine[k].tables[i].mergeFrom(t, to[i])
 			}
 		}
 		for i, t := range o.scores {
 			kto := joinKeys(w.keys[i], o.keys[i])
-			w.scores[i].mergeFrom(t, func(id int32) int32 { return kto[id] })
+			w.scores[i].mergeFrom(t, kto)
 			w.loneT[i].mergeFrom(o.loneT[i], kto)
 			w.loneC[i].mergeFrom(o.loneC[i], kto)
 		}
@@ -94,30 +89,16 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 		need = need || over
 		best = max(best, t.betterUnit())
 	}
-	tups := w.tups
 	full := func(m *meat, cols int) []float64 {
 		n := len(s.Columns) + 1
 		out := make([]float64, n*n)
 		gram := make([]float64, len(m.gram))
 		m.gramX.values(gram)
-		at := s.denseAt()[:cols]
-		for j := range cols {
-			for i := 0; i <= j; i++ {
-				x := gram[j*(j+1)/2+i]
-				out[at[i]*n+at[j]], out[at[j]*n+at[i]] = x, x
-			}
-		}
-		for ti, t := range m.tables {
+		s.placeDense(out, gram, cols)
+		for _, t := range m.tables {
 			see(t)
-			vals := make([]float64, t.width)
-			for id := range t.rows {
-				for j, f := range t.fix(int32(id)) {
-					vals[j] = f.float(t.unit)
-				}
-				e := &epoch{cats: w.cats, tups: tups}
-				s.placeTable(out, ti, s.combo(e, ti, int32(id)), vals)
-			}
 		}
+		s.placeTables(out, w.cats, m.tables)
 		return out
 	}
 	for _, m := range w.meats {

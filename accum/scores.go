@@ -18,10 +18,6 @@ type Scores struct {
 	// in one cluster only and has one value elsewhere, so that it and the constant
 	// together live in that cluster.
 	Lone, LoneZero []bool
-	// Cancelled bounds the digits lost: the largest ratio of what was added up to
-	// form a column's scores to what is left, as root mean squares. 1 for scores
-	// that were summed row by row.
-	Cancelled []float64
 	// Gross is the sum over clusters of the square of what was added up; nil for
 	// scores that were summed row by row.
 	Gross []float64
@@ -119,14 +115,7 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 			}
 		}
 	}
-	sc.Cancelled, sc.Gross = make([]float64, k), gross
-	for a := range k {
-		var net float64
-		for g := range order {
-			net += sc.S[g*k+a] * sc.S[g*k+a]
-		}
-		sc.Cancelled[a] = gross[a] / net
-	}
+	sc.Gross = gross
 	return sc, nil
 }
 

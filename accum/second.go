@@ -70,10 +70,7 @@ type secondWorker struct {
 	lone  *meat
 	light *meat
 
-	cats []*interner
-	tups []*tuples
-	ids  [][]int32
-	tid  [][]int32 // for each table
+	cats *categories
 	base [][]int32 // internal column of each combination, by group and tuple id
 	rowb [][]int32 // internal column of each row, by group
 	quad []float64 // W W' when there are categories
@@ -104,14 +101,7 @@ func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, quad []float64)
 	if rp.Heavy {
 		w.light = newMeat(l, l.p0+2, unit)
 	}
-	for _, c := range l.design.Categories {
-		w.cats = append(w.cats, newInterner(c.Kind))
-		w.ids = append(w.ids, make([]int32, stride))
-	}
-	for i := range l.tables {
-		w.tups = append(w.tups, newTuples(len(l.tables[i].cats)))
-		w.tid = append(w.tid, make([]int32, stride))
-	}
+	w.cats = newCategories(l)
 	w.base = make([][]int32, len(l.groups))
 	for range l.groups {
 		w.rowb = append(w.rowb, make([]int32, stride))
@@ -132,7 +122,7 @@ func (w *secondWorker) loading() *loader { return w.loader }
 
 func (w *secondWorker) add() error {
 	w.load()
-	if err := w.categories(); err != nil {
+	if err := w.findColumns(); err != nil {
 		return err
 	}
 	l, n, rp := w.lay, w.block.Rows, w.pass
@@ -223,40 +213,27 @@ func (w *secondWorker) add() error {
 	return nil
 }
 
-// categories finds, for each row and group, the internal column of its indicator.
-func (w *secondWorker) categories() error {
+// findColumns finds, for each row and group, the internal column of its indicator.
+func (w *secondWorker) findColumns() error {
 	l, n := w.lay, w.block.Rows
 	if len(l.tables) == 0 {
 		return nil
 	}
-	for c, in := range w.cats {
-		in.ids(&w.block.Cat[c], n, w.ids[c])
-	}
-	var sel [][]int32
+	w.cats.number(&w.block)
 	for i := range l.tables {
-		s := &l.tables[i]
-		sel = sel[:0]
-		for _, c := range s.cats {
-			sel = append(sel, w.ids[c])
-		}
-		w.tups[i].join(sel, w.tid[i][:n])
-		g := l.groupIndex(s.cats)
+		g := l.groupIndex(l.tables[i].cats)
 		if g < 0 {
 			continue
 		}
-		for r, id := range w.tid[i][:n] {
+		for r, id := range w.cats.rows[i][:n] {
 			for int(id) >= len(w.base[g]) {
 				w.base[g] = append(w.base[g], -1)
 			}
 			b := w.base[g][id]
 			if b < 0 {
-				combo := make([]int32, len(s.cats))
-				w.tups[i].split(id, combo)
-				for j, c := range s.cats {
-					k := w.cats[c].key(combo[j])
-					if combo[j] = w.state.levels[c].find(k); combo[j] < 0 {
-						return &ChangedError{fmt.Sprintf("each(%s) has a level that was not there before", l.design.Categories[c].Text)}
-					}
+				combo := w.state.combo(w.cats, i, id)
+				if c := slices.Index(combo, -1); c >= 0 {
+					return &ChangedError{fmt.Sprintf("each(%s) has a level that was not there before", l.design.Categories[l.tables[i].cats[c]].Text)}
 				}
 				if b = int32(w.state.Column(g, combo, 0)); b < 0 {
 					return &ChangedError{"levels occur together that did not before"}
@@ -330,7 +307,7 @@ func (w *secondWorker) addMeat(m *meat, cols int) {
 	w.scaled(w.zs, w.mult, l.width)
 	kernel.Gram(m.gram, w.zs, stride, n, cols)
 	for i := range l.tables {
-		addProducts(m.tables[i], w.tid[i][:n], w.zs, l.tables[i].prods)
+		addProducts(m.tables[i], w.cats.rows[i][:n], w.zs, l.tables[i].prods)
 	}
 }
 

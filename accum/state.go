@@ -166,7 +166,7 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, b *budget) (s *
 		s.quart = newQuartic(l.p0 + 2)
 	}
 	for _, e := range epochs { // one worker alone may not have seen how many there are
-		if err := checkLevels(l, e.cats, e.tups, e.tables, b.memory); err != nil {
+		if err := e.cats.check(e.tables, b.memory); err != nil {
 			return nil, 0, err
 		}
 	}
@@ -196,7 +196,7 @@ func (s *State) indexLevels() {
 	for c := range l.design.Categories {
 		seen := newInterner(l.design.Categories[c].Kind)
 		for _, e := range s.epochs {
-			joinKeys(seen, e.cats[c])
+			joinKeys(seen, e.cats.levels[c])
 		}
 		keys := make([]Key, seen.size())
 		for i := range keys {
@@ -221,7 +221,7 @@ func (s *State) indexLevels() {
 		index := &comboIndex{}
 		for _, e := range s.epochs {
 			for id, n := range e.tables[ti].rows {
-				k := s.combo(e, ti, int32(id))
+				k := s.combo(e.cats, ti, int32(id))
 				name := fmt.Sprint(k)
 				if _, ok := rows[name]; !ok {
 					index.keys = append(index.keys, k)
@@ -248,13 +248,13 @@ func (s *State) indexLevels() {
 	}
 }
 
-// combo returns the levels of combination id of table ti, as places in Levels.
-func (s *State) combo(e *epoch, ti int, id int32) []int32 {
-	cats := s.lay.tables[ti].cats
-	k := make([]int32, len(cats))
-	e.tups[ti].split(id, k)
-	for i, c := range cats {
-		k[i] = s.levels[c].find(e.cats[c].key(k[i]))
+// combo returns the levels of combination id of table ti, as places in Levels; -1
+// for a level that the state does not have.
+func (s *State) combo(c *categories, ti int, id int32) []int32 {
+	keys := c.split(ti, id, nil)
+	k := make([]int32, len(keys))
+	for i, cat := range s.lay.tables[ti].cats {
+		k[i] = s.levels[cat].find(keys[i])
 	}
 	return k
 }
@@ -267,17 +267,8 @@ func (s *State) assemble() error {
 	s.maps = make([][]float64, len(s.epochs))
 	for i, e := range s.epochs {
 		m := make([]float64, n*n)
-		s.placeDense(m, e.gram)
-		for ti := range l.tables {
-			t := e.tables[ti]
-			vals := make([]float64, t.width)
-			for id := range t.rows {
-				for j, f := range t.fix(int32(id)) {
-					vals[j] = f.float(t.unit)
-				}
-				s.placeTable(m, ti, s.combo(e, ti, int32(id)), vals)
-			}
-		}
+		s.placeDense(m, e.gram, l.p0+2)
+		s.placeTables(m, e.cats, e.tables)
 		s.maps[i] = denseMap(l, e.frame, s.Frame)
 		if e.frame != s.Frame {
 			m = s.move(i, m, n)
@@ -294,11 +285,11 @@ func (s *State) assemble() error {
 	return nil
 }
 
-// placeDense puts the packed sums of (1, u, v) into the matrix.
-func (s *State) placeDense(m, gram []float64) {
+// placeDense puts the packed sums of the first cols of (1, u, v) into the matrix.
+func (s *State) placeDense(m, gram []float64, cols int) {
 	n := len(s.Columns) + 1
 	at := s.denseAt()
-	for j := range s.lay.p0 + 2 {
+	for j := range cols {
 		for i := 0; i <= j; i++ {
 			x := gram[j*(j+1)/2+i]
 			m[at[i]*n+at[j]], m[at[j]*n+at[i]] = x, x
@@ -314,6 +305,19 @@ func (s *State) denseAt() []int {
 	}
 	at[s.lay.v()] = len(s.Columns)
 	return at
+}
+
+// placeTables puts the sums of all combinations into the matrix.
+func (s *State) placeTables(m []float64, c *categories, tables []*keyTable) {
+	for ti, t := range tables {
+		vals := make([]float64, t.width)
+		for id := range t.rows {
+			for j, f := range t.fix(int32(id)) {
+				vals[j] = f.float(t.unit)
+			}
+			s.placeTable(m, ti, s.combo(c, ti, int32(id)), vals)
+		}
+	}
 }
 
 // placeTable puts the sums of one combination of levels into the matrix.

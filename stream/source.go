@@ -49,7 +49,7 @@ type Info struct {
 	Format string
 	// Skipped counts names in folders that were passed over (leading _ or .).
 	Skipped int
-	// RowBytes estimates the bytes of memory one worker holds while it reads.
+	// WorkerBytes estimates the bytes of memory one worker holds while it reads.
 	WorkerBytes int64
 }
 

@@ -2,7 +2,6 @@ package vcov
 
 import (
 	"context"
-	"errors"
 	"fmt"
 	"math"
 	"time"
@@ -250,7 +249,7 @@ func digits(loss float64) int {
 
 // errorsFor computes one kind.
 func (f *fitter) errorsFor(k Kind) Errors {
-	x, s := f.sol, f.state
+	x := f.sol
 	e := Errors{Kind: k.Name, Clusters: []string{}, Groups: []int64{}}
 	for _, l := range []*[]Number{&e.SE, &e.DF, &e.T, &e.P, &e.Log10P, &e.Low, &e.High} {
 		*l = []Number{}
@@ -282,7 +281,6 @@ func (f *fitter) errorsFor(k Kind) Errors {
 	if x.perfect && e.Status == "ok" {
 		e.Overall = nil
 	}
-	_ = s
 	return e
 }
 
@@ -420,9 +418,4 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	}
 	x.infer(e, r, f.o.Level, f.o.Covariance)
 	f.tellLost(e, r)
-}
-
-// IsInterrupted reports whether err comes from a cancelled context.
-func IsInterrupted(err error) bool {
-	return errors.Is(err, context.Canceled) || errors.Is(err, context.DeadlineExceeded)
 }

@@ -250,7 +250,6 @@ func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
 	if len(res.Errors) != len(p.opts.Errors) {
 		return nil, &internalError{fmt.Sprintf("%d kinds of errors for %d asked", len(res.Errors), len(p.opts.Errors))}
 	}
-	res.Version = version
 	res.Model.Errors = p.req.names()
 	res.Model.BadRows = s.badRows
 	res.Run.PeakBytes = peakBytes()

@@ -11,10 +11,12 @@ import (
 	"sync"
 	"syscall"
 	"time"
+
+	"github.com/tallrow/tallrow/vcov"
 )
 
 // version is written into results and shown by --version.
-const version = "0.1.0"
+const version = vcov.Version
 
 // Exit statuses.
 const (
