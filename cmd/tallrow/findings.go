@@ -3,6 +3,7 @@ package main
 import (
 	"fmt"
 	"math"
+	"slices"
 	"sort"
 	"strings"
 
@@ -226,15 +227,21 @@ func clusterShape(v *view) []string {
 			continue
 		}
 		seen[name] = true
+		var kinds []string // all that rest on these clusters
+		for _, o := range v.shown {
+			if o.Status == "ok" && slices.Equal(o.Clusters, e.Clusters) {
+				kinds = append(kinds, o.Name())
+			}
+		}
 		few := e.Groups[0]
 		for _, g := range e.Groups {
 			few = min(few, g)
 		}
 		switch s := e.GroupRows; {
 		case few < fewClusters:
-			list = append(list, fmt.Sprintf("There are only %s clusters of %s: with so few, %s tends to come out too small.", count(few), oneLine(name), e.Name()))
+			list = append(list, fmt.Sprintf("There are only %s clusters of %s: with so few, errors by %s tend to come out too small.", count(few), oneLine(name), both(kinds)))
 		case s != nil && float64(s.Median) > 0 && float64(s.Max) > unequalSize*float64(s.Median):
-			list = append(list, fmt.Sprintf("The largest cluster of %s has %s times the rows of the median one: with sizes so unequal %s may come out too small.", oneLine(name), three(float64(s.Max)/float64(s.Median)), e.Name()))
+			list = append(list, fmt.Sprintf("The largest cluster of %s has %s times the rows of the median one: with sizes so unequal errors by %s may come out too small.", oneLine(name), three(float64(s.Max)/float64(s.Median)), both(kinds)))
 		}
 	}
 	return list

@@ -259,7 +259,7 @@ func (v *view) intervalColumns() []column {
 func (v *view) writeLegend(b *strings.Builder, width int) bool {
 	var parts []string
 	if v.anyRatio() {
-		parts = append(parts, "x1.50 after an error: so many times the classical one.")
+		parts = append(parts, "x1.50 after an error: it is 1.50 times the classical one.")
 	}
 	if v.lead != nil {
 		parts = append(parts, "The strip draws the interval (-) and the estimate (o) against zero (|, or + inside the interval), each line on a scale of its own.")
