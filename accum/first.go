@@ -38,7 +38,8 @@ type firstWorker struct {
 	weight  superSum
 	freq    int64
 	rows    int64
-	nonzero []int64
+	nonzero []int64 // of each numeric term, see countNonzero
+	zero    []int64
 	value   []float64 // a nonzero cell of each numeric term
 	varied  []bool    // its nonzero cells are not all equal
 }
@@ -80,7 +81,7 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker
 		w.lone[k] = newLoneTracker(l.p0)
 	}
 	w.zrow = make([]float64, p)
-	w.nonzero = make([]int64, l.p0)
+	w.nonzero, w.zero = make([]int64, l.p0), make([]int64, l.p0)
 	w.value, w.varied = make([]float64, l.p0), make([]bool, l.p0)
 	return w
 }
@@ -102,11 +103,13 @@ func (w *firstWorker) add() error {
 	for j := range l.p0 {
 		w.countNonzero(j)
 	}
+	w.watch.lap(StageSecond)
 	if len(l.tables) > 0 {
 		w.cats.number(&w.block)
 		for i, t := range w.tables {
 			addProducts(t, w.cats.rows[i][:n], w.zs, l.tables[i].prods)
 		}
+		w.watch.lap(StageLevels)
 	}
 	if !w.budget.dropped.Load() {
 		for k, t := range w.clusters {
@@ -118,6 +121,7 @@ func (w *firstWorker) add() error {
 			w.lone[k].add(tid, w.block.X)
 			w.clusterRows(t, tid)
 		}
+		w.watch.lap(StageClusters)
 	}
 	// Last, since frequencies overwrite the scaled columns.
 	if w.q != nil {
@@ -127,32 +131,51 @@ func (w *firstWorker) add() error {
 			z = w.fourthRoots()
 		}
 		w.q.add(w.fourth, z, n)
+		w.watch.lap(StageFourth)
 	}
 	return nil
 }
 
 // countNonzero counts nonzero cells of a term, frequencies as often as they say,
-// and notes whether they differ.
+// and notes whether they differ. It stops where two cells are zero and two are
+// not: all that is asked of the count is whether it is 1 or one less than all.
 func (w *firstWorker) countNonzero(j int) {
-	var nz int64
-	freq := w.root != nil && w.lay.design.Spec.WeightKind == stream.Frequency
-	value, varied := w.value[j], w.varied[j]
-	for r, x := range w.block.X[j][:w.block.Rows] {
-		if x == 0 {
-			continue
-		}
-		if value == 0 {
-			value = x
-		}
-		varied = varied || x != value
-		if freq {
-			nz += int64(w.block.Weight[r])
-		} else {
-			nz++
+	if w.nonzero[j] >= 2 && w.zero[j] >= 2 {
+		return
+	}
+	x := w.block.X[j][:w.block.Rows]
+	var zero int64
+	for _, v := range x {
+		if v == 0 {
+			zero++
 		}
 	}
-	w.value[j], w.varied[j] = value, varied
-	w.nonzero[j] += nz
+	if !w.varied[j] && zero < int64(len(x)) {
+		for _, v := range x {
+			if v == 0 {
+				continue
+			}
+			if w.value[j] == 0 {
+				w.value[j] = v
+			}
+			if v != w.value[j] {
+				w.varied[j] = true
+				break
+			}
+		}
+	}
+	all := int64(len(x))
+	if w.root != nil && w.lay.design.Spec.WeightKind == stream.Frequency {
+		all, zero = 0, 0
+		for r, v := range x {
+			all += int64(w.block.Weight[r])
+			if v == 0 {
+				zero += int64(w.block.Weight[r])
+			}
+		}
+	}
+	w.zero[j] += zero
+	w.nonzero[j] += all - zero
 }
 
 func (w *firstWorker) fourthRoots() []float64 {
@@ -267,7 +290,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 			return nil, err
 		}
 	}
-	p := newPass(o.Meter)
+	p := newPass(o.Meter, o.Timings)
 	p.meter.Pass.Store(1)
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)

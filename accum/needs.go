@@ -24,6 +24,8 @@ type Options struct {
 	// same input always takes the same route. 0 means a sixteenth of Memory.
 	Clusters int64
 	Meter    *Meter
+	// Timings, if not nil, learns where the time goes.
+	Timings *Timings
 }
 
 // MemoryError says that the sums do not fit.

@@ -33,6 +33,7 @@ type loader struct {
 	sums  []float64 // raw column sums of the present segment
 	low   []float64 // p0 columns: what float64 leaves off c; nil unless the frame needs it
 	rest  []float64
+	watch stopwatch
 }
 
 // carefulAbove is the sample condition above which whitening is computed with
@@ -106,6 +107,7 @@ func (w *loader) load() {
 	if w.root != nil {
 		w.sums[l.nx+1] += sum4(w.block.Weight[:n])
 	}
+	w.watch.lap(StageFrame)
 }
 
 // whitenCarefully is u = T'c by compensated dot products (Ogita, Rump, Oishi
@@ -212,7 +214,8 @@ type blockWorker interface {
 
 // pass drives workers over segments.
 type pass struct {
-	meter *Meter
+	meter   *Meter
+	timings *Timings
 
 	mu       sync.Mutex
 	errAt    int // number of the segment of the error, or maxInt
@@ -230,11 +233,11 @@ type problem struct {
 	err         *stream.RowError
 }
 
-func newPass(m *Meter) *pass {
+func newPass(m *Meter, t *Timings) *pass {
 	if m == nil {
 		m = new(Meter)
 	}
-	return &pass{meter: m, errAt: math.MaxInt, checks: map[int]segCheck{}}
+	return &pass{meter: m, timings: t, errAt: math.MaxInt, checks: map[int]segCheck{}}
 }
 
 func (p *pass) fail(segment int, err error) {
@@ -327,6 +330,9 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 		}
 	}()
 	ld := w.loading()
+	ld.watch.to = p.timings
+	ld.watch.start()
+	defer ld.watch.hand()
 	var bytes int64
 	seen, loaded := from.seen, from.loaded
 	for b := from.batches + 1; ; b++ {
@@ -338,6 +344,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 		}
 		if !loaded {
 			err := seg.Read(&ld.batch)
+			ld.watch.lap(StageRead)
 			if errors.Is(err, io.EOF) {
 				break
 			}
@@ -347,6 +354,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 			if err := ld.eval.Eval(&ld.batch, seg.Locate, &ld.block); err != nil {
 				return err
 			}
+			ld.watch.lap(StageTerms)
 		}
 		loaded = false
 		seen += int64(ld.batch.Rows)
@@ -364,6 +372,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 			if err := w.fold(); err != nil {
 				return err
 			}
+			ld.watch.lap(StageJoin)
 		}
 	}
 	if err := w.fold(); err != nil {
@@ -372,6 +381,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 	if err := w.segment(seg.Number()); err != nil {
 		return err
 	}
+	ld.watch.lap(StageJoin)
 	t := seg.Tally()
 	p.meter.Bytes.Add(t.Bytes - bytes)
 	p.mu.Lock()

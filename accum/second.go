@@ -125,6 +125,7 @@ func (w *secondWorker) add() error {
 	if err := w.findColumns(); err != nil {
 		return err
 	}
+	w.watch.lap(StageLevels)
 	l, n, rp := w.lay, w.block.Rows, w.pass
 	freq := w.root != nil && l.design.Spec.WeightKind == stream.Frequency
 	e := w.e[:n]
@@ -205,11 +206,13 @@ func (w *secondWorker) add() error {
 		}
 		w.addMeat(w.light, l.p0+2)
 	}
+	w.watch.lap(StageRows)
 	for i, k := range rp.Scores {
 		w.keys[i].ids(&w.block.Key[k], n, w.kid[:n])
 		w.loneT[i].add(w.kid[:n], w.block.X)
 		w.addScores(w.scores[i], w.loneC[i])
 	}
+	w.watch.lap(StageClusters)
 	return nil
 }
 
@@ -418,7 +421,7 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	} else if stamp != s.stamp && src.Info().Sampled {
 		return nil, 0, &ChangedError{"a file has another size or time"}
 	}
-	p := newPass(o.Meter)
+	p := newPass(o.Meter, o.Timings)
 	p.meter.Pass.Store(2)
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)

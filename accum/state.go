@@ -37,10 +37,13 @@ type State struct {
 	Rows      int64   // used rows
 	Freq      int64   // sum of the weights, as whole numbers
 	Weight    float64 // sum of the weights, correctly rounded
-	NonZero   []int64 // used rows (or frequencies) in which each numeric term is not zero
-	Varied    []bool  // whether its nonzero values differ
-	Segments  int64
-	Bytes     int64
+	// NonZero counts used rows (or frequencies) in which each numeric term is not
+	// zero. Where that are two or more and as many are zero, it is only known to
+	// lie between 2 and all less 2.
+	NonZero  []int64
+	Varied   []bool // whether its nonzero values differ
+	Segments int64
+	Bytes    int64
 	// Fingerprint identifies the used cells of the input.
 	Fingerprint string
 	// Dropped: cluster sums were wanted and outgrew their share of memory.

@@ -36,13 +36,18 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
 		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter}}
+	if o.Timings {
+		f.scan.Timings = new(accum.Timings)
+	}
 	if err := f.first(); err != nil {
 		return nil, err
 	}
 	if err := f.second(); err != nil {
 		return nil, err
 	}
+	begin := time.Now()
 	r := f.result()
+	f.timings(r, time.Since(begin))
 	r.Run.Seconds = Number(time.Since(start).Seconds())
 	return r, nil
 }

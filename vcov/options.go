@@ -27,4 +27,6 @@ type Options struct {
 	Covariance bool
 	// Meter, if not nil, is counted up while the scan runs.
 	Meter *accum.Meter
+	// Timings asks for Run.Timings.
+	Timings bool
 }

@@ -5,7 +5,9 @@ import (
 	"maps"
 	"math"
 	"slices"
+	"time"
 
+	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
 )
 
@@ -170,4 +172,17 @@ func (f *fitter) model() Model {
 		m.Zone = sp.Zone.String()
 	}
 	return m
+}
+
+// timings reports where the time went: the stages of the scan, and the solve.
+func (f *fitter) timings(r *Result, solve time.Duration) {
+	if f.scan.Timings == nil {
+		return
+	}
+	for _, s := range accum.Stages() {
+		if d := f.scan.Timings.Spent(s); d > 0 {
+			r.Run.Timings = append(r.Run.Timings, Timing{s.String(), Number(d.Seconds())})
+		}
+	}
+	r.Run.Timings = append(r.Run.Timings, Timing{"errors", Number(solve.Seconds())})
 }

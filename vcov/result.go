@@ -185,6 +185,14 @@ type Run struct {
 	Seconds    Number `json:"seconds"`
 	PeakBytes  int64  `json:"peak_bytes"` // of the process; set by the caller
 	Condition  Number `json:"condition"`  // of the terms as the sums hold them
+	// Timings says where the time of all workers went, if asked for.
+	Timings []Timing `json:"timings,omitempty"`
+}
+
+// Timing is the time of one stage of the work, over all workers and passes.
+type Timing struct {
+	Stage   string `json:"stage"`
+	Seconds Number `json:"seconds"`
 }
 
 // Warning is something the reader of the numbers must know.

@@ -199,11 +199,10 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 	}
 	p.opts = vcov.Options{
 		Errors: req.withClassical(s.weightKind == "sampling"),
-		Level:  s.level, Passes: s.passes, Meter: new(accum.Meter),
+		Level:  s.level, Passes: s.passes, Meter: new(accum.Meter), Timings: s.timings,
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
 	p.opts.ClusterMemory = s.clusterMemory()
-	p.opts.ClusterMemory = s.memoryBound() / 16
 	return p, nil
 }
 

@@ -143,6 +143,9 @@ var options = []option{
 	{name: "quiet", form: formSwitch, group: "Output", on: onAll, def: "false",
 		help: "no progress on standard error",
 		set:  func(s *settings, v value) error { return setSwitch(&s.quiet, v) }},
+	{name: "timings", form: formSwitch, group: "Output", on: onFit, def: "false",
+		help: "show where the time went: reading, terms, sums, errors",
+		set:  func(s *settings, v value) error { return setSwitch(&s.timings, v) }},
 	{name: "json-schema", form: formSwitch, group: "Output", on: onFit, def: "false",
 		help: "print the JSON Schema of the result and stop",
 		set:  func(s *settings, v value) error { return setSwitch(&s.jsonSchema, v) }},
@@ -151,7 +154,7 @@ var options = []option{
 // later names what is known and refused: it must never be ignored.
 var (
 	laterOptions = []string{"lags", "kernel", "period", "unit", "hypothesis", "draws", "seed", "keep", "checkpoint",
-		"hide-ids", "frame-from", "at", "sweep", "part", "timings"}
+		"hide-ids", "frame-from", "at", "sweep", "part"}
 	laterKinds    = []string{"hc4", "hc4m", "hc5", "cr2", "cr3", "hac", "driscoll-kraay"}
 	laterCommands = []string{"digest", "pool", "launch"}
 )

@@ -1,8 +1,10 @@
 package main
 
 import (
+	"cmp"
 	"fmt"
 	"math"
+	"slices"
 	"sort"
 	"strings"
 
@@ -320,6 +322,9 @@ func (v *view) writeFooter(n notes) {
 		}
 	}
 	n.add("run", runText(r))
+	if len(r.Run.Timings) > 0 {
+		n.add("time", timingsText(r))
+	}
 	told := 0
 	for _, w := range r.Warnings {
 		// What is aliased stands above already.
@@ -492,4 +497,22 @@ func runText(r *vcov.Result) string {
 		t += fmt.Sprintf(", memory at most %s", sizeText(run.PeakBytes))
 	}
 	return t
+}
+
+// timingsText shares out the time of all workers over the stages, largest first.
+func timingsText(r *vcov.Result) string {
+	list := slices.Clone(r.Run.Timings)
+	slices.SortStableFunc(list, func(a, b vcov.Timing) int { return cmp.Compare(b.Seconds, a.Seconds) })
+	var all float64
+	for _, t := range list {
+		all += float64(t.Seconds)
+	}
+	parts := make([]string, len(list))
+	for i, t := range list {
+		parts[i] = fmt.Sprintf("%s %.1f %%", t.Stage, 100*float64(t.Seconds)/all)
+		if rows := r.Rows.Read; rows > 0 {
+			parts[i] += fmt.Sprintf(" (%s ns a row)", digits(float64(t.Seconds)*1e9/float64(rows), 3))
+		}
+	}
+	return fmt.Sprintf("%s s of all workers: %s", digits(all, 3), strings.Join(parts, ", "))
 }

@@ -43,6 +43,7 @@ type settings struct {
 	json       bool
 	output     string
 	quiet      bool
+	timings    bool
 	jsonSchema bool
 
 	// from says where each given option came from, for messages: "--terms" or
