@@ -19,6 +19,7 @@ type epoch struct {
 	keys     []*interner
 	clusters []*keyTable
 	lone     []*loneTracker
+	reach    float64
 	weight   superSum
 	freq     int64
 	rows     int64
@@ -32,7 +33,7 @@ type epoch struct {
 func joinWorkers(ws []*firstWorker) *epoch {
 	w := ws[0]
 	e := &epoch{frame: w.frame, cats: w.cats, tables: w.tables, keys: w.keys, clusters: w.clusters,
-		lone: w.lone, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
+		lone: w.lone, reach: w.reach, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
 	for _, o := range ws[1:] {
 		w.gramX.merge(o.gramX)
@@ -53,6 +54,7 @@ func joinWorkers(ws []*firstWorker) *epoch {
 			}
 			e.lone[k].mergeFrom(o.lone[k], to)
 		}
+		e.reach = max(e.reach, o.reach)
 		e.weight.merge(&o.weight)
 		e.freq += o.freq
 		e.rows += o.rows

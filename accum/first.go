@@ -35,6 +35,7 @@ type firstWorker struct {
 	lone     []*loneTracker
 	zrow     []float64
 
+	reach   float64 // bound of the sum of w |(1, u)|^2 over any block
 	weight  superSum
 	freq    int64
 	rows    int64
@@ -99,7 +100,10 @@ func (w *firstWorker) add() error {
 		}
 	}
 	w.rows += int64(n)
+	before := w.trace()
 	kernel.Gram(w.gram, w.zs, stride, n, l.width)
+	after := w.trace()
+	w.reach = max(w.reach, after-before+1e-12*after)
 	for j := range l.p0 {
 		w.countNonzero(j)
 	}
@@ -134,6 +138,14 @@ func (w *firstWorker) add() error {
 		w.watch.lap(StageFourth)
 	}
 	return nil
+}
+
+// trace is the sum of squares of (1, u) in the present segment.
+func (w *firstWorker) trace() (t float64) {
+	for j := range w.lay.p0 + 1 {
+		t += w.gram[j*(j+1)/2+j]
+	}
+	return t
 }
 
 // countNonzero counts nonzero cells of a term, frequencies as often as they say,

@@ -2,6 +2,7 @@ package accum
 
 import (
 	"errors"
+	"math"
 	"slices"
 )
 
@@ -117,6 +118,30 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 	}
 	sc.Gross = gross
 	return sc, nil
+}
+
+// LeverageBound is a bound of the leverage of every row (times its weight) from
+// sums of squares alone, |W|^2 max_B sum_{i in B} w_i |z_i|^2 over the blocks B:
+// where it is small no row can have a leverage near 1, and pass two need not form
+// leverages to find such rows. whitener is as in RowPass. Infinite with categories.
+func (s *State) LeverageBound(whitener []float64) float64 {
+	if len(s.Groups) > 0 {
+		return math.Inf(1)
+	}
+	k, width := s.lay.p0+1, s.lay.width
+	bound := 0.0
+	for i, e := range s.epochs {
+		size := 0.0
+		for a := range k {
+			row := s.maps[i][a*width : a*width+k]
+			size += dotp(row, row)
+		}
+		if e.frame == s.Frame {
+			size = 1
+		}
+		bound = max(bound, size*e.reach)
+	}
+	return dotp(whitener, whitener) * bound
 }
 
 // Fourth contracts the fourth moments with the residual direction theta (over the

@@ -163,21 +163,27 @@ func (w *secondWorker) add() error {
 	}
 	heavy := func(r int) bool { return rp.Heavy && h[r] > HeavyAt && 1-h[r] >= LoneGap }
 	for i, g := range rp.Weights {
-		for r := range e {
-			switch {
-			case rp.Whitener != nil && (1-h[r] < LoneGap || heavy(r)):
-				w.mult[r] = 0
-				continue
-			default:
-				w.mult[r] = e[r] * math.Sqrt(g(h[r]))
+		mult := w.mult[:n]
+		if rp.Whitener == nil {
+			by := math.Sqrt(g(0))
+			for r, x := range e {
+				mult[r] = x * by
 			}
-			if w.root != nil {
-				if freq {
-					w.mult[r] *= w.root[r]
+		} else {
+			for r, x := range e {
+				if 1-h[r] < LoneGap || heavy(r) {
+					mult[r] = 0
 				} else {
-					w.mult[r] *= w.block.Weight[r]
+					mult[r] = x * math.Sqrt(g(h[r]))
 				}
 			}
+		}
+		switch {
+		case w.root == nil:
+		case freq:
+			kernel.Scale(mult, mult, w.root[:n])
+		default:
+			kernel.Scale(mult, mult, w.block.Weight[:n])
 		}
 		w.addMeat(w.meats[i], l.p0+1)
 	}

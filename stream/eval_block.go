@@ -27,6 +27,7 @@ type Evaluator struct {
 	rows  int     // capacity of the buffers
 	state []uint8 // fate of each row
 	used  []int32 // rows that are used
+	spans []span  // runs of them, see findSpans
 	clean []bool  // for each of prog.uses: known to hold no missing or infinite cell
 
 	outX           [][]float64 // compacted columns, kept

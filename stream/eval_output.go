@@ -83,6 +83,7 @@ func (e *Evaluator) passKey(k *keyOutput, b *Batch, own, out *Vector) {
 		for i := range e.used {
 			e.used[i] = int32(i)
 		}
+		e.spans = append(e.spans[:0], span{0, int32(n)})
 		e.compactKey(k, b, own, out)
 	}
 }
@@ -95,6 +96,7 @@ func (e *Evaluator) compact(b *Batch, out *Block) {
 		return
 	}
 	out.Rows = n
+	e.findSpans()
 	for j, r := range p.dense {
 		e.outX[j] = e.gather(e.outX[j], e.num[r])
 		out.X[j] = e.outX[j][:n]
@@ -119,11 +121,42 @@ func (e *Evaluator) gather(dst, src []float64) []float64 {
 	if dst == nil {
 		dst = make([]float64, e.rows)
 	}
+	if len(e.spans) > 0 {
+		j := 0
+		for _, s := range e.spans {
+			j += copy(dst[j:], src[s.from:s.to])
+		}
+		return dst
+	}
 	for j, i := range e.used {
 		dst[j] = src[i]
 	}
 	return dst
 }
+
+// span is a run of rows that are all used.
+type span struct{ from, to int32 }
+
+// findSpans lists the runs of used rows; none where they are too short to be
+// copied as such.
+func (e *Evaluator) findSpans() {
+	e.spans = e.spans[:0]
+	for i := 0; i < len(e.used); {
+		j := i + 1
+		for j < len(e.used) && e.used[j] == e.used[j-1]+1 {
+			j++
+		}
+		e.spans = append(e.spans, span{e.used[i], e.used[j-1] + 1})
+		if len(e.spans) > maxSpans {
+			e.spans = e.spans[:0]
+			return
+		}
+		i = j
+	}
+}
+
+// maxSpans in a batch are worth a copy each.
+const maxSpans = BatchRows / 8
 
 func gatherInts(dst, src []int64, used []int32, rows int) []int64 {
 	if dst == nil {

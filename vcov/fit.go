@@ -186,7 +186,6 @@ func (f *fitter) second() error {
 	f.route = "row pass"
 	rp := accum.RowPass{Theta: x.theta}
 	seen := map[string]bool{}
-	lever := false
 	for _, k := range f.o.Errors {
 		g, ok := hcWeight[k.Name]
 		if k.Name == "hc1" {
@@ -197,15 +196,18 @@ func (f *fitter) second() error {
 			seen[k.Name] = true
 			f.kinds = append(f.kinds, k.Name)
 			rp.Weights = append(rp.Weights, func(h float64) float64 { return g(1 - h) })
-			lever = true
 		case !ok && k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
 			seen[fmt.Sprint(k.Cluster)] = true
 			f.keys = append(f.keys, k.Cluster)
 		}
 	}
 	rp.Scores = f.keys
-	if lever {
-		rp.Whitener, rp.K = x.whitener()
+	if len(rp.Weights) > 0 {
+		// hc0 and hc1 want leverages only to find rows that alone decide a coefficient.
+		w, m := x.whitener()
+		if seen["hc2"] || seen["hc3"] || s.LeverageBound(w) > 0.5 {
+			rp.Whitener, rp.K = w, m
+		}
 	}
 	sums, err := accum.Second(f.ctx, f.src, s, rp, f.scan)
 	if err != nil {
