@@ -116,5 +116,44 @@ func scaleAVX2(dst *float64, x *float64, w *float64, n int)
 //go:noescape
 func axpyAVX2(t float64, x *float64, y *float64, n int)
 
+// wideDots1AVX2 multiplies 1 double-double columns by column b. Of each, out gets
+// the sums of the four lanes, then what was left off them.
+//
+//go:noescape
+func wideDots1AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+
+// wideDots2AVX2 multiplies 2 double-double columns by column b. Of each, out gets
+// the sums of the four lanes, then what was left off them.
+//
+//go:noescape
+func wideDots2AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+
+// wideDots3AVX2 multiplies 3 double-double columns by column b. Of each, out gets
+// the sums of the four lanes, then what was left off them.
+//
+//go:noescape
+func wideDots3AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+
+// wideDots4AVX2 multiplies 4 double-double columns by column b. Of each, out gets
+// the sums of the four lanes, then what was left off them.
+//
+//go:noescape
+func wideDots4AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+
+// axpyWideAVX2 adds t x to y in double-double.
+//
+//go:noescape
+func axpyWideAVX2(t float64, tLow float64, xHi *float64, xLo *float64, yHi *float64, yLo *float64, n int)
+
+// scaleWideAVX2 sets dst to t x in double-double.
+//
+//go:noescape
+func scaleWideAVX2(dstHi *float64, dstLo *float64, xHi *float64, xLo *float64, t float64, n int)
+
+// shiftScaleWideAVX2 sets dst to (x + m) inv in double-double.
+//
+//go:noescape
+func shiftScaleWideAVX2(dstHi *float64, dstLo *float64, xHi *float64, xLo *float64, m float64, mLow float64, inv float64, n int)
+
 // peakAVX2 does 48 n multiplications and additions in registers alone: the ceiling of the benchmarks.
 func peakAVX2(n int)

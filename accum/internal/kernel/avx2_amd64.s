@@ -1625,6 +1625,1041 @@ singleend:
 	VZEROUPPER
 	RET
 
+// func wideDots1AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+// Requires: AVX, FMA3
+TEXT ·wideDots1AVX2(SB), NOSPLIT, $128-56
+	MOVQ       hi+8(FP), AX
+	MOVQ       lo+16(FP), CX
+	MOVQ       bHi+32(FP), DX
+	MOVQ       bLo+40(FP), BX
+	MOVQ       rows+48(FP), SI
+	MOVQ       SI, DI
+	SHRQ       $0x02, SI
+	ANDQ       $0x03, DI
+	JZ         start
+	MOVQ       SI, R8
+	SHLQ       $0x05, R8
+	MOVQ       DI, R9
+	NEGQ       R9
+	LEAQ       lanemask<>+32(SB), R10
+	VMOVUPD    (R10)(R9*8), Y0
+	LEAQ       (AX)(R8*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	LEAQ       (CX)(R8*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	LEAQ       (DX)(R8*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	LEAQ       (BX)(R8*1), R8
+	VMASKMOVPD (R8), Y0, Y0
+	VMOVUPD    Y0, 96(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	TESTQ  SI, SI
+	JZ     rest
+
+loop:
+	VMOVUPD     (DX), Y2
+	VMOVUPD     (BX), Y3
+	VMOVUPD     (AX), Y4
+	VMULPD      Y2, Y4, Y5
+	VMOVAPD     Y5, Y6
+	VFMSUB231PD Y2, Y4, Y6
+	VFMADD231PD Y3, Y4, Y6
+	VFMADD231PD (CX), Y2, Y6
+	VADDPD      Y5, Y0, Y2
+	VSUBPD      Y0, Y2, Y3
+	VSUBPD      Y3, Y2, Y4
+	VSUBPD      Y4, Y0, Y0
+	VSUBPD      Y3, Y5, Y3
+	VADDPD      Y3, Y0, Y0
+	VADDPD      Y6, Y0, Y0
+	VADDPD      Y0, Y1, Y1
+	VMOVAPD     Y2, Y0
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	DECQ        SI
+	JNZ         loop
+
+rest:
+	TESTQ DI, DI
+	JZ    sums
+	XORQ  DI, DI
+	MOVQ  $0x00000001, SI
+	LEAQ  (SP), AX
+	LEAQ  32(SP), CX
+	LEAQ  64(SP), DX
+	LEAQ  96(SP), BX
+	JMP   loop
+
+sums:
+	MOVQ    out+0(FP), AX
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VZEROUPPER
+	RET
+
+// func wideDots2AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+// Requires: AVX, FMA3
+TEXT ·wideDots2AVX2(SB), NOSPLIT, $192-56
+	MOVQ       hi+8(FP), AX
+	MOVQ       stride+24(FP), CX
+	SHLQ       $0x03, CX
+	MOVQ       lo+16(FP), DX
+	MOVQ       stride+24(FP), BX
+	SHLQ       $0x03, BX
+	MOVQ       bHi+32(FP), SI
+	MOVQ       bLo+40(FP), DI
+	MOVQ       rows+48(FP), R8
+	MOVQ       R8, R9
+	SHRQ       $0x02, R8
+	ANDQ       $0x03, R9
+	JZ         start
+	MOVQ       R8, R10
+	SHLQ       $0x05, R10
+	MOVQ       R9, R11
+	NEGQ       R11
+	LEAQ       lanemask<>+32(SB), R12
+	VMOVUPD    (R12)(R11*8), Y0
+	LEAQ       (AX)(R10*1), R11
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R11)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	LEAQ       (DX)(R10*1), R11
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R11)(BX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	LEAQ       (SI)(R10*1), R11
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	LEAQ       (DI)(R10*1), R10
+	VMASKMOVPD (R10), Y0, Y0
+	VMOVUPD    Y0, 160(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	TESTQ  R8, R8
+	JZ     rest
+
+loop:
+	VMOVUPD     (SI), Y4
+	VMOVUPD     (DI), Y5
+	VMOVUPD     (AX), Y6
+	VMULPD      Y4, Y6, Y7
+	VMOVAPD     Y7, Y8
+	VFMSUB231PD Y4, Y6, Y8
+	VFMADD231PD Y5, Y6, Y8
+	VFMADD231PD (DX), Y4, Y8
+	VADDPD      Y7, Y0, Y6
+	VSUBPD      Y0, Y6, Y9
+	VSUBPD      Y9, Y6, Y10
+	VSUBPD      Y10, Y0, Y0
+	VSUBPD      Y9, Y7, Y7
+	VADDPD      Y7, Y0, Y0
+	VADDPD      Y8, Y0, Y0
+	VADDPD      Y0, Y1, Y1
+	VMOVAPD     Y6, Y0
+	VMOVUPD     (AX)(CX*1), Y6
+	VMULPD      Y4, Y6, Y7
+	VMOVAPD     Y7, Y8
+	VFMSUB231PD Y4, Y6, Y8
+	VFMADD231PD Y5, Y6, Y8
+	VFMADD231PD (DX)(BX*1), Y4, Y8
+	VADDPD      Y7, Y2, Y4
+	VSUBPD      Y2, Y4, Y5
+	VSUBPD      Y5, Y4, Y6
+	VSUBPD      Y6, Y2, Y2
+	VSUBPD      Y5, Y7, Y5
+	VADDPD      Y5, Y2, Y2
+	VADDPD      Y8, Y2, Y2
+	VADDPD      Y2, Y3, Y3
+	VMOVAPD     Y4, Y2
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, SI
+	ADDQ        $0x20, DI
+	DECQ        R8
+	JNZ         loop
+
+rest:
+	TESTQ R9, R9
+	JZ    sums
+	XORQ  R9, R9
+	MOVQ  $0x00000001, R8
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	LEAQ  64(SP), DX
+	MOVQ  $0x00000020, BX
+	LEAQ  128(SP), SI
+	LEAQ  160(SP), DI
+	JMP   loop
+
+sums:
+	MOVQ    out+0(FP), AX
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VMOVUPD Y2, 64(AX)
+	VMOVUPD Y3, 96(AX)
+	VZEROUPPER
+	RET
+
+// func wideDots3AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+// Requires: AVX, FMA3
+TEXT ·wideDots3AVX2(SB), NOSPLIT, $256-56
+	MOVQ       hi+8(FP), AX
+	MOVQ       stride+24(FP), CX
+	SHLQ       $0x03, CX
+	MOVQ       lo+16(FP), DX
+	MOVQ       stride+24(FP), BX
+	SHLQ       $0x03, BX
+	MOVQ       bHi+32(FP), SI
+	MOVQ       bLo+40(FP), DI
+	MOVQ       rows+48(FP), R8
+	MOVQ       R8, R9
+	SHRQ       $0x02, R8
+	ANDQ       $0x03, R9
+	JZ         start
+	MOVQ       R8, R10
+	SHLQ       $0x05, R10
+	MOVQ       R9, R11
+	NEGQ       R11
+	LEAQ       lanemask<>+32(SB), R12
+	VMOVUPD    (R12)(R11*8), Y0
+	LEAQ       (AX)(R10*1), R11
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R11)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R11)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	LEAQ       (DX)(R10*1), R11
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R11)(BX*1), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R11)(BX*2), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	LEAQ       (SI)(R10*1), R11
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, 192(SP)
+	LEAQ       (DI)(R10*1), R10
+	VMASKMOVPD (R10), Y0, Y0
+	VMOVUPD    Y0, 224(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	TESTQ  R8, R8
+	JZ     rest
+
+loop:
+	VMOVUPD     (SI), Y6
+	VMOVUPD     (DI), Y7
+	VMOVUPD     (AX), Y8
+	VMULPD      Y6, Y8, Y9
+	VMOVAPD     Y9, Y10
+	VFMSUB231PD Y6, Y8, Y10
+	VFMADD231PD Y7, Y8, Y10
+	VFMADD231PD (DX), Y6, Y10
+	VADDPD      Y9, Y0, Y8
+	VSUBPD      Y0, Y8, Y11
+	VSUBPD      Y11, Y8, Y12
+	VSUBPD      Y12, Y0, Y0
+	VSUBPD      Y11, Y9, Y9
+	VADDPD      Y9, Y0, Y0
+	VADDPD      Y10, Y0, Y0
+	VADDPD      Y0, Y1, Y1
+	VMOVAPD     Y8, Y0
+	VMOVUPD     (AX)(CX*1), Y8
+	VMULPD      Y6, Y8, Y9
+	VMOVAPD     Y9, Y10
+	VFMSUB231PD Y6, Y8, Y10
+	VFMADD231PD Y7, Y8, Y10
+	VFMADD231PD (DX)(BX*1), Y6, Y10
+	VADDPD      Y9, Y2, Y8
+	VSUBPD      Y2, Y8, Y11
+	VSUBPD      Y11, Y8, Y12
+	VSUBPD      Y12, Y2, Y2
+	VSUBPD      Y11, Y9, Y9
+	VADDPD      Y9, Y2, Y2
+	VADDPD      Y10, Y2, Y2
+	VADDPD      Y2, Y3, Y3
+	VMOVAPD     Y8, Y2
+	VMOVUPD     (AX)(CX*2), Y8
+	VMULPD      Y6, Y8, Y9
+	VMOVAPD     Y9, Y10
+	VFMSUB231PD Y6, Y8, Y10
+	VFMADD231PD Y7, Y8, Y10
+	VFMADD231PD (DX)(BX*2), Y6, Y10
+	VADDPD      Y9, Y4, Y6
+	VSUBPD      Y4, Y6, Y7
+	VSUBPD      Y7, Y6, Y8
+	VSUBPD      Y8, Y4, Y4
+	VSUBPD      Y7, Y9, Y7
+	VADDPD      Y7, Y4, Y4
+	VADDPD      Y10, Y4, Y4
+	VADDPD      Y4, Y5, Y5
+	VMOVAPD     Y6, Y4
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, SI
+	ADDQ        $0x20, DI
+	DECQ        R8
+	JNZ         loop
+
+rest:
+	TESTQ R9, R9
+	JZ    sums
+	XORQ  R9, R9
+	MOVQ  $0x00000001, R8
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	LEAQ  96(SP), DX
+	MOVQ  $0x00000020, BX
+	LEAQ  192(SP), SI
+	LEAQ  224(SP), DI
+	JMP   loop
+
+sums:
+	MOVQ    out+0(FP), AX
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VMOVUPD Y2, 64(AX)
+	VMOVUPD Y3, 96(AX)
+	VMOVUPD Y4, 128(AX)
+	VMOVUPD Y5, 160(AX)
+	VZEROUPPER
+	RET
+
+// func wideDots4AVX2(out *float64, hi *float64, lo *float64, stride int, bHi *float64, bLo *float64, rows int)
+// Requires: AVX, FMA3
+TEXT ·wideDots4AVX2(SB), NOSPLIT, $320-56
+	MOVQ       hi+8(FP), AX
+	MOVQ       stride+24(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	MOVQ       lo+16(FP), BX
+	MOVQ       stride+24(FP), SI
+	SHLQ       $0x03, SI
+	LEAQ       (SI)(SI*2), DI
+	MOVQ       bHi+32(FP), R8
+	MOVQ       bLo+40(FP), R9
+	MOVQ       rows+48(FP), R10
+	MOVQ       R10, R11
+	SHRQ       $0x02, R10
+	ANDQ       $0x03, R11
+	JZ         start
+	MOVQ       R10, R12
+	SHLQ       $0x05, R12
+	MOVQ       R11, R13
+	NEGQ       R13
+	LEAQ       lanemask<>+32(SB), R14
+	VMOVUPD    (R14)(R13*8), Y0
+	LEAQ       (AX)(R12*1), R13
+	VMASKMOVPD (R13), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R13)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R13)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R13)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	LEAQ       (BX)(R12*1), R13
+	VMASKMOVPD (R13), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R13)(SI*1), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	VMASKMOVPD (R13)(SI*2), Y0, Y1
+	VMOVUPD    Y1, 192(SP)
+	VMASKMOVPD (R13)(DI*1), Y0, Y1
+	VMOVUPD    Y1, 224(SP)
+	LEAQ       (R8)(R12*1), R13
+	VMASKMOVPD (R13), Y0, Y1
+	VMOVUPD    Y1, 256(SP)
+	LEAQ       (R9)(R12*1), R12
+	VMASKMOVPD (R12), Y0, Y0
+	VMOVUPD    Y0, 288(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	TESTQ  R10, R10
+	JZ     rest
+
+loop:
+	VMOVUPD     (R8), Y8
+	VMOVUPD     (R9), Y9
+	VMOVUPD     (AX), Y10
+	VMULPD      Y8, Y10, Y11
+	VMOVAPD     Y11, Y12
+	VFMSUB231PD Y8, Y10, Y12
+	VFMADD231PD Y9, Y10, Y12
+	VFMADD231PD (BX), Y8, Y12
+	VADDPD      Y11, Y0, Y10
+	VSUBPD      Y0, Y10, Y13
+	VSUBPD      Y13, Y10, Y14
+	VSUBPD      Y14, Y0, Y0
+	VSUBPD      Y13, Y11, Y11
+	VADDPD      Y11, Y0, Y0
+	VADDPD      Y12, Y0, Y0
+	VADDPD      Y0, Y1, Y1
+	VMOVAPD     Y10, Y0
+	VMOVUPD     (AX)(CX*1), Y10
+	VMULPD      Y8, Y10, Y11
+	VMOVAPD     Y11, Y12
+	VFMSUB231PD Y8, Y10, Y12
+	VFMADD231PD Y9, Y10, Y12
+	VFMADD231PD (BX)(SI*1), Y8, Y12
+	VADDPD      Y11, Y2, Y10
+	VSUBPD      Y2, Y10, Y13
+	VSUBPD      Y13, Y10, Y14
+	VSUBPD      Y14, Y2, Y2
+	VSUBPD      Y13, Y11, Y11
+	VADDPD      Y11, Y2, Y2
+	VADDPD      Y12, Y2, Y2
+	VADDPD      Y2, Y3, Y3
+	VMOVAPD     Y10, Y2
+	VMOVUPD     (AX)(CX*2), Y10
+	VMULPD      Y8, Y10, Y11
+	VMOVAPD     Y11, Y12
+	VFMSUB231PD Y8, Y10, Y12
+	VFMADD231PD Y9, Y10, Y12
+	VFMADD231PD (BX)(SI*2), Y8, Y12
+	VADDPD      Y11, Y4, Y10
+	VSUBPD      Y4, Y10, Y13
+	VSUBPD      Y13, Y10, Y14
+	VSUBPD      Y14, Y4, Y4
+	VSUBPD      Y13, Y11, Y11
+	VADDPD      Y11, Y4, Y4
+	VADDPD      Y12, Y4, Y4
+	VADDPD      Y4, Y5, Y5
+	VMOVAPD     Y10, Y4
+	VMOVUPD     (AX)(DX*1), Y10
+	VMULPD      Y8, Y10, Y11
+	VMOVAPD     Y11, Y12
+	VFMSUB231PD Y8, Y10, Y12
+	VFMADD231PD Y9, Y10, Y12
+	VFMADD231PD (BX)(DI*1), Y8, Y12
+	VADDPD      Y11, Y6, Y8
+	VSUBPD      Y6, Y8, Y9
+	VSUBPD      Y9, Y8, Y10
+	VSUBPD      Y10, Y6, Y6
+	VSUBPD      Y9, Y11, Y9
+	VADDPD      Y9, Y6, Y6
+	VADDPD      Y12, Y6, Y6
+	VADDPD      Y6, Y7, Y7
+	VMOVAPD     Y8, Y6
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, R8
+	ADDQ        $0x20, R9
+	DECQ        R10
+	JNZ         loop
+
+rest:
+	TESTQ R11, R11
+	JZ    sums
+	XORQ  R11, R11
+	MOVQ  $0x00000001, R10
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  128(SP), BX
+	MOVQ  $0x00000020, SI
+	MOVQ  $0x00000060, DI
+	LEAQ  256(SP), R8
+	LEAQ  288(SP), R9
+	JMP   loop
+
+sums:
+	MOVQ    out+0(FP), AX
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VMOVUPD Y2, 64(AX)
+	VMOVUPD Y3, 96(AX)
+	VMOVUPD Y4, 128(AX)
+	VMOVUPD Y5, 160(AX)
+	VMOVUPD Y6, 192(AX)
+	VMOVUPD Y7, 224(AX)
+	VZEROUPPER
+	RET
+
+// func axpyWideAVX2(t float64, tLow float64, xHi *float64, xLo *float64, yHi *float64, yLo *float64, n int)
+// Requires: AVX, FMA3
+TEXT ·axpyWideAVX2(SB), NOSPLIT, $0-56
+	VBROADCASTSD t+0(FP), Y0
+	VBROADCASTSD tLow+8(FP), Y1
+	MOVQ         xHi+16(FP), AX
+	MOVQ         xLo+24(FP), CX
+	MOVQ         yHi+32(FP), DX
+	MOVQ         yLo+40(FP), BX
+	MOVQ         n+48(FP), SI
+
+sixteen:
+	SUBQ        $0x10, SI
+	JL          sixteenend
+	VMOVUPD     (AX), Y2
+	VMULPD      Y2, Y0, Y3
+	VMOVAPD     Y3, Y4
+	VFMSUB231PD Y2, Y0, Y4
+	VFMADD231PD (CX), Y0, Y4
+	VFMADD231PD Y1, Y2, Y4
+	VMOVUPD     (DX), Y2
+	VADDPD      Y3, Y2, Y5
+	VSUBPD      Y2, Y5, Y6
+	VSUBPD      Y6, Y5, Y7
+	VSUBPD      Y7, Y2, Y2
+	VSUBPD      Y6, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VADDPD      Y4, Y2, Y2
+	VADDPD      (BX), Y2, Y2
+	VADDPD      Y2, Y5, Y3
+	VSUBPD      Y5, Y3, Y4
+	VSUBPD      Y4, Y3, Y6
+	VSUBPD      Y6, Y5, Y5
+	VSUBPD      Y4, Y2, Y2
+	VADDPD      Y2, Y5, Y2
+	VMOVUPD     Y3, (DX)
+	VMOVUPD     Y2, (BX)
+	VMOVUPD     32(AX), Y2
+	VMULPD      Y2, Y0, Y3
+	VMOVAPD     Y3, Y4
+	VFMSUB231PD Y2, Y0, Y4
+	VFMADD231PD 32(CX), Y0, Y4
+	VFMADD231PD Y1, Y2, Y4
+	VMOVUPD     32(DX), Y2
+	VADDPD      Y3, Y2, Y5
+	VSUBPD      Y2, Y5, Y6
+	VSUBPD      Y6, Y5, Y7
+	VSUBPD      Y7, Y2, Y2
+	VSUBPD      Y6, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VADDPD      Y4, Y2, Y2
+	VADDPD      32(BX), Y2, Y2
+	VADDPD      Y2, Y5, Y3
+	VSUBPD      Y5, Y3, Y4
+	VSUBPD      Y4, Y3, Y6
+	VSUBPD      Y6, Y5, Y5
+	VSUBPD      Y4, Y2, Y2
+	VADDPD      Y2, Y5, Y2
+	VMOVUPD     Y3, 32(DX)
+	VMOVUPD     Y2, 32(BX)
+	VMOVUPD     64(AX), Y2
+	VMULPD      Y2, Y0, Y3
+	VMOVAPD     Y3, Y4
+	VFMSUB231PD Y2, Y0, Y4
+	VFMADD231PD 64(CX), Y0, Y4
+	VFMADD231PD Y1, Y2, Y4
+	VMOVUPD     64(DX), Y2
+	VADDPD      Y3, Y2, Y5
+	VSUBPD      Y2, Y5, Y6
+	VSUBPD      Y6, Y5, Y7
+	VSUBPD      Y7, Y2, Y2
+	VSUBPD      Y6, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VADDPD      Y4, Y2, Y2
+	VADDPD      64(BX), Y2, Y2
+	VADDPD      Y2, Y5, Y3
+	VSUBPD      Y5, Y3, Y4
+	VSUBPD      Y4, Y3, Y6
+	VSUBPD      Y6, Y5, Y5
+	VSUBPD      Y4, Y2, Y2
+	VADDPD      Y2, Y5, Y2
+	VMOVUPD     Y3, 64(DX)
+	VMOVUPD     Y2, 64(BX)
+	VMOVUPD     96(AX), Y2
+	VMULPD      Y2, Y0, Y3
+	VMOVAPD     Y3, Y4
+	VFMSUB231PD Y2, Y0, Y4
+	VFMADD231PD 96(CX), Y0, Y4
+	VFMADD231PD Y1, Y2, Y4
+	VMOVUPD     96(DX), Y2
+	VADDPD      Y3, Y2, Y5
+	VSUBPD      Y2, Y5, Y6
+	VSUBPD      Y6, Y5, Y7
+	VSUBPD      Y7, Y2, Y2
+	VSUBPD      Y6, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VADDPD      Y4, Y2, Y2
+	VADDPD      96(BX), Y2, Y2
+	VADDPD      Y2, Y5, Y3
+	VSUBPD      Y5, Y3, Y4
+	VSUBPD      Y4, Y3, Y6
+	VSUBPD      Y6, Y5, Y5
+	VSUBPD      Y4, Y2, Y2
+	VADDPD      Y2, Y5, Y2
+	VMOVUPD     Y3, 96(DX)
+	VMOVUPD     Y2, 96(BX)
+	ADDQ        $0x80, AX
+	ADDQ        $0x80, CX
+	ADDQ        $0x80, DX
+	ADDQ        $0x80, BX
+	JMP         sixteen
+
+sixteenend:
+	ADDQ $0x10, SI
+
+four:
+	SUBQ        $0x04, SI
+	JL          fourend
+	VMOVUPD     (AX), Y2
+	VMULPD      Y2, Y0, Y3
+	VMOVAPD     Y3, Y4
+	VFMSUB231PD Y2, Y0, Y4
+	VFMADD231PD (CX), Y0, Y4
+	VFMADD231PD Y1, Y2, Y4
+	VMOVUPD     (DX), Y2
+	VADDPD      Y3, Y2, Y5
+	VSUBPD      Y2, Y5, Y6
+	VSUBPD      Y6, Y5, Y7
+	VSUBPD      Y7, Y2, Y2
+	VSUBPD      Y6, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VADDPD      Y4, Y2, Y2
+	VADDPD      (BX), Y2, Y2
+	VADDPD      Y2, Y5, Y3
+	VSUBPD      Y5, Y3, Y4
+	VSUBPD      Y4, Y3, Y6
+	VSUBPD      Y6, Y5, Y5
+	VSUBPD      Y4, Y2, Y2
+	VADDPD      Y2, Y5, Y2
+	VMOVUPD     Y3, (DX)
+	VMOVUPD     Y2, (BX)
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	JMP         four
+
+fourend:
+	ADDQ $0x04, SI
+
+single:
+	SUBQ        $0x01, SI
+	JL          singleend
+	VMOVSD      (AX), X2
+	VMULSD      X2, X0, X3
+	VMOVAPD     X3, X4
+	VFMSUB231SD X2, X0, X4
+	VFMADD231SD (CX), X0, X4
+	VFMADD231SD X1, X2, X4
+	VMOVSD      (DX), X2
+	VADDSD      X3, X2, X5
+	VSUBSD      X2, X5, X6
+	VSUBSD      X6, X5, X7
+	VSUBSD      X7, X2, X2
+	VSUBSD      X6, X3, X3
+	VADDSD      X3, X2, X2
+	VADDSD      X4, X2, X2
+	VADDSD      (BX), X2, X2
+	VADDSD      X2, X5, X3
+	VSUBSD      X5, X3, X4
+	VSUBSD      X4, X3, X6
+	VSUBSD      X6, X5, X5
+	VSUBSD      X4, X2, X2
+	VADDSD      X2, X5, X2
+	VMOVSD      X3, (DX)
+	VMOVSD      X2, (BX)
+	ADDQ        $0x08, AX
+	ADDQ        $0x08, CX
+	ADDQ        $0x08, DX
+	ADDQ        $0x08, BX
+	JMP         single
+
+singleend:
+	ADDQ $0x01, SI
+	VZEROUPPER
+	RET
+
+// func scaleWideAVX2(dstHi *float64, dstLo *float64, xHi *float64, xLo *float64, t float64, n int)
+// Requires: AVX, FMA3
+TEXT ·scaleWideAVX2(SB), NOSPLIT, $0-48
+	VBROADCASTSD t+32(FP), Y0
+	MOVQ         dstHi+0(FP), AX
+	MOVQ         dstLo+8(FP), CX
+	MOVQ         xHi+16(FP), DX
+	MOVQ         xLo+24(FP), BX
+	MOVQ         n+40(FP), SI
+
+sixteen:
+	SUBQ        $0x10, SI
+	JL          sixteenend
+	VMOVUPD     (DX), Y1
+	VMULPD      Y1, Y0, Y2
+	VMOVAPD     Y2, Y3
+	VFMSUB231PD Y1, Y0, Y3
+	VFMADD231PD (BX), Y0, Y3
+	VADDPD      Y3, Y2, Y1
+	VSUBPD      Y2, Y1, Y4
+	VSUBPD      Y4, Y1, Y5
+	VSUBPD      Y5, Y2, Y2
+	VSUBPD      Y4, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VMOVUPD     Y1, (AX)
+	VMOVUPD     Y2, (CX)
+	VMOVUPD     32(DX), Y1
+	VMULPD      Y1, Y0, Y2
+	VMOVAPD     Y2, Y3
+	VFMSUB231PD Y1, Y0, Y3
+	VFMADD231PD 32(BX), Y0, Y3
+	VADDPD      Y3, Y2, Y1
+	VSUBPD      Y2, Y1, Y4
+	VSUBPD      Y4, Y1, Y5
+	VSUBPD      Y5, Y2, Y2
+	VSUBPD      Y4, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VMOVUPD     Y1, 32(AX)
+	VMOVUPD     Y2, 32(CX)
+	VMOVUPD     64(DX), Y1
+	VMULPD      Y1, Y0, Y2
+	VMOVAPD     Y2, Y3
+	VFMSUB231PD Y1, Y0, Y3
+	VFMADD231PD 64(BX), Y0, Y3
+	VADDPD      Y3, Y2, Y1
+	VSUBPD      Y2, Y1, Y4
+	VSUBPD      Y4, Y1, Y5
+	VSUBPD      Y5, Y2, Y2
+	VSUBPD      Y4, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VMOVUPD     Y1, 64(AX)
+	VMOVUPD     Y2, 64(CX)
+	VMOVUPD     96(DX), Y1
+	VMULPD      Y1, Y0, Y2
+	VMOVAPD     Y2, Y3
+	VFMSUB231PD Y1, Y0, Y3
+	VFMADD231PD 96(BX), Y0, Y3
+	VADDPD      Y3, Y2, Y1
+	VSUBPD      Y2, Y1, Y4
+	VSUBPD      Y4, Y1, Y5
+	VSUBPD      Y5, Y2, Y2
+	VSUBPD      Y4, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VMOVUPD     Y1, 96(AX)
+	VMOVUPD     Y2, 96(CX)
+	ADDQ        $0x80, AX
+	ADDQ        $0x80, CX
+	ADDQ        $0x80, DX
+	ADDQ        $0x80, BX
+	JMP         sixteen
+
+sixteenend:
+	ADDQ $0x10, SI
+
+four:
+	SUBQ        $0x04, SI
+	JL          fourend
+	VMOVUPD     (DX), Y1
+	VMULPD      Y1, Y0, Y2
+	VMOVAPD     Y2, Y3
+	VFMSUB231PD Y1, Y0, Y3
+	VFMADD231PD (BX), Y0, Y3
+	VADDPD      Y3, Y2, Y1
+	VSUBPD      Y2, Y1, Y4
+	VSUBPD      Y4, Y1, Y5
+	VSUBPD      Y5, Y2, Y2
+	VSUBPD      Y4, Y3, Y3
+	VADDPD      Y3, Y2, Y2
+	VMOVUPD     Y1, (AX)
+	VMOVUPD     Y2, (CX)
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	ADDQ        $0x20, DX
+	ADDQ        $0x20, BX
+	JMP         four
+
+fourend:
+	ADDQ $0x04, SI
+
+single:
+	SUBQ        $0x01, SI
+	JL          singleend
+	VMOVSD      (DX), X1
+	VMULSD      X1, X0, X2
+	VMOVAPD     X2, X3
+	VFMSUB231SD X1, X0, X3
+	VFMADD231SD (BX), X0, X3
+	VADDSD      X3, X2, X1
+	VSUBSD      X2, X1, X4
+	VSUBSD      X4, X1, X5
+	VSUBSD      X5, X2, X2
+	VSUBSD      X4, X3, X3
+	VADDSD      X3, X2, X2
+	VMOVSD      X1, (AX)
+	VMOVSD      X2, (CX)
+	ADDQ        $0x08, AX
+	ADDQ        $0x08, CX
+	ADDQ        $0x08, DX
+	ADDQ        $0x08, BX
+	JMP         single
+
+singleend:
+	ADDQ $0x01, SI
+	VZEROUPPER
+	RET
+
+// func shiftScaleWideAVX2(dstHi *float64, dstLo *float64, xHi *float64, xLo *float64, m float64, mLow float64, inv float64, n int)
+// Requires: AVX
+TEXT ·shiftScaleWideAVX2(SB), NOSPLIT, $0-64
+	VBROADCASTSD m+32(FP), Y0
+	VBROADCASTSD mLow+40(FP), Y1
+	VBROADCASTSD inv+48(FP), Y2
+	MOVQ         dstHi+0(FP), AX
+	MOVQ         dstLo+8(FP), CX
+	MOVQ         xHi+16(FP), DX
+	MOVQ         xLo+24(FP), BX
+	MOVQ         n+56(FP), SI
+
+sixteen:
+	SUBQ    $0x10, SI
+	JL      sixteenend
+	VMOVUPD (DX), Y3
+	VADDPD  Y0, Y3, Y4
+	VSUBPD  Y3, Y4, Y5
+	VSUBPD  Y5, Y4, Y6
+	VSUBPD  Y6, Y3, Y3
+	VSUBPD  Y5, Y0, Y5
+	VADDPD  Y5, Y3, Y3
+	VMOVUPD (BX), Y5
+	VADDPD  Y1, Y5, Y6
+	VSUBPD  Y5, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y5, Y5
+	VSUBPD  Y7, Y1, Y7
+	VADDPD  Y7, Y5, Y5
+	VADDPD  Y6, Y3, Y3
+	VADDPD  Y3, Y4, Y6
+	VSUBPD  Y4, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y3, Y4, Y3
+	VADDPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y4
+	VSUBPD  Y6, Y4, Y5
+	VSUBPD  Y5, Y4, Y7
+	VSUBPD  Y7, Y6, Y6
+	VSUBPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y3
+	VMULPD  Y2, Y4, Y4
+	VMULPD  Y2, Y3, Y3
+	VMOVUPD Y4, (AX)
+	VMOVUPD Y3, (CX)
+	VMOVUPD 32(DX), Y3
+	VADDPD  Y0, Y3, Y4
+	VSUBPD  Y3, Y4, Y5
+	VSUBPD  Y5, Y4, Y6
+	VSUBPD  Y6, Y3, Y3
+	VSUBPD  Y5, Y0, Y5
+	VADDPD  Y5, Y3, Y3
+	VMOVUPD 32(BX), Y5
+	VADDPD  Y1, Y5, Y6
+	VSUBPD  Y5, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y5, Y5
+	VSUBPD  Y7, Y1, Y7
+	VADDPD  Y7, Y5, Y5
+	VADDPD  Y6, Y3, Y3
+	VADDPD  Y3, Y4, Y6
+	VSUBPD  Y4, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y3, Y4, Y3
+	VADDPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y4
+	VSUBPD  Y6, Y4, Y5
+	VSUBPD  Y5, Y4, Y7
+	VSUBPD  Y7, Y6, Y6
+	VSUBPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y3
+	VMULPD  Y2, Y4, Y4
+	VMULPD  Y2, Y3, Y3
+	VMOVUPD Y4, 32(AX)
+	VMOVUPD Y3, 32(CX)
+	VMOVUPD 64(DX), Y3
+	VADDPD  Y0, Y3, Y4
+	VSUBPD  Y3, Y4, Y5
+	VSUBPD  Y5, Y4, Y6
+	VSUBPD  Y6, Y3, Y3
+	VSUBPD  Y5, Y0, Y5
+	VADDPD  Y5, Y3, Y3
+	VMOVUPD 64(BX), Y5
+	VADDPD  Y1, Y5, Y6
+	VSUBPD  Y5, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y5, Y5
+	VSUBPD  Y7, Y1, Y7
+	VADDPD  Y7, Y5, Y5
+	VADDPD  Y6, Y3, Y3
+	VADDPD  Y3, Y4, Y6
+	VSUBPD  Y4, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y3, Y4, Y3
+	VADDPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y4
+	VSUBPD  Y6, Y4, Y5
+	VSUBPD  Y5, Y4, Y7
+	VSUBPD  Y7, Y6, Y6
+	VSUBPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y3
+	VMULPD  Y2, Y4, Y4
+	VMULPD  Y2, Y3, Y3
+	VMOVUPD Y4, 64(AX)
+	VMOVUPD Y3, 64(CX)
+	VMOVUPD 96(DX), Y3
+	VADDPD  Y0, Y3, Y4
+	VSUBPD  Y3, Y4, Y5
+	VSUBPD  Y5, Y4, Y6
+	VSUBPD  Y6, Y3, Y3
+	VSUBPD  Y5, Y0, Y5
+	VADDPD  Y5, Y3, Y3
+	VMOVUPD 96(BX), Y5
+	VADDPD  Y1, Y5, Y6
+	VSUBPD  Y5, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y5, Y5
+	VSUBPD  Y7, Y1, Y7
+	VADDPD  Y7, Y5, Y5
+	VADDPD  Y6, Y3, Y3
+	VADDPD  Y3, Y4, Y6
+	VSUBPD  Y4, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y3, Y4, Y3
+	VADDPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y4
+	VSUBPD  Y6, Y4, Y5
+	VSUBPD  Y5, Y4, Y7
+	VSUBPD  Y7, Y6, Y6
+	VSUBPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y3
+	VMULPD  Y2, Y4, Y4
+	VMULPD  Y2, Y3, Y3
+	VMOVUPD Y4, 96(AX)
+	VMOVUPD Y3, 96(CX)
+	ADDQ    $0x80, AX
+	ADDQ    $0x80, CX
+	ADDQ    $0x80, DX
+	ADDQ    $0x80, BX
+	JMP     sixteen
+
+sixteenend:
+	ADDQ $0x10, SI
+
+four:
+	SUBQ    $0x04, SI
+	JL      fourend
+	VMOVUPD (DX), Y3
+	VADDPD  Y0, Y3, Y4
+	VSUBPD  Y3, Y4, Y5
+	VSUBPD  Y5, Y4, Y6
+	VSUBPD  Y6, Y3, Y3
+	VSUBPD  Y5, Y0, Y5
+	VADDPD  Y5, Y3, Y3
+	VMOVUPD (BX), Y5
+	VADDPD  Y1, Y5, Y6
+	VSUBPD  Y5, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y5, Y5
+	VSUBPD  Y7, Y1, Y7
+	VADDPD  Y7, Y5, Y5
+	VADDPD  Y6, Y3, Y3
+	VADDPD  Y3, Y4, Y6
+	VSUBPD  Y4, Y6, Y7
+	VSUBPD  Y7, Y6, Y8
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y3, Y4, Y3
+	VADDPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y4
+	VSUBPD  Y6, Y4, Y5
+	VSUBPD  Y5, Y4, Y7
+	VSUBPD  Y7, Y6, Y6
+	VSUBPD  Y5, Y3, Y3
+	VADDPD  Y3, Y6, Y3
+	VMULPD  Y2, Y4, Y4
+	VMULPD  Y2, Y3, Y3
+	VMOVUPD Y4, (AX)
+	VMOVUPD Y3, (CX)
+	ADDQ    $0x20, AX
+	ADDQ    $0x20, CX
+	ADDQ    $0x20, DX
+	ADDQ    $0x20, BX
+	JMP     four
+
+fourend:
+	ADDQ $0x04, SI
+
+single:
+	SUBQ   $0x01, SI
+	JL     singleend
+	VMOVSD (DX), X3
+	VADDSD X0, X3, X4
+	VSUBSD X3, X4, X5
+	VSUBSD X5, X4, X6
+	VSUBSD X6, X3, X3
+	VSUBSD X5, X0, X5
+	VADDSD X5, X3, X3
+	VMOVSD (BX), X5
+	VADDSD X1, X5, X6
+	VSUBSD X5, X6, X7
+	VSUBSD X7, X6, X8
+	VSUBSD X8, X5, X5
+	VSUBSD X7, X1, X7
+	VADDSD X7, X5, X5
+	VADDSD X6, X3, X3
+	VADDSD X3, X4, X6
+	VSUBSD X4, X6, X7
+	VSUBSD X7, X6, X8
+	VSUBSD X8, X4, X4
+	VSUBSD X7, X3, X3
+	VADDSD X3, X4, X3
+	VADDSD X5, X3, X3
+	VADDSD X3, X6, X4
+	VSUBSD X6, X4, X5
+	VSUBSD X5, X4, X7
+	VSUBSD X7, X6, X6
+	VSUBSD X5, X3, X3
+	VADDSD X3, X6, X3
+	VMULSD X2, X4, X4
+	VMULSD X2, X3, X3
+	VMOVSD X4, (AX)
+	VMOVSD X3, (CX)
+	ADDQ   $0x08, AX
+	ADDQ   $0x08, CX
+	ADDQ   $0x08, DX
+	ADDQ   $0x08, BX
+	JMP    single
+
+singleend:
+	ADDQ $0x01, SI
+	VZEROUPPER
+	RET
+
 // func peakAVX2(n int)
 // Requires: AVX, FMA3
 TEXT ·peakAVX2(SB), NOSPLIT, $0-8

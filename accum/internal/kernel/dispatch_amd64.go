@@ -51,6 +51,49 @@ func axpy(t float64, x, y []float64) {
 	}
 }
 
+func axpyWide(t, tLow float64, xHi, xLo, yHi, yLo []float64) {
+	if n := len(xHi); useAVX2 && n > 0 {
+		axpyWideAVX2(t, tLow, &xHi[0], &xLo[0], &yHi[0], &yLo[0], n)
+	} else {
+		axpyWideRef(t, tLow, xHi, xLo, yHi, yLo)
+	}
+}
+
+func scaleWide(dstHi, dstLo, xHi, xLo []float64, t float64) {
+	if n := len(dstHi); useAVX2 && n > 0 {
+		scaleWideAVX2(&dstHi[0], &dstLo[0], &xHi[0], &xLo[0], t, n)
+	} else {
+		scaleWideRef(dstHi, dstLo, xHi, xLo, t)
+	}
+}
+
+func shiftScaleWide(dstHi, dstLo, xHi, xLo []float64, m, mLow, inv float64) {
+	if n := len(dstHi); useAVX2 && n > 0 {
+		shiftScaleWideAVX2(&dstHi[0], &dstLo[0], &xHi[0], &xLo[0], m, mLow, inv, n)
+	} else {
+		shiftScaleWideRef(dstHi, dstLo, xHi, xLo, m, mLow, inv)
+	}
+}
+
+// wideDots gives the lanes of n <= maxWide columns from hi and lo on with b.
+func wideDots(out *[maxWide]wideLanes, n int, hi, lo []float64, stride int, bHi, bLo []float64, rows int) {
+	if !useAVX2 {
+		wideDotsRef(out, n, hi, lo, stride, bHi, bLo, rows)
+		return
+	}
+	d, h, l, bh, bl := &out[0].sum[0], &hi[0], &lo[0], &bHi[0], &bLo[0]
+	switch n {
+	case 1:
+		wideDots1AVX2(d, h, l, stride, bh, bl, rows)
+	case 2:
+		wideDots2AVX2(d, h, l, stride, bh, bl, rows)
+	case 3:
+		wideDots3AVX2(d, h, l, stride, bh, bl, rows)
+	case 4:
+		wideDots4AVX2(d, h, l, stride, bh, bl, rows)
+	}
+}
+
 // The columns of a block are cut so that every tile has eight sums or more
 // where there are columns for it: fewer do not fill the time a multiply-add
 // takes. Four columns and what stands to the right of them come first; the last

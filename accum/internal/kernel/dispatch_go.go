@@ -19,3 +19,19 @@ func cross(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64,
 func scale(dst, x, w []float64) { scaleRef(dst, x, w) }
 
 func axpy(t float64, x, y []float64) { axpyRef(t, x, y) }
+
+func axpyWide(t, tLow float64, xHi, xLo, yHi, yLo []float64) {
+	axpyWideRef(t, tLow, xHi, xLo, yHi, yLo)
+}
+
+func scaleWide(dstHi, dstLo, xHi, xLo []float64, t float64) {
+	scaleWideRef(dstHi, dstLo, xHi, xLo, t)
+}
+
+func shiftScaleWide(dstHi, dstLo, xHi, xLo []float64, m, mLow, inv float64) {
+	shiftScaleWideRef(dstHi, dstLo, xHi, xLo, m, mLow, inv)
+}
+
+func wideDots(out *[maxWide]wideLanes, n int, hi, lo []float64, stride int, bHi, bLo []float64, rows int) {
+	wideDotsRef(out, n, hi, lo, stride, bHi, bLo, rows)
+}

@@ -42,6 +42,9 @@
 // underflow. NaN and infinities propagate by IEEE 754; which NaN comes out is
 // not part of the contract. Zero rows leave dst as it is.
 //
+// GramWide and the other functions on double-doubles follow the same rules with
+// the operations of ref.go in their order.
+//
 // # Implementations
 //
 // The contract is written down literally in ref.go. Plain-Go tiles follow it on

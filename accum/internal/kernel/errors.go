@@ -11,5 +11,6 @@ const (
 	shortB    = "kernel: b too short"
 	shortY    = "kernel: y too short"
 	shortW    = "kernel: w too short"
+	shortLow  = "kernel: low part too short"
 	shortDst  = "kernel: dst too short"
 )

@@ -36,7 +36,7 @@ func fenced(t *testing.T, n int, atEnd bool) []float64 {
 func TestNothingOutsideIsTouched(t *testing.T) {
 	for _, atEnd := range []bool{false, true} {
 		a, b := fenced(t, 7*25, atEnd), fenced(t, 8*25, atEnd)
-		d := fenced(t, 64, atEnd)
+		d, e := fenced(t, 64, atEnd), fenced(t, 64, atEnd)
 		cut := func(x []float64, n int) []float64 {
 			if atEnd {
 				return x[len(x)-n:]
@@ -52,6 +52,13 @@ func TestNothingOutsideIsTouched(t *testing.T) {
 			}
 			Scale(cut(d, rows), cut(a, rows), cut(b, rows))
 			Axpy(2, cut(a, rows), cut(d, rows))
+			for cols := 1; cols <= 5; cols++ {
+				n := cols * (cols + 1) / 2
+				GramWide(cut(d, n), cut(e, n), cut(a, cols*rows), cut(b, cols*rows), rows, rows, cols)
+			}
+			AxpyWide(2, 0, cut(a, rows), cut(b, rows), cut(d, rows), cut(e, rows))
+			ScaleWide(cut(d, rows), cut(e, rows), cut(a, rows), cut(b, rows), 2)
+			ShiftScaleWide(cut(d, rows), cut(e, rows), cut(a, rows), cut(b, rows), 1, 0, 2)
 		}
 	}
 }

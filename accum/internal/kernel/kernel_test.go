@@ -297,6 +297,17 @@ func TestPaddedZero(t *testing.T) {
 	}
 }
 
+func panics(t *testing.T, want string, call func()) {
+	t.Helper()
+	defer func() {
+		t.Helper()
+		if got := recover(); got != want {
+			t.Errorf("panic %v, want %q", got, want)
+		}
+	}()
+	call()
+}
+
 func TestMisuse(t *testing.T) {
 	f := func(n int) []float64 { return make([]float64, n) }
 	for _, c := range []struct {
@@ -321,14 +332,7 @@ func TestMisuse(t *testing.T) {
 		{shortW, func() { Scale(f(3), f(3), f(2)) }},
 		{shortY, func() { Axpy(1, f(3), f(2)) }},
 	} {
-		func() {
-			defer func() {
-				if got := recover(); got != c.want {
-					t.Errorf("panic %v, want %q", got, c.want)
-				}
-			}()
-			c.call()
-		}()
+		panics(t, c.want, c.call)
 	}
 	Gram(nil, nil, 0, 0, 3)
 	Gram(nil, nil, 5, 5, 0)

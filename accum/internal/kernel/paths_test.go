@@ -188,5 +188,7 @@ func FuzzPaths(f *testing.F) {
 		rng := rand.New(rand.NewPCG(seed, 0))
 		checkPaths(t, rng, int(rows%600), 1+int(colsA%24), 1+int(colsB%24), 1+int(odds))
 		checkElementwise(t, rng, int(rows%600), 1+int(odds))
+		checkGramWide(t, rng, int(rows%600), 1+int(colsA%24), 1+int(odds))
+		checkWideElements(t, rng, int(rows%600), 1+int(odds))
 	})
 }

@@ -2,6 +2,9 @@ package kernel
 
 import "math"
 
+// lanes is the number of sums that a dot product is made of.
+const lanes = 4
+
 // gramRef and crossRef are the bit contract written down literally. Tests hold
 // every other implementation against them.
 
@@ -33,6 +36,92 @@ func dotRef(a, b []float64, rows int) float64 {
 		}
 	}
 	return (lane[0] + lane[1]) + (lane[2] + lane[3])
+}
+
+// gramWideRef is the contract of GramWide.
+func gramWideRef(dst, dstLow []float64, hi, lo []float64, stride, rows, cols int) {
+	for j := range cols {
+		for i := range j + 1 {
+			var w wideLanes
+			for r := 0; r < rows; r += lanes {
+				for l := range lanes {
+					var p, e float64
+					if r+l < rows {
+						p, e = productWide(hi[i*stride+r+l], lo[i*stride+r+l], hi[j*stride+r+l], lo[j*stride+r+l])
+					}
+					s, d := twoSum(w.sum[l], p)
+					w.sum[l], w.left[l] = s, w.left[l]+(d+e)
+				}
+			}
+			at := j*(j+1)/2 + i
+			dst[at], dstLow[at] = w.addTo(dst[at], dstLow[at])
+		}
+	}
+}
+
+// wideDotsRef sums one lane after the other, which keeps it in registers.
+func wideDotsRef(out *[maxWide]wideLanes, n int, hi, lo []float64, stride int, bHi, bLo []float64, rows int) {
+	bHi, bLo = bHi[:rows], bLo[:rows]
+	for k := range n {
+		aHi, aLo := hi[k*stride:][:rows], lo[k*stride:][:rows]
+		for l := range lanes {
+			var sum, left float64
+			for r := l; r < rows; r += lanes {
+				p, e := productWide(aHi[r], aLo[r], bHi[r], bLo[r])
+				s, d := twoSum(sum, p)
+				sum, left = s, left+(d+e)
+			}
+			if rows%lanes != 0 && l >= rows%lanes {
+				s, d := twoSum(sum, 0)
+				sum, left = s, left+d
+			}
+			out[k].sum[l], out[k].left[l] = sum, left
+		}
+	}
+}
+
+// productWide returns a b and what is missing from the product of two
+// double-doubles but for the product of the low parts. The conversion keeps the
+// compiler from fusing the product with a sum it goes into.
+func productWide(a, aLow, b, bLow float64) (p, e float64) {
+	p = float64(a * b)
+	e = math.FMA(a, b, -p)
+	e = math.FMA(a, bLow, e)
+	e = math.FMA(aLow, b, e)
+	return p, e
+}
+
+func axpyWideRef(t, tLow float64, xHi, xLo, yHi, yLo []float64) {
+	n := len(xHi)
+	xLo, yHi, yLo = xLo[:n], yHi[:n], yLo[:n]
+	for i, x := range xHi {
+		p, e := productWide(t, tLow, x, xLo[i])
+		s, d := twoSum(yHi[i], p)
+		yHi[i], yLo[i] = twoSum(s, (d+e)+yLo[i])
+	}
+}
+
+func scaleWideRef(dstHi, dstLo, xHi, xLo []float64, t float64) {
+	n := len(dstHi)
+	dstLo, xHi, xLo = dstLo[:n], xHi[:n], xLo[:n]
+	for i, x := range xHi {
+		p := float64(t * x)
+		dstHi[i], dstLo[i] = twoSum(p, math.FMA(t, xLo[i], math.FMA(t, x, -p)))
+	}
+}
+
+// shiftScaleWideRef adds m: a sum that cancels loses nothing that a product
+// could have spoilt before, so both parts are added with their errors.
+func shiftScaleWideRef(dstHi, dstLo, xHi, xLo []float64, m, mLow, inv float64) {
+	n := len(dstHi)
+	dstLo, xHi, xLo = dstLo[:n], xHi[:n], xLo[:n]
+	for i, x := range xHi {
+		s, d := twoSum(x, m)
+		t, e := twoSum(xLo[i], mLow)
+		s, d = twoSum(s, d+t)
+		s, d = twoSum(s, d+e)
+		dstHi[i], dstLo[i] = s*inv, d*inv
+	}
 }
 
 // scaleRef and axpyRef round once an element, which leaves the bits no choice:

@@ -19,6 +19,7 @@ const (
 
 	maxA, maxB  = 4, 3
 	maxTriangle = 5
+	maxWide     = 4
 )
 
 func main() {
@@ -35,6 +36,12 @@ func main() {
 	}
 	scale()
 	axpy()
+	for p := 1; p <= maxWide; p++ {
+		wideDots(mask, p)
+	}
+	axpyWide()
+	scaleWide()
+	shiftScaleWide()
 	peak()
 	Generate()
 }
@@ -300,27 +307,83 @@ func triangle(mask Mem, p int) {
 	RET()
 }
 
-// elementwise runs wide over 16 elements at a time, then over 4, then one over
-// single ones. at is the current place in the vector of that parameter.
-func elementwise(params []string, wide func(at []Mem), one func(at []Mem)) {
+// packed and single are the instructions on four numbers and on one.
+var (
+	packed = arith{YMM, VMOVUPD, VADDPD, VSUBPD, VMULPD, VFMADD231PD, VFMSUB231PD}
+	single = arith{XMM, VMOVSD, VADDSD, VSUBSD, VMULSD, VFMADD231SD, VFMSUB231SD}
+)
+
+type arith struct {
+	vector                            func() VecVirtual
+	move, add, sub, mul, fmadd, fmsub func(...Op)
+}
+
+func (w arith) load(m Mem) VecVirtual {
+	v := w.vector()
+	w.move(m, v)
+	return v
+}
+
+// sum and diff return a+b and a-b in a new register.
+func (w arith) sum(a, b VecVirtual) VecVirtual {
+	v := w.vector()
+	w.add(b, a, v)
+	return v
+}
+
+func (w arith) diff(a, b VecVirtual) VecVirtual {
+	v := w.vector()
+	w.sub(b, a, v)
+	return v
+}
+
+// of is the part of a broadcast that w works with.
+func (w arith) of(v VecVirtual) VecVirtual {
+	if v.Size() == w.vector().Size() {
+		return v
+	}
+	return v.AsX().(VecVirtual)
+}
+
+// twoSum returns a+b and, exactly, what was rounded off (Knuth).
+func (w arith) twoSum(a, b VecVirtual) (s, e VecVirtual) {
+	s = w.sum(a, b)
+	t := w.diff(s, a)
+	return s, w.sum(w.diff(a, w.diff(s, t)), w.diff(b, t))
+}
+
+// product returns a b and what is missing from the product of the double-doubles
+// (a, al) and (b, bl) but for al bl. The low parts may be in memory; nil is zero.
+func (w arith) product(a VecVirtual, al Op, b VecVirtual, bl Op) (p, e VecVirtual) {
+	p, e = w.vector(), w.vector()
+	w.mul(b, a, p)
+	VMOVAPD(p, e)
+	w.fmsub(b, a, e)
+	w.fmadd(bl, a, e)
+	if al != nil {
+		w.fmadd(al, b, e)
+	}
+	return p, e
+}
+
+// elementwise does 16 elements at a time, then 4, then single ones. at is the
+// current place in the vector of that parameter.
+func elementwise(params []string, do func(w arith, at []Mem)) {
 	var base []Register
 	for _, p := range params {
 		base = append(base, Load(Param(p), GP64()))
 	}
 	n := Load(Param("n"), GP64())
-	at := func(k int) []Mem {
-		var m []Mem
-		for _, b := range base {
-			m = append(m, Mem{Base: b, Disp: group * k})
-		}
-		return m
-	}
-	stage := func(label string, count, vectors int, do func(at []Mem)) {
+	stage := func(label string, count, times int, w arith) {
 		Label(label)
 		SUBQ(Imm(uint64(count)), n)
 		JL(LabelRef(label + "end"))
-		for k := range vectors {
-			do(at(k))
+		for k := range times {
+			var at []Mem
+			for _, b := range base {
+				at = append(at, Mem{Base: b, Disp: group * k})
+			}
+			do(w, at)
 		}
 		for _, b := range base {
 			ADDQ(Imm(uint64(8*count)), b)
@@ -329,27 +392,32 @@ func elementwise(params []string, wide func(at []Mem), one func(at []Mem)) {
 		Label(label + "end")
 		ADDQ(Imm(uint64(count)), n)
 	}
-	stage("sixteen", 4*lanes, 4, wide)
-	stage("four", lanes, 1, wide)
-	stage("single", 1, 1, one)
+	stage("sixteen", 4*lanes, 4, packed)
+	stage("four", lanes, 1, packed)
+	stage("single", 1, 1, single)
 	VZEROUPPER()
 	RET()
+}
+
+// broadcast fills a register with a parameter.
+func broadcast(param string) VecVirtual {
+	m, err := Param(param).Resolve()
+	if err != nil {
+		panic(err)
+	}
+	y := YMM()
+	VBROADCASTSD(m.Addr, y)
+	return y
 }
 
 func scale() {
 	TEXT("scaleAVX2", NOSPLIT, "func(dst, x, w *float64, n int)")
 	Doc("scaleAVX2 sets dst[i] = x[i] w[i].")
 	Pragma("noescape")
-	elementwise([]string{"dst", "x", "w"}, func(at []Mem) {
-		y := YMM()
-		VMOVUPD(at[1], y)
-		VMULPD(at[2], y, y)
-		VMOVUPD(y, at[0])
-	}, func(at []Mem) {
-		y := XMM()
-		VMOVSD(at[1], y)
-		VMULSD(at[2], y, y)
-		VMOVSD(y, at[0])
+	elementwise([]string{"dst", "x", "w"}, func(w arith, at []Mem) {
+		y := w.load(at[1])
+		w.mul(at[2], y, y)
+		w.move(y, at[0])
 	})
 }
 
@@ -357,22 +425,90 @@ func axpy() {
 	TEXT("axpyAVX2", NOSPLIT, "func(t float64, x, y *float64, n int)")
 	Doc("axpyAVX2 sets y[i] = fma(t, x[i], y[i]).")
 	Pragma("noescape")
-	t := YMM()
-	m, err := Param("t").Resolve()
-	if err != nil {
-		panic(err)
+	t := broadcast("t")
+	elementwise([]string{"x", "y"}, func(w arith, at []Mem) {
+		y := w.load(at[1])
+		w.fmadd(at[0], w.of(t), y)
+		w.move(y, at[1])
+	})
+}
+
+// wideDots keeps two registers for each dot product: the sums of the lanes and
+// what was left off them.
+func wideDots(mask Mem, p int) {
+	name := fmt.Sprintf("wideDots%dAVX2", p)
+	TEXT(name, NOSPLIT, "func(out, hi, lo *float64, stride int, bHi, bLo *float64, rows int)")
+	Doc(name+fmt.Sprintf(" multiplies %d double-double columns by column b. Of each, out gets", p),
+		"the sums of the four lanes, then what was left off them.")
+	Pragma("noescape")
+	hi, lo := loadColumns("hi", "stride", p), loadColumns("lo", "stride", p)
+	bHi, bLo := loadColumns("bHi", "", 1), loadColumns("bLo", "", 1)
+	acc := vectors(2 * p)
+	sweep(mask, []columns{hi, lo, bHi, bLo}, acc, func() {
+		w := packed
+		b, bl := w.load(bHi.at(0)), w.load(bLo.at(0))
+		for i := range p {
+			sum, left := acc[2*i], acc[2*i+1]
+			prod, e := w.product(w.load(hi.at(i)), lo.at(i), b, bl)
+			s, d := w.twoSum(sum, prod)
+			w.add(e, d, d)
+			w.add(d, left, left)
+			VMOVAPD(s, sum)
+		}
+	})
+	out := Load(Param("out"), GP64())
+	for i, s := range acc {
+		VMOVUPD(s, Mem{Base: out, Disp: group * i})
 	}
-	VBROADCASTSD(m.Addr, t)
-	elementwise([]string{"x", "y"}, func(at []Mem) {
-		y := YMM()
-		VMOVUPD(at[1], y)
-		VFMADD231PD(at[0], t, y)
-		VMOVUPD(y, at[1])
-	}, func(at []Mem) {
-		y := XMM()
-		VMOVSD(at[1], y)
-		VFMADD231SD(at[0], t.AsX(), y)
-		VMOVSD(y, at[1])
+	VZEROUPPER()
+	RET()
+}
+
+func axpyWide() {
+	TEXT("axpyWideAVX2", NOSPLIT, "func(t, tLow float64, xHi, xLo, yHi, yLo *float64, n int)")
+	Doc("axpyWideAVX2 adds t x to y in double-double.")
+	Pragma("noescape")
+	t, tLow := broadcast("t"), broadcast("tLow")
+	elementwise([]string{"xHi", "xLo", "yHi", "yLo"}, func(w arith, at []Mem) {
+		prod, e := w.product(w.of(t), w.of(tLow), w.load(at[0]), at[1])
+		s, d := w.twoSum(w.load(at[2]), prod)
+		w.add(e, d, d)
+		w.add(at[3], d, d)
+		s, d = w.twoSum(s, d)
+		w.move(s, at[2])
+		w.move(d, at[3])
+	})
+}
+
+func scaleWide() {
+	TEXT("scaleWideAVX2", NOSPLIT, "func(dstHi, dstLo, xHi, xLo *float64, t float64, n int)")
+	Doc("scaleWideAVX2 sets dst to t x in double-double.")
+	Pragma("noescape")
+	t := broadcast("t")
+	elementwise([]string{"dstHi", "dstLo", "xHi", "xLo"}, func(w arith, at []Mem) {
+		prod, e := w.product(w.of(t), nil, w.load(at[2]), at[3])
+		s, d := w.twoSum(prod, e)
+		w.move(s, at[0])
+		w.move(d, at[1])
+	})
+}
+
+func shiftScaleWide() {
+	TEXT("shiftScaleWideAVX2", NOSPLIT, "func(dstHi, dstLo, xHi, xLo *float64, m, mLow, inv float64, n int)")
+	Doc("shiftScaleWideAVX2 sets dst to (x + m) inv in double-double.")
+	Pragma("noescape")
+	m, mLow, inv := broadcast("m"), broadcast("mLow"), broadcast("inv")
+	elementwise([]string{"dstHi", "dstLo", "xHi", "xLo"}, func(w arith, at []Mem) {
+		s, d := w.twoSum(w.load(at[2]), w.of(m))
+		t, e := w.twoSum(w.load(at[3]), w.of(mLow))
+		w.add(t, d, d)
+		s, d = w.twoSum(s, d)
+		w.add(e, d, d)
+		s, d = w.twoSum(s, d)
+		w.mul(w.of(inv), s, s)
+		w.mul(w.of(inv), d, d)
+		w.move(s, at[0])
+		w.move(d, at[1])
 	})
 }
 
