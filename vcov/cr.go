@@ -37,15 +37,20 @@ func (x *solution) clusterRobust(kind string, sc *accum.Scores) *estimate {
 			v[i] *= r.factor
 		}
 	}
-	r.joint = func(w float64, q int) (float64, float64, bool, string) {
+	r.joint = clusterJoint(g)
+	r.noP = x.loneClusters(sc)
+	return r
+}
+
+// clusterJoint is (G-q)/((G-1) q) W on F(q, G-q) (the scaling of Hotelling 1931).
+func clusterJoint(g int) func(float64, int) (float64, float64, bool, string) {
+	return func(w float64, q int) (float64, float64, bool, string) {
 		if q > g-1 {
 			return 0, 0, false, "more restrictions than clusters less one"
 		}
-		qf := float64(q)
+		gf, qf := float64(g), float64(q)
 		return (gf - qf) / ((gf - 1) * qf) * w, gf - qf, gf > qf, "too few clusters"
 	}
-	r.noP = x.loneClusters(sc)
-	return r
 }
 
 // loneClusters marks the coefficients of each direction of the terms that lives in

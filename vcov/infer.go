@@ -13,7 +13,8 @@ type estimate struct {
 	v      []float64 // K x K, covariance of g, units of v
 	meat   []float64 // K x K, v = factor G^-1 meat G^-1; nil if v is not made so
 	factor float64
-	df     float64 // of t
+	df     float64   // of t
+	dfs    []float64 // of t for each coefficient, where they differ; NaN for none
 	// joint gives F and its second df from the Wald statistic of q restrictions;
 	// ok is false with a reason where no test exists.
 	joint func(w float64, q int) (f, df2 float64, ok bool, reason string)
@@ -50,11 +51,19 @@ func (x *solution) infer(e *Errors, r *estimate, level float64, full bool) {
 				se = 0
 			}
 			df = r.df
+			crit := crit
+			if r.dfs != nil {
+				df = r.dfs[j]
+				crit = nan
+				if df > 0 {
+					crit = tail.TQuantileTail(1-level, df)
+				}
+			}
 			if x.perfect {
 				se, lo, hi = 0, x.est[j], x.est[j]
-			} else if !(r.noP != nil && r.noP[j]) && se > 0 {
+			} else if !(r.noP != nil && r.noP[j]) && se > 0 && df > 0 {
 				t = x.est[j] / se
-				p, lp = tail.T(t, r.df)
+				p, lp = tail.T(t, df)
 				lo, hi = x.est[j]-crit*se, x.est[j]+crit*se
 			}
 		}
