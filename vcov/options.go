@@ -4,7 +4,7 @@ import "github.com/tallrow/tallrow/accum"
 
 // Kind asks for standard errors of one kind.
 type Kind struct {
-	Name    string // classical, hc0, hc1, hc2, hc3, cr0, cr1
+	Name    string // classical, hc0 .. hc5, hc4m, cr0, cr1
 	Cluster int    // index into Design.Keys for cr0 and cr1, else -1
 }
 
