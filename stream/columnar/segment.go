@@ -32,13 +32,16 @@ type badCell struct {
 	found       string
 }
 
-// segment reads one row group, or from a row on to the end of the file.
+// segment reads one part, or from a row on to the end of the file.
 type segment struct {
 	f       *File
 	number  int
-	group   int // being read
-	last    int // after which no more are read
-	left    int64
+	group   int   // being read
+	last    int   // before which the segment ends
+	from    int64 // row of the first group at which it begins
+	rows    int64 // that are still to be read, in all
+	left    int64 // of these in the group that is open
+	open    bool  // the readers are at the group
 	row     int64 // next row of the file
 	readers []reader
 	at      int // reader at work, for messages; -1 none
@@ -50,7 +53,6 @@ type segment struct {
 		codes [stream.BatchRows + 1]int32
 	}
 	tally stream.SegmentTally
-	done  int64 // rows of the group that are read
 	err   error
 }
 
@@ -77,20 +79,21 @@ func (f *File) newSegment(uses []stream.Use, number, group, last int) *segment {
 	return s
 }
 
-// openGroup points the readers at the group and passes over its first rows.
-func (s *segment) openGroup(skip int64) error {
+// openGroup points the readers at row s.from of the group.
+func (s *segment) openGroup() error {
 	rg := &s.f.meta.RowGroups[s.group]
-	s.left, s.done = rg.NumRows-skip, skip
-	s.row = s.f.first[s.group] + skip
+	s.left = min(rg.NumRows-s.from, s.rows)
+	s.row = s.f.first[s.group] + s.from
 	for j := range s.readers {
 		s.at = j
 		r := &s.readers[j]
 		r.open(s.f.file, r.col, &rg.Columns[r.col.leaf].MetaData, rg.NumRows, stream.Position{File: s.f.name, Group: s.group + 1})
-		if err := r.skip(skip); err != nil {
+		if err := r.seek(s.from, s.f.walkOf(s.group, r.col.leaf)); err != nil {
 			return err
 		}
 	}
 	s.at = -1
+	s.open = true
 	return nil
 }
 
@@ -136,17 +139,20 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	rows := 0
 	for rows < stream.BatchRows {
 		for s.left == 0 {
-			if err := s.finishGroup(); err != nil {
-				return err
-			}
-			if s.group+1 >= s.last {
-				if rows > 0 {
-					return s.deliver(b, rows)
+			if s.open {
+				if err := s.finishGroup(); err != nil {
+					return err
 				}
-				return io.EOF
+				if s.group+1 >= s.last {
+					if rows > 0 {
+						return s.deliver(b, rows)
+					}
+					return io.EOF
+				}
+				s.group++
+				s.from = 0
 			}
-			s.group++
-			if err := s.openGroup(0); err != nil {
+			if err := s.openGroup(); err != nil {
 				return err
 			}
 		}
@@ -164,7 +170,7 @@ func (s *segment) read(b *stream.Batch) (err error) {
 		}
 		s.row += int64(n)
 		s.left -= int64(n)
-		s.done += int64(n)
+		s.rows -= int64(n)
 		kept := n
 		if len(s.bad) > 0 {
 			if kept, err = s.dropBad(rows, n); err != nil {
@@ -176,8 +182,12 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	return s.deliver(b, rows)
 }
 
-// finishGroup checks that the chunks end with the rows of the group.
+// finishGroup checks that the chunks end with the rows of the group, if these are
+// its last.
 func (s *segment) finishGroup() error {
+	if s.row < s.f.first[s.group]+s.f.meta.RowGroups[s.group].NumRows {
+		return nil
+	}
 	for j := range s.readers {
 		r := &s.readers[j]
 		s.at = j
@@ -420,14 +430,15 @@ func (s *segment) Locate(mark int64) stream.Position {
 	return stream.Position{File: s.f.name, Group: g, Row: mark + 1}
 }
 
-// Tally implements stream.Segment. Bytes is the group's share of the file, by
-// the rows read.
+// Tally implements stream.Segment. Bytes is the share of the file that the rows
+// read have in their group.
 func (s *segment) Tally() stream.SegmentTally {
 	t := s.tally
 	if s.number >= 0 {
-		share := s.f.share(s.group)
-		if rows := s.f.meta.RowGroups[s.group].NumRows; rows > 0 {
-			share = mulDiv(share, s.done, rows)
+		p := s.f.parts[s.number]
+		share, rows := s.f.share(p.group), s.f.meta.RowGroups[p.group].NumRows
+		if rows > 0 {
+			share = mulDiv(share, p.first+p.rows-s.rows, rows) - mulDiv(share, p.first, rows)
 		}
 		t.Bytes = share
 	}
