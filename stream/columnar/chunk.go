@@ -41,6 +41,7 @@ type page struct {
 type dictionary struct {
 	n int
 	values
+	buf *chunkBuffers // whose memory the entries are in
 	// The cells the entries become, made when first asked for. bad lists the
 	// entries that do not fit.
 	floats []float64
@@ -70,9 +71,13 @@ type chunk struct {
 	buf   chunkBuffers
 }
 
-// chunkBuffers are kept from chunk to chunk.
+// chunkBuffers are kept from chunk to chunk, and from segment to segment.
 type chunkBuffers struct {
 	win, raw, plain, def, bools []byte
+	dict                        []byte // values of the dictionary
+	dictOff                     []uint32
+	dictFloats                  []float64
+	dictInts                    []int64
 	idx, i32                    []int32
 	i64                         []int64
 	f32                         []float32

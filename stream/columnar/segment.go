@@ -8,6 +8,7 @@ import (
 	"math"
 	"runtime/debug"
 	"slices"
+	"sync"
 
 	"github.com/tallrow/tallrow/stream"
 )
@@ -56,8 +57,17 @@ type segment struct {
 	err   error
 }
 
+// readerPool keeps the buffers of closed segments, as *[]reader: a page of each
+// column is much to allocate anew for every row group.
+var readerPool sync.Pool
+
 func (f *File) newSegment(uses []stream.Use, number, group, last int) *segment {
-	s := &segment{f: f, number: number, group: group, last: last, at: -1, readers: make([]reader, len(uses)), marks: make([]int64, stream.BatchRows)}
+	s := &segment{f: f, number: number, group: group, last: last, at: -1, marks: make([]int64, stream.BatchRows)}
+	if old, ok := readerPool.Get().(*[]reader); ok && len(*old) == len(uses) {
+		s.readers = *old
+	} else {
+		s.readers = make([]reader, len(uses))
+	}
 	for j, u := range uses {
 		r := &s.readers[j]
 		c := &f.cols[u.Column]
@@ -66,14 +76,16 @@ func (f *File) newSegment(uses []stream.Use, number, group, last int) *segment {
 		if u.AsNumber {
 			r.kind = stream.Float64
 		}
+		r.asFloat = r.kind == stream.Float64
 		switch r.kind {
 		case stream.Float64:
-			r.asFloat = true
-			r.f64 = make([]float64, stream.BatchRows)
+			r.f64 = grow(r.f64, stream.BatchRows)
+			r.codes = nil
 		case stream.Text:
-			r.codes = make([]int32, stream.BatchRows)
+			r.codes = grow(r.codes, stream.BatchRows)
 		default:
-			r.i64 = make([]int64, stream.BatchRows)
+			r.i64 = grow(r.i64, stream.BatchRows)
+			r.codes = nil
 		}
 	}
 	return s
@@ -267,10 +279,17 @@ func (s *segment) block(j, at, m int) {
 			def = nil
 		}
 	}
+	// Levels of 0 and 1 are searched, others looked at one by one.
+	few := def != nil && r.col.maxDef == 1 && m-present <= m/fewNulls
 	var bad []int
 	switch {
 	case r.asFloat:
 		dst := r.f64[at : at+m]
+		if def != nil && few {
+			bad = r.numbers(dst[:present])
+			spreadRuns(dst, present, def, math.NaN())
+			break
+		}
 		if def != nil {
 			dst = s.packed.f64[:present]
 		}
@@ -283,13 +302,20 @@ func (s *segment) block(j, at, m int) {
 		if def != nil {
 			dst = s.packed.codes[:present]
 		}
+		if few {
+			dst = r.codes[at : at+present]
+		}
 		r.tmp = r.text.codes(dst, &r.chunk, p.val, at == 0, r.tmp)
-		if def != nil {
+		if few {
+			spreadRuns(r.codes[at:at+m], present, def, -1)
+		} else if def != nil {
 			spreadCodes(r.codes[at:at+m], &s.packed.codes, def, r.col.maxDef)
 		}
 	default:
 		dst := r.i64[at : at+m]
-		if def != nil {
+		if few {
+			dst = dst[:present]
+		} else if def != nil {
 			dst = s.packed.i64[:present]
 		}
 		bad = r.integers(dst)
@@ -299,7 +325,14 @@ func (s *segment) block(j, at, m int) {
 				clear(r.null)
 				r.hasNull = true
 			}
-			spreadInts(r.i64[at:at+m], r.null[at:at+m], &s.packed.i64, def, r.col.maxDef)
+			if few {
+				spreadRuns(r.i64[at:at+m], present, def, 0)
+				for i, d := range def {
+					r.null[at+i] = d == 0
+				}
+			} else {
+				spreadInts(r.i64[at:at+m], r.null[at:at+m], &s.packed.i64, def, r.col.maxDef)
+			}
 		} else if r.hasNull {
 			clear(r.null[at : at+m])
 		}
@@ -319,9 +352,7 @@ func (r *reader) numbers(dst []float64) []int {
 	}
 	table := r.dict.asFloats(r.col)
 	idx := p.idx[p.val : p.val+len(dst)]
-	for i, k := range idx {
-		dst[i] = table[k]
-	}
+	lookUp(dst, table, idx)
 	return r.dict.badOf(idx)
 }
 
@@ -333,10 +364,20 @@ func (r *reader) integers(dst []int64) []int {
 	}
 	table := r.dict.asInts(r.col)
 	idx := p.idx[p.val : p.val+len(dst)]
+	lookUp(dst, table, idx)
+	return r.dict.badOf(idx)
+}
+
+// lookUp translates indexes.
+func lookUp[T float64 | int64](dst, table []T, idx []int32) {
+	for len(idx) >= 4 && len(dst) >= 4 {
+		i, d := (*[4]int32)(idx), (*[4]T)(dst)
+		d[0], d[1], d[2], d[3] = table[i[0]], table[i[1]], table[i[2]], table[i[3]]
+		idx, dst = idx[4:], dst[4:]
+	}
 	for i, k := range idx {
 		dst[i] = table[k]
 	}
-	return r.dict.badOf(idx)
 }
 
 // badOf lists the places of idx whose entries do not fit.
@@ -450,10 +491,34 @@ func (s *segment) Close() error {
 	if s.err == nil {
 		s.err = fmt.Errorf("%s: read after Close", s.f.name)
 	}
-	for j := range s.readers {
-		s.readers[j].chunk = chunk{col: s.readers[j].col}
+	if s.readers != nil {
+		for j := range s.readers {
+			r := &s.readers[j]
+			*r = reader{chunk: chunk{buf: r.buf}, f64: r.f64, i64: r.i64, codes: r.codes, null: r.null, tmp: r.tmp}
+		}
+		old := s.readers
+		s.readers = nil
+		readerPool.Put(&old)
 	}
 	return nil
+}
+
+// fewNulls: where at most one row in that many is missing, runs of values are
+// moved as wholes.
+const fewNulls = 24
+
+// spreadRuns puts the values at the front of dst into the rows that have one, from
+// the back, and null into the others. Levels are 0 or 1.
+func spreadRuns[T float64 | int64 | int32](dst []T, present int, def []byte, null T) {
+	end := len(dst)
+	for end > present {
+		i := bytes.LastIndexByte(def[:end], 0)
+		n := end - i - 1
+		copy(dst[i+1:end], dst[present-n:present])
+		dst[i] = null
+		present -= n
+		end = i
+	}
 }
 
 // The spread functions put packed values into the rows that have one and mark
