@@ -81,10 +81,10 @@ type secondWorker struct {
 	loneC  []*loneTracker // for the category columns, by raw value
 	kid    []int32
 
-	e, h, mult, t []float64
-	zs            []float64
-	idx           []int
-	val           []float64
+	e, h, mult []float64
+	zs         []float64
+	idx        []int
+	val        []float64
 
 	maxLever             float64
 	loneRows, heavyCount int64
@@ -113,7 +113,7 @@ func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, quad []float64)
 		w.loneC = append(w.loneC, newLoneTracker(len(s.Columns)))
 	}
 	w.kid = make([]int32, stride)
-	w.e, w.h, w.mult, w.t = make([]float64, stride), make([]float64, stride), make([]float64, stride), make([]float64, stride)
+	w.e, w.h, w.mult = make([]float64, stride), make([]float64, stride), make([]float64, stride)
 	w.zs = make([]float64, len(w.z))
 	return w
 }
@@ -130,9 +130,7 @@ func (w *secondWorker) add() error {
 	freq := w.root != nil && l.design.Spec.WeightKind == stream.Frequency
 	e := w.e[:n]
 	copy(e, w.col(l.v()))
-	for j := range l.p0 + 1 {
-		kernel.Axpy(rp.Theta[j], w.col(j), e)
-	}
+	kernel.Combine(e, w.z, stride, n, l.p0+1, rp.Theta)
 	for g := range l.groups {
 		for p, c := range l.groups[g].parts {
 			z := w.col(c)
@@ -166,9 +164,7 @@ func (w *secondWorker) add() error {
 		mult := w.mult[:n]
 		if rp.Whitener == nil {
 			by := math.Sqrt(g(0))
-			for r, x := range e {
-				mult[r] = x * by
-			}
+			kernel.ShiftScale(mult, e, 0, by) // e by; the sum is of no use
 		} else {
 			for r, x := range e {
 				if 1-h[r] < LoneGap || heavy(r) {
@@ -258,18 +254,7 @@ func (w *secondWorker) findColumns() error {
 func (w *secondWorker) leverages(h []float64) {
 	l, n, rp := w.lay, len(h), w.pass
 	if w.quad == nil {
-		t := w.t[:n]
-		for k := range rp.K {
-			clear(t)
-			for j := range l.p0 + 1 {
-				if x := rp.Whitener[j*rp.K+k]; x != 0 {
-					kernel.Axpy(x, w.col(j), t)
-				}
-			}
-			for r, x := range t {
-				h[r] = math.FMA(x, x, h[r])
-			}
-		}
+		kernel.Leverage(h, w.z, stride, n, l.p0+1, rp.Whitener, rp.K)
 		return
 	}
 	p := len(w.state.Columns)
