@@ -20,6 +20,15 @@
 // 128-bit fixed point. Segments, folds and blocks are cut by the input alone, so
 // the result does not depend on the number of workers or on who came first.
 //
+// # Extended arithmetic
+//
+// In Extended arithmetic terms of + - * / and whole powers, rows z, and second
+// moments of the dense columns are numbers of about 106 bits (Wide): the frame's
+// coefficients stay float64 and are taken as exact. Within a segment such sums are
+// made in row order; both their parts are then joined exactly. What is summed by
+// level or cluster, fourth moments and leverages are float64 and take z rounded,
+// which is right to its last bit. Weights are float64, their roots are not.
+//
 // # Limits
 //
 // One worker holds its own keyed tables; they are joined at the end.

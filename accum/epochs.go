@@ -13,6 +13,7 @@ import (
 type epoch struct {
 	frame    *Frame
 	gram     []float64 // packed, width columns
+	gramLow  []float64 // what gram leaves off, in extended arithmetic
 	fourth   []float64
 	cats     *categories
 	tables   []*keyTable
@@ -75,7 +76,12 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		w.budget.dropped.Store(true)
 	}
 	e.gram = make([]float64, len(w.gram))
-	w.gramX.values(e.gram)
+	if w.wide != nil {
+		e.gramLow = make([]float64, len(w.gram))
+		w.gramX.wides(e.gram, e.gramLow)
+	} else {
+		w.gramX.values(e.gram)
+	}
 	if w.q != nil {
 		e.fourth = make([]float64, len(w.fourth))
 		w.fourX.values(e.fourth)
@@ -138,24 +144,33 @@ func (w *epochWorker) end() error {
 // runEpochs reads a source that cannot be sampled. Within the first segment an
 // epoch is 1, 1, 2, 4, ... blocks, later 1, 2, 4, ... segments; each has a frame
 // from all rows before it and its own first block, so that a file sorted by a
-// term cannot spoil the sums.
-func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift bool, workers int) ([]*epoch, error) {
+// term cannot spoil the sums. Under Auto the first segment with used rows is
+// summed in extended arithmetic and decides about the rest.
+func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift bool, o Options) (_ []*epoch, extended bool, err error) {
+	workers := max(1, o.Workers)
+	decided := o.Arithmetic != Auto
+	extended = o.Arithmetic != Double
 	seg, err := scan.Next(ctx)
 	if errors.Is(err, io.EOF) {
-		return nil, nil
+		return nil, false, nil
 	}
 	if err != nil {
-		return nil, err
+		return nil, false, err
 	}
 	ew := &epochWorker{shift: shift}
-	ew.firstWorker = newFirstWorker(l, newLoader(l, trivialFrame(l)), needs, b)
+	first := newLoader(l, trivialFrame(l))
+	if extended {
+		first.extend()
+	}
+	first.eval.Extended(true) // to know what float64 leaves off
+	ew.firstWorker = newFirstWorker(l, first, needs, b)
 	once := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
 	if err := p.run(ctx, []blockWorker{ew}, &begun{seg: seg}, once); err != nil {
-		return nil, err
+		return nil, false, err
 	}
 	tail := ew.eval.Tally // rows that were read but not used still count
 	if err := ew.end(); err != nil {
-		return nil, err
+		return nil, false, err
 	}
 	epochs := ew.epochs
 	if len(epochs) == 0 {
@@ -165,21 +180,31 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 	for size := 1; ; size *= 2 {
 		seg, err := scan.Next(ctx)
 		if errors.Is(err, io.EOF) {
-			return epochs, nil
+			if !decided {
+				extended = chooseAfter(l, epochs, shift, true)
+			}
+			return epochs, extended, nil
 		}
 		if err != nil {
-			return nil, err
+			return nil, false, err
 		}
 		ws := make([]*firstWorker, workers)
 		bw := make([]blockWorker, workers)
+		waiting := !slices.ContainsFunc(epochs, func(e *epoch) bool { return e.rows > 0 })
+		if !decided && !waiting {
+			extended, decided = chooseAfter(l, epochs, shift, false), true
+		}
 		for i := range ws {
-			ws[i] = newFirstWorker(l, newLoader(l, nil), needs, b)
+			ld := newLoader(l, nil)
+			if extended {
+				ld.extend()
+			}
+			ws[i] = newFirstWorker(l, ld, needs, b)
 			bw[i] = ws[i]
 		}
 		// The first block of the epoch takes part in its frame. As long as no row was
 		// used, the frame waits for the first that is.
 		rows := previousRows(l, epochs)
-		waiting := !slices.ContainsFunc(epochs, func(e *epoch) bool { return e.rows > 0 })
 		ld := ws[0].loader
 		start := &begun{seg: seg}
 		for {
@@ -203,7 +228,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 		}
 		if err != nil && !errors.Is(err, io.EOF) {
 			seg.Close()
-			return nil, err
+			return nil, false, err
 		}
 		if waiting && !start.loaded {
 			size = 1 // still nothing to make a frame of
@@ -221,7 +246,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 			return scan.Next(ctx)
 		}
 		if err := p.run(ctx, bw, start, next); err != nil {
-			return nil, err
+			return nil, false, err
 		}
 		epochs = append(epochs, joinWorkers(ws))
 	}

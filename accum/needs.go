@@ -26,6 +26,10 @@ type Options struct {
 	Meter    *Meter
 	// Timings, if not nil, learns where the time goes.
 	Timings *Timings
+	// Arithmetic is Double unless given.
+	Arithmetic Arithmetic
+	// Sample, if not nil, is what TakeSample gave for the same input and design.
+	Sample *Sample
 }
 
 // MemoryError says that the sums do not fit.

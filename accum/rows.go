@@ -33,6 +33,7 @@ type loader struct {
 	sums  []float64 // raw column sums of the present segment
 	negH  []float64
 	low   []float64 // p0 columns: what float64 leaves off c; nil unless the frame needs it
+	wide  *wideRows // nil in double arithmetic
 	rest  []float64
 	watch stopwatch
 }
@@ -56,6 +57,22 @@ func (w *loader) col(j int) []float64 { return w.z[j*stride : j*stride+w.block.R
 
 // load computes z for the block.
 func (w *loader) load() {
+	if w.wide != nil {
+		w.placeWide()
+	} else {
+		w.place()
+	}
+	if n := w.block.Rows; w.root != nil {
+		for r, x := range w.block.Weight[:n] {
+			w.root[r] = math.Sqrt(x)
+		}
+		w.sums[w.lay.nx+1] += sum4(w.block.Weight[:n])
+	}
+	w.watch.lap(StageFrame)
+}
+
+// place sets the columns of z and adds to the raw sums.
+func (w *loader) place() {
 	l, f, n := w.lay, w.frame, w.block.Rows
 	for j := range l.p0 {
 		w.sums[j] += kernel.ShiftScale(w.col(1+j), w.block.X[j], f.Shift[j], f.Inv[j])
@@ -79,13 +96,6 @@ func (w *loader) load() {
 		w.negH = append(w.negH, -h)
 	}
 	kernel.Combine(v, w.z[stride:], stride, n, len(w.negH), w.negH)
-	if w.root != nil {
-		for r, x := range w.block.Weight[:n] {
-			w.root[r] = math.Sqrt(x)
-		}
-		w.sums[l.nx+1] += sum4(w.block.Weight[:n])
-	}
-	w.watch.lap(StageFrame)
 }
 
 // whitenCarefully is u = T'c by compensated dot products (Ogita, Rump, Oishi

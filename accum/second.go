@@ -16,6 +16,8 @@ type RowPass struct {
 	// Theta has P+1 entries; the residual of a row, in units 1/YInv, is
 	// sum_c Theta_c z_c with v last.
 	Theta []float64
+	// ThetaLow is what Theta leaves off, where the state is extended.
+	ThetaLow []float64
 	// Whitener is the P x K matrix W, row by row, with (X'X)^-1 = W W'. The
 	// leverage of a row is h = |W'z|^2, times w for precision and sampling
 	// weights. Nil if no leverage is wanted.
@@ -93,7 +95,11 @@ type secondWorker struct {
 
 func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, quad []float64) *secondWorker {
 	l := s.lay
-	w := &secondWorker{loader: newLoader(l, s.Frame), state: s, pass: rp, unit: unit, mem: mem, quad: quad}
+	ld := newLoader(l, s.Frame)
+	if s.Extended {
+		ld.extend()
+	}
+	w := &secondWorker{loader: ld, state: s, pass: rp, unit: unit, mem: mem, quad: quad}
 	for range rp.Weights {
 		w.meats = append(w.meats, newMeat(l, l.p0+1, unit))
 	}
@@ -129,15 +135,10 @@ func (w *secondWorker) add() error {
 	l, n, rp := w.lay, w.block.Rows, w.pass
 	freq := w.root != nil && l.design.Spec.WeightKind == stream.Frequency
 	e := w.e[:n]
-	copy(e, w.col(l.v()))
-	kernel.Combine(e, w.z, stride, n, l.p0+1, rp.Theta)
-	for g := range l.groups {
-		for p, c := range l.groups[g].parts {
-			z := w.col(c)
-			for r, b := range w.rowb[g][:n] {
-				e[r] = math.FMA(rp.Theta[int(b)+p], z[r], e[r])
-			}
-		}
+	if w.wide != nil {
+		w.residualsWide(e)
+	} else {
+		w.residuals(e)
 	}
 	h := w.h[:n]
 	clear(h)
@@ -216,6 +217,21 @@ func (w *secondWorker) add() error {
 	}
 	w.watch.lap(StageClusters)
 	return nil
+}
+
+// residuals sets e to sum_c theta_c z_c.
+func (w *secondWorker) residuals(e []float64) {
+	l, rp := w.lay, w.pass
+	copy(e, w.col(l.v()))
+	kernel.Combine(e, w.z, stride, len(e), l.p0+1, rp.Theta)
+	for g := range l.groups {
+		for p, c := range l.groups[g].parts {
+			z := w.col(c)
+			for r, b := range w.rowb[g][:len(e)] {
+				e[r] = math.FMA(rp.Theta[int(b)+p], z[r], e[r])
+			}
+		}
+	}
 }
 
 // findColumns finds, for each row and group, the internal column of its indicator.

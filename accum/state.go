@@ -26,6 +26,10 @@ type State struct {
 	// category that occur, in order of value.
 	Groups []Group
 	Levels [][]Key
+	// Extended says that terms and second moments were made with twice the digits;
+	// Dense then has the second moments of (1, u, v), u the numeric terms, row by row.
+	Extended bool
+	Dense    []Wide
 	// S is the (P+1) x (P+1) matrix of second moments of the internal columns and
 	// v, row by row, P = len(Columns). Weighted.
 	S []float64
@@ -132,9 +136,9 @@ func (c *comboIndex) find(levels []int32) int {
 }
 
 // newState joins the epochs. refit is the unit that keyed sums should have.
-func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, b *budget) (s *State, refit int, err error) {
+func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, b *budget) (s *State, refit int, err error) {
 	s = &State{Design: l.design, lay: l, checks: p.checks, Segments: p.segments, Bytes: p.bytes,
-		Read: p.read, Malformed: p.bad, Dropped: b.dropped.Load()}
+		Extended: extended, Read: p.read, Malformed: p.bad, Dropped: b.dropped.Load()}
 	slices.SortFunc(p.problems, func(a, b problem) int {
 		return cmp.Or(cmp.Compare(a.segment, b.segment), cmp.Compare(a.at, b.at))
 	})
@@ -272,13 +276,16 @@ func (s *State) assemble() error {
 		m := make([]float64, n*n)
 		s.placeDense(m, e.gram, l.p0+2)
 		s.placeTables(m, e.cats, e.tables)
-		s.maps[i] = denseMap(l, e.frame, s.Frame)
+		s.maps[i] = s.mapFrom(e.frame)
 		if e.frame != s.Frame {
 			m = s.move(i, m, n)
 		}
 		for j, x := range m {
 			s.S[j] += x
 		}
+	}
+	if s.Extended {
+		s.assembleWide()
 	}
 	for _, x := range s.S {
 		if math.IsNaN(x) || math.IsInf(x, 0) {
