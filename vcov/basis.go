@@ -32,6 +32,7 @@ type basis struct {
 	w      []float64 // K x K, row by row
 	offset []float64 // K: coordinates of (provisional fit) of the outcome
 	beside []float64 // P: what of that fit the model does not span; nil if nothing
+	wide   *wideBasis
 	bases  map[string]string
 	notes  []Warning
 }
@@ -301,6 +302,9 @@ func (b *basis) selection() {
 			b.w[place[u.column-col.Part]*k+a] -= f.Shift[d] * f.Inv[d]
 		}
 	}
+	if s.Extended {
+		b.carrierRows(carry, place)
+	}
 }
 
 // factor handles the general case by an orthonormal basis of the model's span.
@@ -317,6 +321,7 @@ func (b *basis) factor() {
 		place[u.column] = a
 	}
 	r := make([]float64, k*k)
+	empty := make([]bool, k) // in the span of earlier ones
 	for a, u := range b.cols {
 		col := &s.Columns[u.column]
 		v := make([]float64, p)
@@ -376,6 +381,7 @@ func (b *basis) factor() {
 		}
 		d := math.Sqrt(dot(v, v))
 		if d <= 1e-13*norm {
+			empty[a] = true
 			clear(v) // the column is in the span of earlier ones whatever the data
 			d = 1
 			if r[a*k+a] = norm; norm == 0 {
@@ -396,6 +402,9 @@ func (b *basis) factor() {
 		}
 	}
 	b.w = inverseUpper(r, k)
+	if s.Extended {
+		b.factorWide(carry, empty)
+	}
 	off := b.internalOffset(carry)
 	b.offset = make([]float64, k)
 	rest := append([]float64(nil), off...)
@@ -403,7 +412,9 @@ func (b *basis) factor() {
 		b.offset[a] = dot(q[a], off)
 		axpy(-b.offset[a], q[a], rest)
 	}
-	if size := math.Sqrt(dot(off, off)); math.Sqrt(dot(rest, rest)) > 1e-14*size {
+	if s.Extended {
+		b.besideWide(off)
+	} else if size := math.Sqrt(dot(off, off)); math.Sqrt(dot(rest, rest)) > 1e-14*size {
 		b.beside = rest
 	}
 }

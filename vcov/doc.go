@@ -34,7 +34,8 @@
 // # Numbers
 //
 // Everything is solved in the coordinates of the sums (see package accum) and mapped
-// to the coefficients at the end. What does not exist is NaN here, null in JSON, and
-// has a reason in Errors.Reason or Result.Warnings. A Result is the same to the last
-// bit for any number of workers.
+// to the coefficients at the end. From extended sums the solution is refined and
+// mapped with twice the digits; errors are float64 of sums that are right. What does
+// not exist is NaN here, null in JSON, and has a reason in Errors.Reason or
+// Result.Warnings. A Result is the same to the last bit for any number of workers.
 package vcov

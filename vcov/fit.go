@@ -36,7 +36,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
 	if o.Timings {
 		f.scan.Timings = new(accum.Timings)
 	}
@@ -52,6 +52,8 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	r.Run.Seconds = Number(time.Since(start).Seconds())
 	return r, nil
 }
+
+var arithmetics = map[string]accum.Arithmetic{"": accum.Auto, "auto": accum.Auto, "double": accum.Double, "extended": accum.Extended}
 
 type fitter struct {
 	ctx     context.Context
@@ -87,13 +89,18 @@ func (f *fitter) first() error {
 	if err := f.solve(s); err != nil {
 		return err
 	}
-	if f.sol.needsFrame() && f.src.Info().Rewindable {
+	lossy := arithmetics[f.o.Arithmetic] == accum.Auto && !s.Extended && s.Frame.Lossy()
+	if (lossy || f.sol.needsFrame()) && f.src.Info().Rewindable {
 		s, err := accum.Again(f.ctx, f.src, s, f.plan.needs, f.scan)
 		if err != nil {
 			return err
 		}
 		f.count(s)
-		f.warn = append(f.warn, Warning{Code: "frame-renewed", Text: "the first pass was repeated: the rows that set shift and scale did not stand for the whole input"})
+		if lossy && s.Extended {
+			f.note("frame-renewed", "the first pass was repeated in extended arithmetic: the first rows did not show how collinear the terms are")
+		} else {
+			f.note("frame-renewed", "the first pass was repeated: the rows that set shift and scale did not stand for the whole input")
+		}
 		if err := f.solve(s); err != nil {
 			return err
 		}
@@ -121,7 +128,13 @@ func (f *fitter) sumLoss() {
 	if x.blur > blurLimit {
 		f.note("digits", "some terms are so close to combinations of others, or so small beside them, that estimates and errors may have only about %d digits", digits(x.blur))
 	}
+	if fr := f.state.Frame; !f.state.Extended && fr.Lossy() && !x.perfect {
+		f.note("digits", "terms are nearly collinear: some estimates may have only about %d digits; --arithmetic extended keeps more", int(fr.Digits))
+	}
 	if x.perfect || x.df() <= 0 {
+		return
+	}
+	if f.state.Extended && len(f.state.Groups) == 0 {
 		return
 	}
 	if f.rssLoss = 0x1p-53 * x.svv / x.rss; f.rssLoss > lossLimit {
@@ -186,6 +199,9 @@ func (f *fitter) second() error {
 	}
 	f.route = "row pass"
 	rp := accum.RowPass{Theta: x.theta}
+	if s.Extended {
+		rp.ThetaLow = x.thetaLow
+	}
 	seen := map[string]bool{}
 	lever := false
 	for _, k := range f.o.Errors {

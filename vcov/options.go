@@ -14,6 +14,9 @@ type Options struct {
 	Level  float64 // of intervals; 0 means 0.95
 	// Passes forces one or two passes; 0 lets the planner choose.
 	Passes int
+	// Arithmetic is "double", "extended", or "auto" (also the empty string): extended
+	// where the first rows say that coefficients would lose digits.
+	Arithmetic string
 	// Workers is the number of goroutines that read and sum; 0 means one for
 	// each processor.
 	Workers int

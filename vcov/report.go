@@ -53,6 +53,12 @@ func (f *fitter) result() *Result {
 	r.Model = f.model()
 	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments,
 		Bytes: f.bytes, Condition: Number(x.condition())}
+	if s.Extended {
+		r.Run.Arithmetic, r.Run.ArithmeticReason = "extended", whyExtended(s.Frame)
+		if f.o.Arithmetic == "extended" {
+			r.Run.ArithmeticReason = "asked for"
+		}
+	}
 	return r
 }
 

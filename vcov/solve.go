@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 
+	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
 	"gonum.org/v1/gonum/mat"
 )
@@ -25,20 +26,22 @@ const (
 // with S the internal second moments. Time O(P K^2 + K^3).
 type solution struct {
 	*basis
-	e       *elimination
-	gamma   []float64 // solution for v
-	full    []float64 // with the provisional fit
-	wAlias  []float64 // W with aliased columns expressed by kept ones
-	inverse []float64 // G^-1
-	theta   []float64 // P+1: residual direction, see accum.RowPass
-	rss     float64   // units 1/YInv^2
-	svv     float64
-	blur    float64 // bound of the relative error that forming and solving G costs
-	est     []float64
-	alias   []Alias
-	n       int64 // sum of frequencies, or rows
-	perfect bool
-	kind    stream.WeightKind
+	e        *elimination
+	gamma    []float64    // solution for v
+	fine     []accum.Wide // gamma with twice the digits; nil in double arithmetic
+	thetaLow []float64    // what theta leaves off
+	full     []float64    // with the provisional fit
+	wAlias   []float64    // W with aliased columns expressed by kept ones
+	inverse  []float64    // G^-1
+	theta    []float64    // P+1: residual direction, see accum.RowPass
+	rss      float64      // units 1/YInv^2
+	svv      float64
+	blur     float64 // bound of the relative error that forming and solving G costs
+	est      []float64
+	alias    []Alias
+	n        int64 // sum of frequencies, or rows
+	perfect  bool
+	kind     stream.WeightKind
 }
 
 func solve(b *basis) *solution {
@@ -76,6 +79,12 @@ func solve(b *basis) *solution {
 	x.inverse = x.e.inverse()
 	x.svv = svv
 	x.rss = max(0, x.svv-dot(x.gamma, c))
+	if s.Extended {
+		x.refine()
+		if len(s.Groups) == 0 {
+			x.blur *= 0x1p-50 // the sums have twice the digits
+		}
+	}
 	x.full = make([]float64, k)
 	for i := range k {
 		x.full[i] = x.gamma[i] + b.offset[i]
@@ -86,6 +95,9 @@ func solve(b *basis) *solution {
 		if i < p && b.beside != nil {
 			x.theta[i] += b.beside[i]
 		}
+	}
+	if s.Extended {
+		x.wideTheta()
 	}
 	x.estimates()
 	// rss has an error of some eps svv: only what is below the limit with that error
@@ -176,6 +188,10 @@ func (x *solution) estimates() {
 		for _, a := range x.e.drop {
 			x.est[a] = math.NaN()
 		}
+		x.wideEstimates()
+		return
+	}
+	if x.wideEstimates() {
 		return
 	}
 	for i := range k {
