@@ -1,9 +1,9 @@
 package delimited
 
 import (
-	"hash/maphash"
+	"bytes"
+	"encoding/binary"
 	"math"
-	"strings"
 
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/stream/internal/scan"
@@ -12,6 +12,7 @@ import (
 // column is the output of one stream.Use.
 type column struct {
 	schema *stream.Column
+	at     int         // index in the schema
 	number bool        // Use.AsNumber
 	kind   stream.Kind // of the vector
 
@@ -22,11 +23,13 @@ type column struct {
 	// holes is true when a cell of this batch was missing.
 	holes bool
 	text  interner
+	day   dayMemo
 }
 
-func newColumn(c *stream.Column, asNumber bool) *column {
-	o := &column{schema: c, number: asNumber, kind: c.Kind}
-	if asNumber {
+func newColumn(schema *stream.Schema, u stream.Use) *column {
+	c := &schema.Columns[u.Column]
+	o := &column{schema: c, at: u.Column, number: u.AsNumber, kind: c.Kind}
+	if u.AsNumber {
 		o.kind = stream.Float64
 	}
 	switch o.kind {
@@ -96,6 +99,88 @@ func (o *column) setMissing(r int) {
 	}
 }
 
+// read reads the column's cells in the first n rows of the index into the rows
+// from r on. It returns n or the number of the first row with a misfit.
+func (o *column) read(p *parser, r, n int) int {
+	c := scan.Column{Text: p.text, Ends: p.index.Ends[o.at:], Stride: p.columns, Last: o.at == p.columns-1}
+	if o.holes {
+		clear(o.null[r : r+n]) // of rows that were read before, in vain
+	}
+	for k := 0; ; k++ {
+		switch {
+		case o.kind == stream.Text:
+			k = o.texts(&c, k, o.code[r:r+n], p.rules)
+		case o.schema.Kind == stream.Bool:
+			k = o.bools(&c, k, r, n)
+		case o.kind == stream.Float64:
+			k = c.Floats(k, o.f64[r:r+n], p.rules.point)
+		case o.kind == stream.Int64:
+			k = c.Ints(k, o.i64[r:r+n])
+		case o.kind == stream.Time:
+			k = o.times(&c, k, o.i64[r:r+n])
+		}
+		if k == n {
+			break
+		}
+		// A cell in another form.
+		start, end := c.Cell(k)
+		cell, quoted := p.text[start:end], false
+		if end > start && cell[0] == '"' {
+			cell, quoted = cell[1:len(cell)-1], true
+			if bytes.IndexByte(cell, '"') >= 0 {
+				p.scratch = p.scratch[:0]
+				cell = p.undouble(cell)
+			}
+		}
+		if o.store(r+k, cell, quoted, p.rules) != scan.OK {
+			n = k
+			break
+		}
+	}
+	if p.rules.readable && o.kind != stream.Text {
+		for k := range n {
+			if start, end := c.Cell(k); p.rules.missing(p.text[start:end]) {
+				o.setMissing(r + k)
+			}
+		}
+	}
+	return n
+}
+
+// bools reads true and false. It returns the row of the first cell that is
+// written otherwise, or n.
+func (o *column) bools(c *scan.Column, k, r, n int) int {
+	text := c.Text[:len(c.Text)+scan.Pad]
+	for ; k < n; k++ {
+		start, end := c.Cell(k)
+		length := end - start
+		if uint(length-4) > 1 {
+			return k
+		}
+		// Without a branch on the value: nobody can foresee it.
+		w := (binary.LittleEndian.Uint64(text[start:start+8]) | blanks) << (64 - 8*length&63)
+		if w != truths[length-4] {
+			return k
+		}
+		v := 5 - length
+		if o.number {
+			o.f64[r+k] = float64(v)
+		} else {
+			o.i64[r+k] = int64(v)
+		}
+	}
+	return k
+}
+
+// truths are the words true and false in the highest bytes, blanks makes upper
+// case lower.
+var truths = [2]uint64{
+	binary.LittleEndian.Uint64([]byte("\x00\x00\x00\x00true")),
+	binary.LittleEndian.Uint64([]byte("\x00\x00\x00false")),
+}
+
+const blanks = 0x2020202020202020
+
 // store reads a cell into row r.
 func (o *column) store(r int, cell []byte, quoted bool, rules *rules) scan.Status {
 	if o.kind == stream.Text {
@@ -153,85 +238,4 @@ func (o *column) store(r int, cell []byte, quoted bool, rules *rules) scan.Statu
 		o.setInt(r, v)
 	}
 	return status
-}
-
-const (
-	maxDict      = 65536
-	maxDictBytes = 4 << 20
-)
-
-// interner gives equal cells of a text column equal codes.
-type interner struct {
-	dict  *stream.Dict
-	seed  maphash.Seed
-	slots []int32 // code + 1, found by hash; 0 is free
-	last  int32
-	bytes int
-	chunk strings.Builder // holds the bytes of many values
-}
-
-func (t *interner) start() {
-	if t.slots == nil {
-		t.seed = maphash.MakeSeed()
-		t.slots = make([]int32, 128)
-	} else {
-		clear(t.slots)
-	}
-	t.dict = &stream.Dict{}
-	t.last = -1
-	t.bytes = 0
-}
-
-// limit begins a new dictionary when the old one could overflow in this batch.
-func (t *interner) limit() {
-	if len(t.dict.Values)+stream.BatchRows > maxDict || t.bytes > maxDictBytes {
-		t.start()
-	}
-}
-
-func (t *interner) intern(cell []byte) int32 {
-	values := t.dict.Values
-	if t.last >= 0 && values[t.last] == string(cell) {
-		return t.last
-	}
-	mask := uint64(len(t.slots) - 1)
-	h := maphash.Bytes(t.seed, cell) & mask
-	for ; t.slots[h] != 0; h = (h + 1) & mask {
-		if c := t.slots[h] - 1; values[c] == string(cell) {
-			t.last = c
-			return c
-		}
-	}
-	c := int32(len(values))
-	t.dict.Values = append(values, t.keep(cell))
-	t.slots[h] = c + 1
-	t.last = c
-	if 2*len(t.dict.Values) > len(t.slots) {
-		t.grow()
-	}
-	return c
-}
-
-// keep copies a cell into a chunk shared by many values.
-func (t *interner) keep(cell []byte) string {
-	t.bytes += len(cell)
-	if t.chunk.Cap()-t.chunk.Len() < len(cell) {
-		t.chunk = strings.Builder{}
-		t.chunk.Grow(max(min(1<<16, 256+2*t.bytes), len(cell)))
-	}
-	from := t.chunk.Len()
-	t.chunk.Write(cell)
-	return t.chunk.String()[from:]
-}
-
-func (t *interner) grow() {
-	t.slots = make([]int32, 2*len(t.slots))
-	mask := uint64(len(t.slots) - 1)
-	for c, v := range t.dict.Values {
-		h := maphash.String(t.seed, v) & mask
-		for t.slots[h] != 0 {
-			h = (h + 1) & mask
-		}
-		t.slots[h] = int32(c) + 1
-	}
 }

@@ -198,7 +198,7 @@ func (p *plainScan) load(s *segment) error {
 	if k == 0 {
 		s.tally.Bytes = hi
 	}
-	buf := p.src.buffer(int(hi-lo) + 2 + firstOverhang)
+	buf := p.src.buffer(int(hi-lo) + 2 + firstOverhang + scan.Pad)
 	mine := p.take(k)
 	var c counts
 	var err error
@@ -234,8 +234,8 @@ func (p *plainScan) load(s *segment) error {
 		}
 		line += lineAt(buf[1:], first-1) - 1
 	}
-	buf, s.cut, err = p.src.finish(p.ra, buf, hi, p.size, st.inside != (c.quotes&1 == 1))
-	s.setText(buf, buf[first:], from+int64(first), line)
+	buf, s.parser.cut, err = p.src.finish(p.ra, buf, hi, p.size, st.inside != (c.quotes&1 == 1))
+	s.setText(buf, first, from+int64(first), line)
 	return err
 }
 

@@ -1,62 +1,9 @@
 package delimited
 
 import (
-	"bytes"
-
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/stream/internal/scan"
 )
-
-// How a column of the text is read.
-const (
-	opSkip = iota
-	opFloat
-	opInt
-	opText
-	opCell // any kind, or several uses of one column
-)
-
-// step reads one column of the text, or passes over run columns.
-type step struct {
-	op  int
-	run int
-	out *column
-	all []*column // opCell
-}
-
-// program lists the steps for one row.
-func program(schema *stream.Schema, uses []stream.Use) (steps []step, out []*column) {
-	by := make([][]*column, len(schema.Columns))
-	for _, u := range uses {
-		c := newColumn(&schema.Columns[u.Column], u.AsNumber)
-		by[u.Column] = append(by[u.Column], c)
-		out = append(out, c)
-	}
-	for _, cs := range by {
-		s := step{op: opCell, run: 1, all: cs}
-		switch {
-		case len(cs) == 0:
-			if k := len(steps) - 1; k >= 0 && steps[k].op == opSkip {
-				steps[k].run++
-				continue
-			}
-			s.op = opSkip
-		case len(cs) > 1:
-		default:
-			s.out = cs[0]
-			switch {
-			case s.out.kind == stream.Float64 && s.out.schema.Kind != stream.Bool:
-				s.op = opFloat
-			case s.out.kind == stream.Int64:
-				s.op = opInt
-			case s.out.kind == stream.Text:
-				s.op = opText
-			}
-		}
-		steps = append(steps, s)
-	}
-	return steps, out
-}
 
 // trouble is what was wrong with a row.
 type trouble struct {
@@ -70,102 +17,37 @@ type trouble struct {
 type parser struct {
 	tokens
 	rules   *rules
-	steps   []step
+	out     []*column
 	columns int
+	cut     bool // the text stops inside its last row
+	index   scan.Index
+	try     int // rows that block reads at once
 	bad     trouble
-	cells   []cell // of recheck
+	cells   []cell // of one
 }
 
-// read reads the row at i into row r of the columns and returns the index of
-// the next row, or -1 and p.bad.
-func (p *parser) read(i, r int) int {
-	text, delim, point := p.text, p.delim, p.rules.point
-	left := p.columns
-	for k := range p.steps {
-		s := &p.steps[k]
-		switch s.op {
-		case opSkip:
-			at, more := scan.Skip(text, i, delim, s.run)
-			if more > 0 && text[at] == '"' {
-				if at, more = p.skipQuoted(i, at, more); at < 0 {
-					return -1
-				}
-			}
-			left -= s.run - more
-			if more == 0 {
-				// All of the run had a delimiter behind it.
-				if left == 0 {
-					return p.fail(trouble{fault: tooMany})
-				}
-				i = at
-				continue
-			}
-			// text[at] is the newline: the run must end with the row.
-			if left != 1 {
-				return p.fail(trouble{fault: tooFew})
-			}
-			return at + 1
-		case opFloat:
-			v, end := scan.Float(text, i, point)
-			if end > 0 && p.atEnd(end) {
-				s.out.f64[r] = v
-				i = end
-			} else if i = p.slow(s, i, r); i < 0 {
-				return -1
-			}
-		case opInt:
-			v, end := scan.Int(text, i)
-			if end > 0 && p.atEnd(end) {
-				s.out.setInt(r, v)
-				i = end
-			} else if i = p.slow(s, i, r); i < 0 {
-				return -1
-			}
-		case opText:
-			if text[i] == '"' {
-				if i = p.slow(s, i, r); i < 0 {
-					return -1
-				}
-				break
-			}
-			end := scan.Stop(text, i, delim)
-			val := text[i:end]
-			switch text[end] {
-			case '"':
-				return p.fail(trouble{fault: bareQuote, at: i})
-			case '\n':
-				if n := len(val); n > 0 && val[n-1] == '\r' {
-					val = val[:n-1]
-				}
-			}
-			if p.rules.missing(val) {
-				s.out.code[r] = -1
-			} else {
-				s.out.code[r] = s.out.text.intern(val)
-			}
-			i += len(val)
-		default:
-			if i = p.slow(s, i, r); i < 0 {
-				return -1
-			}
-		}
-		left--
-		if text[i] == delim {
-			if left == 0 {
-				return p.fail(trouble{fault: tooMany})
-			}
-			i++
-			continue
-		}
-		if left != 0 {
-			return p.fail(trouble{fault: tooFew})
-		}
-		if text[i] == '\r' {
-			i++
-		}
-		return i + 1
+// one reads the row at i, whatever is in it, into row r of the columns and
+// returns the index of the next row, or -1 and p.bad. A fault of the structure
+// comes before a cell that does not fit: it may be misplaced only.
+func (p *parser) one(i, r int) int {
+	p.scratch = p.scratch[:0]
+	cells, next, f := p.row(i, p.cells)
+	p.cells = cells
+	switch {
+	case f != sound:
+		return p.fail(trouble{fault: f, at: next})
+	case len(cells) < p.columns:
+		return p.fail(trouble{fault: tooFew})
+	case len(cells) > p.columns:
+		return p.fail(trouble{fault: tooMany})
 	}
-	panic("delimited: a row program without end")
+	for _, o := range p.out {
+		c := cells[o.at]
+		if status := o.store(r, c.val, c.quoted, p.rules); status != scan.OK {
+			return p.fail(trouble{fault: misfit, at: c.at, out: o, status: status})
+		}
+	}
+	return next
 }
 
 func (p *parser) fail(t trouble) int {
@@ -173,67 +55,67 @@ func (p *parser) fail(t trouble) int {
 	return -1
 }
 
-// recheck looks at the whole row at i, which has a cell that does not fit: if
-// its structure is at fault too, that is what to report (a cell may be misplaced
-// only).
-func (p *parser) recheck(i int) {
-	p.scratch = p.scratch[:0]
-	cells, at, f := p.row(i, p.cells)
-	p.cells = cells
-	switch {
-	case f != sound:
-		p.bad = trouble{fault: f, at: at}
-	case len(cells) < p.columns:
-		p.bad = trouble{fault: tooFew}
-	case len(cells) > p.columns:
-		p.bad = trouble{fault: tooMany}
+// block reads plain rows from the one at i on, as many as marks has
+// room for, into the columns from row r, and where they start, counted from
+// base, into marks. It returns how many they
+// were and the index of the next row; odd says that this one is not plain and
+// must be read by itself.
+//
+// A row is plain if it has as many cells as there are columns, none of them a
+// misfit. Rows that are read in vain, because one before them has a misfit in a
+// later column, are read again: so after an odd row few are tried at a time.
+func (p *parser) block(i, r int, marks []int64, base int64) (n, next int, odd bool) {
+	x, c := &p.index, p.columns
+	if !x.Seek(i) {
+		x.Reset(i, c)
 	}
+	for len(x.Ends) <= c && x.More(p.text, p.delim) {
+	}
+	tried := min(len(marks), p.try, (len(x.Ends)-1)/c)
+	n = p.sound(tried)
+	if p.cut && n > 0 && int(x.Ends[n*c])+1 == len(p.text) {
+		n--
+	}
+	for _, o := range p.out {
+		if n > 0 {
+			n = o.read(p, r, n)
+		}
+	}
+	for k := range n {
+		marks[k] = base + int64(x.Ends[k*c]) + 1
+	}
+	next = int(x.Ends[n*c]) + 1
+	if odd = n < tried || tried == 0; odd {
+		p.try = 4
+	} else {
+		p.try = min(2*p.try, stream.BatchRows)
+	}
+	return n, next, odd
 }
 
-// slow reads the cell at i in the general way and returns the index of what
-// ends it.
-func (p *parser) slow(s *step, i, r int) int {
-	p.scratch = p.scratch[:0]
-	val, quoted, end, f := p.cell(i)
-	if f != sound {
-		return p.fail(trouble{fault: f, at: i})
-	}
-	for _, out := range s.all {
-		if status := out.store(r, val, quoted, p.rules); status != scan.OK {
-			return p.fail(trouble{fault: misfit, at: i, out: out, status: status})
+// sound returns how many of the first n rows in the index have as many cells as
+// there are columns.
+func (p *parser) sound(n int) int {
+	ends, c := p.index.Ends, p.columns
+	for r := range n {
+		if p.text[ends[(r+1)*c]] != '\n' {
+			n = r
+			break
 		}
 	}
-	return end
-}
-
-// skipQuoted goes on where Skip, sent off at index from, met a quote with left
-// delimiters to go. It returns what Skip would, or -1 and p.bad.
-func (p *parser) skipQuoted(from, at, left int) (int, int) {
-	text := p.text
-	for text[at] == '"' {
-		if at != from && text[at-1] != p.delim {
-			begin := max(from, bytes.LastIndexByte(text[:at], p.delim)+1)
-			return p.fail(trouble{fault: bareQuote, at: begin}), 0
-		}
-		end, _, f := p.close(at)
-		if f != sound {
-			return p.fail(trouble{fault: f, at: at}), 0
-		}
-		switch text[end] {
-		case p.delim:
-			at = end + 1
-			if left--; left == 0 {
-				return at, 0
+	// No other newline may end a cell.
+	if _, lines := scan.Count(p.text[ends[0]+1 : ends[n*c]+1]); lines == n && c > 1 {
+		return n
+	}
+	for r := range n {
+		for _, e := range ends[r*c+1 : (r+1)*c] {
+			if p.text[e] == '\n' {
+				return r
 			}
-			from = at
-			if at, left = scan.Skip(text, at, p.delim, left); left == 0 {
-				return at, 0
-			}
-		case '\r':
-			return end + 1, left
-		default:
-			return end, left
+		}
+		if start := int(ends[r*c]) + 1; p.blank(start) != start {
+			return r
 		}
 	}
-	return at, left
+	return n
 }

@@ -15,6 +15,8 @@ type rules struct {
 	point  byte
 	tokens [][]byte
 	first  [256]bool // first bytes of tokens
+	// readable is true if a token reads as a value too, such as -999.
+	readable bool
 }
 
 func newRules(o stream.Options) *rules {
@@ -26,9 +28,24 @@ func newRules(o stream.Options) *rules {
 		if t != "" {
 			r.tokens = append(r.tokens, []byte(t))
 			r.first[t[0]] = true
+			r.readable = r.readable || readable(r.tokens[len(r.tokens)-1], r.point)
 		}
 	}
 	return r
+}
+
+// readable reports whether a cell is a number other than nan, a time or true or
+// false.
+func readable(cell []byte, point byte) bool {
+	cell = trim(cell)
+	if v, s := scan.ParseFloat(cell, point); s == scan.OK && v == v {
+		return true
+	}
+	if _, ok := parseBool(cell); ok {
+		return true
+	}
+	_, _, _, ok := parseTime(cell)
+	return ok
 }
 
 // missing reports whether an unquoted cell stands for nothing.

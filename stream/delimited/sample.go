@@ -61,7 +61,7 @@ func (p *samplePlace) more(g *segment) error {
 	n := int(min(window, p.size-p.at))
 	buf := g.buf[:0]
 	if cap(buf) < n {
-		buf = make([]byte, 0, n+1+firstOverhang)
+		buf = make([]byte, 0, n+1+firstOverhang+scan.Pad)
 	}
 	buf = buf[:n]
 	if err := readAt(p.src.in.Name, p.ra, buf, p.at); err != nil {
@@ -72,8 +72,8 @@ func (p *samplePlace) more(g *segment) error {
 	if err != nil {
 		return err
 	}
-	g.cut = cut
-	g.setText(buf, buf, p.at, 0)
+	g.parser.cut = cut
+	g.setText(buf, 0, p.at, 0)
 	g.tally.Bytes += int64(len(buf))
 	p.at += int64(len(buf))
 	return nil

@@ -17,7 +17,6 @@ type segment struct {
 	number int
 	parser parser
 	uses   []stream.Use
-	out    []*column
 	vecs   []stream.Vector
 	marks  []int64
 
@@ -29,8 +28,6 @@ type segment struct {
 	base int64 // offset of the first byte of the text
 	line int64 // its line; 0 if unknown
 	pos  int
-	// cut is true when the text stops inside a row that is too long.
-	cut bool
 
 	skipBad bool
 	silent  bool // malformed rows are not counted
@@ -43,6 +40,7 @@ func newSegment(ctx context.Context, src *source, uses []stream.Use, number int)
 	s.parser.rules = src.rules
 	s.parser.delim = src.head.delim
 	s.parser.columns = len(src.head.schema.Columns)
+	s.parser.try = stream.BatchRows
 	s.uses = uses
 	s.vecs = make([]stream.Vector, len(uses))
 	return s
@@ -54,10 +52,17 @@ func (s *segment) Tally() stream.SegmentTally { return s.tally }
 
 var errClosed = errors.New("delimited: the segment is closed")
 
-// setText takes rows that begin at the offset base on that line.
-func (s *segment) setText(buf, text []byte, base, line int64) {
-	s.buf, s.parser.text, s.base, s.line, s.pos = buf, text, base, line, 0
+// setText takes the rows in buf[first:], the first of which begins at the offset
+// base on that line.
+func (s *segment) setText(buf []byte, first int, base, line int64) {
+	n := len(buf)
+	s.buf = append(buf, pad[:]...)
+	s.parser.text, s.base, s.line, s.pos = s.buf[first:n], base, line, 0
+	s.parser.index.Ends = nil
 }
+
+// pad follows every text; see scan.Pad.
+var pad [scan.Pad]byte
 
 // Read delivers the rows before a malformed one first and the error with the
 // next call, so that faults of earlier rows can come to light first.
@@ -67,7 +72,7 @@ func (s *segment) Read(b *stream.Batch) error {
 	if s.err == nil {
 		n = s.fill()
 	}
-	for i, o := range s.out {
+	for i, o := range s.parser.out {
 		s.vecs[i] = o.vector(n)
 	}
 	if n == 0 {
@@ -91,12 +96,14 @@ func (s *segment) fill() int {
 		}
 	}
 	p := &s.parser
-	if p.steps == nil && (len(p.text) > 0 || s.more != nil) {
+	if s.marks == nil && (len(p.text) > 0 || s.more != nil) {
 		// Not before: segments without rows, or never read, need no columns.
-		p.steps, s.out = program(&s.src.head.schema, s.uses)
+		for _, u := range s.uses {
+			p.out = append(p.out, newColumn(&s.src.head.schema, u))
+		}
 		s.marks = make([]int64, stream.BatchRows)
 	}
-	for _, o := range s.out {
+	for _, o := range s.parser.out {
 		o.begin()
 	}
 	n := 0
@@ -112,13 +119,17 @@ func (s *segment) fill() int {
 			}
 			continue
 		}
-		if c := p.text[i]; c == '\n' || c == '\r' {
-			if s.pos = p.blank(i); s.pos != i {
-				continue
-			}
+		k, next, odd := p.block(i, n, s.marks[n:], s.base)
+		n += k
+		if s.pos = next; !odd || next >= len(p.text) {
+			continue
 		}
-		next := p.read(i, n)
-		if next < 0 || (s.cut && next == len(p.text)) {
+		i = next
+		if s.pos = p.blank(i); s.pos != i {
+			continue
+		}
+		next = p.one(i, n)
+		if next < 0 || (p.cut && next == len(p.text)) {
 			if !s.malformed(i, next) {
 				return n
 			}
@@ -134,12 +145,9 @@ func (s *segment) fill() int {
 // malformed deals with the row at i. It returns false when reading ends there.
 func (s *segment) malformed(i, next int) bool {
 	p := &s.parser
-	if next < 0 && p.bad.fault == misfit {
-		p.recheck(i)
-	}
 	end, _ := scan.RowEnd(p.text, i, false)
 	// A row without end swallows all the rest, which is never passed over.
-	endless := end < 0 || (s.cut && end == len(p.text))
+	endless := end < 0 || (s.parser.cut && end == len(p.text))
 	if s.silent {
 		if s.pos = end; endless {
 			s.err = io.EOF
@@ -147,7 +155,7 @@ func (s *segment) malformed(i, next int) bool {
 		return !endless
 	}
 	switch {
-	case !s.cut || !endless || (next < 0 && (p.bad.fault == bareQuote || p.bad.fault == afterQuote)):
+	case !s.parser.cut || !endless || (next < 0 && (p.bad.fault == bareQuote || p.bad.fault == afterQuote)):
 	case next < 0 && p.bad.fault == openQuote:
 		p.bad.fault = tooLongQuote
 	default:
@@ -227,7 +235,7 @@ func (s *segment) Close() error {
 		s.err = errClosed
 	}
 	s.src.release(s.buf)
-	s.setText(nil, nil, 0, 0)
+	s.buf, s.parser.text = nil, nil
 	s.load, s.more = nil, nil
 	return nil
 }

@@ -127,7 +127,7 @@ func (s *serialScan) take() (*segment, error) {
 		s.number++
 		return seg, nil
 	}
-	buf := s.src.buffer(int(n) + 1 + firstOverhang)
+	buf := s.src.buffer(int(n) + 1 + firstOverhang + scan.Pad)
 	buf = append(buf, s.carry...)
 	s.src.release(s.carry)
 	s.carry = nil
@@ -143,22 +143,22 @@ func (s *serialScan) take() (*segment, error) {
 	}
 	cut := len(buf)
 	if i := int(hi - s.at); i <= len(buf) {
-		if buf, cut, seg.cut, err = s.rowEnd(buf, i); err != nil {
+		if buf, cut, seg.parser.cut, err = s.rowEnd(buf, i); err != nil {
 			return nil, err
 		}
 	}
-	s.carry = append(s.src.buffer(int(n)+1+firstOverhang), buf[cut:]...)
+	s.carry = append(s.src.buffer(int(n)+1+firstOverhang+scan.Pad), buf[cut:]...)
 	buf = buf[:cut]
-	if seg.cut || (cut > 0 && buf[cut-1] != '\n') {
+	if seg.parser.cut || (cut > 0 && buf[cut-1] != '\n') {
 		buf = append(buf, '\n')
 	}
-	seg.setText(buf, buf, s.at, s.line)
+	seg.setText(buf, 0, s.at, s.line)
 	seg.tally.Bytes = s.text.raw.n - s.stored
 	s.stored = s.text.raw.n
 	s.number++
 	s.at += int64(cut)
 	s.line += lineAt(buf, cut) - 1
-	if seg.cut {
+	if seg.parser.cut {
 		s.err = &stream.RowError{
 			Pos:   stream.Position{File: s.src.in.Name, Line: s.line},
 			Found: fmt.Sprintf("a row that does not end within %d bytes", s.src.overhang),

@@ -1,5 +1,69 @@
 package delimited
 
+import (
+	"encoding/binary"
+
+	"github.com/tallrow/tallrow/stream/internal/scan"
+)
+
+// dayMemo remembers the last date, which most often is that of the next row.
+type dayMemo struct {
+	high uint64 // as written, all but the day of the month
+	low  uint16
+	ns   int64
+	set  bool
+}
+
+// times reads times in the column's most common forms, to the second:
+//
+//	2006-01-02  2006-01-02T15:04:05  2006-01-02 15:04:05Z
+//
+// It returns the row of the first cell written otherwise, or len(out).
+func (o *column) times(c *scan.Column, k int, out []int64) int {
+	text := c.Text[:len(c.Text)+scan.Pad]
+	length := 19
+	switch {
+	case o.schema.DateOnly:
+		length = 10
+	case o.schema.Zoned:
+		length = 20
+	}
+	for ; k < len(out); k++ {
+		start, end := c.Cell(k)
+		if end-start != length {
+			return k
+		}
+		b := text[start : start+24]
+		high, low := binary.LittleEndian.Uint64(b), binary.LittleEndian.Uint16(b[8:])
+		if high != o.day.high || low != o.day.low || !o.day.set {
+			ns, _, _, ok := parseTime(b[:10])
+			if !ok {
+				return k
+			}
+			o.day = dayMemo{high, low, ns, true}
+		}
+		ns := o.day.ns
+		if length > 10 {
+			sec, ok := clock(b[10:])
+			if !ok || length == 20 && b[19]|0x20 != 'z' {
+				return k
+			}
+			ns += sec * 1e9
+		}
+		out[k] = ns
+	}
+	return k
+}
+
+// clock reads the nine bytes of T15:04:05 as seconds.
+func clock(b []byte) (sec int64, ok bool) {
+	_ = b[8]
+	hour, ok1 := two(b[1:])
+	minute, ok2 := two(b[4:])
+	s, ok3 := two(b[7:])
+	return hour*3600 + minute*60 + s, ok1 && ok2 && ok3 && hour <= 23 && minute <= 59 && s <= 59 && b[3] == ':' && b[6] == ':' && (b[0]|0x20 == 't' || b[0] == ' ')
+}
+
 // parseTime reads a date, or a date and a time of day with T or a blank between
 // them, with or without seconds, a fraction of up to nine digits, and a zone (Z,
 // UTC, +hh, +hhmm, +hh:mm; a blank may stand before it). The forms are those of

@@ -106,10 +106,11 @@ func (t *tokens) blank(i int) int {
 	return i
 }
 
-// cell is a field of a row in the head.
+// cell is a field of a row.
 type cell struct {
 	val    []byte
 	quoted bool
+	at     int // index of its first byte
 }
 
 // row splits the row at i. On a fault, next is the index of the cell at fault.
@@ -120,7 +121,7 @@ func (t *tokens) row(i int, into []cell) (cells []cell, next int, f fault) {
 		if f != sound {
 			return cells, i, f
 		}
-		cells = append(cells, cell{val, quoted})
+		cells = append(cells, cell{val, quoted, i})
 		switch t.text[end] {
 		case t.delim:
 			i = end + 1

@@ -3,124 +3,9 @@ package scan
 import (
 	"bytes"
 	"math"
+	"math/bits"
 	"strconv"
 )
-
-// The powers of ten that float64 holds exactly.
-var pow10 = [...]float64{
-	1e0, 1e1, 1e2, 1e3, 1e4, 1e5, 1e6, 1e7, 1e8, 1e9, 1e10, 1e11,
-	1e12, 1e13, 1e14, 1e15, 1e16, 1e17, 1e18, 1e19, 1e20, 1e21, 1e22,
-}
-
-// Float reads the decimal number at b[i:] and returns it, correctly rounded,
-// with the index after its last byte. An end of -1 means that the number is not
-// of a simple shape (a sign other than minus, more than 19 digits, a large
-// exponent, a value beyond float64, no number at all): ParseFloat must then
-// look at the whole cell. The byte after the number is for the caller to judge.
-// The last byte of b must not be part of a number.
-//
-// A mantissa below 2^53 times or over a power of ten up to 10^22 is one rounding
-// of exact operands (Clinger, How to read floating point numbers accurately,
-// 1990, doi:10.1145/93542.93557); the rest goes to strconv.ParseFloat.
-func Float(b []byte, i int, point byte) (v float64, end int) {
-	s := i
-	neg := b[i] == '-'
-	if neg {
-		i++
-	}
-	first := i
-	var m uint64
-	for {
-		d := b[i] - '0'
-		if d > 9 {
-			break
-		}
-		m = m*10 + uint64(d)
-		i++
-	}
-	digits := i - first
-	exp := 0
-	if b[i] == point {
-		i++
-		f := i
-		for {
-			d := b[i] - '0'
-			if d > 9 {
-				break
-			}
-			m = m*10 + uint64(d)
-			i++
-		}
-		exp = f - i
-		digits -= exp
-	}
-	if digits == 0 || digits > 19 {
-		return 0, -1
-	}
-	if b[i]|0x20 == 'e' {
-		i++
-		eneg := b[i] == '-'
-		if eneg || b[i] == '+' {
-			i++
-		}
-		f, e := i, 0
-		for {
-			d := b[i] - '0'
-			if d > 9 {
-				break
-			}
-			if e < 10000 {
-				e = e*10 + int(d)
-			}
-			i++
-		}
-		if i == f {
-			return 0, -1
-		}
-		if eneg {
-			e = -e
-		}
-		exp += e
-	}
-	if m < 1<<53 {
-		v = float64(m)
-		switch {
-		case exp == 0 || m == 0:
-		case exp < 0 && exp >= -22:
-			v /= pow10[-exp]
-		case exp > 0 && exp <= 22:
-			v *= pow10[exp]
-		default:
-			return fallback(b[s:i], point, i)
-		}
-		if neg {
-			v = -v
-		}
-		return v, i
-	}
-	return fallback(b[s:i], point, i)
-}
-
-func fallback(cell []byte, point byte, end int) (float64, int) {
-	v, err := parse(cell, point)
-	if err != nil {
-		return 0, -1
-	}
-	return v, end
-}
-
-// parse hands a cell of the right grammar to strconv.
-func parse(cell []byte, point byte) (float64, error) {
-	if point == '.' {
-		return strconv.ParseFloat(string(cell), 64)
-	}
-	var room [64]byte
-	c := append(room[:0], cell...)
-	if k := bytes.IndexByte(c, point); k >= 0 {
-		c[k] = '.'
-	}
-	return strconv.ParseFloat(string(c), 64)
-}
 
 // Status is what became of a cell.
 type Status uint8
@@ -139,40 +24,127 @@ const (
 // what rounds beyond the largest float64 is Range.
 func ParseFloat(cell []byte, point byte) (float64, Status) {
 	i := 0
-	if i < len(cell) && (cell[i] == '-' || cell[i] == '+') {
-		i++
+	neg := false
+	if len(cell) > 0 && (cell[0] == '-' || cell[0] == '+') {
+		neg = cell[0] == '-'
+		i = 1
 	}
-	body := cell[i:]
-	n := 0
-	for i < len(cell) && cell[i]-'0' <= 9 {
-		i++
-		n++
-	}
+	first := i
+	m, i := digits(cell, i, 0)
+	n := i - first // digits
+	exp := 0
 	if i < len(cell) && cell[i] == point {
-		for i++; i < len(cell) && cell[i]-'0' <= 9; i++ {
+		f := i + 1
+		m, i = digits(cell, f, m)
+		exp = f - i
+		n -= exp
+	}
+	if n == 0 {
+		return special(cell[first:], neg)
+	}
+	last := i
+	if i < len(cell) {
+		if cell[i]|0x20 != 'e' {
+			return 0, Syntax
+		}
+		i++
+		eneg := false
+		if i < len(cell) && (cell[i] == '-' || cell[i] == '+') {
+			eneg = cell[i] == '-'
+			i++
+		}
+		f, e := i, 0
+		for ; i < len(cell) && cell[i]-'0' <= 9; i++ {
+			if e < 1<<30 {
+				e = e*10 + int(cell[i]-'0')
+			}
+		}
+		if i == f || i < len(cell) {
+			return 0, Syntax
+		}
+		if eneg {
+			e = -e
+		}
+		exp += e
+	}
+	v := 0.0
+	if n > 19 && significant(cell[first:last], point) > 19 {
+		var ok bool
+		if v, ok = long(cell[first:last], point, exp); !ok {
+			return parse(cell, point)
+		}
+	} else {
+		v = round(m, exp)
+	}
+	if math.IsInf(v, 0) {
+		return 0, Range
+	}
+	if neg {
+		v = -v
+	}
+	return v, OK
+}
+
+// digits appends the digits at cell[i:] to the decimal number m, eight at a time
+// while there are so many, and returns the index after them. Beyond 19 digits
+// that are not leading zeros the number is modulo 2^64.
+func digits(cell []byte, i int, m uint64) (uint64, int) {
+	for i+8 <= len(cell) {
+		x := load(cell, i) ^ zeros
+		if other(x) != 0 {
+			break
+		}
+		m = m*1e8 + eight(x)
+		i += 8
+	}
+	for i < len(cell) {
+		d := cell[i] - '0'
+		if d > 9 {
+			break
+		}
+		m = m*10 + uint64(d)
+		i++
+	}
+	return m, i
+}
+
+// significant counts the digits after leading zeros.
+func significant(mantissa []byte, point byte) int {
+	n := 0
+	for _, c := range mantissa {
+		if c != point && (n > 0 || c != '0') {
 			n++
 		}
 	}
-	if n == 0 {
-		return special(body, len(cell) > 0 && cell[0] == '-')
-	}
-	if i < len(cell) && cell[i]|0x20 == 'e' {
-		i++
-		if i < len(cell) && (cell[i] == '-' || cell[i] == '+') {
-			i++
+	return n
+}
+
+// long rounds a mantissa of more than 19 digits, the last of which counts
+// 10^exp. It is not ok if the first 19 digits do not decide.
+func long(mantissa []byte, point byte, exp int) (v float64, ok bool) {
+	var m uint64
+	n := 0
+	for _, c := range mantissa {
+		switch {
+		case c == point || n == 0 && c == '0':
+		case n < 19:
+			m = m*10 + uint64(c-'0')
+			n++
+		default:
+			exp++
 		}
-		f := i
-		for i < len(cell) && cell[i]-'0' <= 9 {
-			i++
-		}
-		if i == f {
-			return 0, Syntax
-		}
 	}
-	if i != len(cell) {
-		return 0, Syntax
+	v = round(m, exp)
+	return v, v == round(m+1, exp)
+}
+
+// parse hands a cell of the right grammar to strconv.
+func parse(cell []byte, point byte) (float64, Status) {
+	c := string(cell)
+	if point != '.' {
+		c = string(bytes.Replace(cell, []byte{point}, []byte{'.'}, 1))
 	}
-	v, err := parse(cell, point)
+	v, err := strconv.ParseFloat(c, 64)
 	if err != nil {
 		return 0, Range
 	}
@@ -205,36 +177,8 @@ func fold(b []byte, word string) bool {
 	return true
 }
 
-// Int reads the integer of at most 18 digits, without plus sign and leading
-// zeros, at b[i:] and returns it with the index after its last digit; -1 means
-// that ParseInt or ParseUint must look at the whole cell. The last byte of b
-// must not be a digit.
-func Int(b []byte, i int) (v int64, end int) {
-	neg := b[i] == '-'
-	if neg {
-		i++
-	}
-	first := i
-	for {
-		d := b[i] - '0'
-		if d > 9 {
-			break
-		}
-		v = v*10 + int64(d)
-		i++
-	}
-	n := i - first
-	if n == 0 || n > 18 || (n > 1 && b[first] == '0') {
-		return 0, -1
-	}
-	if neg {
-		v = -v
-	}
-	return v, i
-}
-
-// digits checks an optional sign followed by digits only and returns them.
-func digits(cell []byte) (body []byte, s Status) {
+// whole checks an optional sign followed by digits only and returns them.
+func whole(cell []byte) (body []byte, s Status) {
 	body = cell
 	if len(body) > 0 && (body[0] == '-' || body[0] == '+') {
 		body = body[1:]
@@ -255,7 +199,7 @@ func digits(cell []byte) (body []byte, s Status) {
 
 // ParseInt reads a whole cell as an int64.
 func ParseInt(cell []byte) (int64, Status) {
-	if _, s := digits(cell); s != OK {
+	if _, s := whole(cell); s != OK {
 		return 0, s
 	}
 	v, err := strconv.ParseInt(string(cell), 10, 64)
@@ -267,7 +211,7 @@ func ParseInt(cell []byte) (int64, Status) {
 
 // ParseUint reads a whole cell as a uint64.
 func ParseUint(cell []byte) (uint64, Status) {
-	body, s := digits(cell)
+	body, s := whole(cell)
 	if s != OK {
 		return 0, s
 	}
@@ -276,4 +220,151 @@ func ParseUint(cell []byte) (uint64, Status) {
 		return 0, Range
 	}
 	return v, OK
+}
+
+const zeros = ones * '0'
+
+// other marks with 0x80 the bytes that are no digits, of eight characters from
+// which zeros was taken by exclusive or.
+func other(x uint64) uint64 { return (x&lows + ones*(0x80-10) | x) & highs }
+
+// eight returns the number that eight digits make, the first in the lowest byte.
+func eight(x uint64) uint64 {
+	x = x*10 + x>>8
+	return (x&0x000000ff000000ff*(100+1000000<<32) + x>>16&0x000000ff000000ff*(1+10000<<32)) >> 32
+}
+
+// A Column is one of the columns that an Index has cut: its cell in row r lies
+// after Ends[r*Stride] and ends before Ends[r*Stride+1].
+type Column struct {
+	Text   []byte // with Pad bytes more in its array
+	Ends   []int32
+	Stride int
+	// Last is true if a newline ends the cells, perhaps behind a carriage return.
+	Last bool
+}
+
+// Cell returns where the cell in row r lies.
+func (c *Column) Cell(r int) (start, end int) {
+	e := c.Ends[r*c.Stride : r*c.Stride+2]
+	start, end = int(e[0])+1, int(e[1])
+	if c.Last && end > start && c.Text[end-1] == '\r' {
+		end--
+	}
+	return start, end
+}
+
+// Floats reads the cells of rows r, r+1, ... up to len(out) as ParseFloat does,
+// and NaN for an empty one. It returns the row of the first cell that is no
+// number, or len(out).
+func (c *Column) Floats(r int, out []float64, point byte) int {
+	text := c.Text[:len(c.Text)+Pad]
+	pt := uint64(point ^ '0')
+	for ; r < len(out); r++ {
+		start, end := c.Cell(r)
+		var neg int
+		if text[start] == '-' {
+			neg = 1
+		}
+		i := start + neg
+		var m uint64
+		var frac int // digits after the point
+		switch n := end - i; {
+		case uint(n-1) < 8:
+			x := (load(text, i) ^ zeros) << (uint(64-8*n) & 63)
+			o := other(x)
+			if o == 0 {
+				out[r] = sign(float64(int64(eight(x))), neg)
+				continue
+			}
+			k := bits.TrailingZeros64(o) &^ 7
+			if o&(o-1) != 0 || x>>k&0xff != pt || n == 1 {
+				break
+			}
+			x = x&^(o<<1-1) | x&(o>>7-1)<<8
+			out[r] = sign(float64(int64(eight(x)))/pow10[7-k>>3], neg)
+			continue
+		case uint(n-9) < 8:
+			x, y := (load(text, i)^zeros)<<(uint(128-8*n)&63), load(text, end-8)^zeros
+			o, p := other(x), other(y)
+			switch {
+			case o|p == 0:
+			case p == 0:
+				k := bits.TrailingZeros64(o) &^ 7
+				if o&(o-1) != 0 || x>>k&0xff != pt {
+					goto slow
+				}
+				frac = 15 - k>>3
+				x = x&^(o<<1-1) | x&(o>>7-1)<<8
+			case o == 0:
+				k := bits.TrailingZeros64(p) &^ 7
+				if p&(p-1) != 0 || y>>k&0xff != pt {
+					goto slow
+				}
+				frac = 7 - k>>3
+				y = y&^(p<<1-1) | y&(p>>7-1)<<8 | x>>56
+				x <<= 8
+			default:
+				goto slow
+			}
+			m = eight(x)*1e8 + eight(y)
+			if m < 1<<53 {
+				out[r] = sign(float64(int64(m))/pow10[frac], neg)
+				continue
+			}
+			out[r] = sign(round(m, -frac), neg)
+			continue
+		case n == 0 && neg == 0:
+			out[r] = math.NaN()
+			continue
+		}
+	slow:
+		v, s := ParseFloat(text[start:end], point)
+		if s != OK {
+			return r
+		}
+		out[r] = v
+	}
+	return r
+}
+
+func sign(v float64, neg int) float64 {
+	return math.Float64frombits(math.Float64bits(v) | uint64(neg)<<63)
+}
+
+// Ints reads the cells of rows r, r+1, ... up to len(out) as ParseInt does. It
+// returns the row of the first cell that is not of at most 16 digits without
+// plus sign and leading zeros, or len(out).
+func (c *Column) Ints(r int, out []int64) int {
+	text := c.Text[:len(c.Text)+Pad]
+	for ; r < len(out); r++ {
+		i, end := c.Cell(r)
+		var neg int64
+		if text[i] == '-' {
+			neg = 1
+		}
+		i += int(neg)
+		n := end - i
+		var v int64
+		switch {
+		case n > 1 && text[i] == '0':
+			return r
+		case uint(n-1) < 8:
+			x := (load(text, i) ^ zeros) << (uint(64-8*n) & 63)
+			if other(x) != 0 {
+				return r
+			}
+			v = int64(eight(x))
+		case uint(n-9) < 8:
+			x, y := (load(text, i)^zeros)<<(uint(128-8*n)&63), load(text, end-8)^zeros
+			if other(x)|other(y) != 0 {
+				return r
+			}
+			v = int64(eight(x)*1e8 + eight(y))
+		default:
+			return r
+		}
+		out[r] = v ^ -neg + neg
+	}
+	return r
 }

@@ -1,10 +1,13 @@
 // Package scan has the inner loops of the text reader: finding delimiters,
-// newlines and quotes eight bytes at a time, and reading numbers.
+// newlines and quotes, and reading numbers, eight bytes at a time.
 //
 // A row of delimited text ends at a newline byte that has an even number of
 // quote bytes before it, counted from the start of the input. That rule needs
 // no delimiter and no look at fields, so a byte range of a file can be cut into
 // rows as soon as the parity of the quotes before it is known.
+//
+// An Index holds the ends of all cells of many rows; with them a column is read
+// from top to bottom in one loop, in which no cell waits for the one before.
 package scan
 
 import (
@@ -16,13 +19,16 @@ import (
 const (
 	ones  = 0x0101010101010101
 	highs = 0x8080808080808080
+	lows  = 0x7f7f7f7f7f7f7f7f
 )
 
 // match marks with 0x80 exactly the bytes of x that equal the repeated byte.
 func match(x, repeated uint64) uint64 {
 	x ^= repeated
-	return ^(((x &^ highs) + ^uint64(highs)) | x | ^uint64(highs))
+	return ^(x&lows + lows | x | lows)
 }
+
+func load(b []byte, i int) uint64 { return binary.LittleEndian.Uint64(b[i : i+8]) }
 
 // Count returns the numbers of quotes and newlines in b.
 func Count(b []byte) (quotes, newlines int) {
@@ -62,7 +68,7 @@ func RowEnd(b []byte, i int, odd bool) (end int, oddAfter bool) {
 func Stop(b []byte, i int, delim byte) int {
 	pd := ones * uint64(delim)
 	for i+8 <= len(b) {
-		x := binary.LittleEndian.Uint64(b[i:])
+		x := load(b, i)
 		m := match(x, pd) | match(x, ones*'\n') | match(x, ones*'"')
 		if m != 0 {
 			return i + bits.TrailingZeros64(m)>>3
@@ -73,41 +79,4 @@ func Stop(b []byte, i int, delim byte) int {
 		i++
 	}
 	return i
-}
-
-// Skip passes over n delimiters. It returns the index after the n-th and left
-// 0, or the index of the first newline or quote before it and the number of
-// delimiters not passed. The last byte of b must be a newline, n at least 1.
-func Skip(b []byte, i int, delim byte, n int) (at, left int) {
-	pd := ones * uint64(delim)
-	for i+8 <= len(b) {
-		x := binary.LittleEndian.Uint64(b[i:])
-		d := match(x, pd)
-		s := match(x, ones*'\n') | match(x, ones*'"')
-		if s != 0 {
-			d &= (s & -s) - 1 // only the delimiters before the first stop
-		}
-		c := bits.OnesCount64(d)
-		if c >= n {
-			for ; n > 1; n-- {
-				d &= d - 1
-			}
-			return i + bits.TrailingZeros64(d)>>3 + 1, 0
-		}
-		n -= c
-		if s != 0 {
-			return i + bits.TrailingZeros64(s)>>3, n
-		}
-		i += 8
-	}
-	for ; ; i++ {
-		switch b[i] {
-		case delim:
-			if n--; n == 0 {
-				return i + 1, 0
-			}
-		case '\n', '"':
-			return i, n
-		}
-	}
 }
