@@ -4,11 +4,8 @@ import (
 	"context"
 	"errors"
 	"fmt"
-	"io"
-	"sync/atomic"
 
-	"golang.org/x/sync/errgroup"
-
+	"github.com/tallrow/tallrow/bench/reference"
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/stream/columnar"
 	"github.com/tallrow/tallrow/stream/delimited"
@@ -134,46 +131,6 @@ func decode(ctx context.Context, file, kind string, columns, workers int) (out o
 	if len(uses) != columns {
 		return out, fmt.Errorf("the model reads %d columns, want %d", len(uses), columns)
 	}
-	scan, err := src.Scan(ctx, uses)
-	if err != nil {
-		return out, err
-	}
-	defer func() { err = errors.Join(err, scan.Close()) }()
-	var rows atomic.Int64
-	g, ctx := errgroup.WithContext(ctx)
-	for range workers {
-		g.Go(func() error {
-			var b stream.Batch
-			for {
-				seg, err := scan.Next(ctx)
-				if errors.Is(err, io.EOF) {
-					return nil
-				}
-				if err != nil {
-					return err
-				}
-				n, err := drain(seg, &b)
-				rows.Add(n)
-				if err := errors.Join(err, seg.Close()); err != nil {
-					return err
-				}
-			}
-		})
-	}
-	err = g.Wait()
-	out.rows = rows.Load()
+	out.rows, err = reference.Decode(ctx, src, uses, workers, nil)
 	return out, err
-}
-
-func drain(seg stream.Segment, b *stream.Batch) (rows int64, err error) {
-	for {
-		err := seg.Read(b)
-		if errors.Is(err, io.EOF) {
-			return rows, nil
-		}
-		if err != nil {
-			return rows, err
-		}
-		rows += int64(b.Rows)
-	}
 }

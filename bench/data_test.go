@@ -10,6 +10,7 @@ import (
 	"testing"
 
 	"github.com/tallrow/tallrow/bench/quaydata"
+	"github.com/tallrow/tallrow/bench/reference"
 	"github.com/tallrow/tallrow/stream"
 )
 
@@ -22,7 +23,7 @@ type dataset struct {
 	files map[string]string // by format
 	sizes map[string]int64
 	gen   *quaydata.Data
-	table func() *table
+	table func() *reference.Table
 }
 
 // newDataset writes rows of unloading times into dir.
@@ -32,7 +33,7 @@ func newDataset(ctx context.Context, dir string, rows int64) (*dataset, error) {
 		return nil, err
 	}
 	d := &dataset{rows: rows, files: map[string]string{}, sizes: map[string]int64{}, gen: gen}
-	d.table = sync.OnceValue(func() *table { return loadTable(gen) })
+	d.table = sync.OnceValue(func() *reference.Table { return loadTable(gen) })
 	for format, write := range map[string]func(context.Context, io.Writer, func(int64)) error{
 		"csv": gen.WriteCSV, "parquet": gen.WriteParquet,
 	} {
@@ -71,18 +72,11 @@ func TestMain(m *testing.M) {
 	}
 }
 
-// table is the complete rows in memory: a constant, the terms, the outcome, each
-// column contiguous.
-type table struct {
-	rows int
-	cols [][]float64
-}
-
 // dense are the columns of the model in the order of quaydata, the outcome last.
 var dense = []int{quaydata.ColPallets, quaydata.ColTonnes, quaydata.ColCrew, quaydata.ColWet, quaydata.ColNight, quaydata.ColMinutes}
 
-func loadTable(gen *quaydata.Data) *table {
-	t := &table{cols: make([][]float64, 1+len(dense))}
+func loadTable(gen *quaydata.Data) *reference.Table {
+	t := &reference.Table{Cols: make([][]float64, 1+len(dense))}
 	var b stream.Batch
 	row := make([]float64, len(dense))
 	for at := int64(0); at < gen.Rows(); at += int64(b.Rows) {
@@ -102,10 +96,10 @@ func loadTable(gen *quaydata.Data) *table {
 					row[j] = v.F64[i]
 				}
 			}
-			t.rows++
-			t.cols[0] = append(t.cols[0], 1)
+			t.Rows++
+			t.Cols[0] = append(t.Cols[0], 1)
 			for j, x := range row {
-				t.cols[1+j] = append(t.cols[1+j], x)
+				t.Cols[1+j] = append(t.Cols[1+j], x)
 			}
 		}
 	}

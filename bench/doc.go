@@ -7,7 +7,10 @@
 //     needs to their end: no fit that reads the file once can be faster.
 //   - BenchmarkReference does parts of the work with general libraries: reading
 //     the same fields of the CSV file with encoding/csv and strconv, and HC1
-//     errors from data in memory with gonum.
+//     errors from data in memory with gonum (package reference).
+//
+// The program in sidebyside compares the command itself, process against process,
+// also with numpy and an SQL engine, and on data of any size.
 //
 // Only ratios of one run say something; a machine's clock drifts between runs:
 //

@@ -29,7 +29,7 @@
 //
 // Where one row has leverage 1, or one cluster alone holds a direction of the
 // terms, the coefficients that it decides have no p and no interval under the kinds
-// that rest on its residual, and no error of hc2 or higher; all others stay right.
+// that rest on its residual, and no hc2 or hc3 error; all others stay right.
 //
 // # Numbers
 //

@@ -4,7 +4,6 @@ import (
 	"context"
 	"fmt"
 	"math"
-	"slices"
 	"time"
 
 	"github.com/tallrow/tallrow/accum"
@@ -36,7 +35,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Meter: o.Meter}}
 	if o.Timings {
 		f.scan.Timings = new(accum.Timings)
 	}
@@ -186,89 +185,58 @@ func (f *fitter) second() error {
 	}
 	f.route = "row pass"
 	rp := accum.RowPass{Theta: x.theta}
+	if x.apart != nil {
+		rp.Eliminated = x.apart.elim
+	}
 	seen := map[string]bool{}
-	lever := false
 	for _, k := range f.o.Errors {
+		g, ok := hcWeight[k.Name]
 		if k.Name == "hc1" {
 			k.Name = "hc0"
 		}
 		switch {
-		case rowKind(k.Name) && !seen[k.Name]:
+		case ok && !seen[k.Name]:
 			seen[k.Name] = true
 			f.kinds = append(f.kinds, k.Name)
-			lever = lever || leverages(k.Name)
-		case k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
+			rp.Weights = append(rp.Weights, func(h float64) float64 { return g(1 - h) })
+		case !ok && k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
 			seen[fmt.Sprint(k.Cluster)] = true
 			f.keys = append(f.keys, k.Cluster)
 		}
 	}
 	rp.Scores = f.keys
-	rp.Weights = f.weights(f.kinds, 0)
 	if len(rp.Weights) > 0 {
 		// hc0 and hc1 want leverages only to find rows that alone decide a coefficient.
 		w, m := x.whitener()
-		if lever || s.LeverageBound(w) > 0.5 {
+		if seen["hc2"] || seen["hc3"] || s.LeverageBound(w) > 0.5 {
 			rp.Whitener, rp.K = w, m
 		}
 	}
-	sums, err := f.rowPass(rp)
+	sums, err := accum.Second(f.ctx, f.src, s, rp, f.scan)
 	if err != nil {
 		return err
 	}
+	f.passes += sums.Passes
+	f.bytes += sums.Bytes
 	f.sums = sums
-	most := sums.MaxLeverage
-	if sums.LoneRows > 0 {
-		most = 1
-	}
-	if i := slices.Index(f.kinds, "hc5"); i >= 0 && 0.7*f.perTerm()*most > 4 {
-		again := rp
-		again.Weights, again.Scores = f.weights([]string{"hc5"}, most), nil
-		more, err := f.rowPass(again)
-		if err != nil {
-			return err
-		}
-		sums.Meats[i] = more.Meats[0]
-		rp.Weights = f.weights(f.kinds, most)
-	}
-	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency {
-		return f.heavy(rp, most)
+	if (seen["hc2"] || seen["hc3"]) && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency && x.apart == nil {
+		return f.heavy(rp)
 	}
 	return nil
 }
 
-// perTerm is N/k.
-func (f *fitter) perTerm() float64 { return float64(f.sol.n) / float64(max(1, f.sol.rank())) }
-
-// weights are the functions g of kinds, of the leverage.
-func (f *fitter) weights(kinds []string, most float64) []func(float64) float64 {
-	var list []func(float64) float64
-	for _, k := range kinds {
-		g := hcWeight(k, f.perTerm(), most)
-		list = append(list, func(h float64) float64 { return g(1 - h) })
-	}
-	return list
-}
-
-// rowPass is a further pass.
-func (f *fitter) rowPass(rp accum.RowPass) (*accum.RowSums, error) {
-	sums, err := accum.Second(f.ctx, f.src, f.state, rp, f.scan)
-	if err == nil {
-		f.passes += sums.Passes
-		f.bytes += sums.Bytes
-	}
-	return sums, err
-}
-
 // heavy repeats pass two for rows of leverage near 1.
-func (f *fitter) heavy(rp accum.RowPass, most float64) error {
+func (f *fitter) heavy(rp accum.RowPass) error {
 	rp.Heavy = true
 	rp.Scores = nil
-	sums, err := f.rowPass(rp)
+	sums, err := accum.Second(f.ctx, f.src, f.state, rp, f.scan)
 	if err != nil {
 		return err
 	}
+	f.passes += sums.Passes
+	f.bytes += sums.Bytes
 	for i, k := range f.kinds {
-		if !f.sol.heavyMeat(sums, hcWeight(k, f.perTerm(), most), sums.Meats[i]) {
+		if !f.sol.heavyMeat(sums, hcWeight[k], sums.Meats[i]) {
 			return nil // keep the plain sums
 		}
 	}
@@ -329,14 +297,15 @@ func (f *fitter) errorsFor(k Kind) Errors {
 func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	x := f.sol
 	if x.perfect {
-		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: float64(x.df()), joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
+		x.infer(e, x.nothing(float64(x.df())), f.o.Level, f.o.Covariance)
 		return
 	}
 	var meat []float64
+	var blocks accum.Blocks
 	if f.sums != nil {
 		for i, name := range f.kinds {
 			if name == k.Name || (name == "hc0" && k.Name == "hc1") {
-				meat = f.sums.Meats[i]
+				meat, blocks = f.sums.Meats[i], f.sums.MeatBlocks[i]
 			}
 		}
 	} else {
@@ -346,13 +315,13 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 			return
 		}
 	}
-	r := x.hc(k.Name, meat)
+	r := x.hc(k.Name, meat, blocks)
 	if f.sums == nil {
 		r.noise = f.noise
 	}
 	lone := f.loneTerms()
 	r.noP = lone
-	if leverages(k.Name) {
+	if k.Name == "hc2" || k.Name == "hc3" {
 		r.noSE = lone
 		if loss := 0x1p-50 / (1 - f.sums.MaxLeverage); loss > lossLimit && !f.heavyOK {
 			f.note("digits", "%s has about %d digits left: %d rows have leverage above %.2f, the largest %.12f", k.Name, digits(loss), f.sums.HeavyRows, accum.HeavyAt, f.sums.MaxLeverage)
@@ -369,7 +338,7 @@ func (f *fitter) tellLost(e *Errors, r *estimate) {
 	}
 	for j, lost := range r.lost {
 		if lost && !math.IsNaN(f.sol.est[j]) {
-			term := f.sol.cols[j].label
+			term := f.sol.coefficient(j).label
 			f.told[e.Name()+"\x00"+term] = true
 			f.warn = append(f.warn, Warning{Code: "digits", Term: ptr(term), Kind: ptr(e.Name()),
 				Text: fmt.Sprintf("what forms %s of %s cancels to less than rounding; it is left out", e.Name(), term)})
@@ -377,15 +346,24 @@ func (f *fitter) tellLost(e *Errors, r *estimate) {
 	}
 }
 
+// nothing is the estimate of a perfect fit.
+func (x *solution) nothing(df float64) *estimate {
+	r := &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}
+	if x.apart != nil {
+		r.apart = &apartMeat{rest: r.v, own: make([]float64, len(x.state.Apart.D)), scale: 1}
+	}
+	return r
+}
+
 // loneTerms marks coefficients that a single row decides.
 func (f *fitter) loneTerms() []bool {
 	x, s := f.sol, f.state
-	out := make([]bool, x.k())
+	out := make([]bool, x.count())
 	if f.sums != nil {
 		if f.sums.LoneGram == nil {
 			return nil
 		}
-		for j, q := range x.share(f.sums.LoneGram) {
+		for j, q := range x.share(f.sums.LoneGram, f.sums.LoneBlocks) {
 			out[j] = q > loneShare
 		}
 		return out
@@ -439,7 +417,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		if sc != nil {
 			df = float64(len(sc.Keys) - 1)
 		}
-		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
+		x.infer(e, x.nothing(df), f.o.Level, f.o.Covariance)
 		return
 	case sc == nil:
 		x.unavailable(e, "the sums of the clusters were not kept")

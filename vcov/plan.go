@@ -82,13 +82,13 @@ func (o *Options) validate(d *stream.Design) error {
 	}
 	for _, k := range o.Errors {
 		switch k.Name {
-		case "classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5":
+		case "classical", "hc0", "hc1", "hc2", "hc3":
 		case "cr0", "cr1":
 			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
 				return stream.Usef("errors: %s needs a clustering", k.Name)
 			}
 		default:
-			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0 or cr1", k.Name)
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, cr0 or cr1", k.Name)
 		}
 	}
 	return nil
@@ -112,21 +112,20 @@ func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) 
 		}
 	}
 	var hc, rows bool
-	var byRow string
 	clusters := map[int]bool{}
 	for _, e := range o.Errors {
 		switch e.Name {
 		case "hc0", "hc1":
 			hc = true
-		case "hc2", "hc3", "hc4", "hc4m", "hc5":
-			rows, byRow = true, e.Name
+		case "hc2", "hc3":
+			rows = true
 			p.why("%s depends on the leverage of every row, which is known only after the first pass", e.Name)
 		case "cr0", "cr1":
 			clusters[e.Cluster] = true
 		}
 	}
 	if o.Passes == 1 && rows {
-		return nil, stream.Usef("passes: %s needs two passes; leave out --passes 1 or that kind of errors", byRow)
+		return nil, stream.Usef("passes: hc2 and hc3 need two passes; leave out --passes 1 or those errors")
 	}
 	if cats && (hc || len(clusters) > 0) {
 		if o.Passes == 1 {

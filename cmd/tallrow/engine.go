@@ -105,7 +105,7 @@ func (a *app) wantsSpool(s *settings, req request) bool {
 		return true
 	}
 	for _, k := range req.kinds {
-		if vcov.NeedsRows(k.Name) {
+		if k.Name == "hc2" || k.Name == "hc3" {
 			return true
 		}
 	}

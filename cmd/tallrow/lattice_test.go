@@ -43,7 +43,10 @@ accum < accum/accumtest
 accum gonum.org/v1/gonum < vcov
 
 stream stream/columnar < bench/quaydata
-stream/delimited stream/columnar accum/digest vcov bench/quaydata < bench
+stream gonum.org/v1/gonum golang.org/x/sync < bench/reference
+stream/delimited stream/columnar accum/digest vcov bench/quaydata bench/reference < bench
+stream/delimited stream/columnar bench/reference < bench/sidebyside
+github.com/parquet-go/parquet-go golang.org/x/sync golang.org/x/sys < bench/sidebyside
 
 stream/delimited stream/columnar accum/digest vcov bench/quaydata < cmd/tallrow
 github.com/spf13/cobra github.com/spf13/pflag github.com/pelletier/go-toml < cmd/tallrow
