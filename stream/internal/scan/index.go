@@ -22,10 +22,10 @@ type Index struct {
 	Odd int
 
 	buf    []int32 // Ends is a part of it
-	pos    int    // what comes before is in Ends
-	inside uint64 // all ones if pos is inside quotes
-	start  uint64 // 1 if a quote at pos may open
-	closed uint64 // 1 if the byte before pos is a quote that closes
+	pos    int     // what comes before is in Ends
+	inside uint64  // all ones if pos is inside quotes
+	start  uint64  // 1 if a quote at pos may open
+	closed uint64  // 1 if the byte before pos is a quote that closes
 }
 
 // Reset begins at the row at index i, for rows of that many columns.
