@@ -26,9 +26,13 @@ type outcome struct {
 	se         []float64 // nil if not formed
 }
 
-var terms = []string{"pallets", "tonnes", "crew", "wet", "night"}
+var (
+	terms = []string{"pallets", "tonnes", "crew", "wet", "night"}
+	// more are eight terms, the last of them products.
+	more = append(terms[:len(terms):len(terms)], "pallets*wet", "tonnes*night", "pallets*crew")
+)
 
-func spec(keys ...string) stream.Spec {
+func spec(terms []string, keys ...string) stream.Spec {
 	return stream.Spec{Outcome: "minutes", Terms: terms, Keys: keys}
 }
 
@@ -50,13 +54,14 @@ func fitCases(d *dataset) (cases []benchCase) {
 		for _, e := range []struct {
 			kind   string
 			passes int
-		}{{"classical", 1}, {"hc1", 1}, {"hc1", 2}, {"cr1", 1}, {"cr1", 2}} {
+			terms  []string
+		}{{"classical", 1, terms}, {"hc1", 1, terms}, {"hc1", 2, terms}, {"cr1", 1, terms}, {"cr1", 2, terms}, {"hc1", 1, more}, {"hc1", 2, more}} {
 			for _, workers := range []int{1, 2} {
 				cases = append(cases, benchCase{
-					name:  fmt.Sprintf("format=%s/errors=%s/passes=%d/terms=%d/workers=%d", format, e.kind, e.passes, len(terms), workers),
+					name:  fmt.Sprintf("format=%s/errors=%s/passes=%d/terms=%d/workers=%d", format, e.kind, e.passes, len(e.terms), workers),
 					bytes: d.sizes[format],
 					run: func(ctx context.Context) (outcome, error) {
-						return fit(ctx, d.files[format], e.kind, e.passes, workers)
+						return fit(ctx, d.files[format], e.terms, e.kind, e.passes, workers)
 					},
 				})
 			}
@@ -67,13 +72,13 @@ func fitCases(d *dataset) (cases []benchCase) {
 
 // fit opens the file and fits the model with one kind of errors, as the command
 // does. It fails if the fit took another number of passes than asked.
-func fit(ctx context.Context, file, kind string, passes, workers int) (out outcome, err error) {
+func fit(ctx context.Context, file string, terms []string, kind string, passes, workers int) (out outcome, err error) {
 	src, err := open(ctx, file)
 	if err != nil {
 		return out, err
 	}
 	defer func() { err = errors.Join(err, src.Close()) }()
-	design, err := stream.NewDesign(spec(keysOf(kind)...), src.Schema())
+	design, err := stream.NewDesign(spec(terms, keysOf(kind)...), src.Schema())
 	if err != nil {
 		return out, err
 	}
@@ -123,7 +128,7 @@ func decode(ctx context.Context, file, kind string, columns, workers int) (out o
 		return out, err
 	}
 	defer func() { err = errors.Join(err, src.Close()) }()
-	design, err := stream.NewDesign(spec(keysOf(kind)...), src.Schema())
+	design, err := stream.NewDesign(spec(terms, keysOf(kind)...), src.Schema())
 	if err != nil {
 		return out, err
 	}

@@ -75,6 +75,20 @@ func TestMain(m *testing.M) {
 // dense are the columns of the model in the order of quaydata, the outcome last.
 var dense = []int{quaydata.ColPallets, quaydata.ColTonnes, quaydata.ColCrew, quaydata.ColWet, quaydata.ColNight, quaydata.ColMinutes}
 
+// withProducts has the products of more as further terms.
+func withProducts(t *reference.Table) *reference.Table {
+	last := len(t.Cols) - 1
+	cols := append([][]float64(nil), t.Cols[:last]...)
+	for _, f := range [][2]int{{1, 4}, {2, 5}, {1, 3}} { // as in more, the constant is 0
+		product := make([]float64, t.Rows)
+		for i := range product {
+			product[i] = t.Cols[f[0]][i] * t.Cols[f[1]][i]
+		}
+		cols = append(cols, product)
+	}
+	return &reference.Table{Rows: t.Rows, Cols: append(cols, t.Cols[last])}
+}
+
 func loadTable(gen *quaydata.Data) *reference.Table {
 	t := &reference.Table{Cols: make([][]float64, 1+len(dense))}
 	var b stream.Batch

@@ -1,7 +1,7 @@
 // Sidebyside runs the command tallrow and what else does the same work, or a part
 // of it, in turn, and writes times, ratios and peak memory as a table and as JSON:
 //
-//	go run ./bench/sidebyside                              everything; an hour or two
+//	go run ./bench/sidebyside                              everything; hours, most of them scaling
 //	go run ./bench/sidebyside -scenario hc1-parquet,csv    some of it
 //	go run ./bench/sidebyside -rows 100000 -repeat 3       small
 //	go run ./bench/sidebyside -o bench/recorded/DATE-MACHINE.json
@@ -232,6 +232,7 @@ func (s *session) whole(ctx context.Context, names []string) (err error) {
 	if err := s.prepare(ctx); err != nil {
 		return err
 	}
+	s.record.FloorBytes = ownPeak()
 	if err := s.save(); err != nil { // not to find out after an hour that it cannot be written
 		return err
 	}

@@ -111,6 +111,17 @@ func (s *session) compete(ctx context.Context, sc *Scenario, list []contestant, 
 	own := make([][]float64, len(list))
 	results := make([]*Result, len(list))
 	turns := make([]int, len(list)) // how many it gets
+	defer func() {                  // also when the run is stopped
+		for i, r := range results {
+			switch {
+			case r == nil || r.Status != "ok":
+			case len(own[i]) == 0:
+				r.Status, r.Reason = "stopped", "before it was timed"
+			default:
+				r.fill(&list[i], rounds[i], own[i])
+			}
+		}
+	}()
 	for i := range list {
 		c := &list[i]
 		if c.limit == 0 {
@@ -155,7 +166,7 @@ func (s *session) compete(ctx context.Context, sc *Scenario, list []contestant, 
 		r.Apart = &d
 		outside[c.compare] = outside[c.compare] || c.outside
 	}
-	told := make(map[string]bool)
+	told := make(map[string]bool) // what nothing from outside confirms
 	for i := range list {
 		c := &list[i]
 		if c.compare == "" || c.exact || outside[c.compare] || told[c.compare] || results[i].Status != "ok" {
@@ -190,10 +201,9 @@ func (s *session) compete(ctx context.Context, sc *Scenario, list []contestant, 
 	}
 	for i := range list {
 		c, r := &list[i], results[i]
-		if r.Status != "ok" || repeat == 0 {
+		if r.Status != "ok" {
 			continue
 		}
-		r.fill(c, rounds[i], own[i])
 		for k := range list {
 			if b := &list[k]; b.base && b.workers == c.workers && results[k].Status == "ok" {
 				var ratios []float64

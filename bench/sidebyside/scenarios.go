@@ -389,6 +389,7 @@ func (s *session) clusters(ctx context.Context, sc *Scenario) error {
 	base.base = true
 	bounded := s.sql("cr1", paths[0], l, w, id, "1GiB")
 	bounded.name += ", memory_limit 1GiB"
+	bounded.optional = true // it may not manage
 	list := []contestant{
 		base,
 		s.fit("cr1, memory as by default", "cr1", paths[0], l, w, "--errors", "cr1", "--cluster", id),

@@ -156,6 +156,24 @@ func TestCompete(t *testing.T) {
 		t.Errorf("remarks %q", sc.Remarks)
 	}
 
+	// A run that is stopped keeps the rounds it had and times nothing else.
+	ctx, stop := context.WithCancel(t.Context())
+	cut := slices.Clone(list[:2])
+	calls := 0
+	cut[1].read = func(measured) (answer, error) {
+		if calls++; calls == 2 {
+			stop()
+		}
+		return good, nil
+	}
+	sc = &Scenario{Name: "test"}
+	if err := s.compete(ctx, sc, cut, 3); !errors.Is(err, context.Canceled) {
+		t.Errorf("error %v, want that of the context", err)
+	}
+	if a, b := sc.Results[0], sc.Results[1]; a.Status != "ok" || len(a.Times) != 1 || b.Status != "stopped" || b.Times != nil {
+		t.Errorf("after a stop: %+v, %+v", a, b)
+	}
+
 	// Numbers of the project alone are marked so.
 	list = list[:2]
 	list[0].outside, list[1].outside = false, false
