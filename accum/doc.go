@@ -8,8 +8,6 @@
 //     (about its residual), numeric factors of category products.
 //   - The internal columns of a state are 1, u and, for each combination of
 //     category levels that occurs, an indicator and its products with f; v last.
-//     A group is a set of categories that occur multiplied. If there are more
-//     columns than Options.Dense, those of the largest group are kept apart.
 //   - Second moments are sums of z z'. Fourth moments are sums of products of
 //     four entries of z. A keyed table holds sums for each key.
 //
@@ -22,9 +20,16 @@
 // 128-bit fixed point. Segments, folds and blocks are cut by the input alone, so
 // the result does not depend on the number of workers or on who came first.
 //
+// # Extended arithmetic
+//
+// In Extended arithmetic terms of + - * / and whole powers, rows z, and second
+// moments of the dense columns are numbers of about 106 bits (Wide): the frame's
+// coefficients stay float64 and are taken as exact. Within a segment such sums are
+// made in row order; both their parts are then joined exactly. What is summed by
+// level or cluster, fourth moments and leverages are float64 and take z rounded,
+// which is right to its last bit. Weights are float64, their roots are not.
+//
 // # Limits
 //
-// One worker holds its own keyed tables, joined at the end; pairs of levels of two
-// categories are summed in tables common to all. The columns beside the group
-// apart make dense matrices, whose solve takes the cube of their number.
+// One worker holds its own keyed tables; they are joined at the end.
 package accum

@@ -13,9 +13,10 @@ import (
 type epoch struct {
 	frame    *Frame
 	gram     []float64 // packed, width columns
+	gramLow  []float64 // what gram leaves off, in extended arithmetic
 	fourth   []float64
+	cats     *categories
 	tables   []*keyTable
-	pairs    []*pairTable
 	keys     []*interner
 	clusters []*keyTable
 	lone     []*loneTracker
@@ -32,7 +33,7 @@ type epoch struct {
 // joinWorkers joins the sums of workers exactly: the order does not show.
 func joinWorkers(ws []*firstWorker) *epoch {
 	w := ws[0]
-	e := &epoch{frame: w.frame, tables: w.tables, pairs: pairTablesOf(w.pairs), keys: w.keys, clusters: w.clusters,
+	e := &epoch{frame: w.frame, cats: w.cats, tables: w.tables, keys: w.keys, clusters: w.clusters,
 		lone: w.lone, reach: w.reach, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
 	for _, o := range ws[1:] {
@@ -40,8 +41,9 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		if w.q != nil {
 			w.fourX.merge(o.fourX)
 		}
+		to := e.cats.join(o.cats, func(i int) int { return len(o.tables[i].rows) })
 		for i, t := range o.tables {
-			e.tables[i].mergeFrom(t, same(len(t.rows)))
+			e.tables[i].mergeFrom(t, to[i])
 		}
 		for k, t := range o.clusters {
 			if t == nil {
@@ -74,7 +76,12 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		w.budget.dropped.Store(true)
 	}
 	e.gram = make([]float64, len(w.gram))
-	w.gramX.values(e.gram)
+	if w.wide != nil {
+		e.gramLow = make([]float64, len(w.gram))
+		w.gramX.wides(e.gram, e.gramLow)
+	} else {
+		w.gramX.values(e.gram)
+	}
 	if w.q != nil {
 		e.fourth = make([]float64, len(w.fourth))
 		w.fourX.values(e.fourth)
@@ -129,7 +136,7 @@ func (w *epochWorker) end() error {
 		return err
 	}
 	w.epochs = append(w.epochs, joinWorkers([]*firstWorker{w.firstWorker}))
-	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""))
+	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget)
 	w.eval.Tally = stream.Tally{}
 	return nil
 }
@@ -137,24 +144,33 @@ func (w *epochWorker) end() error {
 // runEpochs reads a source that cannot be sampled. Within the first segment an
 // epoch is 1, 1, 2, 4, ... blocks, later 1, 2, 4, ... segments; each has a frame
 // from all rows before it and its own first block, so that a file sorted by a
-// term cannot spoil the sums.
-func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift bool, workers int) ([]*epoch, error) {
+// term cannot spoil the sums. Under Auto the first segment with used rows is
+// summed in extended arithmetic and decides about the rest.
+func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift bool, o Options) (_ []*epoch, extended bool, err error) {
+	workers := max(1, o.Workers)
+	decided := o.Arithmetic != Auto
+	extended = o.Arithmetic != Double
 	seg, err := scan.Next(ctx)
 	if errors.Is(err, io.EOF) {
-		return nil, nil
+		return nil, false, nil
 	}
 	if err != nil {
-		return nil, err
+		return nil, false, err
 	}
 	ew := &epochWorker{shift: shift}
-	ew.firstWorker = newFirstWorkers(1, l, trivialFrame(l), needs, b)[0]
+	first := newLoader(l, trivialFrame(l))
+	if extended {
+		first.extend()
+	}
+	first.eval.Extended(true) // to know what float64 leaves off
+	ew.firstWorker = newFirstWorker(l, first, needs, b)
 	once := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
 	if err := p.run(ctx, []blockWorker{ew}, &begun{seg: seg}, once); err != nil {
-		return nil, err
+		return nil, false, err
 	}
 	tail := ew.eval.Tally // rows that were read but not used still count
 	if err := ew.end(); err != nil {
-		return nil, err
+		return nil, false, err
 	}
 	epochs := ew.epochs
 	if len(epochs) == 0 {
@@ -164,20 +180,31 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 	for size := 1; ; size *= 2 {
 		seg, err := scan.Next(ctx)
 		if errors.Is(err, io.EOF) {
-			return epochs, nil
+			if !decided {
+				extended = chooseAfter(l, epochs, shift, true)
+			}
+			return epochs, extended, nil
 		}
 		if err != nil {
-			return nil, err
+			return nil, false, err
 		}
-		ws := newFirstWorkers(workers, l, nil, needs, b)
+		ws := make([]*firstWorker, workers)
 		bw := make([]blockWorker, workers)
+		waiting := !slices.ContainsFunc(epochs, func(e *epoch) bool { return e.rows > 0 })
+		if !decided && !waiting {
+			extended, decided = chooseAfter(l, epochs, shift, false), true
+		}
 		for i := range ws {
+			ld := newLoader(l, nil)
+			if extended {
+				ld.extend()
+			}
+			ws[i] = newFirstWorker(l, ld, needs, b)
 			bw[i] = ws[i]
 		}
 		// The first block of the epoch takes part in its frame. As long as no row was
 		// used, the frame waits for the first that is.
 		rows := previousRows(l, epochs)
-		waiting := !slices.ContainsFunc(epochs, func(e *epoch) bool { return e.rows > 0 })
 		ld := ws[0].loader
 		start := &begun{seg: seg}
 		for {
@@ -201,7 +228,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 		}
 		if err != nil && !errors.Is(err, io.EOF) {
 			seg.Close()
-			return nil, err
+			return nil, false, err
 		}
 		if waiting && !start.loaded {
 			size = 1 // still nothing to make a frame of
@@ -219,7 +246,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 			return scan.Next(ctx)
 		}
 		if err := p.run(ctx, bw, start, next); err != nil {
-			return nil, err
+			return nil, false, err
 		}
 		epochs = append(epochs, joinWorkers(ws))
 	}

@@ -18,17 +18,17 @@ type firstWorker struct {
 	needs  *Needs
 	budget *budget
 
-	gram   []float64 // of the present segment
-	gramX  superVec
-	q      *quartic
-	fourth []float64
-	fourX  superVec
-	zs     []float64 // z times a root of the weight
-	root4  []float64
+	gram    []float64 // of the present segment
+	gramLow []float64 // what gram leaves off, in extended arithmetic
+	gramX   superVec
+	q       *quartic
+	fourth  []float64
+	fourX   superVec
+	zs      []float64 // z times a root of the weight
+	root4   []float64
 
 	cats   *categories
 	tables []*keyTable
-	pairs  []*pairBuffer // into tables common to the workers of an epoch
 	tid    []int32
 
 	keys     []*interner // nil for keys that are not wanted
@@ -46,32 +46,21 @@ type firstWorker struct {
 	varied  []bool    // its nonzero cells are not all equal
 }
 
-// budget watches the memory of the keyed tables of all workers, and holds what
-// they share.
+// budget watches the memory of the keyed tables of all workers.
 type budget struct {
 	memory  int64
 	cluster int64
 	unit    int
-	dense   int // Options.Dense
-	workers int
-	num     *numbering
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
 }
 
-// newFirstWorkers makes the workers of one epoch.
-func newFirstWorkers(n int, l *layout, f *Frame, needs *Needs, b *budget) []*firstWorker {
-	pairs := l.pairTables(b.unit, l.design.Spec.Weight == "")
-	ws := make([]*firstWorker, n)
-	for i := range ws {
-		ws[i] = newFirstWorker(l, newLoader(l, f), needs, b, pairs)
-	}
-	return ws
-}
-
-func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pairTable) *firstWorker {
+func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker {
 	w := &firstWorker{loader: ld, needs: needs, budget: b}
 	w.gram = make([]float64, l.width*(l.width+1)/2)
 	w.gramX = make(superVec, len(w.gram))
+	if w.wide != nil {
+		w.gramLow = make([]float64, len(w.gram))
+	}
 	w.zs = w.z
 	if w.root != nil {
 		w.zs = make([]float64, len(w.z))
@@ -82,10 +71,7 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pai
 		w.fourX = make(superVec, w.q.size())
 		w.root4 = make([]float64, stride)
 	}
-	w.cats = newCategories(l, b.num)
-	for _, t := range pairs {
-		w.pairs = append(w.pairs, &pairBuffer{t: t})
-	}
+	w.cats = newCategories(l)
 	w.tid = make([]int32, stride)
 	for i := range l.tables {
 		w.tables = append(w.tables, newKeyTable(len(l.tables[i].prods), b.unit))
@@ -111,7 +97,11 @@ func (w *firstWorker) add() error {
 	w.load()
 	l, n := w.lay, w.block.Rows
 	if w.root != nil {
-		w.scaled(w.zs, w.root, l.width)
+		if w.wide != nil {
+			w.weighWide(w.zs)
+		} else {
+			w.scaled(w.zs, w.root, l.width)
+		}
 		for _, x := range w.block.Weight[:n] {
 			w.weight.add(x)
 			w.freq += int64(x) // whole numbers when it matters
@@ -119,7 +109,11 @@ func (w *firstWorker) add() error {
 	}
 	w.rows += int64(n)
 	before := w.trace()
-	kernel.Gram(w.gram, w.zs, stride, n, l.width)
+	if w.wide != nil {
+		kernel.GramWide(w.gram, w.gramLow, w.zs, w.wide.zsLow, stride, n, l.width)
+	} else {
+		kernel.Gram(w.gram, w.zs, stride, n, l.width)
+	}
 	after := w.trace()
 	w.reach = max(w.reach, after-before+1e-12*after)
 	for j := range l.p0 {
@@ -127,15 +121,9 @@ func (w *firstWorker) add() error {
 	}
 	w.watch.lap(StageSecond)
 	if len(l.tables) > 0 {
-		if err := w.cats.number(&w.block); err != nil {
-			return err
-		}
+		w.cats.number(&w.block)
 		for i, t := range w.tables {
 			addProducts(t, w.cats.rows[i][:n], w.zs, l.tables[i].prods)
-		}
-		for i, p := range w.pairs {
-			s := &l.pairs[i]
-			p.add(w.cats.rows[s.g][:n], w.cats.rows[s.h][:n], w.zs, s.prods)
 		}
 		w.watch.lap(StageLevels)
 	}
@@ -261,10 +249,7 @@ func (w *firstWorker) fold() error {
 	for _, t := range w.tables {
 		t.flush()
 	}
-	for _, p := range w.pairs {
-		p.flush()
-	}
-	if err := w.budget.num.check(w.tables, pairTablesOf(w.pairs), w.budget); err != nil {
+	if err := w.cats.check(w.tables, w.budget.memory); err != nil {
 		return err
 	}
 	var cl int64
@@ -290,6 +275,10 @@ func (w *firstWorker) clusterBytes(k int) int64 {
 func (w *firstWorker) segment(int) error {
 	w.gramX.addVec(w.gram)
 	clear(w.gram)
+	if w.wide != nil {
+		w.gramX.addVec(w.gramLow)
+		clear(w.gramLow)
+	}
 	if w.q != nil {
 		w.fourX.addVec(w.fourth)
 		clear(w.fourth)
@@ -305,16 +294,17 @@ func (w *firstWorker) segment(int) error {
 // Errors are those of the source and the evaluator, *NoRowsError, *MemoryError,
 // and the context's.
 func First(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options) (*State, error) {
-	return first(ctx, src, d, needs, o, nil, defaultUnit)
+	return first(ctx, src, d, needs, o, nil, o.Arithmetic == Extended, defaultUnit)
 }
 
 // Again repeats pass one in a frame made from all rows that s has seen.
 func Again(ctx context.Context, src stream.Source, s *State, needs Needs, o Options) (*State, error) {
 	f := s.fullFrame()
-	return first(ctx, src, s.lay.design, needs, o, f, defaultUnit)
+	extended := s.Extended || o.Arithmetic == Extended || (o.Arithmetic == Auto && f.Lossy())
+	return first(ctx, src, s.lay.design, needs, o, f, extended, defaultUnit)
 }
 
-func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options, f *Frame, unit int) (*State, error) {
+func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options, f *Frame, extended bool, unit int) (*State, error) {
 	l := newLayout(d)
 	if len(l.groups) > 0 && (needs.Fourth || len(needs.Clusters) > 0) {
 		return nil, errors.New("accum: fourth moments and cluster sums of categories need a second pass")
@@ -324,9 +314,16 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		return nil, err
 	}
 	shift := l.shifted()
-	if f == nil && src.Info().Sampled {
-		if f, err = sampleFrame(ctx, src, l, shift); err != nil {
-			return nil, err
+	if f == nil {
+		sample := o.Sample
+		if sample == nil {
+			if sample, err = TakeSample(ctx, src, d); err != nil {
+				return nil, err
+			}
+		}
+		f = sample.Frame
+		if f != nil && o.Arithmetic == Auto {
+			extended = sample.NeedsExtended()
 		}
 	}
 	p := newPass(o.Meter, o.Timings)
@@ -334,8 +331,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
-	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
-		dense: cmp.Or(o.Dense, denseColumns), workers: max(1, o.Workers), num: newNumbering(l)}
+	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit}
 	scan, err := src.Scan(ctx, d.Uses())
 	if err != nil {
 		return nil, err
@@ -343,9 +339,14 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	defer scan.Close()
 	var epochs []*epoch
 	if f != nil {
-		ws := newFirstWorkers(b.workers, l, f, &needs, b)
+		ws := make([]*firstWorker, max(1, o.Workers))
 		bw := make([]blockWorker, len(ws))
 		for i := range ws {
+			ld := newLoader(l, f)
+			if extended {
+				ld.extend()
+			}
+			ws[i] = newFirstWorker(l, ld, &needs, b)
 			bw[i] = ws[i]
 		}
 		if err := p.run(ctx, bw, nil, scan.Next); err != nil {
@@ -353,21 +354,21 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		}
 		epochs = append(epochs, joinWorkers(ws))
 	} else {
-		if epochs, err = runEpochs(ctx, p, scan, l, &needs, b, shift, max(1, o.Workers)); err != nil {
+		if epochs, extended, err = runEpochs(ctx, p, scan, l, &needs, b, shift, o); err != nil {
 			return nil, err
 		}
 	}
 	if err := scan.Close(); err != nil {
 		return nil, err
 	}
-	s, refit, err := newState(l, &needs, p, epochs, b)
+	s, refit, err := newState(l, &needs, p, epochs, extended, b)
 	if err != nil {
 		return nil, err
 	}
 	s.stamp = stamp
 	if refit != unit && src.Info().Rewindable && unit == defaultUnit {
 		// The unit of the keyed sums did not suit the data: sum again with one that does.
-		s2, err := first(ctx, src, d, needs, o, f, refit)
+		s2, err := first(ctx, src, d, needs, o, f, extended, refit)
 		if err == nil {
 			s2.Repeated = append(s2.Repeated, "sums by level or cluster were far larger or smaller than its first rows announced")
 		}

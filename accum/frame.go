@@ -35,6 +35,13 @@ type Frame struct {
 	Sample float64
 	// Cond is the condition number of the scaled terms in those rows.
 	Cond float64
+	// Digits is the number of decimal digits that the coefficients of the terms
+	// would keep in double arithmetic, judged by those rows.
+	Digits float64
+
+	constantDigits float64 // of the constant
+	lowSquares     []float64
+	lowRows        float64
 }
 
 // frameRows are rows for a frame, relative to an origin: columns one, x - one*origin
@@ -47,6 +54,10 @@ type frameRows struct {
 	yOrigin float64
 	fixed   int     // the first rows stand for many and are never dropped
 	spread  float64 // of the outcome's residual in an earlier frame, 0 if unknown
+	// lowSquares sums the squares of what float64 leaves off each column and the
+	// outcome, over lowRows rows.
+	lowSquares []float64
+	lowRows    float64
 }
 
 const (
@@ -80,6 +91,7 @@ func buildFrame(r *frameRows, terms int, shift bool) *Frame {
 		}
 		keep := newFrameRows(len(r.x))
 		keep.origin, keep.yOrigin, keep.fixed, keep.spread = r.origin, r.yOrigin, r.fixed, r.spread
+		keep.lowSquares, keep.lowRows = r.lowSquares, r.lowRows
 		for i, h := range lever {
 			if i >= r.fixed && h > heavyRow {
 				continue
@@ -233,6 +245,8 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 	}
 	f.White = m > 1 && f.Cond > whitenAbove
 	root := math.Sqrt(ss)
+	inv := invertUpper(tri, m, p0)
+	f.predict(r, kept, inv, gamma[lead:], ss, rest/root, r.yOrigin+ymean, mean)
 	if f.White {
 		// Whitening magnifies what a rounded shift leaves of the mean.
 		copy(f.Shift[:p0], mean[:p0])
@@ -240,7 +254,6 @@ func frameOnce(r *frameRows, p0 int, shift bool) (*Frame, []float64) {
 		for j := range p0 {
 			f.T[j*p0+j] = 1
 		}
-		inv := invertUpper(tri, m, p0)
 		for b, jb := range kept {
 			for a, ja := range kept[:b+1] {
 				f.T[ja*p0+jb] = inv[a*m+b] * root

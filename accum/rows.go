@@ -31,7 +31,9 @@ type loader struct {
 	z     []float64 // width columns of stride rows
 	root  []float64 // square roots of weights, nil without
 	sums  []float64 // raw column sums of the present segment
+	negH  []float64
 	low   []float64 // p0 columns: what float64 leaves off c; nil unless the frame needs it
+	wide  *wideRows // nil in double arithmetic
 	rest  []float64
 	watch stopwatch
 }
@@ -55,59 +57,45 @@ func (w *loader) col(j int) []float64 { return w.z[j*stride : j*stride+w.block.R
 
 // load computes z for the block.
 func (w *loader) load() {
+	if w.wide != nil {
+		w.placeWide()
+	} else {
+		w.place()
+	}
+	if n := w.block.Rows; w.root != nil {
+		for r, x := range w.block.Weight[:n] {
+			w.root[r] = math.Sqrt(x)
+		}
+		w.sums[w.lay.nx+1] += sum4(w.block.Weight[:n])
+	}
+	w.watch.lap(StageFrame)
+}
+
+// place sets the columns of z and adds to the raw sums.
+func (w *loader) place() {
 	l, f, n := w.lay, w.frame, w.block.Rows
 	for j := range l.p0 {
-		c := w.col(1 + j)
-		m, inv := f.Shift[j], f.Inv[j]
-		for r, x := range w.block.X[j][:n] {
-			c[r] = (x - m) * inv
-		}
+		w.sums[j] += kernel.ShiftScale(w.col(1+j), w.block.X[j], f.Shift[j], f.Inv[j])
 	}
 	for i, d := range l.factors {
-		c := w.col(l.p0 + 2 + i)
-		m, inv := f.Shift[d], f.Inv[d]
-		for r, x := range w.block.X[d][:n] {
-			c[r] = (x - m) * inv
+		sum := kernel.ShiftScale(w.col(l.p0+2+i), w.block.X[d], f.Shift[d], f.Inv[d])
+		if d >= l.p0 { // else it is a term by itself too, and summed
+			w.sums[d] += sum
 		}
 	}
 	switch {
 	case f.White && f.Cond > carefulAbove:
 		w.whitenCarefully()
 	case f.White:
-		for j := l.p0 - 1; j >= 0; j-- {
-			u := w.col(1 + j)
-			t := f.T[j*l.p0+j]
-			for r := range u {
-				u[r] *= t
-			}
-			for i := range j {
-				if t := f.T[i*l.p0+j]; t != 0 {
-					kernel.Axpy(t, w.col(1+i), u)
-				}
-			}
-		}
+		kernel.Whiten(f.T, l.p0, w.z[stride:], stride, n)
 	}
 	v := w.col(l.v())
-	for r, y := range w.block.X[l.nx][:n] {
-		v[r] = (y - f.YShift) * f.YInv
+	w.sums[l.nx] += kernel.ShiftScale(v, w.block.X[l.nx], f.YShift, f.YInv)
+	w.negH = w.negH[:0]
+	for _, h := range f.H {
+		w.negH = append(w.negH, -h)
 	}
-	for j, h := range f.H {
-		if h != 0 {
-			kernel.Axpy(-h, w.col(1+j), v)
-		}
-	}
-	if w.root != nil {
-		for r, x := range w.block.Weight[:n] {
-			w.root[r] = math.Sqrt(x)
-		}
-	}
-	for j, x := range w.block.X {
-		w.sums[j] += sum4(x[:n])
-	}
-	if w.root != nil {
-		w.sums[l.nx+1] += sum4(w.block.Weight[:n])
-	}
-	w.watch.lap(StageFrame)
+	kernel.Combine(v, w.z[stride:], stride, n, len(w.negH), w.negH)
 }
 
 // whitenCarefully is u = T'c by compensated dot products (Ogita, Rump, Oishi

@@ -10,12 +10,8 @@ import (
 type RowSums struct {
 	// Meats are (P+1) x (P+1) matrices of which the last row and column are
 	// unused, one for each of RowPass.Weights.
-	Meats [][]float64
-	// MeatBlocks are the products of each meat with the group apart, LoneBlocks
-	// those of LoneGram; empty without such a group.
-	MeatBlocks []Blocks
-	LoneBlocks Blocks
-	Scores     []*Scores
+	Meats  [][]float64
+	Scores []*Scores
 	// MaxLeverage is the largest leverage that is not 1.
 	MaxLeverage float64
 	// LoneRows counts rows of leverage 1; LoneGram is the sum of their w z z',
@@ -53,9 +49,16 @@ func (s *State) unchanged(p *pass) error {
 	return nil
 }
 
-func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, common *secondCommon) (*RowSums, int, error) {
+func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (*RowSums, int, error) {
 	w := ws[0]
 	for _, o := range ws[1:] {
+		to := w.cats.join(o.cats, func(i int) int {
+			n := 0
+			for _, m := range o.allMeats() {
+				n = max(n, len(m.tables[i].rows))
+			}
+			return n
+		})
 		mine := w.allMeats()
 		for k, m := range o.allMeats() {
 			if !m.used {
@@ -64,7 +67,7 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 			mine[k].used = true
 			mine[k].gramX.merge(m.gramX)
 			for i, t := range m.tables {
-				mine[k].tables[i].mergeFrom(t, same(len(t.rows)))
+				mine[k].tables[i].mergeFrom(t, to[i])
 			}
 		}
 		for i, t := range o.scores {
@@ -86,41 +89,29 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 		need = need || over
 		best = max(best, t.betterUnit())
 	}
-	var rows int64 // of one pair of combinations at most
-	if len(s.lay.pairs) > 0 {
-		rows = s.Rows
-	}
-	full := func(m *meat, cols int) *sums {
-		out := s.newSums()
+	full := func(m *meat, cols int) []float64 {
+		n := len(s.Columns) + 1
+		out := make([]float64, n*n)
 		gram := make([]float64, len(m.gram))
 		m.gramX.values(gram)
-		s.placeDense(out.m, gram, cols)
+		s.placeDense(out, gram, cols)
 		for _, t := range m.tables {
 			see(t)
 		}
-		for _, b := range m.pairs {
-			over, _ := b.t.fits(0, rows)
-			need = need || over
-			best = max(best, b.t.betterUnit(rows))
-		}
-		s.placeTables(out, m.tables, nil)
-		s.placePairs(out, pairTablesOf(m.pairs), nil)
+		s.placeTables(out, w.cats, m.tables)
 		return out
 	}
 	for _, m := range w.meats {
-		f := full(m, s.lay.p0+1)
-		out.Meats = append(out.Meats, f.m)
-		out.MeatBlocks = append(out.MeatBlocks, f.Blocks)
+		out.Meats = append(out.Meats, full(m, s.lay.p0+1))
 	}
 	if w.lone.used {
-		f := full(w.lone, s.lay.p0+1)
-		out.LoneGram, out.LoneBlocks = f.m, f.Blocks
+		out.LoneGram = full(w.lone, s.lay.p0+1)
 	}
 	if rp.Heavy {
 		if len(w.heavy) > maxHeavy {
 			return nil, 0, errors.New("accum: too many rows of high leverage to treat one by one")
 		}
-		out.Light = full(w.light, s.lay.p0+2).m
+		out.Light = full(w.light, s.lay.p0+2)
 		slices.SortFunc(w.heavy, func(a, b HeavyRow) int {
 			if a.segment != b.segment {
 				return a.segment - b.segment
@@ -132,18 +123,14 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 	for i, t := range w.scores {
 		see(t)
 		sc := sortScores(w.keys[i], t)
-		sc.Lone, sc.LoneZero = make([]bool, s.allColumns()), make([]bool, s.allColumns())
+		sc.Lone, sc.LoneZero = make([]bool, len(s.Columns)), make([]bool, len(s.Columns))
 		nonzero, zero := w.loneT[i].lone()
 		copy(sc.Lone[1:], nonzero)
 		copy(sc.LoneZero[1:], zero)
-		for _, g := range s.Groups {
-			for c := g.first; c < g.first+g.n*len(g.Parts); c++ {
+		for c := range s.Columns {
+			if s.Columns[c].Group >= 0 {
 				sc.Lone[c] = w.loneC[i].nonzero[c] >= 0
 			}
-		}
-		if s.Apart != nil {
-			over, unit := common.scores[i].join(s, sc)
-			need, best = need || over, max(best, unit)
 		}
 		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
 		out.Scores = append(out.Scores, sc)

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"io"
 	"math"
+	"slices"
 
 	"github.com/tallrow/tallrow/stream"
 )
@@ -17,14 +18,36 @@ const (
 	sampleMin      = 64 // fewer used rows make epochs the better way
 )
 
+// Sample is what places spread over an input say before the first pass. Frame is nil
+// where they say too little, or the input cannot be looked into: then the frame is
+// renewed while the input is read.
+type Sample struct {
+	Frame *Frame
+	// Whole says that the sample is the whole input.
+	Whole bool
+}
+
+// TakeSample samples the input for a design. The errors are the source's.
+func TakeSample(ctx context.Context, src stream.Source, d *stream.Design) (*Sample, error) {
+	if !src.Info().Sampled {
+		return &Sample{}, nil
+	}
+	l := newLayout(d)
+	f, whole, err := sampleFrame(ctx, src, l, l.shifted())
+	if err != nil {
+		return nil, err
+	}
+	return &Sample{f, whole}, nil
+}
+
 // sampleFrame makes a frame from the first batches at places spread over the
 // input: start, end, middle, quarters, and so on. It returns nil if too few rows
 // were found there although the input is longer.
-func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) (*Frame, error) {
+func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) (f *Frame, whole bool, err error) {
 	rows := newFrameRows(l.nx)
 	ld := newLoader(l, trivialFrame(l))
+	ld.eval.Extended(true) // to know what float64 leaves off
 	uses := l.design.Uses()
-	whole := false
 	segments := src.Info().Segments
 	spots := sampleSpots
 	if segments >= 0 {
@@ -34,7 +57,7 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) 
 	for spot := 0; spot < sampleMaxSpots && (spot < spots || rows.rows() < sampleRows); spot++ {
 		seg, err := src.Sample(ctx, uses, spread(spot))
 		if err != nil {
-			return nil, err
+			return nil, false, err
 		}
 		for b := 0; b < batches && err == nil; b++ {
 			if err = seg.Read(&ld.batch); err != nil {
@@ -47,20 +70,20 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) 
 		}
 		seg.Close()
 		if err != nil && !errors.Is(err, io.EOF) {
-			return nil, err
+			return nil, false, err
 		}
 		if spot == 0 && err != nil && segments <= 1 {
 			whole = true // the end was reached from the start
 			break
 		}
 		if err := ctx.Err(); err != nil {
-			return nil, err
+			return nil, false, err
 		}
 	}
 	if !whole && rows.rows() < sampleMin {
-		return nil, nil
+		return nil, false, nil
 	}
-	return buildFrame(rows, l.p0, shift), nil
+	return buildFrame(rows, l.p0, shift), whole, nil
 }
 
 // spread gives 0, 1, 1/2, 1/4, 3/4, 1/8, ...: bit-reversed order.
@@ -84,6 +107,7 @@ func spread(i int) float64 {
 
 // addBlock appends the rows of a block.
 func (r *frameRows) addBlock(b *stream.Block, l *layout) {
+	r.addLow(b.XLow, b.Rows)
 	for i := range b.Rows {
 		s := 1.0
 		if b.Weight != nil {
@@ -144,6 +168,7 @@ func previousRows(l *layout, epochs []*epoch) *frameRows {
 	copy(r.origin, last.Shift)
 	r.yOrigin = last.YShift
 	r.spread = 1 / last.YInv
+	r.lowSquares, r.lowRows = slices.Clone(last.lowSquares), last.lowRows
 	tri := looseCholesky(sum, w)
 	// Row i of the factor is a pseudo-row in z; back to shifted raw columns.
 	var back []float64

@@ -11,16 +11,13 @@ type Scores struct {
 	Keys []Key
 	Rows []int64
 	// S has one row of P numbers for each cluster: sum w e z over the internal
-	// columns, e in units 1/YInv. With a group apart it stops at the numeric terms
-	// and Groups holds what belongs to categories.
-	S      []float64
-	P      int
-	Groups []GroupScores
+	// columns, e in units 1/YInv.
+	S []float64
+	P int
 	// Lone tells for each internal column (numeric terms by their raw values)
 	// whether all its nonzero cells lie in one cluster; LoneZero whether it is zero
 	// in one cluster only and has one value elsewhere, so that it and the constant
-	// together live in that cluster. Columns of the group apart stand as in
-	// State.Column.
+	// together live in that cluster.
 	Lone, LoneZero []bool
 	// Gross is the sum over clusters of the square of what was added up; nil for
 	// scores that were summed row by row.

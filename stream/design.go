@@ -80,6 +80,10 @@ type Block struct {
 	Rows int
 	// X has one contiguous column for each of Design.Dense: X[j][:Rows].
 	X [][]float64
+	// XLow has, after Evaluator.Extended, what X leaves off: X[j] + XLow[j] is the
+	// column to about twice the digits of float64. Nil for columns that are exact,
+	// as cells are, or whose function has no such form. XLow itself is nil without.
+	XLow [][]float64
 	// Weight is nil without weights.
 	Weight []float64
 	// Cat and Key hold the keys of Design.Categories and Design.Keys; none is

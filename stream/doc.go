@@ -4,8 +4,8 @@
 // # Vocabulary
 //
 //   - A Source is an input with one Schema: a file, a set of files, a pipe.
-//   - A Segment is the unit of parallel work: a Parquet row group, or a fixed
-//     byte range of the uncompressed text of a CSV file (a row belongs to the
+//   - A Segment is the unit of parallel work: a Parquet row group, a fixed part
+//     of a huge one, or a fixed byte range of the uncompressed text of a CSV file (a row belongs to the
 //     segment in which it starts). Segments are numbered over the whole input,
 //     inputs sorted bytewise by path. Nothing depends on the number of workers.
 //   - A Batch holds up to 512 raw rows of a segment, column by column, as read.

@@ -37,6 +37,8 @@ type Evaluator struct {
 	lost           []int64 // by prog.lost, this batch
 	lostRow        []int   // last row counted under the name, plus one
 	valueless      []int64 // by prog.noValue, this batch
+
+	wide *wideEval // nil unless extended
 }
 
 type event struct{ label, row int32 }
@@ -126,6 +128,9 @@ func (e *Evaluator) Eval(b *Batch, loc func(mark int64) Position, out *Block) er
 		}
 	}
 	e.run(p.code[p.nWhere:], p.nWhere, b)
+	if e.wide != nil {
+		e.wide.run(e, n)
+	}
 	if e.allUsed() {
 		e.Tally.Used += int64(n)
 		e.pass(b, out)

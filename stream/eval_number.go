@@ -240,27 +240,7 @@ const maxPowInt = 64
 // multiply-add), so that the result is almost always the correctly rounded one;
 // math.Pow loses up to a few units in the last place to its plain products.
 func powInt(x float64, n int64) float64 {
-	k := n
-	if k < 0 {
-		k = -k
-	}
-	// h, l: the power so far; p, q: x to the 1, 2, 4, ...
-	h, l := 1.0, 0.0
-	p, q := x, 0.0
-	for {
-		if k&1 != 0 {
-			h, l = mulPair(h, l, p, q)
-		}
-		if k >>= 1; k == 0 {
-			break
-		}
-		p, q = mulPair(p, q, p, q)
-	}
-	if n < 0 {
-		r := 1 / h
-		rest := math.FMA(-r, h, 1) - float64(r*l)
-		l, h = float64(r*rest), r
-	}
+	h, l := powPair(x, 0, n)
 	if v := h + l; v-v == 0 && math.Abs(v) > 1e-290 && math.Abs(v) < 1e290 {
 		return v
 	}

@@ -31,6 +31,10 @@ func (t *Tally) Read() int64 { return t.Used + t.Excluded + t.Missing + t.ZeroWe
 func (e *Evaluator) prepare(out *Block) {
 	p := e.prog
 	out.X = slices.Grow(out.X[:0], len(p.dense))[:len(p.dense)]
+	out.XLow = out.XLow[:0]
+	if e.wide != nil {
+		out.XLow = slices.Grow(out.XLow, len(p.dense))[:len(p.dense)]
+	}
 	out.Cat = slices.Grow(out.Cat[:0], len(p.cats))[:len(p.cats)]
 	out.Key = slices.Grow(out.Key[:0], len(p.keys))[:len(p.keys)]
 }
@@ -39,6 +43,7 @@ func (e *Evaluator) prepare(out *Block) {
 func (e *Evaluator) empty(out *Block) {
 	p := e.prog
 	clear(out.X)
+	clear(out.XLow)
 	out.Weight, out.Marks = nil, nil
 	for i := range p.cats {
 		out.Cat[i] = Vector{Kind: p.cats[i].kind}
@@ -54,6 +59,9 @@ func (e *Evaluator) pass(b *Batch, out *Block) {
 	out.Rows = n
 	for j, r := range p.dense {
 		out.X[j] = e.num[r][:n]
+	}
+	if e.wide != nil {
+		e.wide.used(e, n, true, out.XLow)
 	}
 	out.Weight = nil
 	if p.weight >= 0 {
@@ -100,6 +108,9 @@ func (e *Evaluator) compact(b *Batch, out *Block) {
 	for j, r := range p.dense {
 		e.outX[j] = e.gather(e.outX[j], e.num[r])
 		out.X[j] = e.outX[j][:n]
+	}
+	if e.wide != nil {
+		e.wide.used(e, n, false, out.XLow)
 	}
 	out.Weight = nil
 	if p.weight >= 0 {

@@ -88,7 +88,7 @@ func TestCoverageUnequalSpread(t *testing.T) {
 	if testing.Short() {
 		reps = 500
 	}
-	c := simulate(t, reps, stream.Spec{Outcome: "y", Terms: []string{"x1", "x2"}}, []string{"classical", "hc0", "hc1", "hc2", "hc3"}, func(r *rand.Rand) *table {
+	c := simulate(t, reps, stream.Spec{Outcome: "y", Terms: []string{"x1", "x2"}}, []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4"}, func(r *rand.Rand) *table {
 		const n = 50
 		x1, x2, y := make([]float64, n), make([]float64, n), make([]float64, n)
 		for i := range n {
@@ -106,6 +106,7 @@ func TestCoverageUnequalSpread(t *testing.T) {
 	})
 	for kind, p := range map[string][2]float64{
 		"classical": {0.653, 0.948}, "hc0": {0.804, 0.935}, "hc1": {0.815, 0.943}, "hc2": {0.860, 0.949}, "hc3": {0.906, 0.962},
+		"hc4": {0.943, 0.967},
 	} {
 		c.check(t, kind, p, 40_000)
 	}

@@ -2,6 +2,7 @@ package vcov_test
 
 import (
 	"math"
+	"slices"
 	"sort"
 
 	"gonum.org/v1/gonum/mat"
@@ -139,9 +140,25 @@ func (d *dense) covariance(kind string) *mat.Dense {
 			f[i] /= 1 - d.h[i]
 		case "hc3":
 			f[i] /= (1 - d.h[i]) * (1 - d.h[i])
+		case "hc4", "hc4m", "hc5":
+			f[i] *= math.Pow(1-d.h[i], -d.exponent(kind, d.n/k*d.h[i]))
 		}
 	}
 	return d.sandwich(d.x, f)
+}
+
+// exponent of HC4 (Cribari-Neto 2004, doi:10.1016/S0167-9473(02)00366-3), HC4m
+// (Cribari-Neto and da Silva 2011) and HC5 (Cribari-Neto, Souza and Vasconcellos
+// 2007) for a row whose leverage is r times the mean.
+func (d *dense) exponent(kind string, r float64) float64 {
+	switch kind {
+	case "hc4":
+		return math.Min(4, r)
+	case "hc4m":
+		return math.Min(1, r) + math.Min(1.5, r)
+	}
+	most := slices.Max(d.h) * d.n / float64(d.k)
+	return math.Min(r, math.Max(4, 0.7*most)) / 2
 }
 
 func (d *dense) groups() int {

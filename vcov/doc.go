@@ -29,12 +29,13 @@
 //
 // Where one row has leverage 1, or one cluster alone holds a direction of the
 // terms, the coefficients that it decides have no p and no interval under the kinds
-// that rest on its residual, and no hc2 or hc3 error; all others stay right.
+// that rest on its residual, and no error of hc2 or higher; all others stay right.
 //
 // # Numbers
 //
 // Everything is solved in the coordinates of the sums (see package accum) and mapped
-// to the coefficients at the end. What does not exist is NaN here, null in JSON, and
-// has a reason in Errors.Reason or Result.Warnings. A Result is the same to the last
-// bit for any number of workers.
+// to the coefficients at the end. From extended sums the solution is refined and
+// mapped with twice the digits; errors are float64 of sums that are right. What does
+// not exist is NaN here, null in JSON, and has a reason in Errors.Reason or
+// Result.Warnings. A Result is the same to the last bit for any number of workers.
 package vcov

@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"math"
+	"slices"
 	"time"
 
 	"github.com/tallrow/tallrow/accum"
@@ -35,7 +36,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Meter: o.Meter}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
 	if o.Timings {
 		f.scan.Timings = new(accum.Timings)
 	}
@@ -51,6 +52,8 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	r.Run.Seconds = Number(time.Since(start).Seconds())
 	return r, nil
 }
+
+var arithmetics = map[string]accum.Arithmetic{"": accum.Auto, "auto": accum.Auto, "double": accum.Double, "extended": accum.Extended}
 
 type fitter struct {
 	ctx     context.Context
@@ -86,13 +89,18 @@ func (f *fitter) first() error {
 	if err := f.solve(s); err != nil {
 		return err
 	}
-	if f.sol.needsFrame() && f.src.Info().Rewindable {
+	lossy := arithmetics[f.o.Arithmetic] == accum.Auto && !s.Extended && s.Frame.Lossy()
+	if (lossy || f.sol.needsFrame()) && f.src.Info().Rewindable {
 		s, err := accum.Again(f.ctx, f.src, s, f.plan.needs, f.scan)
 		if err != nil {
 			return err
 		}
 		f.count(s)
-		f.warn = append(f.warn, Warning{Code: "frame-renewed", Text: "the first pass was repeated: the rows that set shift and scale did not stand for the whole input"})
+		if lossy && s.Extended {
+			f.note("frame-renewed", "the first pass was repeated in extended arithmetic: the first rows did not show how collinear the terms are")
+		} else {
+			f.note("frame-renewed", "the first pass was repeated: the rows that set shift and scale did not stand for the whole input")
+		}
 		if err := f.solve(s); err != nil {
 			return err
 		}
@@ -120,7 +128,13 @@ func (f *fitter) sumLoss() {
 	if x.blur > blurLimit {
 		f.note("digits", "some terms are so close to combinations of others, or so small beside them, that estimates and errors may have only about %d digits", digits(x.blur))
 	}
+	if fr := f.state.Frame; !f.state.Extended && fr.Lossy() && !x.perfect {
+		f.note("digits", "terms are nearly collinear: some estimates may have only about %d digits; --arithmetic extended keeps more", int(fr.Digits))
+	}
 	if x.perfect || x.df() <= 0 {
+		return
+	}
+	if f.state.Extended && len(f.state.Groups) == 0 {
 		return
 	}
 	if f.rssLoss = 0x1p-53 * x.svv / x.rss; f.rssLoss > lossLimit {
@@ -185,58 +199,92 @@ func (f *fitter) second() error {
 	}
 	f.route = "row pass"
 	rp := accum.RowPass{Theta: x.theta}
-	if x.apart != nil {
-		rp.Eliminated = x.apart.elim
+	if s.Extended {
+		rp.ThetaLow = x.thetaLow
 	}
 	seen := map[string]bool{}
+	lever := false
 	for _, k := range f.o.Errors {
-		g, ok := hcWeight[k.Name]
 		if k.Name == "hc1" {
 			k.Name = "hc0"
 		}
 		switch {
-		case ok && !seen[k.Name]:
+		case rowKind(k.Name) && !seen[k.Name]:
 			seen[k.Name] = true
 			f.kinds = append(f.kinds, k.Name)
-			rp.Weights = append(rp.Weights, func(h float64) float64 { return g(1 - h) })
-		case !ok && k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
+			lever = lever || leverages(k.Name)
+		case k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
 			seen[fmt.Sprint(k.Cluster)] = true
 			f.keys = append(f.keys, k.Cluster)
 		}
 	}
 	rp.Scores = f.keys
+	rp.Weights = f.weights(f.kinds, 0)
 	if len(rp.Weights) > 0 {
 		// hc0 and hc1 want leverages only to find rows that alone decide a coefficient.
 		w, m := x.whitener()
-		if seen["hc2"] || seen["hc3"] || s.LeverageBound(w) > 0.5 {
+		if lever || s.LeverageBound(w) > 0.5 {
 			rp.Whitener, rp.K = w, m
 		}
 	}
-	sums, err := accum.Second(f.ctx, f.src, s, rp, f.scan)
+	sums, err := f.rowPass(rp)
 	if err != nil {
 		return err
 	}
-	f.passes += sums.Passes
-	f.bytes += sums.Bytes
 	f.sums = sums
-	if (seen["hc2"] || seen["hc3"]) && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency && x.apart == nil {
-		return f.heavy(rp)
+	most := sums.MaxLeverage
+	if sums.LoneRows > 0 {
+		most = 1
+	}
+	if i := slices.Index(f.kinds, "hc5"); i >= 0 && 0.7*f.perTerm()*most > 4 {
+		again := rp
+		again.Weights, again.Scores = f.weights([]string{"hc5"}, most), nil
+		more, err := f.rowPass(again)
+		if err != nil {
+			return err
+		}
+		sums.Meats[i] = more.Meats[0]
+		rp.Weights = f.weights(f.kinds, most)
+	}
+	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency {
+		return f.heavy(rp, most)
 	}
 	return nil
 }
 
+// perTerm is N/k.
+func (f *fitter) perTerm() float64 { return float64(f.sol.n) / float64(max(1, f.sol.rank())) }
+
+// weights are the functions g of kinds, of the leverage.
+func (f *fitter) weights(kinds []string, most float64) []func(float64) float64 {
+	var list []func(float64) float64
+	for _, k := range kinds {
+		g := hcWeight(k, f.perTerm(), most)
+		list = append(list, func(h float64) float64 { return g(1 - h) })
+	}
+	return list
+}
+
+// rowPass is a further pass.
+func (f *fitter) rowPass(rp accum.RowPass) (*accum.RowSums, error) {
+	sums, err := accum.Second(f.ctx, f.src, f.state, rp, f.scan)
+	if err == nil {
+		f.passes += sums.Passes
+		f.bytes += sums.Bytes
+	}
+	return sums, err
+}
+
 // heavy repeats pass two for rows of leverage near 1.
-func (f *fitter) heavy(rp accum.RowPass) error {
+func (f *fitter) heavy(rp accum.RowPass, most float64) error {
 	rp.Heavy = true
 	rp.Scores = nil
-	sums, err := accum.Second(f.ctx, f.src, f.state, rp, f.scan)
+	sums, err := f.rowPass(rp)
 	if err != nil {
 		return err
 	}
-	f.passes += sums.Passes
-	f.bytes += sums.Bytes
 	for i, k := range f.kinds {
-		if !f.sol.heavyMeat(sums, hcWeight[k], sums.Meats[i]) {
+		if !f.sol.heavyMeat(sums, hcWeight(k, f.perTerm(), most), sums.Meats[i]) {
 			return nil // keep the plain sums
 		}
 	}
@@ -297,15 +345,14 @@ func (f *fitter) errorsFor(k Kind) Errors {
 func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	x := f.sol
 	if x.perfect {
-		x.infer(e, x.nothing(float64(x.df())), f.o.Level, f.o.Covariance)
+		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: float64(x.df()), joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
 		return
 	}
 	var meat []float64
-	var blocks accum.Blocks
 	if f.sums != nil {
 		for i, name := range f.kinds {
 			if name == k.Name || (name == "hc0" && k.Name == "hc1") {
-				meat, blocks = f.sums.Meats[i], f.sums.MeatBlocks[i]
+				meat = f.sums.Meats[i]
 			}
 		}
 	} else {
@@ -315,13 +362,13 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 			return
 		}
 	}
-	r := x.hc(k.Name, meat, blocks)
+	r := x.hc(k.Name, meat)
 	if f.sums == nil {
 		r.noise = f.noise
 	}
 	lone := f.loneTerms()
 	r.noP = lone
-	if k.Name == "hc2" || k.Name == "hc3" {
+	if leverages(k.Name) {
 		r.noSE = lone
 		if loss := 0x1p-50 / (1 - f.sums.MaxLeverage); loss > lossLimit && !f.heavyOK {
 			f.note("digits", "%s has about %d digits left: %d rows have leverage above %.2f, the largest %.12f", k.Name, digits(loss), f.sums.HeavyRows, accum.HeavyAt, f.sums.MaxLeverage)
@@ -338,7 +385,7 @@ func (f *fitter) tellLost(e *Errors, r *estimate) {
 	}
 	for j, lost := range r.lost {
 		if lost && !math.IsNaN(f.sol.est[j]) {
-			term := f.sol.coefficient(j).label
+			term := f.sol.cols[j].label
 			f.told[e.Name()+"\x00"+term] = true
 			f.warn = append(f.warn, Warning{Code: "digits", Term: ptr(term), Kind: ptr(e.Name()),
 				Text: fmt.Sprintf("what forms %s of %s cancels to less than rounding; it is left out", e.Name(), term)})
@@ -346,24 +393,15 @@ func (f *fitter) tellLost(e *Errors, r *estimate) {
 	}
 }
 
-// nothing is the estimate of a perfect fit.
-func (x *solution) nothing(df float64) *estimate {
-	r := &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}
-	if x.apart != nil {
-		r.apart = &apartMeat{rest: r.v, own: make([]float64, len(x.state.Apart.D)), scale: 1}
-	}
-	return r
-}
-
 // loneTerms marks coefficients that a single row decides.
 func (f *fitter) loneTerms() []bool {
 	x, s := f.sol, f.state
-	out := make([]bool, x.count())
+	out := make([]bool, x.k())
 	if f.sums != nil {
 		if f.sums.LoneGram == nil {
 			return nil
 		}
-		for j, q := range x.share(f.sums.LoneGram, f.sums.LoneBlocks) {
+		for j, q := range x.share(f.sums.LoneGram) {
 			out[j] = q > loneShare
 		}
 		return out
@@ -417,7 +455,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		if sc != nil {
 			df = float64(len(sc.Keys) - 1)
 		}
-		x.infer(e, x.nothing(df), f.o.Level, f.o.Covariance)
+		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
 		return
 	case sc == nil:
 		x.unavailable(e, "the sums of the clusters were not kept")

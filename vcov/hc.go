@@ -11,48 +11,73 @@ import (
 //
 //	V = c (X'WX)^-1 [ sum_i m_i e_i^2 g(h_i) x_i x_i' ] (X'WX)^-1,  t on N - k
 //
-//	kind  c        g(h)
-//	hc0   1        1              White 1980; Eicker 1967
-//	hc1   N/(N-k)  1              Hinkley 1977
-//	hc2   1        1/(1-h)        Horn, Horn, Duncan 1975
-//	hc3   1        1/(1-h)^2      MacKinnon & White 1985
+//	kind  c        g(h)                                  source
+//	hc0   1        1                                     White 1980; Eicker 1967
+//	hc1   N/(N-k)  1                                     Hinkley 1977
+//	hc2   1        1/(1-h)                               Horn, Horn, Duncan 1975
+//	hc3   1        1/(1-h)^2                             MacKinnon & White 1985
+//	hc4   1        (1-h)^-min(4, r)                      Cribari-Neto 2004
+//	hc4m  1        (1-h)^-(min(1, r) + min(1.5, r))      Cribari-Neto & da Silva 2011
+//	hc5   1        (1-h)^-(min(r, max(4, 0.7 R)) / 2)    Cribari-Neto, Souza, Vasconcellos 2007
 //
-// where m_i is 1 without weights, f_i for frequencies, w_i^2 for precision and
-// sampling weights, and h_i the leverage, x'(X'WX)^-1 x, times w_i for precision
-// and sampling weights. hc0 and hc1 come from fourth moments in one pass, or from
-// rows in a second; hc2 and hc3 need the second pass. Cost O(k^2) a row.
+// where r = N h/k, R = N h_max/k, m_i is 1 without weights, f_i for frequencies,
+// w_i^2 for precision and sampling weights, and h_i the leverage, x'(X'WX)^-1 x,
+// times w_i for precision and sampling weights. hc0 and hc1 come from fourth moments
+// in one pass, or from rows in a second; the others need the second pass, and hc5 a
+// third where 0.7 R is above 4: the largest leverage is known only after the second.
+// Cost O(k^2) a row.
 //
 // A row of leverage 1 has residual 0 and adds nothing; a coefficient that it
-// decides has no p, no interval, and no hc2 or hc3 error.
+// decides has no p, no interval, and no error of hc2 or higher.
 
-// hcWeight is g as a function of 1-h.
-var hcWeight = map[string]func(gap float64) float64{
-	"hc0": func(float64) float64 { return 1 },
-	"hc1": func(float64) float64 { return 1 },
-	"hc2": func(gap float64) float64 { return 1 / gap },
-	"hc3": func(gap float64) float64 { return 1 / (gap * gap) },
+// leverages reports whether a kind depends on the leverage of every row.
+func leverages(kind string) bool {
+	switch kind {
+	case "hc2", "hc3", "hc4", "hc4m", "hc5":
+		return true
+	}
+	return false
 }
 
-// hc returns the estimate from a meat over internal columns and, if a group is
-// apart, its blocks.
-func (x *solution) hc(kind string, meat []float64, b accum.Blocks) *estimate {
-	df := float64(x.df())
-	r := &estimate{factor: 1, df: df, joint: plainJoint(df)}
-	if x.apart != nil {
-		r.apart = x.rowMeat(meat, b)
-		r.meat = r.apart.rest
-	} else {
-		r.meat = x.project(meat)
+// NeedsRows reports whether errors of a kind always take a pass over the rows after
+// the estimates are known.
+func NeedsRows(kind string) bool { return leverages(kind) }
+
+// rowKind reports whether a kind is of this family.
+func rowKind(kind string) bool { return kind == "hc0" || kind == "hc1" || leverages(kind) }
+
+// hcWeight is g as a function of 1-h. perTerm is N/k, most the largest leverage;
+// only hc5 looks at it.
+func hcWeight(kind string, perTerm, most float64) func(gap float64) float64 {
+	switch kind {
+	case "hc2":
+		return func(gap float64) float64 { return 1 / gap }
+	case "hc3":
+		return func(gap float64) float64 { return 1 / (gap * gap) }
+	case "hc4":
+		return func(gap float64) float64 { return math.Pow(gap, -min(4, perTerm*(1-gap))) }
+	case "hc4m":
+		return func(gap float64) float64 {
+			r := perTerm * (1 - gap)
+			return math.Pow(gap, -(min(1, r) + min(1.5, r)))
+		}
+	case "hc5":
+		limit := max(4, 0.7*perTerm*most)
+		return func(gap float64) float64 { return math.Pow(gap, -min(perTerm*(1-gap), limit)/2) }
 	}
-	v := sandwich(x.inverse, r.meat, x.k())
-	r.v = v
+	return func(float64) float64 { return 1 }
+}
+
+// hc returns the estimate from a meat over internal columns.
+func (x *solution) hc(kind string, meat []float64) *estimate {
+	df := float64(x.df())
+	m := x.project(meat)
+	v := sandwich(x.inverse, m, x.k())
+	r := &estimate{v: v, meat: m, factor: 1, df: df, joint: plainJoint(df)}
 	if kind == "hc1" {
 		r.factor = float64(x.n) / df
 		for i := range v {
 			v[i] *= r.factor
-		}
-		if r.apart != nil {
-			r.apart.scale = r.factor
 		}
 	}
 	return r
@@ -66,8 +91,8 @@ func (x *solution) hc(kind string, meat []float64, b accum.Blocks) *estimate {
 func (x *solution) cancellation(meat, gross []float64) (loss float64, noise []float64) {
 	k := x.k()
 	l := x.bread()
-	net := sandwichDiagonal(l, x.project(meat), k)
-	all := sandwichDiagonal(absolute(l), x.projectAbs(gross), k)
+	net := sandwich(l, x.project(meat), k)
+	all := sandwich(absolute(l), x.projectAbs(gross), k)
 	floor := x.zeroVariance()
 	noise = make([]float64, k)
 	worst := 0.0
@@ -75,11 +100,11 @@ func (x *solution) cancellation(meat, gross []float64) (loss float64, noise []fl
 		if math.IsNaN(x.est[j]) {
 			continue
 		}
-		noise[j] = 64 * 0x1p-53 * all[j]
-		if net[j] <= noise[j] && noise[j] <= harmless(floor[j]) {
+		noise[j] = 64 * 0x1p-53 * all[j*k+j]
+		if net[j*k+j] <= noise[j] && noise[j] <= harmless(floor[j]) {
 			continue // zero
 		}
-		r := all[j] / max(net[j], floor[j])
+		r := all[j*k+j] / max(net[j*k+j], floor[j])
 		if !(r >= 0) {
 			r = math.Inf(1)
 		}
@@ -104,16 +129,11 @@ func (x *solution) bread() []float64 {
 // an error counts as zero.
 func (x *solution) zeroVariance() []float64 {
 	k := x.k()
-	m := sandwichDiagonal(x.wAlias, x.inverse, k)
+	m := sandwich(x.wAlias, x.inverse, k)
 	out := make([]float64, k)
 	share := max(zeroShare, 100*x.blur*x.blur)
 	for j := range k {
-		out[j] = share * x.rss / float64(max(1, x.df())) * m[j]
-	}
-	if x.apart != nil {
-		for _, u := range x.apartUnit() {
-			out = append(out, share*x.rss/float64(max(1, x.df()))*u)
-		}
+		out[j] = share * x.rss / float64(max(1, x.df())) * m[j*k+j]
 	}
 	return out
 }

@@ -4,7 +4,7 @@ import "github.com/tallrow/tallrow/accum"
 
 // Kind asks for standard errors of one kind.
 type Kind struct {
-	Name    string // classical, hc0, hc1, hc2, hc3, cr0, cr1
+	Name    string // classical, hc0 .. hc5, hc4m, cr0, cr1
 	Cluster int    // index into Design.Keys for cr0 and cr1, else -1
 }
 
@@ -14,6 +14,9 @@ type Options struct {
 	Level  float64 // of intervals; 0 means 0.95
 	// Passes forces one or two passes; 0 lets the planner choose.
 	Passes int
+	// Arithmetic is "double", "extended", or "auto" (also the empty string): extended
+	// where the first rows say that coefficients would lose digits.
+	Arithmetic string
 	// Workers is the number of goroutines that read and sum; 0 means one for
 	// each processor.
 	Workers int
@@ -25,10 +28,6 @@ type Options struct {
 	ClusterMemory int64
 	// Covariance asks for the matrix beyond 200 terms.
 	Covariance bool
-	// Dense is the number of columns up to which the sums are solved as one dense
-	// matrix; beyond it the category with most levels is eliminated first. 0 means
-	// the default of accum.Options.Dense. The last bits depend on it.
-	Dense int
 	// Meter, if not nil, is counted up while the scan runs.
 	Meter *accum.Meter
 	// Timings asks for Run.Timings.

@@ -15,7 +15,7 @@ import (
 type Plan struct {
 	Passes     int        `json:"passes"`
 	Route      string     `json:"route"`
-	Arithmetic string     `json:"arithmetic"`
+	Arithmetic string     `json:"arithmetic"` // "double", "extended"; "auto": decided while reading
 	Workers    int        `json:"workers"`
 	Segments   int        `json:"segments"` // -1: not known before the scan
 	Rows       int64      `json:"rows"`     // -1: not known
@@ -29,8 +29,9 @@ type Plan struct {
 	PerCluster int64 `json:"per_cluster"`
 	PerLevel   int64 `json:"per_level"`
 
-	needs accum.Needs
-	rows  bool // a row pass is needed
+	needs  accum.Needs
+	sample *accum.Sample // nil unless arithmetic hangs on it
+	rows   bool          // a row pass is needed
 }
 
 // PassCost is a share of the work, estimated from measured costs on one machine:
@@ -48,6 +49,7 @@ const (
 	costParquetColumn = 10.0
 	costCSVField      = 22.0
 	costGramPair      = 0.1  // for each product of two columns
+	costExtended      = 8.0  // second moments in extended arithmetic, to double
 	costQuartic       = 0.08 // for each product of four
 	costRowTerm       = 3.0  // row pass, for each term
 	costRowPair       = 0.1  // row pass, leverage, for each pair of terms
@@ -80,28 +82,32 @@ func (o *Options) validate(d *stream.Design) error {
 	if o.Passes < 0 || o.Passes > 2 {
 		return stream.Usef("passes: found %d, want 1 or 2", o.Passes)
 	}
+	if _, ok := arithmetics[o.Arithmetic]; !ok {
+		return stream.Usef("arithmetic: found %q, want auto, double or extended", o.Arithmetic)
+	}
 	for _, k := range o.Errors {
 		switch k.Name {
-		case "classical", "hc0", "hc1", "hc2", "hc3":
+		case "classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5":
 		case "cr0", "cr1":
 			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
 				return stream.Usef("errors: %s needs a clustering", k.Name)
 			}
 		default:
-			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, cr0 or cr1", k.Name)
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0 or cr1", k.Name)
 		}
 	}
 	return nil
 }
 
-// PlanFit chooses the route from the schema and the model; it reads no rows.
-func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) (*Plan, error) {
+// PlanFit chooses the route from the schema and the model, and arithmetic, where
+// that is open, from rows at places spread over the input.
+func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*Plan, error) {
 	o = o.withDefaults()
 	if err := o.validate(d); err != nil {
 		return nil, err
 	}
 	info := src.Info()
-	p := &Plan{Arithmetic: "double", Workers: o.Workers, Segments: info.Segments, Rows: info.Rows, Bytes: info.Bytes}
+	p := &Plan{Workers: o.Workers, Segments: info.Segments, Rows: info.Rows, Bytes: info.Bytes}
 	k, cats := 1, false
 	for _, t := range d.Terms {
 		p.Terms = append(p.Terms, t.Text)
@@ -112,20 +118,21 @@ func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) 
 		}
 	}
 	var hc, rows bool
+	var byRow string
 	clusters := map[int]bool{}
 	for _, e := range o.Errors {
 		switch e.Name {
 		case "hc0", "hc1":
 			hc = true
-		case "hc2", "hc3":
-			rows = true
+		case "hc2", "hc3", "hc4", "hc4m", "hc5":
+			rows, byRow = true, e.Name
 			p.why("%s depends on the leverage of every row, which is known only after the first pass", e.Name)
 		case "cr0", "cr1":
 			clusters[e.Cluster] = true
 		}
 	}
 	if o.Passes == 1 && rows {
-		return nil, stream.Usef("passes: hc2 and hc3 need two passes; leave out --passes 1 or those errors")
+		return nil, stream.Usef("passes: %s needs two passes; leave out --passes 1 or that kind of errors", byRow)
 	}
 	if cats && (hc || len(clusters) > 0) {
 		if o.Passes == 1 {
@@ -210,6 +217,13 @@ func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) 
 	if sums > o.Memory {
 		return nil, &accum.MemoryError{What: fmt.Sprintf("%d terms over %d workers", k, o.Workers), Need: sums, Have: o.Memory}
 	}
+	if err := p.chooseArithmetic(ctx, src, d, o); err != nil {
+		return nil, err
+	}
+	if p.Arithmetic != "double" {
+		sums += int64(o.Workers) * 2 * 8 * stream.BatchRows * int64(c) * 2
+		p.Costs[1].Share *= costExtended
+	}
 	p.Memory = sums + int64(o.Workers)*info.WorkerBytes
 	var all float64
 	for _, c := range p.Costs {
@@ -219,6 +233,39 @@ func PlanFit(_ context.Context, src stream.Source, d *stream.Design, o Options) 
 		p.Costs[i].Share /= all
 	}
 	return p, nil
+}
+
+// chooseArithmetic samples the input where that decides.
+func (p *Plan) chooseArithmetic(ctx context.Context, src stream.Source, d *stream.Design, o Options) error {
+	switch o.Arithmetic {
+	case "double", "extended":
+		p.Arithmetic = o.Arithmetic
+		return nil
+	}
+	s, err := accum.TakeSample(ctx, src, d)
+	if err != nil {
+		return err
+	}
+	p.sample = s
+	switch {
+	case s.Frame == nil:
+		p.Arithmetic = "auto"
+		p.why("the input cannot be sampled: its first rows decide whether arithmetic is double or extended")
+	case s.NeedsExtended():
+		p.Arithmetic = "extended"
+		p.why("%s", whyExtended(s.Frame))
+	default:
+		p.Arithmetic = "double"
+	}
+	return nil
+}
+
+// whyExtended says why auto took extended arithmetic.
+func whyExtended(f *accum.Frame) string {
+	if f.Lossy() {
+		return fmt.Sprintf("terms are nearly collinear: double arithmetic would keep about %d digits of the estimates", int(f.Digits))
+	}
+	return "the input is small, and extended arithmetic saves last digits at no cost"
 }
 
 func (p *Plan) why(format string, args ...any) {

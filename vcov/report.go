@@ -39,13 +39,11 @@ func (f *fitter) result() *Result {
 		r.Weight.Kind = ptr(n)
 	}
 	r.Terms, r.Estimates = []string{}, []Number{}
-	order := x.order()
-	for i := range x.count() {
-		if order != nil {
-			i = order[i]
-		}
-		r.Terms = append(r.Terms, x.coefficient(i).label)
-		r.Estimates = append(r.Estimates, Number(x.est[i]))
+	for _, u := range x.cols {
+		r.Terms = append(r.Terms, u.label)
+	}
+	for _, b := range x.est {
+		r.Estimates = append(r.Estimates, Number(b))
 	}
 	f.fitQuality(r)
 	for _, k := range f.o.Errors {
@@ -55,6 +53,12 @@ func (f *fitter) result() *Result {
 	r.Model = f.model()
 	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments,
 		Bytes: f.bytes, Condition: Number(x.condition())}
+	if s.Extended {
+		r.Run.Arithmetic, r.Run.ArithmeticReason = "extended", whyExtended(s.Frame)
+		if f.o.Arithmetic == "extended" {
+			r.Run.ArithmeticReason = "asked for"
+		}
+	}
 	return r
 }
 

@@ -177,14 +177,16 @@ type Hypothesis struct {
 // Run says how the numbers came about.
 type Run struct {
 	Passes     int    `json:"passes"`
-	Route      string `json:"route"` // "second moments", "fourth moments", "row pass", "cluster sums"
-	Arithmetic string `json:"arithmetic"`
-	Workers    int    `json:"workers"`
-	Segments   int64  `json:"segments"`
-	Bytes      int64  `json:"bytes"` // read, all passes
-	Seconds    Number `json:"seconds"`
-	PeakBytes  int64  `json:"peak_bytes"` // of the process; set by the caller
-	Condition  Number `json:"condition"`  // of the terms as the sums hold them
+	Route      string `json:"route"`      // "second moments", "fourth moments", "row pass", "cluster sums"
+	Arithmetic string `json:"arithmetic"` // "double" or "extended"
+	// ArithmeticReason says why extended arithmetic was taken; empty for double.
+	ArithmeticReason string `json:"arithmetic_reason,omitempty"`
+	Workers          int    `json:"workers"`
+	Segments         int64  `json:"segments"`
+	Bytes            int64  `json:"bytes"` // read, all passes
+	Seconds          Number `json:"seconds"`
+	PeakBytes        int64  `json:"peak_bytes"` // of the process; set by the caller
+	Condition        Number `json:"condition"`  // of the terms as the sums hold them
 	// Timings says where the time of all workers went, if asked for.
 	Timings []Timing `json:"timings,omitempty"`
 }

@@ -105,7 +105,7 @@ func (a *app) wantsSpool(s *settings, req request) bool {
 		return true
 	}
 	for _, k := range req.kinds {
-		if k.Name == "hc2" || k.Name == "hc3" {
+		if vcov.NeedsRows(k.Name) {
 			return true
 		}
 	}
@@ -199,7 +199,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 	}
 	p.opts = vcov.Options{
 		Errors: req.withClassical(s.weightKind == "sampling"),
-		Level:  s.level, Passes: s.passes, Meter: new(accum.Meter), Timings: s.timings,
+		Level:  s.level, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings,
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
 	p.opts.ClusterMemory = s.clusterMemory()

@@ -9,7 +9,7 @@ import (
 )
 
 // knownKinds are the kinds of errors of this version, in order of refinement.
-var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "cr0", "cr1"}
+var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1"}
 
 // request is the errors asked for, in order, and the clusterings they need.
 type request struct {

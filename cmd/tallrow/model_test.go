@@ -36,7 +36,7 @@ decimal = "comma"
 null = ["-999", "a, b"]
 zone = "Europe/Rome"
 passes = 2
-arithmetic = "double"
+arithmetic = "extended"
 workers = 0x10
 memory = "1GiB"
 scratch = "/tmp"
@@ -61,7 +61,7 @@ func TestModelFile(t *testing.T) {
 		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, first: 1000,
 		format: "csv", decimal: "comma", null: []string{"-999", "a, b"}, zone: rome,
 		kinds:  map[string]stream.Kind{"crane": stream.Text, "odd, name = x": stream.Int64},
-		passes: 2, workers: 16, memory: 1 << 30, scratch: "/tmp",
+		passes: 2, arithmetic: "extended", workers: 16, memory: 1 << 30, scratch: "/tmp",
 	}
 	if d := cmp.Diff(want, s, cmp.AllowUnexported(settings{}), cmp.FilterPath(func(p cmp.Path) bool {
 		return p.String() == "from"
@@ -101,7 +101,7 @@ func TestModelRefuses(t *testing.T) {
 	for _, c := range []struct{ text, want string }{
 		{"outcome = \"minutes\"\ntrems = \"a\"\n", `m.toml line 2: unknown key "trems"; did you mean terms?`},
 		{"\nlags = 3\n", "m.toml line 2: lags is not in this version"},
-		{"arithmetic = \"extended\"\n", "m.toml line 1: arithmetic: extended arithmetic is not in this version, want auto or double"},
+		{"arithmetic = \"wide\"\n", "m.toml line 1: arithmetic: found \"wide\", want auto, double or extended"},
 		{"json = true\n", "m.toml line 1: json belongs on the command line: --json"},
 		{"data = \"a.csv\"\n", "m.toml line 1: data are named on the command line"},
 		{"level = \"high\"\n", `m.toml line 1: level: found the string "high", want a number`},

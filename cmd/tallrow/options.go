@@ -74,7 +74,7 @@ var options = []option{
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
 	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onModel, file: true, def: "classical, hc1, and cr1 with --cluster",
-		help: "kinds of errors: classical, hc0, hc1, hc2, hc3, cr0, cr1; cr1(quay) names its clusters in place; the last one leads",
+		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0, cr1; cr1(quay) names its clusters in place; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
@@ -118,9 +118,9 @@ var options = []option{
 	{name: "passes", value: "auto|1|2", form: formPasses, group: "Resources", on: onModel, file: true, def: "auto",
 		help: "how often the data are read",
 		set:  setPasses},
-	{name: "arithmetic", value: "auto|double", group: "Resources", on: onModel, file: true, def: "auto",
-		help: "auto is double in this version",
-		set:  setArithmetic},
+	{name: "arithmetic", value: "auto|double|extended", group: "Resources", on: onModel, file: true, def: "auto",
+		help: "extended has twice the digits; auto takes it where terms are so collinear that estimates lose digits",
+		set:  choose(func(s *settings) *string { return &s.arithmetic }, "auto", "double", "extended")},
 	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onAll, file: true, def: "one for each processor",
 		help: "goroutines that read and sum; the result never depends on it",
 		set:  setWorkers},
@@ -155,7 +155,7 @@ var options = []option{
 var (
 	laterOptions = []string{"lags", "kernel", "period", "unit", "hypothesis", "draws", "seed", "keep", "checkpoint",
 		"hide-ids", "frame-from", "at", "sweep", "part"}
-	laterKinds    = []string{"hc4", "hc4m", "hc5", "cr2", "cr3", "hac", "driscoll-kraay"}
+	laterKinds    = []string{"cr2", "cr3", "hac", "driscoll-kraay"}
 	laterCommands = []string{"digest", "pool", "launch"}
 )
 

@@ -73,7 +73,7 @@ func renderPlan(pf *planFile, width int) string {
 	n.add("columns", fmt.Sprintf("%s; %d of %d are read", strings.Join(used, ", "), len(used), len(pf.Columns)))
 	n.add("terms", strings.Join(oneLines(pf.Terms), ", "))
 	n.add("errors", strings.Join(oneLines(pf.Model.Errors), ", "))
-	n.add("route", fmt.Sprintf("%s: %s, %s arithmetic, %s", plural(int64(pf.Passes), "pass", "passes"), pf.Route, pf.Arithmetic, plural(int64(pf.Workers), "worker", "workers")))
+	n.add("route", fmt.Sprintf("%s: %s, %s, %s", plural(int64(pf.Passes), "pass", "passes"), pf.Route, arithmeticText(pf.Arithmetic), plural(int64(pf.Workers), "worker", "workers")))
 	memory := fmt.Sprintf("about %s of %s", sizeText(pf.Memory), sizeText(pf.Bound))
 	if len(pf.Model.Cluster) > 0 && pf.PerCluster > 0 {
 		memory += fmt.Sprintf("; %s more for each cluster", sizeText(pf.PerCluster))
@@ -97,6 +97,13 @@ func renderPlan(pf *planFile, width int) string {
 		n.add(key, oneLine(r))
 	}
 	return b.String()
+}
+
+func arithmeticText(word string) string {
+	if word == "auto" {
+		word = "double or extended"
+	}
+	return word + " arithmetic"
 }
 
 func inputText(in planInput) string {

@@ -142,6 +142,11 @@ func readPlan(name string) (*planFile, error) {
 	if pf.Passes != 1 && pf.Passes != 2 {
 		return nil, stream.Usef("plan %s: found %d passes, want 1 or 2", name, pf.Passes)
 	}
+	switch pf.Arithmetic {
+	case "auto", "double", "extended":
+	default:
+		return nil, stream.Usef("plan %s: found arithmetic %q, want auto, double or extended", name, pf.Arithmetic)
+	}
 	return &pf, nil
 }
 
@@ -155,6 +160,10 @@ func (pf *planFile) adopt(s *settings, o *stream.Options) error {
 		return stream.Usef("%s %d: the plan %s has %d", s.origin("passes"), s.passes, s.plan, pf.Passes)
 	}
 	s.passes = pf.Passes
+	if s.arithmetic != "auto" && s.arithmetic != pf.Arithmetic {
+		return stream.Usef("%s %s: the plan %s has %s", s.origin("arithmetic"), s.arithmetic, s.plan, pf.Arithmetic)
+	}
+	s.arithmetic = pf.Arithmetic
 	if strings.HasPrefix(pf.Input.Format, "csv") {
 		// The first rows of a pipe may be others this time. What a time means
 		// (zone, day) is not in its kind, so those are left to the reader.

@@ -34,11 +34,12 @@ type settings struct {
 	kinds    map[string]stream.Kind
 	zone     *time.Location
 
-	passes  int // 0: auto
-	workers int
-	memory  int64 // 0: half of what there is
-	scratch string
-	plan    string
+	passes     int // 0: auto
+	arithmetic string
+	workers    int
+	memory     int64 // 0: half of what there is
+	scratch    string
+	plan       string
 
 	json       bool
 	output     string
@@ -54,7 +55,7 @@ type settings struct {
 
 func newSettings() *settings {
 	return &settings{
-		missing: "skip", badRows: "stop", level: 0.95,
+		missing: "skip", badRows: "stop", level: 0.95, arithmetic: "auto",
 		format: "auto", decimal: "point", zone: time.UTC,
 		workers: runtime.GOMAXPROCS(0),
 		from:    map[string]string{},
@@ -118,17 +119,6 @@ func choose(dst func(*settings) *string, words ...string) func(*settings, value)
 		}
 		return fmt.Errorf("found %q, want %s", v.text(), alternatives(words))
 	}
-}
-
-// setArithmetic takes what there is one of: the word is checked and needs no place.
-func setArithmetic(_ *settings, v value) error {
-	switch v.text() {
-	case "auto", "double":
-		return nil
-	case "extended":
-		return fmt.Errorf("extended arithmetic is not in this version, want auto or double")
-	}
-	return fmt.Errorf("found %q, want auto or double", v.text())
 }
 
 // alternatives gives "a, b or c".

@@ -59,9 +59,7 @@ func TestParseErrorsRefuses(t *testing.T) {
 		want  string // part of the message
 	}{
 		{[]string{"errors", ""}, "found nothing"},
-		{[]string{"errors", "hc4"}, "hc4 is not in this version"},
-		{[]string{"errors", "hc4m"}, "hc4m is not in this version"},
-		{[]string{"errors", "hc5"}, "hc5 is not in this version"},
+		{[]string{"errors", "cr3(quay)"}, "cr3 is not in this version"},
 		{[]string{"errors", "cr2(quay)"}, "cr2 is not in this version"},
 		{[]string{"errors", "cr3"}, "cr3 is not in this version"},
 		{[]string{"errors", "hac"}, "hac is not in this version"},

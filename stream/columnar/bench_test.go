@@ -110,24 +110,151 @@ func BenchmarkRead(b *testing.B) {
 			b.SetBytes(8 * rows)
 			for b.Loop() {
 				for _, g := range lib.RowGroups() {
-					pages := g.ColumnChunks()[j].Pages()
-					for {
-						p, err := pages.ReadPage()
-						if err == io.EOF {
-							break
-						}
-						if err != nil {
-							b.Fatal(err)
-						}
-						parquet.Release(p)
-					}
-					pages.Close()
+					readPages(b, g.ColumnChunks()[j])
 				}
 			}
 			b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/rows, "ns/row")
 		})
 	}
 	b.Run("column=all/impl=batches", func(b *testing.B) { read(b, allUses(f)) })
+}
+
+// decodeFile has six float64 and three int64 columns, pages of 256 KiB, snappy.
+func decodeFile(b *testing.B, rows int, dict bool, nulls string) []byte {
+	r := rand.New(rand.NewPCG(20, 2))
+	root := orderedGroup{Group: parquet.Group{}}
+	for j := range 9 {
+		node := parquet.Leaf(parquet.DoubleType)
+		if j > 5 {
+			node = parquet.Leaf(parquet.Int64Type)
+		}
+		if dict {
+			node = parquet.Encoded(node, &parquet.RLEDictionary)
+		}
+		if nulls != "required" {
+			node = parquet.Optional(node)
+		}
+		name := fmt.Sprint("x", j)
+		root.Group[name] = node
+		root.order = append(root.order, name)
+	}
+	var buf bytes.Buffer
+	w := parquet.NewGenericWriter[any](&buf, parquet.NewSchema("rows", root), parquet.Compression(&parquet.Snappy), parquet.DataPageStatistics(false))
+	vals := make([]parquet.Value, 1024)
+	for at := 0; at < rows; at += len(vals) {
+		for j, cw := range w.ColumnWriters() {
+			for i := range vals {
+				x := r.NormFloat64()
+				if dict {
+					x = float64(r.IntN(1000)) / 7
+				}
+				vals[i] = parquet.DoubleValue(x)
+				if j > 5 {
+					vals[i] = parquet.Int64Value(int64(x * 1000))
+				}
+				switch {
+				case nulls == "required":
+				case nulls == "few" && r.IntN(1000) == 0 || nulls == "tenth" && r.IntN(10) == 0:
+					vals[i] = parquet.NullValue().Level(0, 0, j)
+				default:
+					vals[i] = vals[i].Level(0, 1, j)
+				}
+			}
+			if _, err := cw.WriteRowValues(vals); err != nil {
+				b.Fatal(err)
+			}
+		}
+		if (at+len(vals))%131072 == 0 {
+			if err := w.Flush(); err != nil {
+				b.Fatal(err)
+			}
+		}
+	}
+	if err := w.Close(); err != nil {
+		b.Fatal(err)
+	}
+	return buf.Bytes()
+}
+
+// Batches of nine numeric columns, beside the library's pages, decoded (of
+// dictionaries only the indexes, of optional columns only the values that are
+// there) and thrown away.
+func BenchmarkDecode(b *testing.B) {
+	const rows = 1 << 19
+	ctx := context.Background()
+	for _, enc := range []string{"plain", "dictionary"} {
+		for _, nulls := range []string{"required", "none", "few", "tenth"} {
+			data := decodeFile(b, rows, enc == "dictionary", nulls)
+			name := fmt.Sprintf("encoding=%s/nulls=%s/impl=", enc, nulls)
+			perCell := func(b *testing.B) {
+				b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/rows/9, "ns/cell")
+			}
+			b.Run(name+"batches", func(b *testing.B) {
+				f, err := openBytes(data, stream.Options{})
+				if err != nil {
+					b.Fatal(err)
+				}
+				uses := allUses(f)
+				for j := range uses {
+					uses[j].AsNumber = true
+				}
+				b.SetBytes(8 * rows * 9)
+				var batch stream.Batch
+				for b.Loop() {
+					sc, err := f.Scan(ctx, uses)
+					if err != nil {
+						b.Fatal(err)
+					}
+					for {
+						seg, err := sc.Next(ctx)
+						if err == io.EOF {
+							break
+						}
+						for err == nil {
+							err = seg.Read(&batch)
+						}
+						if err != io.EOF {
+							b.Fatal(err)
+						}
+						seg.Close()
+					}
+				}
+				perCell(b)
+			})
+			b.Run(name+"pages", func(b *testing.B) {
+				lib, err := parquet.OpenFile(bytes.NewReader(data), int64(len(data)))
+				if err != nil {
+					b.Fatal(err)
+				}
+				b.SetBytes(8 * rows * 9)
+				for b.Loop() {
+					for _, g := range lib.RowGroups() {
+						for _, c := range g.ColumnChunks() {
+							readPages(b, c)
+						}
+					}
+				}
+				perCell(b)
+			})
+		}
+	}
+}
+
+// readPages decodes the pages of a chunk with the library.
+func readPages(b *testing.B, c parquet.ColumnChunk) {
+	pages := c.Pages()
+	defer pages.Close()
+	for {
+		p, err := pages.ReadPage()
+		if err == io.EOF {
+			return
+		}
+		if err != nil {
+			b.Fatal(err)
+		}
+		p.Data()
+		parquet.Release(p)
+	}
 }
 
 func BenchmarkWrite(b *testing.B) {

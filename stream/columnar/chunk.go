@@ -13,6 +13,7 @@ import (
 
 const (
 	windowBytes = 16 << 10 // read ahead for headers and small pages
+	headWindow  = 1 << 10  // read ahead for headers of larger pages
 	minHeader   = 512      // of which this much should be there for a header
 	maxHeader   = 16 << 20
 	// smallPage is a page size that is believed whatever the chunk's total says:
@@ -40,6 +41,7 @@ type page struct {
 type dictionary struct {
 	n int
 	values
+	buf *chunkBuffers // whose memory the entries are in
 	// The cells the entries become, made when first asked for. bad lists the
 	// entries that do not fit.
 	floats []float64
@@ -64,12 +66,18 @@ type chunk struct {
 	page  page
 	win   []byte // window of the file, at winAt
 	winAt int64
+	ahead int64 // how much is read for the next window
+	walk  bool  // only headers are wanted
 	buf   chunkBuffers
 }
 
-// chunkBuffers are kept from chunk to chunk.
+// chunkBuffers are kept from chunk to chunk, and from segment to segment.
 type chunkBuffers struct {
 	win, raw, plain, def, bools []byte
+	dict                        []byte // values of the dictionary
+	dictOff                     []uint32
+	dictFloats                  []float64
+	dictInts                    []int64
 	idx, i32                    []int32
 	i64                         []int64
 	f32                         []float32
@@ -82,7 +90,7 @@ type chunkBuffers struct {
 func (c *chunk) open(r io.ReaderAt, col *column, meta *format.ColumnMetaData, rows int64, pos stream.Position) {
 	pos.Column = col.name
 	start := chunkStart(meta)
-	*c = chunk{r: r, col: col, pos: pos, meta: meta, off: start, end: start + meta.TotalCompressedSize, left: rows, buf: c.buf}
+	*c = chunk{r: r, col: col, pos: pos, meta: meta, off: start, end: start + meta.TotalCompressedSize, left: rows, ahead: headWindow, buf: c.buf}
 	if rows == 0 {
 		c.end = c.off
 	}
@@ -100,8 +108,9 @@ func (c *chunk) at(off int64, n int) ([]byte, error) {
 		return b, readFull(c.r, b, off, c.pos)
 	}
 	c.winAt = off
-	c.buf.win = grow(c.buf.win, int(min(windowBytes, c.end-off+slack)))
-	c.win = c.buf.win[:min(windowBytes-slack, c.end-off)]
+	want := min(max(c.ahead, int64(n)), windowBytes-slack, c.end-off)
+	c.buf.win = grow(c.buf.win, int(want)+slack)
+	c.win = c.buf.win[:want]
 	if err := readFull(c.r, c.win, off, c.pos); err != nil {
 		c.win = nil
 		return nil, err
@@ -125,6 +134,10 @@ func (c *chunk) header() (pageHeader, error) {
 			return h, c.damage("the page header at byte %d cannot be read: %v", c.off, err)
 		}
 		c.off += int64(k)
+		c.ahead = windowBytes
+		if h.compressed > windowBytes/2 || c.walk && h.compressed > headWindow {
+			c.ahead = headWindow
+		}
 		if int64(h.compressed) > c.end-c.off {
 			return h, c.damage("the page at byte %d has %d bytes, its chunk only %d more", c.off, h.compressed, c.end-c.off)
 		}
@@ -229,29 +242,6 @@ func (c *chunk) finish() error {
 		}
 	}
 	return io.EOF
-}
-
-// skip passes over the first rows of the chunk. Whole pages are passed over
-// without being decoded.
-func (c *chunk) skip(rows int64) error {
-	for rows > 0 {
-		h, err := c.dataHeader()
-		if err != nil {
-			return err
-		}
-		if n := int64(h.values); n <= rows {
-			rows -= n
-			c.left -= n
-			c.off += int64(h.compressed)
-			continue
-		}
-		if err := c.load(&h); err != nil {
-			return err
-		}
-		c.page.advance(int(rows), c.col.maxDef)
-		return nil
-	}
-	return nil
 }
 
 // advance passes over n rows of the page.

@@ -5,6 +5,7 @@ import (
 	"encoding/binary"
 	"fmt"
 	"math/bits"
+	"unsafe"
 
 	"github.com/parquet-go/parquet-go/encoding/bytestreamsplit"
 	"github.com/parquet-go/parquet-go/encoding/delta"
@@ -75,13 +76,25 @@ func (c *chunk) load(h *pageHeader) error {
 
 // levels decodes the definition levels of the page.
 func (c *chunk) levels(b []byte) error {
-	width := bits.Len8(c.col.maxDef)
 	p := &c.page
+	if u, k := binary.Uvarint(b); k > 0 && k < len(b) && u&1 == 0 && u>>1 == uint64(p.rows) && b[k] == c.col.maxDef {
+		return nil // one run: every row has a value
+	}
+	out := grow(c.buf.def, p.rows+slack)
+	c.buf.def = out
+	if c.col.maxDef == 1 {
+		if err := bitLevels(out, b, p.rows); err != nil {
+			return c.damage("the levels of the page at byte %d: %v", c.off, err)
+		}
+		p.def = out[:p.rows:p.rows]
+		return nil
+	}
+	width := bits.Len8(c.col.maxDef)
 	if err := checkRuns(b, uint(width), p.rows); err != nil {
 		return c.damage("the levels of the page at byte %d: %v", c.off, err)
 	}
 	e := rle.Encoding{BitWidth: width}
-	out, err := e.DecodeLevels(grow(c.buf.def, p.rows+slack)[:0], b)
+	out, err := e.DecodeLevels(out[:0], b)
 	c.buf.def = out
 	if err != nil || len(out) < p.rows {
 		return c.damage("the levels of the page at byte %d cannot be decoded (%d of %d): %v", c.off, len(out), p.rows, err)
@@ -95,6 +108,77 @@ func (c *chunk) levels(b []byte) error {
 		}
 	}
 	return nil
+}
+
+// spread8 has the bits of its index as bytes, lowest first.
+var spread8 = func() (t [256]uint64) {
+	for i := range t {
+		for j := range 8 {
+			t[i] |= uint64(i>>j&1) << (8 * j)
+		}
+	}
+	return t
+}()
+
+// bitLevels decodes n levels of one bit to a byte each, and checks the runs as
+// checkRuns does. dst has room for 8 more.
+func bitLevels(dst, b []byte, n int) error {
+	total := 0
+	for i := 0; i < len(b); {
+		u, k := uint64(b[i]), 1
+		if u >= 0x80 {
+			if u, k = binary.Uvarint(b[i:]); k <= 0 || u>>1 > uint64(n)+runSlack {
+				return errRuns
+			}
+		}
+		i += k
+		count := int(u >> 1)
+		if count == 0 {
+			continue
+		}
+		at := min(total, n)
+		if u&1 != 0 {
+			if count > len(b)-i {
+				return errRuns
+			}
+			for _, x := range b[i : i+min(count, (n-at+7)/8)] {
+				le.PutUint64(dst[at:at+8], spread8[x])
+				at += 8
+			}
+			i += count
+			total += 8 * count
+		} else {
+			if i == len(b) {
+				return errRuns
+			}
+			if b[i] > 1 {
+				return errRuns
+			}
+			fill(dst[at:min(at+count, n)], b[i])
+			i++
+			total += count
+		}
+		if total > n+runSlack {
+			return errRuns
+		}
+	}
+	if total < n {
+		return fmt.Errorf("%d values where the page header promises %d", total, n)
+	}
+	return nil
+}
+
+func fill(b []byte, v byte) {
+	if len(b) <= 16 {
+		for i := range b {
+			b[i] = v
+		}
+		return
+	}
+	b[0] = v
+	for n := 1; n < len(b); n *= 2 {
+		copy(b[n:], b[:n])
+	}
 }
 
 // decode reads the n values of the page.
@@ -150,14 +234,48 @@ func (c *chunk) decodeIndexes(b []byte, n int) error {
 		return c.damage("the page at byte %d has %d dictionary indexes where its header promises %d", c.off, len(out), n)
 	}
 	p.idx = out[:n:n]
-	top := uint32(0)
-	for _, i := range p.idx {
-		top = max(top, uint32(i))
-	}
-	if int64(top) >= int64(c.dict.n) {
+	if !inside(p.idx, c.dict.n) {
+		top := uint32(0)
+		for _, i := range p.idx {
+			top = max(top, uint32(i))
+		}
 		return c.damage("the page at byte %d has the dictionary index %d, the dictionary %d entries", c.off, top, c.dict.n)
 	}
 	return nil
+}
+
+// inside reports whether all indexes are below n.
+func inside(idx []int32, n int) bool {
+	if n == 0 {
+		return len(idx) == 0
+	}
+	// n-1-i is negative exactly if i is too large or negative itself. Two at a
+	// time: this touches every index of every page. A borrow from the upper half
+	// comes only of a lower half that is too large.
+	last := uint64(n - 1)
+	last |= last << 32
+	var a, b, c, d uint64
+	rest := idx
+	if len(idx) >= 8 {
+		pairs := unsafe.Slice((*uint64)(unsafe.Pointer(&idx[0])), len(idx)/2)
+		rest = idx[len(pairs)&^3*2:]
+		for ; len(pairs) >= 4; pairs = pairs[4:] {
+			p := (*[4]uint64)(pairs)
+			a |= last - p[0] | p[0]
+			b |= last - p[1] | p[1]
+			c |= last - p[2] | p[2]
+			d |= last - p[3] | p[3]
+		}
+	}
+	if (a|b|c|d)&(1<<63|1<<31) != 0 {
+		return false
+	}
+	for _, i := range rest {
+		if i < 0 || int(i) >= n {
+			return false
+		}
+	}
+	return true
 }
 
 // plain reads n values of the plain encoding in place.
@@ -341,13 +459,14 @@ func (c *chunk) loadDictionary(h *pageHeader) error {
 	if b, err = c.unpack(b, int(h.uncompressed)); err != nil {
 		return err
 	}
-	// The page buffers are used again, the dictionary stays.
-	b = bytes.Clone(b)
-	d := &dictionary{n: int(h.values)}
-	var own chunkBuffers
-	if d.values, err = c.plain(b, d.n, &own); err != nil {
+	// The page buffers are used again for pages, the dictionary stays.
+	c.buf.dict = append(c.buf.dict[:0], b...)
+	d := &dictionary{n: int(h.values), buf: &c.buf}
+	own := chunkBuffers{off: c.buf.dictOff}
+	if d.values, err = c.plain(c.buf.dict, d.n, &own); err != nil {
 		return c.damage("the dictionary at byte %d: %v", c.off, err)
 	}
+	c.buf.dictOff = own.off
 	c.dict = d
 	return nil
 }
@@ -355,7 +474,8 @@ func (c *chunk) loadDictionary(h *pageHeader) error {
 // asFloats gives the entries as numbers.
 func (d *dictionary) asFloats(c *column) []float64 {
 	if d.floats == nil {
-		d.floats = make([]float64, d.n)
+		d.floats = grow(d.buf.dictFloats, d.n)
+		d.buf.dictFloats = d.floats
 		d.setBad(c.floats(d.floats, &d.values, 0, nil))
 	}
 	return d.floats
@@ -364,7 +484,8 @@ func (d *dictionary) asFloats(c *column) []float64 {
 // asInts gives the entries as integers.
 func (d *dictionary) asInts(c *column) []int64 {
 	if d.ints == nil {
-		d.ints = make([]int64, d.n)
+		d.ints = grow(d.buf.dictInts, d.n)
+		d.buf.dictInts = d.ints
 		d.setBad(c.ints(d.ints, &d.values, 0, nil))
 	}
 	return d.ints

@@ -2,7 +2,7 @@
 //
 // # Reading
 //
-// One segment is one row group. Only the chunks of the requested columns are
+// One segment is one row group, or a part of a huge one. Only the chunks of the requested columns are
 // read. The package walks footers and page headers itself, bounds every size
 // before memory is taken, checks page checksums, and hands only the decoding of
 // values (levels, dictionary indexes, delta and byte-stream-split encodings) to

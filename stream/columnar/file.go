@@ -48,6 +48,9 @@ type File struct {
 	first   []int64 // first row of each row group
 	bytes   []int64 // shares of the file before each group, and the total
 	worker  int64
+	parts   []part
+	walkMu  sync.Mutex
+	walks   map[walkKey]*walk
 	closed  sync.Once
 }
 
@@ -110,7 +113,9 @@ func (f *File) open(o stream.Options) error {
 			f.bytes[g] = mulDiv(f.size, before[g], stored)
 		}
 	}
-	f.worker = f.workerBytes()
+	var pages int64
+	f.worker, pages = f.survey()
+	f.cut(pages)
 	return nil
 }
 
@@ -134,12 +139,15 @@ func (f *File) Schema() *stream.Schema { return &f.schema }
 // will be used or not: per column three times the first data page of the largest
 // row group (as stored, unpacked, decoded) and twice its dictionary.
 func (f *File) Info() stream.Info {
-	return stream.Info{Files: 1, Bytes: f.size, Rows: f.meta.NumRows, Segments: len(f.meta.RowGroups), Rewindable: true, Sampled: true, Format: "parquet", WorkerBytes: f.worker}
+	return stream.Info{Files: 1, Bytes: f.size, Rows: f.meta.NumRows, Segments: len(f.parts), Rewindable: true, Sampled: true, Format: "parquet", WorkerBytes: f.worker}
 }
 
-func (f *File) workerBytes() int64 {
+// survey looks at the first pages of the largest row group, which stands for the
+// others: the memory of a worker, and the rows in a page on average over the
+// columns, 0 if not one could be read.
+func (f *File) survey() (worker, pages int64) {
 	if len(f.meta.RowGroups) == 0 {
-		return 0
+		return 0, 0
 	}
 	largest := 0
 	for g := range f.meta.RowGroups {
@@ -147,45 +155,21 @@ func (f *File) workerBytes() int64 {
 			largest = g
 		}
 	}
-	total := int64(0)
+	n := int64(0)
 	for i := range f.cols {
 		m := &f.meta.RowGroups[largest].Columns[f.cols[i].leaf].MetaData
 		est := 3 * min(m.TotalUncompressedSize, 1<<20)
 		// A file with very many columns is not probed beyond the first ones.
-		if i < 256 && m.NumValues > 0 {
-			if p := f.probe(&f.cols[i], m); p > 0 {
-				est = p
+		if i < 256 {
+			if p := f.probe(&f.cols[i], largest); p.bytes > 0 {
+				est = p.bytes
+				pages += p.rows
+				n++
 			}
 		}
-		total += est
+		worker += est
 	}
-	return total
-}
-
-// probe reads the headers of a chunk up to the first data page. 0 if they cannot
-// be read: that is an error of the scan, if it comes so far.
-func (f *File) probe(c *column, m *format.ColumnMetaData) int64 {
-	var ch chunk
-	ch.open(f.file, c, m, m.NumValues, stream.Position{File: f.name})
-	dict := int64(0)
-	for range 4 {
-		if ch.off >= ch.end {
-			return 0
-		}
-		h, err := ch.header()
-		if err != nil {
-			return 0
-		}
-		switch h.typ {
-		case pageDictionary:
-			dict = 2 * int64(h.uncompressed)
-		case pageData, pageDataV2:
-			decoded := max(int64(h.uncompressed), 4*int64(h.values))
-			return int64(h.compressed) + int64(h.uncompressed) + decoded + dict
-		}
-		ch.off += int64(h.compressed)
-	}
-	return 0
+	return worker, pages / max(n, 1)
 }
 
 // checkUses refuses what a column cannot be read as.
@@ -201,7 +185,8 @@ func (f *File) checkUses(uses []stream.Use) error {
 	return nil
 }
 
-// Scan implements stream.Source. One segment is one row group.
+// Scan implements stream.Source. One segment is one row group, or a part of a
+// huge one.
 func (f *File) Scan(ctx context.Context, uses []stream.Use) (stream.Scan, error) {
 	if err := f.checkUses(uses); err != nil {
 		return nil, err
@@ -222,29 +207,21 @@ func (s *scan) Next(ctx context.Context) (stream.Segment, error) {
 	}
 	s.mu.Lock()
 	defer s.mu.Unlock()
-	if s.next >= len(s.f.meta.RowGroups) {
+	if s.next >= len(s.f.parts) {
 		return nil, io.EOF
 	}
-	g := s.next
-	seg := s.f.newSegment(s.uses, g, g, g+1)
-	if err := seg.start(0); err != nil {
-		s.next = len(s.f.meta.RowGroups)
-		return nil, err
-	}
+	p := s.f.parts[s.next]
+	seg := s.f.newSegment(s.uses, s.next, p.group, p.group+1)
+	seg.from, seg.rows = p.first, p.rows
 	s.next++
 	return seg, nil
 }
 
 func (s *scan) Close() error {
 	s.mu.Lock()
-	s.next = len(s.f.meta.RowGroups)
+	s.next = len(s.f.parts)
 	s.mu.Unlock()
 	return nil
-}
-
-func (s *segment) start(skip int64) (err error) {
-	defer s.guard(&err)
-	return s.openGroup(skip)
 }
 
 // Sample implements stream.Source. The segment begins at row floor(at x rows),
@@ -274,9 +251,7 @@ func (f *File) Sample(ctx context.Context, uses []stream.Use, at float64) (strea
 		g++
 	}
 	s := f.newSegment(uses, -1, g, n)
-	if err := s.start(row - f.first[g]); err != nil {
-		return nil, err
-	}
+	s.from, s.rows = row-f.first[g], rows-row
 	return s, nil
 }
 

@@ -8,6 +8,7 @@ import (
 	"math"
 	"runtime/debug"
 	"slices"
+	"sync"
 
 	"github.com/tallrow/tallrow/stream"
 )
@@ -32,13 +33,16 @@ type badCell struct {
 	found       string
 }
 
-// segment reads one row group, or from a row on to the end of the file.
+// segment reads one part, or from a row on to the end of the file.
 type segment struct {
 	f       *File
 	number  int
-	group   int // being read
-	last    int // after which no more are read
-	left    int64
+	group   int   // being read
+	last    int   // before which the segment ends
+	from    int64 // row of the first group at which it begins
+	rows    int64 // that are still to be read, in all
+	left    int64 // of these in the group that is open
+	open    bool  // the readers are at the group
 	row     int64 // next row of the file
 	readers []reader
 	at      int // reader at work, for messages; -1 none
@@ -50,12 +54,20 @@ type segment struct {
 		codes [stream.BatchRows + 1]int32
 	}
 	tally stream.SegmentTally
-	done  int64 // rows of the group that are read
 	err   error
 }
 
+// readerPool keeps the buffers of closed segments, as *[]reader: a page of each
+// column is much to allocate anew for every row group.
+var readerPool sync.Pool
+
 func (f *File) newSegment(uses []stream.Use, number, group, last int) *segment {
-	s := &segment{f: f, number: number, group: group, last: last, at: -1, readers: make([]reader, len(uses)), marks: make([]int64, stream.BatchRows)}
+	s := &segment{f: f, number: number, group: group, last: last, at: -1, marks: make([]int64, stream.BatchRows)}
+	if old, ok := readerPool.Get().(*[]reader); ok && len(*old) == len(uses) {
+		s.readers = *old
+	} else {
+		s.readers = make([]reader, len(uses))
+	}
 	for j, u := range uses {
 		r := &s.readers[j]
 		c := &f.cols[u.Column]
@@ -64,33 +76,36 @@ func (f *File) newSegment(uses []stream.Use, number, group, last int) *segment {
 		if u.AsNumber {
 			r.kind = stream.Float64
 		}
+		r.asFloat = r.kind == stream.Float64
 		switch r.kind {
 		case stream.Float64:
-			r.asFloat = true
-			r.f64 = make([]float64, stream.BatchRows)
+			r.f64 = grow(r.f64, stream.BatchRows)
+			r.codes = nil
 		case stream.Text:
-			r.codes = make([]int32, stream.BatchRows)
+			r.codes = grow(r.codes, stream.BatchRows)
 		default:
-			r.i64 = make([]int64, stream.BatchRows)
+			r.i64 = grow(r.i64, stream.BatchRows)
+			r.codes = nil
 		}
 	}
 	return s
 }
 
-// openGroup points the readers at the group and passes over its first rows.
-func (s *segment) openGroup(skip int64) error {
+// openGroup points the readers at row s.from of the group.
+func (s *segment) openGroup() error {
 	rg := &s.f.meta.RowGroups[s.group]
-	s.left, s.done = rg.NumRows-skip, skip
-	s.row = s.f.first[s.group] + skip
+	s.left = min(rg.NumRows-s.from, s.rows)
+	s.row = s.f.first[s.group] + s.from
 	for j := range s.readers {
 		s.at = j
 		r := &s.readers[j]
 		r.open(s.f.file, r.col, &rg.Columns[r.col.leaf].MetaData, rg.NumRows, stream.Position{File: s.f.name, Group: s.group + 1})
-		if err := r.skip(skip); err != nil {
+		if err := r.seek(s.from, s.f.walkOf(s.group, r.col.leaf)); err != nil {
 			return err
 		}
 	}
 	s.at = -1
+	s.open = true
 	return nil
 }
 
@@ -136,17 +151,20 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	rows := 0
 	for rows < stream.BatchRows {
 		for s.left == 0 {
-			if err := s.finishGroup(); err != nil {
-				return err
-			}
-			if s.group+1 >= s.last {
-				if rows > 0 {
-					return s.deliver(b, rows)
+			if s.open {
+				if err := s.finishGroup(); err != nil {
+					return err
 				}
-				return io.EOF
+				if s.group+1 >= s.last {
+					if rows > 0 {
+						return s.deliver(b, rows)
+					}
+					return io.EOF
+				}
+				s.group++
+				s.from = 0
 			}
-			s.group++
-			if err := s.openGroup(0); err != nil {
+			if err := s.openGroup(); err != nil {
 				return err
 			}
 		}
@@ -164,7 +182,7 @@ func (s *segment) read(b *stream.Batch) (err error) {
 		}
 		s.row += int64(n)
 		s.left -= int64(n)
-		s.done += int64(n)
+		s.rows -= int64(n)
 		kept := n
 		if len(s.bad) > 0 {
 			if kept, err = s.dropBad(rows, n); err != nil {
@@ -176,8 +194,12 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	return s.deliver(b, rows)
 }
 
-// finishGroup checks that the chunks end with the rows of the group.
+// finishGroup checks that the chunks end with the rows of the group, if these are
+// its last.
 func (s *segment) finishGroup() error {
+	if s.row < s.f.first[s.group]+s.f.meta.RowGroups[s.group].NumRows {
+		return nil
+	}
 	for j := range s.readers {
 		r := &s.readers[j]
 		s.at = j
@@ -257,10 +279,17 @@ func (s *segment) block(j, at, m int) {
 			def = nil
 		}
 	}
+	// Levels of 0 and 1 are searched, others looked at one by one.
+	few := def != nil && r.col.maxDef == 1 && m-present <= m/fewNulls
 	var bad []int
 	switch {
 	case r.asFloat:
 		dst := r.f64[at : at+m]
+		if def != nil && few {
+			bad = r.numbers(dst[:present])
+			spreadRuns(dst, present, def, math.NaN())
+			break
+		}
 		if def != nil {
 			dst = s.packed.f64[:present]
 		}
@@ -273,13 +302,20 @@ func (s *segment) block(j, at, m int) {
 		if def != nil {
 			dst = s.packed.codes[:present]
 		}
+		if few {
+			dst = r.codes[at : at+present]
+		}
 		r.tmp = r.text.codes(dst, &r.chunk, p.val, at == 0, r.tmp)
-		if def != nil {
+		if few {
+			spreadRuns(r.codes[at:at+m], present, def, -1)
+		} else if def != nil {
 			spreadCodes(r.codes[at:at+m], &s.packed.codes, def, r.col.maxDef)
 		}
 	default:
 		dst := r.i64[at : at+m]
-		if def != nil {
+		if few {
+			dst = dst[:present]
+		} else if def != nil {
 			dst = s.packed.i64[:present]
 		}
 		bad = r.integers(dst)
@@ -289,7 +325,14 @@ func (s *segment) block(j, at, m int) {
 				clear(r.null)
 				r.hasNull = true
 			}
-			spreadInts(r.i64[at:at+m], r.null[at:at+m], &s.packed.i64, def, r.col.maxDef)
+			if few {
+				spreadRuns(r.i64[at:at+m], present, def, 0)
+				for i, d := range def {
+					r.null[at+i] = d == 0
+				}
+			} else {
+				spreadInts(r.i64[at:at+m], r.null[at:at+m], &s.packed.i64, def, r.col.maxDef)
+			}
 		} else if r.hasNull {
 			clear(r.null[at : at+m])
 		}
@@ -309,9 +352,7 @@ func (r *reader) numbers(dst []float64) []int {
 	}
 	table := r.dict.asFloats(r.col)
 	idx := p.idx[p.val : p.val+len(dst)]
-	for i, k := range idx {
-		dst[i] = table[k]
-	}
+	lookUp(dst, table, idx)
 	return r.dict.badOf(idx)
 }
 
@@ -323,10 +364,20 @@ func (r *reader) integers(dst []int64) []int {
 	}
 	table := r.dict.asInts(r.col)
 	idx := p.idx[p.val : p.val+len(dst)]
+	lookUp(dst, table, idx)
+	return r.dict.badOf(idx)
+}
+
+// lookUp translates indexes.
+func lookUp[T float64 | int64](dst, table []T, idx []int32) {
+	for len(idx) >= 4 && len(dst) >= 4 {
+		i, d := (*[4]int32)(idx), (*[4]T)(dst)
+		d[0], d[1], d[2], d[3] = table[i[0]], table[i[1]], table[i[2]], table[i[3]]
+		idx, dst = idx[4:], dst[4:]
+	}
 	for i, k := range idx {
 		dst[i] = table[k]
 	}
-	return r.dict.badOf(idx)
 }
 
 // badOf lists the places of idx whose entries do not fit.
@@ -420,14 +471,15 @@ func (s *segment) Locate(mark int64) stream.Position {
 	return stream.Position{File: s.f.name, Group: g, Row: mark + 1}
 }
 
-// Tally implements stream.Segment. Bytes is the group's share of the file, by
-// the rows read.
+// Tally implements stream.Segment. Bytes is the share of the file that the rows
+// read have in their group.
 func (s *segment) Tally() stream.SegmentTally {
 	t := s.tally
 	if s.number >= 0 {
-		share := s.f.share(s.group)
-		if rows := s.f.meta.RowGroups[s.group].NumRows; rows > 0 {
-			share = mulDiv(share, s.done, rows)
+		p := s.f.parts[s.number]
+		share, rows := s.f.share(p.group), s.f.meta.RowGroups[p.group].NumRows
+		if rows > 0 {
+			share = mulDiv(share, p.first+p.rows-s.rows, rows) - mulDiv(share, p.first, rows)
 		}
 		t.Bytes = share
 	}
@@ -439,10 +491,34 @@ func (s *segment) Close() error {
 	if s.err == nil {
 		s.err = fmt.Errorf("%s: read after Close", s.f.name)
 	}
-	for j := range s.readers {
-		s.readers[j].chunk = chunk{col: s.readers[j].col}
+	if s.readers != nil {
+		for j := range s.readers {
+			r := &s.readers[j]
+			*r = reader{chunk: chunk{buf: r.buf}, f64: r.f64, i64: r.i64, codes: r.codes, null: r.null, tmp: r.tmp}
+		}
+		old := s.readers
+		s.readers = nil
+		readerPool.Put(&old)
 	}
 	return nil
+}
+
+// fewNulls: where at most one row in that many is missing, runs of values are
+// moved as wholes.
+const fewNulls = 24
+
+// spreadRuns puts the values at the front of dst into the rows that have one, from
+// the back, and null into the others. Levels are 0 or 1.
+func spreadRuns[T float64 | int64 | int32](dst []T, present int, def []byte, null T) {
+	end := len(dst)
+	for end > present {
+		i := bytes.LastIndexByte(def[:end], 0)
+		n := end - i - 1
+		copy(dst[i+1:end], dst[present-n:present])
+		dst[i] = null
+		present -= n
+		end = i
+	}
 }
 
 // The spread functions put packed values into the rows that have one and mark

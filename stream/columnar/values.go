@@ -59,6 +59,10 @@ func (c *column) floats(dst []float64, v *values, from int, bad []int) []int {
 	}
 	switch c.conv {
 	case convF64:
+		if littleEndian {
+			copy(rawOf(dst), raw)
+			break
+		}
 		for i := range dst {
 			dst[i] = math.Float64frombits(le.Uint64(raw[8*i : 8*i+8]))
 		}
@@ -143,6 +147,10 @@ func (c *column) ints(dst []int64, v *values, from int, bad []int) []int {
 			dst[i] = int64(le.Uint32(raw[4*i : 4*i+4]))
 		}
 	case convI64, convU64:
+		if littleEndian {
+			copy(rawOf(dst), raw)
+			break
+		}
 		for i := range dst {
 			dst[i] = int64(le.Uint64(raw[8*i : 8*i+8]))
 		}

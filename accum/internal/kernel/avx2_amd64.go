@@ -10,35 +10,11 @@ package kernel
 //go:noescape
 func dots1x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 
-// dots1x2AVX2 adds the 1 x 2 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots1x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
-// dots1x3AVX2 adds the 1 x 3 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots1x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
 // dots2x1AVX2 adds the 2 x 1 dot products of columns of a and b. Those of one column of b
 // are side by side in dst, step elements behind those of the column before; step grows by grow.
 //
 //go:noescape
 func dots2x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
-// dots2x2AVX2 adds the 2 x 2 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots2x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
-// dots2x3AVX2 adds the 2 x 3 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots2x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 
 // dots3x1AVX2 adds the 3 x 1 dot products of columns of a and b. Those of one column of b
 // are side by side in dst, step elements behind those of the column before; step grows by grow.
@@ -46,29 +22,89 @@ func dots2x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *f
 //go:noescape
 func dots3x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 
-// dots3x2AVX2 adds the 3 x 2 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots3x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
-// dots3x3AVX2 adds the 3 x 3 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots3x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
 // dots4x1AVX2 adds the 4 x 1 dot products of columns of a and b. Those of one column of b
 // are side by side in dst, step elements behind those of the column before; step grows by grow.
 //
 //go:noescape
 func dots4x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 
+// dots5x1AVX2 adds the 5 x 1 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots5x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots6x1AVX2 adds the 6 x 1 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots6x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots7x1AVX2 adds the 7 x 1 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots7x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots8x1AVX2 adds the 8 x 1 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots8x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots1x2AVX2 adds the 1 x 2 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots1x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots2x2AVX2 adds the 2 x 2 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots2x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots3x2AVX2 adds the 3 x 2 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots3x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
 // dots4x2AVX2 adds the 4 x 2 dot products of columns of a and b. Those of one column of b
 // are side by side in dst, step elements behind those of the column before; step grows by grow.
 //
 //go:noescape
 func dots4x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots5x2AVX2 adds the 5 x 2 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots5x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots6x2AVX2 adds the 6 x 2 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots6x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots1x3AVX2 adds the 1 x 3 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots1x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots2x3AVX2 adds the 2 x 3 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots2x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+
+// dots3x3AVX2 adds the 3 x 3 dot products of columns of a and b. Those of one column of b
+// are side by side in dst, step elements behind those of the column before; step grows by grow.
+//
+//go:noescape
+func dots3x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 
 // dots4x3AVX2 adds the 4 x 3 dot products of columns of a and b. Those of one column of b
 // are side by side in dst, step elements behind those of the column before; step grows by grow.
@@ -115,6 +151,23 @@ func scaleAVX2(dst *float64, x *float64, w *float64, n int)
 //
 //go:noescape
 func axpyAVX2(t float64, x *float64, y *float64, n int)
+
+// shiftScaleAVX2 sets dst[i] = (x[i] - m) inv and returns the sum of x.
+//
+//go:noescape
+func shiftScaleAVX2(dst *float64, x *float64, m float64, inv float64, n int) float64
+
+// chainAVX2 sets dst[r] = fma(theta_j, x_j[r], .. first dst[r]), column after column.
+// theta_j is step elements behind the one before.
+//
+//go:noescape
+func chainAVX2(first float64, dst *float64, x *float64, stride int, theta *float64, step int, cols int, rows int)
+
+// chainSquareAVX2 adds to dst[r] the square of fma(theta_j, x_j[r], .. 0), column after column.
+// theta_j is step elements behind the one before.
+//
+//go:noescape
+func chainSquareAVX2(dst *float64, x *float64, stride int, theta *float64, step int, cols int, rows int)
 
 // wideDots1AVX2 multiplies 1 double-double columns by column b. Of each, out gets
 // the sums of the four lanes, then what was left off them.

@@ -70,6 +70,623 @@ sums:
 	VZEROUPPER
 	RET
 
+// func dots2x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots2x1AVX2(SB), NOSPLIT, $96-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	MOVQ       b+40(FP), DX
+	MOVQ       rows+56(FP), BX
+	MOVQ       BX, SI
+	SHRQ       $0x02, BX
+	ANDQ       $0x03, SI
+	JZ         start
+	MOVQ       BX, DI
+	SHLQ       $0x05, DI
+	MOVQ       SI, R8
+	NEGQ       R8
+	LEAQ       lanemask<>+32(SB), R9
+	VMOVUPD    (R9)(R8*8), Y0
+	LEAQ       (AX)(DI*1), R8
+	VMASKMOVPD (R8), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R8)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	LEAQ       (DX)(DI*1), DI
+	VMASKMOVPD (DI), Y0, Y0
+	VMOVUPD    Y0, 64(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	TESTQ  BX, BX
+	JZ     rest
+
+loop:
+	VMOVUPD     (DX), Y2
+	VMOVUPD     (AX), Y3
+	VFMADD231PD Y2, Y3, Y0
+	VMOVUPD     (AX)(CX*1), Y3
+	VFMADD231PD Y2, Y3, Y1
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, DX
+	DECQ        BX
+	JNZ         loop
+
+rest:
+	TESTQ SI, SI
+	JZ    sums
+	XORQ  SI, SI
+	MOVQ  $0x00000001, BX
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	LEAQ  64(SP), DX
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	VHADDPD      Y1, Y0, Y0
+	VEXTRACTF128 $0x01, Y0, X1
+	VADDPD       X1, X0, X0
+	VADDPD       (AX), X0, X0
+	VMOVUPD      X0, (AX)
+	VZEROUPPER
+	RET
+
+// func dots3x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots3x1AVX2(SB), NOSPLIT, $128-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	MOVQ       b+40(FP), DX
+	MOVQ       rows+56(FP), BX
+	MOVQ       BX, SI
+	SHRQ       $0x02, BX
+	ANDQ       $0x03, SI
+	JZ         start
+	MOVQ       BX, DI
+	SHLQ       $0x05, DI
+	MOVQ       SI, R8
+	NEGQ       R8
+	LEAQ       lanemask<>+32(SB), R9
+	VMOVUPD    (R9)(R8*8), Y0
+	LEAQ       (AX)(DI*1), R8
+	VMASKMOVPD (R8), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R8)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R8)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	LEAQ       (DX)(DI*1), DI
+	VMASKMOVPD (DI), Y0, Y0
+	VMOVUPD    Y0, 96(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	TESTQ  BX, BX
+	JZ     rest
+
+loop:
+	VMOVUPD     (DX), Y3
+	VMOVUPD     (AX), Y4
+	VFMADD231PD Y3, Y4, Y0
+	VMOVUPD     (AX)(CX*1), Y4
+	VFMADD231PD Y3, Y4, Y1
+	VMOVUPD     (AX)(CX*2), Y4
+	VFMADD231PD Y3, Y4, Y2
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, DX
+	DECQ        BX
+	JNZ         loop
+
+rest:
+	TESTQ SI, SI
+	JZ    sums
+	XORQ  SI, SI
+	MOVQ  $0x00000001, BX
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	LEAQ  96(SP), DX
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	VHADDPD      Y1, Y0, Y0
+	VEXTRACTF128 $0x01, Y0, X1
+	VADDPD       X1, X0, X0
+	VADDPD       (AX), X0, X0
+	VMOVUPD      X0, (AX)
+	VHADDPD      Y2, Y2, Y2
+	VEXTRACTF128 $0x01, Y2, X0
+	VADDSD       X0, X2, X2
+	VADDSD       16(AX), X2, X2
+	VMOVSD       X2, 16(AX)
+	VZEROUPPER
+	RET
+
+// func dots4x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots4x1AVX2(SB), NOSPLIT, $160-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	MOVQ       b+40(FP), BX
+	MOVQ       rows+56(FP), SI
+	MOVQ       SI, DI
+	SHRQ       $0x02, SI
+	ANDQ       $0x03, DI
+	JZ         start
+	MOVQ       SI, R8
+	SHLQ       $0x05, R8
+	MOVQ       DI, R9
+	NEGQ       R9
+	LEAQ       lanemask<>+32(SB), R10
+	VMOVUPD    (R10)(R9*8), Y0
+	LEAQ       (AX)(R8*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R9)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R9)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R9)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	LEAQ       (BX)(R8*1), R8
+	VMASKMOVPD (R8), Y0, Y0
+	VMOVUPD    Y0, 128(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	TESTQ  SI, SI
+	JZ     rest
+
+loop:
+	VMOVUPD     (BX), Y4
+	VMOVUPD     (AX), Y5
+	VFMADD231PD Y4, Y5, Y0
+	VMOVUPD     (AX)(CX*1), Y5
+	VFMADD231PD Y4, Y5, Y1
+	VMOVUPD     (AX)(CX*2), Y5
+	VFMADD231PD Y4, Y5, Y2
+	VMOVUPD     (AX)(DX*1), Y5
+	VFMADD231PD Y4, Y5, Y3
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	DECQ        SI
+	JNZ         loop
+
+rest:
+	TESTQ DI, DI
+	JZ    sums
+	XORQ  DI, DI
+	MOVQ  $0x00000001, SI
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  128(SP), BX
+	JMP   loop
+
+sums:
+	MOVQ       dst+0(FP), AX
+	VHADDPD    Y1, Y0, Y0
+	VHADDPD    Y3, Y2, Y2
+	VPERM2F128 $0x20, Y2, Y0, Y1
+	VPERM2F128 $0x31, Y2, Y0, Y0
+	VADDPD     Y0, Y1, Y0
+	VADDPD     (AX), Y0, Y0
+	VMOVUPD    Y0, (AX)
+	VZEROUPPER
+	RET
+
+// func dots5x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots5x1AVX2(SB), NOSPLIT, $192-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	MOVQ       b+40(FP), BX
+	MOVQ       rows+56(FP), SI
+	MOVQ       SI, DI
+	SHRQ       $0x02, SI
+	ANDQ       $0x03, DI
+	JZ         start
+	MOVQ       SI, R8
+	SHLQ       $0x05, R8
+	MOVQ       DI, R9
+	NEGQ       R9
+	LEAQ       lanemask<>+32(SB), R10
+	VMOVUPD    (R10)(R9*8), Y0
+	LEAQ       (AX)(R8*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R9)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R9)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R9)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R9)(CX*4), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	LEAQ       (BX)(R8*1), R8
+	VMASKMOVPD (R8), Y0, Y0
+	VMOVUPD    Y0, 160(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	TESTQ  SI, SI
+	JZ     rest
+
+loop:
+	VMOVUPD     (BX), Y5
+	VMOVUPD     (AX), Y6
+	VFMADD231PD Y5, Y6, Y0
+	VMOVUPD     (AX)(CX*1), Y6
+	VFMADD231PD Y5, Y6, Y1
+	VMOVUPD     (AX)(CX*2), Y6
+	VFMADD231PD Y5, Y6, Y2
+	VMOVUPD     (AX)(DX*1), Y6
+	VFMADD231PD Y5, Y6, Y3
+	VMOVUPD     (AX)(CX*4), Y6
+	VFMADD231PD Y5, Y6, Y4
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	DECQ        SI
+	JNZ         loop
+
+rest:
+	TESTQ DI, DI
+	JZ    sums
+	XORQ  DI, DI
+	MOVQ  $0x00000001, SI
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  160(SP), BX
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	VHADDPD      Y1, Y0, Y0
+	VHADDPD      Y3, Y2, Y2
+	VPERM2F128   $0x20, Y2, Y0, Y1
+	VPERM2F128   $0x31, Y2, Y0, Y0
+	VADDPD       Y0, Y1, Y0
+	VADDPD       (AX), Y0, Y0
+	VMOVUPD      Y0, (AX)
+	VHADDPD      Y4, Y4, Y4
+	VEXTRACTF128 $0x01, Y4, X0
+	VADDSD       X0, X4, X4
+	VADDSD       32(AX), X4, X4
+	VMOVSD       X4, 32(AX)
+	VZEROUPPER
+	RET
+
+// func dots6x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots6x1AVX2(SB), NOSPLIT, $224-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	LEAQ       (AX)(CX*4), BX
+	MOVQ       b+40(FP), SI
+	MOVQ       rows+56(FP), DI
+	MOVQ       DI, R8
+	SHRQ       $0x02, DI
+	ANDQ       $0x03, R8
+	JZ         start
+	MOVQ       DI, R9
+	SHLQ       $0x05, R9
+	MOVQ       R8, R10
+	NEGQ       R10
+	LEAQ       lanemask<>+32(SB), R11
+	VMOVUPD    (R11)(R10*8), Y0
+	LEAQ       (AX)(R9*1), R10
+	LEAQ       (BX)(R9*1), R11
+	VMASKMOVPD (R10), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R10)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R10)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R10)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R10)(CX*4), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R11)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	LEAQ       (SI)(R9*1), R9
+	VMASKMOVPD (R9), Y0, Y0
+	VMOVUPD    Y0, 192(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	TESTQ  DI, DI
+	JZ     rest
+
+loop:
+	VMOVUPD     (SI), Y6
+	VMOVUPD     (AX), Y7
+	VFMADD231PD Y6, Y7, Y0
+	VMOVUPD     (AX)(CX*1), Y7
+	VFMADD231PD Y6, Y7, Y1
+	VMOVUPD     (AX)(CX*2), Y7
+	VFMADD231PD Y6, Y7, Y2
+	VMOVUPD     (AX)(DX*1), Y7
+	VFMADD231PD Y6, Y7, Y3
+	VMOVUPD     (AX)(CX*4), Y7
+	VFMADD231PD Y6, Y7, Y4
+	VMOVUPD     (BX)(CX*1), Y7
+	VFMADD231PD Y6, Y7, Y5
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, SI
+	DECQ        DI
+	JNZ         loop
+
+rest:
+	TESTQ R8, R8
+	JZ    sums
+	XORQ  R8, R8
+	MOVQ  $0x00000001, DI
+	LEAQ  (SP), AX
+	LEAQ  128(SP), BX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  192(SP), SI
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	VHADDPD      Y1, Y0, Y0
+	VHADDPD      Y3, Y2, Y2
+	VPERM2F128   $0x20, Y2, Y0, Y1
+	VPERM2F128   $0x31, Y2, Y0, Y0
+	VADDPD       Y0, Y1, Y0
+	VADDPD       (AX), Y0, Y0
+	VMOVUPD      Y0, (AX)
+	VHADDPD      Y5, Y4, Y4
+	VEXTRACTF128 $0x01, Y4, X0
+	VADDPD       X0, X4, X4
+	VADDPD       32(AX), X4, X4
+	VMOVUPD      X4, 32(AX)
+	VZEROUPPER
+	RET
+
+// func dots7x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots7x1AVX2(SB), NOSPLIT, $256-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	LEAQ       (AX)(CX*4), BX
+	MOVQ       b+40(FP), SI
+	MOVQ       rows+56(FP), DI
+	MOVQ       DI, R8
+	SHRQ       $0x02, DI
+	ANDQ       $0x03, R8
+	JZ         start
+	MOVQ       DI, R9
+	SHLQ       $0x05, R9
+	MOVQ       R8, R10
+	NEGQ       R10
+	LEAQ       lanemask<>+32(SB), R11
+	VMOVUPD    (R11)(R10*8), Y0
+	LEAQ       (AX)(R9*1), R10
+	LEAQ       (BX)(R9*1), R11
+	VMASKMOVPD (R10), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R10)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R10)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R10)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R10)(CX*4), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R11)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	VMASKMOVPD (R11)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 192(SP)
+	LEAQ       (SI)(R9*1), R9
+	VMASKMOVPD (R9), Y0, Y0
+	VMOVUPD    Y0, 224(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	TESTQ  DI, DI
+	JZ     rest
+
+loop:
+	VMOVUPD     (SI), Y7
+	VMOVUPD     (AX), Y8
+	VFMADD231PD Y7, Y8, Y0
+	VMOVUPD     (AX)(CX*1), Y8
+	VFMADD231PD Y7, Y8, Y1
+	VMOVUPD     (AX)(CX*2), Y8
+	VFMADD231PD Y7, Y8, Y2
+	VMOVUPD     (AX)(DX*1), Y8
+	VFMADD231PD Y7, Y8, Y3
+	VMOVUPD     (AX)(CX*4), Y8
+	VFMADD231PD Y7, Y8, Y4
+	VMOVUPD     (BX)(CX*1), Y8
+	VFMADD231PD Y7, Y8, Y5
+	VMOVUPD     (BX)(CX*2), Y8
+	VFMADD231PD Y7, Y8, Y6
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, SI
+	DECQ        DI
+	JNZ         loop
+
+rest:
+	TESTQ R8, R8
+	JZ    sums
+	XORQ  R8, R8
+	MOVQ  $0x00000001, DI
+	LEAQ  (SP), AX
+	LEAQ  128(SP), BX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  224(SP), SI
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	VHADDPD      Y1, Y0, Y0
+	VHADDPD      Y3, Y2, Y2
+	VPERM2F128   $0x20, Y2, Y0, Y1
+	VPERM2F128   $0x31, Y2, Y0, Y0
+	VADDPD       Y0, Y1, Y0
+	VADDPD       (AX), Y0, Y0
+	VMOVUPD      Y0, (AX)
+	VHADDPD      Y5, Y4, Y4
+	VEXTRACTF128 $0x01, Y4, X0
+	VADDPD       X0, X4, X4
+	VADDPD       32(AX), X4, X4
+	VMOVUPD      X4, 32(AX)
+	VHADDPD      Y6, Y6, Y6
+	VEXTRACTF128 $0x01, Y6, X0
+	VADDSD       X0, X6, X6
+	VADDSD       48(AX), X6, X6
+	VMOVSD       X6, 48(AX)
+	VZEROUPPER
+	RET
+
+// func dots8x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots8x1AVX2(SB), NOSPLIT, $288-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	LEAQ       (AX)(CX*4), BX
+	MOVQ       b+40(FP), SI
+	MOVQ       rows+56(FP), DI
+	MOVQ       DI, R8
+	SHRQ       $0x02, DI
+	ANDQ       $0x03, R8
+	JZ         start
+	MOVQ       DI, R9
+	SHLQ       $0x05, R9
+	MOVQ       R8, R10
+	NEGQ       R10
+	LEAQ       lanemask<>+32(SB), R11
+	VMOVUPD    (R11)(R10*8), Y0
+	LEAQ       (AX)(R9*1), R10
+	LEAQ       (BX)(R9*1), R11
+	VMASKMOVPD (R10), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R10)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R10)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R10)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R10)(CX*4), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R11)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	VMASKMOVPD (R11)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 192(SP)
+	VMASKMOVPD (R11)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 224(SP)
+	LEAQ       (SI)(R9*1), R9
+	VMASKMOVPD (R9), Y0, Y0
+	VMOVUPD    Y0, 256(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	TESTQ  DI, DI
+	JZ     rest
+
+loop:
+	VMOVUPD     (SI), Y8
+	VMOVUPD     (AX), Y9
+	VFMADD231PD Y8, Y9, Y0
+	VMOVUPD     (AX)(CX*1), Y9
+	VFMADD231PD Y8, Y9, Y1
+	VMOVUPD     (AX)(CX*2), Y9
+	VFMADD231PD Y8, Y9, Y2
+	VMOVUPD     (AX)(DX*1), Y9
+	VFMADD231PD Y8, Y9, Y3
+	VMOVUPD     (AX)(CX*4), Y9
+	VFMADD231PD Y8, Y9, Y4
+	VMOVUPD     (BX)(CX*1), Y9
+	VFMADD231PD Y8, Y9, Y5
+	VMOVUPD     (BX)(CX*2), Y9
+	VFMADD231PD Y8, Y9, Y6
+	VMOVUPD     (BX)(DX*1), Y9
+	VFMADD231PD Y8, Y9, Y7
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, SI
+	DECQ        DI
+	JNZ         loop
+
+rest:
+	TESTQ R8, R8
+	JZ    sums
+	XORQ  R8, R8
+	MOVQ  $0x00000001, DI
+	LEAQ  (SP), AX
+	LEAQ  128(SP), BX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  256(SP), SI
+	JMP   loop
+
+sums:
+	MOVQ       dst+0(FP), AX
+	VHADDPD    Y1, Y0, Y0
+	VHADDPD    Y3, Y2, Y2
+	VPERM2F128 $0x20, Y2, Y0, Y1
+	VPERM2F128 $0x31, Y2, Y0, Y0
+	VADDPD     Y0, Y1, Y0
+	VADDPD     (AX), Y0, Y0
+	VMOVUPD    Y0, (AX)
+	VHADDPD    Y5, Y4, Y4
+	VHADDPD    Y7, Y6, Y6
+	VPERM2F128 $0x20, Y6, Y4, Y0
+	VPERM2F128 $0x31, Y6, Y4, Y4
+	VADDPD     Y4, Y0, Y4
+	VADDPD     32(AX), Y4, Y4
+	VMOVUPD    Y4, 32(AX)
+	VZEROUPPER
+	RET
+
 // func dots1x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 // Requires: AVX, FMA3
 TEXT ·dots1x2AVX2(SB), NOSPLIT, $96-64
@@ -138,154 +755,6 @@ sums:
 	VADDSD       X0, X1, X1
 	VADDSD       (AX), X1, X1
 	VMOVSD       X1, (AX)
-	VZEROUPPER
-	RET
-
-// func dots1x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-// Requires: AVX, FMA3
-TEXT ·dots1x3AVX2(SB), NOSPLIT, $128-64
-	MOVQ       a+24(FP), AX
-	MOVQ       b+40(FP), CX
-	MOVQ       strideB+48(FP), DX
-	SHLQ       $0x03, DX
-	MOVQ       rows+56(FP), BX
-	MOVQ       BX, SI
-	SHRQ       $0x02, BX
-	ANDQ       $0x03, SI
-	JZ         start
-	MOVQ       BX, DI
-	SHLQ       $0x05, DI
-	MOVQ       SI, R8
-	NEGQ       R8
-	LEAQ       lanemask<>+32(SB), R9
-	VMOVUPD    (R9)(R8*8), Y0
-	LEAQ       (AX)(DI*1), R8
-	VMASKMOVPD (R8), Y0, Y1
-	VMOVUPD    Y1, (SP)
-	LEAQ       (CX)(DI*1), DI
-	VMASKMOVPD (DI), Y0, Y1
-	VMOVUPD    Y1, 32(SP)
-	VMASKMOVPD (DI)(DX*1), Y0, Y1
-	VMOVUPD    Y1, 64(SP)
-	VMASKMOVPD (DI)(DX*2), Y0, Y0
-	VMOVUPD    Y0, 96(SP)
-
-start:
-	VXORPD Y0, Y0, Y0
-	VXORPD Y1, Y1, Y1
-	VXORPD Y2, Y2, Y2
-	TESTQ  BX, BX
-	JZ     rest
-
-loop:
-	VMOVUPD     (CX), Y3
-	VMOVUPD     (CX)(DX*1), Y4
-	VMOVUPD     (CX)(DX*2), Y5
-	VMOVUPD     (AX), Y6
-	VFMADD231PD Y3, Y6, Y0
-	VFMADD231PD Y4, Y6, Y1
-	VFMADD231PD Y5, Y6, Y2
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, CX
-	DECQ        BX
-	JNZ         loop
-
-rest:
-	TESTQ SI, SI
-	JZ    sums
-	XORQ  SI, SI
-	MOVQ  $0x00000001, BX
-	LEAQ  (SP), AX
-	LEAQ  32(SP), CX
-	MOVQ  $0x00000020, DX
-	JMP   loop
-
-sums:
-	MOVQ         dst+0(FP), AX
-	MOVQ         step+8(FP), CX
-	MOVQ         grow+16(FP), DX
-	VHADDPD      Y0, Y0, Y0
-	VEXTRACTF128 $0x01, Y0, X3
-	VADDSD       X3, X0, X0
-	VADDSD       (AX), X0, X0
-	VMOVSD       X0, (AX)
-	LEAQ         (AX)(CX*8), AX
-	ADDQ         DX, CX
-	VHADDPD      Y1, Y1, Y1
-	VEXTRACTF128 $0x01, Y1, X0
-	VADDSD       X0, X1, X1
-	VADDSD       (AX), X1, X1
-	VMOVSD       X1, (AX)
-	LEAQ         (AX)(CX*8), AX
-	VHADDPD      Y2, Y2, Y2
-	VEXTRACTF128 $0x01, Y2, X0
-	VADDSD       X0, X2, X2
-	VADDSD       (AX), X2, X2
-	VMOVSD       X2, (AX)
-	VZEROUPPER
-	RET
-
-// func dots2x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-// Requires: AVX, FMA3
-TEXT ·dots2x1AVX2(SB), NOSPLIT, $96-64
-	MOVQ       a+24(FP), AX
-	MOVQ       strideA+32(FP), CX
-	SHLQ       $0x03, CX
-	MOVQ       b+40(FP), DX
-	MOVQ       rows+56(FP), BX
-	MOVQ       BX, SI
-	SHRQ       $0x02, BX
-	ANDQ       $0x03, SI
-	JZ         start
-	MOVQ       BX, DI
-	SHLQ       $0x05, DI
-	MOVQ       SI, R8
-	NEGQ       R8
-	LEAQ       lanemask<>+32(SB), R9
-	VMOVUPD    (R9)(R8*8), Y0
-	LEAQ       (AX)(DI*1), R8
-	VMASKMOVPD (R8), Y0, Y1
-	VMOVUPD    Y1, (SP)
-	VMASKMOVPD (R8)(CX*1), Y0, Y1
-	VMOVUPD    Y1, 32(SP)
-	LEAQ       (DX)(DI*1), DI
-	VMASKMOVPD (DI), Y0, Y0
-	VMOVUPD    Y0, 64(SP)
-
-start:
-	VXORPD Y0, Y0, Y0
-	VXORPD Y1, Y1, Y1
-	TESTQ  BX, BX
-	JZ     rest
-
-loop:
-	VMOVUPD     (DX), Y2
-	VMOVUPD     (AX), Y3
-	VFMADD231PD Y2, Y3, Y0
-	VMOVUPD     (AX)(CX*1), Y3
-	VFMADD231PD Y2, Y3, Y1
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, DX
-	DECQ        BX
-	JNZ         loop
-
-rest:
-	TESTQ SI, SI
-	JZ    sums
-	XORQ  SI, SI
-	MOVQ  $0x00000001, BX
-	LEAQ  (SP), AX
-	MOVQ  $0x00000020, CX
-	LEAQ  64(SP), DX
-	JMP   loop
-
-sums:
-	MOVQ         dst+0(FP), AX
-	VHADDPD      Y1, Y0, Y0
-	VEXTRACTF128 $0x01, Y0, X1
-	VADDPD       X1, X0, X0
-	VADDPD       (AX), X0, X0
-	VMOVUPD      X0, (AX)
 	VZEROUPPER
 	RET
 
@@ -367,176 +836,6 @@ sums:
 	VADDPD       X0, X2, X2
 	VADDPD       (AX), X2, X2
 	VMOVUPD      X2, (AX)
-	VZEROUPPER
-	RET
-
-// func dots2x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-// Requires: AVX, FMA3
-TEXT ·dots2x3AVX2(SB), NOSPLIT, $160-64
-	MOVQ       a+24(FP), AX
-	MOVQ       strideA+32(FP), CX
-	SHLQ       $0x03, CX
-	MOVQ       b+40(FP), DX
-	MOVQ       strideB+48(FP), BX
-	SHLQ       $0x03, BX
-	MOVQ       rows+56(FP), SI
-	MOVQ       SI, DI
-	SHRQ       $0x02, SI
-	ANDQ       $0x03, DI
-	JZ         start
-	MOVQ       SI, R8
-	SHLQ       $0x05, R8
-	MOVQ       DI, R9
-	NEGQ       R9
-	LEAQ       lanemask<>+32(SB), R10
-	VMOVUPD    (R10)(R9*8), Y0
-	LEAQ       (AX)(R8*1), R9
-	VMASKMOVPD (R9), Y0, Y1
-	VMOVUPD    Y1, (SP)
-	VMASKMOVPD (R9)(CX*1), Y0, Y1
-	VMOVUPD    Y1, 32(SP)
-	LEAQ       (DX)(R8*1), R8
-	VMASKMOVPD (R8), Y0, Y1
-	VMOVUPD    Y1, 64(SP)
-	VMASKMOVPD (R8)(BX*1), Y0, Y1
-	VMOVUPD    Y1, 96(SP)
-	VMASKMOVPD (R8)(BX*2), Y0, Y0
-	VMOVUPD    Y0, 128(SP)
-
-start:
-	VXORPD Y0, Y0, Y0
-	VXORPD Y1, Y1, Y1
-	VXORPD Y2, Y2, Y2
-	VXORPD Y3, Y3, Y3
-	VXORPD Y4, Y4, Y4
-	VXORPD Y5, Y5, Y5
-	TESTQ  SI, SI
-	JZ     rest
-
-loop:
-	VMOVUPD     (DX), Y6
-	VMOVUPD     (DX)(BX*1), Y7
-	VMOVUPD     (DX)(BX*2), Y8
-	VMOVUPD     (AX), Y9
-	VFMADD231PD Y6, Y9, Y0
-	VFMADD231PD Y7, Y9, Y2
-	VFMADD231PD Y8, Y9, Y4
-	VMOVUPD     (AX)(CX*1), Y9
-	VFMADD231PD Y6, Y9, Y1
-	VFMADD231PD Y7, Y9, Y3
-	VFMADD231PD Y8, Y9, Y5
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, DX
-	DECQ        SI
-	JNZ         loop
-
-rest:
-	TESTQ DI, DI
-	JZ    sums
-	XORQ  DI, DI
-	MOVQ  $0x00000001, SI
-	LEAQ  (SP), AX
-	MOVQ  $0x00000020, CX
-	LEAQ  64(SP), DX
-	MOVQ  $0x00000020, BX
-	JMP   loop
-
-sums:
-	MOVQ         dst+0(FP), AX
-	MOVQ         step+8(FP), CX
-	MOVQ         grow+16(FP), DX
-	VHADDPD      Y1, Y0, Y0
-	VEXTRACTF128 $0x01, Y0, X1
-	VADDPD       X1, X0, X0
-	VADDPD       (AX), X0, X0
-	VMOVUPD      X0, (AX)
-	LEAQ         (AX)(CX*8), AX
-	ADDQ         DX, CX
-	VHADDPD      Y3, Y2, Y2
-	VEXTRACTF128 $0x01, Y2, X0
-	VADDPD       X0, X2, X2
-	VADDPD       (AX), X2, X2
-	VMOVUPD      X2, (AX)
-	LEAQ         (AX)(CX*8), AX
-	VHADDPD      Y5, Y4, Y4
-	VEXTRACTF128 $0x01, Y4, X0
-	VADDPD       X0, X4, X4
-	VADDPD       (AX), X4, X4
-	VMOVUPD      X4, (AX)
-	VZEROUPPER
-	RET
-
-// func dots3x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-// Requires: AVX, FMA3
-TEXT ·dots3x1AVX2(SB), NOSPLIT, $128-64
-	MOVQ       a+24(FP), AX
-	MOVQ       strideA+32(FP), CX
-	SHLQ       $0x03, CX
-	MOVQ       b+40(FP), DX
-	MOVQ       rows+56(FP), BX
-	MOVQ       BX, SI
-	SHRQ       $0x02, BX
-	ANDQ       $0x03, SI
-	JZ         start
-	MOVQ       BX, DI
-	SHLQ       $0x05, DI
-	MOVQ       SI, R8
-	NEGQ       R8
-	LEAQ       lanemask<>+32(SB), R9
-	VMOVUPD    (R9)(R8*8), Y0
-	LEAQ       (AX)(DI*1), R8
-	VMASKMOVPD (R8), Y0, Y1
-	VMOVUPD    Y1, (SP)
-	VMASKMOVPD (R8)(CX*1), Y0, Y1
-	VMOVUPD    Y1, 32(SP)
-	VMASKMOVPD (R8)(CX*2), Y0, Y1
-	VMOVUPD    Y1, 64(SP)
-	LEAQ       (DX)(DI*1), DI
-	VMASKMOVPD (DI), Y0, Y0
-	VMOVUPD    Y0, 96(SP)
-
-start:
-	VXORPD Y0, Y0, Y0
-	VXORPD Y1, Y1, Y1
-	VXORPD Y2, Y2, Y2
-	TESTQ  BX, BX
-	JZ     rest
-
-loop:
-	VMOVUPD     (DX), Y3
-	VMOVUPD     (AX), Y4
-	VFMADD231PD Y3, Y4, Y0
-	VMOVUPD     (AX)(CX*1), Y4
-	VFMADD231PD Y3, Y4, Y1
-	VMOVUPD     (AX)(CX*2), Y4
-	VFMADD231PD Y3, Y4, Y2
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, DX
-	DECQ        BX
-	JNZ         loop
-
-rest:
-	TESTQ SI, SI
-	JZ    sums
-	XORQ  SI, SI
-	MOVQ  $0x00000001, BX
-	LEAQ  (SP), AX
-	MOVQ  $0x00000020, CX
-	LEAQ  96(SP), DX
-	JMP   loop
-
-sums:
-	MOVQ         dst+0(FP), AX
-	VHADDPD      Y1, Y0, Y0
-	VEXTRACTF128 $0x01, Y0, X1
-	VADDPD       X1, X0, X0
-	VADDPD       (AX), X0, X0
-	VMOVUPD      X0, (AX)
-	VHADDPD      Y2, Y2, Y2
-	VEXTRACTF128 $0x01, Y2, X0
-	VADDSD       X0, X2, X2
-	VADDSD       16(AX), X2, X2
-	VMOVSD       X2, 16(AX)
 	VZEROUPPER
 	RET
 
@@ -635,6 +934,534 @@ sums:
 	VADDSD       X0, X5, X5
 	VADDSD       16(AX), X5, X5
 	VMOVSD       X5, 16(AX)
+	VZEROUPPER
+	RET
+
+// func dots4x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots4x2AVX2(SB), NOSPLIT, $192-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	MOVQ       b+40(FP), BX
+	MOVQ       strideB+48(FP), SI
+	SHLQ       $0x03, SI
+	MOVQ       rows+56(FP), DI
+	MOVQ       DI, R8
+	SHRQ       $0x02, DI
+	ANDQ       $0x03, R8
+	JZ         start
+	MOVQ       DI, R9
+	SHLQ       $0x05, R9
+	MOVQ       R8, R10
+	NEGQ       R10
+	LEAQ       lanemask<>+32(SB), R11
+	VMOVUPD    (R11)(R10*8), Y0
+	LEAQ       (AX)(R9*1), R10
+	VMASKMOVPD (R10), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R10)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R10)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R10)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	LEAQ       (BX)(R9*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R9)(SI*1), Y0, Y0
+	VMOVUPD    Y0, 160(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	TESTQ  DI, DI
+	JZ     rest
+
+loop:
+	VMOVUPD     (BX), Y8
+	VMOVUPD     (BX)(SI*1), Y9
+	VMOVUPD     (AX), Y10
+	VFMADD231PD Y8, Y10, Y0
+	VFMADD231PD Y9, Y10, Y4
+	VMOVUPD     (AX)(CX*1), Y10
+	VFMADD231PD Y8, Y10, Y1
+	VFMADD231PD Y9, Y10, Y5
+	VMOVUPD     (AX)(CX*2), Y10
+	VFMADD231PD Y8, Y10, Y2
+	VFMADD231PD Y9, Y10, Y6
+	VMOVUPD     (AX)(DX*1), Y10
+	VFMADD231PD Y8, Y10, Y3
+	VFMADD231PD Y9, Y10, Y7
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	DECQ        DI
+	JNZ         loop
+
+rest:
+	TESTQ R8, R8
+	JZ    sums
+	XORQ  R8, R8
+	MOVQ  $0x00000001, DI
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  128(SP), BX
+	MOVQ  $0x00000020, SI
+	JMP   loop
+
+sums:
+	MOVQ       dst+0(FP), AX
+	MOVQ       step+8(FP), CX
+	VHADDPD    Y1, Y0, Y0
+	VHADDPD    Y3, Y2, Y2
+	VPERM2F128 $0x20, Y2, Y0, Y1
+	VPERM2F128 $0x31, Y2, Y0, Y0
+	VADDPD     Y0, Y1, Y0
+	VADDPD     (AX), Y0, Y0
+	VMOVUPD    Y0, (AX)
+	LEAQ       (AX)(CX*8), AX
+	VHADDPD    Y5, Y4, Y4
+	VHADDPD    Y7, Y6, Y6
+	VPERM2F128 $0x20, Y6, Y4, Y0
+	VPERM2F128 $0x31, Y6, Y4, Y4
+	VADDPD     Y4, Y0, Y4
+	VADDPD     (AX), Y4, Y4
+	VMOVUPD    Y4, (AX)
+	VZEROUPPER
+	RET
+
+// func dots5x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots5x2AVX2(SB), NOSPLIT, $224-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	MOVQ       b+40(FP), BX
+	MOVQ       strideB+48(FP), SI
+	SHLQ       $0x03, SI
+	MOVQ       rows+56(FP), DI
+	MOVQ       DI, R8
+	SHRQ       $0x02, DI
+	ANDQ       $0x03, R8
+	JZ         start
+	MOVQ       DI, R9
+	SHLQ       $0x05, R9
+	MOVQ       R8, R10
+	NEGQ       R10
+	LEAQ       lanemask<>+32(SB), R11
+	VMOVUPD    (R11)(R10*8), Y0
+	LEAQ       (AX)(R9*1), R10
+	VMASKMOVPD (R10), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R10)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R10)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R10)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R10)(CX*4), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	LEAQ       (BX)(R9*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	VMASKMOVPD (R9)(SI*1), Y0, Y0
+	VMOVUPD    Y0, 192(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	VXORPD Y9, Y9, Y9
+	TESTQ  DI, DI
+	JZ     rest
+
+loop:
+	VMOVUPD     (BX), Y10
+	VMOVUPD     (BX)(SI*1), Y11
+	VMOVUPD     (AX), Y12
+	VFMADD231PD Y10, Y12, Y0
+	VFMADD231PD Y11, Y12, Y5
+	VMOVUPD     (AX)(CX*1), Y12
+	VFMADD231PD Y10, Y12, Y1
+	VFMADD231PD Y11, Y12, Y6
+	VMOVUPD     (AX)(CX*2), Y12
+	VFMADD231PD Y10, Y12, Y2
+	VFMADD231PD Y11, Y12, Y7
+	VMOVUPD     (AX)(DX*1), Y12
+	VFMADD231PD Y10, Y12, Y3
+	VFMADD231PD Y11, Y12, Y8
+	VMOVUPD     (AX)(CX*4), Y12
+	VFMADD231PD Y10, Y12, Y4
+	VFMADD231PD Y11, Y12, Y9
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	DECQ        DI
+	JNZ         loop
+
+rest:
+	TESTQ R8, R8
+	JZ    sums
+	XORQ  R8, R8
+	MOVQ  $0x00000001, DI
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  160(SP), BX
+	MOVQ  $0x00000020, SI
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	MOVQ         step+8(FP), CX
+	VHADDPD      Y1, Y0, Y0
+	VHADDPD      Y3, Y2, Y2
+	VPERM2F128   $0x20, Y2, Y0, Y1
+	VPERM2F128   $0x31, Y2, Y0, Y0
+	VADDPD       Y0, Y1, Y0
+	VADDPD       (AX), Y0, Y0
+	VMOVUPD      Y0, (AX)
+	VHADDPD      Y4, Y4, Y4
+	VEXTRACTF128 $0x01, Y4, X0
+	VADDSD       X0, X4, X4
+	VADDSD       32(AX), X4, X4
+	VMOVSD       X4, 32(AX)
+	LEAQ         (AX)(CX*8), AX
+	VHADDPD      Y6, Y5, Y5
+	VHADDPD      Y8, Y7, Y7
+	VPERM2F128   $0x20, Y7, Y5, Y0
+	VPERM2F128   $0x31, Y7, Y5, Y5
+	VADDPD       Y5, Y0, Y5
+	VADDPD       (AX), Y5, Y5
+	VMOVUPD      Y5, (AX)
+	VHADDPD      Y9, Y9, Y9
+	VEXTRACTF128 $0x01, Y9, X0
+	VADDSD       X0, X9, X9
+	VADDSD       32(AX), X9, X9
+	VMOVSD       X9, 32(AX)
+	VZEROUPPER
+	RET
+
+// func dots6x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots6x2AVX2(SB), NOSPLIT, $256-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	LEAQ       (CX)(CX*2), DX
+	LEAQ       (AX)(CX*4), BX
+	MOVQ       b+40(FP), SI
+	MOVQ       strideB+48(FP), DI
+	SHLQ       $0x03, DI
+	MOVQ       rows+56(FP), R8
+	MOVQ       R8, R9
+	SHRQ       $0x02, R8
+	ANDQ       $0x03, R9
+	JZ         start
+	MOVQ       R8, R10
+	SHLQ       $0x05, R10
+	MOVQ       R9, R11
+	NEGQ       R11
+	LEAQ       lanemask<>+32(SB), R12
+	VMOVUPD    (R12)(R11*8), Y0
+	LEAQ       (AX)(R10*1), R11
+	LEAQ       (BX)(R10*1), R12
+	VMASKMOVPD (R11), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R11)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (R11)(CX*2), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R11)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R11)(CX*4), Y0, Y1
+	VMOVUPD    Y1, 128(SP)
+	VMASKMOVPD (R12)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 160(SP)
+	LEAQ       (SI)(R10*1), R10
+	VMASKMOVPD (R10), Y0, Y1
+	VMOVUPD    Y1, 192(SP)
+	VMASKMOVPD (R10)(DI*1), Y0, Y0
+	VMOVUPD    Y0, 224(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	VXORPD Y9, Y9, Y9
+	VXORPD Y10, Y10, Y10
+	VXORPD Y11, Y11, Y11
+	TESTQ  R8, R8
+	JZ     rest
+
+loop:
+	VMOVUPD     (SI), Y12
+	VMOVUPD     (SI)(DI*1), Y13
+	VMOVUPD     (AX), Y14
+	VFMADD231PD Y12, Y14, Y0
+	VFMADD231PD Y13, Y14, Y6
+	VMOVUPD     (AX)(CX*1), Y14
+	VFMADD231PD Y12, Y14, Y1
+	VFMADD231PD Y13, Y14, Y7
+	VMOVUPD     (AX)(CX*2), Y14
+	VFMADD231PD Y12, Y14, Y2
+	VFMADD231PD Y13, Y14, Y8
+	VMOVUPD     (AX)(DX*1), Y14
+	VFMADD231PD Y12, Y14, Y3
+	VFMADD231PD Y13, Y14, Y9
+	VMOVUPD     (AX)(CX*4), Y14
+	VFMADD231PD Y12, Y14, Y4
+	VFMADD231PD Y13, Y14, Y10
+	VMOVUPD     (BX)(CX*1), Y14
+	VFMADD231PD Y12, Y14, Y5
+	VFMADD231PD Y13, Y14, Y11
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, BX
+	ADDQ        $0x20, SI
+	DECQ        R8
+	JNZ         loop
+
+rest:
+	TESTQ R9, R9
+	JZ    sums
+	XORQ  R9, R9
+	MOVQ  $0x00000001, R8
+	LEAQ  (SP), AX
+	LEAQ  128(SP), BX
+	MOVQ  $0x00000020, CX
+	MOVQ  $0x00000060, DX
+	LEAQ  192(SP), SI
+	MOVQ  $0x00000020, DI
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	MOVQ         step+8(FP), CX
+	VHADDPD      Y1, Y0, Y0
+	VHADDPD      Y3, Y2, Y2
+	VPERM2F128   $0x20, Y2, Y0, Y1
+	VPERM2F128   $0x31, Y2, Y0, Y0
+	VADDPD       Y0, Y1, Y0
+	VADDPD       (AX), Y0, Y0
+	VMOVUPD      Y0, (AX)
+	VHADDPD      Y5, Y4, Y4
+	VEXTRACTF128 $0x01, Y4, X0
+	VADDPD       X0, X4, X4
+	VADDPD       32(AX), X4, X4
+	VMOVUPD      X4, 32(AX)
+	LEAQ         (AX)(CX*8), AX
+	VHADDPD      Y7, Y6, Y6
+	VHADDPD      Y9, Y8, Y8
+	VPERM2F128   $0x20, Y8, Y6, Y0
+	VPERM2F128   $0x31, Y8, Y6, Y6
+	VADDPD       Y6, Y0, Y6
+	VADDPD       (AX), Y6, Y6
+	VMOVUPD      Y6, (AX)
+	VHADDPD      Y11, Y10, Y10
+	VEXTRACTF128 $0x01, Y10, X0
+	VADDPD       X0, X10, X10
+	VADDPD       32(AX), X10, X10
+	VMOVUPD      X10, 32(AX)
+	VZEROUPPER
+	RET
+
+// func dots1x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots1x3AVX2(SB), NOSPLIT, $128-64
+	MOVQ       a+24(FP), AX
+	MOVQ       b+40(FP), CX
+	MOVQ       strideB+48(FP), DX
+	SHLQ       $0x03, DX
+	MOVQ       rows+56(FP), BX
+	MOVQ       BX, SI
+	SHRQ       $0x02, BX
+	ANDQ       $0x03, SI
+	JZ         start
+	MOVQ       BX, DI
+	SHLQ       $0x05, DI
+	MOVQ       SI, R8
+	NEGQ       R8
+	LEAQ       lanemask<>+32(SB), R9
+	VMOVUPD    (R9)(R8*8), Y0
+	LEAQ       (AX)(DI*1), R8
+	VMASKMOVPD (R8), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	LEAQ       (CX)(DI*1), DI
+	VMASKMOVPD (DI), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	VMASKMOVPD (DI)(DX*1), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (DI)(DX*2), Y0, Y0
+	VMOVUPD    Y0, 96(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	TESTQ  BX, BX
+	JZ     rest
+
+loop:
+	VMOVUPD     (CX), Y3
+	VMOVUPD     (CX)(DX*1), Y4
+	VMOVUPD     (CX)(DX*2), Y5
+	VMOVUPD     (AX), Y6
+	VFMADD231PD Y3, Y6, Y0
+	VFMADD231PD Y4, Y6, Y1
+	VFMADD231PD Y5, Y6, Y2
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, CX
+	DECQ        BX
+	JNZ         loop
+
+rest:
+	TESTQ SI, SI
+	JZ    sums
+	XORQ  SI, SI
+	MOVQ  $0x00000001, BX
+	LEAQ  (SP), AX
+	LEAQ  32(SP), CX
+	MOVQ  $0x00000020, DX
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	MOVQ         step+8(FP), CX
+	MOVQ         grow+16(FP), DX
+	VHADDPD      Y0, Y0, Y0
+	VEXTRACTF128 $0x01, Y0, X3
+	VADDSD       X3, X0, X0
+	VADDSD       (AX), X0, X0
+	VMOVSD       X0, (AX)
+	LEAQ         (AX)(CX*8), AX
+	ADDQ         DX, CX
+	VHADDPD      Y1, Y1, Y1
+	VEXTRACTF128 $0x01, Y1, X0
+	VADDSD       X0, X1, X1
+	VADDSD       (AX), X1, X1
+	VMOVSD       X1, (AX)
+	LEAQ         (AX)(CX*8), AX
+	VHADDPD      Y2, Y2, Y2
+	VEXTRACTF128 $0x01, Y2, X0
+	VADDSD       X0, X2, X2
+	VADDSD       (AX), X2, X2
+	VMOVSD       X2, (AX)
+	VZEROUPPER
+	RET
+
+// func dots2x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
+// Requires: AVX, FMA3
+TEXT ·dots2x3AVX2(SB), NOSPLIT, $160-64
+	MOVQ       a+24(FP), AX
+	MOVQ       strideA+32(FP), CX
+	SHLQ       $0x03, CX
+	MOVQ       b+40(FP), DX
+	MOVQ       strideB+48(FP), BX
+	SHLQ       $0x03, BX
+	MOVQ       rows+56(FP), SI
+	MOVQ       SI, DI
+	SHRQ       $0x02, SI
+	ANDQ       $0x03, DI
+	JZ         start
+	MOVQ       SI, R8
+	SHLQ       $0x05, R8
+	MOVQ       DI, R9
+	NEGQ       R9
+	LEAQ       lanemask<>+32(SB), R10
+	VMOVUPD    (R10)(R9*8), Y0
+	LEAQ       (AX)(R8*1), R9
+	VMASKMOVPD (R9), Y0, Y1
+	VMOVUPD    Y1, (SP)
+	VMASKMOVPD (R9)(CX*1), Y0, Y1
+	VMOVUPD    Y1, 32(SP)
+	LEAQ       (DX)(R8*1), R8
+	VMASKMOVPD (R8), Y0, Y1
+	VMOVUPD    Y1, 64(SP)
+	VMASKMOVPD (R8)(BX*1), Y0, Y1
+	VMOVUPD    Y1, 96(SP)
+	VMASKMOVPD (R8)(BX*2), Y0, Y0
+	VMOVUPD    Y0, 128(SP)
+
+start:
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	TESTQ  SI, SI
+	JZ     rest
+
+loop:
+	VMOVUPD     (DX), Y6
+	VMOVUPD     (DX)(BX*1), Y7
+	VMOVUPD     (DX)(BX*2), Y8
+	VMOVUPD     (AX), Y9
+	VFMADD231PD Y6, Y9, Y0
+	VFMADD231PD Y7, Y9, Y2
+	VFMADD231PD Y8, Y9, Y4
+	VMOVUPD     (AX)(CX*1), Y9
+	VFMADD231PD Y6, Y9, Y1
+	VFMADD231PD Y7, Y9, Y3
+	VFMADD231PD Y8, Y9, Y5
+	ADDQ        $0x20, AX
+	ADDQ        $0x20, DX
+	DECQ        SI
+	JNZ         loop
+
+rest:
+	TESTQ DI, DI
+	JZ    sums
+	XORQ  DI, DI
+	MOVQ  $0x00000001, SI
+	LEAQ  (SP), AX
+	MOVQ  $0x00000020, CX
+	LEAQ  64(SP), DX
+	MOVQ  $0x00000020, BX
+	JMP   loop
+
+sums:
+	MOVQ         dst+0(FP), AX
+	MOVQ         step+8(FP), CX
+	MOVQ         grow+16(FP), DX
+	VHADDPD      Y1, Y0, Y0
+	VEXTRACTF128 $0x01, Y0, X1
+	VADDPD       X1, X0, X0
+	VADDPD       (AX), X0, X0
+	VMOVUPD      X0, (AX)
+	LEAQ         (AX)(CX*8), AX
+	ADDQ         DX, CX
+	VHADDPD      Y3, Y2, Y2
+	VEXTRACTF128 $0x01, Y2, X0
+	VADDPD       X0, X2, X2
+	VADDPD       (AX), X2, X2
+	VMOVUPD      X2, (AX)
+	LEAQ         (AX)(CX*8), AX
+	VHADDPD      Y5, Y4, Y4
+	VEXTRACTF128 $0x01, Y4, X0
+	VADDPD       X0, X4, X4
+	VADDPD       (AX), X4, X4
+	VMOVUPD      X4, (AX)
 	VZEROUPPER
 	RET
 
@@ -755,185 +1582,6 @@ sums:
 	VADDSD       X0, X8, X8
 	VADDSD       16(AX), X8, X8
 	VMOVSD       X8, 16(AX)
-	VZEROUPPER
-	RET
-
-// func dots4x1AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-// Requires: AVX, FMA3
-TEXT ·dots4x1AVX2(SB), NOSPLIT, $160-64
-	MOVQ       a+24(FP), AX
-	MOVQ       strideA+32(FP), CX
-	SHLQ       $0x03, CX
-	LEAQ       (CX)(CX*2), DX
-	MOVQ       b+40(FP), BX
-	MOVQ       rows+56(FP), SI
-	MOVQ       SI, DI
-	SHRQ       $0x02, SI
-	ANDQ       $0x03, DI
-	JZ         start
-	MOVQ       SI, R8
-	SHLQ       $0x05, R8
-	MOVQ       DI, R9
-	NEGQ       R9
-	LEAQ       lanemask<>+32(SB), R10
-	VMOVUPD    (R10)(R9*8), Y0
-	LEAQ       (AX)(R8*1), R9
-	VMASKMOVPD (R9), Y0, Y1
-	VMOVUPD    Y1, (SP)
-	VMASKMOVPD (R9)(CX*1), Y0, Y1
-	VMOVUPD    Y1, 32(SP)
-	VMASKMOVPD (R9)(CX*2), Y0, Y1
-	VMOVUPD    Y1, 64(SP)
-	VMASKMOVPD (R9)(DX*1), Y0, Y1
-	VMOVUPD    Y1, 96(SP)
-	LEAQ       (BX)(R8*1), R8
-	VMASKMOVPD (R8), Y0, Y0
-	VMOVUPD    Y0, 128(SP)
-
-start:
-	VXORPD Y0, Y0, Y0
-	VXORPD Y1, Y1, Y1
-	VXORPD Y2, Y2, Y2
-	VXORPD Y3, Y3, Y3
-	TESTQ  SI, SI
-	JZ     rest
-
-loop:
-	VMOVUPD     (BX), Y4
-	VMOVUPD     (AX), Y5
-	VFMADD231PD Y4, Y5, Y0
-	VMOVUPD     (AX)(CX*1), Y5
-	VFMADD231PD Y4, Y5, Y1
-	VMOVUPD     (AX)(CX*2), Y5
-	VFMADD231PD Y4, Y5, Y2
-	VMOVUPD     (AX)(DX*1), Y5
-	VFMADD231PD Y4, Y5, Y3
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, BX
-	DECQ        SI
-	JNZ         loop
-
-rest:
-	TESTQ DI, DI
-	JZ    sums
-	XORQ  DI, DI
-	MOVQ  $0x00000001, SI
-	LEAQ  (SP), AX
-	MOVQ  $0x00000020, CX
-	MOVQ  $0x00000060, DX
-	LEAQ  128(SP), BX
-	JMP   loop
-
-sums:
-	MOVQ       dst+0(FP), AX
-	VHADDPD    Y1, Y0, Y0
-	VHADDPD    Y3, Y2, Y2
-	VPERM2F128 $0x20, Y2, Y0, Y1
-	VPERM2F128 $0x31, Y2, Y0, Y0
-	VADDPD     Y0, Y1, Y0
-	VADDPD     (AX), Y0, Y0
-	VMOVUPD    Y0, (AX)
-	VZEROUPPER
-	RET
-
-// func dots4x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-// Requires: AVX, FMA3
-TEXT ·dots4x2AVX2(SB), NOSPLIT, $192-64
-	MOVQ       a+24(FP), AX
-	MOVQ       strideA+32(FP), CX
-	SHLQ       $0x03, CX
-	LEAQ       (CX)(CX*2), DX
-	MOVQ       b+40(FP), BX
-	MOVQ       strideB+48(FP), SI
-	SHLQ       $0x03, SI
-	MOVQ       rows+56(FP), DI
-	MOVQ       DI, R8
-	SHRQ       $0x02, DI
-	ANDQ       $0x03, R8
-	JZ         start
-	MOVQ       DI, R9
-	SHLQ       $0x05, R9
-	MOVQ       R8, R10
-	NEGQ       R10
-	LEAQ       lanemask<>+32(SB), R11
-	VMOVUPD    (R11)(R10*8), Y0
-	LEAQ       (AX)(R9*1), R10
-	VMASKMOVPD (R10), Y0, Y1
-	VMOVUPD    Y1, (SP)
-	VMASKMOVPD (R10)(CX*1), Y0, Y1
-	VMOVUPD    Y1, 32(SP)
-	VMASKMOVPD (R10)(CX*2), Y0, Y1
-	VMOVUPD    Y1, 64(SP)
-	VMASKMOVPD (R10)(DX*1), Y0, Y1
-	VMOVUPD    Y1, 96(SP)
-	LEAQ       (BX)(R9*1), R9
-	VMASKMOVPD (R9), Y0, Y1
-	VMOVUPD    Y1, 128(SP)
-	VMASKMOVPD (R9)(SI*1), Y0, Y0
-	VMOVUPD    Y0, 160(SP)
-
-start:
-	VXORPD Y0, Y0, Y0
-	VXORPD Y1, Y1, Y1
-	VXORPD Y2, Y2, Y2
-	VXORPD Y3, Y3, Y3
-	VXORPD Y4, Y4, Y4
-	VXORPD Y5, Y5, Y5
-	VXORPD Y6, Y6, Y6
-	VXORPD Y7, Y7, Y7
-	TESTQ  DI, DI
-	JZ     rest
-
-loop:
-	VMOVUPD     (BX), Y8
-	VMOVUPD     (BX)(SI*1), Y9
-	VMOVUPD     (AX), Y10
-	VFMADD231PD Y8, Y10, Y0
-	VFMADD231PD Y9, Y10, Y4
-	VMOVUPD     (AX)(CX*1), Y10
-	VFMADD231PD Y8, Y10, Y1
-	VFMADD231PD Y9, Y10, Y5
-	VMOVUPD     (AX)(CX*2), Y10
-	VFMADD231PD Y8, Y10, Y2
-	VFMADD231PD Y9, Y10, Y6
-	VMOVUPD     (AX)(DX*1), Y10
-	VFMADD231PD Y8, Y10, Y3
-	VFMADD231PD Y9, Y10, Y7
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, BX
-	DECQ        DI
-	JNZ         loop
-
-rest:
-	TESTQ R8, R8
-	JZ    sums
-	XORQ  R8, R8
-	MOVQ  $0x00000001, DI
-	LEAQ  (SP), AX
-	MOVQ  $0x00000020, CX
-	MOVQ  $0x00000060, DX
-	LEAQ  128(SP), BX
-	MOVQ  $0x00000020, SI
-	JMP   loop
-
-sums:
-	MOVQ       dst+0(FP), AX
-	MOVQ       step+8(FP), CX
-	VHADDPD    Y1, Y0, Y0
-	VHADDPD    Y3, Y2, Y2
-	VPERM2F128 $0x20, Y2, Y0, Y1
-	VPERM2F128 $0x31, Y2, Y0, Y0
-	VADDPD     Y0, Y1, Y0
-	VADDPD     (AX), Y0, Y0
-	VMOVUPD    Y0, (AX)
-	LEAQ       (AX)(CX*8), AX
-	VHADDPD    Y5, Y4, Y4
-	VHADDPD    Y7, Y6, Y6
-	VPERM2F128 $0x20, Y6, Y4, Y0
-	VPERM2F128 $0x31, Y6, Y4, Y4
-	VADDPD     Y4, Y0, Y4
-	VADDPD     (AX), Y4, Y4
-	VMOVUPD    Y4, (AX)
 	VZEROUPPER
 	RET
 
@@ -1529,9 +2177,9 @@ sixteen:
 	VMOVUPD 96(CX), Y0
 	VMULPD  96(DX), Y0, Y0
 	VMOVUPD Y0, 96(AX)
-	ADDQ    $0x80, AX
-	ADDQ    $0x80, CX
-	ADDQ    $0x80, DX
+	ADDQ    $0x00000080, AX
+	ADDQ    $0x00000080, CX
+	ADDQ    $0x00000080, DX
 	JMP     sixteen
 
 sixteenend:
@@ -1543,9 +2191,9 @@ four:
 	VMOVUPD (CX), Y0
 	VMULPD  (DX), Y0, Y0
 	VMOVUPD Y0, (AX)
-	ADDQ    $0x20, AX
-	ADDQ    $0x20, CX
-	ADDQ    $0x20, DX
+	ADDQ    $0x00000020, AX
+	ADDQ    $0x00000020, CX
+	ADDQ    $0x00000020, DX
 	JMP     four
 
 fourend:
@@ -1557,13 +2205,12 @@ single:
 	VMOVSD (CX), X0
 	VMULSD (DX), X0, X0
 	VMOVSD X0, (AX)
-	ADDQ   $0x08, AX
-	ADDQ   $0x08, CX
-	ADDQ   $0x08, DX
+	ADDQ   $0x00000008, AX
+	ADDQ   $0x00000008, CX
+	ADDQ   $0x00000008, DX
 	JMP    single
 
 singleend:
-	ADDQ $0x01, BX
 	VZEROUPPER
 	RET
 
@@ -1590,8 +2237,8 @@ sixteen:
 	VMOVUPD     96(CX), Y1
 	VFMADD231PD 96(AX), Y0, Y1
 	VMOVUPD     Y1, 96(CX)
-	ADDQ        $0x80, AX
-	ADDQ        $0x80, CX
+	ADDQ        $0x00000080, AX
+	ADDQ        $0x00000080, CX
 	JMP         sixteen
 
 sixteenend:
@@ -1603,8 +2250,8 @@ four:
 	VMOVUPD     (CX), Y1
 	VFMADD231PD (AX), Y0, Y1
 	VMOVUPD     Y1, (CX)
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, CX
+	ADDQ        $0x00000020, AX
+	ADDQ        $0x00000020, CX
 	JMP         four
 
 fourend:
@@ -1616,12 +2263,350 @@ single:
 	VMOVSD      (CX), X1
 	VFMADD231SD (AX), X0, X1
 	VMOVSD      X1, (CX)
-	ADDQ        $0x08, AX
-	ADDQ        $0x08, CX
+	ADDQ        $0x00000008, AX
+	ADDQ        $0x00000008, CX
 	JMP         single
 
 singleend:
-	ADDQ $0x01, DX
+	VZEROUPPER
+	RET
+
+// func shiftScaleAVX2(dst *float64, x *float64, m float64, inv float64, n int) float64
+// Requires: AVX, SSE2
+TEXT ·shiftScaleAVX2(SB), NOSPLIT, $0-48
+	VBROADCASTSD m+16(FP), Y0
+	VBROADCASTSD inv+24(FP), Y1
+	VXORPD       Y2, Y2, Y2
+	MOVQ         dst+0(FP), AX
+	MOVQ         x+8(FP), CX
+	MOVQ         n+32(FP), DX
+
+sixteen:
+	SUBQ    $0x10, DX
+	JL      sixteenend
+	VMOVUPD (CX), Y3
+	VADDPD  Y3, Y2, Y2
+	VSUBPD  Y0, Y3, Y3
+	VMULPD  Y1, Y3, Y3
+	VMOVUPD Y3, (AX)
+	VMOVUPD 32(CX), Y3
+	VADDPD  Y3, Y2, Y2
+	VSUBPD  Y0, Y3, Y3
+	VMULPD  Y1, Y3, Y3
+	VMOVUPD Y3, 32(AX)
+	VMOVUPD 64(CX), Y3
+	VADDPD  Y3, Y2, Y2
+	VSUBPD  Y0, Y3, Y3
+	VMULPD  Y1, Y3, Y3
+	VMOVUPD Y3, 64(AX)
+	VMOVUPD 96(CX), Y3
+	VADDPD  Y3, Y2, Y2
+	VSUBPD  Y0, Y3, Y3
+	VMULPD  Y1, Y3, Y3
+	VMOVUPD Y3, 96(AX)
+	ADDQ    $0x00000080, AX
+	ADDQ    $0x00000080, CX
+	JMP     sixteen
+
+sixteenend:
+	ADDQ $0x10, DX
+
+four:
+	SUBQ    $0x04, DX
+	JL      fourend
+	VMOVUPD (CX), Y3
+	VADDPD  Y3, Y2, Y2
+	VSUBPD  Y0, Y3, Y3
+	VMULPD  Y1, Y3, Y3
+	VMOVUPD Y3, (AX)
+	ADDQ    $0x00000020, AX
+	ADDQ    $0x00000020, CX
+	JMP     four
+
+fourend:
+	ADDQ         $0x04, DX
+	VEXTRACTF128 $0x01, Y2, X3
+
+single:
+	SUBQ   $0x01, DX
+	JL     singleend
+	VMOVSD (CX), X4
+	VADDSD X4, X2, X2
+	VSUBSD X0, X4, X4
+	VMULSD X1, X4, X4
+	VMOVSD X4, (AX)
+	ADDQ   $0x00000008, AX
+	ADDQ   $0x00000008, CX
+	JMP    single
+
+singleend:
+	VHADDPD X2, X2, X2
+	VHADDPD X3, X3, X3
+	VADDSD  X3, X2, X2
+	VZEROUPPER
+	MOVSD   X2, ret+40(FP)
+	RET
+
+// func chainAVX2(first float64, dst *float64, x *float64, stride int, theta *float64, step int, cols int, rows int)
+// Requires: AVX, FMA3
+TEXT ·chainAVX2(SB), NOSPLIT, $0-64
+	VBROADCASTSD first+0(FP), Y0
+	MOVQ         dst+8(FP), AX
+	MOVQ         x+16(FP), CX
+	MOVQ         rows+56(FP), DX
+	MOVQ         stride+24(FP), BX
+	MOVQ         theta+32(FP), SI
+	MOVQ         step+40(FP), DI
+	MOVQ         cols+48(FP), R8
+	SHLQ         $0x03, BX
+	SHLQ         $0x03, DI
+
+panel:
+	SUBQ    $0x20, DX
+	JL      panelend
+	VMOVUPD (AX), Y1
+	VMULPD  Y0, Y1, Y1
+	VMOVUPD 32(AX), Y2
+	VMULPD  Y0, Y2, Y2
+	VMOVUPD 64(AX), Y3
+	VMULPD  Y0, Y3, Y3
+	VMOVUPD 96(AX), Y4
+	VMULPD  Y0, Y4, Y4
+	VMOVUPD 128(AX), Y5
+	VMULPD  Y0, Y5, Y5
+	VMOVUPD 160(AX), Y6
+	VMULPD  Y0, Y6, Y6
+	VMOVUPD 192(AX), Y7
+	VMULPD  Y0, Y7, Y7
+	VMOVUPD 224(AX), Y8
+	VMULPD  Y0, Y8, Y8
+	MOVQ    CX, R9
+	MOVQ    SI, R10
+	MOVQ    R8, R11
+	TESTQ   R11, R11
+	JZ      paneldone
+
+panelcolumns:
+	VBROADCASTSD (R10), Y9
+	VFMADD231PD  (R9), Y9, Y1
+	VFMADD231PD  32(R9), Y9, Y2
+	VFMADD231PD  64(R9), Y9, Y3
+	VFMADD231PD  96(R9), Y9, Y4
+	VFMADD231PD  128(R9), Y9, Y5
+	VFMADD231PD  160(R9), Y9, Y6
+	VFMADD231PD  192(R9), Y9, Y7
+	VFMADD231PD  224(R9), Y9, Y8
+	ADDQ         BX, R9
+	ADDQ         DI, R10
+	DECQ         R11
+	JNZ          panelcolumns
+
+paneldone:
+	VMOVUPD Y1, (AX)
+	VMOVUPD Y2, 32(AX)
+	VMOVUPD Y3, 64(AX)
+	VMOVUPD Y4, 96(AX)
+	VMOVUPD Y5, 128(AX)
+	VMOVUPD Y6, 160(AX)
+	VMOVUPD Y7, 192(AX)
+	VMOVUPD Y8, 224(AX)
+	ADDQ    $0x00000100, AX
+	ADDQ    $0x00000100, CX
+	JMP     panel
+
+panelend:
+	ADDQ $0x20, DX
+
+four:
+	SUBQ    $0x04, DX
+	JL      fourend
+	VMOVUPD (AX), Y1
+	VMULPD  Y0, Y1, Y1
+	MOVQ    CX, R9
+	MOVQ    SI, R10
+	MOVQ    R8, R11
+	TESTQ   R11, R11
+	JZ      fourdone
+
+fourcolumns:
+	VBROADCASTSD (R10), Y2
+	VFMADD231PD  (R9), Y2, Y1
+	ADDQ         BX, R9
+	ADDQ         DI, R10
+	DECQ         R11
+	JNZ          fourcolumns
+
+fourdone:
+	VMOVUPD Y1, (AX)
+	ADDQ    $0x00000020, AX
+	ADDQ    $0x00000020, CX
+	JMP     four
+
+fourend:
+	ADDQ $0x04, DX
+
+single:
+	SUBQ   $0x01, DX
+	JL     singleend
+	VMOVSD (AX), X1
+	VMULSD X0, X1, X1
+	MOVQ   CX, R9
+	MOVQ   SI, R10
+	MOVQ   R8, R11
+	TESTQ  R11, R11
+	JZ     singledone
+
+singlecolumns:
+	VBROADCASTSD (R10), Y2
+	VFMADD231SD  (R9), X2, X1
+	ADDQ         BX, R9
+	ADDQ         DI, R10
+	DECQ         R11
+	JNZ          singlecolumns
+
+singledone:
+	VMOVSD X1, (AX)
+	ADDQ   $0x00000008, AX
+	ADDQ   $0x00000008, CX
+	JMP    single
+
+singleend:
+	VZEROUPPER
+	RET
+
+// func chainSquareAVX2(dst *float64, x *float64, stride int, theta *float64, step int, cols int, rows int)
+// Requires: AVX, FMA3
+TEXT ·chainSquareAVX2(SB), NOSPLIT, $0-56
+	MOVQ dst+0(FP), AX
+	MOVQ x+8(FP), CX
+	MOVQ rows+48(FP), DX
+	MOVQ stride+16(FP), BX
+	MOVQ theta+24(FP), SI
+	MOVQ step+32(FP), DI
+	MOVQ cols+40(FP), R8
+	SHLQ $0x03, BX
+	SHLQ $0x03, DI
+
+panel:
+	SUBQ   $0x20, DX
+	JL     panelend
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	MOVQ   CX, R9
+	MOVQ   SI, R10
+	MOVQ   R8, R11
+	TESTQ  R11, R11
+	JZ     paneldone
+
+panelcolumns:
+	VBROADCASTSD (R10), Y8
+	VFMADD231PD  (R9), Y8, Y0
+	VFMADD231PD  32(R9), Y8, Y1
+	VFMADD231PD  64(R9), Y8, Y2
+	VFMADD231PD  96(R9), Y8, Y3
+	VFMADD231PD  128(R9), Y8, Y4
+	VFMADD231PD  160(R9), Y8, Y5
+	VFMADD231PD  192(R9), Y8, Y6
+	VFMADD231PD  224(R9), Y8, Y7
+	ADDQ         BX, R9
+	ADDQ         DI, R10
+	DECQ         R11
+	JNZ          panelcolumns
+
+paneldone:
+	VMOVUPD     (AX), Y8
+	VFMADD231PD Y0, Y0, Y8
+	VMOVUPD     Y8, (AX)
+	VMOVUPD     32(AX), Y0
+	VFMADD231PD Y1, Y1, Y0
+	VMOVUPD     Y0, 32(AX)
+	VMOVUPD     64(AX), Y0
+	VFMADD231PD Y2, Y2, Y0
+	VMOVUPD     Y0, 64(AX)
+	VMOVUPD     96(AX), Y0
+	VFMADD231PD Y3, Y3, Y0
+	VMOVUPD     Y0, 96(AX)
+	VMOVUPD     128(AX), Y0
+	VFMADD231PD Y4, Y4, Y0
+	VMOVUPD     Y0, 128(AX)
+	VMOVUPD     160(AX), Y0
+	VFMADD231PD Y5, Y5, Y0
+	VMOVUPD     Y0, 160(AX)
+	VMOVUPD     192(AX), Y0
+	VFMADD231PD Y6, Y6, Y0
+	VMOVUPD     Y0, 192(AX)
+	VMOVUPD     224(AX), Y0
+	VFMADD231PD Y7, Y7, Y0
+	VMOVUPD     Y0, 224(AX)
+	ADDQ        $0x00000100, AX
+	ADDQ        $0x00000100, CX
+	JMP         panel
+
+panelend:
+	ADDQ $0x20, DX
+
+four:
+	SUBQ   $0x04, DX
+	JL     fourend
+	VXORPD Y0, Y0, Y0
+	MOVQ   CX, R9
+	MOVQ   SI, R10
+	MOVQ   R8, R11
+	TESTQ  R11, R11
+	JZ     fourdone
+
+fourcolumns:
+	VBROADCASTSD (R10), Y1
+	VFMADD231PD  (R9), Y1, Y0
+	ADDQ         BX, R9
+	ADDQ         DI, R10
+	DECQ         R11
+	JNZ          fourcolumns
+
+fourdone:
+	VMOVUPD     (AX), Y1
+	VFMADD231PD Y0, Y0, Y1
+	VMOVUPD     Y1, (AX)
+	ADDQ        $0x00000020, AX
+	ADDQ        $0x00000020, CX
+	JMP         four
+
+fourend:
+	ADDQ $0x04, DX
+
+single:
+	SUBQ   $0x01, DX
+	JL     singleend
+	VXORPD X0, X0, X0
+	MOVQ   CX, R9
+	MOVQ   SI, R10
+	MOVQ   R8, R11
+	TESTQ  R11, R11
+	JZ     singledone
+
+singlecolumns:
+	VBROADCASTSD (R10), Y1
+	VFMADD231SD  (R9), X1, X0
+	ADDQ         BX, R9
+	ADDQ         DI, R10
+	DECQ         R11
+	JNZ          singlecolumns
+
+singledone:
+	VMOVSD      (AX), X1
+	VFMADD231SD X0, X0, X1
+	VMOVSD      X1, (AX)
+	ADDQ        $0x00000008, AX
+	ADDQ        $0x00000008, CX
+	JMP         single
+
+singleend:
 	VZEROUPPER
 	RET
 
@@ -2211,10 +3196,10 @@ sixteen:
 	VADDPD      Y2, Y5, Y2
 	VMOVUPD     Y3, 96(DX)
 	VMOVUPD     Y2, 96(BX)
-	ADDQ        $0x80, AX
-	ADDQ        $0x80, CX
-	ADDQ        $0x80, DX
-	ADDQ        $0x80, BX
+	ADDQ        $0x00000080, AX
+	ADDQ        $0x00000080, CX
+	ADDQ        $0x00000080, DX
+	ADDQ        $0x00000080, BX
 	JMP         sixteen
 
 sixteenend:
@@ -2246,10 +3231,10 @@ four:
 	VADDPD      Y2, Y5, Y2
 	VMOVUPD     Y3, (DX)
 	VMOVUPD     Y2, (BX)
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, CX
-	ADDQ        $0x20, DX
-	ADDQ        $0x20, BX
+	ADDQ        $0x00000020, AX
+	ADDQ        $0x00000020, CX
+	ADDQ        $0x00000020, DX
+	ADDQ        $0x00000020, BX
 	JMP         four
 
 fourend:
@@ -2281,14 +3266,13 @@ single:
 	VADDSD      X2, X5, X2
 	VMOVSD      X3, (DX)
 	VMOVSD      X2, (BX)
-	ADDQ        $0x08, AX
-	ADDQ        $0x08, CX
-	ADDQ        $0x08, DX
-	ADDQ        $0x08, BX
+	ADDQ        $0x00000008, AX
+	ADDQ        $0x00000008, CX
+	ADDQ        $0x00000008, DX
+	ADDQ        $0x00000008, BX
 	JMP         single
 
 singleend:
-	ADDQ $0x01, SI
 	VZEROUPPER
 	RET
 
@@ -2357,10 +3341,10 @@ sixteen:
 	VADDPD      Y3, Y2, Y2
 	VMOVUPD     Y1, 96(AX)
 	VMOVUPD     Y2, 96(CX)
-	ADDQ        $0x80, AX
-	ADDQ        $0x80, CX
-	ADDQ        $0x80, DX
-	ADDQ        $0x80, BX
+	ADDQ        $0x00000080, AX
+	ADDQ        $0x00000080, CX
+	ADDQ        $0x00000080, DX
+	ADDQ        $0x00000080, BX
 	JMP         sixteen
 
 sixteenend:
@@ -2382,10 +3366,10 @@ four:
 	VADDPD      Y3, Y2, Y2
 	VMOVUPD     Y1, (AX)
 	VMOVUPD     Y2, (CX)
-	ADDQ        $0x20, AX
-	ADDQ        $0x20, CX
-	ADDQ        $0x20, DX
-	ADDQ        $0x20, BX
+	ADDQ        $0x00000020, AX
+	ADDQ        $0x00000020, CX
+	ADDQ        $0x00000020, DX
+	ADDQ        $0x00000020, BX
 	JMP         four
 
 fourend:
@@ -2407,14 +3391,13 @@ single:
 	VADDSD      X3, X2, X2
 	VMOVSD      X1, (AX)
 	VMOVSD      X2, (CX)
-	ADDQ        $0x08, AX
-	ADDQ        $0x08, CX
-	ADDQ        $0x08, DX
-	ADDQ        $0x08, BX
+	ADDQ        $0x00000008, AX
+	ADDQ        $0x00000008, CX
+	ADDQ        $0x00000008, DX
+	ADDQ        $0x00000008, BX
 	JMP         single
 
 singleend:
-	ADDQ $0x01, SI
 	VZEROUPPER
 	RET
 
@@ -2561,10 +3544,10 @@ sixteen:
 	VMULPD  Y2, Y3, Y3
 	VMOVUPD Y4, 96(AX)
 	VMOVUPD Y3, 96(CX)
-	ADDQ    $0x80, AX
-	ADDQ    $0x80, CX
-	ADDQ    $0x80, DX
-	ADDQ    $0x80, BX
+	ADDQ    $0x00000080, AX
+	ADDQ    $0x00000080, CX
+	ADDQ    $0x00000080, DX
+	ADDQ    $0x00000080, BX
 	JMP     sixteen
 
 sixteenend:
@@ -2605,10 +3588,10 @@ four:
 	VMULPD  Y2, Y3, Y3
 	VMOVUPD Y4, (AX)
 	VMOVUPD Y3, (CX)
-	ADDQ    $0x20, AX
-	ADDQ    $0x20, CX
-	ADDQ    $0x20, DX
-	ADDQ    $0x20, BX
+	ADDQ    $0x00000020, AX
+	ADDQ    $0x00000020, CX
+	ADDQ    $0x00000020, DX
+	ADDQ    $0x00000020, BX
 	JMP     four
 
 fourend:
@@ -2649,14 +3632,13 @@ single:
 	VMULSD X2, X3, X3
 	VMOVSD X4, (AX)
 	VMOVSD X3, (CX)
-	ADDQ   $0x08, AX
-	ADDQ   $0x08, CX
-	ADDQ   $0x08, DX
-	ADDQ   $0x08, BX
+	ADDQ   $0x00000008, AX
+	ADDQ   $0x00000008, CX
+	ADDQ   $0x00000008, DX
+	ADDQ   $0x00000008, BX
 	JMP    single
 
 singleend:
-	ADDQ $0x01, SI
 	VZEROUPPER
 	RET
 

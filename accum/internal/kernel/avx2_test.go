@@ -4,6 +4,7 @@ package kernel
 
 import (
 	"testing"
+	"time"
 
 	"golang.org/x/sys/cpu"
 )
@@ -20,6 +21,13 @@ func BenchmarkPeak(b *testing.B) {
 		peakAVX2(n)
 	}
 	b.ReportMetric(peakFlops*n*float64(b.N)/float64(b.Elapsed().Nanoseconds()), "GFLOP/s")
+}
+
+// peakTime is the nanoseconds that n units of peakAVX2 take.
+func peakTime(n int) float64 {
+	from := time.Now()
+	peakAVX2(n)
+	return float64(time.Since(from).Nanoseconds())
 }
 
 // TestDisableAVX2: the tests that name both paths do run both.
@@ -49,14 +57,19 @@ func TestDisableAVX2(t *testing.T) {
 // TestCuts: every tile is reached, and no tile of one column stands beside a
 // wider one.
 func TestCuts(t *testing.T) {
-	for _, most := range []int{3, 4} {
-		for n := 1; n < 50; n++ {
-			for left := n; left > 0; {
-				p := part(left, most)
-				if p < 1 || p > min(left, most) || p == 1 && n > 1 {
-					t.Fatalf("%d columns by %d: a tile of %d with %d left", n, most, p, left)
+	for _, cut := range []struct {
+		part func(n, most int) int
+		most []int
+	}{{part, []int{3, 4}}, {evenPart, narrow[1:]}} {
+		for _, most := range cut.most {
+			for n := 1; n < 50; n++ {
+				for left := n; left > 0; {
+					p := cut.part(left, most)
+					if p < 1 || p > min(left, most) || p == 1 && n > 1 {
+						t.Fatalf("%d columns by %d: a tile of %d with %d left", n, most, p, left)
+					}
+					left -= p
 				}
-				left -= p
 			}
 		}
 	}

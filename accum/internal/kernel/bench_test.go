@@ -3,7 +3,9 @@ package kernel
 import (
 	"fmt"
 	"math/rand/v2"
+	"slices"
 	"testing"
+	"time"
 
 	"gonum.org/v1/gonum/blas"
 	"gonum.org/v1/gonum/blas/blas64"
@@ -58,6 +60,50 @@ func compare(b *testing.B, name string, rows, n int, bytes int64, f, other func(
 	}
 }
 
+// repeated times several calls of f, in nanoseconds.
+func repeated(f func()) func(times int) float64 {
+	return func(times int) float64 {
+		from := time.Now()
+		for range times {
+			f()
+		}
+		return float64(time.Since(from).Nanoseconds())
+	}
+}
+
+// takeTurns runs functions by turns, a millisecond each, and returns the median
+// of their times for one: what slows the machine down for a while slows all.
+func takeTurns(run ...func(times int) float64) []float64 {
+	const rounds, burst = 41, 1e6
+	times := make([]int, len(run))
+	for i, f := range run {
+		f(3)
+		times[i] = max(1, int(burst/(f(10)/10)))
+	}
+	t := make([][]float64, len(run))
+	for range rounds {
+		for i, f := range run {
+			t[i] = append(t[i], f(times[i])/float64(times[i]))
+		}
+	}
+	median := make([]float64, len(run))
+	for i := range t {
+		slices.Sort(t[i])
+		median[i] = t[i][rounds/2]
+	}
+	return median
+}
+
+// versus reports how many times as long as f other takes.
+func versus(b *testing.B, f, other func()) {
+	for b.Loop() {
+		t := takeTurns(repeated(f), repeated(other))
+		b.ReportMetric(t[0], "ns/call")
+		b.ReportMetric(t[1]/t[0], "ratio")
+		b.ReportMetric(0, "ns/op")
+	}
+}
+
 var benchCols = []int{8, 10, 16, 32, 64, 128, 256}
 
 func BenchmarkGram(b *testing.B) {
@@ -92,15 +138,16 @@ func BenchmarkCross(b *testing.B) {
 	}
 }
 
-// BenchmarkCrossNarrow has one column on one side.
+// BenchmarkCrossNarrow has one or two columns on one side.
 func BenchmarkCrossNarrow(b *testing.B) {
-	const rows, cols = 512, 8
-	x, y := benchBlock(rows, 1), benchBlock(rows, cols)
-	dst := make([]float64, cols)
-	compare(b, fmt.Sprintf("rows=%d/cols=1x%d", rows, cols), rows, cols, 8*rows*(1+cols),
-		func() { Cross(dst, cols, x, rows, 1, y, rows, cols, rows) }, nil)
-	compare(b, fmt.Sprintf("rows=%d/cols=%dx1", rows, cols), rows, cols, 8*rows*(1+cols),
-		func() { Cross(dst, 1, y, rows, cols, x, rows, 1, rows) }, nil)
+	const rows = 512
+	for _, shape := range [][2]int{{1, 8}, {8, 1}, {2, 8}, {8, 2}, {1, 55}, {2, 45}} {
+		m, n := shape[0], shape[1]
+		x, y := benchBlock(rows, m), benchBlock(rows, n)
+		dst := make([]float64, m*n)
+		compare(b, fmt.Sprintf("rows=%d/cols=%dx%d", rows, m, n), rows, m*n, int64(8*rows*(m+n)),
+			func() { Cross(dst, n, x, rows, m, y, rows, n, rows) }, nil)
+	}
 }
 
 // BenchmarkGramShort shows what a call costs.

@@ -2,7 +2,11 @@
 
 package kernel
 
-import "golang.org/x/sys/cpu"
+import (
+	"math"
+
+	"golang.org/x/sys/cpu"
+)
 
 //go:generate sh -c "cd _gen && go run main.go -out ../avx2_amd64.s -stubs ../avx2_amd64.go -pkg kernel"
 
@@ -48,6 +52,29 @@ func axpy(t float64, x, y []float64) {
 		axpyAVX2(t, &x[0], &y[0], n)
 	} else {
 		axpyRef(t, x, y)
+	}
+}
+
+func shiftScale(dst, x []float64, m, inv float64) float64 {
+	if n := len(dst); useAVX2 && n > 0 {
+		return shiftScaleAVX2(&dst[0], &x[0], m, inv, n)
+	}
+	return shiftScaleRef(dst, x, m, inv)
+}
+
+func chain(first float64, dst, x []float64, stride int, theta []float64, step, cols int) {
+	if useAVX2 {
+		chainAVX2(first, &dst[0], &x[0], stride, &theta[0], step, cols, len(dst))
+	} else {
+		chainRef(first, dst, x, stride, theta, step, cols)
+	}
+}
+
+func chainSquare(dst, x []float64, stride int, theta []float64, step, cols int) {
+	if useAVX2 {
+		chainSquareAVX2(&dst[0], &x[0], stride, &theta[0], step, cols, len(dst))
+	} else {
+		chainSquareRef(dst, x, stride, theta, step, cols)
 	}
 }
 
@@ -119,15 +146,55 @@ func gramAVX2(dst []float64, x []float64, stride, rows, cols int) {
 }
 
 func crossAVX2(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
-	for j := 0; j < colsB; {
-		p := part(colsB-j, 4)
-		for i := 0; i < colsA; {
-			q := part(colsA-i, 3)
-			rectangle(p, q, &dst[i*ldd+j], ldd, 0, &b[j*strideB], strideB, &a[i*strideA], strideA, rows)
-			i += q
+	switch {
+	case colsA <= 2:
+		for j := 0; j < colsB; {
+			p := evenPart(colsB-j, narrow[colsA])
+			rectangle(p, colsA, &dst[j], ldd, 0, &b[j*strideB], strideB, &a[0], strideA, rows)
+			j += p
 		}
-		j += p
+	case colsB <= 2:
+		for i := 0; i < colsA; {
+			p := evenPart(colsA-i, narrow[colsB])
+			out := [2][8]float64{negZeros, negZeros}
+			rectangle(p, colsB, &out[0][0], len(out[0]), 0, &a[i*strideA], strideA, &b[0], strideB, rows)
+			for k := range p {
+				d := dst[(i+k)*ldd:]
+				for j := range colsB {
+					d[j] += out[j][k]
+				}
+			}
+			i += p
+		}
+	default:
+		for j := 0; j < colsB; {
+			p := part(colsB-j, 4)
+			for i := 0; i < colsA; {
+				q := part(colsA-i, 3)
+				rectangle(p, q, &dst[i*ldd+j], ldd, 0, &b[j*strideB], strideB, &a[i*strideA], strideA, rows)
+				i += q
+			}
+			j += p
+		}
 	}
+}
+
+// narrow is how many columns a tile has with one and two on the other side.
+var narrow = [3]int{1: 8, 2: 6}
+
+// negZeros take a first summand as it is, where zeros would turn -0 into 0.
+var negZeros = func() (z [8]float64) {
+	for i := range z {
+		z[i] = math.Copysign(0, -1)
+	}
+	return z
+}()
+
+// evenPart is how many of the n columns left a tile takes where no more tiles
+// than needed, of about the same width, take all.
+func evenPart(n, most int) int {
+	tiles := (n + most - 1) / most
+	return (n + tiles - 1) / tiles
 }
 
 // part is how many of the n columns left a tile takes: most, or one fewer so
@@ -161,26 +228,38 @@ func rectangle(p, q int, dst *float64, step, grow int, a *float64, strideA int, 
 	switch 4*p + q {
 	case 4*1 + 1:
 		dots1x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*1 + 2:
-		dots1x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*1 + 3:
-		dots1x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*2 + 1:
 		dots2x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*2 + 2:
-		dots2x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*2 + 3:
-		dots2x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*3 + 1:
 		dots3x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*3 + 2:
-		dots3x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*3 + 3:
-		dots3x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*4 + 1:
 		dots4x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*5 + 1:
+		dots5x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*6 + 1:
+		dots6x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*7 + 1:
+		dots7x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*8 + 1:
+		dots8x1AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*1 + 2:
+		dots1x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*2 + 2:
+		dots2x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*3 + 2:
+		dots3x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*4 + 2:
 		dots4x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*5 + 2:
+		dots5x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*6 + 2:
+		dots6x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*1 + 3:
+		dots1x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*2 + 3:
+		dots2x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
+	case 4*3 + 3:
+		dots3x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*4 + 3:
 		dots4x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	}

@@ -20,6 +20,16 @@ func scale(dst, x, w []float64) { scaleRef(dst, x, w) }
 
 func axpy(t float64, x, y []float64) { axpyRef(t, x, y) }
 
+func shiftScale(dst, x []float64, m, inv float64) float64 { return shiftScaleRef(dst, x, m, inv) }
+
+func chain(first float64, dst, x []float64, stride int, theta []float64, step, cols int) {
+	chainRef(first, dst, x, stride, theta, step, cols)
+}
+
+func chainSquare(dst, x []float64, stride int, theta []float64, step, cols int) {
+	chainSquareRef(dst, x, stride, theta, step, cols)
+}
+
 func axpyWide(t, tLow float64, xHi, xLo, yHi, yLo []float64) {
 	axpyWideRef(t, tLow, xHi, xLo, yHi, yLo)
 }

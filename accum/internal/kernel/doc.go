@@ -42,8 +42,10 @@
 // underflow. NaN and infinities propagate by IEEE 754; which NaN comes out is
 // not part of the contract. Zero rows leave dst as it is.
 //
-// GramWide and the other functions on double-doubles follow the same rules with
-// the operations of ref.go in their order.
+// The functions on single elements and on rows (Scale, Axpy, ShiftScale,
+// Combine, Whiten, Leverage) do for each of them the operations their
+// documentation lists, in its order, each rounded once. GramWide and the other
+// functions on double-doubles do those of ref.go.
 //
 // # Implementations
 //

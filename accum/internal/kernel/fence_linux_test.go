@@ -56,6 +56,10 @@ func TestNothingOutsideIsTouched(t *testing.T) {
 				n := cols * (cols + 1) / 2
 				GramWide(cut(d, n), cut(e, n), cut(a, cols*rows), cut(b, cols*rows), rows, rows, cols)
 			}
+			Combine(cut(d, rows), cut(a, 5*rows), rows, rows, 5, cut(e, 5))
+			Whiten(cut(d, 9), 3, cut(a, 3*rows), rows, rows)
+			Leverage(cut(d, rows), cut(a, 3*rows), rows, rows, 3, cut(e, 9), 3)
+			ShiftScale(cut(d, rows), cut(a, rows), 1, 2)
 			AxpyWide(2, 0, cut(a, rows), cut(b, rows), cut(d, rows), cut(e, rows))
 			ScaleWide(cut(d, rows), cut(e, rows), cut(a, rows), cut(b, rows), 2)
 			ShiftScaleWide(cut(d, rows), cut(e, rows), cut(a, rows), cut(b, rows), 1, 0, 2)

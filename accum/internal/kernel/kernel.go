@@ -9,19 +9,8 @@ package kernel
 // slice is shorter, rows or cols is negative, or stride < rows. The bits of the
 // result are those of the package's contract. O(rows cols^2) time, no memory.
 func Gram(dst []float64, x []float64, stride, rows, cols int) {
-	switch {
-	case rows < 0:
-		panic(negRows)
-	case cols < 0:
-		panic(negCols)
-	case stride < rows:
-		panic(badStride)
-	}
-	if rows == 0 || cols == 0 {
+	if !checkBlock(x, stride, rows, cols) {
 		return
-	}
-	if len(x) < (cols-1)*stride+rows {
-		panic(shortX)
 	}
 	if len(dst) < cols*(cols+1)/2 {
 		panic(shortDst)

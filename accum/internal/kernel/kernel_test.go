@@ -127,6 +127,11 @@ func TestCrossBits(t *testing.T) {
 	for _, rows := range rowCounts() {
 		for range 30 {
 			colsA, colsB := 1+rng.IntN(11), 1+rng.IntN(11)
+			if n := rng.IntN(4); n == 0 {
+				colsA = 1 + rng.IntN(2)
+			} else if n == 1 {
+				colsB = 1 + rng.IntN(2)
+			}
 			sa, sb := rows+rng.IntN(4), rows+rng.IntN(4)
 			ldd := colsB + rng.IntN(3)
 			offset := rng.IntN(4)

@@ -188,6 +188,8 @@ func FuzzPaths(f *testing.F) {
 		rng := rand.New(rand.NewPCG(seed, 0))
 		checkPaths(t, rng, int(rows%600), 1+int(colsA%24), 1+int(colsB%24), 1+int(odds))
 		checkElementwise(t, rng, int(rows%600), 1+int(odds))
+		checkChains(t, rng, int(rows%600), int(colsA%80), int(colsB%24), 1+int(odds))
+		checkShiftScale(t, rng, int(rows%600), 1+int(odds))
 		checkGramWide(t, rng, int(rows%600), 1+int(colsA%24), 1+int(odds))
 		checkWideElements(t, rng, int(rows%600), 1+int(odds))
 	})

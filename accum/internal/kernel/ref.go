@@ -140,3 +140,47 @@ func axpyRef(t float64, x, y []float64) {
 		y[i] = math.FMA(t, v, y[i])
 	}
 }
+
+func shiftScaleRef(dst, x []float64, m, inv float64) float64 {
+	x = x[:len(dst)]
+	var lane [lanes]float64
+	i := 0
+	for ; i+lanes <= len(x); i += lanes {
+		for l := range lane {
+			lane[l] += x[i+l]
+			dst[i+l] = (x[i+l] - m) * inv
+		}
+	}
+	for ; i < len(x); i++ {
+		lane[0] += x[i]
+		dst[i] = (x[i] - m) * inv
+	}
+	return (lane[0] + lane[1]) + (lane[2] + lane[3])
+}
+
+// chainRef sets dst[r] to first dst[r] and then, column after column, to
+// fma(theta_j, x_j[r], dst[r]), where theta_j is theta[j*step].
+func chainRef(first float64, dst, x []float64, stride int, theta []float64, step, cols int) {
+	if first != 1 {
+		for r := range dst {
+			dst[r] *= first
+		}
+	}
+	for j := range cols {
+		axpyRef(theta[j*step], x[j*stride:][:len(dst)], dst)
+	}
+}
+
+// chainSquareRef does the same from zero and adds the square to dst.
+func chainSquareRef(dst, x []float64, stride int, theta []float64, step, cols int) {
+	var buf [64]float64
+	for r := 0; r < len(dst); r += len(buf) {
+		h := dst[r:min(r+len(buf), len(dst))]
+		t := buf[:len(h)]
+		clear(t)
+		chainRef(1, t, x[r:], stride, theta, step, cols)
+		for i, v := range t {
+			h[i] = math.FMA(v, v, h[i])
+		}
+	}
+}

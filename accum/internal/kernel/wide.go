@@ -18,19 +18,8 @@ package kernel
 // error of a sum is at most about rows^2/16, and as a rule two, times 2^-106
 // sum |x_i[r] x_j[r]|. About eight times the time of Gram.
 func GramWide(dst, dstLow []float64, hi, lo []float64, stride, rows, cols int) {
-	switch {
-	case rows < 0:
-		panic(negRows)
-	case cols < 0:
-		panic(negCols)
-	case stride < rows:
-		panic(badStride)
-	}
-	if rows == 0 || cols == 0 {
+	if !checkBlock(hi, stride, rows, cols) {
 		return
-	}
-	if len(hi) < (cols-1)*stride+rows {
-		panic(shortX)
 	}
 	if len(lo) < (cols-1)*stride+rows {
 		panic(shortLow)

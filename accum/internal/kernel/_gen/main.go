@@ -13,11 +13,13 @@ import (
 	. "github.com/mmcloughlin/avo/reg"
 )
 
+// maxA is how many columns on one side a tile has with 1, 2 and 3 on the other.
+var maxA = []int{8, 6, 4}
+
 const (
 	lanes = 4
 	group = 8 * lanes // bytes of one group of rows
 
-	maxA, maxB  = 4, 3
 	maxTriangle = 5
 	maxWide     = 4
 )
@@ -26,9 +28,9 @@ func main() {
 	ConstraintExpr("amd64")
 	ConstraintExpr("!noasm")
 	mask := maskTable()
-	for p := 1; p <= maxA; p++ {
-		for q := 1; q <= maxB; q++ {
-			rectangle(mask, p, q)
+	for q := range maxA {
+		for p := range maxA[q] {
+			rectangle(mask, p+1, q+1)
 		}
 	}
 	for p := 1; p <= maxTriangle; p++ {
@@ -36,6 +38,9 @@ func main() {
 	}
 	scale()
 	axpy()
+	shiftScale()
+	chain("chainAVX2", false)
+	chain("chainSquareAVX2", true)
 	for p := 1; p <= maxWide; p++ {
 		wideDots(mask, p)
 	}
@@ -59,9 +64,10 @@ func maskTable() Mem {
 	return m
 }
 
-// columns addresses the current group of rows of up to five columns.
+// columns addresses the current group of rows of up to eight columns.
 type columns struct {
 	base, stride, stride3 Register // strides in bytes
+	high                  Register // place of column 4 where there are more than 5
 	n                     int
 }
 
@@ -76,10 +82,17 @@ func loadColumns(base, stride string, n int) columns {
 		LEAQ(Mem{Base: c.stride, Index: c.stride, Scale: 2}, s)
 		c.stride3 = s
 	}
+	if n > 5 {
+		c.high = GP64()
+		LEAQ(c.at(4), c.high)
+	}
 	return c
 }
 
 func (c columns) at(j int) Mem {
+	if j > 4 {
+		return columns{base: c.high, stride: c.stride, stride3: c.stride3}.at(j - 4)
+	}
 	switch j {
 	case 0:
 		return Mem{Base: c.base}
@@ -94,9 +107,12 @@ func (c columns) at(j int) Mem {
 // with zeros.
 func (c columns) pad(buf Mem, offset Register, mask VecVirtual) {
 	d := c
-	b := GP64()
-	LEAQ(Mem{Base: c.base, Index: offset, Scale: 1}, b)
-	d.base = b
+	d.base = GP64()
+	LEAQ(Mem{Base: c.base, Index: offset, Scale: 1}, d.base)
+	if c.high != nil {
+		d.high = GP64()
+		LEAQ(Mem{Base: c.high, Index: offset, Scale: 1}, d.high)
+	}
 	for j := range c.n {
 		y := YMM()
 		VMASKMOVPD(d.at(j), mask, y)
@@ -107,6 +123,9 @@ func (c columns) pad(buf Mem, offset Register, mask VecVirtual) {
 // turnTo makes the copy in buf the current group.
 func (c columns) turnTo(buf Mem) {
 	LEAQ(buf, c.base)
+	if c.high != nil {
+		LEAQ(buf.Offset(4*group), c.high)
+	}
 	if c.n > 1 {
 		MOVQ(U32(group), c.stride)
 	}
@@ -155,6 +174,9 @@ func sweep(mask Mem, sets []columns, acc []VecVirtual, body func()) {
 	body()
 	for _, c := range sets {
 		ADDQ(Imm(group), c.base)
+		if c.high != nil {
+			ADDQ(Imm(group), c.high)
+		}
 	}
 	DECQ(n)
 	JNZ(LabelRef("loop"))
@@ -309,11 +331,12 @@ func triangle(mask Mem, p int) {
 
 // packed and single are the instructions on four numbers and on one.
 var (
-	packed = arith{YMM, VMOVUPD, VADDPD, VSUBPD, VMULPD, VFMADD231PD, VFMSUB231PD}
-	single = arith{XMM, VMOVSD, VADDSD, VSUBSD, VMULSD, VFMADD231SD, VFMSUB231SD}
+	packed = arith{group, YMM, VMOVUPD, VADDPD, VSUBPD, VMULPD, VFMADD231PD, VFMSUB231PD}
+	single = arith{8, XMM, VMOVSD, VADDSD, VSUBSD, VMULSD, VFMADD231SD, VFMSUB231SD}
 )
 
 type arith struct {
+	size                              int // bytes
 	vector                            func() VecVirtual
 	move, add, sub, mul, fmadd, fmsub func(...Op)
 }
@@ -339,7 +362,7 @@ func (w arith) diff(a, b VecVirtual) VecVirtual {
 
 // of is the part of a broadcast that w works with.
 func (w arith) of(v VecVirtual) VecVirtual {
-	if v.Size() == w.vector().Size() {
+	if w.size == group {
 		return v
 	}
 	return v.AsX().(VecVirtual)
@@ -366,35 +389,69 @@ func (w arith) product(a VecVirtual, al Op, b VecVirtual, bl Op) (p, e VecVirtua
 	return p, e
 }
 
-// elementwise does 16 elements at a time, then 4, then single ones. at is the
-// current place in the vector of that parameter.
+// sweepers are the current places in vectors that are swept over together.
+type sweepers struct {
+	base []Register
+	n    Register // elements left
+}
+
+func loadSweepers(params []string, n string) sweepers {
+	var p sweepers
+	for _, name := range params {
+		p.base = append(p.base, Load(Param(name), GP64()))
+	}
+	p.n = Load(Param(n), GP64())
+	return p
+}
+
+// each runs body as long as there are count elements, and steps over them.
+func (p sweepers) each(label string, count int, body func()) {
+	Label(label)
+	SUBQ(Imm(uint64(count)), p.n)
+	JL(LabelRef(label + "end"))
+	body()
+	for _, b := range p.base {
+		ADDQ(U32(8*count), b)
+	}
+	JMP(LabelRef(label))
+	Label(label + "end")
+	if count > 1 {
+		ADDQ(Imm(uint64(count)), p.n)
+	}
+}
+
+// groups does 16 elements at a time, then 4, and rest single ones. at is the
+// current place in the vector of each parameter.
+func (p sweepers) groups(do func(w arith, at []Mem)) {
+	at := func(k int) []Mem {
+		var at []Mem
+		for _, b := range p.base {
+			at = append(at, Mem{Base: b, Disp: group * k})
+		}
+		return at
+	}
+	p.each("sixteen", 4*lanes, func() {
+		for k := range 4 {
+			do(packed, at(k))
+		}
+	})
+	p.each("four", lanes, func() { do(packed, at(0)) })
+}
+
+func (p sweepers) rest(do func(w arith, at []Mem)) {
+	p.each("single", 1, func() {
+		var at []Mem
+		for _, b := range p.base {
+			at = append(at, Mem{Base: b})
+		}
+		do(single, at)
+	})
+}
+
 func elementwise(params []string, do func(w arith, at []Mem)) {
-	var base []Register
-	for _, p := range params {
-		base = append(base, Load(Param(p), GP64()))
-	}
-	n := Load(Param("n"), GP64())
-	stage := func(label string, count, times int, w arith) {
-		Label(label)
-		SUBQ(Imm(uint64(count)), n)
-		JL(LabelRef(label + "end"))
-		for k := range times {
-			var at []Mem
-			for _, b := range base {
-				at = append(at, Mem{Base: b, Disp: group * k})
-			}
-			do(w, at)
-		}
-		for _, b := range base {
-			ADDQ(Imm(uint64(8*count)), b)
-		}
-		JMP(LabelRef(label))
-		Label(label + "end")
-		ADDQ(Imm(uint64(count)), n)
-	}
-	stage("sixteen", 4*lanes, 4, packed)
-	stage("four", lanes, 1, packed)
-	stage("single", 1, 1, single)
+	p := loadSweepers(params, "n")
+	p.groups(do)
+	p.rest(do)
 	VZEROUPPER()
 	RET()
 }
@@ -431,6 +488,103 @@ func axpy() {
 		w.fmadd(at[0], w.of(t), y)
 		w.move(y, at[1])
 	})
+}
+
+// shiftScale keeps the sum of each lane; the elements after the last whole group
+// are added to the first.
+func shiftScale() {
+	TEXT("shiftScaleAVX2", NOSPLIT, "func(dst, x *float64, m, inv float64, n int) float64")
+	Doc("shiftScaleAVX2 sets dst[i] = (x[i] - m) inv and returns the sum of x.")
+	Pragma("noescape")
+	m, inv, sum := broadcast("m"), broadcast("inv"), YMM()
+	VXORPD(sum, sum, sum)
+	do := func(w arith, at []Mem) {
+		v := w.load(at[1])
+		w.add(v, w.of(sum), w.of(sum))
+		w.sub(w.of(m), v, v)
+		w.mul(w.of(inv), v, v)
+		w.move(v, at[0])
+	}
+	p := loadSweepers([]string{"dst", "x"}, "n")
+	p.groups(do)
+	upper := XMM()
+	VEXTRACTF128(Imm(1), sum, upper)
+	p.rest(do)
+	s := sum.AsX()
+	VHADDPD(s, s, s)
+	VHADDPD(upper, upper, upper)
+	VADDSD(upper, s, s)
+	VZEROUPPER() // before Store, which is not a VEX instruction
+	Store(s, ReturnIndex(0))
+	RET()
+}
+
+// chain keeps the sums of as many rows as there are registers for while it goes
+// through the columns. Squared, the sums start at zero and their squares are
+// added to dst; otherwise they start at first dst and replace it.
+func chain(name string, squared bool) {
+	sig, doc := "first float64, dst", " sets dst[r] = fma(theta_j, x_j[r], .. first dst[r]), column after column."
+	if squared {
+		sig, doc = "dst", " adds to dst[r] the square of fma(theta_j, x_j[r], .. 0), column after column."
+	}
+	TEXT(name, NOSPLIT, "func("+sig+", x *float64, stride int, theta *float64, step, cols, rows int)")
+	Doc(name+doc, "theta_j is step elements behind the one before.")
+	Pragma("noescape")
+	var first VecVirtual
+	if !squared {
+		first = broadcast("first")
+	}
+	p := loadSweepers([]string{"dst", "x"}, "rows")
+	dst, x := p.base[0], p.base[1]
+	stride, theta, step, cols := Load(Param("stride"), GP64()), Load(Param("theta"), GP64()), Load(Param("step"), GP64()), Load(Param("cols"), GP64())
+	SHLQ(Imm(3), stride)
+	SHLQ(Imm(3), step)
+	panel := func(label string, n int, w arith) {
+		p.each(label, n*w.size/8, func() {
+			sum := make([]VecVirtual, n)
+			for i := range sum {
+				if squared {
+					sum[i] = w.vector()
+					VXORPD(sum[i], sum[i], sum[i])
+				} else {
+					sum[i] = w.load(Mem{Base: dst, Disp: w.size * i})
+					w.mul(w.of(first), sum[i], sum[i])
+				}
+			}
+			at, factor, left := GP64(), GP64(), GP64()
+			MOVQ(x, at)
+			MOVQ(theta, factor)
+			MOVQ(cols, left)
+			TESTQ(left, left)
+			JZ(LabelRef(label + "done"))
+			Label(label + "columns")
+			t := YMM()
+			VBROADCASTSD(Mem{Base: factor}, t)
+			for i := range sum {
+				w.fmadd(Mem{Base: at, Disp: w.size * i}, w.of(t), sum[i])
+			}
+			ADDQ(stride, at)
+			ADDQ(step, factor)
+			DECQ(left)
+			JNZ(LabelRef(label + "columns"))
+			Label(label + "done")
+			for i := range sum {
+				d := Mem{Base: dst, Disp: w.size * i}
+				if squared {
+					h := w.load(d)
+					w.fmadd(sum[i], sum[i], h)
+					w.move(h, d)
+				} else {
+					w.move(sum[i], d)
+				}
+			}
+		})
+	}
+	panel("panel", 8, packed)
+	panel("four", 1, packed)
+	panel("single", 1, single)
+	VZEROUPPER()
+	RET()
 }
 
 // wideDots keeps two registers for each dot product: the sums of the lanes and

@@ -1,0 +1,97 @@
+//go:build amd64 && !noasm
+
+package kernel
+
+import (
+	"bufio"
+	"fmt"
+	"io"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"testing"
+)
+
+// BenchmarkOpenBLAS holds Gram against OpenBLAS's dsyrk on one thread: blocks of
+// 512 rows that stay in the cache, the two taking turns every few milliseconds,
+// and the median of each. It needs gcc and libopenblas-dev and runs with
+//
+//	TALLROW_OPENBLAS=1 go test -run xxx -bench OpenBLAS -benchtime 1x ./accum/internal/kernel
+//
+// ratio is OpenBLAS's time over ours: above 1 Gram is faster. peak is the part of
+// the processor's AVX2 multiply-adds that Gram reaches.
+func BenchmarkOpenBLAS(b *testing.B) {
+	if os.Getenv("TALLROW_OPENBLAS") == "" {
+		b.Skip("compares with another library when TALLROW_OPENBLAS is set")
+	}
+	other := startDsyrk(b)
+	const rows, stride = 512, 520
+	for _, cols := range []int{4, 6, 8, 10, 12, 16, 24, 32, 48, 64, 96, 128, 192, 256} {
+		b.Run(fmt.Sprintf("openblas=%s/cols=%d", other.core, cols), func(b *testing.B) {
+			x := benchBlock(stride, cols)
+			dst := make([]float64, cols*(cols+1)/2)
+			ours := repeated(func() { Gram(dst, x, stride, rows, cols) })
+			theirs := func(times int) float64 { return other.run(rows, cols, stride, times) }
+			for b.Loop() {
+				t := takeTurns(ours, theirs, func(times int) float64 { return peakTime(100 * times) })
+				rate := float64(rows*cols*(cols+1)) / t[0]
+				b.ReportMetric(rate, "GFLOP/s")
+				b.ReportMetric(t[1]/t[0], "ratio")
+				b.ReportMetric(100*rate*t[2]/(100*peakFlops), "%peak")
+				b.ReportMetric(0, "ns/op")
+			}
+		})
+	}
+}
+
+type dsyrk struct {
+	b    *testing.B
+	in   io.Writer
+	out  *bufio.Reader
+	core string // the processor whose kernels it chose
+}
+
+func startDsyrk(b *testing.B) *dsyrk {
+	b.Helper()
+	bin := filepath.Join(b.TempDir(), "dsyrk")
+	if out, err := exec.Command("gcc", "-O2", "-o", bin, "testdata/dsyrk.c", "-lopenblas").CombinedOutput(); err != nil {
+		b.Fatalf("%v\n%s", err, out)
+	}
+	cmd := exec.Command(bin)
+	cmd.Env = append(os.Environ(), "OPENBLAS_NUM_THREADS=1")
+	cmd.Stderr = os.Stderr
+	in, err := cmd.StdinPipe()
+	if err != nil {
+		b.Fatal(err)
+	}
+	out, err := cmd.StdoutPipe()
+	if err != nil {
+		b.Fatal(err)
+	}
+	if err := cmd.Start(); err != nil {
+		b.Fatal(err)
+	}
+	b.Cleanup(func() {
+		_ = in.Close()
+		if err := cmd.Wait(); err != nil {
+			b.Error(err)
+		}
+	})
+	d := &dsyrk{b: b, in: in, out: bufio.NewReader(out)}
+	if _, err := fmt.Fscanln(d.out, &d.core); err != nil {
+		b.Fatal(err)
+	}
+	return d
+}
+
+func (d *dsyrk) run(rows, cols, stride, times int) float64 {
+	d.b.Helper()
+	var ns float64
+	if _, err := fmt.Fprintln(d.in, rows, cols, stride, times); err != nil {
+		d.b.Fatal(err)
+	}
+	if _, err := fmt.Fscanln(d.out, &ns); err != nil {
+		d.b.Fatal(err)
+	}
+	return ns
+}
