@@ -39,15 +39,6 @@ func peakOf(st *os.ProcessState) int64 {
 	return 0
 }
 
-// ownPeak is the largest resident set of this process.
-func ownPeak() int64 {
-	var ru syscall.Rusage
-	if syscall.Getrusage(syscall.RUSAGE_SELF, &ru) != nil {
-		return 0
-	}
-	return int64(ru.Maxrss) << 10
-}
-
 // freeBytes is what the disk of dir has left; false if unknown.
 func freeBytes(dir string) (int64, bool) {
 	var st unix.Statfs_t

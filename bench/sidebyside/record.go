@@ -142,9 +142,7 @@ func machine() Machine {
 		family, model := field("/proc/cpuinfo", "cpu family"), field("/proc/cpuinfo", "model")
 		m.CPU += fmt.Sprintf(" (family %s, model %s)", family, model)
 	}
-	if kb, err := strconv.ParseInt(strings.TrimSuffix(field("/proc/meminfo", "MemTotal"), " kB"), 10, 64); err == nil {
-		m.Memory = kb << 10
-	}
+	m.Memory = kibibytes("/proc/meminfo", "MemTotal")
 	if text, err := os.ReadFile("/proc/sys/kernel/osrelease"); err == nil {
 		m.Kernel = strings.TrimSpace(string(text))
 	}
@@ -168,6 +166,18 @@ func field(file, name string) string {
 	}
 	return ""
 }
+
+func kibibytes(file, name string) int64 {
+	n, err := strconv.ParseInt(strings.TrimSuffix(field(file, name), " kB"), 10, 64)
+	if err != nil {
+		return 0
+	}
+	return n << 10
+}
+
+// ownPeak is the largest resident set of this program, without that of the one
+// that started it, which rusage counts in.
+func ownPeak() int64 { return kibibytes("/proc/self/status", "VmHWM") }
 
 func commit(root string) string {
 	git := func(args ...string) (string, error) {
