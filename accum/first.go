@@ -168,12 +168,7 @@ func (w *firstWorker) countNonzero(j int) {
 		return
 	}
 	x := w.block.X[j][:w.block.Rows]
-	var zero int64
-	for _, v := range x {
-		if v == 0 {
-			zero++
-		}
-	}
+	zero := int64(kernel.Zeros(x))
 	if !w.varied[j] && zero < int64(len(x)) {
 		for _, v := range x {
 			if v == 0 {

@@ -71,16 +71,13 @@ func (q *quartic) add(dst, z []float64, rows int) {
 		n := min(quarticRows, rows-r)
 		k := 0
 		for c := range q.p {
-			for d := c; d < q.p; d++ {
-				kernel.Scale(q.pair[k*quarticStride:k*quarticStride+n], z[c*stride+r:c*stride+r+n], z[d*stride+r:d*stride+r+n])
-				k++
-			}
+			zc := z[c*stride+r:]
+			kernel.ScaleColumns(q.pair[k*quarticStride:], quarticStride, zc, stride, n, q.p-c, zc)
+			k += q.p - c
 		}
 		all := q.pairs(0)
 		for b := range q.p {
-			for a := 0; a <= b; a++ {
-				kernel.Scale(q.left[a*quarticStride:a*quarticStride+n], z[a*stride+r:a*stride+r+n], z[b*stride+r:b*stride+r+n])
-			}
+			kernel.ScaleColumns(q.left, quarticStride, z[r:], stride, n, b+1, z[b*stride+r:])
 			np := q.pairs(b)
 			kernel.Cross(dst[q.off[b]:q.off[b+1]], np, q.left, quarticStride, b+1, q.pair[(all-np)*quarticStride:], quarticStride, np, n)
 		}

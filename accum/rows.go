@@ -149,10 +149,7 @@ func (w *loader) whitenCarefully() {
 
 // scaled writes the columns of z times w to dst.
 func (w *loader) scaled(dst, by []float64, cols int) {
-	n := w.block.Rows
-	for j := range cols {
-		kernel.Scale(dst[j*stride:j*stride+n], w.z[j*stride:j*stride+n], by[:n])
-	}
+	kernel.ScaleColumns(dst, stride, w.z, stride, w.block.Rows, cols, by)
 }
 
 func sum4(x []float64) float64 {

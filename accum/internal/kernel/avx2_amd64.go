@@ -157,6 +157,16 @@ func axpyAVX2(t float64, x *float64, y *float64, n int)
 //go:noescape
 func shiftScaleAVX2(dst *float64, x *float64, m float64, inv float64, n int) float64
 
+// scaleColumnsAVX2 sets dst_j[r] = x_j[r] w[r].
+//
+//go:noescape
+func scaleColumnsAVX2(dst *float64, strideDst int, x *float64, stride int, w *float64, cols int, rows int)
+
+// zerosAVX2 counts the zeros among n elements but for those after the last whole four.
+//
+//go:noescape
+func zerosAVX2(x *float64, n int) int
+
 // chainAVX2 sets dst[r] = fma(theta_j, x_j[r], .. first dst[r]), column after column.
 // theta_j is step elements behind the one before.
 //

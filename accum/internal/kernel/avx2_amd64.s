@@ -2347,6 +2347,176 @@ singleend:
 	MOVSD   X2, ret+40(FP)
 	RET
 
+// func scaleColumnsAVX2(dst *float64, strideDst int, x *float64, stride int, w *float64, cols int, rows int)
+// Requires: AVX
+TEXT ·scaleColumnsAVX2(SB), NOSPLIT, $0-56
+	MOVQ dst+0(FP), AX
+	MOVQ x+16(FP), CX
+	MOVQ w+32(FP), DX
+	MOVQ rows+48(FP), BX
+	MOVQ strideDst+8(FP), DI
+	SHLQ $0x03, DI
+	MOVQ stride+24(FP), R9
+	SHLQ $0x03, R9
+	MOVQ cols+40(FP), R10
+
+panel:
+	SUBQ    $0x20, BX
+	JL      panelend
+	VMOVUPD (DX), Y0
+	VMOVUPD 32(DX), Y1
+	VMOVUPD 64(DX), Y2
+	VMOVUPD 96(DX), Y3
+	VMOVUPD 128(DX), Y4
+	VMOVUPD 160(DX), Y5
+	VMOVUPD 192(DX), Y6
+	VMOVUPD 224(DX), Y7
+	MOVQ    AX, SI
+	MOVQ    CX, R8
+	MOVQ    R10, R11
+	TESTQ   R11, R11
+	JZ      paneldone
+
+panelcolumns:
+	VMOVUPD (R8), Y8
+	VMULPD  Y0, Y8, Y8
+	VMOVUPD Y8, (SI)
+	VMOVUPD 32(R8), Y8
+	VMULPD  Y1, Y8, Y8
+	VMOVUPD Y8, 32(SI)
+	VMOVUPD 64(R8), Y8
+	VMULPD  Y2, Y8, Y8
+	VMOVUPD Y8, 64(SI)
+	VMOVUPD 96(R8), Y8
+	VMULPD  Y3, Y8, Y8
+	VMOVUPD Y8, 96(SI)
+	VMOVUPD 128(R8), Y8
+	VMULPD  Y4, Y8, Y8
+	VMOVUPD Y8, 128(SI)
+	VMOVUPD 160(R8), Y8
+	VMULPD  Y5, Y8, Y8
+	VMOVUPD Y8, 160(SI)
+	VMOVUPD 192(R8), Y8
+	VMULPD  Y6, Y8, Y8
+	VMOVUPD Y8, 192(SI)
+	VMOVUPD 224(R8), Y8
+	VMULPD  Y7, Y8, Y8
+	VMOVUPD Y8, 224(SI)
+	ADDQ    DI, SI
+	ADDQ    R9, R8
+	DECQ    R11
+	JNZ     panelcolumns
+
+paneldone:
+	ADDQ $0x00000100, AX
+	ADDQ $0x00000100, CX
+	ADDQ $0x00000100, DX
+	JMP  panel
+
+panelend:
+	ADDQ $0x20, BX
+
+four:
+	SUBQ    $0x04, BX
+	JL      fourend
+	VMOVUPD (DX), Y0
+	MOVQ    AX, SI
+	MOVQ    CX, R8
+	MOVQ    R10, R11
+	TESTQ   R11, R11
+	JZ      fourdone
+
+fourcolumns:
+	VMOVUPD (R8), Y1
+	VMULPD  Y0, Y1, Y1
+	VMOVUPD Y1, (SI)
+	ADDQ    DI, SI
+	ADDQ    R9, R8
+	DECQ    R11
+	JNZ     fourcolumns
+
+fourdone:
+	ADDQ $0x00000020, AX
+	ADDQ $0x00000020, CX
+	ADDQ $0x00000020, DX
+	JMP  four
+
+fourend:
+	ADDQ $0x04, BX
+
+single:
+	SUBQ   $0x01, BX
+	JL     singleend
+	VMOVSD (DX), X0
+	MOVQ   AX, SI
+	MOVQ   CX, R8
+	MOVQ   R10, R11
+	TESTQ  R11, R11
+	JZ     singledone
+
+singlecolumns:
+	VMOVSD (R8), X1
+	VMULSD X0, X1, X1
+	VMOVSD X1, (SI)
+	ADDQ   DI, SI
+	ADDQ   R9, R8
+	DECQ   R11
+	JNZ    singlecolumns
+
+singledone:
+	ADDQ $0x00000008, AX
+	ADDQ $0x00000008, CX
+	ADDQ $0x00000008, DX
+	JMP  single
+
+singleend:
+	VZEROUPPER
+	RET
+
+// func zerosAVX2(x *float64, n int) int
+// Requires: AVX, AVX2
+TEXT ·zerosAVX2(SB), NOSPLIT, $0-24
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	MOVQ   x+0(FP), AX
+	MOVQ   n+8(FP), CX
+
+sixteen:
+	SUBQ   $0x10, CX
+	JL     sixteenend
+	VCMPPD $0x00, (AX), Y0, Y2
+	VPSUBQ Y2, Y1, Y1
+	VCMPPD $0x00, 32(AX), Y0, Y2
+	VPSUBQ Y2, Y1, Y1
+	VCMPPD $0x00, 64(AX), Y0, Y2
+	VPSUBQ Y2, Y1, Y1
+	VCMPPD $0x00, 96(AX), Y0, Y2
+	VPSUBQ Y2, Y1, Y1
+	ADDQ   $0x00000080, AX
+	JMP    sixteen
+
+sixteenend:
+	ADDQ $0x10, CX
+
+four:
+	SUBQ   $0x04, CX
+	JL     fourend
+	VCMPPD $0x00, (AX), Y0, Y2
+	VPSUBQ Y2, Y1, Y1
+	ADDQ   $0x00000020, AX
+	JMP    four
+
+fourend:
+	ADDQ         $0x04, CX
+	VEXTRACTI128 $0x01, Y1, X0
+	VPADDQ       X0, X1, X1
+	VPUNPCKHQDQ  X1, X1, X0
+	VPADDQ       X0, X1, X1
+	VMOVQ        X1, AX
+	MOVQ         AX, ret+16(FP)
+	VZEROUPPER
+	RET
+
 // func chainAVX2(first float64, dst *float64, x *float64, stride int, theta *float64, step int, cols int, rows int)
 // Requires: AVX, FMA3
 TEXT ·chainAVX2(SB), NOSPLIT, $0-64
@@ -2354,12 +2524,12 @@ TEXT ·chainAVX2(SB), NOSPLIT, $0-64
 	MOVQ         dst+8(FP), AX
 	MOVQ         x+16(FP), CX
 	MOVQ         rows+56(FP), DX
-	MOVQ         stride+24(FP), BX
-	MOVQ         theta+32(FP), SI
-	MOVQ         step+40(FP), DI
-	MOVQ         cols+48(FP), R8
-	SHLQ         $0x03, BX
-	SHLQ         $0x03, DI
+	MOVQ         stride+24(FP), SI
+	SHLQ         $0x03, SI
+	MOVQ         theta+32(FP), DI
+	MOVQ         step+40(FP), R9
+	SHLQ         $0x03, R9
+	MOVQ         cols+48(FP), R10
 
 panel:
 	SUBQ    $0x20, DX
@@ -2380,24 +2550,24 @@ panel:
 	VMULPD  Y0, Y7, Y7
 	VMOVUPD 224(AX), Y8
 	VMULPD  Y0, Y8, Y8
-	MOVQ    CX, R9
-	MOVQ    SI, R10
-	MOVQ    R8, R11
+	MOVQ    CX, BX
+	MOVQ    DI, R8
+	MOVQ    R10, R11
 	TESTQ   R11, R11
 	JZ      paneldone
 
 panelcolumns:
-	VBROADCASTSD (R10), Y9
-	VFMADD231PD  (R9), Y9, Y1
-	VFMADD231PD  32(R9), Y9, Y2
-	VFMADD231PD  64(R9), Y9, Y3
-	VFMADD231PD  96(R9), Y9, Y4
-	VFMADD231PD  128(R9), Y9, Y5
-	VFMADD231PD  160(R9), Y9, Y6
-	VFMADD231PD  192(R9), Y9, Y7
-	VFMADD231PD  224(R9), Y9, Y8
-	ADDQ         BX, R9
-	ADDQ         DI, R10
+	VBROADCASTSD (R8), Y9
+	VFMADD231PD  (BX), Y9, Y1
+	VFMADD231PD  32(BX), Y9, Y2
+	VFMADD231PD  64(BX), Y9, Y3
+	VFMADD231PD  96(BX), Y9, Y4
+	VFMADD231PD  128(BX), Y9, Y5
+	VFMADD231PD  160(BX), Y9, Y6
+	VFMADD231PD  192(BX), Y9, Y7
+	VFMADD231PD  224(BX), Y9, Y8
+	ADDQ         SI, BX
+	ADDQ         R9, R8
 	DECQ         R11
 	JNZ          panelcolumns
 
@@ -2422,17 +2592,17 @@ four:
 	JL      fourend
 	VMOVUPD (AX), Y1
 	VMULPD  Y0, Y1, Y1
-	MOVQ    CX, R9
-	MOVQ    SI, R10
-	MOVQ    R8, R11
+	MOVQ    CX, BX
+	MOVQ    DI, R8
+	MOVQ    R10, R11
 	TESTQ   R11, R11
 	JZ      fourdone
 
 fourcolumns:
-	VBROADCASTSD (R10), Y2
-	VFMADD231PD  (R9), Y2, Y1
-	ADDQ         BX, R9
-	ADDQ         DI, R10
+	VBROADCASTSD (R8), Y2
+	VFMADD231PD  (BX), Y2, Y1
+	ADDQ         SI, BX
+	ADDQ         R9, R8
 	DECQ         R11
 	JNZ          fourcolumns
 
@@ -2450,17 +2620,17 @@ single:
 	JL     singleend
 	VMOVSD (AX), X1
 	VMULSD X0, X1, X1
-	MOVQ   CX, R9
-	MOVQ   SI, R10
-	MOVQ   R8, R11
+	MOVQ   CX, BX
+	MOVQ   DI, R8
+	MOVQ   R10, R11
 	TESTQ  R11, R11
 	JZ     singledone
 
 singlecolumns:
-	VBROADCASTSD (R10), Y2
-	VFMADD231SD  (R9), X2, X1
-	ADDQ         BX, R9
-	ADDQ         DI, R10
+	VBROADCASTSD (R8), Y2
+	VFMADD231SD  (BX), X2, X1
+	ADDQ         SI, BX
+	ADDQ         R9, R8
 	DECQ         R11
 	JNZ          singlecolumns
 
@@ -2480,12 +2650,12 @@ TEXT ·chainSquareAVX2(SB), NOSPLIT, $0-56
 	MOVQ dst+0(FP), AX
 	MOVQ x+8(FP), CX
 	MOVQ rows+48(FP), DX
-	MOVQ stride+16(FP), BX
-	MOVQ theta+24(FP), SI
-	MOVQ step+32(FP), DI
-	MOVQ cols+40(FP), R8
-	SHLQ $0x03, BX
-	SHLQ $0x03, DI
+	MOVQ stride+16(FP), SI
+	SHLQ $0x03, SI
+	MOVQ theta+24(FP), DI
+	MOVQ step+32(FP), R9
+	SHLQ $0x03, R9
+	MOVQ cols+40(FP), R10
 
 panel:
 	SUBQ   $0x20, DX
@@ -2498,24 +2668,24 @@ panel:
 	VXORPD Y5, Y5, Y5
 	VXORPD Y6, Y6, Y6
 	VXORPD Y7, Y7, Y7
-	MOVQ   CX, R9
-	MOVQ   SI, R10
-	MOVQ   R8, R11
+	MOVQ   CX, BX
+	MOVQ   DI, R8
+	MOVQ   R10, R11
 	TESTQ  R11, R11
 	JZ     paneldone
 
 panelcolumns:
-	VBROADCASTSD (R10), Y8
-	VFMADD231PD  (R9), Y8, Y0
-	VFMADD231PD  32(R9), Y8, Y1
-	VFMADD231PD  64(R9), Y8, Y2
-	VFMADD231PD  96(R9), Y8, Y3
-	VFMADD231PD  128(R9), Y8, Y4
-	VFMADD231PD  160(R9), Y8, Y5
-	VFMADD231PD  192(R9), Y8, Y6
-	VFMADD231PD  224(R9), Y8, Y7
-	ADDQ         BX, R9
-	ADDQ         DI, R10
+	VBROADCASTSD (R8), Y8
+	VFMADD231PD  (BX), Y8, Y0
+	VFMADD231PD  32(BX), Y8, Y1
+	VFMADD231PD  64(BX), Y8, Y2
+	VFMADD231PD  96(BX), Y8, Y3
+	VFMADD231PD  128(BX), Y8, Y4
+	VFMADD231PD  160(BX), Y8, Y5
+	VFMADD231PD  192(BX), Y8, Y6
+	VFMADD231PD  224(BX), Y8, Y7
+	ADDQ         SI, BX
+	ADDQ         R9, R8
 	DECQ         R11
 	JNZ          panelcolumns
 
@@ -2555,17 +2725,17 @@ four:
 	SUBQ   $0x04, DX
 	JL     fourend
 	VXORPD Y0, Y0, Y0
-	MOVQ   CX, R9
-	MOVQ   SI, R10
-	MOVQ   R8, R11
+	MOVQ   CX, BX
+	MOVQ   DI, R8
+	MOVQ   R10, R11
 	TESTQ  R11, R11
 	JZ     fourdone
 
 fourcolumns:
-	VBROADCASTSD (R10), Y1
-	VFMADD231PD  (R9), Y1, Y0
-	ADDQ         BX, R9
-	ADDQ         DI, R10
+	VBROADCASTSD (R8), Y1
+	VFMADD231PD  (BX), Y1, Y0
+	ADDQ         SI, BX
+	ADDQ         R9, R8
 	DECQ         R11
 	JNZ          fourcolumns
 
@@ -2584,17 +2754,17 @@ single:
 	SUBQ   $0x01, DX
 	JL     singleend
 	VXORPD X0, X0, X0
-	MOVQ   CX, R9
-	MOVQ   SI, R10
-	MOVQ   R8, R11
+	MOVQ   CX, BX
+	MOVQ   DI, R8
+	MOVQ   R10, R11
 	TESTQ  R11, R11
 	JZ     singledone
 
 singlecolumns:
-	VBROADCASTSD (R10), Y1
-	VFMADD231SD  (R9), X1, X0
-	ADDQ         BX, R9
-	ADDQ         DI, R10
+	VBROADCASTSD (R8), Y1
+	VFMADD231SD  (BX), X1, X0
+	ADDQ         SI, BX
+	ADDQ         R9, R8
 	DECQ         R11
 	JNZ          singlecolumns
 

@@ -36,6 +36,33 @@ func Combine(dst, x []float64, stride, rows, cols int, theta []float64) {
 	chain(1, dst[:rows], x, stride, theta, 1, cols)
 }
 
+// ScaleColumns sets the columns of one block to those of another, row r times
+// w[r]:
+//
+//	dst_j[r] = x_j[r] w[r]    for j < cols
+//
+// where dst_j is dst[j*strideDst : j*strideDst+rows] and x_j likewise. dst may be x
+// with the same stride but must not overlap it otherwise, nor w. ScaleColumns panics when a slice is too short, rows or cols is
+// negative, or a stride is below rows. O(rows cols) time, no memory.
+func ScaleColumns(dst []float64, strideDst int, x []float64, stride, rows, cols int, w []float64) {
+	if !checkBlock(x, stride, rows, cols) {
+		return
+	}
+	if strideDst < rows {
+		panic(badStride)
+	}
+	if len(dst) < (cols-1)*strideDst+rows {
+		panic(shortDst)
+	}
+	if len(w) < rows {
+		panic(shortW)
+	}
+	scaleColumns(dst, strideDst, x, stride, cols, w[:rows])
+}
+
+// Zeros counts the elements of x that are zero, of either sign.
+func Zeros(x []float64) int { return zeros(x) }
+
 // Whiten multiplies the rows of a block by an upper triangle, in place:
 //
 //	z_j[r] = sum_{i <= j} T_ij z_i[r]    for 0 <= j < p

@@ -119,9 +119,30 @@ func checkChains(t *testing.T, rng *rand.Rand, rows, cols, k, odds int) {
 			sameAll(t, fmt.Sprintf("%s%s, %d rows, %d columns, %d", c.name, path, rows, cols, k), got, want)
 			checkGuards(t, whole, offset, rows)
 		}
+		scaled, sd := make([]float64, n), stride+3
+		for j := range cols {
+			scaleRef(scaled[j*stride:][:rows], x[j*stride:], start)
+		}
+		nd := max(0, (cols-1)*sd+rows)
+		whole, got := guarded(nd, offset)
+		ScaleColumns(got, sd, x, stride, rows, cols, start)
+		for j := range cols {
+			sameAll(t, fmt.Sprintf("ScaleColumns%s, %d rows, column %d of %d", path, rows, j, cols), got[j*sd:][:rows], scaled[j*stride:][:rows])
+			for r := j*sd + rows; r < min((j+1)*sd, nd); r++ {
+				if !math.IsNaN(got[r]) {
+					t.Fatalf("ScaleColumns%s: wrote %d rows behind column %d of %d", path, rows, j, cols)
+				}
+			}
+		}
+		checkGuards(t, whole, offset, nd)
+		got = slices.Clone(x)
+		ScaleColumns(got, stride, got, stride, rows, cols, start)
+		for j := range cols {
+			sameAll(t, "ScaleColumns in place"+path, got[j*stride:][:rows], scaled[j*stride:][:rows])
+		}
 		want := slices.Clone(x)
 		whitenRef(tri, cols, want, stride, rows)
-		whole, got := guarded(n, offset)
+		whole, got = guarded(n, offset)
 		copy(got, x)
 		Whiten(tri, cols, got, stride, rows)
 		sameAll(t, fmt.Sprintf("Whiten%s, %d rows, %d columns", path, rows, cols), got, want)
@@ -189,6 +210,27 @@ func TestShiftScaleBits(t *testing.T) {
 	}
 }
 
+func TestZeros(t *testing.T) {
+	rng := rand.New(rand.NewPCG(35, 36))
+	for _, n := range rowCounts() {
+		for _, odds := range []int{1, 2, 1000} {
+			whole, x := guarded(n, rng.IntN(4))
+			draw(rng, x, odds)
+			for i := range whole {
+				if math.IsNaN(whole[i]) {
+					whole[i] = 0 // around x, and counted if read
+				}
+			}
+			want := zerosRef(x)
+			inBoth(func(path string) {
+				if got := Zeros(x); got != want {
+					t.Fatalf("Zeros%s of %d finds %d, want %d", path, n, got, want)
+				}
+			})
+		}
+	}
+}
+
 // TestChains: small cases worked by hand, with numbers that are exact.
 func TestChains(t *testing.T) {
 	x := []float64{
@@ -212,6 +254,9 @@ func TestChains(t *testing.T) {
 	if sum := ShiftScale(dst, []float64{1, 2, 4, 8}, 1, 0.5); sum != 7 {
 		t.Errorf("ShiftScale of 3 elements: sum %v, want 7", sum)
 	}
+	if n := Zeros([]float64{0, math.Copysign(0, -1), 0x1p-1074, math.NaN(), 0}); n != 3 {
+		t.Errorf("Zeros finds %d, want 3", n)
+	}
 	sameAll(t, "ShiftScale", dst, []float64{0, 0.5, 1.5})
 }
 
@@ -228,6 +273,11 @@ func TestChainMisuse(t *testing.T) {
 		{shortX, func() { Combine(f(3), f(6), 4, 3, 2, f(2)) }},
 		{shortDst, func() { Combine(f(2), f(7), 4, 3, 2, f(2)) }},
 		{shortTheta, func() { Combine(f(3), f(7), 4, 3, 2, f(1)) }},
+		{negCols, func() { ScaleColumns(f(9), 3, f(9), 3, 3, -1, f(3)) }},
+		{badStride, func() { ScaleColumns(f(9), 2, f(9), 3, 3, 2, f(3)) }},
+		{shortX, func() { ScaleColumns(f(9), 3, f(6), 4, 3, 2, f(3)) }},
+		{shortDst, func() { ScaleColumns(f(6), 4, f(9), 3, 3, 2, f(3)) }},
+		{shortW, func() { ScaleColumns(f(9), 3, f(9), 3, 3, 2, f(2)) }},
 		{negCols, func() { Whiten(f(4), -2, f(7), 4, 3) }},
 		{shortX, func() { Whiten(f(4), 2, f(6), 4, 3) }},
 		{shortT, func() { Whiten(f(3), 2, f(7), 4, 3) }},
@@ -241,6 +291,7 @@ func TestChainMisuse(t *testing.T) {
 	ShiftScale(nil, f(1), 1, 1)
 	Combine(nil, nil, 5, 0, 2, nil)
 	Combine(nil, nil, 5, 5, 0, nil)
+	ScaleColumns(nil, 5, nil, 5, 0, 2, nil)
 	Whiten(nil, 0, nil, 5, 5)
 	Leverage(nil, nil, 5, 5, 0, nil, 3)
 }

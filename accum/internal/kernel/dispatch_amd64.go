@@ -62,6 +62,22 @@ func shiftScale(dst, x []float64, m, inv float64) float64 {
 	return shiftScaleRef(dst, x, m, inv)
 }
 
+func scaleColumns(dst []float64, strideDst int, x []float64, stride, cols int, w []float64) {
+	if useAVX2 {
+		scaleColumnsAVX2(&dst[0], strideDst, &x[0], stride, &w[0], cols, len(w))
+	} else {
+		scaleColumnsRef(dst, strideDst, x, stride, cols, w)
+	}
+}
+
+func zeros(x []float64) int {
+	n := len(x)
+	if !useAVX2 || n == 0 {
+		return zerosRef(x)
+	}
+	return zerosAVX2(&x[0], n) + zerosRef(x[n/lanes*lanes:])
+}
+
 func chain(first float64, dst, x []float64, stride int, theta []float64, step, cols int) {
 	if useAVX2 {
 		chainAVX2(first, &dst[0], &x[0], stride, &theta[0], step, cols, len(dst))

@@ -22,6 +22,12 @@ func axpy(t float64, x, y []float64) { axpyRef(t, x, y) }
 
 func shiftScale(dst, x []float64, m, inv float64) float64 { return shiftScaleRef(dst, x, m, inv) }
 
+func scaleColumns(dst []float64, strideDst int, x []float64, stride, cols int, w []float64) {
+	scaleColumnsRef(dst, strideDst, x, stride, cols, w)
+}
+
+func zeros(x []float64) int { return zerosRef(x) }
+
 func chain(first float64, dst, x []float64, stride int, theta []float64, step, cols int) {
 	chainRef(first, dst, x, stride, theta, step, cols)
 }

@@ -57,6 +57,8 @@ func TestNothingOutsideIsTouched(t *testing.T) {
 				GramWide(cut(d, n), cut(e, n), cut(a, cols*rows), cut(b, cols*rows), rows, rows, cols)
 			}
 			Combine(cut(d, rows), cut(a, 5*rows), rows, rows, 5, cut(e, 5))
+			ScaleColumns(cut(a, 5*rows), rows, cut(b, 5*rows), rows, rows, 5, cut(e, rows))
+			Zeros(cut(a, rows))
 			Whiten(cut(d, 9), 3, cut(a, 3*rows), rows, rows)
 			Leverage(cut(d, rows), cut(a, 3*rows), rows, rows, 3, cut(e, 9), 3)
 			ShiftScale(cut(d, rows), cut(a, rows), 1, 2)

@@ -184,3 +184,19 @@ func chainSquareRef(dst, x []float64, stride int, theta []float64, step, cols in
 		}
 	}
 }
+
+func scaleColumnsRef(dst []float64, strideDst int, x []float64, stride, cols int, w []float64) {
+	for j := range cols {
+		scaleRef(dst[j*strideDst:][:len(w)], x[j*stride:], w)
+	}
+}
+
+func zerosRef(x []float64) int {
+	n := 0
+	for _, v := range x {
+		if v == 0 {
+			n++
+		}
+	}
+	return n
+}

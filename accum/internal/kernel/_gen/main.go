@@ -39,6 +39,8 @@ func main() {
 	scale()
 	axpy()
 	shiftScale()
+	scaleColumns()
+	zeros()
 	chain("chainAVX2", false)
 	chain("chainSquareAVX2", true)
 	for p := 1; p <= maxWide; p++ {
@@ -519,9 +521,51 @@ func shiftScale() {
 	RET()
 }
 
-// chain keeps the sums of as many rows as there are registers for while it goes
-// through the columns. Squared, the sums start at zero and their squares are
-// added to dst; otherwise they start at first dst and replace it.
+// panels cuts rows into panels that fit registers. start fills n registers of w
+// for the panel at p, each uses them for every column, after which the places in
+// moves go on, and end is left with them.
+func (p sweepers) panels(cols Register, start func(w arith, n int) []VecVirtual, moves []move, each, end func(w arith, v []VecVirtual)) {
+	one := func(label string, n int, w arith) {
+		p.each(label, n*w.size/8, func() {
+			v := start(w, n)
+			left := GP64()
+			for i := range moves {
+				MOVQ(moves[i].from, moves[i].at)
+			}
+			MOVQ(cols, left)
+			TESTQ(left, left)
+			JZ(LabelRef(label + "done"))
+			Label(label + "columns")
+			each(w, v)
+			for _, m := range moves {
+				ADDQ(m.by, m.at)
+			}
+			DECQ(left)
+			JNZ(LabelRef(label + "columns"))
+			Label(label + "done")
+			end(w, v)
+		})
+	}
+	one("panel", 8, packed)
+	one("four", 1, packed)
+	one("single", 1, single)
+	VZEROUPPER()
+	RET()
+}
+
+// move is a place that starts anew for each panel and goes on by so many bytes
+// after each column.
+type move struct{ from, at, by Register }
+
+func moving(from Register, by string) move {
+	m := move{from, GP64(), Load(Param(by), GP64())}
+	SHLQ(Imm(3), m.by)
+	return m
+}
+
+// chain keeps the sums of a panel of rows in registers. Squared, they start at
+// zero and their squares are added to dst; otherwise they start at first dst and
+// replace it.
 func chain(name string, squared bool) {
 	sig, doc := "first float64, dst", " sets dst[r] = fma(theta_j, x_j[r], .. first dst[r]), column after column."
 	if squared {
@@ -535,54 +579,84 @@ func chain(name string, squared bool) {
 		first = broadcast("first")
 	}
 	p := loadSweepers([]string{"dst", "x"}, "rows")
-	dst, x := p.base[0], p.base[1]
-	stride, theta, step, cols := Load(Param("stride"), GP64()), Load(Param("theta"), GP64()), Load(Param("step"), GP64()), Load(Param("cols"), GP64())
-	SHLQ(Imm(3), stride)
-	SHLQ(Imm(3), step)
-	panel := func(label string, n int, w arith) {
-		p.each(label, n*w.size/8, func() {
-			sum := make([]VecVirtual, n)
-			for i := range sum {
-				if squared {
-					sum[i] = w.vector()
-					VXORPD(sum[i], sum[i], sum[i])
-				} else {
-					sum[i] = w.load(Mem{Base: dst, Disp: w.size * i})
-					w.mul(w.of(first), sum[i], sum[i])
-				}
+	dst := p.base[0]
+	x, theta := moving(p.base[1], "stride"), moving(Load(Param("theta"), GP64()), "step")
+	p.panels(Load(Param("cols"), GP64()), func(w arith, n int) []VecVirtual {
+		sum := make([]VecVirtual, n)
+		for i := range sum {
+			if squared {
+				sum[i] = w.vector()
+				VXORPD(sum[i], sum[i], sum[i])
+			} else {
+				sum[i] = w.load(Mem{Base: dst, Disp: w.size * i})
+				w.mul(w.of(first), sum[i], sum[i])
 			}
-			at, factor, left := GP64(), GP64(), GP64()
-			MOVQ(x, at)
-			MOVQ(theta, factor)
-			MOVQ(cols, left)
-			TESTQ(left, left)
-			JZ(LabelRef(label + "done"))
-			Label(label + "columns")
-			t := YMM()
-			VBROADCASTSD(Mem{Base: factor}, t)
-			for i := range sum {
-				w.fmadd(Mem{Base: at, Disp: w.size * i}, w.of(t), sum[i])
+		}
+		return sum
+	}, []move{x, theta}, func(w arith, sum []VecVirtual) {
+		t := YMM()
+		VBROADCASTSD(Mem{Base: theta.at}, t)
+		for i := range sum {
+			w.fmadd(Mem{Base: x.at, Disp: w.size * i}, w.of(t), sum[i])
+		}
+	}, func(w arith, sum []VecVirtual) {
+		for i := range sum {
+			d := Mem{Base: dst, Disp: w.size * i}
+			if squared {
+				h := w.load(d)
+				w.fmadd(sum[i], sum[i], h)
+				w.move(h, d)
+			} else {
+				w.move(sum[i], d)
 			}
-			ADDQ(stride, at)
-			ADDQ(step, factor)
-			DECQ(left)
-			JNZ(LabelRef(label + "columns"))
-			Label(label + "done")
-			for i := range sum {
-				d := Mem{Base: dst, Disp: w.size * i}
-				if squared {
-					h := w.load(d)
-					w.fmadd(sum[i], sum[i], h)
-					w.move(h, d)
-				} else {
-					w.move(sum[i], d)
-				}
-			}
-		})
-	}
-	panel("panel", 8, packed)
-	panel("four", 1, packed)
-	panel("single", 1, single)
+		}
+	})
+}
+
+// scaleColumns keeps the factors of a panel of rows in registers.
+func scaleColumns() {
+	TEXT("scaleColumnsAVX2", NOSPLIT, "func(dst *float64, strideDst int, x *float64, stride int, w *float64, cols, rows int)")
+	Doc("scaleColumnsAVX2 sets dst_j[r] = x_j[r] w[r].")
+	Pragma("noescape")
+	p := loadSweepers([]string{"dst", "x", "w"}, "rows")
+	dst, x := moving(p.base[0], "strideDst"), moving(p.base[1], "stride")
+	p.panels(Load(Param("cols"), GP64()), func(w arith, n int) []VecVirtual {
+		f := make([]VecVirtual, n)
+		for i := range f {
+			f[i] = w.load(Mem{Base: p.base[2], Disp: w.size * i})
+		}
+		return f
+	}, []move{dst, x}, func(w arith, f []VecVirtual) {
+		for i := range f {
+			v := w.load(Mem{Base: x.at, Disp: w.size * i})
+			w.mul(f[i], v, v)
+			w.move(v, Mem{Base: dst.at, Disp: w.size * i})
+		}
+	}, func(arith, []VecVirtual) {})
+}
+
+// zeros counts by subtracting comparisons, which are -1 where they hold.
+func zeros() {
+	TEXT("zerosAVX2", NOSPLIT, "func(x *float64, n int) int")
+	Doc("zerosAVX2 counts the zeros among n elements but for those after the last whole four.")
+	Pragma("noescape")
+	zero, count := YMM(), YMM()
+	VXORPD(zero, zero, zero)
+	VXORPD(count, count, count)
+	p := loadSweepers([]string{"x"}, "n")
+	p.groups(func(w arith, at []Mem) {
+		equal := YMM()
+		VCMPPD(Imm(0), at[0], zero, equal)
+		VPSUBQ(equal, count, count)
+	})
+	upper, c := XMM(), count.AsX()
+	VEXTRACTI128(Imm(1), count, upper)
+	VPADDQ(upper, c, c)
+	VPUNPCKHQDQ(c, c, upper)
+	VPADDQ(upper, c, c)
+	n := GP64()
+	VMOVQ(c, n)
+	Store(n, ReturnIndex(0))
 	VZEROUPPER()
 	RET()
 }
