@@ -135,19 +135,50 @@ func (s *State) internalMap(i int) []sparseMap {
 }
 
 // move maps the second moments of epoch i to the last frame.
-func (s *State) move(i int, m []float64, n int) []float64 {
+func (s *State) move(i int, m *sums) *sums {
 	rows := s.internalMap(i)
+	n := m.n
+	out := s.newSums()
 	half := make([]float64, n*n)
 	for r, sp := range rows {
 		for k, c := range sp.col {
-			kernel.Axpy(sp.val[k], m[c*n:(c+1)*n], half[r*n:(r+1)*n])
+			kernel.Axpy(sp.val[k], m.m[c*n:(c+1)*n], half[r*n:(r+1)*n])
 		}
 	}
-	out := make([]float64, n*n)
 	for r, sp := range rows {
 		for k, c := range sp.col {
 			for q := range n {
-				out[q*n+r] += sp.val[k] * half[q*n+c]
+				out.m[q*n+r] += sp.val[k] * half[q*n+c]
+			}
+		}
+	}
+	if s.Apart == nil {
+		return out
+	}
+	// Parts of the group apart: f_to = j_0 + j_f f_from.
+	l, w, q := s.lay, s.lay.width, m.q
+	part := make([]float64, q*q)
+	for p, f := range l.groups[s.Apart.Group].parts {
+		part[p*q+p] = 1
+		if p > 0 {
+			part[p*q], part[p*q+p] = s.maps[i][f*w], s.maps[i][f*w+f]
+		}
+	}
+	turned := make([]float64, q*n)
+	for c := range len(s.Apart.Rows) {
+		copy(out.D[c*q*q:(c+1)*q*q], congruence(part, m.D[c*q*q:(c+1)*q*q], q))
+		clear(turned)
+		for p := range q {
+			for o := range q {
+				if x := part[p*q+o]; x != 0 {
+					kernel.Axpy(x, m.B[(c*q+o)*n:(c*q+o+1)*n], turned[p*n:(p+1)*n])
+				}
+			}
+			dst := out.B[(c*q+p)*n : (c*q+p+1)*n]
+			for r, sp := range rows {
+				for k, from := range sp.col {
+					dst[r] += sp.val[k] * turned[p*n+from]
+				}
 			}
 		}
 	}

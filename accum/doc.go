@@ -8,6 +8,8 @@
 //     (about its residual), numeric factors of category products.
 //   - The internal columns of a state are 1, u and, for each combination of
 //     category levels that occurs, an indicator and its products with f; v last.
+//     A group is a set of categories that occur multiplied. If there are more
+//     columns than Options.Dense, those of the largest group are kept apart.
 //   - Second moments are sums of z z'. Fourth moments are sums of products of
 //     four entries of z. A keyed table holds sums for each key.
 //
@@ -31,5 +33,7 @@
 //
 // # Limits
 //
-// One worker holds its own keyed tables; they are joined at the end.
+// One worker holds its own keyed tables, joined at the end; pairs of levels of two
+// categories are summed in tables common to all. The columns beside the group
+// apart make dense matrices, whose solve takes the cube of their number.
 package accum

@@ -15,8 +15,8 @@ type epoch struct {
 	gram     []float64 // packed, width columns
 	gramLow  []float64 // what gram leaves off, in extended arithmetic
 	fourth   []float64
-	cats     *categories
 	tables   []*keyTable
+	pairs    []*pairTable
 	keys     []*interner
 	clusters []*keyTable
 	lone     []*loneTracker
@@ -33,7 +33,7 @@ type epoch struct {
 // joinWorkers joins the sums of workers exactly: the order does not show.
 func joinWorkers(ws []*firstWorker) *epoch {
 	w := ws[0]
-	e := &epoch{frame: w.frame, cats: w.cats, tables: w.tables, keys: w.keys, clusters: w.clusters,
+	e := &epoch{frame: w.frame, tables: w.tables, pairs: pairTablesOf(w.pairs), keys: w.keys, clusters: w.clusters,
 		lone: w.lone, reach: w.reach, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
 	for _, o := range ws[1:] {
@@ -41,9 +41,8 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		if w.q != nil {
 			w.fourX.merge(o.fourX)
 		}
-		to := e.cats.join(o.cats, func(i int) int { return len(o.tables[i].rows) })
 		for i, t := range o.tables {
-			e.tables[i].mergeFrom(t, to[i])
+			e.tables[i].mergeFrom(t, same(len(t.rows)))
 		}
 		for k, t := range o.clusters {
 			if t == nil {
@@ -136,7 +135,7 @@ func (w *epochWorker) end() error {
 		return err
 	}
 	w.epochs = append(w.epochs, joinWorkers([]*firstWorker{w.firstWorker}))
-	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget)
+	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""))
 	w.eval.Tally = stream.Tally{}
 	return nil
 }
@@ -158,12 +157,8 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 		return nil, false, err
 	}
 	ew := &epochWorker{shift: shift}
-	first := newLoader(l, trivialFrame(l))
-	if extended {
-		first.extend()
-	}
-	first.eval.Extended(true) // to know what float64 leaves off
-	ew.firstWorker = newFirstWorker(l, first, needs, b)
+	ew.firstWorker = newFirstWorkers(1, l, trivialFrame(l), extended, needs, b)[0]
+	ew.eval.Extended(true) // to know what float64 leaves off
 	once := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
 	if err := p.run(ctx, []blockWorker{ew}, &begun{seg: seg}, once); err != nil {
 		return nil, false, err
@@ -188,18 +183,13 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 		if err != nil {
 			return nil, false, err
 		}
-		ws := make([]*firstWorker, workers)
-		bw := make([]blockWorker, workers)
 		waiting := !slices.ContainsFunc(epochs, func(e *epoch) bool { return e.rows > 0 })
 		if !decided && !waiting {
 			extended, decided = chooseAfter(l, epochs, shift, false), true
 		}
+		ws := newFirstWorkers(workers, l, nil, extended, needs, b)
+		bw := make([]blockWorker, workers)
 		for i := range ws {
-			ld := newLoader(l, nil)
-			if extended {
-				ld.extend()
-			}
-			ws[i] = newFirstWorker(l, ld, needs, b)
 			bw[i] = ws[i]
 		}
 		// The first block of the epoch takes part in its frame. As long as no row was

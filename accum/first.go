@@ -29,6 +29,7 @@ type firstWorker struct {
 
 	cats   *categories
 	tables []*keyTable
+	pairs  []*pairBuffer // into tables common to the workers of an epoch
 	tid    []int32
 
 	keys     []*interner // nil for keys that are not wanted
@@ -46,15 +47,33 @@ type firstWorker struct {
 	varied  []bool    // its nonzero cells are not all equal
 }
 
-// budget watches the memory of the keyed tables of all workers.
+// budget watches the memory of the keyed tables of all workers, and holds what
+// they share.
 type budget struct {
 	memory  int64
 	cluster int64
 	unit    int
+	dense   int // Options.Dense
+	workers int
+	num     *numbering
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
 }
 
-func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker {
+// newFirstWorkers makes the workers of one epoch.
+func newFirstWorkers(n int, l *layout, f *Frame, extended bool, needs *Needs, b *budget) []*firstWorker {
+	pairs := l.pairTables(b.unit, l.design.Spec.Weight == "")
+	ws := make([]*firstWorker, n)
+	for i := range ws {
+		ld := newLoader(l, f)
+		if extended {
+			ld.extend()
+		}
+		ws[i] = newFirstWorker(l, ld, needs, b, pairs)
+	}
+	return ws
+}
+
+func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pairTable) *firstWorker {
 	w := &firstWorker{loader: ld, needs: needs, budget: b}
 	w.gram = make([]float64, l.width*(l.width+1)/2)
 	w.gramX = make(superVec, len(w.gram))
@@ -71,7 +90,10 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget) *firstWorker
 		w.fourX = make(superVec, w.q.size())
 		w.root4 = make([]float64, stride)
 	}
-	w.cats = newCategories(l)
+	w.cats = newCategories(l, b.num)
+	for _, t := range pairs {
+		w.pairs = append(w.pairs, &pairBuffer{t: t})
+	}
 	w.tid = make([]int32, stride)
 	for i := range l.tables {
 		w.tables = append(w.tables, newKeyTable(len(l.tables[i].prods), b.unit))
@@ -121,9 +143,15 @@ func (w *firstWorker) add() error {
 	}
 	w.watch.lap(StageSecond)
 	if len(l.tables) > 0 {
-		w.cats.number(&w.block)
+		if err := w.cats.number(&w.block); err != nil {
+			return err
+		}
 		for i, t := range w.tables {
 			addProducts(t, w.cats.rows[i][:n], w.zs, l.tables[i].prods)
+		}
+		for i, p := range w.pairs {
+			s := &l.pairs[i]
+			p.add(w.cats.rows[s.g][:n], w.cats.rows[s.h][:n], w.zs, s.prods)
 		}
 		w.watch.lap(StageLevels)
 	}
@@ -244,7 +272,10 @@ func (w *firstWorker) fold() error {
 	for _, t := range w.tables {
 		t.flush()
 	}
-	if err := w.cats.check(w.tables, w.budget.memory); err != nil {
+	for _, p := range w.pairs {
+		p.flush()
+	}
+	if err := w.budget.num.check(w.tables, pairTablesOf(w.pairs), w.budget); err != nil {
 		return err
 	}
 	var cl int64
@@ -326,7 +357,8 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
-	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit}
+	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
+		dense: cmp.Or(o.Dense, denseColumns), workers: max(1, o.Workers), num: newNumbering(l)}
 	scan, err := src.Scan(ctx, d.Uses())
 	if err != nil {
 		return nil, err
@@ -334,14 +366,9 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	defer scan.Close()
 	var epochs []*epoch
 	if f != nil {
-		ws := make([]*firstWorker, max(1, o.Workers))
+		ws := newFirstWorkers(b.workers, l, f, extended, &needs, b)
 		bw := make([]blockWorker, len(ws))
 		for i := range ws {
-			ld := newLoader(l, f)
-			if extended {
-				ld.extend()
-			}
-			ws[i] = newFirstWorker(l, ld, &needs, b)
 			bw[i] = ws[i]
 		}
 		if err := p.run(ctx, bw, nil, scan.Next); err != nil {

@@ -238,6 +238,9 @@ func (t *tuples) split(id int32, dst []int32) {
 	dst[0] = id
 }
 
+// size is the number of combinations; it needs two categories or more.
+func (t *tuples) size() int { return len(t.pair[len(t.pair)-1].vals) }
+
 func (t *tuples) memory() int64 {
 	var n int64
 	for i := range t.pair {

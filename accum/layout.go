@@ -20,7 +20,8 @@ type layout struct {
 	factors []int // raw dense column of each f
 	width   int   // columns of z: p0 + 2 + len(factors)
 	groups  []group
-	tables  []tableSpec // for the first pass
+	tables  []tableSpec // one for each group, in the same order
+	pairs   []pairSpec  // of groups whose common categories are no group
 }
 
 // group is the distinct set of categories of one or more terms. Each of its
@@ -30,11 +31,59 @@ type group struct {
 	parts []int // columns of z that multiply the indicator; the first is 0, the 1
 }
 
+// pairTables makes the tables of pairs. Counts do where there is nothing to add
+// up but ones.
+func (l *layout) pairTables(unit int, count bool) []*pairTable {
+	var ts []*pairTable
+	for i := range l.pairs {
+		w := len(l.pairs[i].prods)
+		if count && w == 1 {
+			w = 0
+		}
+		ts = append(ts, newPairTable(w, unit))
+	}
+	return ts
+}
+
+// apart chooses the group that is eliminated before the solve, given the number of
+// combinations of each: the one with most columns, if all columns together are
+// more than dense and the group's indicators are a term; else -1. It also returns
+// the number of internal columns beside it.
+func (l *layout) apart(combos []int, dense int) (group, rest int) {
+	total, most := l.p0+1, 0
+	group = -1
+	for i := range l.groups {
+		n := combos[i] * len(l.groups[i].parts)
+		total += n
+		if n > most && l.indicators(i) {
+			group, most = i, n
+		}
+	}
+	if total <= dense || group < 0 {
+		return -1, total
+	}
+	return group, total - most
+}
+
+// indicators reports whether the indicators of a group are a term by themselves.
+func (l *layout) indicators(g int) bool {
+	return slices.ContainsFunc(l.design.Terms, func(t stream.Term) bool {
+		return t.Dense < 0 && len(t.Categories) > 0 && slices.Equal(sortedCopy(t.Categories), l.groups[g].cats)
+	})
+}
+
 // tableSpec is a keyed table: for each combination of levels of cats, the sums
 // of the products of two columns of z.
 type tableSpec struct {
 	cats  []int
 	prods [][2]int
+}
+
+// pairSpec is a table of products between two groups, by pairs of their
+// combinations.
+type pairSpec struct {
+	g, h  int      // groups
+	prods [][2]int // parts of g times parts of h
 }
 
 func (t *tableSpec) add(a, b int) {
@@ -82,7 +131,7 @@ func newLayout(d *stream.Design) *layout {
 	// Products within a group and with every dense column.
 	for i := range l.groups {
 		g := &l.groups[i]
-		s := l.table(g.cats)
+		s := tableSpec{cats: g.cats}
 		for _, a := range g.parts {
 			for j := range l.p0 + 2 {
 				s.add(a, j)
@@ -91,17 +140,28 @@ func newLayout(d *stream.Design) *layout {
 				s.add(a, b)
 			}
 		}
+		l.tables = append(l.tables, s)
 	}
-	// Products between groups, keyed by the levels of both.
+	// Products between groups: by the combinations of one of them where it holds
+	// the other's categories, else by pairs.
 	for i := range l.groups {
 		for j := range i {
 			g, h := &l.groups[i], &l.groups[j]
-			s := l.table(union(g.cats, h.cats))
+			if t := l.groupIndex(union(g.cats, h.cats)); t >= 0 {
+				for _, a := range g.parts {
+					for _, b := range h.parts {
+						l.tables[t].add(a, b)
+					}
+				}
+				continue
+			}
+			s := pairSpec{g: i, h: j}
 			for _, a := range g.parts {
 				for _, b := range h.parts {
-					s.add(a, b)
+					s.prods = append(s.prods, [2]int{a, b})
 				}
 			}
+			l.pairs = append(l.pairs, s)
 		}
 	}
 	return l
@@ -117,15 +177,6 @@ func (l *layout) group(cats []int) *group {
 
 func (l *layout) groupIndex(cats []int) int {
 	return slices.IndexFunc(l.groups, func(g group) bool { return slices.Equal(g.cats, cats) })
-}
-
-func (l *layout) table(cats []int) *tableSpec {
-	i := slices.IndexFunc(l.tables, func(t tableSpec) bool { return slices.Equal(t.cats, cats) })
-	if i < 0 {
-		l.tables = append(l.tables, tableSpec{cats: cats})
-		i = len(l.tables) - 1
-	}
-	return &l.tables[i]
 }
 
 // v is the column of the outcome in z.

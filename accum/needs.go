@@ -23,7 +23,11 @@ type Options struct {
 	// dropped and State.Dropped is set. It must not depend on Workers, so that the
 	// same input always takes the same route. 0 means a sixteenth of Memory.
 	Clusters int64
-	Meter    *Meter
+	// Dense is the number of internal columns up to which the state is one dense
+	// matrix; beyond it the group of categories with most columns is kept apart
+	// (see State.Apart). 0 means 1000. Like Clusters it shows in the last bits.
+	Dense int
+	Meter *Meter
 	// Timings, if not nil, learns where the time goes.
 	Timings *Timings
 	// Arithmetic is Double unless given.

@@ -10,8 +10,12 @@ import (
 type RowSums struct {
 	// Meats are (P+1) x (P+1) matrices of which the last row and column are
 	// unused, one for each of RowPass.Weights.
-	Meats  [][]float64
-	Scores []*Scores
+	Meats [][]float64
+	// MeatBlocks are the products of each meat with the group apart, LoneBlocks
+	// those of LoneGram; empty without such a group.
+	MeatBlocks []Blocks
+	LoneBlocks Blocks
+	Scores     []*Scores
 	// MaxLeverage is the largest leverage that is not 1.
 	MaxLeverage float64
 	// LoneRows counts rows of leverage 1; LoneGram is the sum of their w z z',
@@ -49,16 +53,9 @@ func (s *State) unchanged(p *pass) error {
 	return nil
 }
 
-func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (*RowSums, int, error) {
+func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, common *secondCommon) (*RowSums, int, error) {
 	w := ws[0]
 	for _, o := range ws[1:] {
-		to := w.cats.join(o.cats, func(i int) int {
-			n := 0
-			for _, m := range o.allMeats() {
-				n = max(n, len(m.tables[i].rows))
-			}
-			return n
-		})
 		mine := w.allMeats()
 		for k, m := range o.allMeats() {
 			if !m.used {
@@ -67,7 +64,7 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 			mine[k].used = true
 			mine[k].gramX.merge(m.gramX)
 			for i, t := range m.tables {
-				mine[k].tables[i].mergeFrom(t, to[i])
+				mine[k].tables[i].mergeFrom(t, same(len(t.rows)))
 			}
 		}
 		for i, t := range o.scores {
@@ -89,29 +86,41 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 		need = need || over
 		best = max(best, t.betterUnit())
 	}
-	full := func(m *meat, cols int) []float64 {
-		n := len(s.Columns) + 1
-		out := make([]float64, n*n)
+	var rows int64 // of one pair of combinations at most
+	if len(s.lay.pairs) > 0 {
+		rows = s.Rows
+	}
+	full := func(m *meat, cols int) *sums {
+		out := s.newSums()
 		gram := make([]float64, len(m.gram))
 		m.gramX.values(gram)
-		s.placeDense(out, gram, cols)
+		s.placeDense(out.m, gram, cols)
 		for _, t := range m.tables {
 			see(t)
 		}
-		s.placeTables(out, w.cats, m.tables)
+		for _, b := range m.pairs {
+			over, _ := b.t.fits(0, rows)
+			need = need || over
+			best = max(best, b.t.betterUnit(rows))
+		}
+		s.placeTables(out, m.tables, nil)
+		s.placePairs(out, pairTablesOf(m.pairs), nil)
 		return out
 	}
 	for _, m := range w.meats {
-		out.Meats = append(out.Meats, full(m, s.lay.p0+1))
+		f := full(m, s.lay.p0+1)
+		out.Meats = append(out.Meats, f.m)
+		out.MeatBlocks = append(out.MeatBlocks, f.Blocks)
 	}
 	if w.lone.used {
-		out.LoneGram = full(w.lone, s.lay.p0+1)
+		f := full(w.lone, s.lay.p0+1)
+		out.LoneGram, out.LoneBlocks = f.m, f.Blocks
 	}
 	if rp.Heavy {
 		if len(w.heavy) > maxHeavy {
 			return nil, 0, errors.New("accum: too many rows of high leverage to treat one by one")
 		}
-		out.Light = full(w.light, s.lay.p0+2)
+		out.Light = full(w.light, s.lay.p0+2).m
 		slices.SortFunc(w.heavy, func(a, b HeavyRow) int {
 			if a.segment != b.segment {
 				return a.segment - b.segment
@@ -123,14 +132,18 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int) (
 	for i, t := range w.scores {
 		see(t)
 		sc := sortScores(w.keys[i], t)
-		sc.Lone, sc.LoneZero = make([]bool, len(s.Columns)), make([]bool, len(s.Columns))
+		sc.Lone, sc.LoneZero = make([]bool, s.allColumns()), make([]bool, s.allColumns())
 		nonzero, zero := w.loneT[i].lone()
 		copy(sc.Lone[1:], nonzero)
 		copy(sc.LoneZero[1:], zero)
-		for c := range s.Columns {
-			if s.Columns[c].Group >= 0 {
+		for _, g := range s.Groups {
+			for c := g.first; c < g.first+g.n*len(g.Parts); c++ {
 				sc.Lone[c] = w.loneC[i].nonzero[c] >= 0
 			}
+		}
+		if s.Apart != nil {
+			over, unit := common.scores[i].join(s, sc)
+			need, best = need || over, max(best, unit)
 		}
 		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
 		out.Scores = append(out.Scores, sc)

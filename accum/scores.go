@@ -11,13 +11,16 @@ type Scores struct {
 	Keys []Key
 	Rows []int64
 	// S has one row of P numbers for each cluster: sum w e z over the internal
-	// columns, e in units 1/YInv.
-	S []float64
-	P int
+	// columns, e in units 1/YInv. With a group apart it stops at the numeric terms
+	// and Groups holds what belongs to categories.
+	S      []float64
+	P      int
+	Groups []GroupScores
 	// Lone tells for each internal column (numeric terms by their raw values)
 	// whether all its nonzero cells lie in one cluster; LoneZero whether it is zero
 	// in one cluster only and has one value elsewhere, so that it and the constant
-	// together live in that cluster.
+	// together live in that cluster. Columns of the group apart stand as in
+	// State.Column.
 	Lone, LoneZero []bool
 	// Gross is the sum over clusters of the square of what was added up; nil for
 	// scores that were summed row by row.

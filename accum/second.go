@@ -14,10 +14,13 @@ import (
 // the state (P of them).
 type RowPass struct {
 	// Theta has P+1 entries; the residual of a row, in units 1/YInv, is
-	// sum_c Theta_c z_c with v last.
+	// sum_c Theta_c z_c with v last. Columns of the group apart follow.
 	Theta []float64
 	// ThetaLow is what Theta leaves off, where the state is extended.
 	ThetaLow []float64
+	// Eliminated is needed if there is a group apart: Whitener is then over what
+	// is left of the other columns.
+	Eliminated *Eliminated
 	// Whitener is the P x K matrix W, row by row, with (X'X)^-1 = W W'. The
 	// leverage of a row is h = |W'z|^2, times w for precision and sampling
 	// weights. Nil if no leverage is wanted.
@@ -49,11 +52,15 @@ type meat struct {
 	gram   []float64
 	gramX  superVec
 	tables []*keyTable
+	pairs  []*pairBuffer
 	used   bool
 }
 
-func newMeat(l *layout, cols, unit int) *meat {
+func newMeat(l *layout, cols, unit int, pairs []*pairTable) *meat {
 	m := &meat{gram: make([]float64, cols*(cols+1)/2)}
+	for _, t := range pairs {
+		m.pairs = append(m.pairs, &pairBuffer{t: t})
+	}
 	m.gramX = make(superVec, len(m.gram))
 	for i := range l.tables {
 		m.tables = append(m.tables, newKeyTable(len(l.tables[i].prods), unit))
@@ -67,21 +74,21 @@ type secondWorker struct {
 	pass  *RowPass
 	unit  int
 	mem   int64
+	all   *secondCommon
 
 	meats []*meat
 	lone  *meat
 	light *meat
 
 	cats *categories
-	base [][]int32 // internal column of each combination, by group and tuple id
 	rowb [][]int32 // internal column of each row, by group
-	quad []float64 // W W' when there are categories
 
 	keys   []*interner
 	scores []*keyTable
 	loneT  []*loneTracker
 	loneC  []*loneTracker // for the category columns, by raw value
 	kid    []int32
+	apart  []*apartScores // by key, where there is a group apart
 
 	e, h, mult []float64
 	zs         []float64
@@ -93,30 +100,60 @@ type secondWorker struct {
 	heavy                []HeavyRow
 }
 
-func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, quad []float64) *secondWorker {
+// secondCommon is what the workers of pass two share.
+type secondCommon struct {
+	workers int
+	quad    []float64      // W W' when there are categories
+	lever   *apartLever    // for the group apart
+	pairs   [][]*pairTable // by meat: of RowPass.Weights, lone, light
+	scores  []*apartCommon // by key, where there is a group apart
+}
+
+func newSecondCommon(s *State, rp *RowPass, unit, workers int) *secondCommon {
+	c := &secondCommon{workers: workers}
+	if rp.Whitener != nil && len(s.Groups) > 0 {
+		c.quad = outer(rp.Whitener, len(s.Columns), rp.K)
+		if s.Apart != nil {
+			c.lever = newApartLever(rp.Eliminated, c.quad)
+		}
+	}
+	for range len(rp.Weights) + 2 {
+		c.pairs = append(c.pairs, s.lay.pairTables(unit, false))
+	}
+	if s.Apart != nil {
+		for _, k := range rp.Scores {
+			c.scores = append(c.scores, newApartCommon(s, k, unit))
+		}
+	}
+	return c
+}
+
+func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, all *secondCommon) *secondWorker {
 	l := s.lay
 	ld := newLoader(l, s.Frame)
 	if s.Extended {
 		ld.extend()
 	}
-	w := &secondWorker{loader: ld, state: s, pass: rp, unit: unit, mem: mem, quad: quad}
-	for range rp.Weights {
-		w.meats = append(w.meats, newMeat(l, l.p0+1, unit))
+	w := &secondWorker{loader: ld, state: s, pass: rp, unit: unit, mem: mem, all: all}
+	for i := range rp.Weights {
+		w.meats = append(w.meats, newMeat(l, l.p0+1, unit, all.pairs[i]))
 	}
-	w.lone = newMeat(l, l.p0+1, unit)
+	w.lone = newMeat(l, l.p0+1, unit, all.pairs[len(rp.Weights)])
 	if rp.Heavy {
-		w.light = newMeat(l, l.p0+2, unit)
+		w.light = newMeat(l, l.p0+2, unit, all.pairs[len(rp.Weights)+1])
 	}
-	w.cats = newCategories(l)
-	w.base = make([][]int32, len(l.groups))
+	w.cats = newCategories(l, places{s})
 	for range l.groups {
 		w.rowb = append(w.rowb, make([]int32, stride))
 	}
 	for _, k := range rp.Scores {
 		w.keys = append(w.keys, newInterner(l.design.Keys[k].Kind))
-		w.scores = append(w.scores, newKeyTable(len(s.Columns), unit))
+		w.scores = append(w.scores, newKeyTable(s.scoreWidth(), unit))
 		w.loneT = append(w.loneT, newLoneTracker(l.p0))
-		w.loneC = append(w.loneC, newLoneTracker(len(s.Columns)))
+		w.loneC = append(w.loneC, newLoneTracker(s.allColumns()))
+	}
+	for _, c := range all.scores {
+		w.apart = append(w.apart, newApartScores(c))
 	}
 	w.kid = make([]int32, stride)
 	w.e, w.h, w.mult = make([]float64, stride), make([]float64, stride), make([]float64, stride)
@@ -214,6 +251,9 @@ func (w *secondWorker) add() error {
 		w.keys[i].ids(&w.block.Key[k], n, w.kid[:n])
 		w.loneT[i].add(w.kid[:n], w.block.X)
 		w.addScores(w.scores[i], w.loneC[i])
+		if w.apart != nil {
+			w.apart[i].add(w, w.kid[:n], w.keys[i])
+		}
 	}
 	w.watch.lap(StageClusters)
 	return nil
@@ -234,34 +274,36 @@ func (w *secondWorker) residuals(e []float64) {
 	}
 }
 
+// places is the numberer of pass two: the places in the state.
+type places struct{ s *State }
+
+func (p places) level(cat int, k Key) (int32, error) {
+	id := p.s.levels[cat].find(k)
+	if id < 0 {
+		return 0, &ChangedError{fmt.Sprintf("each(%s) has a level that was not there before", p.s.Design.Categories[cat].Text)}
+	}
+	return id, nil
+}
+
+func (p places) combo(table int, levels []int32) (int32, error) {
+	id := p.s.combos[table].find(levels)
+	if id < 0 {
+		return 0, &ChangedError{"levels occur together that did not before"}
+	}
+	return int32(id), nil
+}
+
 // findColumns finds, for each row and group, the internal column of its indicator.
 func (w *secondWorker) findColumns() error {
-	l, n := w.lay, w.block.Rows
-	if len(l.tables) == 0 {
-		return nil
+	n := w.block.Rows
+	if err := w.cats.number(&w.block); err != nil {
+		return err
 	}
-	w.cats.number(&w.block)
-	for i := range l.tables {
-		g := l.groupIndex(l.tables[i].cats)
-		if g < 0 {
-			continue
-		}
-		for r, id := range w.cats.rows[i][:n] {
-			for int(id) >= len(w.base[g]) {
-				w.base[g] = append(w.base[g], -1)
-			}
-			b := w.base[g][id]
-			if b < 0 {
-				combo := w.state.combo(w.cats, i, id)
-				if c := slices.Index(combo, -1); c >= 0 {
-					return &ChangedError{fmt.Sprintf("each(%s) has a level that was not there before", l.design.Categories[l.tables[i].cats[c]].Text)}
-				}
-				if b = int32(w.state.Column(g, combo, 0)); b < 0 {
-					return &ChangedError{"levels occur together that did not before"}
-				}
-				w.base[g][id] = b
-			}
-			w.rowb[g][r] = b
+	for g := range w.state.Groups {
+		first, parts := int32(w.state.Groups[g].first), int32(len(w.state.Groups[g].Parts))
+		to := w.rowb[g][:n]
+		for r, id := range w.cats.rows[g][:n] {
+			to[r] = first + id*parts
 		}
 	}
 	return nil
@@ -269,7 +311,7 @@ func (w *secondWorker) findColumns() error {
 
 func (w *secondWorker) leverages(h []float64) {
 	l, n, rp := w.lay, len(h), w.pass
-	if w.quad == nil {
+	if w.all.quad == nil {
 		kernel.Leverage(h, w.z, stride, n, l.p0+1, rp.Whitener, rp.K)
 		return
 	}
@@ -278,18 +320,21 @@ func (w *secondWorker) leverages(h []float64) {
 		idx, val := w.sparse(r)
 		var s float64
 		for a, i := range idx {
-			row := w.quad[i*p : (i+1)*p]
+			row := w.all.quad[i*p : (i+1)*p]
 			var t float64
 			for b := range a {
 				t = math.FMA(row[idx[b]], val[b], t)
 			}
 			s = math.FMA(val[a], 2*t+row[i]*val[a], s)
 		}
+		if w.all.lever != nil {
+			s += w.apartLeverage(r, idx, val)
+		}
 		h[r] = s
 	}
 }
 
-// sparse lists the nonzero internal columns of row r.
+// sparse lists the nonzero internal columns of row r, but for the group apart.
 func (w *secondWorker) sparse(r int) ([]int, []float64) {
 	l := w.lay
 	w.idx, w.val = w.idx[:0], w.val[:0]
@@ -298,6 +343,9 @@ func (w *secondWorker) sparse(r int) ([]int, []float64) {
 		w.val = append(w.val, w.z[j*stride+r])
 	}
 	for g := range l.groups {
+		if w.state.isApart(g) {
+			continue
+		}
 		for p, c := range l.groups[g].parts {
 			w.idx = append(w.idx, int(w.rowb[g][r])+p)
 			w.val = append(w.val, w.z[c*stride+r])
@@ -318,6 +366,10 @@ func (w *secondWorker) addMeat(m *meat, cols int) {
 	kernel.Gram(m.gram, w.zs, stride, n, cols)
 	for i := range l.tables {
 		addProducts(m.tables[i], w.cats.rows[i][:n], w.zs, l.tables[i].prods)
+	}
+	for i, p := range m.pairs {
+		s := &l.pairs[i]
+		p.add(w.cats.rows[s.g][:n], w.cats.rows[s.h][:n], w.zs, s.prods)
 	}
 }
 
@@ -357,7 +409,9 @@ func (w *secondWorker) addScores(t *keyTable, lone *loneTracker) {
 				if p == 0 || w.block.X[l.factors[c-l.p0-2]][r] != 0 {
 					lone.see(&lone.nonzero[b+p], id)
 				}
-				part[b+p] = math.FMA(m, w.z[c*stride+r], part[b+p])
+				if w.apart == nil {
+					part[b+p] = math.FMA(m, w.z[c*stride+r], part[b+p])
+				}
 			}
 		}
 	}
@@ -376,8 +430,18 @@ func (w *secondWorker) fold() error {
 	for _, m := range w.allMeats() {
 		for _, t := range m.tables {
 			t.flush()
-			held += t.memory()
+			held += t.memory() * int64(w.all.workers)
 		}
+		for _, p := range m.pairs {
+			p.flush()
+			held += p.t.memory()
+		}
+	}
+	for _, a := range w.apart {
+		held += a.flush()
+	}
+	if held += w.all.lever.memory(); held > w.mem {
+		return &MemoryError{What: "the second pass over " + w.state.levelCounts(), Need: held, Have: w.mem}
 	}
 	for i, t := range w.scores {
 		t.flush()
@@ -437,14 +501,11 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 		return nil, 0, err
 	}
 	defer scan.Close()
-	var quad []float64
-	if rp.Whitener != nil && len(s.Groups) > 0 {
-		quad = outer(rp.Whitener, len(s.Columns), rp.K)
-	}
+	common := newSecondCommon(s, &rp, unit, max(1, o.Workers))
 	ws := make([]*secondWorker, max(1, o.Workers))
 	bw := make([]blockWorker, len(ws))
 	for i := range ws {
-		ws[i] = newSecondWorker(s, &rp, unit, o.Memory, quad)
+		ws[i] = newSecondWorker(s, &rp, unit, o.Memory, common)
 		bw[i] = ws[i]
 	}
 	if err := p.run(ctx, bw, nil, scan.Next); err != nil {
@@ -456,5 +517,5 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	if err := s.unchanged(p); err != nil {
 		return nil, 0, err
 	}
-	return s.joinSecond(ws, &rp, p, unit)
+	return s.joinSecond(ws, &rp, p, unit, common)
 }

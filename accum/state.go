@@ -5,7 +5,7 @@ import (
 	"crypto/sha256"
 	"encoding/binary"
 	"encoding/hex"
-	"fmt"
+	"errors"
 	"maps"
 	"math"
 	"slices"
@@ -33,6 +33,9 @@ type State struct {
 	// S is the (P+1) x (P+1) matrix of second moments of the internal columns and
 	// v, row by row, P = len(Columns). Weighted.
 	S []float64
+	// Apart is the group of categories whose columns are kept apart, since there
+	// are too many for a dense matrix; nil if all are among Columns.
+	Apart *Apart
 
 	Tally     stream.Tally
 	Malformed int64
@@ -66,6 +69,8 @@ type State struct {
 	quart  *quartic
 	levels []*interner // global ids = places in Levels
 	combos []*comboIndex
+	place  [][]int32 // place in combos, by the number in pass one
+	dense  int
 }
 
 // Column is one internal column.
@@ -88,7 +93,8 @@ type Group struct {
 }
 
 // Column returns the internal column of a combination of levels and a part, or
-// -1 if the combination does not occur.
+// -1 if the combination does not occur. Columns of the group apart follow v:
+// len(Columns) + 1 + combination * parts + part.
 func (s *State) Column(group int, levels []int32, part int) int {
 	i := s.combos[group].find(levels)
 	if i < 0 {
@@ -99,6 +105,15 @@ func (s *State) Column(group int, levels []int32, part int) int {
 
 // Group returns the index of the group with these categories.
 func (s *State) Group(cats []int) int { return s.lay.groupIndex(sortedCopy(cats)) }
+
+// GroupColumns returns the first internal column of a group, as in Column, and its
+// number of combinations.
+func (s *State) GroupColumns(group int) (first, combos int) {
+	return s.Groups[group].first, s.Groups[group].n
+}
+
+// Combination returns the levels of combination i of a group, as places in Levels.
+func (s *State) Combination(group, i int) []int32 { return s.combos[group].keys[i] }
 
 // Numeric is the number of numeric terms.
 func (s *State) Numeric() int { return s.lay.p0 }
@@ -172,12 +187,13 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, 
 	if needs.Fourth {
 		s.quart = newQuartic(l.p0 + 2)
 	}
-	for _, e := range epochs { // one worker alone may not have seen how many there are
-		if err := e.cats.check(e.tables, b.memory); err != nil {
+	s.dense = b.dense
+	for _, e := range epochs {
+		if err := b.num.check(e.tables, e.pairs, b); err != nil {
 			return nil, 0, err
 		}
 	}
-	s.indexLevels()
+	s.indexLevels(b.num)
 	if err := s.assemble(); err != nil {
 		return nil, 0, err
 	}
@@ -197,48 +213,61 @@ func (s *State) fingerprint() {
 	s.Fingerprint = hex.EncodeToString(h.Sum(nil)[:16])
 }
 
-// indexLevels orders levels and combinations by value, over all epochs.
-func (s *State) indexLevels() {
+// indexLevels orders levels and combinations by value.
+func (s *State) indexLevels(num *numbering) {
 	l := s.lay
-	for c := range l.design.Categories {
-		seen := newInterner(l.design.Categories[c].Kind)
-		for _, e := range s.epochs {
-			joinKeys(seen, e.cats.levels[c])
+	level := make([][]int32, len(num.levels)) // places of levels, by number
+	for c, in := range num.levels {
+		order := keyOrder(in)
+		level[c] = make([]int32, len(order))
+		sorted := newInterner(in.kind)
+		keys := make([]Key, len(order))
+		for i, id := range order {
+			level[c][id] = int32(i)
+			keys[i] = in.key(id)
+			sorted.put(keys[i])
 		}
-		keys := make([]Key, seen.size())
-		for i := range keys {
-			keys[i] = seen.key(int32(i))
-		}
-		slices.SortFunc(keys, Key.Compare)
 		s.Levels = append(s.Levels, keys)
-		sorted := newInterner(seen.kind)
-		for _, k := range keys {
-			sorted.put(k)
-		}
 		s.levels = append(s.levels, sorted)
+	}
+	sizes := num.sizes()
+	for ti := range l.tables {
+		cats := l.tables[ti].cats
+		keys := make([][]int32, sizes[ti])
+		flat := make([]int32, sizes[ti]*len(cats))
+		order := make([]int32, sizes[ti])
+		for id := range keys {
+			k := flat[id*len(cats) : (id+1)*len(cats)]
+			copy(k, num.split(ti, int32(id)))
+			for i, c := range cats {
+				k[i] = level[c][k[i]]
+			}
+			keys[id], order[id] = k, int32(id)
+		}
+		slices.SortFunc(order, func(a, b int32) int { return slices.Compare(keys[a], keys[b]) })
+		index := &comboIndex{keys: make([][]int32, len(keys))}
+		place := make([]int32, len(keys))
+		for i, id := range order {
+			index.keys[i] = keys[id]
+			place[id] = int32(i)
+		}
+		s.combos = append(s.combos, index)
+		s.place = append(s.place, place)
 	}
 	s.Columns = append(s.Columns, Column{Group: -1})
 	for j := range l.p0 {
 		s.Columns = append(s.Columns, Column{Group: -1, Dense: 1 + j})
 	}
+	apart, _ := l.apart(sizes, s.dense)
 	for gi := range l.groups {
 		g := &l.groups[gi]
-		ti := slices.IndexFunc(l.tables, func(t tableSpec) bool { return slices.Equal(t.cats, g.cats) })
-		rows := map[string]int64{}
-		index := &comboIndex{}
+		rows := make([]int64, sizes[gi])
 		for _, e := range s.epochs {
-			for id, n := range e.tables[ti].rows {
-				k := s.combo(e.cats, ti, int32(id))
-				name := fmt.Sprint(k)
-				if _, ok := rows[name]; !ok {
-					index.keys = append(index.keys, k)
-				}
-				rows[name] += n
+			for id, n := range e.tables[gi].rows {
+				rows[s.place[gi][id]] += n
 			}
 		}
-		slices.SortFunc(index.keys, func(a, b []int32) int { return slices.Compare(a, b) })
-		s.combos = append(s.combos, index)
-		out := Group{Categories: g.cats, first: len(s.Columns), n: len(index.keys)}
+		out := Group{Categories: g.cats, first: len(s.Columns), n: sizes[gi]}
 		for _, p := range g.parts {
 			if p == 0 {
 				out.Parts = append(out.Parts, -1)
@@ -247,53 +276,62 @@ func (s *State) indexLevels() {
 			}
 		}
 		s.Groups = append(s.Groups, out)
-		for _, k := range index.keys {
+		if gi == apart {
+			s.Apart = &Apart{Group: gi, Levels: s.combos[gi].keys, Rows: rows, Parts: len(g.parts)}
+			continue
+		}
+		for i, k := range s.combos[gi].keys {
 			for p := range g.parts {
-				s.Columns = append(s.Columns, Column{Group: gi, Levels: k, Part: p, Rows: rows[fmt.Sprint(k)]})
+				s.Columns = append(s.Columns, Column{Group: gi, Levels: k, Part: p, Rows: rows[i]})
 			}
 		}
 	}
-}
-
-// combo returns the levels of combination id of table ti, as places in Levels; -1
-// for a level that the state does not have.
-func (s *State) combo(c *categories, ti int, id int32) []int32 {
-	keys := c.split(ti, id, nil)
-	k := make([]int32, len(keys))
-	for i, cat := range s.lay.tables[ti].cats {
-		k[i] = s.levels[cat].find(keys[i])
+	if s.Apart != nil { // its columns are numbered behind v
+		s.Groups[apart].first = len(s.Columns) + 1
 	}
-	return k
 }
 
-// assemble fills S in the last frame.
+// assemble fills S, and the sums of the group kept apart, in the last frame.
 func (s *State) assemble() error {
-	l := s.lay
-	n := len(s.Columns) + 1
-	s.S = make([]float64, n*n)
 	s.maps = make([][]float64, len(s.epochs))
+	all := s.newSums()
 	for i, e := range s.epochs {
-		m := make([]float64, n*n)
-		s.placeDense(m, e.gram, l.p0+2)
-		s.placeTables(m, e.cats, e.tables)
+		m := all
+		if e.frame != s.Frame {
+			m = s.newSums()
+		}
+		s.placeDense(m.m, e.gram, s.lay.p0+2)
+		s.placeTables(m, e.tables, s.place)
+		s.placePairs(m, e.pairs, s.place)
 		s.maps[i] = s.mapFrom(e.frame)
 		if e.frame != s.Frame {
-			m = s.move(i, m, n)
+			m = s.move(i, m)
 		}
-		for j, x := range m {
-			s.S[j] += x
+		if m != all {
+			all.add(m)
 		}
+	}
+	s.S = all.m
+	if s.Apart != nil {
+		s.Apart.Blocks = all.Blocks
 	}
 	if s.Extended {
 		s.assembleWide()
 	}
 	for _, x := range s.S {
 		if math.IsNaN(x) || math.IsInf(x, 0) {
-			return fmt.Errorf("the sums of products leave the range of float64: values are too large; divide the outcome or a term by a power of ten")
+			return errRange
+		}
+	}
+	for _, x := range all.D {
+		if math.IsNaN(x) || math.IsInf(x, 0) {
+			return errRange
 		}
 	}
 	return nil
 }
+
+var errRange = errors.New("the sums of products leave the range of float64: values are too large; divide the outcome or a term by a power of ten")
 
 // placeDense puts the packed sums of the first cols of (1, u, v) into the matrix.
 func (s *State) placeDense(m, gram []float64, cols int) {
@@ -302,7 +340,10 @@ func (s *State) placeDense(m, gram []float64, cols int) {
 	for j := range cols {
 		for i := 0; i <= j; i++ {
 			x := gram[j*(j+1)/2+i]
-			m[at[i]*n+at[j]], m[at[j]*n+at[i]] = x, x
+			m[at[i]*n+at[j]] += x
+			if i != j {
+				m[at[j]*n+at[i]] += x
+			}
 		}
 	}
 }
@@ -317,64 +358,123 @@ func (s *State) denseAt() []int {
 	return at
 }
 
-// placeTables puts the sums of all combinations into the matrix.
-func (s *State) placeTables(m []float64, c *categories, tables []*keyTable) {
-	for ti, t := range tables {
+// placeTables puts the sums of all combinations into m. place gives the place of
+// each number of a table; nil if numbers are places.
+func (s *State) placeTables(m *sums, tables []*keyTable, place [][]int32) {
+	l := s.lay
+	at := s.denseAt()
+	for gi, t := range tables {
+		spec, g := &l.tables[gi], &l.groups[gi]
+		// Where in the table the products of the group itself stand, and those with
+		// the groups that its categories hold.
+		type entry struct{ from, p, q, group int } // group -1: q is a column; gi: a part
+		var list []entry
+		for p, a := range g.parts {
+			for j, dst := range at {
+				if k := spec.index(a, j); k >= 0 {
+					list = append(list, entry{k, p, dst, -1})
+				}
+			}
+			for q, b := range g.parts {
+				if q <= p {
+					list = append(list, entry{spec.index(a, b), p, q, gi})
+				}
+			}
+		}
+		var inner []int
+		for hi := range l.groups {
+			h := &l.groups[hi]
+			if hi == gi || !slices.Equal(union(g.cats, h.cats), g.cats) {
+				continue
+			}
+			inner = append(inner, hi)
+			for p, a := range g.parts {
+				for q, b := range h.parts {
+					list = append(list, entry{spec.index(a, b), p, q, hi})
+				}
+			}
+		}
+		between := s.innerPairs(gi)
 		vals := make([]float64, t.width)
-		for id := range t.rows {
+		base := make([]int, len(l.groups))
+		pick := make([]int32, 0, len(g.cats))
+		for id, n := range t.rows {
+			if n == 0 {
+				continue
+			}
 			for j, f := range t.fix(int32(id)) {
 				vals[j] = f.float(t.unit)
 			}
-			s.placeTable(m, ti, s.combo(c, ti, int32(id)), vals)
+			to := int32(id)
+			if place != nil {
+				to = place[gi][id]
+			}
+			combo := s.combos[gi].keys[to]
+			base[gi] = s.Groups[gi].first + int(to)*len(g.parts)
+			for _, hi := range inner {
+				pick = s.pick(pick[:0], combo, gi, hi)
+				base[hi] = s.Column(hi, pick, 0)
+			}
+			for _, e := range list {
+				if e.group < 0 {
+					m.add2(base[gi]+e.p, e.q, vals[e.from])
+				} else {
+					m.add2(base[gi]+e.p, base[e.group]+e.q, vals[e.from])
+				}
+			}
+			for _, b := range between {
+				for p, a := range l.groups[b[0]].parts {
+					for q, c := range l.groups[b[1]].parts {
+						m.add2(base[b[0]]+p, base[b[1]]+q, vals[spec.index(a, c)])
+					}
+				}
+			}
 		}
 	}
 }
 
-// placeTable puts the sums of one combination of levels into the matrix.
-func (s *State) placeTable(m []float64, ti int, combo []int32, vals []float64) {
+// innerPairs lists the pairs of groups, neither of them gi, whose categories
+// together are those of gi.
+func (s *State) innerPairs(gi int) [][2]int {
 	l := s.lay
-	n := len(s.Columns) + 1
-	spec := &l.tables[ti]
-	at := s.denseAt()
-	set := func(i, j int, a, b int) {
-		k := spec.index(a, b)
-		if k < 0 {
-			return
+	var out [][2]int
+	for i := range l.groups {
+		for j := range i {
+			if i != gi && j != gi && slices.Equal(union(l.groups[i].cats, l.groups[j].cats), l.groups[gi].cats) {
+				out = append(out, [2]int{i, j})
+			}
 		}
-		m[i*n+j], m[j*n+i] = vals[k], vals[k]
 	}
-	pick := func(cats []int) []int32 {
-		out := make([]int32, len(cats))
-		for i, c := range cats {
-			out[i] = combo[slices.Index(spec.cats, c)]
-		}
-		return out
+	return out
+}
+
+// pick appends the levels of group h to dst, from a combination of group g.
+func (s *State) pick(dst, combo []int32, g, h int) []int32 {
+	for _, c := range s.lay.groups[h].cats {
+		dst = append(dst, combo[slices.Index(s.lay.groups[g].cats, c)])
 	}
-	for gi := range l.groups {
-		g := &l.groups[gi]
-		if slices.Equal(g.cats, spec.cats) {
-			base := s.Column(gi, combo, 0)
-			for p, a := range g.parts {
-				for j, dst := range at {
-					set(base+p, dst, a, j)
-				}
-				for q, b := range g.parts {
-					set(base+p, base+q, a, b)
-				}
+	return dst
+}
+
+// placePairs puts the sums of pairs of combinations into m.
+func (s *State) placePairs(m *sums, tables []*pairTable, place [][]int32) {
+	l := s.lay
+	for i, t := range tables {
+		spec := &l.pairs[i]
+		g, h := &s.Groups[spec.g], &s.Groups[spec.h]
+		t.each(func(a, b int32, vals []float64) {
+			if place != nil {
+				a, b = place[spec.g][a], place[spec.h][b]
 			}
-		}
-		for hi := range gi {
-			h := &l.groups[hi]
-			if !slices.Equal(union(g.cats, h.cats), spec.cats) {
-				continue
-			}
-			gb, hb := s.Column(gi, pick(g.cats), 0), s.Column(hi, pick(h.cats), 0)
-			for p, a := range g.parts {
-				for q, b := range h.parts {
-					set(gb+p, hb+q, a, b)
+			gb, hb := g.first+int(a)*len(g.Parts), h.first+int(b)*len(h.Parts)
+			k := 0
+			for p := range g.Parts {
+				for q := range h.Parts {
+					m.add2(gb+p, hb+q, vals[k])
+					k++
 				}
 			}
-		}
+		})
 	}
 }
 
@@ -387,6 +487,15 @@ func (s *State) refit(unit int) int {
 			size = math.Min(size, d)
 		}
 	}
+	if a := s.Apart; a != nil {
+		for i := 0; i < len(a.D); i += a.Parts * a.Parts {
+			for p := range a.Parts {
+				if d := a.D[i+p*(a.Parts+1)]; d > 0 {
+					size = math.Min(size, d)
+				}
+			}
+		}
+	}
 	need, best := false, -1074
 	see := func(t *keyTable) {
 		over, coarse := t.fits(size)
@@ -396,6 +505,13 @@ func (s *State) refit(unit int) int {
 	for _, e := range s.epochs {
 		for _, t := range e.tables {
 			see(t)
+		}
+		for i, t := range e.pairs {
+			if t.width > 0 {
+				over, coarse := t.fits(size, s.pairRows(i))
+				need = need || over || coarse
+				best = max(best, t.betterUnit(s.pairRows(i)))
+			}
 		}
 		for _, t := range e.clusters {
 			if t != nil && !s.Dropped {
@@ -409,6 +525,20 @@ func (s *State) refit(unit int) int {
 		return best
 	}
 	return unit
+}
+
+// pairRows bounds the rows of one pair of combinations.
+func (s *State) pairRows(i int) int64 {
+	most := func(g int) int64 {
+		var n int64
+		for _, e := range s.epochs {
+			for _, r := range e.tables[g].rows {
+				n = max(n, r)
+			}
+		}
+		return n * int64(len(s.epochs))
+	}
+	return min(most(s.lay.pairs[i].g), most(s.lay.pairs[i].h))
 }
 
 // fullFrame makes a frame from all rows of the state.

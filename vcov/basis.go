@@ -35,12 +35,21 @@ type basis struct {
 	wide   *wideBasis
 	bases  map[string]string
 	notes  []Warning
+	apart  *apart    // the group of categories kept apart, nil if there is none
+	sums   []float64 // internal second moments, less what the group apart takes
 }
 
 func newBasis(s *accum.State) (*basis, error) {
-	b := &basis{state: s, bases: map[string]string{}}
+	b := &basis{state: s, bases: map[string]string{}, sums: s.S}
+	if s.Apart != nil {
+		b.apart = newApart(s)
+	}
 	if err := b.columns(); err != nil {
 		return nil, err
+	}
+	if b.apart != nil {
+		b.apart.eliminate()
+		b.sums = b.apart.elim.S
 	}
 	if b.plain() {
 		b.selection()
@@ -49,6 +58,10 @@ func newBasis(s *accum.State) (*basis, error) {
 	}
 	return b, nil
 }
+
+// extended reports whether the solve has twice the digits; with a group apart only
+// rows and dense sums have.
+func (b *basis) extended() bool { return b.state.Extended && b.apart == nil }
 
 func (b *basis) k() int { return len(b.cols) }
 
@@ -74,15 +87,18 @@ func (b *basis) columns() error {
 		}
 		b.bases[cat.Text] = b.level(c, s.Levels[c][base[c]])
 	}
+	if b.apart != nil {
+		b.apart.settle(base)
+	}
 	if !d.Spec.NoConstant {
-		b.cols = append(b.cols, userColumn{"constant", -1, 0})
+		b.add(userColumn{"constant", -1, 0})
 	}
 	numeric := 0
 	for t := range d.Terms {
 		term := &d.Terms[t]
 		if len(term.Categories) == 0 {
 			numeric++
-			b.cols = append(b.cols, userColumn{term.Text, t, numeric})
+			b.add(userColumn{term.Text, t, numeric})
 			continue
 		}
 		gi := s.Group(term.Categories)
@@ -91,7 +107,7 @@ func (b *basis) columns() error {
 		if term.Dense >= 0 {
 			part = slices.Index(g.Parts, term.Dense)
 		}
-		before := len(b.cols)
+		before := b.count()
 		possible := 1
 		for _, c := range g.Categories {
 			n := len(s.Levels[c])
@@ -100,19 +116,17 @@ func (b *basis) columns() error {
 			}
 			possible *= n
 		}
-		for c := range s.Columns {
-			col := &s.Columns[c]
-			if col.Group != gi || col.Part != part {
-				continue
-			}
+		first, n := s.GroupColumns(gi)
+		for i := range n {
+			levels := s.Combination(gi, i)
 			if slices.ContainsFunc(g.Categories, func(c int) bool {
-				return base[c] >= 0 && int(col.Levels[slices.Index(g.Categories, c)]) == base[c]
+				return base[c] >= 0 && int(levels[slices.Index(g.Categories, c)]) == base[c]
 			}) {
 				continue
 			}
-			b.cols = append(b.cols, userColumn{b.label(term, g, col), t, c})
+			b.add(userColumn{b.label(term, g, levels), t, first + i*len(g.Parts) + part})
 		}
-		switch n := len(b.cols) - before; {
+		switch n := b.count() - before; {
 		case n == 0 && possible == 0:
 			b.notes = append(b.notes, Warning{Code: "one-level", Term: &term.Text, Text: fmt.Sprintf("%s has a single level in the used rows and adds no term", term.Text)})
 		case n < possible:
@@ -121,6 +135,22 @@ func (b *basis) columns() error {
 		}
 	}
 	return nil
+}
+
+// add takes in the next coefficient of the model.
+func (b *basis) add(u userColumn) {
+	if b.apart != nil && b.apart.add(u) {
+		return
+	}
+	b.cols = append(b.cols, u)
+}
+
+// count is the number of coefficients so far, wherever they are solved.
+func (b *basis) count() int {
+	if b.apart != nil {
+		return len(b.cols) + len(b.apart.cols)
+	}
+	return len(b.cols)
 }
 
 func (b *basis) level(c int, k accum.Key) string {
@@ -144,10 +174,10 @@ func (b *basis) someLevels(c int) string {
 }
 
 // label gives "barge = b" or "(barge = b) * (wet = true) * pallets".
-func (b *basis) label(term *stream.Term, g *accum.Group, col *accum.Column) string {
+func (b *basis) label(term *stream.Term, g *accum.Group, levels []int32) string {
 	var parts []string
 	for _, c := range term.Categories {
-		k := b.state.Levels[c][col.Levels[slices.Index(g.Categories, c)]]
+		k := b.state.Levels[c][levels[slices.Index(g.Categories, c)]]
 		parts = append(parts, b.state.Design.Categories[c].Text+" = "+b.level(c, k))
 	}
 	if len(parts) == 1 && term.Dense < 0 {
@@ -182,6 +212,9 @@ func (b *basis) plain() bool {
 // carriers lists the internal columns that add up to the constant.
 func (b *basis) carriers() []int {
 	s := b.state
+	if b.apart != nil && b.apart.inside {
+		return nil
+	}
 	if !s.Design.Spec.NoConstant {
 		return []int{0}
 	}
@@ -302,7 +335,7 @@ func (b *basis) selection() {
 			b.w[place[u.column-col.Part]*k+a] -= f.Shift[d] * f.Inv[d]
 		}
 	}
-	if s.Extended {
+	if b.extended() {
 		b.carrierRows(carry, place)
 	}
 }
@@ -334,7 +367,7 @@ func (b *basis) factor() {
 			v[u.column] = 1
 		case col.Group < 0:
 			j := col.Dense - 1
-			if !s.Design.Spec.NoConstant && !s.Constant(j) {
+			if len(carry) > 0 && !s.Design.Spec.NoConstant && !s.Constant(j) {
 				// The constant and the numeric terms before it are there already: the
 				// column's own direction is its coordinate, without any cancelling.
 				for i := 0; i <= j; i++ {
@@ -402,7 +435,7 @@ func (b *basis) factor() {
 		}
 	}
 	b.w = inverseUpper(r, k)
-	if s.Extended {
+	if b.extended() {
 		b.factorWide(carry, empty)
 	}
 	off := b.internalOffset(carry)
@@ -412,7 +445,7 @@ func (b *basis) factor() {
 		b.offset[a] = dot(q[a], off)
 		axpy(-b.offset[a], q[a], rest)
 	}
-	if s.Extended {
+	if b.extended() {
 		b.besideWide(off)
 	} else if size := math.Sqrt(dot(off, off)); math.Sqrt(dot(rest, rest)) > 1e-14*size {
 		b.beside = rest
@@ -425,14 +458,14 @@ func (b *basis) outcome() (v []float64, svv float64) {
 	s := b.state
 	p := len(s.Columns)
 	n := p + 1
-	v, svv = s.S[p*n:p*n+p], s.S[p*n+p]
+	v, svv = b.sums[p*n:p*n+p], b.sums[p*n+p]
 	if b.beside == nil {
 		return v, svv
 	}
 	v = append([]float64(nil), v...)
 	svv += dot(b.beside, v)
 	for i, x := range b.beside {
-		axpy(x, s.S[i*n:i*n+p], v)
+		axpy(x, b.sums[i*n:i*n+p], v)
 	}
 	return v, svv + dot(b.beside, v)
 }

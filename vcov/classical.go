@@ -15,5 +15,9 @@ func (x *solution) classical() *estimate {
 	for i, m := range x.inverse {
 		v[i] = s2 * m
 	}
-	return &estimate{v: v, factor: 1, df: df, joint: plainJoint(df)}
+	r := &estimate{v: v, factor: 1, df: df, joint: plainJoint(df)}
+	if x.apart != nil {
+		r.apart = &apartMeat{rest: x.e.g, own: x.state.Apart.D, scale: s2}
+	}
+	return r
 }

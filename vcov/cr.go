@@ -20,21 +20,32 @@ import (
 // internal columns, one row a cluster in key order. Time O(G (P K + K^2)).
 func (x *solution) clusterRobust(kind string, sc *accum.Scores) *estimate {
 	k, g := x.k(), len(sc.Keys)
-	meat := make([]float64, k*k)
-	s := make([]float64, k)
-	for i := range g {
-		x.projectVec(sc.S[i*sc.P:(i+1)*sc.P], s)
-		for a, t := range s {
-			axpy(t, s, meat[a*k:(a+1)*k])
+	gf, n := float64(g), float64(x.n)
+	r := &estimate{factor: 1, df: gf - 1}
+	var meat []float64
+	if x.apart != nil {
+		m := x.state.ClusterMeat(sc, x.apart.elim, x.apart.base)
+		meat = x.project(m.Rest)
+		r.apart = &apartMeat{rest: meat, own: m.Own, base: m.Base, within: m.Within, scale: 1}
+	} else {
+		meat = make([]float64, k*k)
+		s := make([]float64, k)
+		for i := range g {
+			x.projectVec(sc.S[i*sc.P:(i+1)*sc.P], s)
+			for a, t := range s {
+				axpy(t, s, meat[a*k:(a+1)*k])
+			}
 		}
 	}
 	v := sandwich(x.inverse, meat, k)
-	gf, n := float64(g), float64(x.n)
-	r := &estimate{v: v, meat: meat, factor: 1, df: gf - 1}
+	r.v, r.meat = v, meat
 	if kind == "cr1" {
 		r.factor = gf / (gf - 1) * ((n - 1) / float64(x.df()))
 		for i := range v {
 			v[i] *= r.factor
+		}
+		if r.apart != nil {
+			r.apart.scale = r.factor
 		}
 	}
 	r.joint = clusterJoint(g)
@@ -60,23 +71,29 @@ func clusterJoint(g int) func(float64, int) (float64, float64, bool, string) {
 // in one cluster only.
 func (x *solution) loneClusters(sc *accum.Scores) []bool {
 	s := x.state
-	out := make([]bool, x.k())
+	out := make([]bool, x.count())
+	all := make([]userColumn, len(out))
+	used := map[int]bool{}
+	for j := range all {
+		all[j] = x.coefficient(j)
+		used[all[j].column] = true
+	}
 	carry := map[int]bool{}
 	if s.Shifted() {
-		for _, c := range x.carriers() {
+		carriers := x.carriers()
+		if x.apart != nil {
+			carriers = append(carriers, x.apart.carriers()...)
+		}
+		for _, c := range carriers {
 			carry[c] = true
 		}
 	}
 	withConstant := func() {
-		for j, u := range x.cols {
+		for j, u := range all {
 			out[j] = out[j] || carry[u.column]
 		}
 	}
-	used := map[int]bool{}
-	for _, u := range x.cols {
-		used[u.column] = true
-	}
-	for j, u := range x.cols {
+	for j, u := range all {
 		switch {
 		case u.term < 0:
 		case sc.Lone[u.column]:
@@ -92,11 +109,12 @@ func (x *solution) loneClusters(sc *accum.Scores) []bool {
 			continue
 		}
 		gi := s.Group(term.Categories)
-		for c := range s.Columns {
-			col := &s.Columns[c]
-			if col.Group == gi && col.Part == 0 && !used[c] && sc.Lone[c] {
+		first, n := s.GroupColumns(gi)
+		for i := range n {
+			c := first + i*len(s.Groups[gi].Parts)
+			if !used[c] && sc.Lone[c] {
 				withConstant()
-				for j, u := range x.cols {
+				for j, u := range all {
 					out[j] = out[j] || u.term == t
 				}
 			}

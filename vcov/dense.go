@@ -53,6 +53,21 @@ func sandwich(a, b []float64, k int) []float64 {
 	return out
 }
 
+// sandwichDiagonal is the diagonal of sandwich, bit for bit.
+func sandwichDiagonal(a, b []float64, k int) []float64 {
+	out := make([]float64, k)
+	t := make([]float64, k)
+	for i := range k {
+		clear(t)
+		row := a[i*k : (i+1)*k]
+		for j, x := range row {
+			axpy(x, b[j*k:(j+1)*k], t)
+		}
+		out[i] = dot(t, row)
+	}
+	return out
+}
+
 // elimination is the ordered Cholesky factorisation of a positive semidefinite
 // matrix with unit-scaled diagonal, leaving out each column whose pivot is at most
 // tol: it depends on the columns before it.

@@ -36,7 +36,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
 	if o.Timings {
 		f.scan.Timings = new(accum.Timings)
 	}
@@ -202,6 +202,10 @@ func (f *fitter) second() error {
 	if s.Extended {
 		rp.ThetaLow = x.thetaLow
 	}
+	if x.apart != nil {
+		rp.Eliminated = x.apart.elim
+		rp.ThetaLow = make([]float64, len(x.theta))
+	}
 	seen := map[string]bool{}
 	lever := false
 	for _, k := range f.o.Errors {
@@ -243,10 +247,10 @@ func (f *fitter) second() error {
 		if err != nil {
 			return err
 		}
-		sums.Meats[i] = more.Meats[0]
+		sums.Meats[i], sums.MeatBlocks[i] = more.Meats[0], more.MeatBlocks[0]
 		rp.Weights = f.weights(f.kinds, most)
 	}
-	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency {
+	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency && x.apart == nil {
 		return f.heavy(rp, most)
 	}
 	return nil
@@ -345,14 +349,15 @@ func (f *fitter) errorsFor(k Kind) Errors {
 func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	x := f.sol
 	if x.perfect {
-		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: float64(x.df()), joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
+		x.infer(e, x.nothing(float64(x.df())), f.o.Level, f.o.Covariance)
 		return
 	}
 	var meat []float64
+	var blocks accum.Blocks
 	if f.sums != nil {
 		for i, name := range f.kinds {
 			if name == k.Name || (name == "hc0" && k.Name == "hc1") {
-				meat = f.sums.Meats[i]
+				meat, blocks = f.sums.Meats[i], f.sums.MeatBlocks[i]
 			}
 		}
 	} else {
@@ -362,7 +367,7 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 			return
 		}
 	}
-	r := x.hc(k.Name, meat)
+	r := x.hc(k.Name, meat, blocks)
 	if f.sums == nil {
 		r.noise = f.noise
 	}
@@ -385,7 +390,7 @@ func (f *fitter) tellLost(e *Errors, r *estimate) {
 	}
 	for j, lost := range r.lost {
 		if lost && !math.IsNaN(f.sol.est[j]) {
-			term := f.sol.cols[j].label
+			term := f.sol.coefficient(j).label
 			f.told[e.Name()+"\x00"+term] = true
 			f.warn = append(f.warn, Warning{Code: "digits", Term: ptr(term), Kind: ptr(e.Name()),
 				Text: fmt.Sprintf("what forms %s of %s cancels to less than rounding; it is left out", e.Name(), term)})
@@ -393,15 +398,24 @@ func (f *fitter) tellLost(e *Errors, r *estimate) {
 	}
 }
 
+// nothing is the estimate of a perfect fit.
+func (x *solution) nothing(df float64) *estimate {
+	r := &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}
+	if x.apart != nil {
+		r.apart = &apartMeat{rest: r.v, own: make([]float64, len(x.state.Apart.D)), scale: 1}
+	}
+	return r
+}
+
 // loneTerms marks coefficients that a single row decides.
 func (f *fitter) loneTerms() []bool {
 	x, s := f.sol, f.state
-	out := make([]bool, x.k())
+	out := make([]bool, x.count())
 	if f.sums != nil {
 		if f.sums.LoneGram == nil {
 			return nil
 		}
-		for j, q := range x.share(f.sums.LoneGram) {
+		for j, q := range x.share(f.sums.LoneGram, f.sums.LoneBlocks) {
 			out[j] = q > loneShare
 		}
 		return out
@@ -455,7 +469,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		if sc != nil {
 			df = float64(len(sc.Keys) - 1)
 		}
-		x.infer(e, &estimate{v: make([]float64, x.k()*x.k()), factor: 1, df: df, joint: plainJoint(0)}, f.o.Level, f.o.Covariance)
+		x.infer(e, x.nothing(df), f.o.Level, f.o.Covariance)
 		return
 	case sc == nil:
 		x.unavailable(e, "the sums of the clusters were not kept")

@@ -68,16 +68,26 @@ func hcWeight(kind string, perTerm, most float64) func(gap float64) float64 {
 	return func(float64) float64 { return 1 }
 }
 
-// hc returns the estimate from a meat over internal columns.
-func (x *solution) hc(kind string, meat []float64) *estimate {
+// hc returns the estimate from a meat over internal columns and, if a group is
+// apart, its blocks.
+func (x *solution) hc(kind string, meat []float64, b accum.Blocks) *estimate {
 	df := float64(x.df())
-	m := x.project(meat)
-	v := sandwich(x.inverse, m, x.k())
-	r := &estimate{v: v, meat: m, factor: 1, df: df, joint: plainJoint(df)}
+	r := &estimate{factor: 1, df: df, joint: plainJoint(df)}
+	if x.apart != nil {
+		r.apart = x.rowMeat(meat, b)
+		r.meat = r.apart.rest
+	} else {
+		r.meat = x.project(meat)
+	}
+	v := sandwich(x.inverse, r.meat, x.k())
+	r.v = v
 	if kind == "hc1" {
 		r.factor = float64(x.n) / df
 		for i := range v {
 			v[i] *= r.factor
+		}
+		if r.apart != nil {
+			r.apart.scale = r.factor
 		}
 	}
 	return r
@@ -91,8 +101,8 @@ func (x *solution) hc(kind string, meat []float64) *estimate {
 func (x *solution) cancellation(meat, gross []float64) (loss float64, noise []float64) {
 	k := x.k()
 	l := x.bread()
-	net := sandwich(l, x.project(meat), k)
-	all := sandwich(absolute(l), x.projectAbs(gross), k)
+	net := sandwichDiagonal(l, x.project(meat), k)
+	all := sandwichDiagonal(absolute(l), x.projectAbs(gross), k)
 	floor := x.zeroVariance()
 	noise = make([]float64, k)
 	worst := 0.0
@@ -100,11 +110,11 @@ func (x *solution) cancellation(meat, gross []float64) (loss float64, noise []fl
 		if math.IsNaN(x.est[j]) {
 			continue
 		}
-		noise[j] = 64 * 0x1p-53 * all[j*k+j]
-		if net[j*k+j] <= noise[j] && noise[j] <= harmless(floor[j]) {
+		noise[j] = 64 * 0x1p-53 * all[j]
+		if net[j] <= noise[j] && noise[j] <= harmless(floor[j]) {
 			continue // zero
 		}
-		r := all[j*k+j] / max(net[j*k+j], floor[j])
+		r := all[j] / max(net[j], floor[j])
 		if !(r >= 0) {
 			r = math.Inf(1)
 		}
@@ -129,11 +139,16 @@ func (x *solution) bread() []float64 {
 // an error counts as zero.
 func (x *solution) zeroVariance() []float64 {
 	k := x.k()
-	m := sandwich(x.wAlias, x.inverse, k)
+	m := sandwichDiagonal(x.wAlias, x.inverse, k)
 	out := make([]float64, k)
 	share := max(zeroShare, 100*x.blur*x.blur)
 	for j := range k {
-		out[j] = share * x.rss / float64(max(1, x.df())) * m[j*k+j]
+		out[j] = share * x.rss / float64(max(1, x.df())) * m[j]
+	}
+	if x.apart != nil {
+		for _, u := range x.apartUnit() {
+			out = append(out, share*x.rss/float64(max(1, x.df()))*u)
+		}
 	}
 	return out
 }

@@ -28,6 +28,10 @@ type Options struct {
 	ClusterMemory int64
 	// Covariance asks for the matrix beyond 200 terms.
 	Covariance bool
+	// Dense is the number of columns up to which the sums are solved as one dense
+	// matrix; beyond it the category with most levels is eliminated first. 0 means
+	// the default of accum.Options.Dense. The last bits depend on it.
+	Dense int
 	// Meter, if not nil, is counted up while the scan runs.
 	Meter *accum.Meter
 	// Timings asks for Run.Timings.

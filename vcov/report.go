@@ -39,11 +39,13 @@ func (f *fitter) result() *Result {
 		r.Weight.Kind = ptr(n)
 	}
 	r.Terms, r.Estimates = []string{}, []Number{}
-	for _, u := range x.cols {
-		r.Terms = append(r.Terms, u.label)
-	}
-	for _, b := range x.est {
-		r.Estimates = append(r.Estimates, Number(b))
+	order := x.order()
+	for i := range x.count() {
+		if order != nil {
+			i = order[i]
+		}
+		r.Terms = append(r.Terms, x.coefficient(i).label)
+		r.Estimates = append(r.Estimates, Number(x.est[i]))
 	}
 	f.fitQuality(r)
 	for _, k := range f.o.Errors {

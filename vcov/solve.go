@@ -54,7 +54,7 @@ func solve(b *basis) *solution {
 	if x.kind == stream.Frequency {
 		x.n = s.Freq
 	}
-	g := b.project(s.S)
+	g := b.project(b.sums)
 	v, svv := b.outcome()
 	c := make([]float64, k)
 	b.projectVec(v, c)
@@ -64,7 +64,7 @@ func solve(b *basis) *solution {
 		}
 	}
 	var gross []float64
-	if b.sel == nil {
+	if b.sel == nil || b.apart != nil {
 		gross = b.projectAbs(absolute(s.S))
 	}
 	x.e = eliminateGross(g, gross, k, aliasPivot)
@@ -77,9 +77,12 @@ func solve(b *basis) *solution {
 	}
 	x.gamma = x.e.solve(c)
 	x.inverse = x.e.inverse()
+	x.rss = max(0, svv-dot(x.gamma, c))
 	x.svv = svv
-	x.rss = max(0, x.svv-dot(x.gamma, c))
-	if s.Extended {
+	if b.apart != nil {
+		x.svv = s.S[p*(p+1)+p] // what rounding in rss is measured by
+	}
+	if x.extended() {
 		x.refine()
 		if len(s.Groups) == 0 {
 			x.blur *= 0x1p-50 // the sums have twice the digits
@@ -96,17 +99,25 @@ func solve(b *basis) *solution {
 			x.theta[i] += b.beside[i]
 		}
 	}
-	if s.Extended {
+	if x.extended() {
 		x.wideTheta()
 	}
 	x.estimates()
+	if b.apart != nil {
+		x.apartEstimates()
+	}
 	// rss has an error of some eps svv: only what is below the limit with that error
 	// is known to be perfect.
 	x.perfect = x.rss+8*0x1p-52*x.svv <= perfectShare*perfectShare*x.outcomeSquares(false)
 	return x
 }
 
-func (x *solution) rank() int { return len(x.e.kept) }
+func (x *solution) rank() int {
+	if x.apart != nil {
+		return len(x.e.kept) + x.apart.elim.Rank
+	}
+	return len(x.e.kept)
+}
 
 // df is N - k.
 func (x *solution) df() int64 { return x.n - int64(x.rank()) }
@@ -135,7 +146,7 @@ func (x *solution) outcomeSquares(centred bool) float64 {
 	if !centred {
 		return max(0, q)
 	}
-	if s.Shifted() {
+	if s.Shifted() || x.apart != nil {
 		return max(0, q-one*one/s.S[0])
 	}
 	// Without shifts the mean is large: take it out of the combination, not of the
@@ -168,8 +179,8 @@ func (x *solution) constantSpanned() bool {
 func (x *solution) besideConstant() float64 {
 	s := x.state
 	c := make([]float64, x.k())
-	x.projectVec(s.S[:len(s.Columns)], c)
-	r := s.S[0] - dot(x.e.solve(c), c)
+	x.projectVec(x.sums[:len(s.Columns)], c)
+	r := x.sums[0] - dot(x.e.solve(c), c)
 	if r <= noiseShare*s.S[0] {
 		return 0
 	}
@@ -245,7 +256,7 @@ func (x *solution) onKept(full []float64) []float64 {
 // aliases names each dropped column with the kept ones it depends on, and
 // changes W so that its part of the fit goes to those.
 func (x *solution) aliases() {
-	k, m := x.k(), x.rank()
+	k, m := x.k(), len(x.e.kept)
 	g := x.e.g
 	// alpha: q_a = sum alpha_i q_i on the data.
 	alpha := map[int][]float64{}
@@ -312,6 +323,9 @@ func (x *solution) aliases() {
 				axpy(ct, x.w[a*k:(a+1)*k], w[p*k:(p+1)*k])
 			}
 		}
+		if x.apart != nil && x.apart.holds(x.cols[a].column) {
+			al.DependsOn = append(al.DependsOn, x.apart.text())
+		}
 		clear(w[a*k : (a+1)*k])
 		x.alias = append(x.alias, al)
 	}
@@ -330,14 +344,26 @@ func (x *solution) covariance(v []float64) []float64 {
 
 // spread maps G^-1 A G^-1 to the coefficients and returns its diagonal over the
 // diagonal of the inverse: how much of each coefficient A decides.
-func (x *solution) share(internal []float64) []float64 {
+func (x *solution) share(internal []float64, b accum.Blocks) []float64 {
 	k := x.k()
-	v := sandwich(x.wAlias, sandwich(x.inverse, x.project(internal), k), k)
-	m := sandwich(x.wAlias, x.inverse, k)
-	out := make([]float64, k)
-	for j := range k {
-		if d := m[j*k+j]; d > 0 {
-			out[j] = v[j*k+j] / d
+	var group *apartMeat
+	var meat []float64
+	if x.apart != nil {
+		group = x.rowMeat(internal, b)
+		meat = group.rest
+	} else {
+		meat = x.project(internal)
+	}
+	v := sandwichDiagonal(x.wAlias, sandwich(x.inverse, meat, k), k)
+	unit := sandwichDiagonal(x.wAlias, x.inverse, k)
+	if x.apart != nil {
+		more, _ := x.apartVariances(group)
+		v, unit = append(v, more...), append(unit, x.apartUnit()...)
+	}
+	out := make([]float64, len(v))
+	for j, d := range unit {
+		if d > 0 {
+			out[j] = v[j] / d
 		}
 	}
 	return out
@@ -346,7 +372,7 @@ func (x *solution) share(internal []float64) []float64 {
 // whitener is the P x m matrix with G^-1 = W W' in internal columns.
 func (x *solution) whitener() ([]float64, int) {
 	h := x.e.half()
-	m, k, p := x.rank(), x.k(), len(x.state.Columns)
+	m, k, p := len(x.e.kept), x.k(), len(x.state.Columns)
 	out := make([]float64, p*m)
 	if x.sel != nil {
 		for i, c := range x.sel {
@@ -434,6 +460,9 @@ func (x *solution) warnings() []Warning {
 			text = fmt.Sprintf("%s is a linear combination of %s; it has no estimate", a.Term, list(a.DependsOn, 6))
 		}
 		ws = append(ws, Warning{Code: "aliased", Term: ptr(a.Term), Text: text})
+	}
+	if x.apart != nil {
+		ws = append(ws, x.apart.warnings(len(x.alias) > 0)...)
 	}
 	for i, p := range x.e.pivots {
 		if p > aliasPivot && p < nearPivot && !x.state.Frame.White {
