@@ -57,8 +57,21 @@ func ScaleColumns(dst []float64, strideDst int, x []float64, stride, rows, cols 
 	if len(w) < rows {
 		panic(shortW)
 	}
-	scaleColumns(dst, strideDst, x, stride, cols, w[:rows])
+	w = w[:rows]
+	if rows*cols <= panelBlock {
+		scaleColumns(dst, strideDst, x, stride, cols, w)
+		return
+	}
+	for j := range cols {
+		scale(dst[j*strideDst:][:rows], x[j*stride:], w)
+	}
 }
+
+// panelBlock is how many elements two blocks may have that both fit the
+// first-level cache. Going through them panel by panel, with the factors in
+// registers, is faster there by half, and half as fast beyond, where whole
+// columns keep the processor's prefetching busy.
+const panelBlock = 2048
 
 // Zeros counts the elements of x that are zero, of either sign.
 func Zeros(x []float64) int { return zeros(x) }

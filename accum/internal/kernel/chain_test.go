@@ -358,6 +358,16 @@ func BenchmarkChain(b *testing.B) {
 			b.Run(fmt.Sprintf("f=%s/cols=%d", c.name, cols), func(b *testing.B) { versus(b, c.f, c.by) })
 		}
 	}
+	for _, cols := range []int{4, 10, 20} {
+		x, dst, w := benchBlock(stride, cols), make([]float64, stride*cols), benchBlock(rows, 1)
+		b.Run(fmt.Sprintf("f=ScaleColumns/cols=%d", cols), func(b *testing.B) {
+			versus(b, func() { ScaleColumns(dst, stride, x, stride, rows, cols, w) }, func() {
+				for j := range cols {
+					Scale(dst[j*stride:][:rows], x[j*stride:], w)
+				}
+			})
+		})
+	}
 	x, dst := benchBlock(rows, 1), make([]float64, rows)
 	b.Run("f=ShiftScale", func(b *testing.B) {
 		versus(b, func() { ShiftScale(dst, x, 1, 0.5) }, func() { shiftScaleRef(dst, x, 1, 0.5) })
