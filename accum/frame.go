@@ -35,8 +35,8 @@ type Frame struct {
 	Sample float64
 	// Cond is the condition number of the scaled terms in those rows.
 	Cond float64
-	// Digits is the number of decimal digits that the coefficients of the terms
-	// would keep in double arithmetic, judged by those rows.
+	// Digits is the number of decimal digits that the coefficients would keep in
+	// double arithmetic, judged by those rows; of the constant only under White.
 	Digits float64
 
 	constantDigits float64 // of the constant

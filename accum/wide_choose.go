@@ -25,7 +25,7 @@ func (s *Sample) NeedsExtended() bool {
 	return f != nil && f.Lossy()
 }
 
-// predict sets Digits from the factorisation that made the frame: kept terms with
+// predict sets the digits from the factorisation that made the frame: kept terms with
 // orthogonal coordinates gamma, inv the inverse of their m x m triangle.
 //
 // Rounding is spread over rows like noise. What float64 rounds off terms (ell), in
@@ -92,6 +92,11 @@ func (f *Frame) predict(r *frameRows, kept []int, inv, gamma []float64, ss, sigm
 	}
 	f.Digits = digitsLeft(worst)
 	f.constantDigits = digitsLeft(2 * eps * size / math.Max(math.Abs(constant), 1e-12*(sigma+fitted)))
+	if f.White {
+		// Coefficients that collinearity makes large leave little of the constant; with
+		// offsets alone that is but the distance of zero from the data.
+		f.Digits = min(f.Digits, f.constantDigits)
+	}
 }
 
 func digitsLeft(loss float64) float64 {

@@ -443,3 +443,54 @@ func TestExtendedAliases(t *testing.T) {
 		}
 	}
 }
+
+// sequential hides that a source can be sampled, as that of a compressed file.
+type sequential struct{ stream.Source }
+
+func (s sequential) Info() stream.Info {
+	i := s.Source.Info()
+	i.Sampled = false
+	return i
+}
+
+// The first rows do not show how collinear the rest is. What can be read again is
+// summed again; a pipe says how many digits are left.
+func TestExtendedAtSecondSight(t *testing.T) {
+	r := rand.New(rand.NewPCG(61, 62))
+	tb := &table{}
+	const n = 3000
+	a, b, y := make([]float64, n), make([]float64, n), make([]float64, n)
+	var rows [][]*big.Float
+	var ys []*big.Float
+	for i := range a {
+		a[i], b[i] = r.NormFloat64(), r.NormFloat64()
+		if i >= 500 {
+			a[i] *= 1e8
+			b[i] += a[i]
+		}
+		y[i] = 2*(b[i]-a[i]) + 0.3*r.NormFloat64()
+		rows = append(rows, []*big.Float{whole(1), quo(exactly(a[i]), whole(3)), quo(exactly(b[i]), whole(7))})
+		ys = append(ys, exactly(y[i]))
+	}
+	tb.float("a", a)
+	tb.float("b", b)
+	tb.float("y", y)
+	spec := stream.Spec{Outcome: "y", Terms: []string{"a/3", "b/7"}}
+	e := exact(t, rows, ys, true)
+	names := []string{"classical", "hc0", "hc1"}
+	again := fit(t, sequential{tb.source(500)}, spec, vcov.Options{Errors: kinds(names...)})
+	atLeast(t, again, e, names, 15, 13)
+	if again.Run.Arithmetic != "extended" || !strings.Contains(fmt.Sprint(again.Warnings), "repeated in extended arithmetic") {
+		t.Errorf("%s arithmetic, warnings %v", again.Run.Arithmetic, again.Warnings)
+	}
+	pipe := fit(t, openPipe(t, tb.csv(), stream.Options{SegmentBytes: 1 << 14}), spec, vcov.Options{Errors: kinds(names...)})
+	told := 0
+	for _, w := range pipe.Warnings {
+		if w.Code == "digits" {
+			fmt.Sscanf(w.Text, "terms are nearly collinear: some estimates may have only about %d digits", &told)
+		}
+	}
+	if got := least(floats(pipe.Estimates), e.coefficients()); pipe.Run.Arithmetic != "double" || told == 0 || got < float64(told)-0.5 || got > float64(told)+4 {
+		t.Errorf("pipe: %s arithmetic, %.1f digits, told %d", pipe.Run.Arithmetic, got, told)
+	}
+}

@@ -449,7 +449,11 @@ func (x *solution) needsFrame() bool {
 	if x.perfect {
 		return false
 	}
-	return x.condition() > 1e3 || x.svv > 1e4*x.rss
+	most := 1e3
+	if x.state.Extended {
+		most = 30 // errors are float64 and square the condition: they shall keep up
+	}
+	return x.condition() > most || x.svv > 1e4*x.rss
 }
 
 func (x *solution) warnings() []Warning {
