@@ -106,7 +106,7 @@ func (o *column) read(p *parser, r, n int) int {
 	if o.holes {
 		clear(o.null[r : r+n]) // of rows that were read before, in vain
 	}
-	for k := 0; ; k++ {
+	for k := 0; k < n; k++ {
 		switch {
 		case o.kind == stream.Text:
 			k = o.texts(&c, k, o.code[r:r+n], p.rules)

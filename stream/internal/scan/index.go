@@ -61,18 +61,10 @@ func (x *Index) More(text []byte, delim byte) bool {
 	}
 	end := len(text)
 	text = text[:end+Pad]
-	d, nl, qt := ones*uint64(delim), ones*uint64('\n'), ones*uint64('"')
 	pos := x.pos
 	for pos < end && n <= room {
 		block := (*[64]byte)(text[pos:])
-		var s, quotes uint64
-		for j := 0; j < 64; j += 8 {
-			w := binary.LittleEndian.Uint64(block[j : j+8])
-			y := w &^ highs
-			stop := ^((y ^ d + lows) & (y ^ nl + lows)) &^ w & highs
-			quotes |= ^(y ^ qt + lows) &^ w & highs
-			s = s>>8 | stop*gather&(0xff<<56)
-		}
+		s, quotes := stops(block, ones*uint64(delim))
 		if left := end - pos; left < 64 {
 			s &= 1<<left - 1
 		}
@@ -103,6 +95,21 @@ func (x *Index) More(text []byte, delim byte) bool {
 	x.pos = pos
 	x.Ends = ends[:n]
 	return true
+}
+
+// stops returns a bit for each byte that is a delimiter or a newline, and
+// something other than zero if there is a quote.
+func stops(block *[64]byte, delim uint64) (bits, quotes uint64) {
+	quotes = ^uint64(0)
+	for j := 0; j < 64; j += 8 {
+		w := binary.LittleEndian.Uint64(block[j : j+8])
+		y := w & lows
+		// The high bit of a byte that is none of them stays set.
+		other := (y^delim+lows)&(y^ones*'\n'+lows) | w
+		quotes &= y ^ ones*'"' + lows | w
+		bits = bits>>8 | other&highs*gather&(0xff<<56)
+	}
+	return ^bits, ^quotes & highs
 }
 
 // gather brings the high bits of eight bytes together in the highest one.

@@ -254,117 +254,164 @@ func (c *Column) Cell(r int) (start, end int) {
 	return start, end
 }
 
-// Floats reads the cells of rows r, r+1, ... up to len(out) as ParseFloat does,
-// and NaN for an empty one. It returns the row of the first cell that is no
-// number, or len(out).
+// Floats reads the cells of rows r, r+1, ... below len(out) as ParseFloat does,
+// and NaN for an empty one. Quotes around a cell are passed over. It returns the
+// row of the first cell that is no number, or len(out).
 func (c *Column) Floats(r int, out []float64, point byte) int {
-	text := c.Text[:len(c.Text)+Pad]
+	text, ends, stride, last := c.Text[:len(c.Text)+Pad], c.Ends[r*c.Stride:], c.Stride, c.Last
 	pt := uint64(point ^ '0')
-	for ; r < len(out); r++ {
-		start, end := c.Cell(r)
+	for k, j := 0, r; j < len(out); k, j = k+stride, j+1 {
+		e := ends[k : k+2]
+		start, end := int(e[0])+1, int(e[1])
+		if last && end > start && text[end-1] == '\r' {
+			end--
+		}
 		var neg int
 		if text[start] == '-' {
 			neg = 1
 		}
 		i := start + neg
-		var m uint64
-		var frac int // digits after the point
-		switch n := end - i; {
-		case uint(n-1) < 8:
+		n := end - i
+		if uint(n-1) < 8 {
+			// The digits are at the high end of a word.
 			x := (load(text, i) ^ zeros) << (uint(64-8*n) & 63)
 			o := other(x)
 			if o == 0 {
-				out[r] = sign(float64(int64(eight(x))), neg)
+				out[j] = sign(float64(int64(eight(x))), neg)
 				continue
 			}
 			k := bits.TrailingZeros64(o) &^ 7
-			if o&(o-1) != 0 || x>>k&0xff != pt || n == 1 {
-				break
-			}
-			x = x&^(o<<1-1) | x&(o>>7-1)<<8
-			out[r] = sign(float64(int64(eight(x)))/pow10[7-k>>3], neg)
-			continue
-		case uint(n-9) < 8:
-			x, y := (load(text, i)^zeros)<<(uint(128-8*n)&63), load(text, end-8)^zeros
-			o, p := other(x), other(y)
-			switch {
-			case o|p == 0:
-			case p == 0:
-				k := bits.TrailingZeros64(o) &^ 7
-				if o&(o-1) != 0 || x>>k&0xff != pt {
-					goto slow
-				}
-				frac = 15 - k>>3
-				x = x&^(o<<1-1) | x&(o>>7-1)<<8
-			case o == 0:
-				k := bits.TrailingZeros64(p) &^ 7
-				if p&(p-1) != 0 || y>>k&0xff != pt {
-					goto slow
-				}
-				frac = 7 - k>>3
-				y = y&^(p<<1-1) | y&(p>>7-1)<<8 | x>>56
-				x <<= 8
-			default:
-				goto slow
-			}
-			m = eight(x)*1e8 + eight(y)
-			if m < 1<<53 {
-				out[r] = sign(float64(int64(m))/pow10[frac], neg)
+			if o&(o-1) == 0 && x>>(k&63)&0xff == pt && n > 1 {
+				out[j] = sign(float64(int64(eight(closeUp(x, o))))/pow10[7-k>>3], neg)
 				continue
 			}
-			out[r] = sign(round(m, -frac), neg)
-			continue
-		case n == 0 && neg == 0:
-			out[r] = math.NaN()
-			continue
 		}
-	slow:
-		v, s := ParseFloat(text[start:end], point)
-		if s != OK {
-			return r
+		v, ok := float(text, start, end, point)
+		if !ok {
+			return j
 		}
-		out[r] = v
+		out[j] = v
 	}
-	return r
+	return len(out)
 }
+
+// float reads the cell from start to end as Floats does.
+func float(text []byte, start, end int, point byte) (v float64, ok bool) {
+	if start == end {
+		return math.NaN(), true
+	}
+	if text[start] == '"' {
+		if start, end = start+1, end-1; start == end {
+			return 0, false
+		}
+	}
+	var neg int
+	if text[start] == '-' {
+		neg = 1
+	}
+	i := start + neg
+	n := end - i
+	if uint(n-1) >= 24 {
+		return general(text[start:end], point)
+	}
+	// The digits are at the high end of three words, the point is in one of
+	// them. Nobody can foresee in which: no branches.
+	var x, y uint64
+	z := load(text, i) ^ zeros
+	switch {
+	case n <= 8:
+		z <<= uint(64-8*n) & 63
+	case n <= 16:
+		y, z = z<<(uint(128-8*n)&63), load(text, end-8)^zeros
+	default:
+		x, y, z = z<<(uint(192-8*n)&63), load(text, end-16)^zeros, load(text, end-8)^zeros
+	}
+	o, p, q := other(x), other(y), other(z)
+	at := 23
+	if o|p|q != 0 {
+		if w := closeUp(z, q) | y>>56; q != 0 {
+			z = w
+		}
+		if w := closeUp(y, p) | x>>56; p|q != 0 {
+			y = w
+		}
+		x = closeUp(x, o)
+		at = bits.TrailingZeros64(o|p|q) >> 3
+		if p != 0 {
+			at += 8
+		}
+		if q != 0 {
+			at += 16
+		}
+		if o&(o-1)|p&(p-1)|q&(q-1) != 0 || o != 0 && p|q != 0 || p != 0 && q != 0 || text[end-24+at] != point || n == 1 {
+			return general(text[start:end], point)
+		}
+	}
+	high := eight(x)
+	if high >= 1800 { // beyond 64 bits
+		return general(text[start:end], point)
+	}
+	m := (high*1e8+eight(y))*1e8 + eight(z)
+	if n <= 16 && m < 1<<53 {
+		return sign(float64(int64(m))/pow10[23-at], neg), true
+	}
+	return sign(lemire(m, at-23), neg), true
+}
+
+// general reads what is not a sign, at most 24 characters and a point.
+func general(cell []byte, point byte) (float64, bool) {
+	v, s := ParseFloat(cell, point)
+	return v, s == OK
+}
+
+// closeUp takes out the character that o marks: what stands before it moves up.
+func closeUp(x, o uint64) uint64 { return x&^(o<<1-1) | x&(o>>7-1)<<8 }
 
 func sign(v float64, neg int) float64 {
 	return math.Float64frombits(math.Float64bits(v) | uint64(neg)<<63)
 }
 
-// Ints reads the cells of rows r, r+1, ... up to len(out) as ParseInt does. It
+// Ints reads the cells of rows r, r+1, ... below len(out) as ParseInt does. It
 // returns the row of the first cell that is not of at most 16 digits without
 // plus sign and leading zeros, or len(out).
 func (c *Column) Ints(r int, out []int64) int {
-	text := c.Text[:len(c.Text)+Pad]
-	for ; r < len(out); r++ {
-		i, end := c.Cell(r)
-		var neg int64
+	text, ends, stride, last := c.Text[:len(c.Text)+Pad], c.Ends[r*c.Stride:], c.Stride, c.Last
+	for k, j := 0, r; j < len(out); k, j = k+stride, j+1 {
+		e := ends[k : k+2]
+		i, end := int(e[0])+1, int(e[1])
+		if last && end > i && text[end-1] == '\r' {
+			end--
+		}
+		if text[i] == '"' && end > i {
+			i, end = i+1, end-1
+		}
+		var neg int
 		if text[i] == '-' {
 			neg = 1
 		}
-		i += int(neg)
+		i += neg
 		n := end - i
-		var v int64
+		if n > 1 && text[i] == '0' {
+			return j
+		}
+		var v uint64
 		switch {
-		case n > 1 && text[i] == '0':
-			return r
 		case uint(n-1) < 8:
 			x := (load(text, i) ^ zeros) << (uint(64-8*n) & 63)
 			if other(x) != 0 {
-				return r
+				return j
 			}
-			v = int64(eight(x))
+			v = eight(x)
 		case uint(n-9) < 8:
 			x, y := (load(text, i)^zeros)<<(uint(128-8*n)&63), load(text, end-8)^zeros
 			if other(x)|other(y) != 0 {
-				return r
+				return j
 			}
-			v = int64(eight(x)*1e8 + eight(y))
+			v = eight(x)*1e8 + eight(y)
 		default:
-			return r
+			return j
 		}
-		out[r] = v ^ -neg + neg
+		out[j] = int64(v) * int64(1-2*neg)
 	}
-	return r
+	return len(out)
 }

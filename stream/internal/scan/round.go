@@ -66,16 +66,12 @@ var powers = func() (t [maxPower - minPower + 1]power) {
 //
 // A mantissa below 2^53 times or over a power of ten up to 10^22 is one rounding
 // of exact operands (Clinger, How to read floating point numbers accurately,
-// 1990, doi:10.1145/93542.93557). All others are multiplied by the first 64 or
-// 128 bits of the power, which is always enough (Lemire, Number parsing at a
-// gigabyte per second, 2021, doi:10.1002/spe.2984; that 128 bits decide in all
-// cases: Mushtak and Lemire, Fast number parsing without fallback, 2023,
-// doi:10.1002/spe.3198).
+// 1990, doi:10.1145/93542.93557).
 func round(m uint64, e int) float64 {
 	if m < 1<<53 {
 		v := float64(int64(m))
 		switch {
-		case e == 0 || m == 0:
+		case e == 0:
 			return v
 		case e < 0 && e >= -22:
 			return v / pow10[-e]
@@ -83,7 +79,16 @@ func round(m uint64, e int) float64 {
 			return v * pow10[e]
 		}
 	}
-	if e < minPower {
+	return lemire(m, e)
+}
+
+// lemire returns what round does. The mantissa is multiplied by the first 64 or
+// 128 bits of the power, which is always enough (Lemire, Number parsing at a
+// gigabyte per second, 2021, doi:10.1002/spe.2984; that 128 bits decide in all
+// cases: Mushtak and Lemire, Fast number parsing without fallback, 2023,
+// doi:10.1002/spe.3198).
+func lemire(m uint64, e int) float64 {
+	if m == 0 || e < minPower {
 		return 0
 	}
 	if e > maxPower {
