@@ -142,7 +142,7 @@ func opened(name string) (*os.File, int64, error) {
 	return f, st.Size(), nil
 }
 
-// share hands the numbers 0..n-1 to workers.
+// spread hands the numbers 0..n-1 to workers.
 func spread(workers, n int, do func(worker, i int) error) error {
 	var next atomic.Int64
 	var g errgroup.Group
