@@ -8,6 +8,7 @@ import (
 	"sync"
 
 	"github.com/tallrow/tallrow/accum/internal/kernel"
+	"github.com/tallrow/tallrow/stream"
 )
 
 // isApart reports whether group g is the one kept apart.
@@ -124,12 +125,19 @@ func (w *secondWorker) apartLeverage(r int, idx []int, val []float64) float64 {
 	return s
 }
 
-// GroupScores holds the scores of clusters in the columns of one group: those of
-// cluster g are entries Start[g] to Start[g+1], in order of combination.
-type GroupScores struct {
-	Start []int
-	Combo []int32
-	S     []float64 // Parts numbers for each entry
+// apartClusters holds all clusters of a key, in order, where there is a group apart.
+type apartClusters struct {
+	keys   []Key
+	rest   []float64 // Scores.P numbers of each
+	groups []groupScores
+}
+
+// groupScores holds the scores of clusters in the columns of one group: those of
+// cluster g are entries start[g] to start[g+1], in order of combination.
+type groupScores struct {
+	start []int
+	combo []int32
+	s     []float64 // Parts numbers for each entry
 }
 
 // apartCommon sums the scores of the clusters of one key by group, for all workers.
@@ -150,13 +158,15 @@ func newApartCommon(s *State, key, unit int) *apartCommon {
 // apartScores is one worker's part of it.
 type apartScores struct {
 	common  *apartCommon
+	keys    *interner
+	ids     []int32
 	number  []int32 // of clusters as this worker numbers them
 	buffers []*pairBuffer
 	vals    []float64
 }
 
 func newApartScores(c *apartCommon) *apartScores {
-	a := &apartScores{common: c}
+	a := &apartScores{common: c, keys: newInterner(c.keys.kind), ids: make([]int32, stream.BatchRows)}
 	for _, t := range c.sums {
 		a.buffers = append(a.buffers, &pairBuffer{t: t})
 	}
@@ -164,11 +174,13 @@ func newApartScores(c *apartCommon) *apartScores {
 }
 
 // add takes in the scores of a block.
-func (a *apartScores) add(w *secondWorker, kid []int32, keys *interner) {
-	if n := len(a.number); n < keys.size() {
+func (a *apartScores) add(w *secondWorker, keys *stream.Vector) {
+	kid := a.ids[:w.block.Rows]
+	a.keys.ids(keys, len(kid), kid)
+	if n := len(a.number); n < a.keys.size() {
 		a.common.mu.Lock()
-		for ; n < keys.size(); n++ {
-			a.number = append(a.number, a.common.keys.put(keys.key(int32(n))))
+		for ; n < a.keys.size(); n++ {
+			a.number = append(a.number, a.common.keys.put(a.keys.key(int32(n))))
 		}
 		a.common.mu.Unlock()
 	}
@@ -188,9 +200,12 @@ func (a *apartScores) add(w *secondWorker, kid []int32, keys *interner) {
 	}
 }
 
-// flush ends a fold and returns the bytes of the common tables.
+// flush ends a fold and returns the bytes of the common tables, and of the keys.
 func (a *apartScores) flush() int64 {
-	var held int64
+	a.common.mu.Lock()
+	held := a.common.keys.memory()
+	a.common.mu.Unlock()
+	held += a.keys.memory()
 	for _, b := range a.buffers {
 		b.flush()
 		held += b.t.memory()
@@ -198,11 +213,17 @@ func (a *apartScores) flush() int64 {
 	return held
 }
 
-// join puts the scores by group into sc, whose clusters are in order of key.
-func (c *apartCommon) join(s *State, sc *Scores) (over bool, unit int) {
+// join puts all clusters, with their scores by group, into sc.
+func (c *apartCommon) join(s *State, sc *Scores) (over bool, unit int, err error) {
 	sorted := newInterner(c.keys.kind)
-	for _, k := range sc.Keys {
-		sorted.put(k)
+	all := &apartClusters{}
+	err = sc.Each(func(k *Cluster) error {
+		all.keys = append(all.keys, sorted.key(sorted.put(k.Key)))
+		all.rest = append(all.rest, k.S...)
+		return nil
+	})
+	if err != nil {
+		return false, 0, err
 	}
 	place := make([]int32, c.keys.size())
 	for i := range place {
@@ -213,26 +234,27 @@ func (c *apartCommon) join(s *State, sc *Scores) (over bool, unit int) {
 		o, _ := t.fits(0, s.Rows)
 		over, unit = over || o, max(unit, t.betterUnit(s.Rows))
 		q := len(s.lay.groups[g].parts)
-		gs := GroupScores{Start: make([]int, len(sc.Keys)+1)}
-		t.each(func(a, _ int32, _ []float64) { gs.Start[place[a]+1]++ })
-		for i := range sc.Keys {
-			gs.Start[i+1] += gs.Start[i]
+		gs := groupScores{start: make([]int, len(all.keys)+1)}
+		t.each(func(a, _ int32, _ []float64) { gs.start[place[a]+1]++ })
+		for i := range all.keys {
+			gs.start[i+1] += gs.start[i]
 		}
-		n := gs.Start[len(sc.Keys)]
-		gs.Combo, gs.S = make([]int32, n), make([]float64, n*q)
-		next := slices.Clone(gs.Start)
+		n := gs.start[len(all.keys)]
+		gs.combo, gs.s = make([]int32, n), make([]float64, n*q)
+		next := slices.Clone(gs.start)
 		t.each(func(a, b int32, vals []float64) {
 			at := next[place[a]]
 			next[place[a]]++
-			gs.Combo[at] = b
-			copy(gs.S[at*q:], vals)
+			gs.combo[at] = b
+			copy(gs.s[at*q:], vals)
 		})
-		for i := range sc.Keys {
-			sortEntries(gs.Combo[gs.Start[i]:gs.Start[i+1]], gs.S[gs.Start[i]*q:gs.Start[i+1]*q], q)
+		for i := range all.keys {
+			sortEntries(gs.combo[gs.start[i]:gs.start[i+1]], gs.s[gs.start[i]*q:gs.start[i+1]*q], q)
 		}
-		sc.Groups = append(sc.Groups, gs)
+		all.groups = append(all.groups, gs)
 	}
-	return over, unit
+	sc.apart = all
+	return over, unit, nil
 }
 
 // sortEntries sorts combos, and their q numbers with them.
@@ -267,44 +289,45 @@ func (s *State) ClusterMeat(sc *Scores, e *Eliminated, base int) *ClusterMeat {
 	const wide = chunk + 8
 	packed := make([]float64, n*(n+1)/2)
 	x, turned := make([]float64, chunk*n), make([]float64, wide*n)
-	own := &sc.Groups[s.Apart.Group]
+	all := sc.apart
+	own := &all.groups[s.Apart.Group]
 	baseAt := make([]float64, q)
-	for at := 0; at < len(sc.Keys); at += chunk {
-		rows := min(chunk, len(sc.Keys)-at)
+	for at := 0; at < len(all.keys); at += chunk {
+		rows := min(chunk, len(all.keys)-at)
 		clear(x)
 		for r := range rows {
 			c, row := at+r, x[r*n:(r+1)*n]
-			copy(row, sc.S[c*sc.P:(c+1)*sc.P])
+			copy(row, all.rest[c*sc.P:(c+1)*sc.P])
 			for g := range s.Groups {
 				if g == s.Apart.Group {
 					continue
 				}
-				gs, parts := &sc.Groups[g], len(s.Groups[g].Parts)
-				for i := gs.Start[c]; i < gs.Start[c+1]; i++ {
-					copy(row[s.Groups[g].first+int(gs.Combo[i])*parts:], gs.S[i*parts:(i+1)*parts])
+				gs, parts := &all.groups[g], len(s.Groups[g].Parts)
+				for i := gs.start[c]; i < gs.start[c+1]; i++ {
+					copy(row[s.Groups[g].first+int(gs.combo[i])*parts:], gs.s[i*parts:(i+1)*parts])
 				}
 			}
-			for i := own.Start[c]; i < own.Start[c+1]; i++ {
-				for k, t := range own.S[i*q : (i+1)*q] {
+			for i := own.start[c]; i < own.start[c+1]; i++ {
+				for k, t := range own.s[i*q : (i+1)*q] {
 					if t != 0 {
-						g := (int(own.Combo[i])*q + k) * n
+						g := (int(own.combo[i])*q + k) * n
 						kernel.Axpy(-t, e.G[g:g+n], row)
 					}
 				}
 			}
 			clear(baseAt)
-			if i, ok := slices.BinarySearch(own.Combo[own.Start[c]:own.Start[c+1]], int32(base)); ok {
-				copy(baseAt, own.S[(own.Start[c]+i)*q:])
+			if i, ok := slices.BinarySearch(own.combo[own.start[c]:own.start[c+1]], int32(base)); ok {
+				copy(baseAt, own.s[(own.start[c]+i)*q:])
 			}
-			for i := own.Start[c]; i < own.Start[c+1]; i++ {
-				j := int(own.Combo[i])
-				for k, t := range own.S[i*q : (i+1)*q] {
+			for i := own.start[c]; i < own.start[c+1]; i++ {
+				j := int(own.combo[i])
+				for k, t := range own.s[i*q : (i+1)*q] {
 					if t == 0 {
 						continue
 					}
 					kernel.Axpy(t, row, m.Within[(j*q+k)*n:(j*q+k+1)*n])
 					for l := range q {
-						m.Own[(j*q+k)*q+l] += t * own.S[i*q+l]
+						m.Own[(j*q+k)*q+l] += t * own.s[i*q+l]
 						m.Base[(j*q+k)*q+l] += t * baseAt[l]
 					}
 				}

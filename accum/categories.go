@@ -234,15 +234,6 @@ const (
 	apartMatrices = 5 // products of the eliminated group with the rest
 )
 
-// joinKeys puts the keys of src into dst and returns their numbers there.
-func joinKeys(dst, src *interner) []int32 {
-	to := make([]int32, src.size())
-	for i := range to {
-		to[i] = dst.put(src.key(int32(i)))
-	}
-	return to
-}
-
 // same maps the first n numbers to themselves.
 func same(n int) []int32 {
 	to := make([]int32, n)

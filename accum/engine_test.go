@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"strings"
 	"testing"
 
@@ -162,6 +163,22 @@ func columnsOf(s *State, t *table) (z [][]float64, w []float64) {
 	return z, w
 }
 
+// collect lists the clusters.
+func collect(t testing.TB, sc *Scores) (all []Cluster) {
+	t.Helper()
+	err := sc.Each(func(c *Cluster) error {
+		d := *c
+		d.Key.Text = strings.Clone(c.Key.Text)
+		d.S = slices.Clone(c.S)
+		all = append(all, d)
+		return nil
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	return all
+}
+
 func close12(t *testing.T, what string, got, want, scale float64) {
 	t.Helper()
 	if !(math.Abs(got-want) <= 1e-12*scale) {
@@ -257,9 +274,10 @@ func TestSecondSums(t *testing.T) {
 							t.Fatalf("meat differs between workers: %v, %v", x, base.Meats[0][i])
 						}
 					}
-					for i, x := range r.Scores[0].S {
-						if x != base.Scores[0].S[i] {
-							t.Fatalf("scores differ between workers: %v, %v", x, base.Scores[0].S[i])
+					want := collect(t, base.Scores[0])
+					for i, c := range collect(t, r.Scores[0]) {
+						if !slices.Equal(c.S, want[i].S) {
+							t.Fatalf("scores differ between workers: %v, %v", c, want[i])
 						}
 					}
 				}
@@ -305,16 +323,16 @@ func TestSecondSums(t *testing.T) {
 					close12(t, fmt.Sprintf("meat[%d,%d]", a, b), base.Meats[0][a*n+b], meat[a*n+b], scale[a*n+b]+1)
 				}
 			}
-			sc := base.Scores[0]
-			if len(sc.Keys) != len(score) {
-				t.Fatalf("%d clusters, want %d", len(sc.Keys), len(score))
+			sc := collect(t, base.Scores[0])
+			if len(sc) != len(score) {
+				t.Fatalf("%d clusters, want %d", len(sc), len(score))
 			}
-			for i, k := range sc.Keys {
-				if i > 0 && sc.Keys[i-1].Compare(k) >= 0 {
+			for i, c := range sc {
+				if i > 0 && sc[i-1].Key.Compare(c.Key) >= 0 {
 					t.Error("clusters are not in order of key")
 				}
 				for a := range p {
-					close12(t, fmt.Sprintf("score %d of cluster %d", a, k.Bits), sc.S[i*p+a], score[int64(k.Bits)][a], 1e4)
+					close12(t, fmt.Sprintf("score %d of cluster %d", a, c.Key.Bits), c.S[a], score[int64(c.Key.Bits)][a], 1e4)
 				}
 			}
 		})
@@ -365,12 +383,13 @@ func TestOnePassIsTwoPass(t *testing.T) {
 				if err != nil {
 					t.Fatal(err)
 				}
-				for i := range sc.Keys {
-					if sc.Keys[i] != r.Scores[0].Keys[i] || sc.Rows[i] != r.Scores[0].Rows[i] {
-						t.Fatalf("cluster %d: %v %d, want %v %d", i, sc.Keys[i], sc.Rows[i], r.Scores[0].Keys[i], r.Scores[0].Rows[i])
+				want := collect(t, r.Scores[0])
+				for i, c := range collect(t, sc) {
+					if c.Key != want[i].Key || c.Rows != want[i].Rows {
+						t.Fatalf("cluster %d: %v %d, want %v %d", i, c.Key, c.Rows, want[i].Key, want[i].Rows)
 					}
 					for a := range p {
-						close12(t, "score", sc.S[i*p+a], r.Scores[0].S[i*p+a], 1e3)
+						close12(t, "score", c.S[a], want[i].S[a], 1e3)
 					}
 				}
 			})
@@ -410,10 +429,12 @@ func TestUnitIsRenewed(t *testing.T) {
 		if err != nil {
 			t.Fatal(err)
 		}
-		for i := range sc.S {
-			a, b := sc.S[i], r.Scores[0].S[i]
-			if math.IsNaN(a) || math.Abs(a-b) > 1e-9*(math.Abs(a)+math.Abs(b)) && size > 1 {
-				t.Fatalf("size %g: score %v from sums, %v from rows", size, a, b)
+		want := collect(t, r.Scores[0])
+		for i, c := range collect(t, sc) {
+			for j, a := range c.S {
+				if b := want[i].S[j]; math.IsNaN(a) || math.Abs(a-b) > 1e-9*(math.Abs(a)+math.Abs(b)) && size > 1 {
+					t.Fatalf("size %g: score %v from sums, %v from rows", size, a, b)
+				}
 			}
 		}
 		if size > 1 && len(s.Repeated) == 0 {

@@ -17,8 +17,7 @@ type epoch struct {
 	fourth   []float64
 	tables   []*keyTable
 	pairs    []*pairTable
-	keys     []*interner
-	clusters []*keyTable
+	clusters []*groupStore
 	lone     []*loneTracker
 	reach    float64
 	weight   superSum
@@ -31,9 +30,9 @@ type epoch struct {
 }
 
 // joinWorkers joins the sums of workers exactly: the order does not show.
-func joinWorkers(ws []*firstWorker) *epoch {
+func joinWorkers(ws []*firstWorker) (*epoch, error) {
 	w := ws[0]
-	e := &epoch{frame: w.frame, tables: w.tables, pairs: pairTablesOf(w.pairs), keys: w.keys, clusters: w.clusters,
+	e := &epoch{frame: w.frame, tables: w.tables, pairs: pairTablesOf(w.pairs), clusters: make([]*groupStore, len(w.clusters)),
 		lone: w.lone, reach: w.reach, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
 	for _, o := range ws[1:] {
@@ -44,15 +43,10 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		for i, t := range o.tables {
 			e.tables[i].mergeFrom(t, same(len(t.rows)))
 		}
-		for k, t := range o.clusters {
-			if t == nil {
-				continue
+		for k, t := range o.lone {
+			if t != nil {
+				e.lone[k].mergeFrom(t)
 			}
-			to := joinKeys(e.keys[k], o.keys[k])
-			if !w.budget.dropped.Load() {
-				e.clusters[k].mergeFrom(t, to)
-			}
-			e.lone[k].mergeFrom(o.lone[k], to)
 		}
 		e.reach = max(e.reach, o.reach)
 		e.weight.merge(&o.weight)
@@ -64,15 +58,28 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		joinVaried(e.value, e.varied, o.value, o.varied)
 		e.tally.Add(&o.eval.Tally)
 	}
-	// A worker saw only its share of the clusters; the route must not show that.
-	var held int64
-	for k, t := range e.clusters {
-		if t != nil && !w.budget.dropped.Load() {
-			held += w.clusterBytes(k)
+	if !w.budget.dropped.Load() {
+		var held int64
+		for k, g := range w.clusters {
+			if g == nil {
+				continue
+			}
+			for _, o := range ws {
+				if err := o.clusters[k].finish(); err != nil {
+					return nil, err
+				}
+			}
+			e.clusters[k] = g.store
+			if !w.budget.keep {
+				// One worker alone may not have seen how many there are.
+				n, err := g.store.distinct()
+				if err != nil {
+					return nil, err
+				}
+				held += n * g.store.clusterBytes()
+			}
 		}
-	}
-	if held > w.budget.cluster {
-		w.budget.dropped.Store(true)
+		w.budget.drop(held)
 	}
 	e.gram = make([]float64, len(w.gram))
 	if w.wide != nil {
@@ -85,7 +92,7 @@ func joinWorkers(ws []*firstWorker) *epoch {
 		e.fourth = make([]float64, len(w.fourth))
 		w.fourX.values(e.fourth)
 	}
-	return e
+	return e, nil
 }
 
 // joinVaried joins what is known of the nonzero cells of numeric terms: one of
@@ -134,8 +141,12 @@ func (w *epochWorker) end() error {
 	if err := w.segment(0); err != nil {
 		return err
 	}
-	w.epochs = append(w.epochs, joinWorkers([]*firstWorker{w.firstWorker}))
-	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""))
+	e, err := joinWorkers([]*firstWorker{w.firstWorker})
+	if err != nil {
+		return err
+	}
+	w.epochs = append(w.epochs, e)
+	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""), w.budget.clusterStores(w.lay, w.needs))
 	w.eval.Tally = stream.Tally{}
 	return nil
 }
@@ -169,8 +180,12 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 	}
 	epochs := ew.epochs
 	if len(epochs) == 0 {
-		epochs = append(epochs, joinWorkers([]*firstWorker{ew.firstWorker}))
-		epochs[0].tally = tail
+		e, err := joinWorkers([]*firstWorker{ew.firstWorker})
+		if err != nil {
+			return nil, false, err
+		}
+		e.tally = tail
+		epochs = append(epochs, e)
 	}
 	for size := 1; ; size *= 2 {
 		seg, err := scan.Next(ctx)
@@ -238,6 +253,10 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 		if err := p.run(ctx, bw, start, next); err != nil {
 			return nil, false, err
 		}
-		epochs = append(epochs, joinWorkers(ws))
+		e, err := joinWorkers(ws)
+		if err != nil {
+			return nil, false, err
+		}
+		epochs = append(epochs, e)
 	}
 }

@@ -32,10 +32,9 @@ type firstWorker struct {
 	pairs  []*pairBuffer // into tables common to the workers of an epoch
 	tid    []int32
 
-	keys     []*interner // nil for keys that are not wanted
-	clusters []*keyTable
+	clusters []*groups // nil for keys that are not wanted
 	lone     []*loneTracker
-	zrow     []float64
+	zcols    [][]float64
 
 	reach   float64 // bound of the sum of w |(1, u)|^2 over any block
 	weight  superSum
@@ -56,24 +55,37 @@ type budget struct {
 	dense   int // Options.Dense
 	workers int
 	num     *numbering
+	pool    *groupPool
+	keep    bool        // the input cannot be read again
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
+}
+
+// clusterStores makes the stores of the second moments of clusters in one frame.
+func (b *budget) clusterStores(l *layout, needs *Needs) []*groupStore {
+	stores := make([]*groupStore, len(l.design.Keys))
+	p := l.p0 + 2
+	for _, k := range needs.Clusters {
+		stores[k] = b.pool.store(l.design.Keys[k].Kind, p*(p+1)/2, b.unit)
+	}
+	return stores
 }
 
 // newFirstWorkers makes the workers of one epoch.
 func newFirstWorkers(n int, l *layout, f *Frame, extended bool, needs *Needs, b *budget) []*firstWorker {
 	pairs := l.pairTables(b.unit, l.design.Spec.Weight == "")
+	stores := b.clusterStores(l, needs)
 	ws := make([]*firstWorker, n)
 	for i := range ws {
 		ld := newLoader(l, f)
 		if extended {
 			ld.extend()
 		}
-		ws[i] = newFirstWorker(l, ld, needs, b, pairs)
+		ws[i] = newFirstWorker(l, ld, needs, b, pairs, stores)
 	}
 	return ws
 }
 
-func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pairTable) *firstWorker {
+func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pairTable, stores []*groupStore) *firstWorker {
 	w := &firstWorker{loader: ld, needs: needs, budget: b}
 	w.gram = make([]float64, l.width*(l.width+1)/2)
 	w.gramX = make(superVec, len(w.gram))
@@ -98,16 +110,13 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pai
 	for i := range l.tables {
 		w.tables = append(w.tables, newKeyTable(len(l.tables[i].prods), b.unit))
 	}
-	w.keys = make([]*interner, len(l.design.Keys))
-	w.clusters = make([]*keyTable, len(l.design.Keys))
+	w.clusters = make([]*groups, len(l.design.Keys))
 	w.lone = make([]*loneTracker, len(l.design.Keys))
-	p := l.p0 + 2
 	for _, k := range needs.Clusters {
-		w.keys[k] = newInterner(l.design.Keys[k].Kind)
-		w.clusters[k] = newKeyTable(p*(p+1)/2, b.unit)
+		w.clusters[k] = newGroups(stores[k], l.p0+2, 0, addSquares)
 		w.lone[k] = newLoneTracker(l.p0)
 	}
-	w.zrow = make([]float64, p)
+	w.zcols = make([][]float64, l.p0+2)
 	w.nonzero, w.zero = make([]int64, l.p0), make([]int64, l.p0)
 	w.value, w.varied = make([]float64, l.p0), make([]bool, l.p0)
 	return w
@@ -156,14 +165,17 @@ func (w *firstWorker) add() error {
 		w.watch.lap(StageLevels)
 	}
 	if !w.budget.dropped.Load() {
-		for k, t := range w.clusters {
-			if t == nil {
+		for k, g := range w.clusters {
+			if g == nil {
 				continue
 			}
-			tid := w.tid[:n]
-			w.keys[k].ids(&w.block.Key[k], n, tid)
-			w.lone[k].add(tid, w.block.X)
-			w.clusterRows(t, tid)
+			w.lone[k].add(&w.block.Key[k], w.block.X, n)
+			for j := range w.zcols {
+				w.zcols[j] = w.zs[j*stride : j*stride+n]
+			}
+			rows, _ := g.room(n)
+			transpose(rows, len(w.zcols), 0, w.zcols)
+			g.take(&w.block.Key[k], n)
 		}
 		w.watch.lap(StageClusters)
 	}
@@ -246,28 +258,6 @@ func addProducts(t *keyTable, ids []int32, z []float64, prods [][2]int) {
 	}
 }
 
-// clusterRows adds the products of (1, u, v) of each row to its cluster.
-func (w *firstWorker) clusterRows(t *keyTable, ids []int32) {
-	p := len(w.zrow)
-	zr := w.zrow
-	for r, id := range ids {
-		part := t.at(id)
-		t.rows[id]++
-		for j := range zr {
-			zr[j] = w.zs[j*stride+r]
-		}
-		k := 0
-		for j := range p {
-			x := zr[j]
-			row := part[k : k+j+1]
-			for i := range row {
-				row[i] = math.FMA(zr[i], x, row[i])
-			}
-			k += j + 1
-		}
-	}
-}
-
 func (w *firstWorker) fold() error {
 	for _, t := range w.tables {
 		t.flush()
@@ -278,25 +268,35 @@ func (w *firstWorker) fold() error {
 	if err := w.budget.num.check(w.tables, pairTablesOf(w.pairs), w.budget); err != nil {
 		return err
 	}
-	var cl int64
-	for k, t := range w.clusters {
-		if t != nil && !w.budget.dropped.Load() {
-			t.flush()
-			cl += w.clusterBytes(k)
+	w.watch.lap(StageLevels)
+	if w.budget.dropped.Load() {
+		return nil
+	}
+	var held int64
+	for _, g := range w.clusters {
+		if g == nil {
+			continue
 		}
+		if err := g.fold(); err != nil {
+			return err
+		}
+		held += g.keys() * g.store.clusterBytes()
 	}
-	if cl > w.budget.cluster {
-		w.budget.dropped.Store(true)
-	}
+	w.budget.drop(held)
+	w.watch.lap(StageClusters)
 	return nil
 }
 
-// clusterBytes is the size of the cluster sums proper: it depends on the number
-// of clusters alone, so that the same data always take the same route.
-func (w *firstWorker) clusterBytes(k int) int64 {
-	t := w.clusters[k]
-	return int64(len(t.rows)) * int64(t.width) * 16
+// drop gives up the second moments of clusters beyond their share. held must depend
+// on the number of clusters alone, so that the same data always take the same route.
+func (b *budget) drop(held int64) {
+	if held > b.cluster && !b.keep && !b.dropped.Swap(true) {
+		b.pool.close()
+	}
 }
+
+// clusterBytes is the size of the sums of a cluster proper.
+func (s *groupStore) clusterBytes() int64 { return 16 * int64(s.width) }
 
 func (w *firstWorker) segment(int) error {
 	w.gramX.addVec(w.gram)
@@ -330,7 +330,7 @@ func Again(ctx context.Context, src stream.Source, s *State, needs Needs, o Opti
 	return first(ctx, src, s.lay.design, needs, o, f, extended, defaultUnit)
 }
 
-func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options, f *Frame, extended bool, unit int) (*State, error) {
+func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs, o Options, f *Frame, extended bool, unit int) (s *State, err error) {
 	l := newLayout(d)
 	if len(l.groups) > 0 && (needs.Fourth || len(needs.Clusters) > 0) {
 		return nil, errors.New("accum: fourth moments and cluster sums of categories need a second pass")
@@ -358,7 +358,13 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
 	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
-		dense: cmp.Or(o.Dense, denseColumns), workers: max(1, o.Workers), num: newNumbering(l)}
+		dense: cmp.Or(o.Dense, denseColumns), workers: max(1, o.Workers), num: newNumbering(l),
+		pool: newGroupPool(&o), keep: !src.Info().Rewindable}
+	defer func() {
+		if s == nil || s.pool != b.pool {
+			b.pool.close()
+		}
+	}()
 	scan, err := src.Scan(ctx, d.Uses())
 	if err != nil {
 		return nil, err
@@ -374,7 +380,11 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		if err := p.run(ctx, bw, nil, scan.Next); err != nil {
 			return nil, err
 		}
-		epochs = append(epochs, joinWorkers(ws))
+		e, err := joinWorkers(ws)
+		if err != nil {
+			return nil, err
+		}
+		epochs = append(epochs, e)
 	} else {
 		if epochs, extended, err = runEpochs(ctx, p, scan, l, &needs, b, shift, o); err != nil {
 			return nil, err
@@ -387,9 +397,10 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	if err != nil {
 		return nil, err
 	}
-	s.stamp = stamp
+	s.stamp, s.pool = stamp, b.pool
 	if refit != unit && src.Info().Rewindable && unit == defaultUnit {
 		// The unit of the keyed sums did not suit the data: sum again with one that does.
+		s.Close()
 		s2, err := first(ctx, src, d, needs, o, f, extended, refit)
 		if err == nil {
 			s2.Repeated = append(s2.Repeated, "sums by level or cluster were far larger or smaller than its first rows announced")

@@ -1,9 +1,6 @@
 package accum
 
-import (
-	"math"
-	"slices"
-)
+import "slices"
 
 // defaultUnit is the exponent of the last binary place of fixed-point sums, in
 // frame units, where numbers are about 1: sums up to 2^56, places down to 2^-70.
@@ -15,9 +12,6 @@ const pageKeys = 256 // keys in one page of fixed-point sums
 // for each key and each fold of foldRows rows counted from the segment's start,
 // and is then rounded once to 128-bit fixed point. Adding fixed-point numbers is
 // associative, so the sums do not depend on which worker saw which segment.
-//
-// Nothing wraps unnoticed: the sum of count x max over all partials bounds every
-// intermediate sum, and does not depend on order.
 type keyTable struct {
 	width int
 	unit  int
@@ -28,9 +22,7 @@ type keyTable struct {
 	touched []int32
 	part    []float64
 
-	max   float64 // largest |partial|
-	count int64   // partials
-	bad   bool    // a partial was not finite or too large for the unit
+	partials
 }
 
 func newKeyTable(width, unit int) *keyTable {
@@ -62,12 +54,7 @@ func (t *keyTable) at(id int32) []float64 {
 func (t *keyTable) flush() {
 	for i, id := range t.touched {
 		part := t.part[i*t.width : (i+1)*t.width]
-		for _, x := range part {
-			if a := math.Abs(x); a > t.max {
-				t.max = a
-			}
-		}
-		t.count++
+		t.see(part)
 		if !addFixed(t.fix(id), part, t.unit) {
 			t.bad = true
 		}
@@ -97,9 +84,7 @@ func (t *keyTable) mergeFrom(o *keyTable, to []int32) {
 		t.rows[id] += o.rows[i]
 		mergeFixed(t.fix(id), o.fix(int32(i)))
 	}
-	t.max = math.Max(t.max, o.max)
-	t.count += o.count
-	t.bad = t.bad || o.bad
+	t.join(&o.partials)
 }
 
 func (t *keyTable) grow(id int32) {
@@ -114,28 +99,5 @@ func (t *keyTable) memory() int64 {
 	return int64(len(t.pages))*int64(pageKeys*t.width*16) + int64(cap(t.part))*8 + int64(len(t.slot))*12
 }
 
-// fits reports whether no sum can have left the range of the unit, and whether
-// rounding to it can have cost digits: want is the size of sums that must keep
-// 1e-14 relative.
-func (t *keyTable) fits(want float64) (overflow, coarse bool) {
-	if t.count == 0 {
-		return false, false
-	}
-	if t.bad || t.max*float64(t.count) >= math.Ldexp(1, 126+t.unit) {
-		return true, false
-	}
-	return false, want > 0 && math.Ldexp(float64(t.count), t.unit-1) > 1e-14*want
-}
-
-// betterUnit chooses the unit from what was seen, order-free.
-func (t *keyTable) betterUnit() int {
-	if t.max == 0 && !t.bad {
-		return -1074 // nothing to hold
-	}
-	bound := t.max * float64(max(t.count, 1))
-	if !(bound > 0) || math.IsInf(bound, 0) {
-		bound = math.MaxFloat64
-	}
-	_, e := math.Frexp(bound)
-	return e - 125
-}
+// fits is partials.fits for the unit of the table.
+func (t *keyTable) fits(want float64) (overflow, coarse bool) { return t.partials.fits(t.unit, want) }

@@ -2,6 +2,7 @@ package accum
 
 import (
 	"math"
+	"slices"
 	"strings"
 
 	"github.com/tallrow/tallrow/stream"
@@ -58,6 +59,13 @@ func (in *interner) key(id int32) Key {
 		return Key{in.kind, stream.KeyValue{Text: in.texts[id]}}
 	}
 	return Key{in.kind, stream.KeyValue{Bits: uint64(in.vals[id])}}
+}
+
+// order lists the ids in order of key.
+func (in *interner) order() []int32 {
+	order := same(in.size())
+	slices.SortFunc(order, func(a, b int32) int { return in.key(a).Compare(in.key(b)) })
+	return order
 }
 
 // put returns the id of a key, giving out a new one if it was never seen.

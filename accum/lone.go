@@ -1,84 +1,102 @@
 package accum
 
+import (
+	"strings"
+
+	"github.com/tallrow/tallrow/stream"
+)
+
 // loneTracker remembers, for each numeric term, whether its nonzero cells lie in
 // one cluster only, and whether its zero cells do while all others are equal.
 // Such a term's effect is confounded with that cluster: the cluster's score is
 // zero by construction and the cluster error of the term means nothing.
 type loneTracker struct {
-	nonzero, zero []int32   // cluster id, none, or many
+	nonzero, zero []where
 	value         []float64 // a nonzero cell, if there is one
-	open          int       // entries that are not many
+	open          int       // entries that are not in many
+}
+
+// where cells lie: in no cluster, in one, or in many.
+type where struct {
+	in  uint8
+	key stream.KeyValue // of the one
 }
 
 const (
-	none int32 = -1
-	many int32 = -2
+	inNone uint8 = iota
+	inOne
+	inMany
 )
 
 func newLoneTracker(terms int) *loneTracker {
-	t := &loneTracker{nonzero: make([]int32, terms), zero: make([]int32, terms), value: make([]float64, terms), open: 2 * terms}
-	for i := range terms {
-		t.nonzero[i], t.zero[i] = none, none
-	}
-	return t
+	return &loneTracker{nonzero: make([]where, terms), zero: make([]where, terms), value: make([]float64, terms), open: 2 * terms}
 }
 
-func (t *loneTracker) add(ids []int32, x [][]float64) {
+// add takes in the cells of n rows with their clusters.
+func (t *loneTracker) add(keys *stream.Vector, x [][]float64, n int) {
 	if t.open == 0 {
 		return
 	}
 	for j := range t.nonzero {
-		if t.nonzero[j] == many && t.zero[j] == many {
-			continue
-		}
-		for r, id := range ids {
-			v := x[j][r]
+		zero, nonzero := &t.zero[j], &t.nonzero[j]
+		for r, v := range x[j][:n] {
+			if zero.in == inMany && nonzero.in == inMany {
+				break
+			}
 			if v == 0 {
-				t.see(&t.zero[j], id)
+				t.see(zero, keys, r)
 				continue
 			}
 			t.equal(j, v)
-			t.see(&t.nonzero[j], id)
+			t.see(nonzero, keys, r)
 		}
 	}
 }
 
 // equal notes a nonzero cell: zero cells count only beside a single other value.
 func (t *loneTracker) equal(j int, v float64) {
-	if t.nonzero[j] == none {
+	if t.nonzero[j].in == inNone {
 		t.value[j] = v
 	} else if v != t.value[j] {
 		t.close(&t.zero[j])
 	}
 }
 
-func (t *loneTracker) close(p *int32) {
-	if *p != many {
-		*p = many
+func (t *loneTracker) close(w *where) {
+	if w.in != inMany {
+		*w = where{in: inMany}
 		t.open--
 	}
 }
 
-func (t *loneTracker) see(p *int32, id int32) {
-	switch {
-	case *p == none:
-		*p = id
-	case *p >= 0 && *p != id:
-		t.close(p)
+// see notes that a cell lies in the cluster of row r.
+func (t *loneTracker) see(w *where, keys *stream.Vector, r int) {
+	if w.in != inMany {
+		t.put(w, keys.Key(r))
 	}
 }
 
-func (t *loneTracker) mergeFrom(o *loneTracker, to []int32) {
-	join := func(p *int32, q int32) {
+func (t *loneTracker) put(w *where, k stream.KeyValue) {
+	switch {
+	case w.in == inNone:
+		k.Text = strings.Clone(k.Text) // the reader's may keep a whole page alive
+		*w = where{inOne, k}
+	case w.key != k:
+		t.close(w)
+	}
+}
+
+func (t *loneTracker) mergeFrom(o *loneTracker) {
+	join := func(w *where, q where) {
 		switch {
-		case q >= 0:
-			t.see(p, to[q])
-		case q == many:
-			t.close(p)
+		case q.in == inMany:
+			t.close(w)
+		case q.in == inOne && w.in != inMany:
+			t.put(w, q.key)
 		}
 	}
 	for j := range t.nonzero {
-		if o.nonzero[j] != none {
+		if o.nonzero[j].in != inNone {
 			t.equal(j, o.value[j])
 		}
 		join(&t.nonzero[j], o.nonzero[j])
@@ -91,7 +109,7 @@ func (t *loneTracker) mergeFrom(o *loneTracker, to []int32) {
 func (t *loneTracker) lone() (nonzero, zero []bool) {
 	nonzero, zero = make([]bool, len(t.nonzero)), make([]bool, len(t.nonzero))
 	for j := range nonzero {
-		nonzero[j], zero[j] = t.nonzero[j] >= 0, t.zero[j] >= 0
+		nonzero[j], zero[j] = t.nonzero[j].in == inOne, t.zero[j].in == inOne
 	}
 	return nonzero, zero
 }

@@ -11,6 +11,10 @@ type Meter struct {
 	Bytes atomic.Int64 // bytes read in the present pass, as stored
 	Pass  atomic.Int32 // 1 or 2; 0 before the first
 	Total atomic.Int64 // bytes of one pass, -1 if unknown
+
+	// Of all passes: sorted runs of sums of clusters that were written to scratch,
+	// and their bytes.
+	Runs, Spilled atomic.Int64
 }
 
 // Stage is a part of the work on rows.

@@ -21,19 +21,28 @@ type Options struct {
 	Memory  int64 // bound of what the sums take, bytes
 	// Clusters bounds the second moments of clusters, in bytes; beyond it they are
 	// dropped and State.Dropped is set. It must not depend on Workers, so that the
-	// same input always takes the same route. 0 means a sixteenth of Memory.
+	// same input always takes the same route. 0 means a sixteenth of Memory. An input
+	// that can be read only once keeps them all, on scratch if need be.
 	Clusters int64
 	// Dense is the number of internal columns up to which the state is one dense
 	// matrix; beyond it the group of categories with most columns is kept apart
 	// (see State.Apart). 0 means 1000. Like Clusters it shows in the last bits.
 	Dense int
-	Meter *Meter
+	// Scratch is the folder for sums of clusters that do not fit Memory; "" is the
+	// system's folder for temporary files.
+	Scratch string
+	Meter   *Meter
 	// Timings, if not nil, learns where the time goes.
 	Timings *Timings
 	// Arithmetic is Double unless given.
 	Arithmetic Arithmetic
 	// Sample, if not nil, is what TakeSample gave for the same input and design.
 	Sample *Sample
+
+	// For tests.
+	createScratch func(dir string) (scratchFile, error)
+	heldMost      int64 // bytes of sums of clusters in memory
+	fewMost       int   // keys that a worker numbers
 }
 
 // MemoryError says that the sums do not fit.

@@ -283,7 +283,7 @@ func (t *pairTable) each(f func(a, b int32, vals []float64)) {
 	}
 }
 
-// fits is keyTable.fits for sums of at most rows values each.
+// fits is partials.fits for sums of at most rows values each.
 func (t *pairTable) fits(want float64, rows int64) (overflow, coarse bool) {
 	if t.width == 0 {
 		return false, false
@@ -294,8 +294,8 @@ func (t *pairTable) fits(want float64, rows int64) (overflow, coarse bool) {
 	return false, want > 0 && math.Ldexp(float64(rows), t.unit-1) > 1e-14*want
 }
 
-// betterUnit is keyTable.betterUnit for sums of at most rows values each.
+// betterUnit is partials.betterUnit for sums of at most rows values each.
 func (t *pairTable) betterUnit(rows int64) int {
-	k := keyTable{max: t.max, count: rows, bad: t.bad}
+	k := partials{max: t.max, count: rows, bad: t.bad}
 	return k.betterUnit()
 }

@@ -286,8 +286,9 @@ func TestKeyTable(t *testing.T) {
 
 func TestLoneTracker(t *testing.T) {
 	x := [][]float64{{1, 0, 0, 2}, {0, 0, 3, 0}, {0, 3, 3, 0}, {5, 5, 5, 5}, {0, 2, 3, 0}}
+	keys := func(k ...int64) *stream.Vector { return &stream.Vector{Kind: stream.Int64, I64: k} }
 	a := newLoneTracker(5)
-	a.add([]int32{0, 1, 2, 0}, x)
+	a.add(keys(0, 1, 2, 0), x, 4)
 	all := func(t *loneTracker) []bool {
 		nonzero, zero := t.lone()
 		for j, z := range zero {
@@ -308,14 +309,14 @@ func TestLoneTracker(t *testing.T) {
 		t.Errorf("nonzero in one cluster %v, want term 0 and not term 2", got)
 	}
 	b := newLoneTracker(5)
-	b.add([]int32{0}, [][]float64{{1}, {1}, {3}, {1}, {2}})
-	a.mergeFrom(b, []int32{9})
+	b.add(keys(9), [][]float64{{1}, {1}, {3}, {1}, {2}}, 1)
+	a.mergeFrom(b)
 	if got := all(a); got[0] || got[1] || !got[2] || got[3] {
 		t.Errorf("after the merge %v, want only term 2", got)
 	}
 	c := newLoneTracker(5)
-	c.add([]int32{4}, [][]float64{{1}, {1}, {4}, {1}, {2}})
-	a.mergeFrom(c, []int32{0, 1, 2, 3, 4})
+	c.add(keys(4), [][]float64{{1}, {1}, {4}, {1}, {2}}, 1)
+	a.mergeFrom(c)
 	if got := all(a); got[2] {
 		t.Error("term 2 is 3 and 4 outside its zero cells: no single cluster decides it")
 	}

@@ -31,6 +31,16 @@ type RowSums struct {
 	// Passes is 1, or 2 if the keyed sums needed another unit; Bytes is of all.
 	Passes int
 	Bytes  int64
+
+	pool *groupPool
+}
+
+// Close gives back what Scores hold in memory and on scratch; they cannot be read
+// any more. It may be called again.
+func (r *RowSums) Close() {
+	if r.pool != nil {
+		r.pool.close()
+	}
 }
 
 // HeavyRow is a row of high leverage, times the root of its weight.
@@ -67,11 +77,9 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 				mine[k].tables[i].mergeFrom(t, same(len(t.rows)))
 			}
 		}
-		for i, t := range o.scores {
-			kto := joinKeys(w.keys[i], o.keys[i])
-			w.scores[i].mergeFrom(t, kto)
-			w.loneT[i].mergeFrom(o.loneT[i], kto)
-			w.loneC[i].mergeFrom(o.loneC[i], kto)
+		for i := range o.scores {
+			w.loneT[i].mergeFrom(o.loneT[i])
+			w.loneC[i].mergeFrom(o.loneC[i])
 		}
 		w.maxLever = max(w.maxLever, o.maxLever)
 		w.loneRows += o.loneRows
@@ -81,8 +89,8 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Passes: 1, Bytes: p.bytes}
 	// Meats are judged by the unit's range; scores by their digits too.
 	need, best := false, -1074
-	see := func(t *keyTable) {
-		over, _ := t.fits(0)
+	see := func(t *partials, unit int) {
+		over, _ := t.fits(unit, 0)
 		need = need || over
 		best = max(best, t.betterUnit())
 	}
@@ -96,7 +104,7 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 		m.gramX.values(gram)
 		s.placeDense(out.m, gram, cols)
 		for _, t := range m.tables {
-			see(t)
+			see(&t.partials, t.unit)
 		}
 		for _, b := range m.pairs {
 			over, _ := b.t.fits(0, rows)
@@ -129,20 +137,28 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 		})
 		out.Heavy = w.heavy
 	}
-	for i, t := range w.scores {
-		see(t)
-		sc := sortScores(w.keys[i], t)
+	for i, g := range w.scores {
+		for _, o := range ws {
+			if err := o.scores[i].finish(); err != nil {
+				return nil, 0, err
+			}
+		}
+		see(&g.store.seen, g.store.unit)
+		sc := storeScores(g.store)
 		sc.Lone, sc.LoneZero = make([]bool, s.allColumns()), make([]bool, s.allColumns())
 		nonzero, zero := w.loneT[i].lone()
 		copy(sc.Lone[1:], nonzero)
 		copy(sc.LoneZero[1:], zero)
 		for _, g := range s.Groups {
 			for c := g.first; c < g.first+g.n*len(g.Parts); c++ {
-				sc.Lone[c] = w.loneC[i].nonzero[c] >= 0
+				sc.Lone[c] = w.loneC[i].nonzero[c].in == inOne
 			}
 		}
 		if s.Apart != nil {
-			over, unit := common.scores[i].join(s, sc)
+			over, unit, err := common.scores[i].join(s, sc)
+			if err != nil {
+				return nil, 0, err
+			}
 			need, best = need || over, max(best, unit)
 		}
 		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
@@ -158,21 +174,22 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 }
 
 // loneBases marks indicators whose zero cells lie in a single cluster: all other
-// combinations of the group do. where holds the only cluster of each indicator.
-func (s *State) loneBases(where []int32, cols []bool) {
+// combinations of the group do. only holds the only cluster of each indicator.
+func (s *State) loneBases(only []where, cols []bool) {
 	for gi := range s.Groups {
 		g := &s.Groups[gi]
-		count := map[int32]int{}
+		count := map[where]int{}
 		for i := range g.n {
-			count[where[g.first+i*len(g.Parts)]]++
+			count[only[g.first+i*len(g.Parts)]]++
 		}
 		for i := range g.n {
 			c := g.first + i*len(g.Parts)
-			own := where[c]
+			own := only[c]
 			others := len(count)
 			if count[own] == 1 {
 				others--
 			}
+			many := where{in: inMany}
 			among := count[many] > 1 || (count[many] == 1 && own != many)
 			cols[c] = cols[c] || (others == 1 && !among)
 		}

@@ -3,57 +3,78 @@ package accum
 import (
 	"errors"
 	"math"
-	"slices"
+
+	"github.com/tallrow/tallrow/stream"
 )
 
-// Scores holds the scores of all clusters of one key, in order of key.
+// Scores gives the scores of all clusters of one key.
 type Scores struct {
-	Keys []Key
-	Rows []int64
-	// S has one row of P numbers for each cluster: sum w e z over the internal
-	// columns, e in units 1/YInv. With a group apart it stops at the numeric terms
-	// and Groups holds what belongs to categories.
-	S      []float64
-	P      int
-	Groups []GroupScores
+	// P is the length of a score: a number for each internal column. With a group
+	// apart it stops at the numeric terms, and ClusterMeat knows the rest.
+	P int
 	// Lone tells for each internal column (numeric terms by their raw values)
 	// whether all its nonzero cells lie in one cluster; LoneZero whether it is zero
 	// in one cluster only and has one value elsewhere, so that it and the constant
 	// together live in that cluster. Columns of the group apart stand as in
 	// State.Column.
 	Lone, LoneZero []bool
-	// Gross is the sum over clusters of the square of what was added up; nil for
-	// scores that were summed row by row.
+	// Gross is the sum over clusters of the square of what was added up, set by
+	// Each; nil for scores that were summed row by row.
 	Gross []float64
+
+	apart  *apartClusters // where there is a group apart
+	kind   stream.Kind
+	stores []*groupStore
+	// form makes a score of the sums of a cluster.
+	form func(dst []float64, parts []groupPart)
 }
 
-// sortScores turns a table of scores into Scores.
-func sortScores(in *interner, t *keyTable) *Scores {
-	order := keyOrder(in)
-	sc := &Scores{P: t.width, S: make([]float64, len(order)*t.width)}
-	for i, id := range order {
-		sc.Keys = append(sc.Keys, in.key(id))
-		sc.Rows = append(sc.Rows, t.rows[id])
-		for j, f := range t.fix(id) {
-			sc.S[i*t.width+j] = f.float(t.unit)
+// Cluster is the rows of one key.
+type Cluster struct {
+	Key  Key
+	Rows int64
+	// S has P numbers: sum w e z over the internal columns, e in units 1/YInv.
+	S []float64
+}
+
+// Each calls f for each cluster in order of key, and stops at an error. What f gets
+// is valid until it returns. Sums on scratch are read once more for every call of
+// Each. Time O(G log(runs) + G P), for scores from second moments O(G P^2).
+//
+// Errors are those of f, *ScratchError and *DamageError.
+func (sc *Scores) Each(f func(c *Cluster) error) error {
+	if sc.Gross != nil {
+		clear(sc.Gross)
+	}
+	c := Cluster{Key: Key{Kind: sc.kind}, S: make([]float64, sc.P)}
+	return mergeGroups(sc.stores, func(parts []groupPart) error {
+		c.Rows = 0
+		for i := range parts {
+			c.Rows += parts[i].rows
 		}
-	}
-	return sc
+		if sc.kind == stream.Text {
+			c.Key.Text = parts[0].text
+		} else {
+			c.Key.Bits = keyOf(sc.kind, parts[0].ord)
+		}
+		sc.form(c.S, parts)
+		return f(&c)
+	})
 }
 
-func keyOrder(in *interner) []int32 {
-	order := make([]int32, in.size())
-	for i := range order {
-		order[i] = int32(i)
-	}
-	slices.SortFunc(order, func(a, b int32) int { return in.key(a).Compare(in.key(b)) })
-	return order
+// storeScores is the scores that a store holds as they are.
+func storeScores(s *groupStore) *Scores {
+	return &Scores{P: s.width, kind: s.kind, stores: []*groupStore{s}, form: func(dst []float64, parts []groupPart) {
+		for j, f := range parts[0].sums {
+			dst[j] = f.float(s.unit)
+		}
+	}}
 }
 
 // Scores forms the scores of the clusters of a key from their second moments:
 // s_g = sum_c theta_c (z z')_{.c}, theta over (1, u, v) as in RowPass.Theta. The
 // state must have been made with that key among Needs.Clusters and without
-// categories. Time O(G k^2), memory O(G k).
+// categories.
 func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 	if s.Dropped || len(s.epochs) == 0 || s.epochs[0].clusters[key] == nil {
 		return nil, errors.New("accum: the sums of these clusters were not kept")
@@ -61,40 +82,33 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 	l := s.lay
 	p := l.p0 + 2
 	k := l.p0 + 1
-	all := newInterner(l.design.Keys[key].Kind)
+	sc := &Scores{P: k, Lone: make([]bool, k), LoneZero: make([]bool, k), Gross: make([]float64, k), kind: l.design.Keys[key].Kind}
 	lone := newLoneTracker(l.p0)
-	to := make([][]int32, len(s.epochs))
+	at := s.denseAt()
+	ths := make([][]float64, len(s.epochs)) // theta in each epoch's frame
 	for i, e := range s.epochs {
-		to[i] = joinKeys(all, e.keys[key])
-		lone.mergeFrom(e.lone[key], to[i])
-	}
-	order := keyOrder(all)
-	place := make([]int32, len(order))
-	sc := &Scores{P: k, S: make([]float64, len(order)*k), Rows: make([]int64, len(order)), Lone: make([]bool, k), LoneZero: make([]bool, k)}
-	for i, id := range order {
-		place[id] = int32(i)
-		sc.Keys = append(sc.Keys, all.key(id))
+		lone.mergeFrom(e.lone[key])
+		sc.stores = append(sc.stores, e.clusters[key])
+		th := make([]float64, p)
+		for a := range p {
+			for b := range p {
+				th[b] += theta[at[a]] * s.maps[i][a*l.width+b]
+			}
+		}
+		ths[i] = th
 	}
 	nonzero, zero := lone.lone()
 	copy(sc.Lone[1:], nonzero)
 	copy(sc.LoneZero[1:], zero)
-	gross := make([]float64, k)
 	z := make([]float64, p*(p+1)/2)
 	vec, mag := make([]float64, k), make([]float64, k)
-	at := s.denseAt()
-	for i, e := range s.epochs {
-		// theta in the epoch's frame, and the map of scores back.
-		j := s.maps[i]
-		th := make([]float64, p)
-		for a := range p {
-			for b := range p {
-				th[b] += theta[at[a]] * j[a*l.width+b]
-			}
-		}
-		t := e.clusters[key]
-		for id := range t.rows {
-			for q, f := range t.fix(int32(id)) {
-				z[q] = f.float(t.unit)
+	sc.form = func(dst []float64, parts []groupPart) {
+		clear(dst)
+		for i := range parts {
+			th, j := ths[parts[i].tag], s.maps[parts[i].tag]
+			unit := sc.stores[parts[i].tag].unit
+			for q, f := range parts[i].sums {
+				z[q] = f.float(unit)
 			}
 			for a := range k {
 				vec[a], mag[a] = 0, 0
@@ -105,9 +119,6 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 					mag[a] += max(x, -x)
 				}
 			}
-			g := place[to[i][id]]
-			sc.Rows[g] += t.rows[id]
-			dst := sc.S[int(g)*k : (int(g)+1)*k]
 			for a := range k {
 				var m float64
 				for b := range k {
@@ -115,11 +126,10 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 					dst[a] += x * vec[b]
 					m += max(x, -x) * mag[b]
 				}
-				gross[a] += m * m
+				sc.Gross[a] += m * m
 			}
 		}
 	}
-	sc.Gross = gross
 	return sc, nil
 }
 

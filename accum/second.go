@@ -73,7 +73,6 @@ type secondWorker struct {
 	state *State
 	pass  *RowPass
 	unit  int
-	mem   int64
 	all   *secondCommon
 
 	meats []*meat
@@ -83,11 +82,10 @@ type secondWorker struct {
 	cats *categories
 	rowb [][]int32 // internal column of each row, by group
 
-	keys   []*interner
-	scores []*keyTable
+	scores []*groups
 	loneT  []*loneTracker
 	loneC  []*loneTracker // for the category columns, by raw value
-	kid    []int32
+	zcols  [][]float64    // what the scores take of a row, the multiplier first
 	apart  []*apartScores // by key, where there is a group apart
 
 	e, h, mult []float64
@@ -103,14 +101,16 @@ type secondWorker struct {
 // secondCommon is what the workers of pass two share.
 type secondCommon struct {
 	workers int
+	mem     int64
 	quad    []float64      // W W' when there are categories
 	lever   *apartLever    // for the group apart
 	pairs   [][]*pairTable // by meat: of RowPass.Weights, lone, light
+	stores  []*groupStore  // of scores, by key
 	scores  []*apartCommon // by key, where there is a group apart
 }
 
-func newSecondCommon(s *State, rp *RowPass, unit, workers int) *secondCommon {
-	c := &secondCommon{workers: workers}
+func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPool) *secondCommon {
+	c := &secondCommon{workers: max(1, o.Workers), mem: o.Memory}
 	if rp.Whitener != nil && len(s.Groups) > 0 {
 		c.quad = outer(rp.Whitener, len(s.Columns), rp.K)
 		if s.Apart != nil {
@@ -120,21 +120,22 @@ func newSecondCommon(s *State, rp *RowPass, unit, workers int) *secondCommon {
 	for range len(rp.Weights) + 2 {
 		c.pairs = append(c.pairs, s.lay.pairTables(unit, false))
 	}
-	if s.Apart != nil {
-		for _, k := range rp.Scores {
+	for _, k := range rp.Scores {
+		c.stores = append(c.stores, pool.store(s.lay.design.Keys[k].Kind, s.scoreWidth(), unit))
+		if s.Apart != nil {
 			c.scores = append(c.scores, newApartCommon(s, k, unit))
 		}
 	}
 	return c
 }
 
-func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, all *secondCommon) *secondWorker {
+func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *secondWorker {
 	l := s.lay
 	ld := newLoader(l, s.Frame)
 	if s.Extended {
 		ld.extend()
 	}
-	w := &secondWorker{loader: ld, state: s, pass: rp, unit: unit, mem: mem, all: all}
+	w := &secondWorker{loader: ld, state: s, pass: rp, unit: unit, all: all}
 	for i := range rp.Weights {
 		w.meats = append(w.meats, newMeat(l, l.p0+1, unit, all.pairs[i]))
 	}
@@ -146,16 +147,23 @@ func newSecondWorker(s *State, rp *RowPass, unit int, mem int64, all *secondComm
 	for range l.groups {
 		w.rowb = append(w.rowb, make([]int32, stride))
 	}
-	for _, k := range rp.Scores {
-		w.keys = append(w.keys, newInterner(l.design.Keys[k].Kind))
-		w.scores = append(w.scores, newKeyTable(s.scoreWidth(), unit))
+	add, width, bases := rowAdder(addScaled), l.p0+2, 0
+	if len(l.groups) > 0 && s.Apart == nil {
+		var parts []int
+		for i := range l.groups {
+			parts = append(parts, len(l.groups[i].parts))
+			width += len(l.groups[i].parts)
+		}
+		add, bases = addPlaced(l.p0+1, parts), len(l.groups)
+	}
+	for _, st := range all.stores {
+		w.scores = append(w.scores, newGroups(st, width, bases, add))
 		w.loneT = append(w.loneT, newLoneTracker(l.p0))
 		w.loneC = append(w.loneC, newLoneTracker(s.allColumns()))
 	}
 	for _, c := range all.scores {
 		w.apart = append(w.apart, newApartScores(c))
 	}
-	w.kid = make([]int32, stride)
 	w.e, w.h, w.mult = make([]float64, stride), make([]float64, stride), make([]float64, stride)
 	w.zs = make([]float64, len(w.z))
 	return w
@@ -248,11 +256,10 @@ func (w *secondWorker) add() error {
 	}
 	w.watch.lap(StageRows)
 	for i, k := range rp.Scores {
-		w.keys[i].ids(&w.block.Key[k], n, w.kid[:n])
-		w.loneT[i].add(w.kid[:n], w.block.X)
-		w.addScores(w.scores[i], w.loneC[i])
+		w.loneT[i].add(&w.block.Key[k], w.block.X, n)
+		w.addScores(w.scores[i], w.loneC[i], &w.block.Key[k])
 		if w.apart != nil {
-			w.apart[i].add(w, w.kid[:n], w.keys[i])
+			w.apart[i].add(w, &w.block.Key[k])
 		}
 	}
 	w.watch.lap(StageClusters)
@@ -391,30 +398,38 @@ func (w *secondWorker) keepHeavy(r int, root float64) {
 	w.heavy = append(w.heavy, HeavyRow{Z: z, Weight: wt, segment: -1, at: len(w.heavy)})
 }
 
-func (w *secondWorker) addScores(t *keyTable, lone *loneTracker) {
-	l := w.lay
-	for r, id := range w.kid[:w.block.Rows] {
-		m := w.e[r]
-		if w.root != nil {
-			m *= w.block.Weight[r]
-		}
-		part := t.at(id)
-		t.rows[id]++
-		for j := range l.p0 + 1 {
-			part[j] = math.FMA(m, w.z[j*stride+r], part[j])
-		}
-		for g := range l.groups {
-			b := int(w.rowb[g][r])
-			for p, c := range l.groups[g].parts {
-				if p == 0 || w.block.X[l.factors[c-l.p0-2]][r] != 0 {
-					lone.see(&lone.nonzero[b+p], id)
-				}
-				if w.apart == nil {
-					part[b+p] = math.FMA(m, w.z[c*stride+r], part[b+p])
+// addScores adds w e z of each row to its cluster.
+func (w *secondWorker) addScores(g *groups, lone *loneTracker, keys *stream.Vector) {
+	l, n := w.lay, w.block.Rows
+	mult := w.e[:n]
+	if w.root != nil {
+		mult = w.mult[:n]
+		kernel.Scale(mult, w.e[:n], w.block.Weight[:n])
+	}
+	w.zcols = append(w.zcols[:0], mult)
+	for j := range l.p0 + 1 {
+		w.zcols = append(w.zcols, w.col(j))
+	}
+	for i := range l.groups {
+		for p, c := range l.groups[i].parts {
+			if w.apart == nil {
+				w.zcols = append(w.zcols, w.col(c))
+			}
+			for r, b := range w.rowb[i][:n] {
+				if to := &lone.nonzero[int(b)+p]; to.in != inMany && (p == 0 || w.block.X[l.factors[c-l.p0-2]][r] != 0) {
+					lone.see(to, keys, r)
 				}
 			}
 		}
 	}
+	rows, base := g.room(n)
+	transpose(rows, len(w.zcols), 0, w.zcols)
+	for i := range g.bases {
+		for r, b := range w.rowb[i][:n] {
+			base[r*g.bases+i] = b
+		}
+	}
+	g.take(keys, n)
 }
 
 func (w *secondWorker) allMeats() []*meat {
@@ -440,18 +455,16 @@ func (w *secondWorker) fold() error {
 	for _, a := range w.apart {
 		held += a.flush()
 	}
-	if held += w.all.lever.memory(); held > w.mem {
-		return &MemoryError{What: "the second pass over " + w.state.levelCounts(), Need: held, Have: w.mem}
+	if held += w.all.lever.memory(); held > w.all.mem {
+		return &MemoryError{What: "the second pass over " + w.state.levelCounts(), Need: held, Have: w.all.mem}
 	}
-	for i, t := range w.scores {
-		t.flush()
-		need := held + t.memory() + w.keys[i].memory()
-		if need > w.mem {
-			k := w.lay.design.Keys[w.pass.Scores[i]]
-			return &MemoryError{What: fmt.Sprintf("%s has %d clusters or more, %d numbers each", k.Text, len(t.rows), t.width), Need: need, Have: w.mem}
+	w.watch.lap(StageRows)
+	for _, g := range w.scores {
+		if err := g.fold(); err != nil {
+			return err
 		}
-		held = need
 	}
+	w.watch.lap(StageClusters)
 	return nil
 }
 
@@ -478,6 +491,7 @@ func Second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	if err == nil && retry != defaultUnit {
 		// The unit of the keyed sums did not suit the data: sum again with one that does.
 		first := out.Bytes
+		out.Close()
 		if out, _, err = second(ctx, src, s, rp, o, retry); err == nil {
 			out.Passes++
 			out.Bytes += first
@@ -486,7 +500,7 @@ func Second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	return out, err
 }
 
-func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options, unit int) (*RowSums, int, error) {
+func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options, unit int) (out *RowSums, retry int, err error) {
 	if stamp, err := src.Stamp(); err != nil {
 		return nil, 0, err
 	} else if stamp != s.stamp && src.Info().Sampled {
@@ -501,11 +515,17 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 		return nil, 0, err
 	}
 	defer scan.Close()
-	common := newSecondCommon(s, &rp, unit, max(1, o.Workers))
+	pool := newGroupPool(&o)
+	defer func() {
+		if out == nil {
+			pool.close()
+		}
+	}()
+	common := newSecondCommon(s, &rp, unit, &o, pool)
 	ws := make([]*secondWorker, max(1, o.Workers))
 	bw := make([]blockWorker, len(ws))
 	for i := range ws {
-		ws[i] = newSecondWorker(s, &rp, unit, o.Memory, common)
+		ws[i] = newSecondWorker(s, &rp, unit, common)
 		bw[i] = ws[i]
 	}
 	if err := p.run(ctx, bw, nil, scan.Next); err != nil {
@@ -517,5 +537,9 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	if err := s.unchanged(p); err != nil {
 		return nil, 0, err
 	}
-	return s.joinSecond(ws, &rp, p, unit, common)
+	if out, retry, err = s.joinSecond(ws, &rp, p, unit, common); err != nil {
+		return nil, 0, err
+	}
+	out.pool = pool
+	return out, retry, nil
 }

@@ -71,6 +71,15 @@ type State struct {
 	combos []*comboIndex
 	place  [][]int32 // place in combos, by the number in pass one
 	dense  int
+	pool   *groupPool
+}
+
+// Close gives back what the sums of clusters hold in memory and on scratch; Scores
+// cannot be formed any more. It may be called again.
+func (s *State) Close() {
+	if s.pool != nil {
+		s.pool.close()
+	}
 }
 
 // Column is one internal column.
@@ -218,7 +227,7 @@ func (s *State) indexLevels(num *numbering) {
 	l := s.lay
 	level := make([][]int32, len(num.levels)) // places of levels, by number
 	for c, in := range num.levels {
-		order := keyOrder(in)
+		order := in.order()
 		level[c] = make([]int32, len(order))
 		sorted := newInterner(in.kind)
 		keys := make([]Key, len(order))
@@ -497,14 +506,14 @@ func (s *State) refit(unit int) int {
 		}
 	}
 	need, best := false, -1074
-	see := func(t *keyTable) {
-		over, coarse := t.fits(size)
+	see := func(t *partials, unit int) {
+		over, coarse := t.fits(unit, size)
 		need = need || over || coarse
 		best = max(best, t.betterUnit())
 	}
 	for _, e := range s.epochs {
 		for _, t := range e.tables {
-			see(t)
+			see(&t.partials, t.unit)
 		}
 		for i, t := range e.pairs {
 			if t.width > 0 {
@@ -515,7 +524,7 @@ func (s *State) refit(unit int) int {
 		}
 		for _, t := range e.clusters {
 			if t != nil && !s.Dropped {
-				see(t)
+				see(&t.seen, t.unit)
 			}
 		}
 	}

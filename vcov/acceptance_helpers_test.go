@@ -163,6 +163,7 @@ func fixed(t testing.TB, r *vcov.Result) string {
 	t.Helper()
 	c := *r
 	c.Run.Workers, c.Run.Seconds, c.Run.PeakBytes = 0, 0, 0
+	c.Run.SpilledBytes, c.Run.SpilledRuns = 0, 0
 	b, err := json.Marshal(&c)
 	if err != nil {
 		t.Fatal(err)

@@ -1,6 +1,8 @@
 package vcov
 
 import (
+	"context"
+	"maps"
 	"math"
 	"slices"
 
@@ -16,26 +18,15 @@ import (
 //	cr0   1                            Liang & Zeger 1986; Arellano 1987
 //	cr1   G/(G-1) (N-1)/(N-k)          Cameron & Miller 2015
 //
-// with t on G-1 and joint tests (G-q)/((G-1) q) W on F(q, G-q). scores are over
-// internal columns, one row a cluster in key order. Time O(G (P K + K^2)).
-func (x *solution) clusterRobust(kind string, sc *accum.Scores) *estimate {
-	k, g := x.k(), len(sc.Keys)
+// with t on G-1 and joint tests (G-q)/((G-1) q) W on F(q, G-q). Time O(K^3).
+func (x *solution) clusterRobust(kind string, c *clusterSums) *estimate {
+	k, g := x.k(), c.groups
 	gf, n := float64(g), float64(x.n)
 	r := &estimate{factor: 1, df: gf - 1}
-	var meat []float64
-	if x.apart != nil {
-		m := x.state.ClusterMeat(sc, x.apart.elim, x.apart.base)
-		meat = x.project(m.Rest)
-		r.apart = &apartMeat{rest: meat, own: m.Own, base: m.Base, within: m.Within, scale: 1}
-	} else {
-		meat = make([]float64, k*k)
-		s := make([]float64, k)
-		for i := range g {
-			x.projectVec(sc.S[i*sc.P:(i+1)*sc.P], s)
-			for a, t := range s {
-				axpy(t, s, meat[a*k:(a+1)*k])
-			}
-		}
+	meat := c.meat
+	if c.apart != nil {
+		own := *c.apart
+		r.apart = &own
 	}
 	v := sandwich(x.inverse, meat, k)
 	r.v, r.meat = v, meat
@@ -49,7 +40,7 @@ func (x *solution) clusterRobust(kind string, sc *accum.Scores) *estimate {
 		}
 	}
 	r.joint = clusterJoint(g)
-	r.noP = x.loneClusters(sc)
+	r.noP = x.loneClusters(c.scores)
 	return r
 }
 
@@ -62,6 +53,48 @@ func clusterJoint(g int) func(float64, int) (float64, float64, bool, string) {
 		gf, qf := float64(g), float64(q)
 		return (gf - qf) / ((gf - 1) * qf) * w, gf - qf, gf > qf, "too few clusters"
 	}
+}
+
+// clusterSums is what one walk over the scores of all clusters of a key leaves.
+type clusterSums struct {
+	scores *accum.Scores
+	groups int
+	rows   *Spread
+	meat   []float64  // sum_g s_g s_g' in solved coordinates
+	apart  *apartMeat // where a group of categories is kept apart
+}
+
+// sumClusters walks over the clusters in order of key. Time O(G (P K + K^2)).
+func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores) (*clusterSums, error) {
+	k := x.k()
+	c := &clusterSums{scores: sc, meat: make([]float64, k*k)}
+	s := make([]float64, k)
+	var n sizes
+	err := sc.Each(func(g *accum.Cluster) error {
+		if c.groups++; c.groups%4096 == 0 && ctx.Err() != nil {
+			return ctx.Err()
+		}
+		n.add(g.Rows)
+		if x.apart != nil {
+			return nil
+		}
+		x.projectVec(g.S, s)
+		for a, t := range s {
+			axpy(t, s[:a+1], c.meat[a*k:a*k+a+1])
+		}
+		return nil
+	})
+	for a := range k {
+		for b := range a {
+			c.meat[b*k+a] = c.meat[a*k+b]
+		}
+	}
+	if c.rows = n.spread(); err == nil && x.apart != nil {
+		m := x.state.ClusterMeat(sc, x.apart.elim, x.apart.base)
+		c.meat = x.project(m.Rest)
+		c.apart = &apartMeat{rest: c.meat, own: m.Own, base: m.Base, within: m.Within, scale: 1}
+	}
+	return c, err
 }
 
 // loneClusters marks the coefficients of each direction of the terms that lives in
@@ -123,18 +156,56 @@ func (x *solution) loneClusters(sc *accum.Scores) []bool {
 	return out
 }
 
-// groupRows describes the sizes of clusters.
-func groupRows(rows []int64) *Spread {
-	if len(rows) == 0 {
+// sizes counts clusters by their number of rows: there are at most sqrt(2 N)
+// different ones.
+type sizes struct {
+	few  [256]int64
+	many map[int64]int64
+	all  int64
+}
+
+func (s *sizes) add(rows int64) {
+	s.all++
+	if rows < int64(len(s.few)) {
+		s.few[rows]++
+		return
+	}
+	if s.many == nil {
+		s.many = map[int64]int64{}
+	}
+	s.many[rows]++
+}
+
+// spread describes the sizes; nil if there are none.
+func (s *sizes) spread() *Spread {
+	if s.all == 0 {
 		return nil
 	}
-	r := slices.Clone(rows)
-	slices.Sort(r)
-	m := float64(r[len(r)/2])
-	if len(r)%2 == 0 {
-		m = (float64(r[len(r)/2-1]) + m) / 2
+	r := &Spread{}
+	var seen, low int64 // low is the size of the lower middle cluster
+	add := func(rows, n int64) {
+		if n == 0 {
+			return
+		}
+		if seen == 0 {
+			r.Min = rows
+		}
+		r.Max = rows
+		if seen <= (s.all-1)/2 && seen+n > (s.all-1)/2 {
+			low = rows
+		}
+		if seen <= s.all/2 && seen+n > s.all/2 {
+			r.Median = Number((float64(low) + float64(rows)) / 2)
+		}
+		seen += n
 	}
-	return &Spread{Min: r[0], Median: Number(m), Max: r[len(r)-1]}
+	for rows, n := range s.few {
+		add(int64(rows), n)
+	}
+	for _, rows := range slices.Sorted(maps.Keys(s.many)) {
+		add(rows, s.many[rows])
+	}
+	return r
 }
 
 // scoreLoss bounds the relative error of the errors in r where scores were formed

@@ -27,7 +27,8 @@ const (
 // not closed. Same input and model give the same bits for any o.Workers.
 //
 // Errors: a *stream.UseError for a wrong model or option, the source's errors,
-// *accum.NoRowsError, *accum.MemoryError, *accum.ChangedError, the context's.
+// *accum.NoRowsError, *accum.MemoryError, *accum.ScratchError, *accum.DamageError,
+// *accum.ChangedError, the context's.
 func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*Result, error) {
 	start := time.Now()
 	o = o.withDefaults()
@@ -36,7 +37,11 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
+	if f.scan.Meter == nil {
+		f.scan.Meter = new(accum.Meter)
+	}
+	defer f.close()
 	if o.Timings {
 		f.scan.Timings = new(accum.Timings)
 	}
@@ -47,6 +52,9 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	begin := time.Now()
+	if err := f.clusters(); err != nil {
+		return nil, err
+	}
 	r := f.result()
 	f.timings(r, time.Since(begin))
 	r.Run.Seconds = Number(time.Since(start).Seconds())
@@ -65,9 +73,10 @@ type fitter struct {
 	state   *accum.State
 	sol     *solution
 	sums    *accum.RowSums
-	kinds   []string // of sums.Meats
-	keys    []int    // of sums.Scores
-	heavyOK bool     // rows of high leverage were summed one by one
+	kinds   []string             // of sums.Meats
+	keys    []int                // of sums.Scores
+	groups  map[int]*clusterSums // by key
+	heavyOK bool                 // rows of high leverage were summed one by one
 	fourth  []float64
 	loss    float64   // of the fourth-moment errors
 	rssLoss float64   // of the residual sum of squares
@@ -91,6 +100,7 @@ func (f *fitter) first() error {
 	}
 	lossy := arithmetics[f.o.Arithmetic] == accum.Auto && !s.Extended && s.Frame.Lossy()
 	if (lossy || f.sol.needsFrame()) && f.src.Info().Rewindable {
+		s.Close()
 		s, err := accum.Again(f.ctx, f.src, s, f.plan.needs, f.scan)
 		if err != nil {
 			return err
@@ -178,9 +188,6 @@ func (f *fitter) second() error {
 		}
 	}
 	if len(f.plan.needs.Clusters) > 0 && s.Dropped {
-		if !f.src.Info().Rewindable {
-			return &accum.MemoryError{What: "second moments of clusters on a pipe", Need: f.o.ClusterMemory + 1, Have: f.o.ClusterMemory}
-		}
 		rows = true
 		f.note("second-pass", "the clusters' second moments outgrew a sixteenth of --memory; a second pass kept scores only")
 	}
@@ -231,6 +238,7 @@ func (f *fitter) second() error {
 			rp.Whitener, rp.K = w, m
 		}
 	}
+	s.Close() // scores come from the second pass
 	sums, err := f.rowPass(rp)
 	if err != nil {
 		return err
@@ -444,45 +452,75 @@ func (f *fitter) loneTerms() []bool {
 	return out
 }
 
-func (f *fitter) cluster(e *Errors, k Kind) {
+// clusters walks over the clusters of every key that errors are asked for.
+func (f *fitter) clusters() error {
 	x, s := f.sol, f.state
-	var sc *accum.Scores
-	if f.sums != nil {
-		for i, key := range f.keys {
-			if key == k.Cluster {
-				sc = f.sums.Scores[i]
+	f.groups = map[int]*clusterSums{}
+	if x.df() <= 0 {
+		return nil
+	}
+	for _, k := range f.o.Errors {
+		if k.Cluster < 0 || f.groups[k.Cluster] != nil {
+			continue
+		}
+		var sc *accum.Scores
+		if f.sums != nil {
+			sc = f.sums.Scores[slices.Index(f.keys, k.Cluster)]
+		} else if slices.Contains(f.plan.needs.Clusters, k.Cluster) {
+			var err error
+			if sc, err = s.Scores(k.Cluster, x.theta); err != nil {
+				continue // errorsFor says so
 			}
 		}
-	} else if !x.perfect || len(f.plan.needs.Clusters) > 0 {
-		var err error
-		if sc, err = s.Scores(k.Cluster, x.theta); err != nil {
-			sc = nil
+		if sc == nil {
+			continue
 		}
+		c, err := x.sumClusters(f.ctx, sc)
+		if err != nil {
+			return err
+		}
+		f.groups[k.Cluster] = c
 	}
-	if sc != nil {
-		e.Groups = []int64{int64(len(sc.Keys))}
-		e.GroupRows = groupRows(sc.Rows)
+	return nil
+}
+
+// close gives back memory and scratch files.
+func (f *fitter) close() {
+	if f.state != nil {
+		f.state.Close()
+	}
+	if f.sums != nil {
+		f.sums.Close()
+	}
+}
+
+func (f *fitter) cluster(e *Errors, k Kind) {
+	x, s := f.sol, f.state
+	c := f.groups[k.Cluster]
+	if c != nil {
+		e.Groups = []int64{int64(c.groups)}
+		e.GroupRows = c.rows
 	}
 	switch {
 	case x.perfect:
 		df := 1.0
-		if sc != nil {
-			df = float64(len(sc.Keys) - 1)
+		if c != nil {
+			df = float64(c.groups - 1)
 		}
 		x.infer(e, x.nothing(df), f.o.Level, f.o.Covariance)
 		return
-	case sc == nil:
+	case c == nil:
 		x.unavailable(e, "the sums of the clusters were not kept")
 		return
-	case len(sc.Keys) < 2:
+	case c.groups < 2:
 		x.unavailable(e, "all rows are in one cluster; at least two are needed")
 		return
 	case s.Coarse && f.sums == nil:
 		x.unavailable(e, "the clusters' sums lost digits; use --passes 2")
 		return
 	}
-	r := x.clusterRobust(k.Name, sc)
-	if loss := x.scoreLoss(sc, r); loss > lossRefuse {
+	r := x.clusterRobust(k.Name, c)
+	if loss := x.scoreLoss(c.scores, r); loss > lossRefuse {
 		x.unavailable(e, "the clusters' sums cancel (relative error up to %.1e); use --passes 2", loss)
 		return
 	} else if loss > lossLimit {

@@ -26,6 +26,9 @@ type Options struct {
 	// keeps scores only. 0 means a sixteenth of Memory. It must not be derived
 	// from Workers, or the last bits would depend on them.
 	ClusterMemory int64
+	// Scratch is the folder for sums of clusters that do not fit Memory; "" is the
+	// system's folder for temporary files.
+	Scratch string
 	// Covariance asks for the matrix beyond 200 terms.
 	Covariance bool
 	// Dense is the number of columns up to which the sums are solved as one dense

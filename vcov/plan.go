@@ -28,6 +28,9 @@ type Plan struct {
 	// and worker; their numbers are not known before the scan.
 	PerCluster int64 `json:"per_cluster"`
 	PerLevel   int64 `json:"per_level"`
+	// ClusterMemory is what the sums of clusters may take in memory; beyond it they
+	// go to scratch in sorted runs.
+	ClusterMemory int64 `json:"cluster_memory"`
 
 	needs  accum.Needs
 	sample *accum.Sample // nil unless arithmetic hangs on it
@@ -190,14 +193,20 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 				p.needs.Clusters = append(p.needs.Clusters, i)
 			}
 		}
-		p.PerCluster = int64(c*(c+1)/2) * 24
+		p.PerCluster = accum.ClusterBytes(int(c * (c + 1) / 2))
+		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("cluster sums", float64(len(clusters))*(c*(c+1)/2+20))
 		route = append(route, "cluster sums")
-		p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass keeps scores only")
+		if info.Rewindable {
+			p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass keeps scores only")
+		} else {
+			p.why("clusters keep their second moments, since a pipe can be read once")
+		}
 	}
 	if rows {
 		p.Passes = 2
-		p.PerCluster = int64(c) * 24
+		p.PerCluster = accum.ClusterBytes(int(c) - 1)
+		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("second read", read)
 		p.cost("row pass", row+float64(len(clusters))*(c+20))
 		route = append(route, "row pass")

@@ -186,7 +186,11 @@ type Run struct {
 	Bytes            int64  `json:"bytes"` // read, all passes
 	Seconds          Number `json:"seconds"`
 	PeakBytes        int64  `json:"peak_bytes"` // of the process; set by the caller
-	Condition        Number `json:"condition"`  // of the terms as the sums hold them
+	// SpilledBytes were written to scratch, in SpilledRuns sorted runs, because the
+	// sums of clusters did not fit the memory.
+	SpilledBytes int64  `json:"spilled_bytes"`
+	SpilledRuns  int64  `json:"spilled_runs"`
+	Condition    Number `json:"condition"` // of the terms as the sums hold them
 	// Timings says where the time of all workers went, if asked for.
 	Timings []Timing `json:"timings,omitempty"`
 }

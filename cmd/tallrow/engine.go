@@ -33,7 +33,8 @@ func (a *app) open(ctx context.Context, s *settings, o stream.Options) (stream.S
 			return nil, stream.Usef("%s %s: want a folder that exists", s.origin("scratch"), s.scratch)
 		}
 	}
-	debug.SetMemoryLimit(s.memoryBound())
+	// The limit does not count the program itself.
+	debug.SetMemoryLimit(s.memoryBound() - min(baseBytes, s.memoryBound()/8))
 	src, err := stream.Open(ctx, s.data, a.stdin, formats(), o)
 	if err != nil {
 		return nil, err
@@ -202,6 +203,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		Level:  s.level, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings,
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
+	p.opts.Scratch = s.scratch
 	p.opts.ClusterMemory = s.clusterMemory()
 	return p, nil
 }

@@ -33,7 +33,7 @@ func TestMain(m *testing.M) {
 var unsteady = []*regexp.Regexp{
 	regexp.MustCompile(`[0-9.]+\s+s,\s+[0-9.,]+(\s+million)?\s+rows\s+a\s+second`),
 	regexp.MustCompile(`memory\s+at\s+most\s+[0-9.,]+\s+(KiB|MiB|GiB|bytes)`),
-	regexp.MustCompile(`"(seconds|peak_bytes)":[^,}]*`),
+	regexp.MustCompile(`"(seconds|peak_bytes|spilled_bytes|spilled_runs)":[^,}]*`),
 }
 
 func TestScripts(t *testing.T) {

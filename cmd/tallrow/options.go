@@ -128,7 +128,7 @@ var options = []option{
 		help: "bound for the whole process, such as 1GiB or 512MB",
 		set:  setMemory},
 	{name: "scratch", value: "DIR", group: "Resources", on: onAll, file: true, def: "the system's folder",
-		help: "folder for temporary files, such as the copy of a pipe that is read twice",
+		help: "folder for temporary files: sums of clusters that do not fit --memory, the copy of a pipe that is read twice",
 		set:  func(s *settings, v value) error { s.scratch = v.text(); return nil }},
 	{name: "plan", value: "FILE", group: "Resources", on: onFit,
 		help: "use the plan that `tallrow plan -o FILE` wrote; refused if model or data differ",

@@ -76,7 +76,7 @@ func renderPlan(pf *planFile, width int) string {
 	n.add("route", fmt.Sprintf("%s: %s, %s, %s", plural(int64(pf.Passes), "pass", "passes"), pf.Route, arithmeticText(pf.Arithmetic), plural(int64(pf.Workers), "worker", "workers")))
 	memory := fmt.Sprintf("about %s of %s", sizeText(pf.Memory), sizeText(pf.Bound))
 	if len(pf.Model.Cluster) > 0 && pf.PerCluster > 0 {
-		memory += fmt.Sprintf("; %s more for each cluster", sizeText(pf.PerCluster))
+		memory += fmt.Sprintf("; %s more for each cluster, and beyond %s sorted runs on scratch", sizeText(pf.PerCluster), sizeText(pf.Clusters))
 	}
 	if pf.PerLevel > 0 {
 		memory += fmt.Sprintf("; %s more for each level of a category", sizeText(pf.PerLevel))

@@ -29,6 +29,7 @@ type planFile struct {
 	Workers    int          `json:"workers"`
 	Memory     int64        `json:"memory"`
 	PerCluster int64        `json:"memory_per_cluster"`
+	Clusters   int64        `json:"memory_clusters"` // beyond it sums of clusters go to scratch
 	PerLevel   int64        `json:"memory_per_level"`
 	Bound      int64        `json:"memory_bound"`
 	Costs      []planCost   `json:"costs"`
@@ -84,7 +85,7 @@ func newPlanFile(p *prepared, plan *vcov.Plan) (*planFile, error) {
 		Model: p.s.echo(p.req), Reading: p.s.planReading(),
 		Input: planInput{Format: info.Format, Files: info.Files, Bytes: info.Bytes, Rows: info.Rows, Segments: info.Segments},
 		Terms: list(plan.Terms), Passes: plan.Passes, Route: plan.Route, Arithmetic: plan.Arithmetic,
-		Workers: plan.Workers, Memory: plan.Memory, PerCluster: plan.PerCluster, PerLevel: plan.PerLevel, Bound: p.s.memoryBound(),
+		Workers: plan.Workers, Memory: plan.Memory, PerCluster: plan.PerCluster, Clusters: plan.ClusterMemory, PerLevel: plan.PerLevel, Bound: p.s.memoryBound(),
 		Costs: []planCost{}, Reasons: list(plan.Reasons),
 	}
 	for _, c := range plan.Costs {

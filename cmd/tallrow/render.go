@@ -496,6 +496,9 @@ func runText(r *vcov.Result) string {
 	if run.PeakBytes > 0 {
 		t += fmt.Sprintf(", memory at most %s", sizeText(run.PeakBytes))
 	}
+	if run.SpilledRuns > 0 {
+		t += fmt.Sprintf("; sums of clusters beyond --memory went to scratch: %s in %s", sizeText(run.SpilledBytes), plural(run.SpilledRuns, "sorted run", "sorted runs"))
+	}
 	return t
 }
 
