@@ -1,5 +1,7 @@
 package accum
 
+import "github.com/tallrow/tallrow/accum/internal/kernel"
+
 // denseMapWide is denseMap with twice the digits: the frames' coefficients are
 // float64, but inverting a whitening and joining two of them costs digits that the
 // sums have.
@@ -130,28 +132,32 @@ func (s *State) assembleWide() {
 }
 
 // congruenceWide returns J M J' for the leading d rows and columns of J, whose rows
-// are ld long.
+// are ld long, and a symmetric M.
 func congruenceWide(j []Wide, ld int, m []Wide, d int) []Wide {
-	half := make([]Wide, d*d)
-	for i := range d {
-		for t := range d {
-			if x := j[i*ld+t]; x.Hi != 0 {
-				for c := range d {
-					half[i*d+c] = half[i*d+c].Add(x.Mul(m[t*d+c]))
+	hi, lo := make([]float64, d*d), make([]float64, d*d)
+	for i, x := range m {
+		hi[i], lo[i] = x.Hi, x.Lo
+	}
+	for range 2 { // X becomes (J X)', so M becomes M J' and that J M J'
+		toHi, toLo := make([]float64, d*d), make([]float64, d*d)
+		for i := range d {
+			for t := range d {
+				if x := j[i*ld+t]; x.Hi != 0 {
+					kernel.AxpyWide(x.Hi, x.Lo, hi[t*d:(t+1)*d], lo[t*d:(t+1)*d], toHi[i*d:(i+1)*d], toLo[i*d:(i+1)*d])
 				}
+			}
+		}
+		for i := range d {
+			for t := range d {
+				hi[t*d+i], lo[t*d+i] = toHi[i*d+t], toLo[i*d+t]
 			}
 		}
 	}
 	out := make([]Wide, d*d)
 	for i := range d {
 		for k := 0; k <= i; k++ {
-			var s Wide
-			for t := range d {
-				if x := j[k*ld+t]; x.Hi != 0 {
-					s = s.Add(half[i*d+t].Mul(x))
-				}
-			}
-			out[i*d+k], out[k*d+i] = s, s
+			x := Wide{hi[i*d+k], lo[i*d+k]}
+			out[i*d+k], out[k*d+i] = x, x
 		}
 	}
 	return out

@@ -49,11 +49,21 @@ func (b *basis) moments() (g, c []accum.Wide, svv accum.Wide) {
 	half := make([]accum.Wide, p*k) // S Q
 	v := make([]accum.Wide, p)      // s_v + S beside
 	q, beside := b.wide.q, b.wide.beside
+	filled := make([][]int, p) // places of a row of Q that are not zero, mostly one
+	for t := range p {
+		for a, x := range q[t*k : (t+1)*k] {
+			if x.Hi != 0 {
+				filled[t] = append(filled[t], a)
+			}
+		}
+	}
 	for i := range p {
 		v[i] = at(i, p)
 		for t := range p {
 			if x := at(i, t); x.Hi != 0 {
-				addTimes(half[i*k:(i+1)*k], x, q[t*k:(t+1)*k])
+				for _, a := range filled[t] {
+					half[i*k+a] = half[i*k+a].Add(x.Mul(q[t*k+a]))
+				}
 				v[i] = v[i].Add(x.Mul(beside[t]))
 			}
 		}
@@ -62,21 +72,15 @@ func (b *basis) moments() (g, c []accum.Wide, svv accum.Wide) {
 		svv = svv.Add(x.Mul(at(i, p).Add(v[i])))
 	}
 	for t := range p {
-		for i := range k {
-			if x := q[t*k+i]; x.Hi != 0 {
-				c[i] = c[i].Add(x.Mul(v[t]))
-				addTimes(g[i*k:(i+1)*k], x, half[t*k:(t+1)*k])
+		for _, i := range filled[t] {
+			x := q[t*k+i]
+			c[i] = c[i].Add(x.Mul(v[t]))
+			for a, y := range half[t*k : (t+1)*k] {
+				g[i*k+a] = g[i*k+a].Add(x.Mul(y))
 			}
 		}
 	}
 	return g, c, svv
-}
-
-// addTimes adds t y to x.
-func addTimes(x []accum.Wide, t accum.Wide, y []accum.Wide) {
-	for i, v := range y {
-		x[i] = x[i].Add(t.Mul(v))
-	}
 }
 
 // wideBasis is a basis that does not select columns, with all digits: C W for the
@@ -195,7 +199,11 @@ func (x *solution) refine() {
 }
 
 // refinePivot: above it the inverse in float64 has lost no more than two digits.
-const refinePivot = 1e-2
+// refineTerms bounds the terms for which it is refined, at K^3 of time.
+const (
+	refinePivot = 1e-2
+	refineTerms = 300
+)
 
 // refineInverse improves the columns of the inverse where G is not well conditioned.
 func (x *solution) refineInverse(g []accum.Wide) {
@@ -203,7 +211,7 @@ func (x *solution) refineInverse(g []accum.Wide) {
 	for _, j := range x.e.kept {
 		worst = min(worst, x.e.pivots[j])
 	}
-	if worst > refinePivot {
+	if worst > refinePivot || k > refineTerms {
 		return
 	}
 	rest := make([]float64, k)
