@@ -191,6 +191,12 @@ func (s *session) compete(ctx context.Context, sc *Scenario, list []contestant, 
 					err = errors.New("another answer than in the round before")
 				}
 			}
+			if errors.Is(err, errPatience) {
+				if turns[i] = round; round == 0 {
+					r.Status, r.Reason = "stopped", fmt.Sprintf("took longer than %v", c.limit)
+				}
+				continue
+			}
 			if err != nil {
 				r.Status, r.Reason = "failed", err.Error()
 				continue

@@ -124,6 +124,7 @@ func TestCompete(t *testing.T) {
 		contest("broken", func(*answer) {}),
 		contest("absent", func(*answer) {}),
 		contest("slow", func(*answer) {}),
+		contest("slower", func(*answer) {}),
 	}
 	list[0].base = true
 	list[8].exact = true
@@ -131,17 +132,29 @@ func TestCompete(t *testing.T) {
 	list[10].skip = "not here"
 	list[11].command = func(bool) (env, argv []string) { return nil, []string{"sleep", "60"} }
 	list[11].limit = 50 * time.Millisecond
+	slower := 0 // quick to be checked and at first, too slow then
+	list[12].command = func(bool) (env, argv []string) {
+		if slower++; slower > 2 {
+			return nil, []string{"sleep", "60"}
+		}
+		return nil, []string{"true"}
+	}
+	list[12].limit = 2 * time.Second
 	s := &session{progress: t.Output(), patience: time.Minute}
 	sc := &Scenario{Name: "test"}
 	if err := s.compete(t.Context(), sc, list, 3); err != nil {
 		t.Fatal(err)
 	}
-	want := []string{"ok", "ok", "ok", "disagrees", "disagrees", "disagrees", "disagrees", "disagrees", "disagrees", "failed", "skipped", "stopped"}
+	want := []string{"ok", "ok", "ok", "disagrees", "disagrees", "disagrees", "disagrees", "disagrees", "disagrees", "failed", "skipped", "stopped", "ok"}
 	for i, r := range sc.Results {
 		if r.Status != want[i] {
 			t.Errorf("%s: %s (%s), want %s", r.Name, r.Status, r.Reason, want[i])
 		}
-		if timed := r.Status == "ok"; (len(r.Times) == 3) != timed || (r.Ratio != nil) != timed {
+		rounds := map[bool]int{true: 3}[r.Status == "ok"]
+		if r.Name == "slower" {
+			rounds = 1
+		}
+		if timed := r.Status == "ok"; len(r.Times) != rounds || (r.Ratio != nil) != timed {
 			t.Errorf("%s, %s: %d times, ratio %v", r.Name, r.Status, len(r.Times), r.Ratio)
 		}
 	}
