@@ -154,22 +154,25 @@ func (e *Evaluator) evalMonth(in *instr, dst []float64, ns []int64, null []bool)
 	return setMissing(dst, null)
 }
 
-// evalDate gives midnight of the wall-clock day. The first and last day that
-// nanoseconds can hold have no midnight or no next one inside the range: they
-// stay at its ends.
 func (e *Evaluator) evalDate(in *instr, dst, ns []int64) {
-	const lo, hi = math.MinInt64 / nsPerSecond, math.MaxInt64 / nsPerSecond
 	for i, t := range ns[:len(dst)] {
-		s := floorDiv(e.wallSeconds(in, t), secondsPerDay) * secondsPerDay
-		switch {
-		case s < lo:
-			dst[i] = math.MinInt64
-		case s > hi:
-			dst[i] = math.MaxInt64
-		default:
-			dst[i] = s * nsPerSecond
-		}
+		dst[i] = midnight(e.wallSeconds(in, t))
 	}
+}
+
+// midnight is that of the wall-clock day. The first and last day that nanoseconds
+// can hold have no midnight or no next one inside the range: they stay at its
+// ends.
+func midnight(wall int64) int64 {
+	const lo, hi = math.MinInt64 / nsPerSecond, math.MaxInt64 / nsPerSecond
+	s := floorDiv(wall, secondsPerDay) * secondsPerDay
+	switch {
+	case s < lo:
+		return math.MinInt64
+	case s > hi:
+		return math.MaxInt64
+	}
+	return s * nsPerSecond
 }
 
 // textCache holds the result of comparing each value of a dictionary with a

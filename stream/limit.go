@@ -45,7 +45,12 @@ func (f *first) Info() Info {
 }
 
 func (f *first) Scan(ctx context.Context, uses []Use) (Scan, error) {
-	sc, err := f.src.Scan(ctx, uses)
+	return f.ScanWhere(ctx, uses, nil)
+}
+
+// ScanWhere counts rows that are not read as if they were.
+func (f *first) ScanWhere(ctx context.Context, uses []Use, where Filter) (Scan, error) {
+	sc, err := scanWhere(ctx, f.src, uses, where)
 	if err != nil {
 		return nil, err
 	}
@@ -57,6 +62,13 @@ func (f *first) Scan(ctx context.Context, uses []Use) (Scan, error) {
 func (f *first) Sample(context.Context, []Use, float64) (Segment, error) {
 	return nil, fmt.Errorf("the first %d rows: %w", f.n, ErrNoSample)
 }
+
+func (f *first) SampleWhere(ctx context.Context, uses []Use, at float64, _ Filter) (Segment, error) {
+	return f.Sample(ctx, uses, at)
+}
+
+// Unread is not known: malformed rows that are passed over do not count towards n.
+func (f *first) Unread(context.Context, []Use, Filter) (Unread, error) { return Unread{}, nil }
 
 func (f *first) Stamp() (string, error) {
 	s, err := f.src.Stamp()
@@ -107,7 +119,11 @@ func (s *firstScan) Next(ctx context.Context) (Segment, error) {
 		s.turn <- struct{}{}
 		return nil, err
 	}
-	return &firstSegment{Segment: seg, s: s}, nil
+	g := &firstSegment{Segment: seg, s: s}
+	if g.excluded = min(seg.Tally().Excluded, s.left); g.excluded > 0 {
+		s.left -= g.excluded
+	}
+	return g, nil
 }
 
 // countUnread takes the rows that the reader of the last segment did not want
@@ -150,6 +166,7 @@ type firstSegment struct {
 	Segment
 	s         *firstScan
 	delivered int64
+	excluded  int64
 	done      bool // the token is given back
 	failed    error
 	closed    bool
@@ -194,7 +211,8 @@ func (g *firstSegment) Read(b *Batch) error {
 // Tally counts the rows up to the cut.
 func (g *firstSegment) Tally() SegmentTally {
 	t := g.Segment.Tally()
-	t.Rows = g.delivered + t.Malformed
+	t.Excluded = g.excluded
+	t.Rows = g.delivered + t.Malformed + t.Excluded
 	return t
 }
 

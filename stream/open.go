@@ -131,6 +131,8 @@ type stdinFile struct {
 	file *os.File
 }
 
+func (s stdinFile) unwrap() Source { return s.Source }
+
 func (s stdinFile) Stamp() (string, error) {
 	info, err := s.file.Stat()
 	if err != nil {
@@ -361,6 +363,8 @@ type skipped struct {
 	Source
 	names int
 }
+
+func (s skipped) unwrap() Source { return s.Source }
 
 func (s skipped) Info() Info {
 	info := s.Source.Info()

@@ -81,6 +81,23 @@ func (c *constant) vector(kind Kind, asNumber bool, n int) Vector {
 	return v
 }
 
+// bounds is the range of the cell, as vector brings it.
+func (c *constant) bounds(kind Kind, asNumber bool) Range {
+	if c.missing {
+		return Range{AllMissing: true}
+	}
+	r := Range{NoneMissing: true, Bounded: true}
+	switch v := c.vector(kind, asNumber, 1); v.Kind {
+	case Float64:
+		r.F64 = [2]float64{v.F64[0], v.F64[0]}
+	case Text:
+		r.Text = [2]string{c.text, c.text}
+	default:
+		r.I64 = [2]int64{v.I64[0], v.I64[0]}
+	}
+	return r
+}
+
 // folderColumns makes columns of the key=value folders of all files: cells[i][k]
 // belongs to file i and column k. The kind is guessed over all values: int64 if
 // all are canonical integers, calendar days if all are like 2024-03-31, else

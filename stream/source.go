@@ -83,9 +83,14 @@ type Segment interface {
 
 // SegmentTally counts what a segment has read.
 type SegmentTally struct {
-	Rows      int64 // delivered rows and malformed ones
+	Rows      int64 // delivered rows, malformed and excluded ones
 	Malformed int64 // rows passed over under Options.SkipBad
 	Bytes     int64 // bytes of the input as stored, for progress
+	// Excluded counts rows that were not read because metadata alone say that the
+	// row filter excludes them, see Pruner. Files is 1 at the first segment of a
+	// file of which no row is read.
+	Excluded int64
+	Files    int64
 	// Problems describes the first malformed rows, at most MaxProblems.
 	Problems []*RowError
 }

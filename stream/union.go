@@ -286,11 +286,58 @@ func (u *union) memberUses(m *member, uses []Use) (inner []Use, from []int) {
 	return inner, from
 }
 
+// memberFilter is the filter over the member's own columns; it knows the folder
+// columns.
+func (u *union) memberFilter(m *member, uses []Use, from []int, f Filter) Filter {
+	if f == nil {
+		return nil
+	}
+	return func(cells func(int) Range) bool {
+		return f(func(k int) Range {
+			if from[k] >= 0 {
+				return cells(from[k])
+			}
+			use := uses[k]
+			return m.consts[use.Column-u.real].bounds(u.schema.Columns[use.Column].Kind, use.AsNumber)
+		})
+	}
+}
+
+// Unread looks into each file again.
+func (u *union) Unread(ctx context.Context, uses []Use, f Filter) (Unread, error) {
+	if err := u.check(uses); err != nil {
+		return Unread{}, err
+	}
+	parts := make([]Unread, len(u.members))
+	err := eachMember(len(parts), func(i int) error {
+		m := u.members[i]
+		if m.pipe {
+			return nil
+		}
+		src, err := m.acquire(ctx)
+		if err != nil {
+			return err
+		}
+		inner, from := u.memberUses(m, uses)
+		parts[i], err = unread(ctx, src, inner, u.memberFilter(m, uses, from, f))
+		return firstErr(err, m.release())
+	})
+	var total Unread
+	for _, p := range parts {
+		total.Add(p)
+	}
+	return total, err
+}
+
 func (u *union) Scan(ctx context.Context, uses []Use) (Scan, error) {
+	return u.ScanWhere(ctx, uses, nil)
+}
+
+func (u *union) ScanWhere(ctx context.Context, uses []Use, f Filter) (Scan, error) {
 	if err := u.check(uses); err != nil {
 		return nil, err
 	}
-	s := &unionScan{u: u, ctx: ctx, uses: slices.Clone(uses), turn: make(chan struct{}, 1)}
+	s := &unionScan{u: u, ctx: ctx, uses: slices.Clone(uses), where: f, turn: make(chan struct{}, 1)}
 	// Pipes say now, not in the middle, that they cannot be read again.
 	for i, m := range u.members {
 		if !m.pipe {
@@ -308,10 +355,11 @@ func (u *union) Scan(ctx context.Context, uses []Use) (Scan, error) {
 
 // unionScan hands out the segments of one file after the other.
 type unionScan struct {
-	u    *union
-	ctx  context.Context
-	uses []Use
-	turn chan struct{} // held while the fields below are used
+	u     *union
+	ctx   context.Context
+	uses  []Use
+	where Filter
+	turn  chan struct{} // held while the fields below are used
 
 	file   int // of the union, the next to start
 	cur    *fileScan
@@ -341,7 +389,7 @@ func (s *unionScan) start(ctx context.Context, i int) (*fileScan, error) {
 		return nil, err
 	}
 	inner, from := s.u.memberUses(m, s.uses)
-	sc, err := src.Scan(s.ctx, inner)
+	sc, err := scanWhere(s.ctx, src, inner, s.u.memberFilter(m, s.uses, from, s.where))
 	if err != nil {
 		m.release()
 		return nil, err
@@ -498,7 +546,7 @@ func (c *unionColumns) read(seg Segment, b *Batch) error {
 		return seg.Read(b)
 	}
 	b.Rows, b.Cols, b.Marks = 0, nil, nil
-	if err := seg.Read(&c.batch); err != nil {
+	if err := seg.Read(&c.batch); err != nil || c.batch.Rows == 0 {
 		return err
 	}
 	for k, j := range c.from {

@@ -10,6 +10,12 @@ import (
 // share within it. Where that file ends early it goes on with the next ones
 // until it has a full batch.
 func (u *union) Sample(ctx context.Context, uses []Use, at float64) (Segment, error) {
+	return u.SampleWhere(ctx, uses, at, nil)
+}
+
+// SampleWhere goes on to the next files by all rows, those that are not read
+// among them.
+func (u *union) SampleWhere(ctx context.Context, uses []Use, at float64, f Filter) (Segment, error) {
 	if !u.info.Sampled {
 		return nil, ErrNoSample
 	}
@@ -31,7 +37,7 @@ func (u *union) Sample(ctx context.Context, uses []Use, at float64) (Segment, er
 			inner = min(max((pos-float64(u.before[i]))/float64(size), 0), 1)
 		}
 	}
-	s := &unionSample{u: u, ctx: ctx, uses: slices.Clone(uses), file: i, end: at == 1}
+	s := &unionSample{u: u, ctx: ctx, uses: slices.Clone(uses), where: f, file: i, end: at == 1}
 	if err := s.open(inner); err != nil {
 		return nil, err
 	}
@@ -39,15 +45,16 @@ func (u *union) Sample(ctx context.Context, uses []Use, at float64) (Segment, er
 }
 
 type unionSample struct {
-	u    *union
-	ctx  context.Context
-	uses []Use
-	file int
-	end  bool // the end of the input is asked for: look before empty files
-	seg  Segment
-	cols *unionColumns
-	rows int
-	past SegmentTally // of files that are left behind
+	u     *union
+	ctx   context.Context
+	uses  []Use
+	where Filter
+	file  int
+	end   bool // the end of the input is asked for: look before empty files
+	seg   Segment
+	cols  *unionColumns
+	rows  int64
+	past  SegmentTally // of files that are left behind
 }
 
 func (s *unionSample) open(at float64) error {
@@ -57,7 +64,7 @@ func (s *unionSample) open(at float64) error {
 		return err
 	}
 	inner, from := s.u.memberUses(m, s.uses)
-	seg, err := src.Sample(s.ctx, inner, at)
+	seg, err := sampleWhere(s.ctx, src, inner, at, s.u.memberFilter(m, s.uses, from, s.where))
 	if err != nil {
 		m.release()
 		return err
@@ -78,9 +85,10 @@ func (s *unionSample) Number() int {
 func (s *unionSample) Read(b *Batch) error {
 	b.Rows, b.Cols, b.Marks = 0, nil, nil
 	for s.seg != nil {
+		before := s.seg.Tally().Excluded
 		err := s.cols.read(s.seg, b)
 		if err == nil {
-			s.rows += b.Rows
+			s.rows += int64(b.Rows) + s.seg.Tally().Excluded - before
 			return nil
 		}
 		step, at := 1, 0.0
@@ -117,6 +125,7 @@ func (s *unionSample) Tally() SegmentTally {
 		t.Rows += in.Rows
 		t.Malformed += in.Malformed
 		t.Bytes += in.Bytes
+		t.Excluded += in.Excluded
 	}
 	return t
 }

@@ -188,17 +188,29 @@ func (f *File) checkUses(uses []stream.Use) error {
 // Scan implements stream.Source. One segment is one row group, or a part of a
 // huge one.
 func (f *File) Scan(ctx context.Context, uses []stream.Use) (stream.Scan, error) {
+	return f.ScanWhere(ctx, uses, nil)
+}
+
+// ScanWhere implements stream.Pruner. All statistics are looked at before the
+// first segment: a few microseconds a row group.
+func (f *File) ScanWhere(ctx context.Context, uses []stream.Use, where stream.Filter) (stream.Scan, error) {
 	if err := f.checkUses(uses); err != nil {
 		return nil, err
 	}
-	return &scan{f: f, uses: append([]stream.Use(nil), uses...)}, ctx.Err()
+	s := &scan{f: f, uses: append([]stream.Use(nil), uses...), out: f.excluded(uses, where)}
+	if f.wholly(s.out) {
+		s.files = 1
+	}
+	return s, ctx.Err()
 }
 
 type scan struct {
-	f    *File
-	uses []stream.Use
-	mu   sync.Mutex
-	next int
+	f     *File
+	uses  []stream.Use
+	out   []bool // groups that are not read, nil for none
+	mu    sync.Mutex
+	next  int
+	files int64 // to be told by the first segment that is not read
 }
 
 func (s *scan) Next(ctx context.Context) (stream.Segment, error) {
@@ -211,6 +223,12 @@ func (s *scan) Next(ctx context.Context) (stream.Segment, error) {
 		return nil, io.EOF
 	}
 	p := s.f.parts[s.next]
+	if s.out != nil && s.out[p.group] {
+		seg := unreadPart{s.f, s.next, s.files}
+		s.files = 0
+		s.next++
+		return seg, nil
+	}
 	seg := s.f.newSegment(s.uses, s.next, p.group, p.group+1)
 	seg.from, seg.rows = p.first, p.rows
 	s.next++
@@ -228,6 +246,11 @@ func (s *scan) Close() error {
 // but so that BatchRows rows are left if the file has them, and goes on to the
 // end of the file. Pages before that row are passed over by their headers.
 func (f *File) Sample(ctx context.Context, uses []stream.Use, at float64) (stream.Segment, error) {
+	return f.SampleWhere(ctx, uses, at, nil)
+}
+
+// SampleWhere implements stream.Pruner.
+func (f *File) SampleWhere(ctx context.Context, uses []stream.Use, at float64, where stream.Filter) (stream.Segment, error) {
 	if err := f.checkUses(uses); err != nil {
 		return nil, err
 	}
@@ -252,6 +275,7 @@ func (f *File) Sample(ctx context.Context, uses []stream.Use, at float64) (strea
 	}
 	s := f.newSegment(uses, -1, g, n)
 	s.from, s.rows = row-f.first[g], rows-row
+	s.uses, s.where = append([]stream.Use(nil), uses...), where
 	return s, nil
 }
 

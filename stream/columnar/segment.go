@@ -37,13 +37,15 @@ type badCell struct {
 type segment struct {
 	f       *File
 	number  int
-	group   int   // being read
-	last    int   // before which the segment ends
-	from    int64 // row of the first group at which it begins
-	rows    int64 // that are still to be read, in all
-	left    int64 // of these in the group that is open
-	open    bool  // the readers are at the group
-	row     int64 // next row of the file
+	group   int           // being read
+	last    int           // before which the segment ends
+	from    int64         // row of the first group at which it begins
+	rows    int64         // that are still to be read, in all
+	left    int64         // of these in the group that is open
+	open    bool          // the readers are at the group
+	row     int64         // next row of the file
+	uses    []stream.Use  // of a sample
+	where   stream.Filter // of a sample, nil for none
 	readers []reader
 	at      int // reader at work, for messages; -1 none
 	marks   []int64
@@ -148,9 +150,16 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	for j := range s.readers {
 		s.readers[j].hasNull = false
 	}
+	if s.passOver() {
+		b.Rows = 0
+		return nil
+	}
 	rows := 0
 	for rows < stream.BatchRows {
 		for s.left == 0 {
+			if s.rows == 0 && !s.open && s.tally.Excluded > 0 {
+				return io.EOF // passed over to the end
+			}
 			if s.open {
 				if err := s.finishGroup(); err != nil {
 					return err
@@ -466,24 +475,31 @@ func (s *segment) dropBad(at, n int) (int, error) {
 }
 
 // Locate implements stream.Segment.
-func (s *segment) Locate(mark int64) stream.Position {
-	g, _ := slices.BinarySearch(s.f.first, mark+1)
-	return stream.Position{File: s.f.name, Group: g, Row: mark + 1}
+func (s *segment) Locate(mark int64) stream.Position { return s.f.locate(mark) }
+
+func (f *File) locate(mark int64) stream.Position {
+	g, _ := slices.BinarySearch(f.first, mark+1)
+	return stream.Position{File: f.name, Group: g, Row: mark + 1}
 }
 
-// Tally implements stream.Segment. Bytes is the share of the file that the rows
-// read have in their group.
+// Tally implements stream.Segment.
 func (s *segment) Tally() stream.SegmentTally {
 	t := s.tally
 	if s.number >= 0 {
-		p := s.f.parts[s.number]
-		share, rows := s.f.share(p.group), s.f.meta.RowGroups[p.group].NumRows
-		if rows > 0 {
-			share = mulDiv(share, p.first+p.rows-s.rows, rows) - mulDiv(share, p.first, rows)
-		}
-		t.Bytes = share
+		t.Bytes = s.f.partBytes(s.number, s.f.parts[s.number].rows-s.rows)
 	}
 	return t
+}
+
+// partBytes is the share of the file that the first rows of a part have in their
+// group.
+func (f *File) partBytes(number int, read int64) int64 {
+	p := f.parts[number]
+	share, rows := f.share(p.group), f.meta.RowGroups[p.group].NumRows
+	if rows == 0 {
+		return share
+	}
+	return mulDiv(share, p.first+read, rows) - mulDiv(share, p.first, rows)
 }
 
 // Close implements stream.Segment.
