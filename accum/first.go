@@ -365,7 +365,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 			b.pool.close()
 		}
 	}()
-	scan, err := src.Scan(ctx, d.Uses())
+	scan, err := d.Scan(ctx, src)
 	if err != nil {
 		return nil, err
 	}

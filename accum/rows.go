@@ -210,6 +210,7 @@ type pass struct {
 	bad      int64
 	bytes    int64
 	segments int64
+	unread   stream.Unread
 	checks   map[int]segCheck
 }
 
@@ -368,14 +369,20 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 	}
 	ld.watch.lap(StageJoin)
 	t := seg.Tally()
+	seen += t.Excluded
+	p.meter.Rows.Add(t.Excluded)
 	p.meter.Bytes.Add(t.Bytes - bytes)
 	p.mu.Lock()
 	defer p.mu.Unlock()
 	p.checks[seg.Number()] = ld.check(seen)
 	p.read += t.Rows
 	p.bad += t.Malformed
-	p.bytes += t.Bytes
 	p.segments++
+	if t.Excluded > 0 {
+		p.unread.Add(stream.Unread{Files: t.Files, Segments: 1, Rows: t.Excluded, Bytes: t.Bytes})
+	} else {
+		p.bytes += t.Bytes
+	}
 	for i, e := range t.Problems {
 		p.problems = append(p.problems, problem{seg.Number(), i, e})
 	}

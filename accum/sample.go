@@ -47,7 +47,6 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) 
 	rows := newFrameRows(l.nx)
 	ld := newLoader(l, trivialFrame(l))
 	ld.eval.Extended(true) // to know what float64 leaves off
-	uses := l.design.Uses()
 	segments := src.Info().Segments
 	spots := sampleSpots
 	if segments >= 0 {
@@ -55,13 +54,16 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) 
 	}
 	batches := (sampleRows/stream.BatchRows + spots - 1) / spots
 	for spot := 0; spot < sampleMaxSpots && (spot < spots || rows.rows() < sampleRows); spot++ {
-		seg, err := src.Sample(ctx, uses, spread(spot))
+		seg, err := l.design.Sample(ctx, src, spread(spot))
 		if err != nil {
 			return nil, false, err
 		}
 		for b := 0; b < batches && err == nil; b++ {
 			if err = seg.Read(&ld.batch); err != nil {
 				break
+			}
+			if ld.batch.Rows == 0 {
+				continue // excluded by metadata
 			}
 			// A row that cannot be used is reported by the scan, with its place.
 			if ld.eval.Eval(&ld.batch, seg.Locate, &ld.block) == nil {

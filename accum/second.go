@@ -510,7 +510,7 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	p.meter.Pass.Store(2)
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)
-	scan, err := src.Scan(ctx, s.Design.Uses())
+	scan, err := s.Design.Scan(ctx, src)
 	if err != nil {
 		return nil, 0, err
 	}

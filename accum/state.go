@@ -51,6 +51,7 @@ type State struct {
 	Varied   []bool // whether its nonzero values differ
 	Segments int64
 	Bytes    int64
+	Unread   stream.Unread // counted as read and excluded, and among Segments, but not read
 	// Fingerprint identifies the used cells of the input.
 	Fingerprint string
 	// Dropped: cluster sums were wanted and outgrew their share of memory.
@@ -182,6 +183,8 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, 
 		}
 		joinVaried(value, s.Varied, e.value, e.varied)
 	}
+	s.Unread = p.unread
+	s.Tally.Excluded += p.unread.Rows
 	s.Weight = weight.value()
 	if l.design.Spec.Weight == "" {
 		s.Weight = float64(s.Rows)

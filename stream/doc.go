@@ -20,6 +20,13 @@
 // next call of Read on that segment. The slices of a Block belong to the
 // Evaluator and hold until its next call. Nobody else may change them.
 //
+// # Rows that are not read
+//
+// A Pruner bounds the cells of segments by metadata: statistics of Parquet row
+// groups, names of key=value folders. What the row filter of a Design certainly
+// excludes by them is not read, but counted as if it had been: Design.Scan and
+// Design.Sample see to that. No number of a result depends on it.
+//
 // # Missing cells
 //
 // In a Float64 vector NaN is a missing cell. In every other vector Null marks

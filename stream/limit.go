@@ -211,7 +211,10 @@ func (g *firstSegment) Read(b *Batch) error {
 // Tally counts the rows up to the cut.
 func (g *firstSegment) Tally() SegmentTally {
 	t := g.Segment.Tally()
-	t.Excluded = g.excluded
+	if g.excluded < t.Excluded {
+		t.Bytes = int64(float64(t.Bytes) * float64(g.excluded) / float64(t.Excluded))
+		t.Excluded = g.excluded
+	}
 	t.Rows = g.delivered + t.Malformed + t.Excluded
 	return t
 }

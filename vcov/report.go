@@ -53,7 +53,7 @@ func (f *fitter) result() *Result {
 	}
 	f.warnings(r)
 	r.Model = f.model()
-	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments,
+	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments, Unread: s.Unread,
 		Bytes: f.bytes, SpilledBytes: f.scan.Meter.Spilled.Load(), SpilledRuns: f.scan.Meter.Runs.Load(), Condition: Number(x.condition())}
 	if s.Extended {
 		r.Run.Arithmetic, r.Run.ArithmeticReason = "extended", whyExtended(s.Frame)

@@ -3,6 +3,8 @@ package vcov
 import (
 	"math"
 	"strconv"
+
+	"github.com/tallrow/tallrow/stream"
 )
 
 // Format is the name and version of the JSON form of a Result.
@@ -183,9 +185,13 @@ type Run struct {
 	ArithmeticReason string `json:"arithmetic_reason,omitempty"`
 	Workers          int    `json:"workers"`
 	Segments         int64  `json:"segments"`
-	Bytes            int64  `json:"bytes"` // read, all passes
-	Seconds          Number `json:"seconds"`
-	PeakBytes        int64  `json:"peak_bytes"` // of the process; set by the caller
+	// Unread is what the row filter excludes by statistics and folder names alone:
+	// its rows are among Rows.Excluded, its segments among Segments, its bytes not
+	// among Bytes.
+	Unread    stream.Unread `json:"unread"`
+	Bytes     int64         `json:"bytes"` // read, all passes
+	Seconds   Number        `json:"seconds"`
+	PeakBytes int64         `json:"peak_bytes"` // of the process; set by the caller
 	// SpilledBytes were written to scratch, in SpilledRuns sorted runs, because the
 	// sums of clusters did not fit the memory.
 	SpilledBytes int64  `json:"spilled_bytes"`

@@ -37,7 +37,7 @@ for --plan of fit, which then reads in the same way and refuses another model or
 			return err
 		}
 		defer p.src.Close()
-		pf, err := newPlanFile(p, plan)
+		pf, err := newPlanFile(cmd.Context(), p, plan)
 		if err != nil {
 			return err
 		}
@@ -64,6 +64,9 @@ func renderPlan(pf *planFile, width int) string {
 	}
 	b.WriteByte('\n')
 	n.add("input", inputText(pf.Input))
+	if pf.Unread.Segments > 0 {
+		n.add("", unreadText(pf.Unread, int64(pf.Input.Segments)))
+	}
 	var used []string
 	for _, c := range pf.Columns {
 		if c.Used {

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"context"
 	"encoding/json"
 	"io"
 	"os"
@@ -16,24 +17,27 @@ const planFormat = "tallrow-plan/1"
 
 // planFile is a plan as `plan` prints and writes it and as --plan reads it.
 type planFile struct {
-	Format     string       `json:"format"`
-	Version    string       `json:"version"`
-	Model      vcov.Model   `json:"model"`
-	Reading    planReading  `json:"reading"`
-	Input      planInput    `json:"input"`
-	Columns    []planColumn `json:"columns"`
-	Terms      []string     `json:"terms"`
-	Passes     int          `json:"passes"`
-	Route      string       `json:"route"`
-	Arithmetic string       `json:"arithmetic"`
-	Workers    int          `json:"workers"`
-	Memory     int64        `json:"memory"`
-	PerCluster int64        `json:"memory_per_cluster"`
-	Clusters   int64        `json:"memory_clusters"` // beyond it sums of clusters go to scratch
-	PerLevel   int64        `json:"memory_per_level"`
-	Bound      int64        `json:"memory_bound"`
-	Costs      []planCost   `json:"costs"`
-	Reasons    []string     `json:"reasons"`
+	Format  string      `json:"format"`
+	Version string      `json:"version"`
+	Model   vcov.Model  `json:"model"`
+	Reading planReading `json:"reading"`
+	Input   planInput   `json:"input"`
+	// Unread is what the fit will not read, as its row filter excludes it by
+	// statistics and folder names.
+	Unread     stream.Unread `json:"unread"`
+	Columns    []planColumn  `json:"columns"`
+	Terms      []string      `json:"terms"`
+	Passes     int           `json:"passes"`
+	Route      string        `json:"route"`
+	Arithmetic string        `json:"arithmetic"`
+	Workers    int           `json:"workers"`
+	Memory     int64         `json:"memory"`
+	PerCluster int64         `json:"memory_per_cluster"`
+	Clusters   int64         `json:"memory_clusters"` // beyond it sums of clusters go to scratch
+	PerLevel   int64         `json:"memory_per_level"`
+	Bound      int64         `json:"memory_bound"`
+	Costs      []planCost    `json:"costs"`
+	Reasons    []string      `json:"reasons"`
 }
 
 // planReading is how the data are read: part of what must not change.
@@ -78,7 +82,7 @@ func (s *settings) planReading() planReading {
 }
 
 // newPlanFile writes down a plan.
-func newPlanFile(p *prepared, plan *vcov.Plan) (*planFile, error) {
+func newPlanFile(ctx context.Context, p *prepared, plan *vcov.Plan) (*planFile, error) {
 	info := p.src.Info()
 	pf := &planFile{
 		Format: planFormat, Version: version,
@@ -93,6 +97,9 @@ func newPlanFile(p *prepared, plan *vcov.Plan) (*planFile, error) {
 	}
 	var err error
 	if pf.Input.Stamp, err = p.stamp(); err != nil {
+		return nil, err
+	}
+	if pf.Unread, err = p.design.Unread(ctx, p.src); err != nil {
 		return nil, err
 	}
 	pf.Columns = p.columns()

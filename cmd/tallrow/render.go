@@ -8,6 +8,7 @@ import (
 	"sort"
 	"strings"
 
+	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/vcov"
 )
 
@@ -482,6 +483,16 @@ func wholeOr(n vcov.Number) string {
 	return digits(x, 5)
 }
 
+// unreadText says what --where spared of all segments.
+func unreadText(u stream.Unread, segments int64) string {
+	t := fmt.Sprintf("%s of %s not read: --where excludes them by statistics or folder names (%s, %s", count(u.Segments), plural(segments, "segment", "segments"),
+		plural(u.Rows, "row", "rows"), sizeText(u.Bytes))
+	if u.Files > 0 {
+		t += ", " + plural(u.Files, "whole file", "whole files")
+	}
+	return t + ")"
+}
+
 func runText(r *vcov.Result) string {
 	run := r.Run
 	t := fmt.Sprintf("%s (%s, %s arithmetic), %s, %s", plural(int64(run.Passes), "pass", "passes"), run.Route, run.Arithmetic,
@@ -492,6 +503,9 @@ func runText(r *vcov.Result) string {
 	}
 	if run.Bytes > 0 {
 		t += fmt.Sprintf("; %s read", sizeText(run.Bytes))
+	}
+	if u := run.Unread; u.Segments > 0 {
+		t += "; " + unreadText(u, run.Segments)
 	}
 	if run.PeakBytes > 0 {
 		t += fmt.Sprintf(", memory at most %s", sizeText(run.PeakBytes))

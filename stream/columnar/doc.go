@@ -36,6 +36,9 @@
 // A time outside int64 nanoseconds and a decimal beyond float64 are
 // *stream.RowError (or passed over under Options.SkipBad).
 //
+// File is a stream.Pruner: row groups that a row filter excludes by their
+// statistics are not read (see prune.go for which statistics are believed).
+//
 // # Writing
 //
 // Writer writes batches, column by column, with page checksums, pages of at

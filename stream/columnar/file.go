@@ -48,6 +48,7 @@ type File struct {
 	first   []int64 // first row of each row group
 	bytes   []int64 // shares of the file before each group, and the total
 	worker  int64
+	floats  bool // statistics of floats are believed
 	parts   []part
 	walkMu  sync.Mutex
 	walks   map[walkKey]*walk
@@ -77,6 +78,7 @@ func (f *File) open(o stream.Options) error {
 		return err
 	}
 	f.meta = meta
+	f.floats = knowsNaN(meta.CreatedBy)
 	var leaves int
 	if f.cols, f.refused, leaves, err = buildColumns(meta, f.name); err != nil {
 		return err

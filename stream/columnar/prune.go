@@ -2,7 +2,9 @@ package columnar
 
 import (
 	"context"
+	"fmt"
 	"io"
+	"strings"
 
 	"github.com/parquet-go/parquet-go/format"
 	"github.com/tallrow/tallrow/stream"
@@ -15,8 +17,11 @@ import (
 //   - the older min and max for signed numbers, booleans and times alone: for text
 //     and unsigned numbers writers disagreed on their order;
 //   - none where the lengths are wrong, the minimum is above the maximum, or one of
-//     them is NaN. A column of floats may hold NaN, a missing cell, beside any
-//     statistics; whether a zero has a sign does not matter to comparisons.
+//     them is NaN;
+//   - those of floats only of writers that are known to leave NaN, a missing cell
+//     here, out of them: elsewhere a NaN may have hidden smaller and larger numbers
+//     (parquet-go v0.32 does so in dictionaries). Whether a zero has a sign does not
+//     matter to comparisons.
 //
 // Texts may be cut, the upper one to a larger one: they are bounds all the same.
 
@@ -25,6 +30,12 @@ import (
 func (f *File) bounds(group int, c *column) (low, high []byte, ok bool) {
 	st := &f.meta.RowGroups[group].Columns[c.leaf].MetaData.Statistics
 	signed := false
+	switch c.conv {
+	case convF16, convF32, convF64:
+		if !f.floats {
+			return nil, nil, false
+		}
+	}
 	switch c.conv &^ convAsText {
 	case convBool, convI32, convI64, convF32, convF64, convDec32, convDec64, convTime32, convTime64, convDate, convStamp:
 		signed = true
@@ -48,6 +59,34 @@ func (f *File) bounds(group int, c *column) (low, high []byte, ok bool) {
 		return nil, nil, false
 	}
 	return low, high, true
+}
+
+// nanWriters are writers whose statistics of floats hold whatever NaN there are,
+// with the version from which on.
+var nanWriters = map[string][2]int{
+	"tallrow":           {0, 0},
+	"parquet-cpp-arrow": {0, 0},
+	"parquet-mr":        {1, 10},
+	"parquet-rs":        {30, 0},
+	"DuckDB":            {1, 0},
+	"Polars":            {0, 0},
+}
+
+// knowsNaN reports whether float statistics of the writer are believed: created is
+// "NAME version 1.2.3 ...", or the name alone.
+func knowsNaN(created string) bool {
+	name, rest, _ := strings.Cut(created, " ")
+	since, ok := nanWriters[name]
+	if !ok || since == [2]int{} {
+		return ok
+	}
+	var major, minor int
+	if n, _ := fmt.Sscanf(rest, "version %d.%d", &major, &minor); n < 2 {
+		if n, _ = fmt.Sscanf(rest, "version v%d.%d", &major, &minor); n < 2 {
+			return false
+		}
+	}
+	return major > since[0] || major == since[0] && minor >= since[1]
 }
 
 // cells bounds the cells of a column in a row group, as numbers or in its kind.
