@@ -69,7 +69,10 @@ type node struct {
 	// base is the option of each(c, base="...").
 	base    string
 	hasBase bool
-	pos     int // offset in the expression's text
+	// level is the option of each(c, level="...") in a hypothesis.
+	level    string
+	hasLevel bool
+	pos      int // offset in the expression's text
 
 	// Set by the binder.
 	typ             valueType
@@ -268,16 +271,20 @@ func (p *parseState) call(e *ast.CallExpr, depth int) (*node, error) {
 	return n, nil
 }
 
-// option reads base="label".
+// option reads base="label" or, in a hypothesis, level="label".
 func (p *parseState) option(n *node, e ast.Expr) error {
 	pos := offset(e.Pos())
+	want := "base"
+	if p.role == roleHypothesis {
+		want = "level"
+	}
 	b, ok := e.(*ast.BinaryExpr)
 	if !ok || b.Op != token.XOR {
-		return p.errorf(pos, `found %s, want base="label"; an interaction is written each(a) * each(b)`, p.source(e))
+		return p.errorf(pos, `found %s, want %s="label"; an interaction is written each(a) * each(b)`, p.source(e), want)
 	}
 	id, ok := b.X.(*ast.Ident)
-	if !ok || id.Name != "base" {
-		return p.errorf(pos, `found the option %s, want base="label"`, p.source(b.X))
+	if !ok || id.Name != "base" && id.Name != want {
+		return p.errorf(pos, `found the option %s, want %s="label"`, p.source(b.X), want)
 	}
 	lit, ok := b.Y.(*ast.BasicLit)
 	if !ok || lit.Kind != token.STRING {
@@ -287,6 +294,10 @@ func (p *parseState) option(n *node, e ast.Expr) error {
 	if err != nil {
 		return err
 	}
-	n.base, n.hasBase = s.str, true
+	if id.Name == "level" {
+		n.level, n.hasLevel = s.str, true
+	} else {
+		n.base, n.hasBase = s.str, true
+	}
 	return nil
 }

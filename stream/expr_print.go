@@ -76,6 +76,9 @@ func (n *node) print(b *strings.Builder) {
 		if n.hasBase {
 			b.WriteString(", base=" + strconv.Quote(n.base))
 		}
+		if n.hasLevel {
+			b.WriteString(", level=" + strconv.Quote(n.level))
+		}
 		b.WriteByte(')')
 	case opNeg, opNot:
 		b.WriteString(opText[n.op])
