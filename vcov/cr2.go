@@ -32,11 +32,15 @@ import (
 // cluster: its score is zero, and it is left out of F_g. A coefficient of which
 // that direction decides a share has neither error nor p.
 //
-// Time O(G (m^3 + K m^2)) for K coefficients of rank m, memory O(K m^2).
+// The combinations of single restrictions have degrees of freedom of their own.
+//
+// Time O(G (m^3 + K m^2)) for K coefficients and combinations of rank m, memory
+// O(K m^2).
 type adjusted struct {
 	x    *solution
 	b    []float64 // P x m, M = B B' in internal columns
 	m    int
+	k    int       // coefficients, and combinations after them
 	d    []float64 // m x K, column j is L'c_j
 	size []float64 // K, c_j'M c_j
 	lone []bool    // K
@@ -64,17 +68,23 @@ const seriesBelow = 0.01
 
 func newAdjusted(x *solution) *adjusted {
 	b, m := x.whitener()
-	k := x.k()
+	k := x.k() + len(x.combos)
 	floats := func(n int) []float64 { return make([]float64, n) }
-	a := &adjusted{x: x, b: b, m: m, d: floats(m * k), size: floats(k), lone: make([]bool, k),
+	a := &adjusted{x: x, b: b, m: m, k: k, d: floats(m * k), size: floats(k), lone: make([]bool, k),
 		v2: floats(m * m), v3: floats(m * m), sumDy: floats(k), rest: floats(k),
 		h: floats(m * m), half: floats(len(b)), t: floats(m), f: floats(m), g: floats(m), y: floats(m * k), dy: floats(k),
 		u: floats(m * k), pt: floats(m), py: floats(m * k), tmp: floats(m * k), val: floats(m)}
 	half := x.e.half() // K x m
 	for j := range k {
 		a.uu = append(a.uu, floats(m*m))
-		for i := range k {
-			if c := x.wAlias[j*k+i]; c != 0 {
+		var row []float64
+		if j < x.k() {
+			row = x.wAlias[j*x.k() : (j+1)*x.k()]
+		} else {
+			row = x.combos[j-x.k()]
+		}
+		for i, c := range row {
+			if c != 0 {
 				for q := range m {
 					a.d[q*k+j] = math.FMA(c, half[i*m+q], a.d[q*k+j])
 				}
@@ -90,7 +100,7 @@ func newAdjusted(x *solution) *adjusted {
 // add takes in a cluster: az is the P x P matrix A_g over internal columns, s its
 // score over them.
 func (a *adjusted) add(az, s []float64) {
-	m, k := a.m, a.x.k()
+	m, k := a.m, a.k
 	p := len(s)
 	a.clusters++
 	// H = B'A B, t = B's.
@@ -160,7 +170,7 @@ func (a *adjusted) add(az, s []float64) {
 //
 //	(I - H)^(-1/2) = sum_i c_i H^i, c_0 = 1, c_i = c_{i-1} (2i-1)/(2i)
 func (a *adjusted) series(trace float64) {
-	m, k := a.m, a.x.k()
+	m, k := a.m, a.k
 	copy(a.f, a.t)
 	copy(a.g, a.t)
 	copy(a.u, a.y)
@@ -198,7 +208,7 @@ func (a *adjusted) times(x []float64, n int) {
 
 // spectrum applies F by the eigenvalues of H.
 func (a *adjusted) spectrum() {
-	m, k := a.m, a.x.k()
+	m, k := a.m, a.k
 	if !a.eig.Factorize(mat.NewSymDense(m, a.h), true) {
 		a.failed = true
 		return
@@ -261,17 +271,24 @@ func (a *adjusted) estimate(kind string) *estimate {
 		}
 	}
 	g := float64(a.clusters)
-	r := &estimate{v: v, factor: 1, df: g - 1, noP: a.lone, noSE: a.lone, joint: clusterJoint(int(a.clusters))}
+	r := &estimate{v: v, factor: 1, df: g - 1, noP: a.lone[:k], noSE: a.lone[:k], joint: clusterJoint(int(a.clusters))}
 	if kind == "cr2" {
 		r.dfs = make([]float64, k)
 		for j := range k {
 			r.dfs[j] = a.df(j)
 		}
+		for j := k; j < a.k; j++ {
+			df := nan
+			if !a.lone[j] {
+				df = a.df(j)
+			}
+			r.comboDFs = append(r.comboDFs, df)
+		}
 	}
 	return r
 }
 
-// df is Satterthwaite's for coefficient j, NaN where there is none.
+// df is Satterthwaite's for coefficient or combination j, NaN where there is none.
 func (a *adjusted) df(j int) float64 {
 	var norm float64
 	for q := range a.m {

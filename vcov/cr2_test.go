@@ -147,6 +147,19 @@ func TestAdjustedClustersAreBellMcCaffrey(t *testing.T) {
 		cr2, cr3, df := bellMcCaffrey(x, cols[0], group, groups)
 
 		s, sol := solveMemory(t, []string{"y", "a", "b", "c"}, cols, stream.Spec{Outcome: "y", Terms: []string{"a", "b", "c"}})
+		// a + 2 b is the coefficient of a where b is replaced by b - 2a.
+		turned := mat.NewDense(n, 4, nil)
+		for i := range n {
+			turned.SetRow(i, []float64{1, x.At(i, 1), x.At(i, 2) - 2*x.At(i, 1), x.At(i, 3)})
+		}
+		_, _, dfTurned := bellMcCaffrey(turned, cols[0], group, groups)
+		list, err := s.Design.ParseHypothesis("a + 2 * b = 1")
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := sol.resolve([][]stream.Restriction{list}); err != nil {
+			t.Fatal(err)
+		}
 		adj := newAdjusted(sol)
 		f := s.Frame
 		const p = 4
@@ -178,6 +191,9 @@ func TestAdjustedClustersAreBellMcCaffrey(t *testing.T) {
 					}
 				}
 			}
+		}
+		if d := adj.estimate("cr2").comboDFs[0]; !(math.Abs(d/dfTurned[1]-1) < 1e-10) {
+			t.Errorf("seed %d: df %v of a + 2 b, by rows %v", seed, d, dfTurned[1])
 		}
 		for j, d := range adj.estimate("cr2").dfs {
 			if !(math.Abs(d/df[j]-1) < 1e-10) {

@@ -78,6 +78,7 @@ type fitter struct {
 	groups  map[int]*clusterSums // by key
 	heavyOK bool                 // rows of high leverage were summed one by one
 	fourth  []float64
+	gross   []float64 // size of what fourth moments added up for it
 	loss    float64   // of the fourth-moment errors
 	rssLoss float64   // of the residual sum of squares
 	noise   []float64 // of the fourth-moment variances
@@ -158,7 +159,7 @@ func (f *fitter) solve(s *accum.State) error {
 		return err
 	}
 	f.state, f.sol = s, solve(b)
-	return nil
+	return f.sol.resolve(f.plan.hypotheses)
 }
 
 // second runs pass two where the plan says so, or where pass one lost digits.
@@ -176,6 +177,7 @@ func (f *fitter) second() error {
 	if f.plan.needs.Fourth {
 		f.fourth, _ = s.Fourth(x.theta, false)
 		gross, _ := s.Fourth(x.theta, true)
+		f.gross = gross
 		f.loss, f.noise = x.cancellation(f.fourth, gross)
 		if f.loss > lossLimit {
 			if f.src.Info().Rewindable && f.o.Passes != 1 {
@@ -377,7 +379,7 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	}
 	r := x.hc(k.Name, meat, blocks)
 	if f.sums == nil {
-		r.noise = f.noise
+		r.noise, r.gross = f.noise, x.projectAbs(f.gross)
 	}
 	lone := f.loneTerms()
 	r.noP = lone

@@ -15,11 +15,14 @@ type estimate struct {
 	factor float64
 	df     float64   // of t
 	dfs    []float64 // of t for each coefficient, where they differ; NaN for none
+	// comboDFs are the same for solution.combos.
+	comboDFs []float64
 	// joint gives F and its second df from the Wald statistic of q restrictions;
 	// ok is false with a reason where no test exists.
 	joint func(w float64, q int) (f, df2 float64, ok bool, reason string)
 	noP   []bool     // coefficients without t, p and interval
 	noSE  []bool     // coefficients without an error at all
+	gross []float64  // size of what was added up for meat, K x K; nil if no more than meat itself
 	noise []float64  // bound of rounding in each variance of a coefficient, without factor, units of v
 	zero  []bool     // coefficients whose error is zero but for rounding
 	lost  []bool     // those of noSE that have no digits left
@@ -38,6 +41,7 @@ func plainJoint(df float64) func(float64, int) (float64, float64, bool, string) 
 // interval b -+ t_{df,level} se.
 func (x *solution) infer(e *Errors, r *estimate, level float64, full bool) {
 	k, total := x.k(), x.count()
+	x.judged = r
 	full = full || total <= 200
 	var v, spread []float64
 	if full && x.apart == nil {

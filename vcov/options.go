@@ -12,6 +12,8 @@ type Kind struct {
 type Options struct {
 	Errors []Kind
 	Level  float64 // of intervals; 0 means 0.95
+	// Hypotheses are tested under each of Errors, see stream.Design.ParseHypothesis.
+	Hypotheses []string
 	// Passes forces one or two passes; 0 lets the planner choose.
 	Passes int
 	// Arithmetic is "double", "extended", or "auto" (also the empty string): extended

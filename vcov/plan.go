@@ -35,6 +35,8 @@ type Plan struct {
 	needs  accum.Needs
 	sample *accum.Sample // nil unless arithmetic hangs on it
 	rows   bool          // a row pass is needed
+
+	hypotheses [][]stream.Restriction
 }
 
 // PassCost is a share of the work, estimated from measured costs on one machine:
@@ -109,8 +111,12 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if err := o.validate(d); err != nil {
 		return nil, err
 	}
+	hypotheses, err := o.parseHypotheses(d)
+	if err != nil {
+		return nil, err
+	}
 	info := src.Info()
-	p := &Plan{Workers: o.Workers, Segments: info.Segments, Rows: info.Rows, Bytes: info.Bytes}
+	p := &Plan{hypotheses: hypotheses, Workers: o.Workers, Segments: info.Segments, Rows: info.Rows, Bytes: info.Bytes}
 	k, cats := 1, false
 	for _, t := range d.Terms {
 		p.Terms = append(p.Terms, t.Text)

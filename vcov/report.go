@@ -48,8 +48,17 @@ func (f *fitter) result() *Result {
 		r.Estimates = append(r.Estimates, Number(x.est[i]))
 	}
 	f.fitQuality(r)
+	tests := make([][]Hypothesis, len(x.hypotheses))
 	for _, k := range f.o.Errors {
-		r.Errors = append(r.Errors, f.errorsFor(k))
+		x.judged = nil
+		e := f.errorsFor(k)
+		for i, h := range x.hypotheses {
+			tests[i] = append(tests[i], x.test(h, &e, x.judged, f.o.Level))
+		}
+		r.Errors = append(r.Errors, e)
+	}
+	for _, t := range tests {
+		r.Hypotheses = append(r.Hypotheses, t...)
 	}
 	f.warnings(r)
 	r.Model = f.model()
@@ -172,6 +181,10 @@ func (f *fitter) model() Model {
 			name += "(" + d.Keys[k.Cluster].Text + ")"
 		}
 		m.Errors = append(m.Errors, name)
+	}
+	m.Hypotheses = []string{}
+	for _, h := range f.plan.hypotheses {
+		m.Hypotheses = append(m.Hypotheses, hypothesisText(h))
 	}
 	if sp.Stop {
 		m.Missing = "stop"

@@ -72,6 +72,7 @@ type Model struct {
 	Where      *string  `json:"where"`
 	Cluster    []string `json:"cluster"`
 	Errors     []string `json:"errors"`
+	Hypotheses []string `json:"hypotheses"`
 	Missing    string   `json:"missing"`  // "skip" or "stop"
 	BadRows    string   `json:"bad_rows"` // "skip" or "stop"
 	Level      Number   `json:"level"`
@@ -166,14 +167,23 @@ type Overall struct {
 	P   Number `json:"p"`
 }
 
-// Hypothesis is a joint test that was asked for.
+// Hypothesis is a test that was asked for, under one kind of errors: all of its
+// restrictions jointly. A single one is also estimated: all terms brought to the
+// left, all numbers to the right of the equation, Estimate is what stands on the
+// left, and t that less the number over the error.
 type Hypothesis struct {
-	Text   string `json:"text"`
-	Errors string `json:"errors"`
-	DF1    Number `json:"df1"`
-	DF2    Number `json:"df2"`
-	F      Number `json:"f"`
-	P      Number `json:"p"`
+	Text     string  `json:"text"`
+	Errors   string  `json:"errors"` // name of the kind
+	DF1      Number  `json:"df1"`    // number of independent restrictions
+	DF2      Number  `json:"df2"`
+	F        Number  `json:"f"`
+	P        Number  `json:"p"`
+	Estimate Number  `json:"estimate"` // of a single restriction, as SE, T, Low and High
+	SE       Number  `json:"se"`
+	T        Number  `json:"t"`
+	Low      Number  `json:"low"`
+	High     Number  `json:"high"`
+	Reason   *string `json:"reason"` // why there is no test
 }
 
 // Run says how the numbers came about.

@@ -26,6 +26,7 @@ const (
 // with S the internal second moments. Time O(P K^2 + K^3).
 type solution struct {
 	*basis
+	asked
 	e        *elimination
 	gamma    []float64    // solution for v
 	fine     []accum.Wide // gamma with twice the digits; nil in double arithmetic
@@ -314,6 +315,7 @@ func (x *solution) aliases() {
 					continue
 				}
 			}
+			x.depend = append(x.depend, dependence{a, mat.Col(nil, 0, &c)})
 			whole := size(v)
 			for t, p := range x.e.kept {
 				ct := c.AtVec(t)
