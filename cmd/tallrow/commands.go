@@ -104,19 +104,18 @@ func flagError(cmd *cobra.Command, err error) error {
 // after the model file.
 type flagValue struct {
 	o     *option
-	text  string
-	given bool
+	texts []string
 }
 
-func (f *flagValue) String() string { return f.text }
+func (f *flagValue) String() string { return strings.Join(f.texts, ", ") }
 func (f *flagValue) Type() string   { return f.o.value }
 
-// Set refuses a second value: one of the two would be ignored.
+// Set refuses a second value where one of the two would be ignored.
 func (f *flagValue) Set(t string) error {
-	if f.given {
-		return stream.Usef("--%s is given twice: %q and %q", f.o.name, f.text, t)
+	if len(f.texts) > 0 && f.o.form != formMany {
+		return stream.Usef("--%s is given twice: %q and %q", f.o.name, f.texts[0], t)
 	}
-	f.text, f.given = t, true
+	f.texts = append(f.texts, t)
 	return nil
 }
 
@@ -157,7 +156,7 @@ func settingsFor(cmd *cobra.Command, args []string, on int) (*settings, error) {
 	var err error
 	cmd.Flags().Visit(func(f *pflag.Flag) {
 		if fv, ok := f.Value.(*flagValue); ok && err == nil {
-			err = s.give(fv.o, value{parts: []string{fv.text}}, "--"+fv.o.name)
+			err = s.give(fv.o, value{parts: fv.texts}, "--"+fv.o.name)
 		}
 	})
 	return s, err

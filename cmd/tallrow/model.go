@@ -213,6 +213,8 @@ func wanted(o *option) string {
 	switch o.form {
 	case formList:
 		return `a string with commas or an array of strings`
+	case formMany:
+		return `a string or an array of strings, one for each test`
 	case formSwitch:
 		return "true or false"
 	case formWhole:
@@ -257,7 +259,7 @@ func (m *modelWalk) value(o *option, v *unstable.Node) (value, error) {
 		if v.Kind == unstable.Integer {
 			return integer(v, wrong)
 		}
-	case formList:
+	case formList, formMany:
 		if v.Kind == unstable.String {
 			return one()
 		}

@@ -12,6 +12,7 @@ type form uint8
 const (
 	formText   form = iota // one text
 	formList               // a list of texts
+	formMany               // a text or several, each as it is; the option may be repeated
 	formSwitch             // true or false; no value on the command line
 	formWhole              // a whole number
 	formNumber             // a number
@@ -79,6 +80,9 @@ var options = []option{
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
 		set:  func(s *settings, v value) (err error) { s.cluster, err = splitExprs(v); return err }},
+	{name: "hypothesis", value: "EQUATIONS", form: formMany, group: "Errors", on: onModel, file: true,
+		help: "test equations between coefficients under each kind of errors: \"pallets = 0.5\"; several in one, separated by commas, are tested together; may be repeated",
+		set:  func(s *settings, v value) error { s.hypotheses = v.parts; return nil }},
 	{name: "level", value: "P", form: formNumber, group: "Errors", on: onModel, file: true, def: "0.95",
 		help: "probability of the intervals, above 0 and below 1",
 		set:  setLevel},
@@ -153,7 +157,7 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions = []string{"lags", "kernel", "period", "unit", "hypothesis", "draws", "seed", "keep", "checkpoint",
+	laterOptions = []string{"lags", "kernel", "period", "unit", "draws", "seed", "keep", "checkpoint",
 		"hide-ids", "frame-from", "at", "sweep", "part"}
 	laterKinds    = []string{"cr2", "cr3", "hac", "driscoll-kraay"}
 	laterCommands = []string{"digest", "pool", "launch"}

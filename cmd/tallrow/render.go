@@ -45,6 +45,9 @@ func renderText(v *view, width int) string {
 		}
 		b.WriteByte('\n')
 	}
+	if v.writeHypotheses(&b, n) {
+		b.WriteByte('\n')
+	}
 	v.writeFooter(n)
 	if list := findings(v); len(list) > 0 {
 		b.WriteString("\nWhat the errors say\n")

@@ -15,7 +15,7 @@ func sampleResult() *vcov.Result {
 	r := &vcov.Result{
 		Format: vcov.Format, Version: version, Outcome: "minutes",
 		Model: vcov.Model{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "crew", "wet", "night", "each(barge)"},
-			Constant: true, Cluster: []string{"quay"}, Errors: []string{"classical", "hc1", "cr1(quay)"},
+			Constant: true, Cluster: []string{"quay"}, Errors: []string{"classical", "hc1", "cr1(quay)"}, Hypotheses: []string{},
 			Missing: "skip", BadRows: "skip", Level: 0.95, Zone: "UTC"},
 		Input: vcov.Input{Fingerprint: "f00d", Files: 3, Bytes: 31 << 20},
 		Rows: vcov.Rows{Read: 2_000_000, Used: 1_884_501, Missing: 110_346, Excluded: 3_000, Malformed: 2_153, ZeroWeight: 0,

@@ -25,6 +25,7 @@ type settings struct {
 	errors     []string
 	cluster    []string
 	level      float64
+	hypotheses []string
 	first      int64
 
 	format   string

@@ -63,6 +63,12 @@ func (v *view) document() *vcov.Result {
 	for _, e := range v.shown {
 		r.Errors = append(r.Errors, *e)
 	}
+	r.Hypotheses = []vcov.Hypothesis{}
+	for _, h := range v.res.Hypotheses {
+		if v.shows(h.Errors) {
+			r.Hypotheses = append(r.Hypotheses, h)
+		}
+	}
 	r.Warnings = []vcov.Warning{}
 	for _, w := range v.res.Warnings {
 		if v.tells(w) {
@@ -74,11 +80,13 @@ func (v *view) document() *vcov.Result {
 
 // tells reports whether a warning is about something that is shown.
 func (v *view) tells(w vcov.Warning) bool {
-	if w.Kind == nil {
-		return true
-	}
+	return w.Kind == nil || v.shows(*w.Kind)
+}
+
+// shows reports whether a kind of errors is among those shown.
+func (v *view) shows(name string) bool {
 	for _, e := range v.shown {
-		if sameName(e.Name(), *w.Kind) {
+		if sameName(e.Name(), name) {
 			return true
 		}
 	}
