@@ -20,6 +20,7 @@ type serialScan struct {
 	uses  []stream.Use
 	text  *textReader
 	r     io.Reader
+	ahead *aheadReader // of compressed text, else nil
 	spool *os.File
 
 	turn   chan struct{} // holds one token; who has it may touch what follows
@@ -35,6 +36,10 @@ type serialScan struct {
 func newSerialScan(ctx context.Context, src *source, uses []stream.Use, text *textReader, spool *os.File) *serialScan {
 	s := &serialScan{ctx: ctx, src: src, uses: uses, text: text, r: text, spool: spool, turn: make(chan struct{}, 1)}
 	s.at, s.line = src.head.start, src.head.line
+	if text.coding != plainText {
+		s.ahead = &aheadReader{text.readAhead(ctx), ctx}
+		s.r = s.ahead
+	}
 	if spool != nil {
 		s.r = io.TeeReader(s.r, spoolWriter{spool, src.in.Name})
 	}
@@ -44,6 +49,14 @@ func newSerialScan(ctx context.Context, src *source, uses []stream.Use, text *te
 	s.turn <- struct{}{}
 	return s
 }
+
+// aheadReader reads decoded text in the context of one caller of Next.
+type aheadReader struct {
+	pump *pump
+	ctx  context.Context
+}
+
+func (r *aheadReader) Read(b []byte) (int, error) { return r.pump.read(r.ctx, b) }
 
 // spoolWriter says of an error that it is one of the copy, not of the input.
 type spoolWriter struct {
@@ -75,7 +88,11 @@ func (s *serialScan) Next(ctx context.Context) (stream.Segment, error) {
 	if s.err != nil {
 		return nil, s.err
 	}
-	s.text.raw.ctx = ctx
+	if s.ahead != nil {
+		s.ahead.ctx = ctx
+	} else {
+		s.text.raw.ctx = ctx
+	}
 	seg, err := s.take()
 	if err != nil {
 		s.err = err
@@ -153,8 +170,9 @@ func (s *serialScan) take() (*segment, error) {
 		buf = append(buf, '\n')
 	}
 	seg.setText(buf, 0, s.at, s.line)
-	seg.tally.Bytes = s.text.raw.n - s.stored
-	s.stored = s.text.raw.n
+	stored := s.text.raw.n.Load()
+	seg.tally.Bytes = stored - s.stored
+	s.stored = stored
 	s.number++
 	s.at += int64(cut)
 	s.line += lineAt(buf, cut) - 1

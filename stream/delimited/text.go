@@ -8,6 +8,7 @@ import (
 	"fmt"
 	"io"
 	"sync"
+	"sync/atomic"
 
 	"github.com/klauspost/compress/gzip"
 	"github.com/klauspost/compress/zstd"
@@ -44,27 +45,30 @@ type textReader struct {
 	coding coding
 	raw    *rawReader
 	r      io.Reader
-	free   func()
 	read   int64
+
+	zstd  *zstd.Decoder
+	ahead *pump // of the decoded text
 }
 
 // rawReader counts stored bytes and remembers why reading failed.
 type rawReader struct {
-	r   io.Reader
-	ctx context.Context
-	n   int64
-	err error
+	r    io.Reader // of a file
+	pump *pump     // of a pipe
+	ctx  context.Context
+	n    atomic.Int64
+	err  error
 }
 
 func (r *rawReader) Read(p []byte) (n int, err error) {
 	if err = r.ctx.Err(); err == nil {
-		if pp, ok := r.r.(*pump); ok {
-			n, err = pp.read(r.ctx, p)
+		if r.pump != nil {
+			n, err = r.pump.read(r.ctx, p)
 		} else {
 			n, err = r.r.Read(p)
 		}
 	}
-	r.n += int64(n)
+	r.n.Add(int64(n))
 	if err != nil && err != io.EOF && r.err == nil {
 		r.err = err
 	}
@@ -82,11 +86,11 @@ func openText(ctx context.Context, name string, r io.Reader, c coding) (*textRea
 }
 
 func openPipe(ctx context.Context, in stream.Input) (*textReader, error) {
-	p := newPump(in.Pipe)
-	raw := &rawReader{r: p, ctx: ctx}
+	p := newPump(in.Pipe, false)
+	raw := &rawReader{pump: p, ctx: ctx}
 	br := bufio.NewReaderSize(raw, 64<<10)
 	magic, err := br.Peek(4)
-	t := &textReader{name: in.Name, raw: raw, coding: sniffCoding(magic), free: p.stop}
+	t := &textReader{name: in.Name, raw: raw, coding: sniffCoding(magic)}
 	if err != nil && err != io.EOF {
 		t.Close()
 		return nil, fmt.Errorf("%s: %w", in.Name, err)
@@ -108,20 +112,14 @@ func (t *textReader) decode(br *bufio.Reader) error {
 		}
 		t.r = z
 	case zstandard:
-		// One decoder goroutine less: other workers parse while this one decodes.
+		// One goroutine for it, which readAhead starts.
 		z, err := zstd.NewReader(br, zstd.WithDecoderConcurrency(1), zstd.WithDecoderLowmem(true))
 		if err != nil {
 			err = t.judge(err)
 			t.Close()
 			return err
 		}
-		free := t.free
-		t.free = func() {
-			z.Close()
-			if free != nil {
-				free()
-			}
-		}
+		t.zstd = z
 		t.r = z
 	default:
 		t.r = br
@@ -152,16 +150,31 @@ func (t *textReader) Read(p []byte) (int, error) {
 	return n, err
 }
 
+// readAhead goes on decoding in a goroutine of its own, so that the workers need
+// not wait for it, nor it for them. ctx ends it.
+func (t *textReader) readAhead(ctx context.Context) *pump {
+	t.raw.ctx = ctx
+	t.ahead = newPump(t, true)
+	return t.ahead
+}
+
 func (t *textReader) Close() {
-	if t.free != nil {
-		t.free()
-		t.free = nil
+	if t.raw.pump != nil {
+		t.raw.pump.stop()
+	}
+	if t.ahead != nil {
+		t.ahead.stop()
+		t.ahead.wait()
+	}
+	if t.zstd != nil {
+		t.zstd.Close()
 	}
 }
 
-// pump reads a pipe ahead in a goroutine of its own, so that a pipe that is
-// silent does not hold up a cancelled context. The goroutine ends with the pipe
-// or, when stopped, with the read under way.
+// pump reads ahead in a goroutine of its own, up to pumpChunks chunks, so that
+// the other end of a pipe can go on while the workers are busy, and a silent one
+// does not hold up a cancelled context. The goroutine ends with what it reads or,
+// when stopped, with the read under way.
 type pump struct {
 	full chan []byte
 	back chan []byte
@@ -172,17 +185,23 @@ type pump struct {
 	buf  []byte
 }
 
-func newPump(r io.Reader) *pump {
-	p := &pump{full: make(chan []byte, 2), back: make(chan []byte, 4), done: make(chan struct{})}
+const (
+	pumpChunks = 64
+	pumpChunk  = 64 << 10
+)
+
+// newPump reads r; whole says that a chunk should be full before it is passed on.
+func newPump(r io.Reader, whole bool) *pump {
+	p := &pump{full: make(chan []byte, pumpChunks), back: make(chan []byte, pumpChunks+1), done: make(chan struct{})}
 	go func() {
 		defer close(p.full)
-		for made := 0; ; {
+		for made := 0; p.err == nil; {
 			var b []byte
 			select {
 			case b = <-p.back:
 			default:
 				if made < cap(p.back) {
-					b = make([]byte, 128<<10)
+					b = make([]byte, pumpChunk)
 					made++
 					break
 				}
@@ -194,15 +213,16 @@ func newPump(r io.Reader) *pump {
 				}
 			}
 			n, err := r.Read(b)
+			for whole && err == nil && n < len(b) {
+				var m int
+				m, err = r.Read(b[n:])
+				n += m
+			}
 			select {
 			case p.full <- b[:n]:
+				p.err = err
 			case <-p.done:
 				p.err = io.ErrClosedPipe
-				return
-			}
-			if err != nil {
-				p.err = err
-				return
 			}
 		}
 	}()
@@ -223,6 +243,8 @@ func (p *pump) read(ctx context.Context, b []byte) (int, error) {
 			p.cur, p.buf = c, c
 		case <-ctx.Done():
 			return 0, ctx.Err()
+		case <-p.done:
+			return 0, io.ErrClosedPipe
 		}
 	}
 	n := copy(b, p.cur)
@@ -230,6 +252,12 @@ func (p *pump) read(ctx context.Context, b []byte) (int, error) {
 	return n, nil
 }
 
-func (p *pump) Read(b []byte) (int, error) { return p.read(context.Background(), b) }
-
+// stop ends the pump: nobody may read from it any more, and who does gets an
+// error.
 func (p *pump) stop() { p.once.Do(func() { close(p.done) }) }
+
+// wait returns when the goroutine of a stopped pump is gone.
+func (p *pump) wait() {
+	for range p.full {
+	}
+}
