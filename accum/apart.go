@@ -6,8 +6,8 @@ import (
 	"github.com/tallrow/tallrow/accum/internal/kernel"
 )
 
-// denseColumns is the default of Options.Dense.
-const denseColumns = 1000
+// DenseColumns is the default of Options.Dense.
+const DenseColumns = 1000
 
 // Apart is the group of categories with most columns, whose products are kept
 // apart: levels exclude each other, so all its products with itself are Parts x
@@ -273,13 +273,7 @@ func columns(dst, src []float64, n, m, stride int) {
 // TimesMatrix replaces each of the rows of k numbers in a by itself times the
 // symmetric k x k matrix m, on all processors. Time O(rows k^2).
 func TimesMatrix(a, m []float64, k int) {
-	if k == 0 {
-		return
-	}
-	parallel(len(a)/k, func(i int) {
-		row := a[i*k : (i+1)*k]
-		copy(row, rowTimes(row, m, k))
-	})
+	timesMatrix(a, k, k, m, func(i int, row []float64) { copy(a[i*k:], row) })
 }
 
 // QuadraticForms returns x'M x for each of the rows x of k numbers in a, M
@@ -289,19 +283,25 @@ func QuadraticForms(a, m []float64, k int) []float64 {
 		return nil
 	}
 	out := make([]float64, len(a)/k)
-	parallel(len(out), func(i int) {
-		row := a[i*k : (i+1)*k]
-		out[i] = dotp(rowTimes(row, m, k), row)
-	})
+	timesMatrix(a, k, k, m, func(i int, row []float64) { out[i] = dotp(row, a[i*k:(i+1)*k]) })
 	return out
 }
 
-func rowTimes(row, m []float64, k int) []float64 {
-	out := make([]float64, k)
-	for i, x := range row {
-		if x != 0 {
-			kernel.Axpy(x, m[i*k:(i+1)*k], out)
-		}
+// timesMatrix calls f, for each row of a (lda apart, k numbers), with the row times
+// the symmetric k x k matrix m. Calls come from several goroutines.
+func timesMatrix(a []float64, lda, k int, m []float64, f func(i int, row []float64)) {
+	if k == 0 {
+		return
 	}
-	return out
+	const chunk = 32
+	rows := (len(a) + lda - k) / lda
+	parallel((rows+chunk-1)/chunk, func(c int) {
+		at := c * chunk
+		n := min(chunk, rows-at)
+		out := make([]float64, n*k)
+		kernel.Cross(out, k, a[at*lda:], lda, n, m, k, k, k)
+		for i := range n {
+			f(at+i, out[i*k:(i+1)*k])
+		}
+	})
 }

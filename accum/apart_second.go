@@ -58,16 +58,11 @@ type apartLever struct {
 func newApartLever(e *Eliminated, quad []float64) *apartLever {
 	p, q := e.n-1, e.Parts
 	a := &apartLever{parts: q, p: p, own: append([]float64(nil), e.Inv...), cross: make([]float64, len(e.Kept)*p)}
-	parallel(len(e.Kept), func(i int) {
-		g, to := e.G[i*e.n:i*e.n+p], a.cross[i*p:(i+1)*p]
-		for c, x := range g {
-			if x != 0 {
-				kernel.Axpy(x, quad[c*p:(c+1)*p], to)
-			}
-		}
+	timesMatrix(e.G, e.n, p, quad, func(i int, row []float64) {
+		copy(a.cross[i*p:], row)
 		j := i / q
 		for k := range q {
-			a.own[i*q+k] += dotp(to, e.G[(j*q+k)*e.n:(j*q+k)*e.n+p])
+			a.own[i*q+k] += dotp(row, e.G[(j*q+k)*e.n:(j*q+k)*e.n+p])
 		}
 	})
 	return a
@@ -83,20 +78,17 @@ func (a *apartLever) memory() int64 {
 // parallel calls f(i) for i < n on all processors. Calls must not depend on each
 // other.
 func parallel(n int, f func(i int)) {
-	const chunk = 64
 	var wg sync.WaitGroup
 	next := make(chan int)
-	for range min(runtime.GOMAXPROCS(0), (n+chunk-1)/chunk) {
+	for range min(runtime.GOMAXPROCS(0), n) {
 		wg.Go(func() {
-			for at := range next {
-				for i := at; i < min(n, at+chunk); i++ {
-					f(i)
-				}
+			for i := range next {
+				f(i)
 			}
 		})
 	}
-	for at := 0; at < n; at += chunk {
-		next <- at
+	for i := range n {
+		next <- i
 	}
 	close(next)
 	wg.Wait()

@@ -231,7 +231,7 @@ func solveBytes(l *layout, combos []int, group, rest int) int64 {
 
 const (
 	solveMatrices = 6 // dense matrices of the solve
-	apartMatrices = 5 // products of the eliminated group with the rest
+	apartMatrices = 4 // products of the eliminated group with the rest, and their like
 )
 
 // same maps the first n numbers to themselves.

@@ -358,7 +358,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
 	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
-		dense: cmp.Or(o.Dense, denseColumns), workers: max(1, o.Workers), num: newNumbering(l),
+		dense: cmp.Or(o.Dense, DenseColumns), workers: max(1, o.Workers), num: newNumbering(l),
 		pool: newGroupPool(&o), keep: !src.Info().Rewindable}
 	defer func() {
 		if s == nil || s.pool != b.pool {

@@ -26,7 +26,7 @@ type Options struct {
 	Clusters int64
 	// Dense is the number of internal columns up to which the state is one dense
 	// matrix; beyond it the group of categories with most columns is kept apart
-	// (see State.Apart). 0 means 1000. Like Clusters it shows in the last bits.
+	// (see State.Apart). 0 means DenseColumns. Like Clusters it shows in the last bits.
 	Dense int
 	// Scratch is the folder for sums of clusters that do not fit Memory; "" is the
 	// system's folder for temporary files.

@@ -455,7 +455,12 @@ func (w *secondWorker) fold() error {
 	for _, a := range w.apart {
 		held += a.flush()
 	}
-	if held += w.all.lever.memory(); held > w.all.mem {
+	if a := w.state.Apart; a != nil {
+		// Each meat has products like the state's, and one of them is turned twice.
+		each := int64(8 * len(a.B))
+		held += w.all.lever.memory() + (apartMatrices+int64(len(w.pass.Weights)+2))*each
+	}
+	if held > w.all.mem {
 		return &MemoryError{What: "the second pass over " + w.state.levelCounts(), Need: held, Have: w.all.mem}
 	}
 	w.watch.lap(StageRows)

@@ -209,7 +209,11 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, 
 	if err := s.assemble(); err != nil {
 		return nil, 0, err
 	}
-	return s, s.refit(b.unit), nil
+	refit = s.refit(b.unit)
+	for _, e := range epochs {
+		e.tables, e.pairs = nil, nil
+	}
+	return s, refit, nil
 }
 
 func (s *State) fingerprint() {

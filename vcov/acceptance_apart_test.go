@@ -1,11 +1,17 @@
 package vcov_test
 
 import (
+	"errors"
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"os"
+	"strconv"
+	"strings"
 	"testing"
+	"time"
 
+	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/vcov"
 )
@@ -218,5 +224,117 @@ func TestEliminationOrderOfAliases(t *testing.T) {
 				t.Errorf("fit %v, want %v", fitted(got), fitted(want))
 			}
 		})
+	}
+}
+
+// cranes is a source with three categories of the given sizes and six numeric
+// terms; every combination of seed and size is the same data.
+func cranes(rows, barges, quays, cranes int) *table {
+	rng := rand.New(rand.NewPCG(7, 8))
+	tb := &table{}
+	y := make([]float64, rows)
+	x := make([][]float64, 6)
+	ids := make([][]int64, 3)
+	for i := range rows {
+		ids[0], ids[1], ids[2] = append(ids[0], int64(rng.IntN(barges))), append(ids[1], int64(rng.IntN(quays))), append(ids[2], int64(rng.IntN(cranes)))
+		y[i] = 10 + float64(ids[0][i]%5) + 0.3*float64(ids[1][i]%11) + 0.2*float64(ids[2][i]%17)
+		for j := range x {
+			v := rng.NormFloat64() + float64(ids[2][i]%7)*0.1
+			x[j] = append(x[j], v)
+			y[i] += float64(j+1) * v
+		}
+		y[i] += rng.NormFloat64() * (1 + 0.3*x[0][i]*x[0][i])
+	}
+	tb.float("minutes", y)
+	for j := range x {
+		tb.float(fmt.Sprintf("x%d", j+1), x[j])
+	}
+	for j, n := range []string{"barge", "quay", "crane"} {
+		tb.int(n, ids[j])
+	}
+	return tb
+}
+
+func cranesModel() stream.Spec {
+	return stream.Spec{Outcome: "minutes", Keys: []string{"quay"},
+		Terms: []string{"x1", "x2", "x3", "x4", "x5", "x6", "each(barge)", "each(quay)", "each(crane)"}}
+}
+
+// A small form of three categories of 50, 500 and 20,000 levels, of which the last
+// is eliminated, against one dense solve.
+func TestThreeCategories(t *testing.T) {
+	tb := cranes(6000, 10, 20, 330)
+	o := vcov.Options{Errors: kinds("classical", "hc1", "hc3", "cr1"), Workers: 2, Dense: 1 << 20}
+	want := fit(t, tb.source(2000), cranesModel(), o)
+	o.Dense = 100
+	got := fit(t, tb.source(2000), cranesModel(), o)
+	compareFits(t, got, want, 1e-10)
+}
+
+// What does not fit is refused with what takes the memory.
+func TestTooManyLevels(t *testing.T) {
+	tb := cranes(3000, 10, 20, 330)
+	o := vcov.Options{Errors: kinds("classical"), Workers: 2, Memory: 320 << 10, Dense: 100}
+	_, err := tryFit(tb.source(1000), cranesModel(), o)
+	var m *accum.MemoryError
+	if !errors.As(err, &m) || m.Need <= m.Have || m.Have != 320<<10 {
+		t.Fatalf("error %v, want a *MemoryError", err)
+	}
+	for _, want := range []string{"each(crane) has 3", "each(quay) 20", "each(barge) 10", "37 columns", "may take 320 KiB"} {
+		if !strings.Contains(err.Error(), want) {
+			t.Errorf("error %q does not say %q", err, want)
+		}
+	}
+	spec := cranesModel()
+	spec.Terms = []string{"x1", "each(crane) * x2"} // no term by itself
+	if _, err = tryFit(tb.source(1000), spec, o); !errors.As(err, &m) || !strings.Contains(err.Error(), "no category is a term by itself") {
+		t.Errorf("error %v, want a *MemoryError that says why nothing is eliminated", err)
+	}
+}
+
+// Many terms of one fate are told of in one warning.
+func TestManyLoneLevels(t *testing.T) {
+	tb := harbour(1500, 90, 7, 4, 5)
+	o := vcov.Options{Errors: kinds("cr1"), Workers: 2, Dense: 50}
+	r := fit(t, tb.source(400), stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "each(berth)"}, Keys: []string{"ward"}}, o)
+	n := 0
+	for _, w := range r.Warnings {
+		if w.Code == "lone" {
+			n++
+			if w.Term != nil || !strings.Contains(w.Text, "constant, berth = 1, berth = 2") || !strings.Contains(w.Text, "84 more") {
+				t.Errorf("warning %q", w.Text)
+			}
+		}
+	}
+	if n != 1 {
+		t.Errorf("%d warnings", n)
+	}
+}
+
+// The model in full, within half a gibibyte above the data; TALLROW_LEVELS=ROWS.
+func TestThreeLargeCategories(t *testing.T) {
+	rows, err := strconv.Atoi(os.Getenv("TALLROW_LEVELS"))
+	if err != nil {
+		t.Skip("set TALLROW_LEVELS to a number of rows, 1000000 or more")
+	}
+	tb := cranes(rows, 50, 500, 20000)
+	o := vcov.Options{Errors: kinds("classical", "hc1", "hc2", "hc3", "cr1"), Workers: 2, Memory: 2 << 30}
+	start := time.Now()
+	r := fit(t, tb.source(1<<16), cranesModel(), o)
+	t.Logf("%d rows, %d terms: %v", rows, len(r.Terms), time.Since(start))
+	if r.Rank != 1+6+49+499+19999 {
+		t.Fatalf("rank %d", r.Rank)
+	}
+	for _, e := range r.Errors {
+		if e.Status != "ok" {
+			t.Fatalf("%s is %s", e.Name(), e.Status)
+		}
+	}
+	for j := range 6 {
+		i := index(t, r, fmt.Sprintf("x%d", j+1))
+		se := float64(errorsOf(t, r, "hc1").SE[i])
+		if d := math.Abs(float64(r.Estimates[i]) - float64(j+1)); d > 5*se {
+			t.Errorf("x%d %v, off by %.1f errors", j+1, r.Estimates[i], d/se)
+		}
 	}
 }

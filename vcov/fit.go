@@ -530,4 +530,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	}
 	x.infer(e, r, f.o.Level, f.o.Covariance)
 	f.tellLost(e, r)
+	if x.apart != nil && x.rank() < c.groups {
+		f.note("no-joint-test", "%s has no joint test of all terms: clusters join the levels of %s, which was eliminated", e.Name(), x.apart.text())
+	}
 }

@@ -1,6 +1,7 @@
 package vcov
 
 import (
+	"cmp"
 	"context"
 	"fmt"
 	"runtime"
@@ -31,6 +32,9 @@ type Plan struct {
 	// ClusterMemory is what the sums of clusters may take in memory; beyond it they
 	// go to scratch in sorted runs.
 	ClusterMemory int64 `json:"cluster_memory"`
+	// PerPair is bytes for each pair of levels of two categories, all workers
+	// together.
+	PerPair int64 `json:"per_pair"`
 
 	needs  accum.Needs
 	sample *accum.Sample // nil unless arithmetic hangs on it
@@ -80,6 +84,9 @@ func (o Options) withDefaults() Options {
 	return o
 }
 
+// dense is Dense or its default.
+func (o *Options) dense() int { return cmp.Or(o.Dense, accum.DenseColumns) }
+
 func (o *Options) validate(d *stream.Design) error {
 	if !(o.Level > 0 && o.Level < 1) {
 		return stream.Usef("level: found %v, want a number between 0 and 1, such as 0.95", o.Level)
@@ -117,11 +124,12 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	}
 	info := src.Info()
 	p := &Plan{hypotheses: hypotheses, Workers: o.Workers, Segments: info.Segments, Rows: info.Rows, Bytes: info.Bytes}
-	k, cats := 1, false
+	k, groups, cats := 1, 0, false
 	for _, t := range d.Terms {
 		p.Terms = append(p.Terms, t.Text)
 		if len(t.Categories) > 0 {
 			cats = true
+			groups++
 		} else {
 			k++
 		}
@@ -221,7 +229,19 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		route = append(route, "second moments")
 	}
 	if cats {
-		p.PerLevel = int64(c) * 40
+		meats := 0
+		if rows {
+			meats = rowMeats(o.Errors)
+		}
+		p.PerLevel = int64(1+meats) * (16*int64(c+1) + 12)
+		if groups > 1 {
+			p.PerPair = 8
+			if d.Spec.Weight != "" {
+				p.PerPair = 16
+			}
+			p.PerPair = max(p.PerPair, 16*int64(meats))
+		}
+		p.why("beyond %d levels and terms in all, the category with most levels is eliminated before the solve; the others make dense matrices", o.dense())
 	}
 	p.Route = strings.Join(route, ", ")
 	sums := int64(o.Workers) * (560*int64(c*(c+1)/2) + 2*8*stream.BatchRows*int64(c))
@@ -281,6 +301,20 @@ func whyExtended(f *accum.Frame) string {
 		return fmt.Sprintf("terms are nearly collinear: double arithmetic would keep about %d digits of the estimates", int(f.Digits))
 	}
 	return "the input is small, and extended arithmetic saves last digits at no cost"
+}
+
+// rowMeats counts the meats that a row pass sums for kinds: hc0 and hc1 share one.
+func rowMeats(kinds []Kind) int {
+	seen := map[string]bool{}
+	for _, k := range kinds {
+		switch {
+		case k.Name == "hc1":
+			seen["hc0"] = true
+		case strings.HasPrefix(k.Name, "hc"):
+			seen[k.Name] = true
+		}
+	}
+	return len(seen)
 }
 
 func (p *Plan) why(format string, args ...any) {

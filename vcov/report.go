@@ -133,6 +133,7 @@ func (f *fitter) warnings(r *Result) {
 		if e.Status != "ok" || x.perfect {
 			continue
 		}
+		var lone []Warning
 		for j, t := range r.Terms {
 			if !r.Estimates[j].Exists() || e.T[j].Exists() || f.told[e.Name()+"\x00"+t] {
 				continue
@@ -150,11 +151,32 @@ func (f *fitter) warnings(r *Result) {
 			if len(e.Clusters) > 0 {
 				what = "a single cluster"
 			}
-			r.Warnings = append(r.Warnings, Warning{Code: "lone", Term: ptr(t), Kind: ptr(e.Name()),
+			lone = append(lone, Warning{Code: "lone", Term: ptr(t), Kind: ptr(e.Name()),
 				Text: fmt.Sprintf("%s is determined by %s; %s gives it no p and no interval", t, what, e.Name())})
 		}
+		if len(lone) > maxAlike {
+			what := "row"
+			if len(e.Clusters) > 0 {
+				what = "cluster"
+			}
+			lone = []Warning{{Code: "lone", Kind: ptr(e.Name()), Text: fmt.Sprintf("%s are each determined by a single %s; %s gives them no p and no interval",
+				list(termsOf(lone), 6), what, e.Name())}}
+		}
+		r.Warnings = append(r.Warnings, lone...)
 	}
 	r.Warnings = append(r.Warnings, f.warn...)
+}
+
+// maxAlike is how many warnings of one code, a term each, stand by themselves.
+const maxAlike = 20
+
+// termsOf lists the terms of warnings that have one.
+func termsOf(ws []Warning) []string {
+	var names []string
+	for _, w := range ws {
+		names = append(names, *w.Term)
+	}
+	return names
 }
 
 // model echoes what was asked.

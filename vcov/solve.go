@@ -460,7 +460,17 @@ func (x *solution) needsFrame() bool {
 
 func (x *solution) warnings() []Warning {
 	ws := append([]Warning(nil), x.notes...)
+	if len(x.alias) > maxAlike {
+		var names []string
+		for _, a := range x.alias {
+			names = append(names, a.Term)
+		}
+		ws = append(ws, Warning{Code: "aliased", Text: fmt.Sprintf("%s are linear combinations of others or zero in every used row; they have no estimate", list(names, 6))})
+	}
 	for _, a := range x.alias {
+		if len(x.alias) > maxAlike {
+			break
+		}
 		text := fmt.Sprintf("%s is zero in every used row; it has no estimate", a.Term)
 		if len(a.DependsOn) > 0 {
 			text = fmt.Sprintf("%s is a linear combination of %s; it has no estimate", a.Term, list(a.DependsOn, 6))

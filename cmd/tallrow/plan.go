@@ -82,7 +82,10 @@ func renderPlan(pf *planFile, width int) string {
 		memory += fmt.Sprintf("; %s more for each cluster, and beyond %s sorted runs on scratch", sizeText(pf.PerCluster), sizeText(pf.Clusters))
 	}
 	if pf.PerLevel > 0 {
-		memory += fmt.Sprintf("; %s more for each level of a category", sizeText(pf.PerLevel))
+		memory += fmt.Sprintf("; %s more for each level of a category and worker", sizeText(pf.PerLevel))
+	}
+	if pf.PerPair > 0 {
+		memory += fmt.Sprintf(", %s for each pair of levels of two categories", sizeText(pf.PerPair))
 	}
 	n.add("memory", memory)
 	var costs []string

@@ -81,6 +81,7 @@ func (v *view) termCount() string {
 // names cut shorter if need be, else in two or more tables. It returns lines
 // that give cut names in full.
 func (v *view) writeTerms(b *strings.Builder, width int) []string {
+	v, cut := v.brief()
 	est := v.estimateColumns()
 	errs := v.errorColumns()
 	ends := v.intervalColumns()
@@ -94,7 +95,7 @@ func (v *view) writeTerms(b *strings.Builder, width int) []string {
 	fits := func(cols []column) bool { return tableWidth(cols) <= width }
 	rest := join(append([][]column{est}, append(errs[:len(errs):len(errs)], ends)...)...)
 	for size := termWidth; size >= shortTerm; size -= 4 {
-		n := v.termNames(size)
+		n := v.termNames(size, cut)
 		if cols := join(n.column(), rest); fits(cols) {
 			writeTable(b, cols, n.between)
 			return n.cut
@@ -102,9 +103,9 @@ func (v *view) writeTerms(b *strings.Builder, width int) []string {
 	}
 	// Too many kinds of errors for one line: as many beside each other as fit,
 	// the rest and the intervals in tables below.
-	n := v.termNames(termWidth)
+	n := v.termNames(termWidth, cut)
 	for size := termWidth - 4; size >= shortTerm && !fits(join(n.column(), est, ends)); size -= 4 {
-		n = v.termNames(size)
+		n = v.termNames(size, cut)
 	}
 	groups := errs
 	if len(ends) > 0 {
@@ -137,8 +138,8 @@ func (n termNames) column() []column {
 }
 
 // termNames cuts names to size. Runs of levels of one category stand indented
-// under a line of their own.
-func (v *view) termNames(size int) termNames {
+// under a line of their own, which says in cut what was left out.
+func (v *view) termNames(size int, cut map[int]string) termNames {
 	n := termNames{between: map[int]string{}}
 	terms := v.res.Terms
 	for j := 0; j < len(terms); {
@@ -157,6 +158,11 @@ func (v *view) termNames(size int) termNames {
 			continue
 		}
 		n.between[j] = shorten(first.group, 60) + v.against(first.categories)
+		if cut[j] != "" {
+			for _, l := range wrap(cut[j], narrowest-2) {
+				n.between[j] += "\n  " + l
+			}
+		}
 		for ; j < end; j++ {
 			n.names = append(n.names, "  "+shorten(splitLevel(terms[j]).level, size-2))
 		}
@@ -318,7 +324,11 @@ func (v *view) writeFooter(n notes) {
 			n.add("not given", fmt.Sprintf("%s: %s", e.Name(), oneLine(why)))
 		}
 	}
-	for _, a := range r.Aliased {
+	for i, a := range r.Aliased {
+		if i == maxWarnings {
+			n.add("", fmt.Sprintf("and %s more; --json has them all", count(int64(len(r.Aliased)-i))))
+			break
+		}
 		if len(a.DependsOn) == 0 {
 			n.add("aliased", oneLine(a.Term)+" is zero in every row: it has no estimate")
 		} else {
