@@ -44,7 +44,7 @@ func compare(b *testing.B, name string, rows, n int, bytes int64, f, other func(
 		})
 	}
 	if useAVX2 {
-		run("avx2", func(b *testing.B) {
+		run("asm", func(b *testing.B) {
 			for b.Loop() {
 				f()
 			}
@@ -71,10 +71,11 @@ func repeated(f func()) func(times int) float64 {
 	}
 }
 
-// takeTurns runs functions by turns, a millisecond each, and returns the median
-// of their times for one: what slows the machine down for a while slows all.
+// takeTurns runs functions by turns, a third of a millisecond each, and returns
+// the lower quartile of their times for one: what slows the machine down for a
+// while slows all, and other processes can only add.
 func takeTurns(run ...func(times int) float64) []float64 {
-	const rounds, burst = 41, 1e6
+	const rounds, burst = 101, 3e5
 	times := make([]int, len(run))
 	for i, f := range run {
 		f(3)
@@ -86,12 +87,12 @@ func takeTurns(run ...func(times int) float64) []float64 {
 			t[i] = append(t[i], f(times[i])/float64(times[i]))
 		}
 	}
-	median := make([]float64, len(run))
+	quartile := make([]float64, len(run))
 	for i := range t {
 		slices.Sort(t[i])
-		median[i] = t[i][rounds/2]
+		quartile[i] = t[i][rounds/4]
 	}
-	return median
+	return quartile
 }
 
 // versus reports how many times as long as f other takes.
@@ -182,7 +183,7 @@ func BenchmarkElementwise(b *testing.B) {
 			f    func()
 		}{{"scale", scale}, {"axpy", axpy}} {
 			if useAVX2 {
-				one(f.name+"/impl=avx2", f.f)
+				one(f.name+"/impl=asm", f.f)
 			}
 			restore := DisableAVX2()
 			one(f.name+"/impl=go", f.f)

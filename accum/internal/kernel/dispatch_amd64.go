@@ -8,7 +8,7 @@ import (
 	"golang.org/x/sys/cpu"
 )
 
-//go:generate sh -c "cd _gen && go run main.go -out ../avx2_amd64.s -stubs ../avx2_amd64.go -pkg kernel"
+//go:generate sh -c "cd _gen && go run main.go -out ../asm_amd64.s -stubs ../asm_amd64.go -pkg kernel"
 
 // useAVX2 tells whether the processor and the operating system allow the
 // assembly. Only speed depends on it, no bit of a result.
@@ -18,23 +18,32 @@ var useAVX2 = cpu.X86.HasAVX2 && cpu.X86.HasFMA
 // that a test can compare the two in one process. Neither call may run at the
 // same time as a kernel.
 func DisableAVX2() (restore func()) {
-	old := useAVX2
+	old, restore512 := useAVX2, DisableAVX512()
 	useAVX2 = false
-	return func() { useAVX2 = old }
+	return func() {
+		useAVX2 = old
+		restore512()
+	}
 }
 
 func gram(dst []float64, x []float64, stride, rows, cols int) {
-	if useAVX2 {
+	switch {
+	case useAVX512:
+		gram512(dst, x, stride, rows, cols)
+	case useAVX2:
 		gramAVX2(dst, x, stride, rows, cols)
-	} else {
+	default:
 		gramTiles(dst, x, stride, rows, cols, tileWidth)
 	}
 }
 
 func cross(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
-	if useAVX2 {
+	switch {
+	case useAVX512:
+		cross512(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows)
+	case useAVX2:
 		crossAVX2(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows)
-	} else {
+	default:
 		crossTiles(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows, tileWidth)
 	}
 }

@@ -8,6 +8,9 @@ const useAVX2 = false
 // DisableAVX2 does nothing in this build, which has no assembly.
 func DisableAVX2() (restore func()) { return func() {} }
 
+// DisableAVX512 does nothing either.
+func DisableAVX512() (restore func()) { return func() {} }
+
 func gram(dst []float64, x []float64, stride, rows, cols int) {
 	gramTiles(dst, x, stride, rows, cols, tileWidth)
 }

@@ -49,10 +49,12 @@
 //
 // # Implementations
 //
-// The contract is written down literally in ref.go. Plain-Go tiles follow it on
-// every processor; on amd64 with AVX2 and FMA assembly takes their place, where
-// the four lanes are those of one register. The generator in _gen writes the
-// assembly; the build tag noasm leaves it out.
+// The contract is written down literally in ref.go. Plain Go follows it on every
+// processor, Gram and Cross in tiles. On amd64 assembly takes its place: with AVX2
+// and FMA, where the four lanes are those of one register, and for the tiles of
+// Gram and Cross with AVX-512, where a register holds the lanes of two dot
+// products. The generator in _gen writes the assembly; the build tag noasm leaves
+// it out.
 //
 // Columns whose stride is a multiple of 4096 bytes compete for the same sets of
 // the first-level cache: a stride a few elements longer is a tenth faster.

@@ -43,6 +43,10 @@ var grams = []struct {
 	f    gramFunc
 }{
 	{"Gram", Gram},
+	{"Gram in AVX2", func(d, x []float64, s, r, c int) {
+		defer DisableAVX512()()
+		Gram(d, x, s, r, c)
+	}},
 	{"Gram in Go", func(d, x []float64, s, r, c int) {
 		defer DisableAVX2()()
 		Gram(d, x, s, r, c)
@@ -56,6 +60,10 @@ var crosses = []struct {
 	f    crossFunc
 }{
 	{"Cross", Cross},
+	{"Cross in AVX2", func(d []float64, ldd int, a []float64, sa, ca int, b []float64, sb, cb, r int) {
+		defer DisableAVX512()()
+		Cross(d, ldd, a, sa, ca, b, sb, cb, r)
+	}},
 	{"Cross in Go", func(d []float64, ldd int, a []float64, sa, ca int, b []float64, sb, cb, r int) {
 		defer DisableAVX2()()
 		Cross(d, ldd, a, sa, ca, b, sb, cb, r)
