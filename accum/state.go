@@ -27,9 +27,9 @@ type State struct {
 	Groups []Group
 	Levels [][]Key
 	// Extended says that terms and second moments were made with twice the digits;
-	// Dense then has the second moments of (1, u, v), u the numeric terms, row by row.
+	// Wide then has the second moments of (1, u, v), u the numeric terms, row by row.
 	Extended bool
-	Dense    []Wide
+	Wide     []Wide
 	// S is the (P+1) x (P+1) matrix of second moments of the internal columns and
 	// v, row by row, P = len(Columns). Weighted.
 	S []float64

@@ -103,11 +103,11 @@ func (s *State) mapFrom(f *Frame) []float64 {
 	return out
 }
 
-// assembleWide fills Dense, and the dense part of S with its rounded values.
+// assembleWide fills Wide, and the dense part of S with its rounded values.
 func (s *State) assembleWide() {
 	l := s.lay
 	d := l.p0 + 2
-	s.Dense = make([]Wide, d*d)
+	s.Wide = make([]Wide, d*d)
 	for _, e := range s.epochs {
 		m := make([]Wide, d*d)
 		for j := range d {
@@ -120,13 +120,13 @@ func (s *State) assembleWide() {
 			m = congruenceWide(denseMapWide(l, e.frame, s.Frame), l.width, m, d)
 		}
 		for i, x := range m {
-			s.Dense[i] = s.Dense[i].Add(x)
+			s.Wide[i] = s.Wide[i].Add(x)
 		}
 	}
 	at, n := s.denseAt(), len(s.Columns)+1
 	for i := range d {
 		for j := range d {
-			s.S[at[i]*n+at[j]] = s.Dense[i*d+j].Float()
+			s.S[at[i]*n+at[j]] = s.Wide[i*d+j].Float()
 		}
 	}
 }

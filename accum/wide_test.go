@@ -165,14 +165,14 @@ func TestExtendedSums(t *testing.T) {
 				}
 			}
 			for i := range want {
-				off, _ := num().Sub(bigWide(s.Dense[i]), want[i]).Float64()
+				off, _ := num().Sub(bigWide(s.Wide[i]), want[i]).Float64()
 				if !(math.Abs(off) <= 1e-22*size[i]) {
 					t.Errorf("weights %d, seek %v: sum %d of products is off by %.1e of %.3g", kind, seek, i, off, size[i])
 				}
 			}
 			// S has the same, rounded.
-			if s.S[n*1+2] != s.Dense[n*1+2].Hi || s.S[n*n-1] != s.Dense[n*n-1].Hi {
-				t.Error("S differs from Dense")
+			if s.S[n*1+2] != s.Wide[n*1+2].Hi || s.S[n*n-1] != s.Wide[n*n-1].Hi {
+				t.Error("S differs from Wide")
 			}
 		}
 	}
@@ -206,7 +206,7 @@ func TestAutoChooses(t *testing.T) {
 			if err != nil {
 				t.Fatal(err)
 			}
-			if s.Extended != c.want || (s.Dense != nil) != c.want {
+			if s.Extended != c.want || (s.Wide != nil) != c.want {
 				t.Errorf("%v, seek %v: extended %v at %.1f digits, condition %.2g", c.terms, seek, s.Extended, s.Frame.Digits, s.Frame.Cond)
 			}
 		}

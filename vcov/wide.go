@@ -31,7 +31,7 @@ func (b *basis) moments() (g, c []accum.Wide, svv accum.Wide) {
 			dj = dense - 1
 		}
 		if (i < dense-1 || i == p) && (j < dense-1 || j == p) {
-			return s.Dense[di*dense+dj]
+			return s.Wide[di*dense+dj]
 		}
 		return accum.Widen(s.S[i*n+j])
 	}
