@@ -12,6 +12,7 @@ type Spec struct {
 	Where      string         // boolean expression, "" for none
 	Stop       bool           // --missing stop: the first row with a missing cell is an error
 	Keys       []string       // cluster expressions, each one clustering
+	Crossed    [][]int        // clusterings by several of Keys at once: ascending indexes
 	Zone       *time.Location // for hour, weekday, month, date of instants; nil is UTC
 }
 
@@ -40,6 +41,9 @@ type Design struct {
 	Categories []Category
 	// Keys are the clusterings, as in Block.Key.
 	Keys []KeyColumn
+	// Parts has, for each of Keys, the keys that it crosses; nil for an expression.
+	// Crossed keys follow the others. Their values are for KeyLabel.
+	Parts [][]int
 
 	prog *program
 }

@@ -34,6 +34,7 @@ type Evaluator struct {
 	outW           []float64
 	outMarks       []int64
 	outCat, outKey []Vector
+	crossed        []crossing
 	lost           []int64 // by prog.lost, this batch
 	lostRow        []int   // last row counted under the name, plus one
 	valueless      []int64 // by prog.noValue, this batch
@@ -65,6 +66,9 @@ func (d *Design) NewEvaluator() *Evaluator {
 		clean: make([]bool, len(p.uses)),
 		outX:  make([][]float64, len(p.dense)), outCat: make([]Vector, len(p.cats)), outKey: make([]Vector, len(p.keys)),
 		lost: make([]int64, len(p.lost)), lostRow: make([]int, len(p.lost)), valueless: make([]int64, len(p.noValue)),
+	}
+	for _, parts := range d.Parts[len(p.keys):] {
+		e.crossed = append(e.crossed, crossing{parts: parts})
 	}
 	e.grow(BatchRows)
 	return e

@@ -36,7 +36,8 @@ func (e *Evaluator) prepare(out *Block) {
 		out.XLow = slices.Grow(out.XLow, len(p.dense))[:len(p.dense)]
 	}
 	out.Cat = slices.Grow(out.Cat[:0], len(p.cats))[:len(p.cats)]
-	out.Key = slices.Grow(out.Key[:0], len(p.keys))[:len(p.keys)]
+	n := len(p.keys) + len(e.crossed)
+	out.Key = slices.Grow(out.Key[:0], n)[:n]
 }
 
 // empty makes a block without rows.
@@ -50,6 +51,9 @@ func (e *Evaluator) empty(out *Block) {
 	}
 	for i := range p.keys {
 		out.Key[i] = Vector{Kind: p.keys[i].kind}
+	}
+	for i := range e.crossed {
+		out.Key[len(p.keys)+i] = Vector{Kind: Text}
 	}
 }
 
@@ -74,6 +78,7 @@ func (e *Evaluator) pass(b *Batch, out *Block) {
 	for j := range p.keys {
 		e.passKey(&p.keys[j], b, &e.outKey[j], &out.Key[j])
 	}
+	e.cross(out)
 }
 
 func (e *Evaluator) passKey(k *keyOutput, b *Batch, own, out *Vector) {
@@ -124,6 +129,14 @@ func (e *Evaluator) compact(b *Batch, out *Block) {
 	}
 	for j := range p.keys {
 		e.compactKey(&p.keys[j], b, &e.outKey[j], &out.Key[j])
+	}
+	e.cross(out)
+}
+
+// cross fills the crossed keys.
+func (e *Evaluator) cross(out *Block) {
+	for i := range e.crossed {
+		e.crossed[i].cross(out.Key, out.Rows, &out.Key[len(e.prog.keys)+i])
 	}
 }
 

@@ -253,6 +253,9 @@ func (c *compiler) design() error {
 		col, out := c.key(n)
 		d.Keys, p.keys = append(d.Keys, col), append(p.keys, out)
 	}
+	if err := c.crossedKeys(); err != nil {
+		return err
+	}
 	c.names()
 	return nil
 }
@@ -483,7 +486,7 @@ func (c *compiler) names() {
 	if p.weight >= 0 {
 		p.weightLost = []int{index(p.weightText)}
 	}
-	for _, k := range d.Keys {
-		p.keyLost = append(p.keyLost, []int{index(k.Text)})
+	for i := range p.keys {
+		p.keyLost = append(p.keyLost, []int{index(d.Keys[i].Text)})
 	}
 }
