@@ -379,7 +379,7 @@ func TestOnePassIsTwoPass(t *testing.T) {
 						}
 					}
 				}
-				sc, err := s.Scores(0, theta)
+				sc, err := s.Scores(0, theta, false)
 				if err != nil {
 					t.Fatal(err)
 				}
@@ -421,7 +421,7 @@ func TestUnitIsRenewed(t *testing.T) {
 			t.Fatal(err)
 		}
 		theta := []float64{0.1, -0.2, 1}
-		sc, err := s.Scores(0, theta)
+		sc, err := s.Scores(0, theta, false)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -471,7 +471,7 @@ func TestRefusals(t *testing.T) {
 		if !s.Dropped {
 			t.Error("4000 clusters of 6 sums fit 64 KiB")
 		}
-		if _, err := s.Scores(0, []float64{0, 0, 1}); err == nil {
+		if _, err := s.Scores(0, []float64{0, 0, 1}, false); err == nil {
 			t.Error("dropped sums gave scores")
 		}
 	})

@@ -56,7 +56,7 @@ type budget struct {
 	workers int
 	num     *numbering
 	pool    *groupPool
-	keep    bool        // the input cannot be read again
+	keep    bool        // cluster sums are never dropped
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
 }
 
@@ -359,7 +359,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Total.Store(src.Info().Bytes)
 	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
 		dense: cmp.Or(o.Dense, DenseColumns), workers: max(1, o.Workers), num: newNumbering(l),
-		pool: newGroupPool(&o), keep: !src.Info().Rewindable}
+		pool: newGroupPool(&o), keep: needs.Keep || !src.Info().Rewindable}
 	defer func() {
 		if s == nil || s.pool != b.pool {
 			b.pool.close()

@@ -359,6 +359,38 @@ func addPlaced(dense int, parts []int) rowAdder {
 	}
 }
 
+// addMoments adds scores and packed second moments over p columns: of a row's
+// numbers the first multiplies the score, the second is the weight. Columns as in
+// addPlaced.
+func addMoments(p, dense int, parts []int) rowAdder {
+	var at []int
+	for j := range dense {
+		at = append(at, j)
+	}
+	return func(part, rows []float64, base []int32, n int) {
+		width := len(rows) / n
+		for ; len(rows) > 0; rows, base = rows[width:], base[len(parts):] {
+			m, w := rows[0], rows[1]
+			z := rows[2:width]
+			at = at[:dense]
+			for g, k := range parts {
+				for j := range k {
+					at = append(at, int(base[g])+j)
+				}
+			}
+			for i, a := range at {
+				part[a] = math.FMA(m, z[i], part[a])
+				x := w * z[i]
+				for j, b := range at[:i+1] {
+					lo, hi := min(a, b), max(a, b)
+					q := p + hi*(hi+1)/2 + lo
+					part[q] = math.FMA(x, z[j], part[q])
+				}
+			}
+		}
+	}
+}
+
 // transpose writes rows, each of ld numbers, of which cols are columns at and
 // following.
 func transpose(dst []float64, ld, at int, cols [][]float64) {

@@ -79,7 +79,7 @@ func scoresOf(t *testing.T, src stream.Source, o Options, pipe bool) (all []Clus
 		if s.Dropped {
 			t.Error("the sums of a pipe were dropped")
 		}
-		sc, err := s.Scores(0, theta)
+		sc, err := s.Scores(0, theta, false)
 		if err != nil {
 			t.Fatal(err)
 		}

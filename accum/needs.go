@@ -13,6 +13,9 @@ type Needs struct {
 	// Clusters lists the indexes of design keys whose clusters' second moments
 	// are wanted (no categories).
 	Clusters []int
+	// Keep holds the clusters' second moments however many they are, on scratch if
+	// need be: they are wanted for themselves.
+	Keep bool
 }
 
 // Options say how to scan.

@@ -22,11 +22,12 @@ type Scores struct {
 	// Each; nil for scores that were summed row by row.
 	Gross []float64
 
-	apart  *apartClusters // where there is a group apart
-	kind   stream.Kind
-	stores []*groupStore
-	// form makes a score of the sums of a cluster.
-	form func(dst []float64, parts []groupPart)
+	apart   *apartClusters // where there is a group apart
+	kind    stream.Kind
+	stores  []*groupStore
+	moments bool
+	// form fills S, and A if there is one, from the sums of a cluster.
+	form func(c *Cluster, parts []groupPart)
 }
 
 // Cluster is the rows of one key.
@@ -35,7 +36,13 @@ type Cluster struct {
 	Rows int64
 	// S has P numbers: sum w e z over the internal columns, e in units 1/YInv.
 	S []float64
+	// A is the P x P matrix sum w z z' over the internal columns, row by row; nil
+	// unless second moments were asked for.
+	A []float64
 }
+
+// Moments reports whether clusters come with second moments.
+func (sc *Scores) Moments() bool { return sc.moments }
 
 // Each calls f for each cluster in order of key, and stops at an error. What f gets
 // is valid until it returns. Sums on scratch are read once more for every call of
@@ -47,6 +54,9 @@ func (sc *Scores) Each(f func(c *Cluster) error) error {
 		clear(sc.Gross)
 	}
 	c := Cluster{Key: Key{Kind: sc.kind}, S: make([]float64, sc.P)}
+	if sc.moments {
+		c.A = make([]float64, sc.P*sc.P)
+	}
 	return mergeGroups(sc.stores, func(parts []groupPart) error {
 		c.Rows = 0
 		for i := range parts {
@@ -57,16 +67,28 @@ func (sc *Scores) Each(f func(c *Cluster) error) error {
 		} else {
 			c.Key.Bits = keyOf(sc.kind, parts[0].ord)
 		}
-		sc.form(c.S, parts)
+		sc.form(&c, parts)
 		return f(&c)
 	})
 }
 
-// storeScores is the scores that a store holds as they are.
-func storeScores(s *groupStore) *Scores {
-	return &Scores{P: s.width, kind: s.kind, stores: []*groupStore{s}, form: func(dst []float64, parts []groupPart) {
-		for j, f := range parts[0].sums {
-			dst[j] = f.float(s.unit)
+// storeScores is the scores, over p columns, that a store holds as they are, and
+// with moments the packed second moments after them.
+func storeScores(s *groupStore, p int, moments bool) *Scores {
+	return &Scores{P: p, kind: s.kind, stores: []*groupStore{s}, moments: moments, form: func(c *Cluster, parts []groupPart) {
+		sums := parts[0].sums
+		for j, f := range sums[:p] {
+			c.S[j] = f.float(s.unit)
+		}
+		if !moments {
+			return
+		}
+		for j, k := 0, p; j < p; j++ {
+			for i := range j + 1 {
+				x := sums[k].float(s.unit)
+				c.A[j*p+i], c.A[i*p+j] = x, x
+				k++
+			}
 		}
 	}}
 }
@@ -74,15 +96,15 @@ func storeScores(s *groupStore) *Scores {
 // Scores forms the scores of the clusters of a key from their second moments:
 // s_g = sum_c theta_c (z z')_{.c}, theta over (1, u, v) as in RowPass.Theta. The
 // state must have been made with that key among Needs.Clusters and without
-// categories.
-func (s *State) Scores(key int, theta []float64) (*Scores, error) {
+// categories. With moments set clusters come with A too.
+func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) {
 	if s.Dropped || len(s.epochs) == 0 || s.epochs[0].clusters[key] == nil {
 		return nil, errors.New("accum: the sums of these clusters were not kept")
 	}
 	l := s.lay
 	p := l.p0 + 2
 	k := l.p0 + 1
-	sc := &Scores{P: k, Lone: make([]bool, k), LoneZero: make([]bool, k), Gross: make([]float64, k), kind: l.design.Keys[key].Kind}
+	sc := &Scores{P: k, Lone: make([]bool, k), LoneZero: make([]bool, k), Gross: make([]float64, k), kind: l.design.Keys[key].Kind, moments: moments}
 	lone := newLoneTracker(l.p0)
 	at := s.denseAt()
 	ths := make([][]float64, len(s.epochs)) // theta in each epoch's frame
@@ -102,8 +124,19 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 	copy(sc.LoneZero[1:], zero)
 	z := make([]float64, p*(p+1)/2)
 	vec, mag := make([]float64, k), make([]float64, k)
-	sc.form = func(dst []float64, parts []groupPart) {
+	block := make([]float64, k*k)
+	maps := make([][]float64, len(s.epochs)) // of (1, u) alone
+	for i := range maps {
+		m := make([]float64, k*k)
+		for a := range k {
+			copy(m[a*k:(a+1)*k], s.maps[i][a*l.width:])
+		}
+		maps[i] = m
+	}
+	sc.form = func(c *Cluster, parts []groupPart) {
+		dst := c.S
 		clear(dst)
+		clear(c.A)
 		for i := range parts {
 			th, j := ths[parts[i].tag], s.maps[parts[i].tag]
 			unit := sc.stores[parts[i].tag].unit
@@ -127,6 +160,22 @@ func (s *State) Scores(key int, theta []float64) (*Scores, error) {
 					m += max(x, -x) * mag[b]
 				}
 				sc.Gross[a] += m * m
+			}
+			if !moments {
+				continue
+			}
+			for a := range k {
+				for b := range a + 1 {
+					x := z[a*(a+1)/2+b]
+					block[a*k+b], block[b*k+a] = x, x
+				}
+			}
+			moved := block
+			if s.epochs[parts[i].tag].frame != s.Frame {
+				moved = congruence(maps[parts[i].tag], block, k)
+			}
+			for q, x := range moved {
+				c.A[q] += x
 			}
 		}
 	}

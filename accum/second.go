@@ -32,6 +32,8 @@ type RowPass struct {
 	Weights []func(h float64) float64
 	// Scores lists the keys whose clusters' scores sum w e z are wanted.
 	Scores []int
+	// Moments asks for the second moments of those clusters too (no group apart).
+	Moments bool
 	// Heavy keeps rows of leverage above HeavyAt, but not those of leverage 1,
 	// out of the meats and returns them one by one, with the second moments of
 	// all other rows, so that 1-h can be formed without cancellation.
@@ -89,6 +91,7 @@ type secondWorker struct {
 	apart  []*apartScores // by key, where there is a group apart
 
 	e, h, mult []float64
+	ones       []float64
 	zs         []float64
 	idx        []int
 	val        []float64
@@ -121,7 +124,11 @@ func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPoo
 		c.pairs = append(c.pairs, s.lay.pairTables(unit, false))
 	}
 	for _, k := range rp.Scores {
-		c.stores = append(c.stores, pool.store(s.lay.design.Keys[k].Kind, s.scoreWidth(), unit))
+		p := s.scoreWidth()
+		if rp.Moments {
+			p += p * (p + 1) / 2
+		}
+		c.stores = append(c.stores, pool.store(s.lay.design.Keys[k].Kind, p, unit))
 		if s.Apart != nil {
 			c.scores = append(c.scores, newApartCommon(s, k, unit))
 		}
@@ -155,6 +162,14 @@ func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *second
 			width += len(l.groups[i].parts)
 		}
 		add, bases = addPlaced(l.p0+1, parts), len(l.groups)
+		if rp.Moments {
+			add = addMoments(len(s.Columns), l.p0+1, parts)
+		}
+	} else if rp.Moments {
+		add = addMoments(l.p0+1, l.p0+1, nil)
+	}
+	if rp.Moments {
+		width++
 	}
 	for _, st := range all.stores {
 		w.scores = append(w.scores, newGroups(st, width, bases, add))
@@ -407,6 +422,9 @@ func (w *secondWorker) addScores(g *groups, lone *loneTracker, keys *stream.Vect
 		kernel.Scale(mult, w.e[:n], w.block.Weight[:n])
 	}
 	w.zcols = append(w.zcols[:0], mult)
+	if w.pass.Moments {
+		w.zcols = append(w.zcols, w.weights())
+	}
 	for j := range l.p0 + 1 {
 		w.zcols = append(w.zcols, w.col(j))
 	}
@@ -430,6 +448,17 @@ func (w *secondWorker) addScores(g *groups, lone *loneTracker, keys *stream.Vect
 		}
 	}
 	g.take(keys, n)
+}
+
+// weights are those of the block's rows, 1 without.
+func (w *secondWorker) weights() []float64 {
+	if w.root != nil {
+		return w.block.Weight[:w.block.Rows]
+	}
+	for len(w.ones) < w.block.Rows {
+		w.ones = append(w.ones, 1)
+	}
+	return w.ones[:w.block.Rows]
 }
 
 func (w *secondWorker) allMeats() []*meat {

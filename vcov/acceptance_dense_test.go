@@ -127,6 +127,9 @@ func (d *dense) covariance(kind string) *mat.Dense {
 		}
 		return d.sandwich(s, f)
 	}
+	if kind == "cr2" || kind == "cr3" {
+		return d.adjusted(kind)
+	}
 	f := make([]float64, rows)
 	for i := range f {
 		f[i] = d.w[i] * d.e[i] * d.e[i]
@@ -145,6 +148,75 @@ func (d *dense) covariance(kind string) *mat.Dense {
 		}
 	}
 	return d.sandwich(d.x, f)
+}
+
+// adjusted is CR2 or CR3 by the definition of Bell and McCaffrey (2002) over rows:
+// scores X_g' (I - H_gg)^p e_g with p = -1/2 (symmetric root) or -1, in rows times
+// the root of a precision weight; frequencies are repeated rows.
+func (d *dense) adjusted(kind string) *mat.Dense {
+	member := map[int][]int{}
+	for i, g := range d.group {
+		times := 1
+		if d.kind == stream.Frequency {
+			times = int(d.w[i])
+		}
+		for range times {
+			member[g] = append(member[g], i)
+		}
+	}
+	root := func(i int) float64 {
+		if d.kind == stream.Frequency {
+			return 1
+		}
+		return math.Sqrt(d.w[i])
+	}
+	var scores [][]float64
+	var ones []float64
+	for _, rows := range member {
+		n := len(rows)
+		x := mat.NewDense(n, d.k, nil)
+		e := mat.NewVecDense(n, nil)
+		for a, i := range rows {
+			for j, v := range d.x[i] {
+				x.Set(a, j, v*root(i))
+			}
+			e.SetVec(a, d.e[i]*root(i))
+		}
+		var xm, h mat.Dense
+		xm.Mul(x, d.m)
+		h.Mul(&xm, x.T())
+		gap := mat.NewSymDense(n, nil)
+		for a := range n {
+			for b := range a + 1 {
+				v := -(h.At(a, b) + h.At(b, a)) / 2
+				if a == b {
+					v++
+				}
+				gap.SetSym(a, b, v)
+			}
+		}
+		var eig mat.EigenSym
+		if !eig.Factorize(gap, true) {
+			panic("no eigenvalues")
+		}
+		var vec mat.Dense
+		eig.VectorsTo(&vec)
+		s := make([]float64, d.k)
+		for q, l := range eig.Values(nil) {
+			p := -0.5
+			if kind == "cr3" {
+				p = -1
+			}
+			t := math.Pow(l, p) * mat.Dot(vec.ColView(q), e)
+			for a := range n {
+				for j := range s {
+					s[j] += x.At(a, j) * vec.At(a, q) * t
+				}
+			}
+		}
+		scores, ones = append(scores, s), append(ones, 1)
+	}
+	return d.sandwich(scores, ones)
 }
 
 // exponent of HC4 (Cribari-Neto 2004, doi:10.1016/S0167-9473(02)00366-3), HC4m

@@ -57,17 +57,19 @@ func clusterJoint(g int) func(float64, int) (float64, float64, bool, string) {
 
 // clusterSums is what one walk over the scores of all clusters of a key leaves.
 type clusterSums struct {
-	scores *accum.Scores
-	groups int
-	rows   *Spread
-	meat   []float64  // sum_g s_g s_g' in solved coordinates
-	apart  *apartMeat // where a group of categories is kept apart
+	scores    *accum.Scores
+	groups    int
+	rows      *Spread
+	meat      []float64  // sum_g s_g s_g' in solved coordinates
+	apart     *apartMeat // where a group of categories is kept apart
+	*adjusted            // of cr2 and cr3; nil unless asked for
 }
 
-// sumClusters walks over the clusters in order of key. Time O(G (P K + K^2)).
-func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores) (*clusterSums, error) {
+// sumClusters walks over the clusters in order of key, with second moments if adj is
+// given. Time O(G (P K + K^2)).
+func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjusted) (*clusterSums, error) {
 	k := x.k()
-	c := &clusterSums{scores: sc, meat: make([]float64, k*k)}
+	c := &clusterSums{scores: sc, meat: make([]float64, k*k), adjusted: adj}
 	s := make([]float64, k)
 	var n sizes
 	err := sc.Each(func(g *accum.Cluster) error {
@@ -77,6 +79,9 @@ func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores) (*clusterS
 		n.add(g.Rows)
 		if x.apart != nil {
 			return nil
+		}
+		if adj != nil {
+			adj.add(g.A, g.S)
 		}
 		x.projectVec(g.S, s)
 		for a, t := range s {

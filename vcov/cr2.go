@@ -60,6 +60,9 @@ type adjusted struct {
 	vec                                          mat.Dense
 }
 
+// adjusts reports whether a kind is of this family.
+func adjusts(kind string) bool { return kind == "cr2" || kind == "cr3" }
+
 // loneEigen: an eigenvalue of H_g above 1 - loneEigen is 1 but for rounding.
 const loneEigen = 1e-9
 

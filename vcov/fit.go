@@ -226,11 +226,16 @@ func (f *fitter) second() error {
 			seen[k.Name] = true
 			f.kinds = append(f.kinds, k.Name)
 			lever = lever || leverages(k.Name)
-		case k.Cluster >= 0 && !seen[fmt.Sprint(k.Cluster)]:
-			seen[fmt.Sprint(k.Cluster)] = true
-			f.keys = append(f.keys, k.Cluster)
+		case k.Cluster >= 0:
+			w, _ := waysOf(f.d, k.Cluster)
+			for _, key := range w.keys {
+				if !slices.Contains(f.keys, key) && !f.kept(key) {
+					f.keys = append(f.keys, key)
+				}
+			}
 		}
 	}
+	rp.Moments = f.plan.moments && x.apart == nil && len(s.Columns) <= momentsMost
 	rp.Scores = f.keys
 	rp.Weights = f.weights(f.kinds, 0)
 	if len(rp.Weights) > 0 {
@@ -240,7 +245,9 @@ func (f *fitter) second() error {
 			rp.Whitener, rp.K = w, m
 		}
 	}
-	s.Close() // scores come from the second pass
+	if !f.plan.needs.Keep {
+		s.Close() // scores come from the second pass
+	}
 	sums, err := f.rowPass(rp)
 	if err != nil {
 		return err
@@ -264,6 +271,15 @@ func (f *fitter) second() error {
 		return f.heavy(rp, most)
 	}
 	return nil
+}
+
+// momentsMost is the number of internal columns up to which a cluster's second
+// moments are summed in pass two.
+const momentsMost = 150
+
+// kept reports whether pass one holds the second moments of a key for good.
+func (f *fitter) kept(key int) bool {
+	return f.plan.needs.Keep && slices.Contains(f.plan.needs.Clusters, key) && !f.state.Coarse
 }
 
 // perTerm is N/k.
@@ -326,9 +342,12 @@ func (f *fitter) errorsFor(k Kind) Errors {
 	for _, l := range []*[]Number{&e.SE, &e.DF, &e.T, &e.P, &e.Log10P, &e.Low, &e.High} {
 		*l = []Number{}
 	}
-	isCluster := k.Cluster >= 0 && (k.Name == "cr0" || k.Name == "cr1")
+	isCluster := k.Cluster >= 0
 	if isCluster {
-		e.Clusters = append(e.Clusters, f.d.Keys[k.Cluster].Text)
+		w, _ := waysOf(f.d, k.Cluster)
+		for _, key := range w.dims {
+			e.Clusters = append(e.Clusters, f.d.Keys[key].Text)
+		}
 	}
 	if x.df() <= 0 {
 		x.unavailable(&e, "%d rows for %d terms leave no degrees of freedom", x.n, x.rank())
@@ -461,27 +480,41 @@ func (f *fitter) clusters() error {
 	if x.df() <= 0 {
 		return nil
 	}
+	full := map[int]bool{}
+	var keys []int
 	for _, k := range f.o.Errors {
-		if k.Cluster < 0 || f.groups[k.Cluster] != nil {
+		if k.Cluster < 0 {
+			continue
+		}
+		w, _ := waysOf(f.d, k.Cluster)
+		keys = append(keys, w.keys...)
+		full[k.Cluster] = full[k.Cluster] || adjusts(k.Name)
+	}
+	for _, key := range keys {
+		if f.groups[key] != nil {
 			continue
 		}
 		var sc *accum.Scores
-		if f.sums != nil {
-			sc = f.sums.Scores[slices.Index(f.keys, k.Cluster)]
-		} else if slices.Contains(f.plan.needs.Clusters, k.Cluster) {
+		if i := slices.Index(f.keys, key); f.sums != nil && i >= 0 {
+			sc = f.sums.Scores[i]
+		} else if slices.Contains(f.plan.needs.Clusters, key) {
 			var err error
-			if sc, err = s.Scores(k.Cluster, x.theta); err != nil {
+			if sc, err = s.Scores(key, x.theta, full[key]); err != nil {
 				continue // errorsFor says so
 			}
 		}
 		if sc == nil {
 			continue
 		}
-		c, err := x.sumClusters(f.ctx, sc)
+		var adj *adjusted
+		if full[key] && sc.Moments() && x.apart == nil && x.k() <= momentsMost {
+			adj = newAdjusted(x)
+		}
+		c, err := x.sumClusters(f.ctx, sc, adj)
 		if err != nil {
 			return err
 		}
-		f.groups[k.Cluster] = c
+		f.groups[key] = c
 	}
 	return nil
 }
@@ -498,37 +531,85 @@ func (f *fitter) close() {
 
 func (f *fitter) cluster(e *Errors, k Kind) {
 	x, s := f.sol, f.state
-	c := f.groups[k.Cluster]
-	if c != nil {
-		e.Groups = []int64{int64(c.groups)}
-		e.GroupRows = c.rows
+	w, _ := waysOf(f.d, k.Cluster)
+	sums := make([]*clusterSums, len(w.keys))
+	missing, fewest := false, math.MaxInt
+	for i, key := range w.keys {
+		sums[i] = f.groups[key]
+		missing = missing || sums[i] == nil
+		if sums[i] != nil && slices.Contains(w.dims, key) {
+			fewest = min(fewest, sums[i].groups)
+		}
+	}
+	if !missing {
+		for _, key := range w.dims {
+			e.Groups = append(e.Groups, int64(f.groups[key].groups))
+		}
+		if len(w.dims) == 1 {
+			e.GroupRows = sums[0].rows
+		}
 	}
 	switch {
 	case x.perfect:
 		df := 1.0
-		if c != nil {
-			df = float64(c.groups - 1)
+		if !missing {
+			df = float64(fewest - 1)
 		}
 		x.infer(e, x.nothing(df), f.o.Level, f.o.Covariance)
 		return
-	case c == nil:
+	case missing:
 		x.unavailable(e, "the sums of the clusters were not kept")
 		return
-	case c.groups < 2:
+	case fewest < 2:
 		x.unavailable(e, "all rows are in one cluster; at least two are needed")
 		return
 	case s.Coarse && f.sums == nil:
 		x.unavailable(e, "the clusters' sums lost digits; use --passes 2")
 		return
-	}
-	r := x.clusterRobust(k.Name, c)
-	if loss := x.scoreLoss(c.scores, r); loss > lossRefuse {
-		x.unavailable(e, "the clusters' sums cancel (relative error up to %.1e); use --passes 2", loss)
+	case adjusts(k.Name) && sums[0].adjusted == nil && x.apart != nil:
+		x.unavailable(e, "a category with too many levels stands apart, and %s takes the second moments of every cluster over all columns; cr1 does not", k.Name)
 		return
-	} else if loss > lossLimit {
-		f.note("digits", "%s has about %d digits left: the clusters' sums cancel; --passes 2 keeps them", e.Name(), digits(loss))
+	case adjusts(k.Name) && sums[0].adjusted == nil:
+		x.unavailable(e, "%s takes the second moments of every cluster, kept up to %d columns; the model has %d", k.Name, momentsMost, len(s.Columns))
+		return
+	case adjusts(k.Name) && sums[0].adjusted.failed:
+		x.unavailable(e, "the eigenvalues of a cluster's leverages were not found")
+		return
+	case len(w.dims) > 1 && x.apart != nil:
+		x.unavailable(e, "a category with too many levels stands apart; clusters of one dimension are possible")
+		return
+	}
+	var r *estimate
+	switch {
+	case adjusts(k.Name):
+		r = sums[0].adjusted.estimate(k.Name)
+	case len(w.dims) > 1:
+		var clipped int
+		var reach float64
+		if r, clipped, reach = x.multiway(k.Name, w, sums); r == nil {
+			x.unavailable(e, "the eigenvalues of the covariance were not found")
+			return
+		}
+		if clipped > 0 {
+			f.note("repaired", "the covariance by %s had %d negative eigenvalue(s), up to %.2g of the largest; they were set to zero, and errors that rest on them are not given", e.Name(), clipped, reach)
+		}
+	default:
+		r = x.clusterRobust(k.Name, sums[0])
+	}
+	worst := 0.0
+	for _, c := range sums {
+		worst = max(worst, x.scoreLoss(c.scores, r))
+	}
+	if worst > lossRefuse {
+		x.unavailable(e, "the clusters' sums cancel (relative error up to %.1e); use --passes 2", worst)
+		return
+	} else if worst > lossLimit {
+		f.note("digits", "%s has about %d digits left: the clusters' sums cancel; --passes 2 keeps them", e.Name(), digits(worst))
 	}
 	x.infer(e, r, f.o.Level, f.o.Covariance)
+	if len(w.dims) > 1 {
+		e.Factor = Number(nan) // each set of dimensions has its own
+	}
 	f.tellLost(e, r)
 	if x.apart != nil && x.rank() < c.groups {
 		f.note("no-joint-test", "%s has no joint test of all terms: clusters join the levels of %s, which was eliminated", e.Name(), x.apart.text())

@@ -39,6 +39,8 @@ type Plan struct {
 	needs  accum.Needs
 	sample *accum.Sample // nil unless arithmetic hangs on it
 	rows   bool          // a row pass is needed
+	// moments: the row pass sums the second moments of clusters.
+	moments bool
 
 	hypotheses [][]stream.Restriction
 }
@@ -100,12 +102,20 @@ func (o *Options) validate(d *stream.Design) error {
 	for _, k := range o.Errors {
 		switch k.Name {
 		case "classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5":
-		case "cr0", "cr1":
+		case "cr0", "cr1", "cr2", "cr3":
 			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
 				return stream.Usef("errors: %s needs a clustering", k.Name)
 			}
+			switch w, ok := waysOf(d, k.Cluster); {
+			case !ok:
+				return stream.Usef("errors: %s by %s needs the crossing of every set of them", k.Name, d.Keys[k.Cluster].Text)
+			case len(w.dims) > 1 && adjusts(k.Name):
+				return stream.Usef("errors: %s is for one clustering; cr0 and cr1 take several", k.Name)
+			case adjusts(k.Name) && d.Spec.WeightKind == stream.Sampling:
+				return stream.Usef("errors: %s has no meaning under sampling weights, which say nothing of the spread of a row; cr1 has", k.Name)
+			}
 		default:
-			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0 or cr1", k.Name)
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2 or cr3", k.Name)
 		}
 	}
 	return nil
@@ -136,7 +146,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	}
 	var hc, rows bool
 	var byRow string
-	clusters := map[int]bool{}
+	clusters, full := map[int]bool{}, map[int]bool{}
 	for _, e := range o.Errors {
 		switch e.Name {
 		case "hc0", "hc1":
@@ -145,7 +155,12 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 			rows, byRow = true, e.Name
 			p.why("%s depends on the leverage of every row, which is known only after the first pass", e.Name)
 		case "cr0", "cr1":
-			clusters[e.Cluster] = true
+			w, _ := waysOf(d, e.Cluster)
+			for _, k := range w.keys {
+				clusters[k] = true
+			}
+		case "cr2", "cr3":
+			clusters[e.Cluster], full[e.Cluster] = true, true
 		}
 	}
 	if o.Passes == 1 && rows {
@@ -201,25 +216,36 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		p.cost("fourth moments", quartic)
 		route = append(route, "fourth moments")
 	}
-	if len(clusters) > 0 && !rows {
+	if len(full) > 0 {
+		p.why("cr2 and cr3 take the second moments of every cluster")
+	}
+	if len(full) > 0 && cats {
+		p.moments = true
+	}
+	if len(clusters) > 0 && (!rows || len(full) > 0 && !cats) {
 		for i := range d.Keys {
-			if clusters[i] {
+			if clusters[i] && !rows || full[i] {
 				p.needs.Clusters = append(p.needs.Clusters, i)
 			}
 		}
+		p.needs.Keep = len(full) > 0
 		p.PerCluster = accum.ClusterBytes(int(c * (c + 1) / 2))
 		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("cluster sums", float64(len(clusters))*(c*(c+1)/2+20))
 		route = append(route, "cluster sums")
-		if info.Rewindable {
+		switch {
+		case p.needs.Keep: // the reason stands above
+		case info.Rewindable:
 			p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass keeps scores only")
-		} else {
+		default:
 			p.why("clusters keep their second moments, since a pipe can be read once")
 		}
 	}
 	if rows {
 		p.Passes = 2
-		p.PerCluster = accum.ClusterBytes(int(c) - 1)
+		if p.needs.Clusters == nil {
+			p.PerCluster = accum.ClusterBytes(int(c) - 1)
+		}
 		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("second read", read)
 		p.cost("row pass", row+float64(len(clusters))*(c+20))

@@ -194,12 +194,14 @@ func (f *fitter) model() Model {
 	if sp.Where != "" {
 		m.Where = ptr(d.WhereText())
 	}
-	for _, k := range d.Keys {
-		m.Cluster = append(m.Cluster, k.Text)
+	for i, k := range d.Keys {
+		if d.Parts[i] == nil {
+			m.Cluster = append(m.Cluster, k.Text)
+		}
 	}
 	for _, k := range f.o.Errors {
 		name := k.Name
-		if k.Cluster >= 0 && k.Cluster < len(d.Keys) && (k.Name == "cr0" || k.Name == "cr1") {
+		if k.Cluster >= 0 {
 			name += "(" + d.Keys[k.Cluster].Text + ")"
 		}
 		m.Errors = append(m.Errors, name)

@@ -178,10 +178,10 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		return nil, err
 	}
 	p := &prepared{a: a, s: s, req: req, src: src}
-	if p.design, err = stream.NewDesign(s.spec(req.keys), src.Schema()); err == nil {
+	if p.design, err = stream.NewDesign(s.spec(req), src.Schema()); err == nil {
 		// From here on clusterings go by their canonical text.
-		for i, k := range p.design.Keys {
-			p.req.keys[i] = k.Text
+		for i := range p.req.keys {
+			p.req.keys[i] = p.design.Keys[i].Text
 		}
 		if pf != nil {
 			err = pf.check(p)

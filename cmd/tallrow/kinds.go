@@ -9,12 +9,19 @@ import (
 )
 
 // knownKinds are the kinds of errors of this version, in order of refinement.
-var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1"}
+var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3"}
+
+// several less the place of a set stands for a kind of several clusterings until
+// all clusterings are known.
+const several = -2
 
 // request is the errors asked for, in order, and the clusterings they need.
 type request struct {
 	kinds []vcov.Kind
 	keys  []string // expressions of the clusterings
+	// crossed are the sets of keys whose joint clusters are wanted; a kind of several
+	// clusterings has the cluster len(keys) plus the place of its set.
+	crossed [][]int
 }
 
 // names gives the kinds as words: "cr1(quay)".
@@ -30,8 +37,40 @@ func (r request) name(k vcov.Kind) string {
 	if k.Cluster < 0 {
 		return k.Name
 	}
-	return k.Name + "(" + r.keys[k.Cluster] + ")"
+	if k.Cluster < len(r.keys) {
+		return k.Name + "(" + r.keys[k.Cluster] + ")"
+	}
+	var list []string
+	for _, c := range r.crossed[k.Cluster-len(r.keys)] {
+		list = append(list, r.keys[c])
+	}
+	return k.Name + "(" + strings.Join(list, ", ") + ")"
 }
+
+// cross adds every set of two or more of the clusterings and returns the place of
+// the set of all.
+func (r *request) cross(dims []int) int {
+	at := 0
+	for set := 1; set < 1<<len(dims); set++ {
+		var parts []int
+		for i, d := range dims {
+			if set>>i&1 == 1 {
+				parts = append(parts, d)
+			}
+		}
+		if len(parts) < 2 {
+			continue
+		}
+		if at = slices.IndexFunc(r.crossed, func(p []int) bool { return slices.Equal(p, parts) }); at < 0 {
+			at = len(r.crossed)
+			r.crossed = append(r.crossed, parts)
+		}
+	}
+	return at
+}
+
+// mostWays bounds the clusterings of one kind: their sets are twice as many for each.
+const mostWays = 4
 
 // withClassical puts the classical errors in front if they were not asked for:
 // every other kind is compared with them. Under sampling weights they mean
@@ -82,28 +121,44 @@ func (s *settings) parseErrors() (request, error) {
 			return fail("%s: %s has no clusters; %s(%s) has", item, name, "cr1", strings.Join(args, ", "))
 		case isCR && inPlace && len(args) == 0:
 			return fail("%s: found no clusters, want for example cr1(quay)", item)
-		case isCR && len(args) > 1:
-			return fail("%s: two-way clusters are not in this version; ask for one at a time: %s", item, eachKind(name, args))
 		case isCR && !inPlace && len(s.cluster) == 0:
 			return fail("%s needs clusters: %s(quay), or --cluster quay", name, name)
-		case isCR && !inPlace && len(s.cluster) > 1:
-			return request{}, stream.Usef("%s names %d clusterings for %s: two-way clusters are not in this version; ask for each in place: --errors \"%s\"",
-				s.origin("cluster"), len(s.cluster), name, eachKind(name, s.cluster))
 		case isCR && !inPlace:
 			args = s.cluster
 		}
 		if isCR {
 			clustered = true
-			k.Cluster = slices.Index(r.keys, args[0])
-			if k.Cluster < 0 {
-				k.Cluster = len(r.keys)
-				r.keys = append(r.keys, args[0])
+			var dims []int
+			for _, a := range args {
+				c := slices.Index(r.keys, a)
+				if c < 0 {
+					c = len(r.keys)
+					r.keys = append(r.keys, a)
+				}
+				if slices.Contains(dims, c) {
+					return fail("%s: %s is there twice, want it once", item, a)
+				}
+				dims = append(dims, c)
+			}
+			slices.Sort(dims)
+			switch k.Cluster = dims[0]; {
+			case len(dims) > 1 && (name == "cr2" || name == "cr3"):
+				return fail("%s: %s is for one clustering; cr0 and cr1 take several: %s", item, name, eachKind(name, args))
+			case len(dims) > mostWays:
+				return fail("%s: found %d clusterings, want at most %d", item, len(dims), mostWays)
+			case len(dims) > 1:
+				k.Cluster = several - r.cross(dims)
 			}
 		}
 		if slices.Contains(r.kinds, k) {
-			return fail("%s is asked for twice", r.name(k))
+			return fail("%s is asked for twice", item)
 		}
 		r.kinds = append(r.kinds, k)
+	}
+	for i := range r.kinds {
+		if k := &r.kinds[i]; k.Cluster <= several {
+			k.Cluster = len(r.keys) + several - k.Cluster
+		}
 	}
 	if len(s.cluster) > 0 {
 		for _, c := range s.cluster {

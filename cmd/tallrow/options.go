@@ -75,7 +75,7 @@ var options = []option{
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
 	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onModel, file: true, def: "classical, hc1, and cr1 with --cluster",
-		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0, cr1; cr1(quay) names its clusters in place; the last one leads",
+		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3; cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
@@ -159,7 +159,7 @@ var options = []option{
 var (
 	laterOptions = []string{"lags", "kernel", "period", "unit", "draws", "seed", "keep", "checkpoint",
 		"hide-ids", "frame-from", "at", "sweep", "part"}
-	laterKinds    = []string{"cr2", "cr3", "hac", "driscoll-kraay"}
+	laterKinds    = []string{"hac", "driscoll-kraay"}
 	laterCommands = []string{"digest", "pool", "launch"}
 )
 

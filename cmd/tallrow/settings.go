@@ -275,11 +275,11 @@ func (s *settings) checkModel() error {
 }
 
 // spec is the model for the stream package; keys are the clusterings.
-func (s *settings) spec(keys []string) stream.Spec {
+func (s *settings) spec(req request) stream.Spec {
 	sp := stream.Spec{
 		Outcome: s.outcome, Terms: s.terms, NoConstant: s.noConstant,
 		Weight: s.weight, Where: s.where, Stop: s.missing == "stop",
-		Keys: keys, Zone: s.zone,
+		Keys: req.keys, Crossed: req.crossed, Zone: s.zone,
 	}
 	switch s.weightKind {
 	case "frequency":
