@@ -611,7 +611,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		e.Factor = Number(nan) // each set of dimensions has its own
 	}
 	f.tellLost(e, r)
-	if x.apart != nil && x.rank() < c.groups {
+	if x.apart != nil && x.rank() < fewest {
 		f.note("no-joint-test", "%s has no joint test of all terms: clusters join the levels of %s, which was eliminated", e.Name(), x.apart.text())
 	}
 }

@@ -227,11 +227,25 @@ func clusterShape(v *view) []string {
 			continue
 		}
 		seen[name] = true
-		var kinds []string // all that rest on these clusters
+		var kinds, careful []string // all that rest on these clusters
 		for _, o := range v.shown {
-			if o.Status == "ok" && slices.Equal(o.Clusters, e.Clusters) {
+			switch {
+			case o.Status != "ok" || !slices.Equal(o.Clusters, e.Clusters):
+			case o.Kind == "cr2" || o.Kind == "cr3":
+				careful = append(careful, o.Name())
+			default:
 				kinds = append(kinds, o.Name())
 			}
+		}
+		if kinds == nil {
+			continue
+		}
+		advice := ""
+		switch {
+		case careful != nil:
+			advice = "; lean on " + both(careful)
+		case len(e.Clusters) == 1:
+			advice = fmt.Sprintf("; cr2(%s) allows for that", oneLine(name))
 		}
 		few := e.Groups[0]
 		for _, g := range e.Groups {
@@ -239,9 +253,9 @@ func clusterShape(v *view) []string {
 		}
 		switch s := e.GroupRows; {
 		case few < fewClusters:
-			list = append(list, fmt.Sprintf("There are only %s clusters of %s: with so few, errors by %s tend to come out too small.", count(few), oneLine(name), both(kinds)))
+			list = append(list, fmt.Sprintf("There are only %s clusters of %s: with so few, errors by %s tend to come out too small%s.", count(few), oneLine(name), both(kinds), advice))
 		case s != nil && float64(s.Median) > 0 && float64(s.Max) > unequalSize*float64(s.Median):
-			list = append(list, fmt.Sprintf("The largest cluster of %s has %s times the rows of the median one: with sizes so unequal errors by %s may come out too small.", oneLine(name), three(float64(s.Max)/float64(s.Median)), both(kinds)))
+			list = append(list, fmt.Sprintf("The largest cluster of %s has %s times the rows of the median one: with sizes so unequal errors by %s may come out too small%s.", oneLine(name), three(float64(s.Max)/float64(s.Median)), both(kinds), advice))
 		}
 	}
 	return list

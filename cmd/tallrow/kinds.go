@@ -151,7 +151,10 @@ func (s *settings) parseErrors() (request, error) {
 			}
 		}
 		if slices.Contains(r.kinds, k) {
-			return fail("%s is asked for twice", item)
+			if isCR {
+				name += "(" + strings.Join(args, ", ") + ")"
+			}
+			return fail("%s is asked for twice", name)
 		}
 		r.kinds = append(r.kinds, k)
 	}

@@ -38,6 +38,8 @@ func TestParseErrors(t *testing.T) {
 		{[]string{"errors", "HC3,CR0( quay ),cr1(quay)"}, "hc3 cr0(quay) cr1(quay)", "quay"},
 		{[]string{"errors", "cr1, classical", "cluster", "max(quay, crane)"}, "cr1(max(quay, crane)) classical", "max(quay, crane)"},
 		{[]string{"errors", "cr1(quay), cr1(crane)", "cluster", "quay, crane"}, "cr1(quay) cr1(crane)", "quay crane"},
+		{[]string{"cluster", "quay, crane"}, "classical hc1 cr1(quay, crane)", "quay crane"},
+		{[]string{"errors", "cr0(crane), cr2(quay), cr1(quay, crane), cr1(date(t), quay)"}, "cr0(crane) cr2(quay) cr1(crane, quay) cr1(quay, date(t))", "crane quay date(t)"},
 	} {
 		r, err := given(t, c.words...).parseErrors()
 		if err != nil {
@@ -59,19 +61,20 @@ func TestParseErrorsRefuses(t *testing.T) {
 		want  string // part of the message
 	}{
 		{[]string{"errors", ""}, "found nothing"},
-		{[]string{"errors", "cr3(quay)"}, "cr3 is not in this version"},
-		{[]string{"errors", "cr2(quay)"}, "cr2 is not in this version"},
-		{[]string{"errors", "cr3"}, "cr3 is not in this version"},
+		{[]string{"errors", "cr3(quay, crane)"}, "cr3 is for one clustering; cr0 and cr1 take several: cr3(quay), cr3(crane)"},
+		{[]string{"errors", "cr2(quay, crane)"}, "cr2 is for one clustering"},
+		{[]string{"errors", "cr3"}, "cr3 needs clusters"},
 		{[]string{"errors", "hac"}, "hac is not in this version"},
 		{[]string{"errors", "driscoll-kraay"}, "driscoll-kraay is not in this version"},
 		{[]string{"errors", "clasical"}, "did you mean classical?"},
 		{[]string{"errors", "cr1"}, "cr1 needs clusters"},
 		{[]string{"errors", "cr1()"}, "found no clusters"},
-		{[]string{"errors", "cr1(quay, crane)"}, "two-way clusters are not in this version; ask for one at a time: cr1(quay), cr1(crane)"},
+		{[]string{"errors", "cr1(quay, crane, quay)"}, "quay is there twice"},
+		{[]string{"errors", "cr1(a, b, c, d, e)"}, "found 5 clusterings, want at most 4"},
+		{[]string{"errors", "cr1(quay, crane), cr0(crane), cr1(crane, quay)"}, "cr1(crane, quay) is asked for twice"},
 		{[]string{"errors", "hc1(quay)"}, "hc1 has no clusters"},
 		{[]string{"errors", "hc1, hc1"}, "hc1 is asked for twice"},
 		{[]string{"errors", "cr1(quay), cr1", "cluster", "quay"}, "cr1(quay) is asked for twice"},
-		{[]string{"cluster", "quay, crane"}, `--errors "cr1(quay), cr1(crane)"`},
 		{[]string{"cluster", "quay", "errors", "hc1"}, "add cr1(quay)"},
 		{[]string{"cluster", "quay", "errors", "cr1(crane)"}, "no kind of errors uses it"},
 		{[]string{"errors", "cr1(quay) x"}, "closing parenthesis"},
