@@ -179,6 +179,11 @@ func collect(t testing.TB, sc *Scores) (all []Cluster) {
 	return all
 }
 
+func bothArithmetics(t *testing.T, test func(*testing.T, Arithmetic)) {
+	t.Run("double", func(t *testing.T) { test(t, Double) })
+	t.Run("extended", func(t *testing.T) { test(t, Extended) })
+}
+
 func close12(t *testing.T, what string, got, want, scale float64) {
 	t.Helper()
 	if !(math.Abs(got-want) <= 1e-12*scale) {
@@ -188,7 +193,9 @@ func close12(t *testing.T, what string, got, want, scale float64) {
 
 // Second moments of every model shape, sampled and in epochs, against the
 // definition row by row, and the same bits for any number of workers.
-func TestFirstSums(t *testing.T) {
+func TestFirstSums(t *testing.T) { bothArithmetics(t, firstSums) }
+
+func firstSums(t *testing.T, a Arithmetic) {
 	tab, few := randomTable(5000, 1, nil), randomTable(1500, 1, nil)
 	for name, spec := range specs() {
 		tab := tab
@@ -204,7 +211,7 @@ func TestFirstSums(t *testing.T) {
 				d := design(t, src, spec)
 				var base *State
 				for _, workers := range []int{1, 2, 3, 8} {
-					s, err := First(t.Context(), src, d, Needs{}, Options{Workers: workers, Memory: 1 << 30})
+					s, err := First(t.Context(), src, d, Needs{}, Options{Workers: workers, Memory: 1 << 30, Arithmetic: a})
 					if err != nil {
 						t.Fatal(err)
 					}
@@ -239,13 +246,15 @@ func TestFirstSums(t *testing.T) {
 }
 
 // Meats, leverages, scores of pass two against the definition.
-func TestSecondSums(t *testing.T) {
+func TestSecondSums(t *testing.T) { bothArithmetics(t, secondSums) }
+
+func secondSums(t *testing.T, a Arithmetic) {
 	tab := randomTable(1500, 2, nil)
 	for name, spec := range specs() {
 		t.Run(name, func(t *testing.T) {
 			src := tab.source(700)
 			d := design(t, src, spec)
-			s, err := First(t.Context(), src, d, Needs{}, Options{Workers: 2, Memory: 1 << 30})
+			s, err := First(t.Context(), src, d, Needs{}, Options{Workers: 2, Memory: 1 << 30, Arithmetic: a})
 			if err != nil {
 				t.Fatal(err)
 			}
@@ -264,7 +273,7 @@ func TestSecondSums(t *testing.T) {
 			var base *RowSums
 			for _, workers := range []int{1, 3} {
 				r, err := Second(t.Context(), src, s, RowPass{Theta: theta, Whitener: whiten, K: 2,
-					Weights: []func(float64) float64{g}, Scores: []int{0}}, Options{Workers: workers, Memory: 1 << 30})
+					Weights: []func(float64) float64{g}, Scores: []int{0}}, Options{Workers: workers, Memory: 1 << 30, Arithmetic: a})
 				if err != nil {
 					t.Fatal(err)
 				}
@@ -340,7 +349,9 @@ func TestSecondSums(t *testing.T) {
 }
 
 // Fourth moments and cluster sums of pass one give what pass two sums row by row.
-func TestOnePassIsTwoPass(t *testing.T) {
+func TestOnePassIsTwoPass(t *testing.T) { bothArithmetics(t, onePassIsTwoPass) }
+
+func onePassIsTwoPass(t *testing.T, a Arithmetic) {
 	tab := randomTable(6000, 4, nil)
 	for _, name := range []string{"plain", "no constant", "collinear", "precision"} {
 		spec := specs()[name]
@@ -351,7 +362,7 @@ func TestOnePassIsTwoPass(t *testing.T) {
 					src = unsampled{src}
 				}
 				d := design(t, src, spec)
-				s, err := First(t.Context(), src, d, Needs{Fourth: true, Clusters: []int{0}}, Options{Workers: 2, Memory: 1 << 30})
+				s, err := First(t.Context(), src, d, Needs{Fourth: true, Clusters: []int{0}}, Options{Workers: 2, Memory: 1 << 30, Arithmetic: a})
 				if err != nil {
 					t.Fatal(err)
 				}
@@ -361,7 +372,7 @@ func TestOnePassIsTwoPass(t *testing.T) {
 					theta[i] = 0.1 / float64(1+i)
 				}
 				theta[p] = 1
-				r, err := Second(t.Context(), src, s, RowPass{Theta: theta, Weights: []func(float64) float64{func(float64) float64 { return 1 }}, Scores: []int{0}}, Options{Workers: 2, Memory: 1 << 30})
+				r, err := Second(t.Context(), src, s, RowPass{Theta: theta, Weights: []func(float64) float64{func(float64) float64 { return 1 }}, Scores: []int{0}}, Options{Workers: 2, Memory: 1 << 30, Arithmetic: a})
 				if err != nil {
 					t.Fatal(err)
 				}

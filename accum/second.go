@@ -16,7 +16,7 @@ type RowPass struct {
 	// Theta has P+1 entries; the residual of a row, in units 1/YInv, is
 	// sum_c Theta_c z_c with v last. Columns of the group apart follow.
 	Theta []float64
-	// ThetaLow is what Theta leaves off, where the state is extended.
+	// ThetaLow is what Theta leaves off, where the state is extended; nil for zeros.
 	ThetaLow []float64
 	// Eliminated is needed if there is a group apart: Whitener is then over what
 	// is left of the other columns.
@@ -521,6 +521,9 @@ func (w *secondWorker) segment(number int) error {
 // It fails with *ChangedError if the input is not the one that pass one saw:
 // sizes and times, and the column sums of every segment bit for bit.
 func Second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options) (*RowSums, error) {
+	if s.Extended && rp.ThetaLow == nil {
+		rp.ThetaLow = make([]float64, len(rp.Theta))
+	}
 	out, retry, err := second(ctx, src, s, rp, o, defaultUnit)
 	if err == nil && retry != defaultUnit {
 		// The unit of the keyed sums did not suit the data: sum again with one that does.

@@ -196,13 +196,16 @@ func TestFarCellIsNoPerfectFit(t *testing.T) {
 	if warned(res, "perfect-fit") || !near(float64(res.Residual.SS), want, want, 1e-6) {
 		t.Errorf("residual sum of squares %v, want %v; warnings %v", res.Residual.SS, want, res.Warnings)
 	}
-	// Read once, the digits are gone: no number is better than a wrong one.
-	res = fit(t, once{tb.source(1000)}, stream.Spec{Outcome: "y", Terms: []string{"x"}}, vcov.Options{Errors: kinds("classical")})
-	if warned(res, "perfect-fit") {
-		t.Error("read once, the fit is called perfect")
-	}
-	if e := &res.Errors[0]; e.Status == "ok" && !near(float64(res.Residual.SS), want, want, 1e-5) {
-		t.Errorf("read once, residual sum of squares %v without a word, want %v", res.Residual.SS, want)
+	// Read once, the digits are gone, of extended sums too: no number is better than a
+	// wrong one.
+	for _, arithmetic := range []string{"double", "extended"} {
+		res = fit(t, once{tb.source(1000)}, stream.Spec{Outcome: "y", Terms: []string{"x"}}, vcov.Options{Errors: kinds("classical"), Arithmetic: arithmetic})
+		if warned(res, "perfect-fit") {
+			t.Errorf("read once, %s: the fit is called perfect", arithmetic)
+		}
+		if e := &res.Errors[0]; e.Status == "ok" && !near(float64(res.Residual.SS), want, want, 1e-5) {
+			t.Errorf("read once, %s: residual sum of squares %v without a word, want %v", arithmetic, res.Residual.SS, want)
+		}
 	}
 }
 

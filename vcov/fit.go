@@ -145,10 +145,11 @@ func (f *fitter) sumLoss() {
 	if x.perfect || x.df() <= 0 {
 		return
 	}
+	eps := 0x1p-53
 	if f.state.Extended && len(f.state.Groups) == 0 {
-		return
+		eps = 0x1p-100
 	}
-	if f.rssLoss = 0x1p-53 * x.svv / x.rss; f.rssLoss > lossLimit {
+	if f.rssLoss = eps * x.svv / x.rss; f.rssLoss > lossLimit {
 		f.note("digits", "the residual sum of squares has about %d digits left: the rows that set shift and scale did not stand for the whole input; --passes 2 keeps them", digits(f.rssLoss))
 	}
 }
@@ -213,7 +214,6 @@ func (f *fitter) second() error {
 	}
 	if x.apart != nil {
 		rp.Eliminated = x.apart.elim
-		rp.ThetaLow = make([]float64, len(x.theta))
 	}
 	seen := map[string]bool{}
 	lever := false
