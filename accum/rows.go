@@ -121,8 +121,8 @@ func (w *loader) whitenCarefully() {
 		lo := w.low[j*stride : j*stride+n]
 		t := f.T[j*l.p0+j]
 		for r, c := range u {
-			p := t * c
-			rest[r] = math.FMA(t, c, -p) + t*lo[r]
+			p := float64(t * c) // rounded, not fused into the sum
+			rest[r] = math.FMA(t, c, -p) + float64(t*lo[r])
 			u[r] = p
 		}
 		for i := range j {
@@ -132,7 +132,7 @@ func (w *loader) whitenCarefully() {
 			}
 			lo := w.low[i*stride : i*stride+n]
 			for r, c := range w.col(1 + i) {
-				p := t * c
+				p := float64(t * c)
 				e := math.FMA(t, c, -p)
 				s := u[r] + p
 				b := s - u[r]
