@@ -61,7 +61,7 @@ func FuzzCSV(f *testing.F) {
 					break
 				}
 				for i, c := range row {
-					row[i] = fmt.Sprintf("%q", strings.ReplaceAll(c, "\r\n", "\n"))
+					row[i] = fmt.Sprintf("%q", newlines(c))
 				}
 				want = append(want, strings.Join(row, "|"))
 			}
@@ -77,7 +77,10 @@ func FuzzCSV(f *testing.F) {
 			src.Close()
 			for i := range got {
 				cells := strings.Split(got[i], "|-")
-				got[i] = strings.ReplaceAll(strings.Join(cells, `|""`), `\r\n`, `\n`)
+				got[i] = strings.Join(cells, `|""`)
+				for strings.Contains(got[i], `\r\n`) {
+					got[i] = strings.ReplaceAll(got[i], `\r\n`, `\n`)
+				}
 				if strings.HasPrefix(got[i], "-") {
 					got[i] = `""` + got[i][1:]
 				}
@@ -91,6 +94,14 @@ func FuzzCSV(f *testing.F) {
 			equalRows(t, fmt.Sprintf("%q", text), got, want)
 		}
 	})
+}
+
+// newlines takes away carriage returns before newlines.
+func newlines(s string) string {
+	for strings.Contains(s, "\r\n") {
+		s = strings.ReplaceAll(s, "\r\n", "\n")
+	}
+	return s
 }
 
 type memory struct{ *bytes.Reader }

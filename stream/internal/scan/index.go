@@ -30,7 +30,7 @@ type Index struct {
 
 // Reset begins at the row at index i, for rows of that many columns.
 func (x *Index) Reset(i, columns int) {
-	if room := max(4096, 2*columns) + 64; len(x.buf) < room {
+	if room := 64*max(64, columns) + 64; len(x.buf) < room {
 		x.buf = make([]int32, room)
 	}
 	x.Ends = append(x.buf[:0], int32(i-1))

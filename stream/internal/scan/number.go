@@ -300,10 +300,8 @@ func float(text []byte, start, end int, point byte) (v float64, ok bool) {
 	if start == end {
 		return math.NaN(), true
 	}
-	if text[start] == '"' {
-		if start, end = start+1, end-1; start == end {
-			return 0, false
-		}
+	if text[start] == '"' && end-start > 2 {
+		start, end = start+1, end-1
 	}
 	var neg int
 	if text[start] == '-' {

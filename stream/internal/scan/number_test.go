@@ -319,7 +319,7 @@ func TestIntegers(t *testing.T) {
 	}
 }
 
-// FuzzNumber compares with strconv, which takes more: hexadecimal, underscores.
+// FuzzNumber compares with strconv, which takes hexadecimal and underscores beside.
 func FuzzNumber(f *testing.F) {
 	for _, s := range []string{"1.5", "-0", "1e400", "9007199254740993", ".5e-300", "123456789012345678901234567890", "1e", "nan", "-inf", "2.2250738585072011e-308", "0.000000000000000000000000123456789012345678901"} {
 		f.Add(s)
@@ -328,14 +328,26 @@ func FuzzNumber(f *testing.F) {
 		if len(s) > 100 || strings.ContainsAny(s, "\n\r") {
 			return
 		}
+		if strings.Trim(s, "0123456789+-.eE") == "" {
+			_, c := columnOf(nil, nil, []byte("\""+s+"\""))
+			var out [1]float64
+			v, st := ParseFloat([]byte(s), '.')
+			if r := c.Floats(0, out[:], '.'); (r == 1) != (st == OK) || r == 1 && math.Float64bits(out[0]) != math.Float64bits(v) {
+				t.Fatalf("Floats of %q in quotes = %v, %d, ParseFloat %v, %d", s, out[0], r, v, st)
+			}
+		}
 		v, st := ParseFloat([]byte(s), '.')
 		want, err := strconv.ParseFloat(s, 64)
 		ours := !strings.ContainsAny(s, "xX_")
 		switch {
-		case st == OK && (err != nil || math.Float64bits(v) != math.Float64bits(want) && v == v):
+		case v != v: // we take nan with a sign
+		case st == OK && (err != nil || math.Float64bits(v) != math.Float64bits(want)):
 			t.Fatalf("ParseFloat(%q) = %v, want %v, %v", s, v, want, err)
 		case ours && (st == OK) != (err == nil):
 			t.Fatalf("ParseFloat(%q) = %v, %d, want %v, %v", s, v, st, want, err)
+		}
+		if s != "" && s[0] == '"' {
+			return // an Index lets through only cells that end in a quote too
 		}
 		_, c := columnOf(nil, nil, []byte(s))
 		var out [1]float64
