@@ -63,13 +63,14 @@ type clusterSums struct {
 	meat      []float64  // sum_g s_g s_g' in solved coordinates
 	apart     *apartMeat // where a group of categories is kept apart
 	*adjusted            // of cr2 and cr3; nil unless asked for
+	shape     *shape     // nil unless asked for
 }
 
 // sumClusters walks over the clusters in order of key, with second moments if adj is
 // given. Time O(G (P K + K^2)).
-func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjusted) (*clusterSums, error) {
+func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjusted, shape *shape) (*clusterSums, error) {
 	k := x.k()
-	c := &clusterSums{scores: sc, meat: make([]float64, k*k), adjusted: adj}
+	c := &clusterSums{scores: sc, meat: make([]float64, k*k), adjusted: adj, shape: shape}
 	s := make([]float64, k)
 	var n sizes
 	err := sc.Each(func(g *accum.Cluster) error {
@@ -82,6 +83,9 @@ func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjus
 		}
 		if adj != nil {
 			adj.add(g.A, g.S)
+			if shape != nil {
+				shape.add(g)
+			}
 		}
 		x.projectVec(g.S, s)
 		for a, t := range s {

@@ -488,7 +488,7 @@ func (f *fitter) clusters() error {
 		}
 		w, _ := waysOf(f.d, k.Cluster)
 		keys = append(keys, w.keys...)
-		full[k.Cluster] = full[k.Cluster] || adjusts(k.Name)
+		full[k.Cluster] = full[k.Cluster] || f.o.wantsMoments(f.d, k)
 	}
 	for _, key := range keys {
 		if f.groups[key] != nil {
@@ -507,10 +507,14 @@ func (f *fitter) clusters() error {
 			continue
 		}
 		var adj *adjusted
+		var sh *shape
 		if full[key] && sc.Moments() && x.apart == nil && x.k() <= momentsMost {
 			adj = newAdjusted(x)
+			if f.o.Shape {
+				sh = newShape(adj, func(k accum.Key) string { return f.d.KeyLabel(key, k.KeyValue) })
+			}
 		}
-		c, err := x.sumClusters(f.ctx, sc, adj)
+		c, err := x.sumClusters(f.ctx, sc, adj, sh)
 		if err != nil {
 			return err
 		}

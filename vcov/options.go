@@ -39,6 +39,8 @@ type Options struct {
 	Dense int
 	// Meter, if not nil, is counted up while the scan runs.
 	Meter *accum.Meter
+	// Shape asks for Result.Clusterings.
+	Shape bool
 	// Timings asks for Run.Timings.
 	Timings bool
 }

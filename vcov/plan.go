@@ -121,6 +121,11 @@ func (o *Options) validate(d *stream.Design) error {
 	return nil
 }
 
+// wantsMoments reports whether a kind takes the second moments of its clusters.
+func (o *Options) wantsMoments(d *stream.Design, k Kind) bool {
+	return adjusts(k.Name) || o.Shape && k.Cluster >= 0 && d.Parts[k.Cluster] == nil
+}
+
 // PlanFit chooses the route from the schema and the model, and arithmetic, where
 // that is open, from rows at places spread over the input.
 func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*Plan, error) {
@@ -160,7 +165,10 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 				clusters[k] = true
 			}
 		case "cr2", "cr3":
-			clusters[e.Cluster], full[e.Cluster] = true, true
+			clusters[e.Cluster] = true
+		}
+		if o.wantsMoments(d, e) {
+			full[e.Cluster] = true
 		}
 	}
 	if o.Passes == 1 && rows {
@@ -217,7 +225,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		route = append(route, "fourth moments")
 	}
 	if len(full) > 0 {
-		p.why("cr2 and cr3 take the second moments of every cluster")
+		p.why("cr2, cr3 and the description of clusters take the second moments of every cluster")
 	}
 	if len(full) > 0 && cats {
 		p.moments = true

@@ -60,6 +60,7 @@ func (f *fitter) result() *Result {
 	for _, t := range tests {
 		r.Hypotheses = append(r.Hypotheses, t...)
 	}
+	f.shapes(r)
 	f.warnings(r)
 	r.Model = f.model()
 	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments, Unread: s.Unread,
@@ -230,4 +231,20 @@ func (f *fitter) timings(r *Result, solve time.Duration) {
 		}
 	}
 	r.Run.Timings = append(r.Run.Timings, Timing{"errors", Number(solve.Seconds())})
+}
+
+// shapes describes the clusters of each clustering once.
+func (f *fitter) shapes(r *Result) {
+	done := map[int]bool{}
+	for _, k := range f.o.Errors {
+		if k.Cluster < 0 || done[k.Cluster] {
+			continue
+		}
+		done[k.Cluster] = true
+		if c := f.groups[k.Cluster]; c != nil && c.shape != nil && c.groups > 1 && !c.failed {
+			s := c.shape.clustering()
+			s.Clusters, s.GroupRows = []string{f.d.Keys[k.Cluster].Text}, c.rows
+			r.Clusterings = append(r.Clusterings, s)
+		}
+	}
 }

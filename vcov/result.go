@@ -58,8 +58,10 @@ type Result struct {
 	R2Kind     string            `json:"r2_kind"` // "centred" or "uncentred"
 	Errors     []Errors          `json:"errors"`
 	Hypotheses []Hypothesis      `json:"hypotheses"`
-	Run        Run               `json:"run"`
-	Warnings   []Warning         `json:"warnings"`
+	// Clusterings describe the clusters of each clustering, if asked for.
+	Clusterings []*Clustering `json:"clusterings,omitempty"`
+	Run         Run           `json:"run"`
+	Warnings    []Warning     `json:"warnings"`
 }
 
 // Model echoes what was asked.

@@ -49,6 +49,7 @@ func renderText(v *view, width int) string {
 		b.WriteByte('\n')
 	}
 	v.writeFooter(n)
+	v.writeDetail(&b, n)
 	if list := findings(v); len(list) > 0 {
 		b.WriteString("\nWhat the errors say\n")
 		for _, f := range list {

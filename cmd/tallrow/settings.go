@@ -42,11 +42,12 @@ type settings struct {
 	scratch    string
 	plan       string
 
-	json       bool
-	output     string
-	quiet      bool
-	timings    bool
-	jsonSchema bool
+	json          bool
+	output        string
+	quiet         bool
+	timings       bool
+	clusterDetail bool
+	jsonSchema    bool
 
 	// from says where each given option came from, for messages: "--terms" or
 	// "quay.toml line 3: terms".
