@@ -467,7 +467,9 @@ func TestRefusals(t *testing.T) {
 	opts := Options{Workers: 2, Memory: 1 << 20}
 	t.Run("levels beyond memory", func(t *testing.T) {
 		d := design(t, src, stream.Spec{Outcome: "y", Terms: []string{"each(x1)"}})
-		_, err := First(t.Context(), src, d, Needs{}, opts)
+		few := opts
+		few.Memory = 1 << 18 // well below what 4,000 levels take, however workers share them
+		_, err := First(t.Context(), src, d, Needs{}, few)
 		var m *MemoryError
 		if !errors.As(err, &m) || !strings.Contains(err.Error(), "each(x1) has") {
 			t.Errorf("error %v, want a *MemoryError that names each(x1)", err)
