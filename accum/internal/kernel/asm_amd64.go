@@ -263,5 +263,8 @@ func scaleWideAVX2(dstHi *float64, dstLo *float64, xHi *float64, xLo *float64, t
 //go:noescape
 func shiftScaleWideAVX2(dstHi *float64, dstLo *float64, xHi *float64, xLo *float64, m float64, mLow float64, inv float64, n int)
 
-// peakAVX2 does 48 n multiplications and additions in registers alone: the ceiling of the benchmarks.
+// peakAVX2 does 12 n multiply-adds in registers alone: the ceiling of the benchmarks.
 func peakAVX2(n int)
+
+// peakAVX512 does 12 n multiply-adds in registers alone: the ceiling of the benchmarks.
+func peakAVX512(n int)

@@ -54,5 +54,6 @@ func All() {
 	axpyWide()
 	scaleWide()
 	shiftScaleWide()
-	peak()
+	peak("peakAVX2", vectors)
+	peak("peakAVX512", vectors512)
 }

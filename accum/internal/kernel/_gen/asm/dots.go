@@ -384,18 +384,17 @@ func vectors512(n int) []VecVirtual {
 	return v
 }
 
-func peak() {
-	TEXT("peakAVX2", NOSPLIT, "func(n int)")
-	Doc("peakAVX2 does 48 n multiplications and additions in registers alone: the ceiling of the benchmarks.")
+func peak(name string, vectors func(n int) []VecVirtual) {
+	TEXT(name, NOSPLIT, "func(n int)")
+	Doc(name + " does 12 n multiply-adds in registers alone: the ceiling of the benchmarks.")
 	n := Load(Param("n"), GP64())
-	acc := vectors(12)
-	u := YMM()
-	for _, s := range append(acc, u) {
+	acc := vectors(13)
+	for _, s := range acc {
 		VXORPD(s, s, s)
 	}
 	Label("loop")
-	for _, s := range acc {
-		VFMADD231PD(u, u, s)
+	for _, s := range acc[1:] {
+		VFMADD231PD(acc[0], acc[0], s)
 	}
 	DECQ(n)
 	JNZ(LabelRef("loop"))
