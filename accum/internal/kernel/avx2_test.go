@@ -39,8 +39,12 @@ func TestDisableAVX2(t *testing.T) {
 	if before != (cpu.X86.HasAVX2 && cpu.X86.HasFMA) {
 		t.Errorf("assembly in use: %v", before)
 	}
+	wide := cpu.X86.HasAVX512F && cpu.X86.HasAVX512DQ && cpu.X86.HasAVX512VBMI2
+	if useAVX512 != (before && wide) {
+		t.Errorf("AVX-512 in use: %v", useAVX512)
+	}
 	restore := DisableAVX2()
-	if useAVX2 {
+	if useAVX2 || useAVX512 {
 		t.Error("still in use when disabled")
 	}
 	inner := DisableAVX2()
@@ -49,9 +53,14 @@ func TestDisableAVX2(t *testing.T) {
 		t.Error("the inner restore undid the outer call")
 	}
 	restore()
-	if useAVX2 != before {
-		t.Errorf("restored to %v", useAVX2)
+	if useAVX2 != before || useAVX512 != (before && wide) {
+		t.Errorf("restored to %v, AVX-512 %v", useAVX2, useAVX512)
 	}
+	restore = DisableAVX512()
+	if useAVX512 || useAVX2 != before {
+		t.Errorf("without AVX-512: AVX2 %v, AVX-512 %v", useAVX2, useAVX512)
+	}
+	restore()
 	if !before {
 		t.Skip("this processor has no AVX2 and FMA: the assembly is not tested")
 	}
