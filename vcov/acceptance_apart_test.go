@@ -271,6 +271,34 @@ func TestThreeCategories(t *testing.T) {
 	compareFits(t, got, want, 1e-10)
 }
 
+// A pipe is summed in epochs, each in a frame of its own.
+func TestEliminationOnAPipe(t *testing.T) {
+	tb := harbour(3000, 90, 7, 4, 9)
+	for name, terms := range map[string][]string{
+		"numbers":  {"pallets", "tonnes", "each(berth)", "each(quay)"},
+		"products": {"pallets", "each(berth)", "each(berth) * tonnes", "each(quay) * tonnes", "each(quay)"},
+	} {
+		t.Run(name, func(t *testing.T) {
+			spec := stream.Spec{Outcome: "minutes", Terms: terms, Where: "berth < 25"}
+			o := vcov.Options{Errors: kinds("classical"), Workers: 2, Dense: 1 << 20}
+			want := fit(t, tb.source(400), spec, o)
+			o.Dense = 1
+			got := fit(t, once{tb.source(400)}, spec, o)
+			compareFits(t, got, want, 1e-10)
+		})
+	}
+}
+
+// Rows and sums of numeric terms keep their digits where the solve is of float64.
+func TestEliminationOfExtendedSums(t *testing.T) {
+	tb := harbour(1500, 90, 7, 4, 5)
+	spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "each(berth)", "each(quay)"}, Keys: []string{"gang"}}
+	o := vcov.Options{Errors: kinds("classical", "hc1", "hc3", "cr1"), Workers: 2, Dense: 1 << 20, Arithmetic: "double"}
+	want := fit(t, tb.source(400), spec, o)
+	o.Dense, o.Arithmetic = 1, "extended"
+	compareFits(t, fit(t, tb.source(400), spec, o), want, 1e-10)
+}
+
 // What does not fit is refused with what takes the memory.
 func TestTooManyLevels(t *testing.T) {
 	tb := cranes(3000, 10, 20, 330)

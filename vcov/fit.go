@@ -139,7 +139,9 @@ func (f *fitter) sumLoss() {
 	if x.blur > blurLimit {
 		f.note("digits", "some terms are so close to combinations of others, or so small beside them, that estimates and errors may have only about %d digits", digits(x.blur))
 	}
-	if fr := f.state.Frame; !f.state.Extended && fr.Lossy() && !x.perfect {
+	if fr := f.state.Frame; x.apart != nil && fr.Lossy() && !x.perfect {
+		f.note("digits", "terms are nearly collinear: some estimates may have only about %d digits, since there are too many levels for a solve with more", int(fr.Digits))
+	} else if !f.state.Extended && fr.Lossy() && !x.perfect {
 		f.note("digits", "terms are nearly collinear: some estimates may have only about %d digits; --arithmetic extended keeps more", int(fr.Digits))
 	}
 	if x.perfect || x.df() <= 0 {
