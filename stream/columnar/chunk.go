@@ -61,6 +61,7 @@ type chunk struct {
 	meta  *format.ColumnMetaData
 	off   int64 // of the next page header
 	end   int64
+	rows  int64 // of the row group
 	left  int64 // rows that no page has brought yet
 	dict  *dictionary
 	page  page
@@ -68,7 +69,11 @@ type chunk struct {
 	winAt int64
 	ahead int64 // how much is read for the next window
 	walk  bool  // only headers are wanted
-	buf   chunkBuffers
+	// Of a row group that is cut.
+	group  int
+	pages  *sharedPages
+	shared *sharedPage // whose page this is
+	buf    chunkBuffers
 }
 
 // chunkBuffers are kept from chunk to chunk, and from segment to segment.
@@ -88,9 +93,10 @@ type chunkBuffers struct {
 
 // open points the chunk at a row group.
 func (c *chunk) open(r io.ReaderAt, col *column, meta *format.ColumnMetaData, rows int64, pos stream.Position) {
+	c.release()
 	pos.Column = col.name
 	start := chunkStart(meta)
-	*c = chunk{r: r, col: col, pos: pos, meta: meta, off: start, end: start + meta.TotalCompressedSize, left: rows, ahead: headWindow, buf: c.buf}
+	*c = chunk{r: r, col: col, pos: pos, meta: meta, off: start, end: start + meta.TotalCompressedSize, rows: rows, left: rows, ahead: headWindow, buf: c.buf}
 	if rows == 0 {
 		c.end = c.off
 	}
@@ -134,6 +140,7 @@ func (c *chunk) header() (pageHeader, error) {
 			return h, c.damage("the page header at byte %d cannot be read: %v", c.off, err)
 		}
 		c.off += int64(k)
+		h.size = int64(k)
 		c.ahead = windowBytes
 		if h.compressed > windowBytes/2 || c.walk && h.compressed > headWindow {
 			c.ahead = headWindow
@@ -195,7 +202,7 @@ func (c *chunk) next() error {
 			return err
 		}
 		if h.values > 0 {
-			return c.load(&h)
+			return c.loadPage(&h, true)
 		}
 		c.off += int64(h.compressed)
 	}
@@ -229,6 +236,7 @@ func (c *chunk) dataHeader() (pageHeader, error) {
 // finish looks whether rows follow that the row group does not know of. What
 // cannot be read as a page there is no row.
 func (c *chunk) finish() error {
+	c.release()
 	c.page = page{}
 	if c.off < c.end {
 		n := min(minHeader, c.end-c.off)

@@ -52,6 +52,7 @@ type File struct {
 	parts   []part
 	walkMu  sync.Mutex
 	walks   map[walkKey]*walk
+	pages   sharedPages
 	closed  sync.Once
 }
 
@@ -115,9 +116,8 @@ func (f *File) open(o stream.Options) error {
 			f.bytes[g] = mulDiv(f.size, before[g], stored)
 		}
 	}
-	var pages int64
-	f.worker, pages = f.survey()
-	f.cut(pages)
+	f.worker = f.workerBytes()
+	f.cut()
 	return nil
 }
 
@@ -144,12 +144,11 @@ func (f *File) Info() stream.Info {
 	return stream.Info{Files: 1, Bytes: f.size, Rows: f.meta.NumRows, Segments: len(f.parts), Rewindable: true, Sampled: true, Format: "parquet", WorkerBytes: f.worker}
 }
 
-// survey looks at the first pages of the largest row group, which stands for the
-// others: the memory of a worker, and the rows in a page on average over the
-// columns, 0 if not one could be read.
-func (f *File) survey() (worker, pages int64) {
+// workerBytes looks at the first pages of the largest row group, which stands for
+// the others.
+func (f *File) workerBytes() int64 {
 	if len(f.meta.RowGroups) == 0 {
-		return 0, 0
+		return 0
 	}
 	largest := 0
 	for g := range f.meta.RowGroups {
@@ -157,21 +156,45 @@ func (f *File) survey() (worker, pages int64) {
 			largest = g
 		}
 	}
-	n := int64(0)
+	total := int64(0)
 	for i := range f.cols {
 		m := &f.meta.RowGroups[largest].Columns[f.cols[i].leaf].MetaData
 		est := 3 * min(m.TotalUncompressedSize, 1<<20)
 		// A file with very many columns is not probed beyond the first ones.
-		if i < 256 {
-			if p := f.probe(&f.cols[i], largest); p.bytes > 0 {
-				est = p.bytes
-				pages += p.rows
-				n++
+		if i < 256 && m.NumValues > 0 {
+			if p := f.probe(&f.cols[i], m); p > 0 {
+				est = p
 			}
 		}
-		worker += est
+		total += est
 	}
-	return worker, pages / max(n, 1)
+	return total
+}
+
+// probe reads the headers of a chunk up to the first data page. 0 if they cannot
+// be read: that is an error of the scan, if it comes so far.
+func (f *File) probe(c *column, m *format.ColumnMetaData) int64 {
+	var ch chunk
+	ch.open(f.file, c, m, m.NumValues, stream.Position{File: f.name})
+	dict := int64(0)
+	for range 4 {
+		if ch.off >= ch.end {
+			return 0
+		}
+		h, err := ch.header()
+		if err != nil {
+			return 0
+		}
+		switch h.typ {
+		case pageDictionary:
+			dict = 2 * int64(h.uncompressed)
+		case pageData, pageDataV2:
+			decoded := max(int64(h.uncompressed), 4*int64(h.values))
+			return int64(h.compressed) + int64(h.uncompressed) + decoded + dict
+		}
+		ch.off += int64(h.compressed)
+	}
+	return 0
 }
 
 // checkUses refuses what a column cannot be read as.
@@ -241,6 +264,7 @@ func (s *scan) Close() error {
 	s.mu.Lock()
 	s.next = len(s.f.parts)
 	s.mu.Unlock()
+	s.f.pages.clear()
 	return nil
 }
 

@@ -1,14 +1,13 @@
 package columnar
 
 import (
+	"errors"
+	"slices"
 	"sync"
-
-	"github.com/tallrow/tallrow/stream"
 )
 
-// A row group of more than hugeRows rows is cut into parts of partRows rows, or
-// the next power of two at which few pages are decoded twice, so that all workers
-// have something to do. Variables for tests.
+// A row group of more than hugeRows rows is cut into parts of partRows rows, so
+// that all workers have something to do. Variables for tests.
 var (
 	hugeRows int64 = 1 << 20
 	partRows int64 = 1 << 19
@@ -21,19 +20,13 @@ type part struct {
 	rows  int64
 }
 
-// cut makes the segments. It depends on the file alone: pages is the number of
-// rows in a page, on average over the columns (0: not known). A page that lies
-// across a cut is decoded on both sides, so parts are at least four pages long; a
-// group that would be one part then stays whole.
-func (f *File) cut(pages int64) {
+// cut makes the segments. They depend on the numbers of rows alone.
+func (f *File) cut() {
 	for g := range f.meta.RowGroups {
 		rows := f.meta.RowGroups[g].NumRows
 		step := rows
-		if rows > hugeRows && pages > 0 {
+		if rows > hugeRows {
 			step = partRows
-			for step < 4*pages && step < rows {
-				step *= 2
-			}
 		}
 		f.parts = append(f.parts, part{group: g, rows: min(step, rows)})
 		for at := step; at < rows; at += step {
@@ -75,12 +68,30 @@ func (f *File) walkOf(group, leaf int) *walk {
 
 // seek moves the chunk, which was just opened, to a row. Whole pages before it
 // are passed over without being decoded, from the last page of w on that is not
-// behind the row. w may be nil.
-func (c *chunk) seek(row int64, w *walk) error {
+// behind the row. w may be nil. With wait unset errBusy is returned if another
+// segment is decoding the page of the row; then seek can be called again.
+func (c *chunk) seek(row int64, w *walk, wait bool) error {
 	if row == 0 {
 		return nil
 	}
-	rows := c.left
+	h, err := c.find(row, w)
+	if err != nil || h.values == 0 {
+		return err
+	}
+	before := c.rows - c.left
+	if err := c.loadPage(&h, wait); err != nil {
+		if err == errBusy {
+			c.off -= h.size
+		}
+		return err
+	}
+	c.page.advance(int(row-before), c.col.maxDef)
+	return nil
+}
+
+// find reads on to the header of the page in which a row lies. The header of no
+// values says that the row is the first of the page that comes next.
+func (c *chunk) find(row int64, w *walk) (pageHeader, error) {
 	c.walk = true
 	defer func() { c.walk = false }()
 	if w != nil {
@@ -92,33 +103,32 @@ func (c *chunk) seek(row int64, w *walk) error {
 			}
 			if at := w.known[i]; at.row <= row && at.off > c.off {
 				if err := c.jump(at); err != nil {
-					return err
+					return pageHeader{}, err
 				}
 			}
 		}
 	}
 	for {
-		before := pageStart{c.off, rows - c.left}
+		before := pageStart{c.off, c.rows - c.left}
+		if before.row == row {
+			if w != nil {
+				w.add(before)
+			}
+			return pageHeader{}, nil
+		}
 		h, err := c.dataHeader()
 		if err != nil {
-			return err
+			return h, err
 		}
-		if n := int64(h.values); before.row+n <= row {
+		if n := int64(h.values); before.row+n > row {
+			if w != nil {
+				w.add(before)
+			}
+			return h, nil
+		} else {
 			c.left -= n
 			c.off += int64(h.compressed)
-			if before.row+n < row {
-				continue
-			}
-			before = pageStart{c.off, row}
-		} else if err := c.load(&h); err != nil {
-			return err
-		} else {
-			c.page.advance(int(row-before.row), c.col.maxDef)
 		}
-		if w != nil {
-			w.add(before)
-		}
-		return nil
 	}
 }
 
@@ -151,38 +161,95 @@ func (w *walk) add(p pageStart) {
 	w.known[i] = p
 }
 
-// probed is what the first pages of a chunk tell.
-type probed struct {
-	bytes int64 // memory for the chunk's pages and dictionary
-	rows  int64 // in the first data page
+// errBusy says that another segment is decoding a page.
+var errBusy = errors.New("columnar: the page is being decoded")
+
+// sharedPages are decoded pages that lie across cuts: some writers put millions of
+// rows into one page, which all parts of a group then read. Those that nobody
+// reads are kept until other pages of their column come, or the scan ends.
+type sharedPages struct {
+	mu   sync.Mutex
+	list []*sharedPage
 }
 
-// probe reads the headers of a chunk up to the first data page. Zero if they
-// cannot be read: that is an error of the scan, if it comes so far.
-func (f *File) probe(c *column, group int) (p probed) {
-	m := &f.meta.RowGroups[group].Columns[c.leaf].MetaData
-	if m.NumValues == 0 {
-		return p
-	}
-	var ch chunk
-	ch.open(f.file, c, m, m.NumValues, stream.Position{File: f.name})
-	dict := int64(0)
-	for range 4 {
-		if ch.off >= ch.end {
+type sharedPage struct {
+	group, leaf int
+	off         int64
+	refs        int // under sharedPages.mu
+
+	mu     sync.Mutex // held while the page is decoded
+	loaded bool
+	page   page
+}
+
+// take returns the page at a place, perhaps not loaded yet.
+func (s *sharedPages) take(group, leaf int, off int64) *sharedPage {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	for _, p := range s.list {
+		if p.group == group && p.leaf == leaf && p.off == off {
+			p.refs++
 			return p
 		}
-		h, err := ch.header()
-		if err != nil {
-			return p
-		}
-		switch h.typ {
-		case pageDictionary:
-			dict = 2 * int64(h.uncompressed)
-		case pageData, pageDataV2:
-			decoded := max(int64(h.uncompressed), 4*int64(h.values))
-			return probed{int64(h.compressed) + int64(h.uncompressed) + decoded + dict, int64(h.values)}
-		}
-		ch.off += int64(h.compressed)
 	}
+	s.list = slices.DeleteFunc(s.list, func(p *sharedPage) bool { return p.refs == 0 && (p.group != group || p.leaf == leaf) })
+	p := &sharedPage{group: group, leaf: leaf, off: off, refs: 1}
+	s.list = append(s.list, p)
 	return p
+}
+
+func (s *sharedPages) give(p *sharedPage) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	p.refs--
+}
+
+// clear forgets the pages that nobody reads.
+func (s *sharedPages) clear() {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.list = slices.DeleteFunc(s.list, func(p *sharedPage) bool { return p.refs == 0 })
+}
+
+// release gives back the shared page that the chunk reads.
+func (c *chunk) release() {
+	if c.shared != nil {
+		c.pages.give(c.shared)
+		c.shared = nil
+	}
+}
+
+// loadPage decodes the data page whose header was just read, or takes it from
+// another part of the row group.
+func (c *chunk) loadPage(h *pageHeader, wait bool) error {
+	c.release()
+	first := c.rows - c.left
+	if c.pages == nil || first/partRows == (first+int64(h.values)-1)/partRows {
+		return c.load(h)
+	}
+	s := c.pages.take(c.group, c.col.leaf, c.off)
+	defer func() {
+		if c.shared == nil {
+			c.pages.give(s)
+		}
+	}()
+	if wait {
+		s.mu.Lock()
+	} else if !s.mu.TryLock() {
+		return errBusy
+	}
+	defer s.mu.Unlock()
+	if !s.loaded {
+		// With memory of its own.
+		own := *c
+		own.buf, own.win = chunkBuffers{}, nil
+		if err := own.load(h); err != nil {
+			return err
+		}
+		s.page, s.loaded = own.page, true
+	}
+	c.shared, c.page = s, s.page
+	c.off += int64(h.compressed)
+	c.left -= int64(h.values)
+	return nil
 }

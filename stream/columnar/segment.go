@@ -93,22 +93,45 @@ func (f *File) newSegment(uses []stream.Use, number, group, last int) *segment {
 	return s
 }
 
-// openGroup points the readers at row s.from of the group.
+// openGroup points the readers at row s.from of the group. Columns whose page is
+// being decoded by another segment are left for the end; the error is that of the
+// first column, whatever the order.
 func (s *segment) openGroup() error {
 	rg := &s.f.meta.RowGroups[s.group]
 	s.left = min(rg.NumRows-s.from, s.rows)
 	s.row = s.f.first[s.group] + s.from
+	s.open = true
 	for j := range s.readers {
-		s.at = j
 		r := &s.readers[j]
 		r.open(s.f.file, r.col, &rg.Columns[r.col.leaf].MetaData, rg.NumRows, stream.Position{File: s.f.name, Group: s.group + 1})
-		if err := r.seek(s.from, s.f.walkOf(s.group, r.col.leaf)); err != nil {
+		if rg.NumRows > hugeRows {
+			r.group, r.pages = s.group, &s.f.pages
+		}
+	}
+	errs := make([]error, len(s.readers))
+	for _, wait := range []bool{false, true} {
+		for j := range s.readers {
+			if wait && errs[j] != errBusy {
+				continue
+			}
+			errs[j] = s.seek(j, wait)
+		}
+	}
+	for j, err := range errs {
+		if s.at = j; err != nil {
 			return err
 		}
 	}
 	s.at = -1
-	s.open = true
 	return nil
+}
+
+// seek points a reader at row s.from of the group.
+func (s *segment) seek(j int, wait bool) (err error) {
+	s.at = j
+	defer s.guard(&err)
+	r := &s.readers[j]
+	return r.seek(s.from, s.f.walkOf(s.group, r.col.leaf), wait)
 }
 
 // guard turns a panic of the decoders into an error. The library is known to
@@ -510,6 +533,7 @@ func (s *segment) Close() error {
 	if s.readers != nil {
 		for j := range s.readers {
 			r := &s.readers[j]
+			r.release()
 			*r = reader{chunk: chunk{buf: r.buf}, f64: r.f64, i64: r.i64, codes: r.codes, null: r.null, tmp: r.tmp}
 		}
 		old := s.readers

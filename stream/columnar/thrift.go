@@ -207,6 +207,7 @@ const (
 
 // pageHeader is what the reader needs of a page header.
 type pageHeader struct {
+	size                     int64 // of the header itself
 	typ                      int32
 	uncompressed, compressed int32
 	crc                      uint32
