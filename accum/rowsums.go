@@ -28,6 +28,9 @@ type RowSums struct {
 	// entries, v last) in segment order, and the second moments of all others.
 	Heavy []HeavyRow
 	Light []float64
+	// Spread is filled under RowPass.Spread: sum e^2 z over the constant and the
+	// numeric terms, then sum e^4; each row as often as its frequency.
+	Spread []float64
 	// Passes is 1, or 2 if the keyed sums needed another unit; Bytes is of all.
 	Passes int
 	Bytes  int64
@@ -81,12 +84,17 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 			w.loneT[i].mergeFrom(o.loneT[i])
 			w.loneC[i].mergeFrom(o.loneC[i])
 		}
+		w.spreadX.merge(o.spreadX)
 		w.maxLever = max(w.maxLever, o.maxLever)
 		w.loneRows += o.loneRows
 		w.heavyCount += o.heavyCount
 		w.heavy = append(w.heavy, o.heavy...)
 	}
 	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Passes: 1, Bytes: p.bytes}
+	if rp.Spread {
+		out.Spread = make([]float64, len(w.spread))
+		w.spreadX.values(out.Spread)
+	}
 	// Meats are judged by the unit's range; scores by their digits too.
 	need, best := false, -1074
 	see := func(t *partials, unit int) {

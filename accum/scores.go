@@ -218,17 +218,10 @@ func (s *State) Fourth(theta []float64, abs bool) (m []float64, ok bool) {
 	l := s.lay
 	p, k := l.p0+2, l.p0+1
 	n := len(s.Columns) + 1
-	at := s.denseAt()
 	m = make([]float64, n*n)
 	for i, e := range s.epochs {
 		j := s.maps[i]
-		th := make([]float64, p)
-		for a := range p {
-			for b := range p {
-				th[b] += theta[at[a]] * j[a*l.width+b]
-			}
-		}
-		c := s.quart.contract(e.fourth, th, k, abs)
+		c := s.quart.contract(e.fourth, s.epochTheta(i, theta, p), k, abs)
 		jk := make([]float64, k*k)
 		for a := range k {
 			for b := range k {
@@ -247,4 +240,33 @@ func (s *State) Fourth(theta []float64, abs bool) (m []float64, ok bool) {
 		}
 	}
 	return m, true
+}
+
+// epochTheta is theta over (1, u, v) in the frame of epoch i.
+func (s *State) epochTheta(i int, theta []float64, p int) []float64 {
+	at, j := s.denseAt(), s.maps[i]
+	th := make([]float64, p)
+	for a := range p {
+		for b := range p {
+			th[b] += theta[at[a]] * j[a*s.lay.width+b]
+		}
+	}
+	return th
+}
+
+// FourthPowers is sum e^4 (each row as often as its frequency) from the fourth
+// moments, and the size of what was added up for it.
+func (s *State) FourthPowers(theta []float64) (sum, gross float64) {
+	p := s.lay.p0 + 2
+	for i, e := range s.epochs {
+		th := s.epochTheta(i, theta, p)
+		net, all := s.quart.contract(e.fourth, th, p, false), s.quart.contract(e.fourth, th, p, true)
+		for a := range p {
+			for b := range p {
+				sum += th[a] * th[b] * net[a*p+b]
+				gross += math.Abs(th[a]*th[b]) * all[a*p+b]
+			}
+		}
+	}
+	return sum, gross
 }

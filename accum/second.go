@@ -38,6 +38,8 @@ type RowPass struct {
 	// out of the meats and returns them one by one, with the second moments of
 	// all other rows, so that 1-h can be formed without cancellation.
 	Heavy bool
+	// Spread asks for RowSums.Spread; not with a group apart.
+	Spread bool
 }
 
 const (
@@ -95,6 +97,10 @@ type secondWorker struct {
 	zs         []float64
 	idx        []int
 	val        []float64
+
+	spread  []float64 // see RowSums.Spread
+	spreadX superVec
+	squares []float64
 
 	maxLever             float64
 	loneRows, heavyCount int64
@@ -179,6 +185,9 @@ func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *second
 	for _, c := range all.scores {
 		w.apart = append(w.apart, newApartScores(c))
 	}
+	if rp.Spread {
+		w.spread, w.spreadX, w.squares = make([]float64, l.p0+2), make(superVec, l.p0+2), make([]float64, stride)
+	}
 	w.e, w.h, w.mult = make([]float64, stride), make([]float64, stride), make([]float64, stride)
 	w.zs = make([]float64, len(w.z))
 	return w
@@ -199,6 +208,16 @@ func (w *secondWorker) add() error {
 		w.residualsWide(e)
 	} else {
 		w.residuals(e)
+	}
+	if rp.Spread {
+		sq, m := w.squares[:n], w.mult[:n]
+		kernel.Scale(sq, e, e)
+		copy(m, sq)
+		if freq {
+			kernel.Scale(m, sq, w.block.Weight[:n])
+		}
+		kernel.Cross(w.spread, l.p0+1, m, stride, 1, w.z, stride, l.p0+1, n)
+		kernel.Cross(w.spread[l.p0+1:], 1, m, stride, 1, sq, stride, 1, n)
 	}
 	h := w.h[:n]
 	clear(h)
@@ -509,6 +528,8 @@ func (w *secondWorker) segment(number int) error {
 			clear(m.gram)
 		}
 	}
+	w.spreadX.addVec(w.spread)
+	clear(w.spread)
 	for i := range w.heavy {
 		if w.heavy[i].segment < 0 {
 			w.heavy[i].segment = number

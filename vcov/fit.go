@@ -240,6 +240,7 @@ func (f *fitter) second() error {
 	rp.Moments = f.plan.moments && x.apart == nil && len(s.Columns) <= momentsMost
 	rp.Scores = f.keys
 	rp.Weights = f.weights(f.kinds, 0)
+	rp.Spread = x.apart == nil && (x.kind == stream.NoWeight || x.kind == stream.Frequency)
 	if len(rp.Weights) > 0 {
 		// hc0 and hc1 want leverages only to find rows that alone decide a coefficient.
 		w, m := x.whitener()

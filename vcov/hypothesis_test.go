@@ -466,3 +466,35 @@ func TestHypothesesBesideManyLevels(t *testing.T) {
 		}
 	}
 }
+
+// The tests that are adjusted for are those of the terms: neither the constant nor
+// an aliased term is one.
+func TestAdjustedPCountsTerms(t *testing.T) {
+	tb, pallets, _, _ := quayTable(200, 6)
+	tb.float("twice", scaled(pallets, 2, 1))
+	spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "twice", "each(barge)"}}
+	for _, method := range []string{"holm", "bh", "none"} {
+		r := fit(t, tb.source(64), spec, vcov.Options{Errors: kinds("classical", "hc1"), Adjust: method})
+		if r.Model.Adjust != method {
+			t.Errorf("method %q, want %q", r.Model.Adjust, method)
+		}
+		for _, e := range r.Errors {
+			if method == "none" {
+				if e.PAdjusted != nil {
+					t.Errorf("adjusted p %v without a method", e.PAdjusted)
+				}
+				continue
+			}
+			if e.PAdjusted[0].Exists() || e.PAdjusted[3].Exists() {
+				t.Errorf("%s: the constant or an aliased term is a test: %v", method, e.PAdjusted)
+			}
+			// Four tests; pallets has by far the smallest p.
+			if got, want := float64(e.PAdjusted[1]), 4*float64(e.P[1]); digits(got, want) < 14 {
+				t.Errorf("%s: smallest p %v of 4 became %v", method, e.P[1], got)
+			}
+		}
+	}
+	if _, err := tryFit(tb.source(64), spec, vcov.Options{Errors: kinds("hc1"), Adjust: "sidak"}); !errors.Is(err, stream.ErrUse) {
+		t.Errorf("an unknown method: %v", err)
+	}
+}

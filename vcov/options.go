@@ -14,6 +14,9 @@ type Options struct {
 	Level  float64 // of intervals; 0 means 0.95
 	// Hypotheses are tested under each of Errors, see stream.Design.ParseHypothesis.
 	Hypotheses []string
+	// Adjust is how the p of the terms are adjusted for their number: "holm", "bh" or
+	// "none" (also the empty string).
+	Adjust string
 	// Passes forces one or two passes; 0 lets the planner choose.
 	Passes int
 	// Arithmetic is "double", "extended", or "auto" (also the empty string): extended

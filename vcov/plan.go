@@ -5,6 +5,7 @@ import (
 	"context"
 	"fmt"
 	"runtime"
+	"slices"
 	"strings"
 
 	"github.com/tallrow/tallrow/accum"
@@ -74,6 +75,9 @@ func (o Options) withDefaults() Options {
 	if o.Level == 0 {
 		o.Level = 0.95
 	}
+	if o.Adjust == "" {
+		o.Adjust = "none"
+	}
 	if o.Workers <= 0 {
 		o.Workers = runtime.GOMAXPROCS(0)
 	}
@@ -92,6 +96,9 @@ func (o *Options) dense() int { return cmp.Or(o.Dense, accum.DenseColumns) }
 func (o *Options) validate(d *stream.Design) error {
 	if !(o.Level > 0 && o.Level < 1) {
 		return stream.Usef("level: found %v, want a number between 0 and 1, such as 0.95", o.Level)
+	}
+	if !slices.Contains(adjustments, o.Adjust) {
+		return stream.Usef("adjust: found %q, want none, holm or bh", o.Adjust)
 	}
 	if o.Passes < 0 || o.Passes > 2 {
 		return stream.Usef("passes: found %d, want 1 or 2", o.Passes)

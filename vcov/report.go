@@ -52,6 +52,9 @@ func (f *fitter) result() *Result {
 	for _, k := range f.o.Errors {
 		x.judged = nil
 		e := f.errorsFor(k)
+		if x.judged != nil && k.Name != "classical" && x.kind != stream.Sampling && f.rssLoss <= lossRefuse {
+			e.Extremes = x.extremes(x.judged)
+		}
 		for i, h := range x.hypotheses {
 			tests[i] = append(tests[i], x.test(h, &e, x.judged, f.o.Level))
 		}
@@ -61,6 +64,8 @@ func (f *fitter) result() *Result {
 		r.Hypotheses = append(r.Hypotheses, t...)
 	}
 	f.shapes(r)
+	f.several(r)
+	r.SpreadTest = f.spreadTest()
 	f.warnings(r)
 	r.Model = f.model()
 	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments, Unread: s.Unread,
@@ -207,7 +212,7 @@ func (f *fitter) model() Model {
 		}
 		m.Errors = append(m.Errors, name)
 	}
-	m.Hypotheses = []string{}
+	m.Hypotheses, m.Adjust = []string{}, f.o.Adjust
 	for _, h := range f.plan.hypotheses {
 		m.Hypotheses = append(m.Hypotheses, hypothesisText(h))
 	}

@@ -58,6 +58,7 @@ type Result struct {
 	R2Kind     string            `json:"r2_kind"` // "centred" or "uncentred"
 	Errors     []Errors          `json:"errors"`
 	Hypotheses []Hypothesis      `json:"hypotheses"`
+	SpreadTest SpreadTest        `json:"spread_test"`
 	// Clusterings describe the clusters of each clustering, if asked for.
 	Clusterings []*Clustering `json:"clusterings,omitempty"`
 	Run         Run           `json:"run"`
@@ -75,6 +76,7 @@ type Model struct {
 	Cluster    []string `json:"cluster"`
 	Errors     []string `json:"errors"`
 	Hypotheses []string `json:"hypotheses"`
+	Adjust     string   `json:"adjust"`   // "none", "holm" or "bh"
 	Missing    string   `json:"missing"`  // "skip" or "stop"
 	BadRows    string   `json:"bad_rows"` // "skip" or "stop"
 	Level      Number   `json:"level"`
@@ -135,9 +137,14 @@ type Errors struct {
 	T         []Number `json:"t"`
 	P         []Number `json:"p"`
 	Log10P    []Number `json:"log10_p"`
+	// PAdjusted is P adjusted for the number of terms by Model.Adjust; the constant is
+	// no test. Nil under "none".
+	PAdjusted []Number `json:"p_adjusted,omitempty"`
 	Low       []Number `json:"low"`
 	High      []Number `json:"high"`
 	Overall   *Overall `json:"overall"`
+	// Extremes is nil for the classical kind and where there is no such combination.
+	Extremes *Extremes `json:"extremes,omitempty"`
 	// Covariance is present up to 200 terms, or on request.
 	Covariance [][]Number `json:"covariance,omitempty"`
 }
@@ -167,6 +174,25 @@ type Overall struct {
 	DF2 Number `json:"df2"`
 	F   Number `json:"f"`
 	P   Number `json:"p"`
+}
+
+// Extremes are the linear combinations of terms, but the constant, whose errors are
+// the largest and the smallest multiples of the classical ones. A combination is given
+// by weights over Result.Terms, of which the one that carries most of it is 1.
+type Extremes struct {
+	WorstRatio Number   `json:"worst_ratio"`
+	Worst      []Number `json:"worst"`
+	BestRatio  Number   `json:"best_ratio"`
+	Best       []Number `json:"best"`
+}
+
+// SpreadTest is Koenker's test of equal spread: whether the squared residuals go with
+// the terms.
+type SpreadTest struct {
+	Statistic Number  `json:"statistic"` // chi-square
+	DF        Number  `json:"df"`
+	P         Number  `json:"p"`
+	Reason    *string `json:"reason"` // why there is none
 }
 
 // Hypothesis is a test that was asked for, under one kind of errors: all of its
