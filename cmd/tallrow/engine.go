@@ -200,7 +200,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 	}
 	p.opts = vcov.Options{
 		Errors: req.withClassical(s.weightKind == "sampling"),
-		Level:  s.level, Hypotheses: s.hypotheses, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
+		Level:  s.level, Hypotheses: s.hypotheses, Adjust: s.adjust, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
 	p.opts.Scratch = s.scratch
@@ -271,7 +271,7 @@ func (s *settings) echo(req request) vcov.Model {
 	return vcov.Model{
 		Outcome: s.outcome, Terms: list(s.terms), Constant: !s.noConstant,
 		Weight: opt(s.weight), WeightKind: opt(s.weightKind), Where: opt(s.where),
-		Cluster: list(req.keys), Errors: list(req.names()), Hypotheses: list(s.hypotheses),
+		Cluster: list(req.keys), Errors: list(req.names()), Hypotheses: list(s.hypotheses), Adjust: s.adjust,
 		Missing: s.missing, BadRows: s.badRows, Level: vcov.Number(s.level), Zone: s.zone.String(),
 	}
 }

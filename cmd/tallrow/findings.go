@@ -1,6 +1,7 @@
 package main
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"slices"
@@ -12,10 +13,12 @@ import (
 
 // Thresholds of the findings, common practice rather than theory.
 const (
+	unevenSpread   = 0.01 // p of the test of equal spread
 	evenSpread     = 1.05 // ratios up to this count as agreement
 	tellRatio      = 1.10 // a ratio worth a sentence
 	fewClusters    = 30
 	unequalSize    = 5.0  // largest over median cluster
+	worseTogether  = 1.5  // ratio of a combination of terms over that of any single one
 	missingShare   = 0.05 // of rows read
 	malformedShare = 0.001
 )
@@ -28,6 +31,7 @@ func findings(v *view) []string {
 	for _, e := range representatives(v.shown) {
 		seen[e] = true
 		list = append(list, againstClassical(v, e)...)
+		list = append(list, worstCombination(v, e)...)
 	}
 	list = append(list, heavyRows(v)...)
 	list = append(list, clusterShape(v)...)
@@ -116,6 +120,9 @@ func againstClassical(v *view, e *vcov.Errors) []string {
 		s := fmt.Sprintf("Under %s and classically the errors agree within 5 %% for all terms", under(e))
 		if len(e.Clusters) == 0 {
 			s = fmt.Sprintf("The spread looks even: %s and classical errors agree within 5 %% for all terms", e.Name())
+			if p := v.res.SpreadTest.P; p.Exists() && p < unevenSpread {
+				s = fmt.Sprintf("The spread goes with the terms, but %s and classical errors agree within 5 %% for all of them", e.Name())
+			}
 		}
 		list = append(list, s+".")
 	} else if far >= 0 && farSize > math.Log(tellRatio) {
@@ -138,6 +145,58 @@ func againstClassical(v *view, e *vcov.Errors) []string {
 			form2(lose, "interval", "intervals"), both(shortList(briefs(lose), 5)), form2(lose, "contains", "contain"), form2(lose, "one did", "ones did")))
 	}
 	return list
+}
+
+// worstCombination tells of a linear combination of terms for which the classical
+// error is much further off than for any single term.
+func worstCombination(v *view, e *vcov.Errors) []string {
+	x := e.Extremes
+	if v.classical == nil || x == nil || !x.WorstRatio.Exists() {
+		return nil
+	}
+	most := 0.0
+	type part struct {
+		weight, size float64
+		name         string
+	}
+	var parts []part
+	for j, t := range v.res.Terms {
+		if v.isConstant(j) || at(x.Worst, j) == 0 {
+			continue
+		}
+		most = math.Max(most, v.ratio(e, j))
+		parts = append(parts, part{at(x.Worst, j), math.Abs(at(x.Worst, j)) * at(v.classical.SE, j), t})
+	}
+	worst := float64(x.WorstRatio)
+	if !(most > 0) || worst < worseTogether*most {
+		return nil
+	}
+	slices.SortStableFunc(parts, func(a, b part) int { return cmp.Compare(b.size, a.size) })
+	text := ""
+	for i, p := range parts {
+		if i == 4 || p.size < 0.1*parts[0].size {
+			text += " and smaller parts of others"
+			break
+		}
+		name := brief(p.name)
+		if strings.ContainsAny(name, " +-") {
+			name = "(" + name + ")"
+		}
+		if w := digits(math.Abs(p.weight), 3); math.Abs(p.weight) != 1 {
+			name = w + " * " + name
+		}
+		switch {
+		case i > 0 && p.weight < 0:
+			text += " - "
+		case i > 0:
+			text += " + "
+		case p.weight < 0:
+			text += "-"
+		}
+		text += name
+	}
+	return []string{fmt.Sprintf("Under %s the classical error is most in doubt for a combination of terms: that of %s is %s times the classical one, that of a single term at most %s times.",
+		under(e), text, strings.TrimPrefix(ratioText1(worst), "x"), strings.TrimPrefix(ratioText1(most), "x"))}
 }
 
 // ratioText1 is ratioText with one decimal where that tells enough.

@@ -29,6 +29,7 @@ func scaled(kind string, clusters []string, times ...float64) *vcov.Result {
 	r.Rows = vcov.Rows{Read: 100, Used: 100, MissingBy: map[string]int64{}}
 	r.Terms = []string{"constant", "pallets", "tonnes"}
 	r.Estimates = []vcov.Number{1, 0.25, -0.15}
+	r.SpreadTest = vcov.SpreadTest{Statistic: 2, DF: 2, P: 0.37}
 	mk := func(kind string, clusters []string, f []float64) vcov.Errors {
 		e := vcov.Errors{Kind: kind, Clusters: clusters, Groups: []int64{}, Status: "ok"}
 		for j, b := range r.Estimates {
@@ -112,6 +113,33 @@ func TestFindingsLeverage(t *testing.T) {
 	r.Errors = append(r.Errors, e)
 	if got := findings(newView(r, nil)); !has(got, "The error of pallets by hc3 is 1.30 times the one by hc1") {
 		t.Errorf("got %q", got)
+	}
+}
+
+// The test of equal spread and the errors need not say the same.
+func TestFindingsSpread(t *testing.T) {
+	r := scaled("hc1", nil, 1, 1, 1)
+	r.SpreadTest.P = 0.001
+	if got := findings(newView(r, nil)); !has(got, "The spread goes with the terms, but hc1 and classical errors agree") || has(got, "looks even") {
+		t.Errorf("got %q", got)
+	}
+}
+
+// A combination of terms is told of where it is much further off than any term.
+func TestFindingsCombination(t *testing.T) {
+	r := scaled("cr1", []string{"quay"}, 9, 1.2, 1.3)
+	x := &vcov.Extremes{WorstRatio: 2.6, Worst: []vcov.Number{0, 1, -0.75}, BestRatio: 1, Best: []vcov.Number{0, 1, 0}}
+	r.Errors[1].Extremes = x
+	if got := findings(newView(r, nil)); !has(got, "that of pallets - 0.750 * tonnes is 2.6 times the classical one, that of a single term at most 1.30 times") {
+		t.Errorf("got %q", got)
+	}
+	x.Worst[2] = 0.05
+	if got := findings(newView(r, nil)); !has(got, "that of pallets and smaller parts of others is 2.6 times") {
+		t.Errorf("got %q", got)
+	}
+	x.WorstRatio = 1.9
+	if got := findings(newView(r, nil)); has(got, "combination") {
+		t.Errorf("not much worse than a term: got %q", got)
 	}
 }
 

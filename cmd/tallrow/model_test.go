@@ -24,6 +24,7 @@ no-constant = true
 errors = "hc1, cr1"
 cluster = ["quay"]
 hypothesis = ["log(pallets) = 1, constant = 0", "each(barge, level=\"b\") = 0"]
+adjust = "bh"
 weight = "n"
 weight-kind = "frequency"
 where = "tonnes > 0 && !night"
@@ -60,7 +61,7 @@ func TestModelFile(t *testing.T) {
 	want := &settings{
 		outcome: "log(minutes)", terms: []string{"log(pallets)", "max(tonnes, 1)", `each(barge, base="a")`},
 		noConstant: true, errors: []string{"hc1", "cr1"}, cluster: []string{"quay"},
-		hypotheses: []string{"log(pallets) = 1, constant = 0", `each(barge, level="b") = 0`}, weight: "n", weightKind: "frequency",
+		hypotheses: []string{"log(pallets) = 1, constant = 0", `each(barge, level="b") = 0`}, adjust: "bh", weight: "n", weightKind: "frequency",
 		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, first: 1000,
 		format: "csv", decimal: "comma", null: []string{"-999", "a, b"}, zone: rome,
 		kinds:  map[string]stream.Kind{"crane": stream.Text, "odd, name = x": stream.Int64},

@@ -261,11 +261,21 @@ func (v *view) intervalColumns() []column {
 			}
 		}
 	}
-	return []column{
+	cols := []column{
 		{head: []string{levelText(v.res.Model.Level) + " interval", "by " + shorten(e.Name(), 18)}, cells: span},
 		{head: []string{"against", "zero"}, cells: drawn, left: true},
 		{head: []string{"p"}, cells: p, left: true},
 	}
+	if len(e.PAdjusted) == k {
+		adj := make([]string, k)
+		for j := range k {
+			if e.PAdjusted[j].Exists() {
+				adj[j] = pText(e.PAdjusted[j], e.Log10P[j])
+			}
+		}
+		cols = append(cols, column{head: []string{"p by", v.res.Model.Adjust}, cells: adj, left: true})
+	}
+	return cols
 }
 
 // writeLegend explains the signs in the table, if there are any.
@@ -313,6 +323,13 @@ func (v *view) writeFooter(n notes) {
 		n.add("clusters", clustersText(c, e))
 	}
 	n.add("fit", v.fitText())
+	if t := v.adjustedText(); t != "" {
+		n.add("adjusted", t)
+	}
+	if s := r.SpreadTest; s.P.Exists() {
+		n.add("spread", fmt.Sprintf("test that the spread of the residuals does not go with the terms (Koenker): chi-square %s on %s, p %s",
+			digits(float64(s.Statistic), 5), wholeOr(s.DF), pText(s.P, 0)))
+	}
 	if t := v.overallText(); t != "" {
 		n.add("together", t)
 	}
@@ -470,6 +487,24 @@ func (v *view) fitText() string {
 		parts = append(parts, fmt.Sprintf("no residual sd: %s degrees of freedom are left", count(r.Residual.DF)))
 	}
 	return strings.Join(parts, "; ")
+}
+
+// adjustedText says what the adjusted p are.
+func (v *view) adjustedText() string {
+	if v.lead == nil || len(v.lead.PAdjusted) == 0 {
+		return ""
+	}
+	tests := 0
+	for _, p := range v.lead.PAdjusted {
+		if p.Exists() {
+			tests++
+		}
+	}
+	what := "the chance of any false finding among them"
+	if v.res.Model.Adjust == "bh" {
+		what = "the expected share of false findings among all findings"
+	}
+	return fmt.Sprintf("p by %s is p for %s looked at together: calling those below a value findings keeps %s below that value", v.res.Model.Adjust, plural(int64(tests), "term", "terms"), what)
 }
 
 func (v *view) overallText() string {

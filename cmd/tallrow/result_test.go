@@ -15,7 +15,7 @@ func sampleResult() *vcov.Result {
 	r := &vcov.Result{
 		Format: vcov.Format, Version: version, Outcome: "minutes",
 		Model: vcov.Model{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "crew", "wet", "night", "each(barge)"},
-			Constant: true, Cluster: []string{"quay"}, Errors: []string{"classical", "hc1", "cr1(quay)"}, Hypotheses: []string{},
+			Constant: true, Cluster: []string{"quay"}, Errors: []string{"classical", "hc1", "cr1(quay)"}, Hypotheses: []string{}, Adjust: "none",
 			Missing: "skip", BadRows: "skip", Level: 0.95, Zone: "UTC"},
 		Input: vcov.Input{Fingerprint: "f00d", Files: 3, Bytes: 31 << 20},
 		Rows: vcov.Rows{Read: 2_000_000, Used: 1_884_501, Missing: 110_346, Excluded: 3_000, Malformed: 2_153, ZeroWeight: 0,
@@ -25,6 +25,7 @@ func sampleResult() *vcov.Result {
 		Aliased: []vcov.Alias{}, BaseLevels: map[string]string{"barge": "a"},
 		Residual: vcov.Residual{DF: 1_884_492, SD: 12.3141, SS: 2.8576e8},
 		R2:       0.81234, R2Adjusted: 0.81233, R2Kind: "centred", Hypotheses: []vcov.Hypothesis{},
+		SpreadTest: vcov.SpreadTest{Statistic: 1234.5, DF: 8, P: 1e-200},
 		Run: vcov.Run{Passes: 1, Route: "fourth moments", Arithmetic: "double", Workers: 2, Segments: 16,
 			Bytes: 31 << 20, Seconds: 1.234, PeakBytes: 88 << 20, Condition: 12.5},
 		Warnings: []vcov.Warning{},

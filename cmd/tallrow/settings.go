@@ -26,6 +26,7 @@ type settings struct {
 	cluster    []string
 	level      float64
 	hypotheses []string
+	adjust     string
 	first      int64
 
 	format   string
@@ -57,7 +58,7 @@ type settings struct {
 
 func newSettings() *settings {
 	return &settings{
-		missing: "skip", badRows: "stop", level: 0.95, arithmetic: "auto",
+		missing: "skip", badRows: "stop", level: 0.95, adjust: "none", arithmetic: "auto",
 		format: "auto", decimal: "point", zone: time.UTC,
 		workers: runtime.GOMAXPROCS(0),
 		from:    map[string]string{},
