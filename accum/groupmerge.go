@@ -1,5 +1,7 @@
 package accum
 
+import "unsafe"
+
 // groupPart is the sums of a key in one source; tag is the number of its store.
 type groupPart struct {
 	groupSums
@@ -56,35 +58,41 @@ func mergeCursors(cs []*cursor, f func([]groupPart) error) (err error) {
 		sink(h, i)
 	}
 	var parts []groupPart
-	var from []*cursor
+	var text []byte
 	for len(h) > 0 {
-		// Take all cursors at the lowest key off the heap before any is moved on: their
-		// sums must stay.
-		parts, from = parts[:0], from[:0]
-		for len(h) > 0 && (len(from) == 0 || h[0].cur.compare(from[0].cur) == 0) {
+		var key groupSums
+		n := 0
+		for ; len(h) > 0; sink(h, 0) {
 			c := h[0]
-			h[0] = h[len(h)-1]
-			h = h[:len(h)-1]
-			sink(h, 0)
-			from = append(from, c)
-			if last := len(parts) - 1; last >= 0 && parts[last].tag == c.tag {
-				parts[last].rows += c.cur.rows
-				mergeFixed(parts[last].sums, c.cur.sums)
-			} else {
-				parts = append(parts, groupPart{*c.cur, c.tag})
+			if n == 0 {
+				key.ord = c.cur.ord
+				text = append(text[:0], c.cur.text...) // the cursor's goes when it moves on
+				key.text = unsafe.String(unsafe.SliceData(text), len(text))
+			} else if c.cur.ord != key.ord || c.cur.text != key.text {
+				break
 			}
-		}
-		if err := f(parts); err != nil {
-			return err
-		}
-		for _, c := range from {
+			if n > 0 && parts[n-1].tag == c.tag {
+				parts[n-1].rows += c.cur.rows
+				mergeFixed(parts[n-1].sums, c.cur.sums)
+			} else {
+				if n == len(parts) {
+					parts = append(parts, groupPart{})
+				}
+				p := &parts[n]
+				n++
+				p.tag, p.ord, p.text, p.rows = c.tag, key.ord, key.text, c.cur.rows
+				p.sums = append(p.sums[:0], c.cur.sums...)
+			}
 			if c.cur, err = c.next(); err != nil {
 				return err
 			}
-			if c.cur != nil {
-				h = append(h, c)
-				rise(h)
+			if c.cur == nil {
+				h[0] = h[len(h)-1]
+				h = h[:len(h)-1]
 			}
+		}
+		if err := f(parts[:n]); err != nil {
+			return err
 		}
 	}
 	return nil
@@ -117,31 +125,19 @@ func sink(h []*cursor, i int) {
 	}
 }
 
-func rise(h []*cursor) {
-	for i := len(h) - 1; i > 0; {
-		up := (i - 1) / 2
-		if !before(h[i], h[up]) {
-			return
-		}
-		h[i], h[up] = h[up], h[i]
-		i = up
-	}
-}
-
-// reader walks over the keys in memory. The sums it gives may be changed only by
-// who does not walk again, so they are copies.
+// reader walks over the keys in memory.
 func (s *groupStore) reader() func() (*groupSums, error) {
 	refs := s.sorted()
 	var g groupSums
-	sums := make([]fixed, s.width)
 	i := 0
 	return func() (*groupSums, error) {
 		if i == len(refs) {
 			return nil, nil
 		}
+		if i%warmRecs == 0 {
+			s.warm(refs[i:min(i+warmRecs, len(refs))])
+		}
 		s.read(refs[i], &g)
-		copy(sums, g.sums)
-		g.sums = sums
 		i++
 		return &g, nil
 	}

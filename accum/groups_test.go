@@ -314,7 +314,7 @@ func TestPackFixed(t *testing.T) {
 	rng := rand.New(rand.NewPCG(8, 8))
 	check := func(f fixed) {
 		t.Helper()
-		b := appendFixed([]byte{1}, f)
+		b := appendFixed([]byte{1}, []fixed{f})
 		if len(b) > 18 {
 			t.Fatalf("%v takes %d bytes", f, len(b)-1)
 		}
@@ -346,7 +346,7 @@ func TestPackFixed(t *testing.T) {
 		check(f)
 	}
 	x, _ := toFixed(0.7, defaultUnit)
-	if b := appendFixed(nil, x); len(b) > 9 {
+	if b := appendFixed(nil, []fixed{x}); len(b) > 9 {
 		t.Errorf("a float64 takes %d bytes", len(b))
 	}
 }

@@ -119,8 +119,9 @@ type groupStore struct {
 	keys   atomic.Int64 // in memory
 	texts  atomic.Int64 // their bytes
 	runs   []*run
-	file   *runFile // that the next run goes to
-	seen   partials // of all workers that have finished
+	file   *runFile      // that the next run goes to
+	seen   partials      // of all workers that have finished
+	warmed atomic.Uint64 // see groupTable
 }
 
 // groupTable is a partition: an open-addressing table of records. The first
@@ -240,13 +241,33 @@ func (t *groupTable) warm(s *groupStore, b *groupBatch) {
 	for i, k := range b.key {
 		b.ids[i] = t.slots[hashInt(int64(k))&mask]
 	}
-	last := s.rec() - 1
 	var x uint64
 	for _, id := range b.ids {
-		rec := t.record(s, max(int(id), firstRecs+1)-1)
-		x ^= rec[0].lo ^ rec[last].lo
+		x ^= lines(t.record(s, max(int(id), firstRecs+1)-1))
 	}
 	t.warmed = x
+}
+
+// lines reads the start of a record line by line of the cache: what follows comes
+// by itself.
+func lines(rec []fixed) (x uint64) {
+	for i := 0; i < min(len(rec), 16); i += 4 {
+		x ^= rec[i].lo
+	}
+	return x ^ rec[len(rec)-1].lo
+}
+
+// warmRecs is how many records are read ahead of their use.
+const warmRecs = 64
+
+// warm reads records that lie far apart, see groupTable.warm.
+func (s *groupStore) warm(refs []ref) {
+	var x uint64
+	for _, r := range refs {
+		_, rec := s.record(r)
+		x ^= lines(rec)
+	}
+	s.warmed.Store(x)
 }
 
 // fresh makes the next record.

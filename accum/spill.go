@@ -6,6 +6,7 @@ import (
 	"hash/crc32"
 	"math"
 	"math/bits"
+	"slices"
 	"sync"
 	"unsafe"
 )
@@ -192,7 +193,10 @@ func (s *groupStore) closeRuns() {
 func (s *groupStore) pack(dst []byte, refs []ref) []byte {
 	e := blockEncoder{buf: dst}
 	var g groupSums
-	for _, r := range refs {
+	for i, r := range refs {
+		if i%warmRecs == 0 {
+			s.warm(refs[i:min(i+warmRecs, len(refs))])
+		}
 		s.read(r, &g)
 		e.add(&g, s.text)
 	}
@@ -231,9 +235,7 @@ func (e *blockEncoder) add(g *groupSums, text bool) {
 		e.last = g.ord
 	}
 	e.buf = binary.AppendUvarint(e.buf, uint64(g.rows))
-	for _, f := range g.sums {
-		e.buf = appendFixed(e.buf, f)
-	}
+	e.buf = appendFixed(e.buf, g.sums)
 }
 
 // end returns the block; it is valid until the next add.
@@ -248,28 +250,39 @@ func (e *blockEncoder) end() []byte {
 
 const wholeFixed = 0xff
 
-// appendFixed appends a number without its zero bytes at the end and its sign bytes
-// in front: a byte with the number of the former in the high half and of the bytes
-// that follow in the low half; wholeFixed before all 16 bytes.
-func appendFixed(dst []byte, f fixed) []byte {
-	if f == (fixed{}) {
-		return append(dst, 0)
+// appendFixed appends numbers, each without its zero bytes at the end and its sign
+// bytes in front: a byte with the number of the former in the high half and of the
+// bytes that follow in the low half; wholeFixed before all 16 bytes.
+func appendFixed(dst []byte, fs []fixed) []byte {
+	at := len(dst)
+	dst = slices.Grow(dst, 17*len(fs))
+	dst = dst[:at+17*len(fs)]
+	for _, f := range fs {
+		zeros := 0
+		switch {
+		case f.lo != 0:
+			zeros = bits.TrailingZeros64(f.lo) / 8
+		case f.hi != 0:
+			zeros = 8 + bits.TrailingZeros64(uint64(f.hi))/8
+		}
+		x, top := f.shiftRight(uint(8 * zeros))
+		p := dst[at : at+17]
+		if top != int64(x)>>63 {
+			p[0] = wholeFixed
+			binary.LittleEndian.PutUint64(p[1:], f.lo)
+			binary.LittleEndian.PutUint64(p[9:], uint64(f.hi))
+			at += 17
+			continue
+		}
+		n := (bits.Len64(x^uint64(int64(x)>>63)) + 8) / 8 // one bit more for the sign
+		if x == 0 {
+			n = 0
+		}
+		p[0] = byte(zeros<<4 | n)
+		binary.LittleEndian.PutUint64(p[1:], x)
+		at += 1 + n
 	}
-	zeros := bits.TrailingZeros64(f.lo)
-	if f.lo == 0 {
-		zeros = 64 + bits.TrailingZeros64(uint64(f.hi))
-	}
-	zeros /= 8
-	x, top := f.shiftRight(uint(8 * zeros))
-	if top != int64(x)>>63 {
-		dst = append(dst, wholeFixed)
-		dst = binary.LittleEndian.AppendUint64(dst, f.lo)
-		return binary.LittleEndian.AppendUint64(dst, uint64(f.hi))
-	}
-	n := (bits.Len64(x^uint64(int64(x)>>63)) + 8) / 8 // one bit more for the sign
-	dst = append(dst, byte(zeros<<4|n))
-	dst = binary.LittleEndian.AppendUint64(dst, x)
-	return dst[:len(dst)-8+n]
+	return dst[:at]
 }
 
 // shiftRight returns the low and high half of f shifted by s < 128.
