@@ -31,9 +31,18 @@
 // level or cluster, fourth moments and leverages are float64 and take z rounded,
 // which is right to its last bit. Weights are float64, their roots are not.
 //
+// # Clusters
+//
+// The partial sums of a fold by cluster (groups) go to one store for all workers
+// (groupStore), spread over partitions by the hash of the key. What is beyond its
+// share of memory (HeldClusters) is written to scratch as runs in order of key, and
+// Scores.Each merges runs and memory while it walks over the clusters. Adding is
+// associative, so that does not show in the bits either.
+//
 // # Limits
 //
-// One worker holds its own keyed tables, joined at the end; pairs of levels of two
-// categories are summed in tables common to all. The columns beside the group
+// One worker holds its own tables by level, joined at the end; pairs of levels of
+// two categories are summed in tables common to all. With a group apart all
+// clusters are held in memory. The columns beside the group
 // apart make dense matrices, whose solve takes the cube of their number.
 package accum

@@ -65,6 +65,9 @@ const (
 	costQuartic       = 0.08 // for each product of four
 	costRowTerm       = 3.0  // row pass, for each term
 	costRowPair       = 0.1  // row pass, leverage, for each pair of terms
+	costKey           = 20.0 // finding the cluster of a row
+	costClusterPair   = 5.0  // second moments of clusters, for each product
+	costScore         = 3.0  // scores of clusters, for each term
 	maxPipeTerms      = 25   // beyond it fourth moments cost more than a copy of the input
 )
 
@@ -198,6 +201,18 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	quartic := (c + 2) * (c + 1) * c * (c + 3) / 24 * costQuartic
 	row := gram + c*costRowTerm + c*c*costRowPair
 	second := read + row
+	keys := float64(len(clusters))
+	moments, scores := keys*(costKey+c*(c+1)/2*costClusterPair), keys*(costKey+c*costScore)
+	if len(clusters) > 0 && len(full) == 0 && !rows && o.Passes == 0 && info.Rewindable {
+		one := moments
+		if hc {
+			one += quartic
+		}
+		if rows = second+scores < one; rows {
+			p.why("a second pass that sums the scores of clusters (about %.0f ns a row) is cheaper than second moments of clusters%s in the first (about %.0f)",
+				second+scores, map[bool]string{true: " and fourth moments"}[hc], one)
+		}
+	}
 	if hc && !rows {
 		switch pipe := !info.Rewindable; {
 		case o.Passes == 2:
@@ -246,7 +261,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		p.needs.Keep = len(full) > 0
 		p.PerCluster = accum.ClusterBytes(int(c * (c + 1) / 2))
 		p.ClusterMemory = accum.HeldClusters(o.Memory)
-		p.cost("cluster sums", float64(len(clusters))*(c*(c+1)/2+20))
+		p.cost("cluster sums", moments)
 		route = append(route, "cluster sums")
 		switch {
 		case p.needs.Keep: // the reason stands above
@@ -263,7 +278,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		}
 		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("second read", read)
-		p.cost("row pass", row+float64(len(clusters))*(c+20))
+		p.cost("row pass", row+scores)
 		route = append(route, "row pass")
 	}
 	if len(route) == 0 {
