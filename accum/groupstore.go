@@ -503,13 +503,6 @@ type groupSums struct {
 	sums []fixed
 }
 
-func (g *groupSums) compare(o *groupSums) int {
-	if c := cmp.Compare(g.ord, o.ord); c != 0 {
-		return c
-	}
-	return cmp.Compare(g.text, o.text)
-}
-
 // distinct counts the keys, in memory and on scratch.
 func (s *groupStore) distinct() (int64, error) {
 	if len(s.runs) == 0 {
