@@ -88,12 +88,6 @@ func dots5x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *f
 //go:noescape
 func dots6x2AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
 
-// dots1x3AVX2 adds the 1 x 3 dot products of columns of a and b. Those of one column of b
-// are side by side in dst, step elements behind those of the column before; step grows by grow.
-//
-//go:noescape
-func dots1x3AVX2(dst *float64, step int, grow int, a *float64, strideA int, b *float64, strideB int, rows int)
-
 // dots2x3AVX2 adds the 2 x 3 dot products of columns of a and b. Those of one column of b
 // are side by side in dst, step elements behind those of the column before; step grows by grow.
 //

@@ -39,7 +39,7 @@ func gram(dst []float64, x []float64, stride, rows, cols int) {
 
 func cross(dst []float64, ldd int, a []float64, strideA, colsA int, b []float64, strideB, colsB, rows int) {
 	switch {
-	case useAVX512:
+	case useAVX512 && colsA > 1: // one column leaves too few sums for wide registers
 		cross512(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows)
 	case useAVX2:
 		crossAVX2(dst, ldd, a, strideA, colsA, b, strideB, colsB, rows)
@@ -279,8 +279,6 @@ func rectangle(p, q int, dst *float64, step, grow int, a *float64, strideA int, 
 		dots5x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*6 + 2:
 		dots6x2AVX2(dst, step, grow, a, strideA, b, strideB, rows)
-	case 4*1 + 3:
-		dots1x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*2 + 3:
 		dots2x3AVX2(dst, step, grow, a, strideA, b, strideB, rows)
 	case 4*3 + 3:

@@ -28,8 +28,8 @@ func All() {
 	ConstraintExpr("!noasm")
 	mask := maskTable()
 	for q := range maxA {
-		for p := range maxA[q] {
-			rectangle(mask, p+1, q+1)
+		for p := 1 + q/2; p <= maxA[q]; p++ { // 1 x 3 is never cut
+			rectangle(mask, p, q+1)
 		}
 	}
 	for p := 1; p <= maxTriangle; p++ {
