@@ -9,6 +9,10 @@ import (
 // DenseColumns is the default of Options.Dense.
 const DenseColumns = 1000
 
+// manyColumns is the size above which products of matrices are left to tiles and
+// all processors.
+const manyColumns = 256
+
 // Apart is the group of categories with most columns, whose products are kept
 // apart: levels exclude each other, so all its products with itself are Parts x
 // Parts blocks, one for each combination of levels.
@@ -274,6 +278,23 @@ func columns(dst, src []float64, n, m, stride int) {
 // symmetric k x k matrix m, on all processors. Time O(rows k^2).
 func TimesMatrix(a, m []float64, k int) {
 	timesMatrix(a, k, k, m, func(i int, row []float64) { copy(a[i*k:], row) })
+}
+
+// RowProducts returns A B', the products of the rows of a with those of b, k numbers
+// each, on all processors. Time O(rows k) for each row of a.
+func RowProducts(a, b []float64, k int) []float64 {
+	if k == 0 {
+		return nil
+	}
+	const chunk = 32
+	rows, cols := len(a)/k, len(b)/k
+	out := make([]float64, rows*cols)
+	parallel((rows+chunk-1)/chunk, func(c int) {
+		at := c * chunk
+		n := min(chunk, rows-at)
+		kernel.Cross(out[at*cols:], cols, a[at*k:], k, n, b, k, cols, k)
+	})
+	return out
 }
 
 // QuadraticForms returns x'M x for each of the rows x of k numbers in a, M

@@ -206,6 +206,9 @@ func (s *State) loneBases(only []where, cols []bool) {
 
 // outer returns W W' for the n x k matrix W.
 func outer(w []float64, n, k int) []float64 {
+	if k > manyColumns {
+		return RowProducts(w, w, k)
+	}
 	out := make([]float64, n*n)
 	for i := range n {
 		for j := 0; j <= i; j++ {

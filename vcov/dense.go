@@ -1,6 +1,10 @@
 package vcov
 
-import "math"
+import (
+	"math"
+
+	"github.com/tallrow/tallrow/accum"
+)
 
 func dot(a, b []float64) float64 {
 	var s float64
@@ -22,28 +26,41 @@ func axpy(t float64, x, y []float64) {
 // inverseUpper inverts an n x n upper triangle given row by row.
 func inverseUpper(a []float64, n int) []float64 {
 	inv := make([]float64, n*n)
-	for j := range n {
-		inv[j*n+j] = 1 / a[j*n+j]
-		for i := j - 1; i >= 0; i-- {
-			var s float64
-			for t := i + 1; t <= j; t++ {
-				s = math.FMA(a[i*n+t], inv[t*n+j], s)
-			}
-			inv[i*n+j] = -s / a[i*n+i]
+	for i := n - 1; i >= 0; i-- {
+		row := inv[i*n : (i+1)*n]
+		for t := i + 1; t < n; t++ {
+			axpy(a[i*n+t], inv[t*n+t:(t+1)*n], row[t:])
 		}
+		for j := i + 1; j < n; j++ {
+			row[j] = -row[j] / a[i*n+i]
+		}
+		row[i] = 1 / a[i*n+i]
 	}
 	return inv
 }
 
-// sandwich returns A B A' for k x k matrices, exactly symmetric.
+// manyColumns is the size above which products of matrices are left to tiles and
+// all processors.
+const manyColumns = 256
+
+// sandwich returns A B A' for k x k matrices, B symmetric, exactly symmetric.
 func sandwich(a, b []float64, k int) []float64 {
+	out := make([]float64, k*k)
+	if k > manyColumns {
+		p := accum.RowProducts(accum.RowProducts(a, b, k), a, k)
+		for i := range k {
+			for j := 0; j <= i; j++ {
+				out[i*k+j], out[j*k+i] = p[i*k+j], p[i*k+j]
+			}
+		}
+		return out
+	}
 	t := make([]float64, k*k)
 	for i := range k {
 		for j, x := range a[i*k : (i+1)*k] {
 			axpy(x, b[j*k:(j+1)*k], t[i*k:(i+1)*k])
 		}
 	}
-	out := make([]float64, k*k)
 	for i := range k {
 		for j := 0; j <= i; j++ {
 			x := dot(t[i*k:(i+1)*k], a[j*k:(j+1)*k])
@@ -53,8 +70,11 @@ func sandwich(a, b []float64, k int) []float64 {
 	return out
 }
 
-// sandwichDiagonal is the diagonal of sandwich, bit for bit.
+// sandwichDiagonal is the diagonal of sandwich.
 func sandwichDiagonal(a, b []float64, k int) []float64 {
+	if k > manyColumns {
+		return accum.QuadraticForms(a, b, k)
+	}
 	out := make([]float64, k)
 	t := make([]float64, k)
 	for i := range k {
@@ -175,6 +195,19 @@ func (e *elimination) inverse() []float64 {
 	m, k := len(e.kept), e.k
 	h := e.half()
 	out := make([]float64, k*k)
+	if m > manyColumns {
+		kept := make([]float64, 0, m*m)
+		for _, i := range e.kept {
+			kept = append(kept, h[i*m:(i+1)*m]...)
+		}
+		p := accum.RowProducts(kept, kept, m)
+		for a, i := range e.kept {
+			for b, j := range e.kept[:a+1] {
+				out[i*k+j], out[j*k+i] = p[a*m+b], p[a*m+b]
+			}
+		}
+		return out
+	}
 	for _, i := range e.kept {
 		for _, j := range e.kept {
 			if j <= i {
