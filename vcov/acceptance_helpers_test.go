@@ -105,7 +105,7 @@ func kinds(names ...string) []vcov.Kind {
 	var ks []vcov.Kind
 	for _, n := range names {
 		k := vcov.Kind{Name: n, Cluster: -1}
-		if strings.HasPrefix(n, "cr") {
+		if strings.HasPrefix(n, "cr") || strings.HasPrefix(n, "wc") {
 			k.Cluster = 0
 			if name, at, ok := strings.Cut(n, ":"); ok {
 				k.Name = name

@@ -64,13 +64,14 @@ type clusterSums struct {
 	apart     *apartMeat // where a group of categories is kept apart
 	*adjusted            // of cr2 and cr3; nil unless asked for
 	shape     *shape     // nil unless asked for
+	wild      *wild      // nil unless asked for, or too large
 }
 
 // sumClusters walks over the clusters in order of key, with second moments if adj is
 // given. Time O(G (P K + K^2)).
-func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjusted, shape *shape) (*clusterSums, error) {
+func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjusted, shape *shape, w *wild) (*clusterSums, error) {
 	k := x.k()
-	c := &clusterSums{scores: sc, meat: make([]float64, k*k), adjusted: adj, shape: shape}
+	c := &clusterSums{scores: sc, meat: make([]float64, k*k), adjusted: adj, shape: shape, wild: w}
 	s := make([]float64, k)
 	var n sizes
 	err := sc.Each(func(g *accum.Cluster) error {
@@ -85,6 +86,11 @@ func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjus
 			adj.add(g.A, g.S)
 			if shape != nil {
 				shape.add(g)
+			}
+			if c.wild != nil {
+				if c.wild.add(adj); len(c.wild.h) > wildMemory {
+					c.wild = nil
+				}
 			}
 		}
 		x.projectVec(g.S, s)

@@ -56,6 +56,9 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	r := f.result()
+	if f.fail != nil {
+		return nil, f.fail
+	}
 	f.timings(r, time.Since(begin))
 	r.Run.Seconds = Number(time.Since(start).Seconds())
 	return r, nil
@@ -87,6 +90,7 @@ type fitter struct {
 	warn    []Warning
 	told    map[string]bool // kinds and terms of warnings that errors were left out
 	route   string
+	fail    error // of the bootstrap
 }
 
 // first runs pass one, again in a better frame if the data ask for it.
@@ -511,19 +515,28 @@ func (f *fitter) clusters() error {
 		}
 		var adj *adjusted
 		var sh *shape
+		var wd *wild
 		if full[key] && sc.Moments() && x.apart == nil && x.k() <= momentsMost {
 			adj = newAdjusted(x)
+			if f.bootstraps(key) {
+				wd = newWild(x)
+			}
 			if f.o.Shape {
 				sh = newShape(adj, func(k accum.Key) string { return f.d.KeyLabel(key, k.KeyValue) })
 			}
 		}
-		c, err := x.sumClusters(f.ctx, sc, adj, sh)
+		c, err := x.sumClusters(f.ctx, sc, adj, sh, wd)
 		if err != nil {
 			return err
 		}
 		f.groups[key] = c
 	}
 	return nil
+}
+
+// bootstraps reports whether a kind asked for draws over the clusters of a key.
+func (f *fitter) bootstraps(key int) bool {
+	return slices.ContainsFunc(f.o.Errors, func(k Kind) bool { return k.Cluster == key && bootstraps(k.Name) })
 }
 
 // close gives back memory and scratch files.
@@ -556,6 +569,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 			e.GroupRows = sums[0].rows
 		}
 	}
+	more := adjusts(k.Name) || bootstraps(k.Name)
 	switch {
 	case x.perfect:
 		df := 1.0
@@ -573,13 +587,16 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	case s.Coarse && f.sums == nil:
 		x.unavailable(e, "the clusters' sums lost digits; use --passes 2")
 		return
-	case adjusts(k.Name) && sums[0].adjusted == nil && x.apart != nil:
+	case more && sums[0].adjusted == nil && x.apart != nil:
 		x.unavailable(e, "a category with too many levels stands apart, and %s takes the second moments of every cluster over all columns; cr1 does not", k.Name)
 		return
-	case adjusts(k.Name) && sums[0].adjusted == nil:
+	case more && sums[0].adjusted == nil:
 		x.unavailable(e, "%s takes the second moments of every cluster, kept up to %d columns; the model has %d", k.Name, momentsMost, len(s.Columns))
 		return
-	case adjusts(k.Name) && sums[0].adjusted.failed:
+	case bootstraps(k.Name) && sums[0].wild == nil:
+		x.unavailable(e, "%s keeps the second moments of all clusters in memory; for so many cr1 does as well", k.Name)
+		return
+	case more && sums[0].adjusted.failed:
 		x.unavailable(e, "the eigenvalues of a cluster's leverages were not found")
 		return
 	case len(w.dims) > 1 && x.apart != nil:
@@ -600,6 +617,8 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		if clipped > 0 {
 			f.note("repaired", "the covariance by %s had %d negative eigenvalue(s), up to %.2g of the largest; they were set to zero, and errors that rest on them are not given", e.Name(), clipped, reach)
 		}
+	case bootstraps(k.Name):
+		r = x.clusterRobust("cr1", sums[0])
 	default:
 		r = x.clusterRobust(k.Name, sums[0])
 	}
@@ -618,6 +637,9 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		e.Factor = Number(nan) // each set of dimensions has its own
 	}
 	f.tellLost(e, r)
+	if bootstraps(k.Name) {
+		f.fail = f.bootstrap(e, k.Name, sums[0])
+	}
 	if x.apart != nil && x.rank() < fewest {
 		f.note("no-joint-test", "%s has no joint test of all terms: clusters join the levels of %s, which was eliminated", e.Name(), x.apart.text())
 	}

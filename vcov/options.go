@@ -42,6 +42,11 @@ type Options struct {
 	Dense int
 	// Meter, if not nil, is counted up while the scan runs.
 	Meter *accum.Meter
+	// Draws, Seed and BootWeights are of the wild bootstrap: 0 draws are 9,999;
+	// weights are "signs", "six-point" or, by the number of clusters, "auto".
+	Draws       int
+	Seed        uint64
+	BootWeights string
 	// Shape asks for Result.Clusterings.
 	Shape bool
 	// Timings asks for Run.Timings.

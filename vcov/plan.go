@@ -106,26 +106,29 @@ func (o *Options) validate(d *stream.Design) error {
 	if o.Passes < 0 || o.Passes > 2 {
 		return stream.Usef("passes: found %d, want 1 or 2", o.Passes)
 	}
+	if err := o.checkBootstrap(); err != nil {
+		return err
+	}
 	if _, ok := arithmetics[o.Arithmetic]; !ok {
 		return stream.Usef("arithmetic: found %q, want auto, double or extended", o.Arithmetic)
 	}
 	for _, k := range o.Errors {
 		switch k.Name {
 		case "classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5":
-		case "cr0", "cr1", "cr2", "cr3":
+		case "cr0", "cr1", "cr2", "cr3", "wcr", "wcu":
 			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
 				return stream.Usef("errors: %s needs a clustering", k.Name)
 			}
 			switch w, ok := waysOf(d, k.Cluster); {
 			case !ok:
 				return stream.Usef("errors: %s by %s needs the crossing of every set of them", k.Name, d.Keys[k.Cluster].Text)
-			case len(w.dims) > 1 && adjusts(k.Name):
+			case len(w.dims) > 1 && k.Name != "cr0" && k.Name != "cr1":
 				return stream.Usef("errors: %s is for one clustering; cr0 and cr1 take several", k.Name)
 			case adjusts(k.Name) && d.Spec.WeightKind == stream.Sampling:
 				return stream.Usef("errors: %s has no meaning under sampling weights, which say nothing of the spread of a row; cr1 has", k.Name)
 			}
 		default:
-			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2 or cr3", k.Name)
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2, cr3, wcr or wcu", k.Name)
 		}
 	}
 	return nil
@@ -133,7 +136,7 @@ func (o *Options) validate(d *stream.Design) error {
 
 // wantsMoments reports whether a kind takes the second moments of its clusters.
 func (o *Options) wantsMoments(d *stream.Design, k Kind) bool {
-	return adjusts(k.Name) || o.Shape && k.Cluster >= 0 && d.Parts[k.Cluster] == nil
+	return adjusts(k.Name) || bootstraps(k.Name) || o.Shape && k.Cluster >= 0 && d.Parts[k.Cluster] == nil
 }
 
 // PlanFit chooses the route from the schema and the model, and arithmetic, where
@@ -174,7 +177,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 			for _, k := range w.keys {
 				clusters[k] = true
 			}
-		case "cr2", "cr3":
+		case "cr2", "cr3", "wcr", "wcu":
 			clusters[e.Cluster] = true
 		}
 		if o.wantsMoments(d, e) {
@@ -247,7 +250,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		route = append(route, "fourth moments")
 	}
 	if len(full) > 0 {
-		p.why("cr2, cr3 and the description of clusters take the second moments of every cluster")
+		p.why("cr2, cr3, the bootstrap and the description of clusters take the second moments of every cluster")
 	}
 	if len(full) > 0 && cats {
 		p.moments = true

@@ -145,6 +145,8 @@ type Errors struct {
 	Overall   *Overall `json:"overall"`
 	// Extremes is nil for the classical kind and where there is no such combination.
 	Extremes *Extremes `json:"extremes,omitempty"`
+	// Bootstrap says how wcr and wcu were drawn; se and t are those of cr1.
+	Bootstrap *Bootstrap `json:"bootstrap,omitempty"`
 	// Covariance is present up to 200 terms, or on request.
 	Covariance [][]Number `json:"covariance,omitempty"`
 }

@@ -291,7 +291,7 @@ func clusterShape(v *view) []string {
 		for _, o := range v.shown {
 			switch {
 			case o.Status != "ok" || !slices.Equal(o.Clusters, e.Clusters):
-			case o.Kind == "cr2" || o.Kind == "cr3":
+			case slices.Contains([]string{"cr2", "cr3", "wcr"}, o.Kind):
 				careful = append(careful, o.Name())
 			default:
 				kinds = append(kinds, o.Name())
@@ -305,7 +305,7 @@ func clusterShape(v *view) []string {
 		case careful != nil:
 			advice = "; lean on " + both(careful)
 		case len(e.Clusters) == 1:
-			advice = fmt.Sprintf("; cr2(%s) allows for that", oneLine(name))
+			advice = fmt.Sprintf("; cr2(%s) and wcr(%s) allow for that", oneLine(name), oneLine(name))
 		}
 		few := e.Groups[0]
 		for _, g := range e.Groups {

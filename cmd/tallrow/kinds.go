@@ -9,7 +9,7 @@ import (
 )
 
 // knownKinds are the kinds of errors of this version, in order of refinement.
-var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3"}
+var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3", "wcr", "wcu"}
 
 // several less the place of a set stands for a kind of several clusterings until
 // all clusterings are known.
@@ -115,7 +115,7 @@ func (s *settings) parseErrors() (request, error) {
 			return fail("no kind of errors is called %q; there are %s%s", name, both(knownKinds), meant(name, knownKinds))
 		}
 		k := vcov.Kind{Name: name, Cluster: -1}
-		isCR := strings.HasPrefix(name, "cr")
+		isCR := strings.HasPrefix(name, "cr") || strings.HasPrefix(name, "wc")
 		switch {
 		case !isCR && inPlace:
 			return fail("%s: %s has no clusters; %s(%s) has", item, name, "cr1", strings.Join(args, ", "))
@@ -142,7 +142,7 @@ func (s *settings) parseErrors() (request, error) {
 			}
 			slices.Sort(dims)
 			switch k.Cluster = dims[0]; {
-			case len(dims) > 1 && (name == "cr2" || name == "cr3"):
+			case len(dims) > 1 && name != "cr0" && name != "cr1":
 				return fail("%s: %s is for one clustering; cr0 and cr1 take several: %s", item, name, eachKind(name, args))
 			case len(dims) > mostWays:
 				return fail("%s: found %d clusterings, want at most %d", item, len(dims), mostWays)

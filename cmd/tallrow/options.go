@@ -75,7 +75,7 @@ var options = []option{
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
 	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onModel, file: true, def: "classical, hc1, and cr1 with --cluster",
-		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3; cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
+		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
@@ -83,6 +83,15 @@ var options = []option{
 	{name: "hypothesis", value: "EQUATIONS", form: formMany, group: "Errors", on: onModel, file: true,
 		help: "test equations between coefficients under each kind of errors: \"pallets = 0.5\"; several in one, separated by commas, are tested together; may be repeated",
 		set:  func(s *settings, v value) error { s.hypotheses = v.parts; return nil }},
+	{name: "draws", value: "N", form: formWhole, group: "Errors", on: onModel, file: true, def: "9999",
+		help: "draws of wcr and wcu; with few clusters all patterns of signs instead",
+		set:  setDraws},
+	{name: "draw-weights", value: "auto|signs|six-point", group: "Errors", on: onModel, file: true, def: "auto",
+		help: "what draws multiply clusters by; auto is six-point below 12 clusters",
+		set:  choose(func(s *settings) *string { return &s.drawWeights }, "auto", "signs", "six-point")},
+	{name: "seed", value: "N", form: formWhole, group: "Errors", on: onModel, file: true, def: "0",
+		help: "other draws for every N",
+		set:  setSeed},
 	{name: "cluster-detail", form: formSwitch, group: "Errors", on: onModel, file: true, def: "false",
 		help: "describe the clusters: how many count, what hangs on single ones",
 		set:  func(s *settings, v value) error { return setSwitch(&s.clusterDetail, v) }},
@@ -163,7 +172,7 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions = []string{"lags", "kernel", "period", "unit", "draws", "seed", "keep", "checkpoint",
+	laterOptions = []string{"lags", "kernel", "period", "unit", "keep", "checkpoint",
 		"hide-ids", "frame-from", "at", "sweep", "part"}
 	laterKinds    = []string{"hac", "driscoll-kraay"}
 	laterCommands = []string{"digest", "pool", "launch"}

@@ -48,6 +48,9 @@ type settings struct {
 	quiet         bool
 	timings       bool
 	clusterDetail bool
+	draws         int64
+	seed          int64
+	drawWeights   string
 	jsonSchema    bool
 
 	// from says where each given option came from, for messages: "--terms" or
@@ -162,6 +165,24 @@ func positive(v value) (int64, error) {
 }
 
 func setFirst(s *settings, v value) (err error) { s.first, err = positive(v); return err }
+
+func setDraws(s *settings, v value) error {
+	n, err := positive(v)
+	if err == nil && (n < 99 || n > 1_000_000) {
+		err = fmt.Errorf("found %d, want 99 to 1,000,000", n)
+	}
+	s.draws = n
+	return err
+}
+
+func setSeed(s *settings, v value) error {
+	n, err := strconv.ParseUint(v.text(), 10, 63)
+	if err != nil {
+		return fmt.Errorf("found %q, want a whole number of zero or more", v.text())
+	}
+	s.seed = int64(n)
+	return nil
+}
 
 func setWorkers(s *settings, v value) error {
 	n, err := positive(v)
