@@ -2,14 +2,14 @@
 //
 // # Reading
 //
-// One segment is one row group, or a part of a huge one. Only the chunks of the requested columns are
-// read. The package walks footers and page headers itself, bounds every size
-// before memory is taken, checks page checksums, and hands only the decoding of
-// values (levels, dictionary indexes, delta and byte-stream-split encodings) to
-// the Parquet library. A file that contradicts itself is a *stream.DamageError
-// naming file, row group and column, never a panic and never an early end.
-// Flipped bits inside the values can be detected only in pages that carry
-// checksums; some engines write none.
+// One segment is one row group, or a part of a huge one. Only the chunks of
+// the requested columns are read. The package walks footers and page headers
+// itself, bounds every size before memory is taken, checks page checksums, and
+// hands only the decoding of values (levels, dictionary indexes, delta and
+// byte-stream-split encodings) to the Parquet library. A file that contradicts
+// itself is a *stream.DamageError naming file, row group and column, never a
+// panic and never an early end. Flipped bits inside the values can be detected
+// only in pages that carry checksums; some engines write none.
 //
 // How Parquet types become kinds:
 //
