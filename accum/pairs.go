@@ -20,6 +20,7 @@ const pairShards = 64
 type pairTable struct {
 	width  int
 	unit   int
+	expect pairCount // what is known of its size; zero if nothing is
 	held   atomic.Int64
 	shards [pairShards]pairShard
 
@@ -27,6 +28,9 @@ type pairTable struct {
 	max float64 // largest |value| of a row
 	bad bool    // a value was not finite or too large for the unit
 }
+
+// pairCount is the number of pairs of a table, and of first and second ids.
+type pairCount struct{ pairs, first, second int }
 
 type pairShard struct {
 	mu sync.Mutex
@@ -191,13 +195,15 @@ func (t *pairTable) grow(sh *pairStore, a, b int) {
 	if t.width > 0 {
 		each = 16 * t.width
 	}
-	size := old.used + old.used/2 + 32
-	na, nb := max(sh.na, a+1), max(sh.nb, b+1)
-	if na > sh.na {
-		na += na / 8
+	// One and a third times what is expected in a shard, for a table four fifths full.
+	size := max(old.used+old.used/2, t.expect.pairs/pairShards*4/3) + 32
+	na := max(sh.na, (t.expect.first+pairShards-1)/pairShards)
+	nb := max(sh.nb, t.expect.second)
+	if a >= na {
+		na = a + 1 + a/8
 	}
-	if nb > sh.nb {
-		nb += nb / 8
+	if b >= nb {
+		nb = b + 1 + b/8
 	}
 	limit := size * (8 + each)
 	if old.keys == nil {

@@ -13,6 +13,7 @@ func TestPairTable(t *testing.T) {
 		t.Run(name, func(t *testing.T) {
 			const workers, rows = 4, 20000
 			counts, values := newPairTable(0, defaultUnit), newPairTable(2, defaultUnit)
+			values.expect = pairCount{workers * rows / 2, levels[0], levels[1]}
 			type pair struct{ a, b int32 }
 			want := map[pair][3]float64{}
 			rng := rand.New(rand.NewPCG(3, 4))

@@ -127,7 +127,11 @@ func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPoo
 		}
 	}
 	for range len(rp.Weights) + 2 {
-		c.pairs = append(c.pairs, s.lay.pairTables(unit, false))
+		ts := s.lay.pairTables(unit, false)
+		for i, t := range ts {
+			t.expect = s.pairCount[i]
+		}
+		c.pairs = append(c.pairs, ts)
 	}
 	for _, k := range rp.Scores {
 		p := s.scoreWidth()

@@ -71,8 +71,10 @@ type State struct {
 	levels []*interner // global ids = places in Levels
 	combos []*comboIndex
 	place  [][]int32 // place in combos, by the number in pass one
-	dense  int
-	pool   *groupPool
+	// pairCount bounds the pairs of combinations of each table of pairs.
+	pairCount []pairCount
+	dense     int
+	pool      *groupPool
 }
 
 // Close gives back what the sums of clusters hold in memory and on scratch; Scores
@@ -310,6 +312,7 @@ func (s *State) indexLevels(num *numbering) {
 // assemble fills S, and the sums of the group kept apart, in the last frame.
 func (s *State) assemble() error {
 	s.maps = make([][]float64, len(s.epochs))
+	s.pairCount = make([]pairCount, len(s.lay.pairs))
 	all := s.newSums()
 	for i, e := range s.epochs {
 		m := all
@@ -478,9 +481,13 @@ func (s *State) placePairs(m *sums, tables []*pairTable, place [][]int32) {
 	for i, t := range tables {
 		spec := &l.pairs[i]
 		g, h := &s.Groups[spec.g], &s.Groups[spec.h]
+		if place != nil {
+			s.pairCount[i].first, s.pairCount[i].second = g.n, h.n
+		}
 		t.each(func(a, b int32, vals []float64) {
 			if place != nil {
 				a, b = place[spec.g][a], place[spec.h][b]
+				s.pairCount[i].pairs++
 			}
 			gb, hb := g.first+int(a)*len(g.Parts), h.first+int(b)*len(h.Parts)
 			k := 0
