@@ -14,6 +14,7 @@
 //	classical   t on N - k; joint F = W/q on (q, N - k)
 //	hc0..hc3    t on N - k; hc1 carries N/(N - k); joint F = W/q on (q, N - k)
 //	cr0, cr1    t on G - 1; cr1 carries G/(G-1) (N-1)/(N-k); joint (G-q)/((G-1)q) W on F(q, G-q)
+//	hypotheses  a single restriction by t, with the df of cr2's combination; several jointly, as above
 //	R2          centred if the constant lies in the span of the terms, else uncentred
 //	sigma       with weights of mean 1
 //	perfect fit errors 0, no t and p
@@ -30,6 +31,13 @@
 // Where one row has leverage 1, or one cluster alone holds a direction of the
 // terms, the coefficients that it decides have no p and no interval under the kinds
 // that rest on its residual, and no error of hc2 or higher; all others stay right.
+//
+// # Tests
+//
+// Hypotheses are linear restrictions, reduced exactly and tested under every kind
+// (hypothesis.go). SpreadTest asks whether the classical kind's assumption holds
+// (spread.go), Extremes how far off it can be for any combination of terms
+// (extremes.go), PAdjusted what is left of the p of many terms (several.go).
 //
 // # Numbers
 //

@@ -384,13 +384,20 @@ func (x *solution) quadratic(l [][]float64, m []float64) []float64 {
 	k, q := x.k(), len(l)
 	out := make([]float64, q*q)
 	t := make([]float64, k)
+	used := make([][]int, q) // most rows read few coordinates
 	for i := range q {
 		clear(t)
 		for a, c := range l[i] {
-			axpy(c, m[a*k:(a+1)*k], t)
+			if c != 0 {
+				used[i] = append(used[i], a)
+				axpy(c, m[a*k:(a+1)*k], t)
+			}
 		}
 		for j := range i + 1 {
-			v := dot(t, l[j])
+			var v float64
+			for _, a := range used[j] {
+				v = math.FMA(t[a], l[j][a], v)
+			}
 			out[i*q+j], out[j*q+i] = v, v
 		}
 	}
@@ -556,11 +563,15 @@ func (x *solution) test(h *hypothesis, e *Errors, r *estimate, level float64) Hy
 	}
 	v := x.quadratic(h.combos, r.v)
 	floor := x.quadratic(h.combos, x.inverse)
+	gross := r.gross
+	if gross == nil && r.meat != nil {
+		gross = absolute(r.meat)
+	}
 	for i, l := range h.combos {
 		if v[i*q+i] <= zeroShare*x.rss/float64(x.df())*floor[i*q+i] {
 			return none("its error is 0 by %s", e.Name())
 		}
-		if x.rounding(r, l) > lossRefuse*v[i*q+i] {
+		if gross != nil && r.factor*x.rounding(gross, l) > lossRefuse*v[i*q+i] {
 			return none("what forms its error cancels by %s", e.Name())
 		}
 	}
@@ -619,19 +630,13 @@ func (x *solution) combinationDF(h *hypothesis, r *estimate) float64 {
 	return nan
 }
 
-// rounding bounds what rounding may have done to the variance of the combination l.
-func (x *solution) rounding(r *estimate, l []float64) float64 {
+// rounding bounds what rounding may have done to the variance of the combination l,
+// but for the kind's factor: gross is the size of what was added up for its meat.
+func (x *solution) rounding(gross, l []float64) float64 {
 	k := x.k()
-	meat := r.gross
-	if meat == nil {
-		if meat = r.meat; meat == nil {
-			return 0
-		}
-		meat = absolute(meat)
-	}
 	b := make([]float64, k)
 	for a, c := range l {
 		axpy(c, x.inverse[a*k:(a+1)*k], b)
 	}
-	return 0x1p-53 * r.factor * x.quadratic([][]float64{absolute(b)}, meat)[0]
+	return 0x1p-53 * x.quadratic([][]float64{absolute(b)}, gross)[0]
 }

@@ -498,3 +498,32 @@ func TestAdjustedPCountsTerms(t *testing.T) {
 		t.Errorf("an unknown method: %v", err)
 	}
 }
+
+// A single term against zero is the line of the table, its degrees of freedom under
+// cr2 among it.
+func TestHypothesisOfOneTermIsTheTable(t *testing.T) {
+	tb, _, _, _ := quayTable(600, 7)
+	for _, cats := range []bool{false, true} {
+		spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes"}, Keys: []string{"quay"}}
+		terms := []string{"constant", "pallets", "tonnes"}
+		if cats {
+			spec.Terms = append(spec.Terms, "each(barge)")
+			terms = append(terms, `each(barge, level="deck")`, `each(barge, level="motor")`)
+		}
+		o := vcov.Options{Errors: kinds("classical", "hc0", "hc1", "hc3", "cr0", "cr1", "cr2", "cr3")}
+		for _, name := range terms {
+			o.Hypotheses = append(o.Hypotheses, name+" = 0")
+		}
+		r := fit(t, tb.source(200), spec, o)
+		for j := range terms {
+			for i := range o.Errors {
+				e, h := r.Errors[i], r.Hypotheses[j*len(o.Errors)+i]
+				for what, pair := range map[string][2]vcov.Number{"estimate": {h.Estimate, r.Estimates[j]}, "error": {h.SE, e.SE[j]}, "df": {h.DF2, e.DF[j]}, "t": {h.T, e.T[j]}, "p": {h.P, e.P[j]}, "low": {h.Low, e.Low[j]}, "high": {h.High, e.High[j]}} {
+					if digits(float64(pair[0]), float64(pair[1])) < 10 {
+						t.Errorf("%s by %s: %s %v, in the table %v", h.Text, h.Errors, what, pair[0], pair[1])
+					}
+				}
+			}
+		}
+	}
+}
