@@ -194,36 +194,41 @@ func (t *groupTable) add(s *groupStore, b *groupBatch) (grew int64) {
 	before := t.n
 	var texts int64
 	b.ids = grown(b.ids, 0, len(b.key), 0)
-	t.warm(s, b)
-	for i, k := range b.key {
-		if 2*(t.n+1) > len(t.slots) {
-			grew += t.grow(s)
-		}
-		mask := uint64(len(t.slots) - 1)
-		for h := hashInt(int64(k)) & mask; ; h = (h + 1) & mask {
-			id := t.slots[h]
-			if id == 0 {
-				grew += t.fresh(s, k)
-				if s.text {
-					texts += t.keep(t.record(s, t.n-1), b.text[i])
-				}
-				id = uint32(t.n)
-				t.slots[h] = id
-			} else if rec := t.record(s, int(id-1)); rec[0].lo != k || s.text && t.str(rec) != b.text[i] {
-				continue
-			}
-			b.ids[i] = id - 1
-			break
-		}
-	}
 	w := s.width
-	for i, id := range b.ids {
-		rec := t.record(s, int(id))
-		rec[0].hi += b.rows[i]
-		if len(b.part) > 0 {
-			addFixed(rec[s.head:], b.part[i*w:(i+1)*w], s.unit) // partials know what did not fit
-		} else {
-			mergeFixed(rec[s.head:], b.fix[i*w:(i+1)*w])
+	for from := 0; from < len(b.key); from += warmRecs {
+		ids := b.ids[from:min(from+warmRecs, len(b.key))]
+		keys := b.key[from:][:len(ids)]
+		t.warm(s, keys, ids)
+		for i, k := range keys {
+			if 2*(t.n+1) > len(t.slots) {
+				grew += t.grow(s)
+			}
+			mask := uint64(len(t.slots) - 1)
+			for h := hashInt(int64(k)) & mask; ; h = (h + 1) & mask {
+				id := t.slots[h]
+				if id == 0 {
+					grew += t.fresh(s, k)
+					if s.text {
+						texts += t.keep(t.record(s, t.n-1), b.text[from+i])
+					}
+					id = uint32(t.n)
+					t.slots[h] = id
+				} else if rec := t.record(s, int(id-1)); rec[0].lo != k || s.text && t.str(rec) != b.text[from+i] {
+					continue
+				}
+				ids[i] = id - 1
+				break
+			}
+		}
+		for i, id := range ids {
+			rec := t.record(s, int(id))
+			i += from
+			rec[0].hi += b.rows[i]
+			if len(b.part) > 0 {
+				addFixed(rec[s.head:], b.part[i*w:(i+1)*w], s.unit) // partials know what did not fit
+			} else {
+				mergeFixed(rec[s.head:], b.fix[i*w:(i+1)*w])
+			}
 		}
 	}
 	s.keys.Add(int64(t.n - before))
@@ -233,16 +238,16 @@ func (t *groupTable) add(s *groupStore, b *groupBatch) (grew int64) {
 
 // warm reads what add will look at, without a branch that hangs on it, so that the
 // processor waits for many places at once and not for one after the other.
-func (t *groupTable) warm(s *groupStore, b *groupBatch) {
-	if t.n <= firstRecs {
+func (t *groupTable) warm(s *groupStore, keys []uint64, ids []uint32) {
+	if t.n <= warmRecs {
 		return
 	}
 	mask := uint64(len(t.slots) - 1)
-	for i, k := range b.key {
-		b.ids[i] = t.slots[hashInt(int64(k))&mask]
+	for i, k := range keys {
+		ids[i] = t.slots[hashInt(int64(k))&mask]
 	}
 	var x uint64
-	for _, id := range b.ids {
+	for _, id := range ids {
 		x ^= lines(t.record(s, max(int(id), firstRecs+1)-1))
 	}
 	t.warmed = x
@@ -257,7 +262,8 @@ func lines(rec []fixed) (x uint64) {
 	return x ^ rec[len(rec)-1].lo
 }
 
-// warmRecs is how many records are read ahead of their use.
+// warmRecs is how many records are read ahead of their use: as many as stay in the
+// first-level cache.
 const warmRecs = 64
 
 // warm reads records that lie far apart, see groupTable.warm.
