@@ -9,6 +9,7 @@ import (
 	"runtime/debug"
 	"slices"
 	"sync"
+	"unsafe"
 
 	"github.com/tallrow/tallrow/stream"
 )
@@ -23,8 +24,11 @@ type reader struct {
 	codes   []int32
 	null    []bool
 	hasNull bool
-	text    textState
-	tmp     []byte
+	// view is the batch's cells where they lie in the page as they are to be
+	// delivered, in place of f64; it holds until the page goes.
+	view []float64
+	text textState
+	tmp  []byte
 }
 
 // badCell is a cell that does not fit, in row row of the batch.
@@ -172,6 +176,7 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	defer s.guard(&err)
 	for j := range s.readers {
 		s.readers[j].hasNull = false
+		s.readers[j].view = nil
 	}
 	if s.passOver() {
 		b.Rows = 0
@@ -179,6 +184,9 @@ func (s *segment) read(b *stream.Batch) (err error) {
 	}
 	rows := 0
 	for rows < stream.BatchRows {
+		if rows > 0 {
+			s.settle()
+		}
 		for s.left == 0 {
 			if s.rows == 0 && !s.open && s.tally.Excluded > 0 {
 				return io.EOF // passed over to the end
@@ -256,6 +264,9 @@ func (s *segment) deliver(b *stream.Batch, rows int) error {
 		switch {
 		case r.asFloat:
 			v.F64 = r.f64[:rows]
+			if r.view != nil {
+				v.F64 = r.view[:rows:rows]
+			}
 		case r.codes != nil:
 			v.Code, v.Dict = r.codes[:rows], r.text.dict
 			if v.Dict == nil {
@@ -288,6 +299,9 @@ func (s *segment) fill(j, at, n int) error {
 			}
 		}
 		m := min(n, p.rows-p.row)
+		if at == 0 && m == n && r.lookAt(m) {
+			return nil
+		}
 		before := len(s.bad)
 		s.block(j, at, m)
 		for i := range s.bad[before:] {
@@ -297,6 +311,33 @@ func (s *segment) fill(j, at, n int) error {
 		n -= m
 	}
 	return nil
+}
+
+// lookAt makes the next m rows of a page of plain numbers the view. It reports false
+// where they have to be copied.
+func (r *reader) lookAt(m int) bool {
+	p := &r.page
+	if !r.asFloat || r.col.conv != convF64 || p.idx != nil || p.def != nil || !littleEndian {
+		return false
+	}
+	raw := p.raw[8*p.val : 8*(p.val+m)]
+	if uintptr(unsafe.Pointer(&raw[0]))%unsafe.Alignof(float64(0)) != 0 {
+		return false
+	}
+	r.view = unsafe.Slice((*float64)(unsafe.Pointer(&raw[0])), m)
+	p.row += m
+	p.val += m
+	return true
+}
+
+// settle copies views, before their pages go or rows move.
+func (s *segment) settle() {
+	for j := range s.readers {
+		if r := &s.readers[j]; r.view != nil {
+			copy(r.f64, r.view)
+			r.view = nil
+		}
+	}
 }
 
 // block converts m rows of the present page to rows at..at+m.
@@ -448,6 +489,7 @@ func (s *segment) addBad(r *reader, at, k int, def []byte) {
 // dropBad takes the bad rows out of rows at..at+n, or gives the error of the
 // first one. It returns how many rows are kept.
 func (s *segment) dropBad(at, n int) (int, error) {
+	s.settle()
 	slices.SortStableFunc(s.bad, func(a, b badCell) int { return cmp.Compare(a.row, b.row) })
 	drop := make([]bool, n)
 	for _, c := range s.bad {
