@@ -13,7 +13,7 @@ import (
 const (
 	sampleRows     = 4096 // used rows a frame wants
 	sampleSpots    = 16   // places it looks at in a long input
-	sampleFew      = 5    // and in a short one, where each place may cost a page of every column
+	sampleFew      = 5    // at least, and one in four segments: each may cost a page of every column
 	sampleMaxSpots = 256
 	sampleMin      = 64 // fewer used rows make epochs the better way
 )
@@ -50,7 +50,7 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) 
 	segments := src.Info().Segments
 	spots := sampleSpots
 	if segments >= 0 {
-		spots = min(max(segments, sampleFew), sampleSpots)
+		spots = min(max(segments/4, sampleFew), sampleSpots)
 	}
 	batches := (sampleRows/stream.BatchRows + spots - 1) / spots
 	for spot := 0; spot < sampleMaxSpots && (spot < spots || rows.rows() < sampleRows); spot++ {
