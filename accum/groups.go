@@ -10,7 +10,7 @@ import (
 
 // fewBytes bounds the private sums of a worker that still numbers its clusters:
 // they should stay in the second-level cache.
-const fewBytes = 2 << 20
+const fewBytes = 8 << 20
 
 // textSeed makes the hashes of texts. It differs from run to run, and so does where
 // a key lies in memory; nothing that is returned depends on either.

@@ -58,17 +58,17 @@ type PassCost struct {
 // machine, so that the route hangs on input and model alone; without AVX2 fourth
 // moments cost ten times as much, and --passes 2 is worth a try from 6 terms on.
 const (
-	costParquetColumn = 10.0
-	costCSVField      = 22.0
-	costGramPair      = 0.1  // for each product of two columns
-	costExtended      = 8.0  // second moments in extended arithmetic, to double
-	costQuartic       = 0.08 // for each product of four
-	costRowTerm       = 3.0  // row pass, for each term
-	costRowPair       = 0.1  // row pass, leverage, for each pair of terms
-	costKey           = 20.0 // finding the cluster of a row
-	costClusterPair   = 5.0  // second moments of clusters, for each product
-	costScore         = 3.0  // scores of clusters, for each term
-	maxPipeTerms      = 25   // beyond it fourth moments cost more than a copy of the input
+	costParquetColumn = 3.5
+	costCSVField      = 9.5
+	costGramPair      = 0.1   // for each product of two columns
+	costExtended      = 8.0   // second moments in extended arithmetic, to double
+	costQuartic       = 0.045 // for each product of four
+	costRowTerm       = 0.3   // row pass, for each term
+	costRowPair       = 0.05  // row pass, leverage, for each pair of terms
+	costKey           = 15.0  // finding the cluster of a row
+	costClusterPair   = 2.0   // second moments of clusters, for each product
+	costScore         = 2.0   // scores of clusters, for each term
+	maxPipeTerms      = 25    // beyond it fourth moments cost more than a copy of the input
 )
 
 // defaultMemory bounds the sums when the caller does not.
