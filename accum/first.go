@@ -343,7 +343,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	if f == nil {
 		sample := o.Sample
 		if sample == nil {
-			if sample, err = TakeSample(ctx, src, d); err != nil {
+			if sample, err = TakeSample(ctx, src, d, o.Workers); err != nil {
 				return nil, err
 			}
 		}

@@ -16,7 +16,7 @@ const (
 	firstRecs  = 8         // records of a partition's first page
 	pageBytes  = 16 << 10  // of all others, or eight records
 	chunkBytes = 16 << 10  // of texts
-	sortBytes  = 2 * 16    // for each key, while a store is brought into order
+	sortBytes  = 2*16 + 8  // for each key: while a store is brought into order, and beside it
 	minHeld    = 256 << 10 // sums that are always let into memory
 )
 
@@ -130,6 +130,7 @@ type groupStore struct {
 type groupTable struct {
 	mu    sync.Mutex
 	slots []uint32 // number of the record + 1; 0 is free
+	keys  []uint64 // of the records, so that these need not be looked at
 	n     int
 	first []fixed
 	pages [][]fixed
@@ -167,6 +168,8 @@ type groupBatch struct {
 	part []float64
 	fix  []fixed
 	ids  []uint32
+
+	order, next []uint32
 }
 
 func (b *groupBatch) reset() {
@@ -194,40 +197,39 @@ func (t *groupTable) add(s *groupStore, b *groupBatch) (grew int64) {
 	before := t.n
 	var texts int64
 	b.ids = grown(b.ids, 0, len(b.key), 0)
-	w := s.width
-	for from := 0; from < len(b.key); from += warmRecs {
-		ids := b.ids[from:min(from+warmRecs, len(b.key))]
-		keys := b.key[from:][:len(ids)]
-		t.warm(s, keys, ids)
-		for i, k := range keys {
-			if 2*(t.n+1) > len(t.slots) {
-				grew += t.grow(s)
-			}
-			mask := uint64(len(t.slots) - 1)
-			for h := hashInt(int64(k)) & mask; ; h = (h + 1) & mask {
-				id := t.slots[h]
-				if id == 0 {
-					grew += t.fresh(s, k)
-					if s.text {
-						texts += t.keep(t.record(s, t.n-1), b.text[from+i])
-					}
-					id = uint32(t.n)
-					t.slots[h] = id
-				} else if rec := t.record(s, int(id-1)); rec[0].lo != k || s.text && t.str(rec) != b.text[from+i] {
-					continue
-				}
-				ids[i] = id - 1
-				break
-			}
+	for i, k := range b.key {
+		if 2*(t.n+1) > len(t.slots) {
+			grew += t.grow()
 		}
-		for i, id := range ids {
-			rec := t.record(s, int(id))
-			i += from
+		mask := uint64(len(t.slots) - 1)
+		for h := hashInt(int64(k)) & mask; ; h = (h + 1) & mask {
+			id := t.slots[h]
+			if id == 0 {
+				grew += t.fresh(s, k)
+				if s.text {
+					texts += t.keep(t.record(s, t.n-1), b.text[i])
+				}
+				id = uint32(t.n)
+				t.slots[h] = id
+			} else if t.keys[id-1] != k || s.text && t.str(t.record(s, int(id-1))) != b.text[i] {
+				continue
+			}
+			b.ids[i] = id - 1
+			break
+		}
+	}
+	t.byPage(s, b)
+	w := s.width
+	for from := 0; from < len(b.order); from += warmRecs {
+		order := b.order[from:min(from+warmRecs, len(b.order))]
+		t.warm(s, b.ids, order)
+		for _, i := range order {
+			rec := t.record(s, int(b.ids[i]))
 			rec[0].hi += b.rows[i]
 			if len(b.part) > 0 {
-				addFixed(rec[s.head:], b.part[i*w:(i+1)*w], s.unit) // partials know what did not fit
+				addFixed(rec[s.head:], b.part[int(i)*w:int(i+1)*w], s.unit) // partials know what did not fit
 			} else {
-				mergeFixed(rec[s.head:], b.fix[i*w:(i+1)*w])
+				mergeFixed(rec[s.head:], b.fix[int(i)*w:int(i+1)*w])
 			}
 		}
 	}
@@ -236,19 +238,40 @@ func (t *groupTable) add(s *groupStore, b *groupBatch) (grew int64) {
 	return grew + texts + int64(t.n-before)*sortBytes
 }
 
+// byPage orders a batch by page of the records, so that each page is visited once.
+func (t *groupTable) byPage(s *groupStore, b *groupBatch) {
+	n := len(b.ids)
+	b.order = grown(b.order, 0, n, 0)
+	b.next = grown(b.next, 0, len(t.pages)+2, 0)
+	clear(b.next)
+	page := func(id uint32) int {
+		if id < firstRecs {
+			return 0
+		}
+		return int(id-firstRecs)>>s.shift + 1
+	}
+	for _, id := range b.ids {
+		b.next[page(id)+1]++
+	}
+	for p := 1; p < len(b.next); p++ {
+		b.next[p] += b.next[p-1]
+	}
+	for i, id := range b.ids {
+		p := page(id)
+		b.order[b.next[p]] = uint32(i)
+		b.next[p]++
+	}
+}
+
 // warm reads what add will look at, without a branch that hangs on it, so that the
 // processor waits for many places at once and not for one after the other.
-func (t *groupTable) warm(s *groupStore, keys []uint64, ids []uint32) {
+func (t *groupTable) warm(s *groupStore, ids, order []uint32) {
 	if t.n <= warmRecs {
 		return
 	}
-	mask := uint64(len(t.slots) - 1)
-	for i, k := range keys {
-		ids[i] = t.slots[hashInt(int64(k))&mask]
-	}
 	var x uint64
-	for _, id := range ids {
-		x ^= lines(t.record(s, max(int(id), firstRecs+1)-1))
+	for _, i := range order {
+		x ^= lines(t.record(s, int(ids[i])))
 	}
 	t.warmed = x
 }
@@ -288,6 +311,7 @@ func (t *groupTable) fresh(s *groupStore, k uint64) (grew int64) {
 		grew = int64(16 * len(page))
 	}
 	t.n++
+	t.keys = append(t.keys, k)
 	t.record(s, t.n-1)[0].lo = k
 	return grew
 }
@@ -326,13 +350,13 @@ func (t *groupTable) str(rec []fixed) string {
 }
 
 // grow doubles the slots.
-func (t *groupTable) grow(s *groupStore) (grew int64) {
+func (t *groupTable) grow() (grew int64) {
 	n := max(16, 2*len(t.slots))
 	grew = int64(n-len(t.slots)) * 4
 	t.slots = make([]uint32, n)
 	mask := uint64(n - 1)
 	for id := range t.n {
-		h := hashInt(int64(t.record(s, id)[0].lo)) & mask
+		h := hashInt(int64(t.keys[id])) & mask
 		for t.slots[h] != 0 {
 			h = (h + 1) & mask
 		}
@@ -356,7 +380,7 @@ func (t *groupTable) empty(s *groupStore) (freed int64) {
 		freed += int64(cap(c))
 	}
 	freed += int64(t.n) * sortBytes
-	t.n, t.first, t.pages, t.texts = 0, nil, nil, nil
+	t.n, t.first, t.pages, t.texts, t.keys = 0, nil, nil, nil, t.keys[:0]
 	clear(t.slots)
 	return freed
 }

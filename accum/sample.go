@@ -1,6 +1,7 @@
 package accum
 
 import (
+	"cmp"
 	"context"
 	"errors"
 	"io"
@@ -8,6 +9,7 @@ import (
 	"slices"
 
 	"github.com/tallrow/tallrow/stream"
+	"golang.org/x/sync/errgroup"
 )
 
 const (
@@ -27,13 +29,15 @@ type Sample struct {
 	Whole bool
 }
 
-// TakeSample samples the input for a design. The errors are the source's.
-func TakeSample(ctx context.Context, src stream.Source, d *stream.Design) (*Sample, error) {
+// TakeSample samples the input for a design, at several places at a time if there
+// are workers for it; what it finds does not depend on them. The errors are the
+// source's.
+func TakeSample(ctx context.Context, src stream.Source, d *stream.Design, workers int) (*Sample, error) {
 	if !src.Info().Sampled {
 		return &Sample{}, nil
 	}
 	l := newLayout(d)
-	f, whole, err := sampleFrame(ctx, src, l, l.shifted())
+	f, whole, err := sampleFrame(ctx, src, l, l.shifted(), workers)
 	if err != nil {
 		return nil, err
 	}
@@ -43,49 +47,101 @@ func TakeSample(ctx context.Context, src stream.Source, d *stream.Design) (*Samp
 // sampleFrame makes a frame from the first batches at places spread over the
 // input: start, end, middle, quarters, and so on. It returns nil if too few rows
 // were found there although the input is longer.
-func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool) (f *Frame, whole bool, err error) {
-	rows := newFrameRows(l.nx)
-	ld := newLoader(l, trivialFrame(l))
-	ld.eval.Extended(true) // to know what float64 leaves off
+func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool, workers int) (f *Frame, whole bool, err error) {
 	segments := src.Info().Segments
 	spots := sampleSpots
 	if segments >= 0 {
 		spots = min(max(segments/4, sampleFew), sampleSpots)
 	}
 	batches := (sampleRows/stream.BatchRows + spots - 1) / spots
-	for spot := 0; spot < sampleMaxSpots && (spot < spots || rows.rows() < sampleRows); spot++ {
-		seg, err := l.design.Sample(ctx, src, spread(spot))
+	look := func(from, to int) ([]*spot, error) {
+		list := make([]*spot, to-from)
+		errs := make([]error, len(list))
+		var g errgroup.Group
+		g.SetLimit(max(1, workers))
+		for i := range list {
+			list[i] = &spot{rows: newFrameRows(l.nx)}
+			g.Go(func() error {
+				errs[i] = list[i].look(ctx, src, l, spread(from+i), batches)
+				return nil
+			})
+		}
+		g.Wait()
+		return list, cmp.Or(errs...) // that of the first place
+	}
+	first, err := look(0, 1)
+	if err != nil {
+		return nil, false, err
+	}
+	rows := first[0].rows
+	if whole = first[0].ended && segments <= 1; whole { // the end was reached from the start
+		return buildFrame(rows, l.p0, shift), true, nil
+	}
+	for at, to := 1, spots; at < sampleMaxSpots && (at < spots || rows.rows() < sampleRows); to++ {
+		list, err := look(at, to)
 		if err != nil {
 			return nil, false, err
 		}
-		for b := 0; b < batches && err == nil; b++ {
-			if err = seg.Read(&ld.batch); err != nil {
-				break
-			}
-			if ld.batch.Rows == 0 {
-				continue // excluded by metadata
-			}
-			// A row that cannot be used is reported by the scan, with its place.
-			if ld.eval.Eval(&ld.batch, seg.Locate, &ld.block) == nil {
-				rows.addBlock(&ld.block, l)
-			}
+		for _, s := range list {
+			rows.join(s.rows)
 		}
-		seg.Close()
-		if err != nil && !errors.Is(err, io.EOF) {
-			return nil, false, err
-		}
-		if spot == 0 && err != nil && segments <= 1 {
-			whole = true // the end was reached from the start
-			break
-		}
-		if err := ctx.Err(); err != nil {
-			return nil, false, err
-		}
+		at = to
 	}
-	if !whole && rows.rows() < sampleMin {
+	if rows.rows() < sampleMin {
 		return nil, false, nil
 	}
-	return buildFrame(rows, l.p0, shift), whole, nil
+	return buildFrame(rows, l.p0, shift), false, nil
+}
+
+// spot is what one place of the input holds.
+type spot struct {
+	rows  *frameRows
+	ended bool // the input ended there
+}
+
+func (s *spot) look(ctx context.Context, src stream.Source, l *layout, at float64, batches int) error {
+	seg, err := l.design.Sample(ctx, src, at)
+	if err != nil {
+		return err
+	}
+	defer seg.Close()
+	eval := l.design.NewEvaluator()
+	eval.Extended(true) // to know what float64 leaves off
+	var batch stream.Batch
+	var block stream.Block
+	for range batches {
+		switch err := seg.Read(&batch); {
+		case errors.Is(err, io.EOF):
+			s.ended = true
+			return nil
+		case err != nil:
+			return err
+		case batch.Rows == 0:
+			continue // excluded by metadata
+		}
+		// A row that cannot be used is reported by the scan, with its place.
+		if eval.Eval(&batch, seg.Locate, &block) == nil {
+			s.rows.addBlock(&block, l)
+		}
+	}
+	return ctx.Err()
+}
+
+// join appends the rows of o, relative to the same origin.
+func (r *frameRows) join(o *frameRows) {
+	r.one = append(r.one, o.one...)
+	for j := range r.x {
+		r.x[j] = append(r.x[j], o.x[j]...)
+	}
+	r.y = append(r.y, o.y...)
+	if r.lowSquares == nil {
+		r.lowSquares = o.lowSquares
+	} else {
+		for j, q := range o.lowSquares {
+			r.lowSquares[j] += q
+		}
+	}
+	r.lowRows += o.lowRows
 }
 
 // spread gives 0, 1, 1/2, 1/4, 3/4, 1/8, ...: bit-reversed order.

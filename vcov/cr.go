@@ -65,13 +65,14 @@ type clusterSums struct {
 	*adjusted            // of cr2 and cr3; nil unless asked for
 	shape     *shape     // nil unless asked for
 	wild      *wild      // nil unless asked for, or too large
+	lagged    *lagged    // of driscoll-kraay; nil unless asked for
 }
 
-// sumClusters walks over the clusters in order of key, with second moments if adj is
-// given. Time O(G (P K + K^2)).
-func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjusted, shape *shape, w *wild) (*clusterSums, error) {
+// walk fills c over the clusters of a key, in order of key: with second moments if
+// c.adjusted is there. Time O(G (P K + K^2)).
+func (x *solution) walk(ctx context.Context, sc *accum.Scores, c *clusterSums) error {
 	k := x.k()
-	c := &clusterSums{scores: sc, meat: make([]float64, k*k), adjusted: adj, shape: shape, wild: w}
+	c.scores, c.meat = sc, make([]float64, k*k)
 	s := make([]float64, k)
 	var n sizes
 	err := sc.Each(func(g *accum.Cluster) error {
@@ -82,18 +83,23 @@ func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjus
 		if x.apart != nil {
 			return nil
 		}
-		if adj != nil {
-			adj.add(g.A, g.S)
-			if shape != nil {
-				shape.add(g)
+		if c.adjusted != nil {
+			c.adjusted.add(g.A, g.S)
+			if c.shape != nil {
+				c.shape.add(g)
 			}
 			if c.wild != nil {
-				if c.wild.add(adj); len(c.wild.h) > wildMemory {
+				if c.wild.add(c.adjusted); len(c.wild.h) > wildMemory {
 					c.wild = nil
 				}
 			}
 		}
 		x.projectVec(g.S, s)
+		if c.lagged != nil {
+			if err := c.lagged.add(g.Key, s); err != nil {
+				return err
+			}
+		}
 		for a, t := range s {
 			axpy(t, s[:a+1], c.meat[a*k:a*k+a+1])
 		}
@@ -109,7 +115,7 @@ func (x *solution) sumClusters(ctx context.Context, sc *accum.Scores, adj *adjus
 		c.meat = x.project(m.Rest)
 		c.apart = &apartMeat{rest: c.meat, own: m.Own, base: m.Base, within: m.Within, scale: 1}
 	}
-	return c, err
+	return err
 }
 
 // loneClusters marks the coefficients of each direction of the terms that lives in

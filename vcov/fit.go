@@ -513,20 +513,20 @@ func (f *fitter) clusters() error {
 		if sc == nil {
 			continue
 		}
-		var adj *adjusted
-		var sh *shape
-		var wd *wild
+		c := &clusterSums{}
 		if full[key] && sc.Moments() && x.apart == nil && x.k() <= momentsMost {
-			adj = newAdjusted(x)
-			if f.bootstraps(key) {
-				wd = newWild(x)
+			c.adjusted = newAdjusted(x)
+			if f.wants(key, bootstraps) {
+				c.wild = newWild(x)
 			}
 			if f.o.Shape {
-				sh = newShape(adj, func(k accum.Key) string { return f.d.KeyLabel(key, k.KeyValue) })
+				c.shape = newShape(c.adjusted, func(k accum.Key) string { return f.d.KeyLabel(key, k.KeyValue) })
 			}
 		}
-		c, err := x.sumClusters(f.ctx, sc, adj, sh, wd)
-		if err != nil {
+		if f.wants(key, overTime) && x.apart == nil {
+			c.lagged = &lagged{col: f.d.Keys[key], k: x.k()}
+		}
+		if err := x.walk(f.ctx, sc, c); err != nil {
 			return err
 		}
 		f.groups[key] = c
@@ -534,9 +534,9 @@ func (f *fitter) clusters() error {
 	return nil
 }
 
-// bootstraps reports whether a kind asked for draws over the clusters of a key.
-func (f *fitter) bootstraps(key int) bool {
-	return slices.ContainsFunc(f.o.Errors, func(k Kind) bool { return k.Cluster == key && bootstraps(k.Name) })
+// wants reports whether a kind of a family is asked for over the clusters of a key.
+func (f *fitter) wants(key int, family func(string) bool) bool {
+	return slices.ContainsFunc(f.o.Errors, func(k Kind) bool { return k.Cluster == key && family(k.Name) })
 }
 
 // close gives back memory and scratch files.
@@ -599,6 +599,9 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	case more && sums[0].adjusted.failed:
 		x.unavailable(e, "the eigenvalues of a cluster's leverages were not found")
 		return
+	case overTime(k.Name) && x.apart != nil:
+		x.unavailable(e, "a category with too many levels stands apart, and the scores of periods are kept over all columns")
+		return
 	case len(w.dims) > 1 && x.apart != nil:
 		x.unavailable(e, "a category with too many levels stands apart; clusters of one dimension are possible")
 		return
@@ -619,6 +622,11 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		}
 	case bootstraps(k.Name):
 		r = x.clusterRobust("cr1", sums[0])
+	case overTime(k.Name):
+		reach := sums[0].lagged.reach(&f.o, slices.IndexFunc(x.cols, func(u userColumn) bool { return u.term < 0 }))
+		e.Lags = &reach
+		r = x.driscollKraay(sums[0].lagged, &reach)
+		r.noP = x.loneClusters(sums[0].scores)
 	default:
 		r = x.clusterRobust(k.Name, sums[0])
 	}

@@ -47,6 +47,11 @@ type Options struct {
 	Draws       int
 	Seed        uint64
 	BootWeights string
+	// Kernel of driscoll-kraay is "bartlett" unless given; Lags its reach in periods,
+	// or chosen by the data with AutoLags.
+	Kernel   string
+	Lags     int64
+	AutoLags bool
 	// Shape asks for Result.Clusterings.
 	Shape bool
 	// Timings asks for Run.Timings.

@@ -109,26 +109,33 @@ func (o *Options) validate(d *stream.Design) error {
 	if err := o.checkBootstrap(); err != nil {
 		return err
 	}
+	if err := o.checkLags(); err != nil {
+		return err
+	}
 	if _, ok := arithmetics[o.Arithmetic]; !ok {
 		return stream.Usef("arithmetic: found %q, want auto, double or extended", o.Arithmetic)
 	}
 	for _, k := range o.Errors {
 		switch k.Name {
 		case "classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5":
-		case "cr0", "cr1", "cr2", "cr3", "wcr", "wcu":
+		case "cr0", "cr1", "cr2", "cr3", "wcr", "wcu", "driscoll-kraay":
 			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
 				return stream.Usef("errors: %s needs a clustering", k.Name)
 			}
 			switch w, ok := waysOf(d, k.Cluster); {
 			case !ok:
 				return stream.Usef("errors: %s by %s needs the crossing of every set of them", k.Name, d.Keys[k.Cluster].Text)
+			case overTime(k.Name) && len(w.dims) == 1:
+				if err := checkPeriod(d.Keys[k.Cluster]); err != nil {
+					return err
+				}
 			case len(w.dims) > 1 && k.Name != "cr0" && k.Name != "cr1":
 				return stream.Usef("errors: %s is for one clustering; cr0 and cr1 take several", k.Name)
 			case adjusts(k.Name) && d.Spec.WeightKind == stream.Sampling:
 				return stream.Usef("errors: %s has no meaning under sampling weights, which say nothing of the spread of a row; cr1 has", k.Name)
 			}
 		default:
-			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2, cr3, wcr or wcu", k.Name)
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2, cr3, wcr, wcu or driscoll-kraay", k.Name)
 		}
 	}
 	return nil
@@ -136,7 +143,7 @@ func (o *Options) validate(d *stream.Design) error {
 
 // wantsMoments reports whether a kind takes the second moments of its clusters.
 func (o *Options) wantsMoments(d *stream.Design, k Kind) bool {
-	return adjusts(k.Name) || bootstraps(k.Name) || o.Shape && k.Cluster >= 0 && d.Parts[k.Cluster] == nil
+	return adjusts(k.Name) || bootstraps(k.Name) || o.Shape && k.Cluster >= 0 && d.Parts[k.Cluster] == nil && !overTime(k.Name)
 }
 
 // PlanFit chooses the route from the schema and the model, and arithmetic, where
@@ -172,7 +179,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		case "hc2", "hc3", "hc4", "hc4m", "hc5":
 			rows, byRow = true, e.Name
 			p.why("%s depends on the leverage of every row, which is known only after the first pass", e.Name)
-		case "cr0", "cr1":
+		case "cr0", "cr1", "driscoll-kraay":
 			w, _ := waysOf(d, e.Cluster)
 			for _, k := range w.keys {
 				clusters[k] = true
@@ -336,7 +343,7 @@ func (p *Plan) chooseArithmetic(ctx context.Context, src stream.Source, d *strea
 		p.Arithmetic = o.Arithmetic
 		return nil
 	}
-	s, err := accum.TakeSample(ctx, src, d)
+	s, err := accum.TakeSample(ctx, src, d, o.Workers)
 	if err != nil {
 		return err
 	}

@@ -201,7 +201,7 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 	p.opts = vcov.Options{
 		Errors: req.withClassical(s.weightKind == "sampling"),
 		Level:  s.level, Hypotheses: s.hypotheses, Adjust: s.adjust, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
-		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights,
+		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags,
 	}
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
 	p.opts.Scratch = s.scratch

@@ -9,7 +9,7 @@ import (
 )
 
 // knownKinds are the kinds of errors of this version, in order of refinement.
-var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3", "wcr", "wcu"}
+var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3", "wcr", "wcu", "driscoll-kraay"}
 
 // several less the place of a set stands for a kind of several clusterings until
 // all clusterings are known.
@@ -102,7 +102,7 @@ func (s *settings) parseErrors() (request, error) {
 	} else if len(list) == 0 {
 		return fail("found nothing, want kinds of errors such as \"classical, hc1\"")
 	}
-	clustered := false
+	clustered, periodUsed := false, false
 	for _, item := range list {
 		name, args, inPlace, err := splitKind(item)
 		if err != nil {
@@ -115,19 +115,25 @@ func (s *settings) parseErrors() (request, error) {
 			return fail("no kind of errors is called %q; there are %s%s", name, both(knownKinds), meant(name, knownKinds))
 		}
 		k := vcov.Kind{Name: name, Cluster: -1}
-		isCR := strings.HasPrefix(name, "cr") || strings.HasPrefix(name, "wc")
+		overTime := name == "driscoll-kraay"
+		isCR := strings.HasPrefix(name, "cr") || strings.HasPrefix(name, "wc") || overTime
 		switch {
 		case !isCR && inPlace:
 			return fail("%s: %s has no clusters; %s(%s) has", item, name, "cr1", strings.Join(args, ", "))
 		case isCR && inPlace && len(args) == 0:
 			return fail("%s: found no clusters, want for example cr1(quay)", item)
+		case overTime && !inPlace && s.period == "":
+			return fail("%s needs periods: %s(date(t)), or --period \"date(t)\"", name, name)
+		case overTime && !inPlace:
+			args = []string{s.period}
 		case isCR && !inPlace && len(s.cluster) == 0:
 			return fail("%s needs clusters: %s(quay), or --cluster quay", name, name)
 		case isCR && !inPlace:
 			args = s.cluster
 		}
+		periodUsed = periodUsed || overTime && slices.Equal(args, []string{s.period})
 		if isCR {
-			clustered = true
+			clustered = clustered || !overTime
 			var dims []int
 			for _, a := range args {
 				c := slices.Index(r.keys, a)
@@ -162,6 +168,9 @@ func (s *settings) parseErrors() (request, error) {
 		if k := &r.kinds[i]; k.Cluster <= several {
 			k.Cluster = len(r.keys) + several - k.Cluster
 		}
+	}
+	if s.period != "" && !periodUsed {
+		return request{}, stream.Usef("%s %s: no kind of errors uses it; add driscoll-kraay", s.origin("period"), s.period)
 	}
 	if len(s.cluster) > 0 {
 		for _, c := range s.cluster {

@@ -225,6 +225,8 @@ func wanted(o *option) string {
 		return `a size such as "1GiB", or a whole number of bytes`
 	case formPasses:
 		return `"auto", 1 or 2`
+	case formAuto:
+		return `"auto" or a whole number`
 	case formKinds:
 		return `a table such as { crane = "text" }`
 	}
@@ -252,7 +254,7 @@ func (m *modelWalk) value(o *option, v *unstable.Node) (value, error) {
 		if v.Kind == unstable.Float || v.Kind == unstable.Integer {
 			return value{parts: []string{strings.ReplaceAll(string(v.Data), "_", "")}}, nil
 		}
-	case formSize, formPasses:
+	case formSize, formPasses, formAuto:
 		if v.Kind == unstable.String {
 			return one()
 		}

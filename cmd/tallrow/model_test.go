@@ -34,6 +34,9 @@ level = 0.9
 cluster-detail = true
 draws = 999
 draw-weights = "signs"
+period = "date(t)"
+lags = 3
+kernel = "parzen"
 seed = 5
 first = 1_000
 format = "csv"
@@ -65,7 +68,7 @@ func TestModelFile(t *testing.T) {
 		outcome: "log(minutes)", terms: []string{"log(pallets)", "max(tonnes, 1)", `each(barge, base="a")`},
 		noConstant: true, errors: []string{"hc1", "cr1"}, cluster: []string{"quay"},
 		hypotheses: []string{"log(pallets) = 1, constant = 0", `each(barge, level="b") = 0`}, adjust: "bh", weight: "n", weightKind: "frequency",
-		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, draws: 999, drawWeights: "signs", seed: 5, first: 1000,
+		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, draws: 999, drawWeights: "signs", seed: 5, period: "date(t)", fixedLags: true, lags: 3, kernel: "parzen", first: 1000,
 		format: "csv", decimal: "comma", null: []string{"-999", "a, b"}, zone: rome,
 		kinds:  map[string]stream.Kind{"crane": stream.Text, "odd, name = x": stream.Int64},
 		passes: 2, arithmetic: "extended", workers: 16, memory: 1 << 30, scratch: "/tmp",
@@ -107,7 +110,9 @@ func TestModelKinds(t *testing.T) {
 func TestModelRefuses(t *testing.T) {
 	for _, c := range []struct{ text, want string }{
 		{"outcome = \"minutes\"\ntrems = \"a\"\n", `m.toml line 2: unknown key "trems"; did you mean terms?`},
-		{"\nlags = 3\n", "m.toml line 2: lags is not in this version"},
+		{"\nkeep = 3\n", "m.toml line 2: keep is not in this version"},
+		{"lags = 1.5\n", "m.toml line 1: lags: found 1.5, want \"auto\" or a whole number"},
+		{"lags = -1\n", "m.toml line 1: lags: found \"-1\""},
 		{"arithmetic = \"wide\"\n", "m.toml line 1: arithmetic: found \"wide\", want auto, double or extended"},
 		{"json = true\n", "m.toml line 1: json belongs on the command line: --json"},
 		{"data = \"a.csv\"\n", "m.toml line 1: data are named on the command line"},

@@ -20,8 +20,6 @@ func digits(x float64, n int) string {
 	switch {
 	case math.IsNaN(x) || math.IsInf(x, 0):
 		return none
-	case x == 0:
-		return "0"
 	}
 	e := strconv.FormatFloat(x, 'e', n-1, 64)
 	exp, _ := strconv.Atoi(e[strings.IndexByte(e, 'e')+1:])
@@ -49,15 +47,13 @@ func ratioText(x float64) string {
 }
 
 // pText writes a probability; very small ones only as a bound.
-func pText(p, log10p vcov.Number) string {
+func pText(p vcov.Number) string {
 	x := float64(p)
 	switch {
 	case !p.Exists():
 		return none
-	case x < 1e-99 && (x > 0 || log10p.Exists()):
+	case x < 1e-99:
 		return "<1e-99"
-	case x == 0:
-		return "0"
 	case x > 0.9995:
 		return "1.00"
 	case x < 1e-4:

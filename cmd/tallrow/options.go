@@ -18,6 +18,7 @@ const (
 	formNumber             // a number
 	formSize               // bytes, such as 1GiB
 	formPasses             // auto, 1 or 2
+	formAuto               // auto or a whole number
 	formKinds              // column = kind
 )
 
@@ -75,7 +76,7 @@ var options = []option{
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
 	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onModel, file: true, def: "classical, hc1, and cr1 with --cluster",
-		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
+		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not), driscoll-kraay (periods near in time); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
@@ -83,6 +84,15 @@ var options = []option{
 	{name: "hypothesis", value: "EQUATIONS", form: formMany, group: "Errors", on: onModel, file: true,
 		help: "test equations between coefficients under each kind of errors: \"pallets = 0.5\"; several in one, separated by commas, are tested together; may be repeated",
 		set:  func(s *settings, v value) error { s.hypotheses = v.parts; return nil }},
+	{name: "period", value: "EXPR", group: "Errors", on: onModel, file: true,
+		help: "days or whole numbers in time for driscoll-kraay, such as date(t)",
+		set:  func(s *settings, v value) error { s.period = strings.TrimSpace(v.text()); return nil }},
+	{name: "lags", value: "auto|N", form: formAuto, group: "Errors", on: onModel, file: true, def: "auto",
+		help: "how many periods apart errors still move together",
+		set:  setLags},
+	{name: "kernel", value: "bartlett|parzen|quadratic", group: "Errors", on: onModel, file: true, def: "bartlett",
+		help: "how their weight falls with the distance in time; quadratic is quadratic spectral",
+		set:  choose(func(s *settings) *string { return &s.kernel }, "bartlett", "parzen", "quadratic")},
 	{name: "draws", value: "N", form: formWhole, group: "Errors", on: onModel, file: true, def: "9999",
 		help: "draws of wcr and wcu; with few clusters all patterns of signs instead",
 		set:  setDraws},
@@ -172,9 +182,9 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions = []string{"lags", "kernel", "period", "unit", "keep", "checkpoint",
+	laterOptions = []string{"unit", "keep", "checkpoint",
 		"hide-ids", "frame-from", "at", "sweep", "part"}
-	laterKinds    = []string{"hac", "driscoll-kraay"}
+	laterKinds    = []string{"hac"}
 	laterCommands = []string{"digest", "pool", "launch"}
 )
 

@@ -248,7 +248,7 @@ func (v *view) intervalColumns() []column {
 		}
 		p[j] = none
 		if j < len(e.P) && j < len(e.Log10P) {
-			p[j] = pText(e.P[j], e.Log10P[j])
+			p[j] = pText(e.P[j])
 		}
 	}
 	low, high = align(low, numberWidth), align(high, numberWidth)
@@ -270,7 +270,7 @@ func (v *view) intervalColumns() []column {
 		adj := make([]string, k)
 		for j := range k {
 			if e.PAdjusted[j].Exists() {
-				adj[j] = pText(e.PAdjusted[j], e.Log10P[j])
+				adj[j] = pText(e.PAdjusted[j])
 			}
 		}
 		cols = append(cols, column{head: []string{"p by", v.res.Model.Adjust}, cells: adj, left: true})
@@ -328,7 +328,7 @@ func (v *view) writeFooter(n notes) {
 	}
 	if s := r.SpreadTest; s.P.Exists() {
 		n.add("spread", fmt.Sprintf("test that the spread of the residuals does not go with the terms (Koenker): chi-square %s on %s, p %s",
-			digits(float64(s.Statistic), 5), wholeOr(s.DF), pText(s.P, 0)))
+			digits(float64(s.Statistic), 5), wholeOr(s.DF), pText(s.P)))
 	}
 	if t := v.overallText(); t != "" {
 		n.add("together", t)
@@ -516,7 +516,7 @@ func (v *view) overallText() string {
 		return fmt.Sprintf("no joint test of all terms by %s", v.lead.Name())
 	}
 	t := fmt.Sprintf("test that all terms but the constant are zero, by %s: F %s on %s and %s, p %s", v.lead.Name(),
-		digits(float64(o.F), 5), wholeOr(o.DF1), wholeOr(o.DF2), pText(o.P, vcov.Number(math.NaN())))
+		digits(float64(o.F), 5), wholeOr(o.DF1), wholeOr(o.DF2), pText(o.P))
 	if !v.isConstant(0) {
 		t = strings.Replace(t, "all terms but the constant", "all terms", 1)
 	}

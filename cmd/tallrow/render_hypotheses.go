@@ -39,7 +39,7 @@ func (v *view) writeHypotheses(b *strings.Builder, n notes) bool {
 		} else {
 			on = append(on, none)
 		}
-		p = append(p, pText(h.P, 0)) // a p of 0 is one too small for a float64
+		p = append(p, pText(h.P)) // a p of 0 is one too small for a float64
 	}
 	if len(names) == 0 {
 		return false

@@ -51,6 +51,10 @@ type settings struct {
 	draws         int64
 	seed          int64
 	drawWeights   string
+	period        string
+	fixedLags     bool // lags is given
+	lags          int64
+	kernel        string
 	jsonSchema    bool
 
 	// from says where each given option came from, for messages: "--terms" or
@@ -173,6 +177,19 @@ func setDraws(s *settings, v value) error {
 	}
 	s.draws = n
 	return err
+}
+
+func setLags(s *settings, v value) error {
+	if v.text() == "auto" {
+		s.fixedLags, s.lags = false, 0
+		return nil
+	}
+	n, err := strconv.ParseInt(v.text(), 10, 64)
+	if err != nil || n < 0 {
+		return fmt.Errorf("found %q, want auto or a whole number of zero or more", v.text())
+	}
+	s.fixedLags, s.lags = true, n
+	return nil
 }
 
 func setSeed(s *settings, v value) error {

@@ -1,0 +1,262 @@
+package vcov
+
+import (
+	"fmt"
+	"math"
+
+	"github.com/tallrow/tallrow/accum"
+	"github.com/tallrow/tallrow/stream"
+)
+
+// Errors when what belongs to periods near each other in time may move together,
+// whatever the units (Driscoll & Kraay 1998): with h_t = sum_{i in t} w_i e_i x_i the
+// score of a period,
+//
+//	V = (X'WX)^-1 [ G_0 + sum_j k_j (G_j + G_j') ] (X'WX)^-1,  G_j = sum_t h_t h_{t-j}'
+//
+// over lags j by distance in time, not by position: a period without rows is a period
+// whose score is zero. t on T - 1, T periods with rows; factor 1. Kernels:
+//
+//	bartlett   k_j = 1 - a, a = j/(L+1)                              Newey & West 1987
+//	parzen     1 - 6a^2 + 6a^3 up to a = 1/2, then 2 (1-a)^3         Gallant 1987
+//	quadratic  25/(12 pi^2 a^2) (sin z/z - cos z), a = j/S, z = 6 pi a/5   Andrews 1991
+//
+// The last reaches over all lags. L (or S) is given or chosen from the data by the rule
+// of Newey & West (1994), on the sum of the scores of all terms but the constant in the
+// coordinates of the solve, where terms have about equal spread: units do not matter.
+//
+// Time O(T L K), memory O(T K).
+type lagged struct {
+	col stream.KeyColumn
+	at  []int64   // time of each period
+	s   []float64 // T x K, scores in solved coordinates
+	k   int
+}
+
+// Lags says how far errors over time reach.
+type Lags struct {
+	Kernel string `json:"kernel"` // "bartlett", "parzen" or "quadratic"
+	// Lags is L for bartlett and parzen; Bandwidth is L + 1, or S for quadratic.
+	Lags      int64  `json:"lags"`
+	Bandwidth Number `json:"bandwidth"`
+	Chosen    bool   `json:"chosen"` // by the data
+	Periods   int64  `json:"periods"`
+}
+
+// overTime reports whether a kind is of this family.
+func overTime(kind string) bool { return kind == "driscoll-kraay" }
+
+// mostPeriods bounds the scores kept.
+const mostPeriods = 2_000_000
+
+// timeOf gives a key a place in time: days of dates, whole numbers as they are.
+func timeOf(c stream.KeyColumn, k accum.Key) (int64, bool) {
+	switch c.Kind {
+	case stream.Time:
+		const day = 86_400_000_000_000
+		ns := int64(k.Bits)
+		d := ns / day
+		if ns%day < 0 {
+			d--
+		}
+		return d, c.DateOnly
+	case stream.Int64:
+		return int64(k.Bits), true
+	case stream.Uint64:
+		return int64(k.Bits), k.Bits <= math.MaxInt64
+	case stream.Float64:
+		f := math.Float64frombits(k.Bits)
+		return int64(f), f == math.Trunc(f) && math.Abs(f) < 1<<53
+	}
+	return 0, false
+}
+
+// checkPeriod refuses keys that are no time before anything is read.
+func checkPeriod(c stream.KeyColumn) error {
+	switch {
+	case c.Kind == stream.Time && !c.DateOnly:
+		return stream.Usef("driscoll-kraay: %s is a time to the nanosecond, want days or whole numbers, such as date(%s)", c.Text, c.Text)
+	case c.Kind == stream.Text, c.Kind == stream.Bool:
+		return stream.Usef("driscoll-kraay: %s is %s, want days or whole numbers that count periods", c.Text, c.Kind)
+	}
+	return nil
+}
+
+// add takes in the score of a period; periods come in order.
+func (l *lagged) add(k accum.Key, s []float64) error {
+	t, ok := timeOf(l.col, k)
+	if !ok {
+		return fmt.Errorf("driscoll-kraay: %s holds %s, want days or whole numbers that count periods", l.col.Text, stream.FormatKey(l.col, nil, k.KeyValue))
+	}
+	if len(l.at) == mostPeriods {
+		return fmt.Errorf("driscoll-kraay: %s has more than %d periods; use longer ones", l.col.Text, mostPeriods)
+	}
+	l.at = append(l.at, t)
+	l.s = append(l.s, s...)
+	return nil
+}
+
+func (l *lagged) score(i int) []float64 { return l.s[i*l.k : (i+1)*l.k] }
+
+// weight is k_j at distance j for the bandwidth b.
+func kernelWeight(kernel string, j, b float64) float64 {
+	a := j / b
+	switch kernel {
+	case "bartlett":
+		return max(0, 1-a)
+	case "parzen":
+		switch {
+		case a <= 0.5:
+			return 1 - 6*a*a + 6*a*a*a
+		case a < 1:
+			return 2 * (1 - a) * (1 - a) * (1 - a)
+		}
+		return 0
+	}
+	if a == 0 {
+		return 1
+	}
+	z := 6 * math.Pi * a / 5
+	if z < 1e-2 { // the difference cancels
+		return 1 - z*z/10 + z*z*z*z/280
+	}
+	return 3 / (z * z) * (math.Sin(z)/z - math.Cos(z))
+}
+
+// meat is G_0 + sum_j k_j (G_j + G_j'), K x K.
+func (l *lagged) meat(o *Lags) []float64 {
+	k := l.k
+	out := make([]float64, k*k)
+	sum := make([]float64, k)
+	b := float64(o.Bandwidth)
+	from := 0
+	for i := range l.at {
+		s := l.score(i)
+		clear(sum)
+		if o.Kernel != "quadratic" {
+			for from < i && l.at[i]-l.at[from] > o.Lags {
+				from++
+			}
+		}
+		for p := from; p < i; p++ {
+			axpy(kernelWeight(o.Kernel, float64(l.at[i]-l.at[p]), b), l.score(p), sum)
+		}
+		for a := range k {
+			row := out[a*k : a*k+a+1]
+			for c := range row {
+				// s s' + s m' + m s', one triangle
+				row[c] = math.FMA(s[a], s[c], row[c])
+				row[c] = math.FMA(s[a], sum[c], row[c])
+				row[c] = math.FMA(sum[a], s[c], row[c])
+			}
+		}
+	}
+	for a := range k {
+		for c := range a {
+			out[c*k+a] = out[a*k+c]
+		}
+	}
+	return out
+}
+
+// choose is the rule of Newey & West (1994), Review of Economic Studies 61, 631-653:
+// with sigma_j the autocovariance of the summed scores,
+//
+//	s^(q) = 2 sum_{j<=n} j^q sigma_j,  s^(0) = sigma_0 + 2 sum_{j<=n} sigma_j
+//	bandwidth = c ((s^(q)/s^(0))^2)^(1/(2q+1)) T^(1/(2q+1))
+//
+// n = 4 (T/100)^(2/9), (4/25), (2/25) and c = 1.1447, 2.6614, 1.3221 for bartlett
+// (q = 1), parzen and quadratic (q = 2).
+func (l *lagged) choose(kernel string, constant int) Lags {
+	n := len(l.at)
+	span := 1.0
+	if n > 0 {
+		span = float64(l.at[n-1]-l.at[0]) + 1
+	}
+	series := make([]float64, n)
+	for i := range series {
+		for j, v := range l.score(i) {
+			if j != constant || l.k == 1 {
+				series[i] += v
+			}
+		}
+	}
+	q, c, rate := 1.0, 1.1447, 2.0/9
+	switch kernel {
+	case "parzen":
+		q, c, rate = 2, 2.6614, 4.0/25
+	case "quadratic":
+		q, c, rate = 2, 1.3221, 2.0/25
+	}
+	reach := int64(math.Floor(4 * math.Pow(span/100, rate)))
+	sigma := make([]float64, reach+1)
+	from := 0
+	for i := range series {
+		for from < i && l.at[i]-l.at[from] > reach {
+			from++
+		}
+		for p := from; p <= i; p++ {
+			sigma[l.at[i]-l.at[p]] += series[i] * series[p]
+		}
+	}
+	s0, sq := sigma[0], 0.0
+	for j := int64(1); j <= reach; j++ {
+		s0 += 2 * sigma[j]
+		sq += 2 * math.Pow(float64(j), q) * sigma[j]
+	}
+	b := c * math.Pow(sq/s0*(sq/s0), 1/(2*q+1)) * math.Pow(span, 1/(2*q+1))
+	if math.IsNaN(b) || b < 0 {
+		b = 0
+	}
+	b = min(b, span)
+	if kernel == "quadratic" {
+		return Lags{Kernel: kernel, Bandwidth: Number(max(b, 1e-3)), Chosen: true}
+	}
+	lags := int64(math.Floor(b))
+	return Lags{Kernel: kernel, Lags: lags, Bandwidth: Number(lags + 1), Chosen: true}
+}
+
+// reach is what was asked for or chosen.
+func (l *lagged) reach(o *Options, constant int) Lags {
+	kernel := o.Kernel
+	if kernel == "" {
+		kernel = "bartlett"
+	}
+	out := Lags{Kernel: kernel, Lags: o.Lags, Bandwidth: Number(o.Lags + 1)}
+	switch {
+	case o.AutoLags:
+		out = l.choose(kernel, constant)
+	case kernel == "quadratic":
+		out.Bandwidth = Number(max(float64(o.Lags), 1e-3))
+	}
+	out.Periods = int64(len(l.at))
+	return out
+}
+
+// driscollKraay is the estimate from the scores of periods.
+func (x *solution) driscollKraay(l *lagged, o *Lags) *estimate {
+	m := l.meat(o)
+	t := len(l.at)
+	return &estimate{v: sandwich(x.inverse, m, x.k()), meat: m, factor: 1, df: float64(t - 1), joint: clusterJoint(t)}
+}
+
+// checkLags refuses what cannot be a reach.
+func (o *Options) checkLags() error {
+	switch o.Kernel {
+	case "", "bartlett", "parzen", "quadratic":
+	default:
+		return stream.Usef("kernel: found %q, want bartlett, parzen or quadratic", o.Kernel)
+	}
+	if o.Lags < 0 {
+		return stream.Usef("lags: found %d, want auto or zero or more", o.Lags)
+	}
+	return nil
+}
+
+// lagsText says how far a kind reached, for messages.
+func (o *Lags) text() string {
+	if o.Kernel == "quadratic" {
+		return fmt.Sprintf("quadratic kernel, bandwidth %.3g", float64(o.Bandwidth))
+	}
+	return fmt.Sprintf("%s kernel, %d lags", o.Kernel, o.Lags)
+}
