@@ -252,11 +252,3 @@ func (o *Options) checkLags() error {
 	}
 	return nil
 }
-
-// lagsText says how far a kind reached, for messages.
-func (o *Lags) text() string {
-	if o.Kernel == "quadratic" {
-		return fmt.Sprintf("quadratic kernel, bandwidth %.3g", float64(o.Bandwidth))
-	}
-	return fmt.Sprintf("%s kernel, %d lags", o.Kernel, o.Lags)
-}

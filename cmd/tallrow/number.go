@@ -20,6 +20,8 @@ func digits(x float64, n int) string {
 	switch {
 	case math.IsNaN(x) || math.IsInf(x, 0):
 		return none
+	case x == 0:
+		return "0"
 	}
 	e := strconv.FormatFloat(x, 'e', n-1, 64)
 	exp, _ := strconv.Atoi(e[strings.IndexByte(e, 'e')+1:])
