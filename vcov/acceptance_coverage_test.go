@@ -33,7 +33,7 @@ func simulate(t *testing.T, reps int, spec stream.Spec, names []string, draw fun
 			defer wg.Done()
 			for rep := w; rep < reps; rep += n {
 				tb := draw(rand.New(rand.NewPCG(12, uint64(rep))))
-				r, err := tryFit(tb.source(4096), spec, vcov.Options{Errors: kinds(names...), Workers: 1})
+				r, err := tryFit(tb.source(4096), spec, vcov.Options{Errors: kinds(names...), Workers: 1, Draws: 399, Seed: uint64(rep)})
 				if err != nil {
 					t.Errorf("replication %d: %v", rep, err)
 					return
@@ -122,7 +122,7 @@ func TestCoverageClusters(t *testing.T) {
 	}
 	size := []int{6, 7, 8, 8, 9, 10, 12, 13, 14, 16, 18, 20, 22, 24, 27, 30, 33, 37, 41, 46}
 	treated := map[int]bool{1: true, 5: true, 7: true, 12: true, 16: true, 19: true}
-	c := simulate(t, reps, stream.Spec{Outcome: "y", Terms: []string{"x1", "x2"}, Keys: []string{"g"}}, []string{"classical", "cr0", "cr1"}, func(r *rand.Rand) *table {
+	c := simulate(t, reps, stream.Spec{Outcome: "y", Terms: []string{"x1", "x2"}, Keys: []string{"g"}}, []string{"classical", "cr0", "cr1", "cr2", "cr3", "wcr"}, func(r *rand.Rand) *table {
 		var x1, x2, y []float64
 		var g []int64
 		for k, n := range size {
@@ -144,7 +144,9 @@ func TestCoverageClusters(t *testing.T) {
 		tb.int("g", g)
 		return tb
 	})
-	for kind, p := range map[string][2]float64{"classical": {0.564, 0.487}, "cr0": {0.892, 0.873}, "cr1": {0.901, 0.883}} {
+	for kind, p := range map[string][2]float64{"classical": {0.564, 0.487}, "cr0": {0.892, 0.873}, "cr1": {0.901, 0.883},
+		// cr2 on Satterthwaite's degrees of freedom; wcr with signs
+		"cr2": {0.941, 0.941}, "cr3": {0.954, 0.943}, "wcr": {0.946, 0.939}} {
 		c.check(t, kind, p, 8_000)
 	}
 }
