@@ -283,7 +283,10 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	}
 	if rows {
 		p.Passes = 2
-		if p.needs.Clusters == nil {
+		switch {
+		case p.moments: // and as much for each pair of columns that levels add
+			p.PerCluster = accum.ClusterBytes(int((c - 1) * (c + 2) / 2))
+		case p.needs.Clusters == nil:
 			p.PerCluster = accum.ClusterBytes(int(c) - 1)
 		}
 		p.ClusterMemory = accum.HeldClusters(o.Memory)

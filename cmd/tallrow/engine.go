@@ -7,6 +7,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+	"runtime"
 	"runtime/debug"
 	"strings"
 
@@ -44,6 +45,7 @@ func (a *app) open(ctx context.Context, s *settings, o stream.Options) (stream.S
 	if err != nil {
 		return nil, err
 	}
+	runtime.GC() // what decoding a footer leaves behind can be as large as all that follows
 	if s.first > 0 {
 		src = stream.First(src, s.first)
 	}

@@ -5,7 +5,6 @@ import (
 	"errors"
 	"hash/crc32"
 	"io"
-	"slices"
 
 	"github.com/parquet-go/parquet-go/format"
 	"github.com/tallrow/tallrow/stream"
@@ -58,7 +57,7 @@ type chunk struct {
 	r     io.ReaderAt
 	col   *column
 	pos   stream.Position
-	meta  *format.ColumnMetaData
+	meta  *chunkMeta
 	off   int64 // of the next page header
 	end   int64
 	rows  int64 // of the row group
@@ -92,7 +91,7 @@ type chunkBuffers struct {
 }
 
 // open points the chunk at a row group.
-func (c *chunk) open(r io.ReaderAt, col *column, meta *format.ColumnMetaData, rows int64, pos stream.Position) {
+func (c *chunk) open(r io.ReaderAt, col *column, meta *chunkMeta, rows int64, pos stream.Position) {
 	c.release()
 	pos.Column = col.name
 	start := chunkStart(meta)
@@ -170,7 +169,7 @@ func (c *chunk) checkHeader(h *pageHeader) error {
 	switch enc := format.Encoding(h.encoding); enc {
 	case format.DeltaBinaryPacked, format.DeltaLengthByteArray, format.DeltaByteArray, format.ByteStreamSplit:
 		// The header has no checksum, and these can be taken for plain values.
-		if (h.typ == pageData || h.typ == pageDataV2) && !slices.Contains(c.meta.Encoding, enc) {
+		if (h.typ == pageData || h.typ == pageDataV2) && !c.meta.has(enc) {
 			return c.damage("the page at byte %d has the encoding %s, which is not among those of its chunk", c.off, enc)
 		}
 	}

@@ -269,7 +269,7 @@ func TestDamageMessage(t *testing.T) {
 		t.Fatal(err)
 	}
 	quay := f.schema.Lookup("quay")
-	m := f.meta.RowGroups[1].Columns[f.cols[quay].leaf].MetaData
+	m := f.meta.RowGroups[1].Columns[f.cols[quay].leaf]
 	data[m.DataPageOffset+m.TotalCompressedSize-(m.DataPageOffset-m.DictionaryPageOffset)-1] ^= 0x10
 	_, err = tryRead(data)
 	if err == nil || !strings.HasPrefix(err.Error(), "quay.parquet row group 2 column quay: damaged: the checksum of the page at byte ") {

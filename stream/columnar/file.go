@@ -13,7 +13,6 @@ import (
 	"sync"
 	"time"
 
-	"github.com/parquet-go/parquet-go/format"
 	"github.com/tallrow/tallrow/stream"
 )
 
@@ -41,7 +40,7 @@ type File struct {
 	modTime time.Time
 	piped   bool
 	skipBad bool
-	meta    *format.FileMetaData
+	meta    *fileMeta
 	cols    []column
 	refused []Refused
 	schema  stream.Schema
@@ -78,7 +77,6 @@ func (f *File) open(o stream.Options) error {
 	if err != nil {
 		return err
 	}
-	f.meta = meta
 	f.floats = knowsNaN(meta.CreatedBy)
 	var leaves int
 	if f.cols, f.refused, leaves, err = buildColumns(meta, f.name); err != nil {
@@ -87,6 +85,7 @@ func (f *File) open(o stream.Options) error {
 	if err := checkGroups(meta, f.cols, leaves, dataEnd, f.name); err != nil {
 		return err
 	}
+	f.meta = keep(meta, f.cols, leaves)
 	for i := range f.cols {
 		c := &f.cols[i]
 		if k, ok := o.Kinds[c.name]; ok {
@@ -101,12 +100,12 @@ func (f *File) open(o stream.Options) error {
 			return stream.Usef("%s: column %s cannot be used: %s", f.name, r.Name, r.Reason)
 		}
 	}
-	row, stored, before := int64(0), int64(0), make([]int64, len(meta.RowGroups)+1)
-	for g := range meta.RowGroups {
+	row, stored, before := int64(0), int64(0), make([]int64, len(f.meta.RowGroups)+1)
+	for g := range f.meta.RowGroups {
 		f.first = append(f.first, row)
-		row += meta.RowGroups[g].NumRows
+		row += f.meta.RowGroups[g].NumRows
 		for i := range f.cols {
-			stored += max(0, meta.RowGroups[g].Columns[f.cols[i].leaf].MetaData.TotalCompressedSize)
+			stored += max(0, f.meta.RowGroups[g].Columns[f.cols[i].leaf].TotalCompressedSize)
 		}
 		before[g+1] = stored
 	}
@@ -158,7 +157,7 @@ func (f *File) workerBytes() int64 {
 	}
 	total := int64(0)
 	for i := range f.cols {
-		m := &f.meta.RowGroups[largest].Columns[f.cols[i].leaf].MetaData
+		m := &f.meta.RowGroups[largest].Columns[f.cols[i].leaf]
 		est := 3 * min(m.TotalUncompressedSize, 1<<20)
 		// A file with very many columns is not probed beyond the first ones.
 		if i < 256 && m.NumValues > 0 {
@@ -173,7 +172,7 @@ func (f *File) workerBytes() int64 {
 
 // probe reads the headers of a chunk up to the first data page. 0 if they cannot
 // be read: that is an error of the scan, if it comes so far.
-func (f *File) probe(c *column, m *format.ColumnMetaData) int64 {
+func (f *File) probe(c *column, m *chunkMeta) int64 {
 	var ch chunk
 	ch.open(f.file, c, m, m.NumValues, stream.Position{File: f.name})
 	dict := int64(0)

@@ -82,6 +82,66 @@ func readFooter(r io.ReaderAt, size int64, name string) (meta *format.FileMetaDa
 	return meta, dataEnd, nil
 }
 
+// fileMeta is what is kept of a footer: of a file with many row groups it would
+// otherwise be most of what a reader holds.
+type fileMeta struct {
+	NumRows      int64
+	CreatedBy    string
+	ColumnOrders []format.ColumnOrder
+	RowGroups    []groupMeta
+}
+
+type groupMeta struct {
+	NumRows int64
+	Columns []chunkMeta // by leaf; those of refused columns are empty
+}
+
+type chunkMeta struct {
+	Codec                 format.CompressionCodec
+	Encodings             uint32 // one bit for each
+	NumValues             int64
+	TotalCompressedSize   int64
+	TotalUncompressedSize int64
+	DataPageOffset        int64
+	DictionaryPageOffset  int64
+	Statistics            statistics
+}
+
+type statistics struct {
+	Min, Max, MinValue, MaxValue []byte
+	NullCount                    int64
+}
+
+// has reports whether the chunk says that it uses an encoding.
+func (m *chunkMeta) has(e format.Encoding) bool { return e >= 0 && e < 32 && m.Encodings>>e&1 == 1 }
+
+// keep takes over what the columns need of a footer.
+func keep(meta *format.FileMetaData, cols []column, leaves int) *fileMeta {
+	f := &fileMeta{NumRows: meta.NumRows, CreatedBy: meta.CreatedBy, ColumnOrders: meta.ColumnOrders, RowGroups: make([]groupMeta, len(meta.RowGroups))}
+	for g := range f.RowGroups {
+		rg := &meta.RowGroups[g]
+		to := &f.RowGroups[g]
+		to.NumRows, to.Columns = rg.NumRows, make([]chunkMeta, leaves)
+		for i := range cols {
+			to.Columns[cols[i].leaf] = keepChunk(&rg.Columns[cols[i].leaf].MetaData)
+		}
+	}
+	return f
+}
+
+func keepChunk(m *format.ColumnMetaData) chunkMeta {
+	st := &m.Statistics
+	c := chunkMeta{Codec: m.Codec, NumValues: m.NumValues, TotalCompressedSize: m.TotalCompressedSize, TotalUncompressedSize: m.TotalUncompressedSize,
+		DataPageOffset: m.DataPageOffset, DictionaryPageOffset: m.DictionaryPageOffset,
+		Statistics: statistics{st.Min, st.Max, st.MinValue, st.MaxValue, st.NullCount}}
+	for _, e := range m.Encoding {
+		if e >= 0 && e < 32 {
+			c.Encodings |= 1 << e
+		}
+	}
+	return c
+}
+
 // checkGroups checks the row groups against the schema and the file.
 func checkGroups(meta *format.FileMetaData, cols []column, leaves int, dataEnd int64, name string) error {
 	total := int64(0)
@@ -113,7 +173,8 @@ func checkGroups(meta *format.FileMetaData, cols []column, leaves int, dataEnd i
 			if rg.NumRows == 0 {
 				continue
 			}
-			start := chunkStart(m)
+			k := keepChunk(m)
+			start := chunkStart(&k)
 			if start < 4 || m.TotalCompressedSize <= 0 || start > dataEnd || m.TotalCompressedSize > dataEnd-start {
 				return damage(pos, "its %d bytes at byte %d lie outside the file's data (4 to %d)", m.TotalCompressedSize, start, dataEnd)
 			}
@@ -133,7 +194,7 @@ func checkGroups(meta *format.FileMetaData, cols []column, leaves int, dataEnd i
 
 // chunkStart is the place of the first page. Writers leave the dictionary's
 // offset 0, or wrong, when there is no dictionary.
-func chunkStart(m *format.ColumnMetaData) int64 {
+func chunkStart(m *chunkMeta) int64 {
 	if d := m.DictionaryPageOffset; d > 0 && d < m.DataPageOffset {
 		return d
 	}

@@ -28,7 +28,7 @@ import (
 // bounds of the stored values of a chunk; ok is false if there are none to be
 // believed.
 func (f *File) bounds(group int, c *column) (low, high []byte, ok bool) {
-	st := &f.meta.RowGroups[group].Columns[c.leaf].MetaData.Statistics
+	st := &f.meta.RowGroups[group].Columns[c.leaf].Statistics
 	signed := false
 	switch c.conv {
 	case convF16, convF32, convF64:
@@ -92,7 +92,7 @@ func knowsNaN(created string) bool {
 // cells bounds the cells of a column in a row group, as numbers or in its kind.
 // sure tells that every cell fits its kind, so that no row is malformed.
 func (f *File) cells(group int, c *column, asNumber bool) (r stream.Range, sure bool) {
-	m := &f.meta.RowGroups[group].Columns[c.leaf].MetaData
+	m := &f.meta.RowGroups[group].Columns[c.leaf]
 	nulls := m.Statistics.NullCount
 	r.AllMissing = c.maxDef > 0 && nulls == m.NumValues && nulls > 0
 	switch c.conv {

@@ -268,27 +268,27 @@ func TestBadStatistics(t *testing.T) {
 	data := writeTable(t, quayColumns, quayTable(r, 50, nulls["none"]), 50, WriterOptions{})
 	le64 := func(x uint64) []byte { return binary.LittleEndian.AppendUint64(nil, x) }
 	bits := math.Float64bits
-	set := func(low, high []byte) func(f *File, s *format.Statistics) {
-		return func(_ *File, s *format.Statistics) { *s = format.Statistics{MinValue: low, MaxValue: high} }
+	set := func(low, high []byte) func(f *File, s *statistics) {
+		return func(_ *File, s *statistics) { *s = statistics{MinValue: low, MaxValue: high} }
 	}
-	old := func(low, high []byte) func(f *File, s *format.Statistics) {
-		return func(_ *File, s *format.Statistics) { *s = format.Statistics{Min: low, Max: high} }
+	old := func(low, high []byte) func(f *File, s *statistics) {
+		return func(_ *File, s *statistics) { *s = statistics{Min: low, Max: high} }
 	}
-	noOrder := func(change func(f *File, s *format.Statistics)) func(f *File, s *format.Statistics) {
-		return func(f *File, s *format.Statistics) { change(f, s); f.meta.ColumnOrders = nil }
+	noOrder := func(change func(f *File, s *statistics)) func(f *File, s *statistics) {
+		return func(f *File, s *statistics) { change(f, s); f.meta.ColumnOrders = nil }
 	}
-	otherOrder := func(change func(f *File, s *format.Statistics)) func(f *File, s *format.Statistics) {
-		return func(f *File, s *format.Statistics) {
+	otherOrder := func(change func(f *File, s *statistics)) func(f *File, s *statistics) {
+		return func(f *File, s *statistics) {
 			change(f, s)
 			f.meta.ColumnOrders = make([]format.ColumnOrder, len(f.meta.ColumnOrders))
 		}
 	}
 	for _, tc := range []struct {
 		column, what string
-		change       func(f *File, s *format.Statistics)
+		change       func(f *File, s *statistics)
 		bounded      bool
 	}{
-		{"minutes", "as written", func(*File, *format.Statistics) {}, true},
+		{"minutes", "as written", func(*File, *statistics) {}, true},
 		{"minutes", "set", set(le64(bits(1)), le64(bits(2))), true},
 		{"minutes", "crossed", set(le64(bits(2)), le64(bits(1))), false},
 		{"minutes", "NaN below", set(le64(bits(math.NaN())), le64(bits(2))), false},
@@ -299,8 +299,8 @@ func TestBadStatistics(t *testing.T) {
 		{"minutes", "old", old(le64(bits(1)), le64(bits(2))), true},
 		{"minutes", "no order", noOrder(set(le64(bits(1)), le64(bits(2)))), true},
 		{"minutes", "another order", otherOrder(set(le64(bits(1)), le64(bits(2)))), false},
-		{"minutes", "another writer", func(f *File, _ *format.Statistics) { f.floats = false }, false},
-		{"pallets", "another writer", func(f *File, _ *format.Statistics) { f.floats = false }, true},
+		{"minutes", "another writer", func(f *File, _ *statistics) { f.floats = false }, false},
+		{"pallets", "another writer", func(f *File, _ *statistics) { f.floats = false }, true},
 		{"pallets", "crossed", set(le64(1), le64(1<<63)), false},
 		{"pallets", "signed", set(le64(1<<63), le64(1)), true},
 		{"pallets", "old", old(le64(1), le64(1)), true},
@@ -320,15 +320,15 @@ func TestBadStatistics(t *testing.T) {
 		{"day", "beyond int64", set([]byte{0, 0, 0, 0x80}, []byte{0, 0, 0, 0}), false},
 		{"day", "set", set([]byte{0, 0, 0, 0}, []byte{9, 0, 0, 0}), true},
 		{"t", "set", set(le64(5), le64(6)), true},
-		{"minutes", "more nulls than rows", func(_ *File, s *format.Statistics) { s.NullCount = 51 }, false},
-		{"minutes", "all null", func(_ *File, s *format.Statistics) { s.NullCount = 50 }, true},
+		{"minutes", "more nulls than rows", func(_ *File, s *statistics) { s.NullCount = 51 }, false},
+		{"minutes", "all null", func(_ *File, s *statistics) { s.NullCount = 50 }, true},
 	} {
 		f, err := openBytes(data, stream.Options{})
 		if err != nil {
 			t.Fatal(err)
 		}
 		c := &f.cols[f.schema.Lookup(tc.column)]
-		tc.change(f, &f.meta.RowGroups[0].Columns[c.leaf].MetaData.Statistics)
+		tc.change(f, &f.meta.RowGroups[0].Columns[c.leaf].Statistics)
 		r, sure := f.cells(0, c, false)
 		if r.Bounded != tc.bounded {
 			t.Errorf("%s, %s: %+v", tc.column, tc.what, r)

@@ -128,7 +128,7 @@ func pageKinds(t *testing.T, f *File, col int) (plain, indexed int) {
 	t.Helper()
 	var c chunk
 	rg := &f.meta.RowGroups[0]
-	c.open(f.file, &f.cols[col], &rg.Columns[f.cols[col].leaf].MetaData, rg.NumRows, stream.Position{})
+	c.open(f.file, &f.cols[col], &rg.Columns[f.cols[col].leaf], rg.NumRows, stream.Position{})
 	for c.left > 0 {
 		if err := c.next(); err != nil {
 			t.Fatal(err)

@@ -107,7 +107,7 @@ func (s *segment) openGroup() error {
 	s.open = true
 	for j := range s.readers {
 		r := &s.readers[j]
-		r.open(s.f.file, r.col, &rg.Columns[r.col.leaf].MetaData, rg.NumRows, stream.Position{File: s.f.name, Group: s.group + 1})
+		r.open(s.f.file, r.col, &rg.Columns[r.col.leaf], rg.NumRows, stream.Position{File: s.f.name, Group: s.group + 1})
 		if rg.NumRows > hugeRows {
 			r.group, r.pages = s.group, &s.f.pages
 		}
