@@ -101,3 +101,46 @@ func TestBootstrapOfAllPatterns(t *testing.T) {
 		}
 	}
 }
+
+// A single equation is tested by the same draws: that of a term alone gives the
+// term's own p and interval, against another value those of the moved outcome, and a
+// difference of terms those of the model in which it is a coefficient.
+func TestBootstrapOfEquations(t *testing.T) {
+	tb, a, y := bootTable(14, 8)
+	n := len(y)
+	b, sum, moved := make([]float64, n), make([]float64, n), make([]float64, n)
+	r := rand.New(rand.NewPCG(8, 42))
+	for i := range n {
+		b[i] = r.NormFloat64()
+		sum[i] = a[i] + b[i]
+		moved[i] = y[i] - 0.25*a[i]
+	}
+	tb.float("b", b)
+	tb.float("both", sum)
+	tb.float("moved", moved)
+	o := vcov.Options{Errors: kinds("cr1", "wcr", "wcu"), Draws: 999, Seed: 3}
+	with := func(outcome string, terms []string, h ...string) *vcov.Result {
+		o := o
+		o.Hypotheses = h
+		return fit(t, tb.source(60), stream.Spec{Outcome: outcome, Terms: terms, Keys: []string{"quay"}}, o)
+	}
+	res := with("y", []string{"a", "b"}, "a = 0", "a = 0.25", "a - b = 0", "a = 0, b = 0")
+	other := with("moved", []string{"a", "b"})
+	turned := with("y", []string{"a", "both"}) // a + b both: the coefficient of a is that of a less that of b
+	for i, kind := range []string{"wcr", "wcu"} {
+		at := func(h int) vcov.Hypothesis { return res.Hypotheses[3*h+1+i] }
+		check := func(what string, h vcov.Hypothesis, e *vcov.Errors, shift float64) {
+			t.Helper()
+			if h.Errors != e.Name() || h.P != e.P[1] || h.DF2.Exists() ||
+				!near(float64(h.Low), float64(e.Low[1])+shift, 1, 1e-9) || !near(float64(h.High), float64(e.High[1])+shift, 1, 1e-9) {
+				t.Errorf("%s by %s: p %v, %v to %v; the coefficient has p %v, %v to %v (shifted by %v)", what, h.Errors, h.P, h.Low, h.High, e.P[1], e.Low[1], e.High[1], shift)
+			}
+		}
+		check("a = 0", at(0), errorsOf(t, res, kind), 0)
+		check("a = 0.25", at(1), errorsOf(t, other, kind), 0.25)
+		check("a - b = 0", at(2), errorsOf(t, turned, kind), 0)
+		if joint := at(3); joint.F.Exists() || joint.Reason == nil {
+			t.Errorf("two equations by %s: F %v", kind, joint.F)
+		}
+	}
+}

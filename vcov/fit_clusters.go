@@ -1,6 +1,7 @@
 package vcov
 
 import (
+	"cmp"
 	"math"
 	"slices"
 
@@ -163,7 +164,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	}
 	f.tellLost(e, r)
 	if bootstraps(k.Name) {
-		f.fail = f.bootstrap(e, k.Name, sums[0])
+		f.fail = cmp.Or(f.fail, f.bootstrap(e, k.Name, sums[0]))
 	}
 	if x.apart != nil && x.rank() < fewest {
 		f.note("no-joint-test", "%s has no joint test of all terms: clusters join the levels of %s, which was eliminated", e.Name(), x.apart.text())

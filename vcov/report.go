@@ -1,6 +1,7 @@
 package vcov
 
 import (
+	"cmp"
 	"fmt"
 	"maps"
 	"math"
@@ -56,7 +57,11 @@ func (f *fitter) result() *Result {
 			e.Extremes = x.extremes(x.judged)
 		}
 		for i, h := range x.hypotheses {
-			tests[i] = append(tests[i], x.test(h, &e, x.judged, f.o.Level))
+			t := x.test(h, &e, x.judged, f.o.Level)
+			if bootstraps(k.Name) {
+				f.fail = cmp.Or(f.fail, f.bootstrapSingle(&t, h, k, &e))
+			}
+			tests[i] = append(tests[i], t)
 		}
 		r.Errors = append(r.Errors, e)
 	}

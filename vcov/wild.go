@@ -2,6 +2,7 @@ package vcov
 
 import (
 	"context"
+	"fmt"
 	"math"
 	"math/bits"
 	"runtime"
@@ -225,44 +226,45 @@ func (b *Bootstrap) ends(cs []curve, se, factor, alpha float64) (low, high float
 	return find(-1), find(1)
 }
 
-// infer fills p and intervals of coefficient j, given its error and t by cr1.
-func (w *wild) infer(ctx context.Context, e *Errors, kind string, b *Bootstrap, j int, d []float64, level float64) error {
-	size := dot(d, d)
-	unit := w.x.state.Frame.YInv
-	se := float64(e.SE[j]) * unit // units of v
-	est := w.x.est[j] * unit
-	cs, err := w.curves(ctx, b, d, size)
+// judge gives p of the hypothesis that the combination with d = L'c is null, and the
+// interval of the combination, given its estimate and error by cr1.
+func (w *wild) judge(ctx context.Context, kind string, b *Bootstrap, d []float64, estimate, null, se, level float64) (p, low, high float64, err error) {
+	unit := w.x.state.Frame.YInv // in units of v
+	est, delta := estimate*unit, (estimate-null)*unit
+	se *= unit
+	cs, err := w.curves(ctx, b, d, dot(d, d))
 	if err != nil {
-		return err
+		return 0, 0, 0, err
 	}
-	alpha := 1 - level
-	var p, low, high float64
 	if kind == "wcr" {
-		p = b.chance(cs, est, est, se, w.factor)
+		p = b.chance(cs, delta, delta, se, w.factor)
 		// delta = estimate - r: the largest delta is the lower end.
-		left, right := b.ends(cs, se, w.factor, alpha)
-		low, high = est-right, est+left
-	} else {
-		p = b.chance(cs, est, 0, se, w.factor)
-		ts := make([]float64, len(cs))
-		for i, c := range cs {
-			ts[i] = math.Abs(c.n0) / math.Sqrt(w.factor*c.q0)
-			if math.IsNaN(ts[i]) {
-				ts[i] = 0
-			}
-		}
-		slices.Sort(ts)
-		at := int(math.Ceil(level*float64(len(ts)+1))) - 1
-		q := math.Inf(1)
-		if at < len(ts) {
-			q = ts[at]
-		}
-		low, high = est-q*se, est+q*se
+		left, right := b.ends(cs, se, w.factor, 1-level)
+		return p, (est - right) / unit, (est + left) / unit, nil
 	}
-	e.P[j], e.Log10P[j] = Number(p), Number(math.Log10(p))
-	e.Low[j], e.High[j] = Number(low/unit), Number(high/unit)
-	e.DF[j] = Number(nan)
-	return nil
+	p = b.chance(cs, delta, 0, se, w.factor)
+	ts := make([]float64, len(cs))
+	for i, c := range cs {
+		ts[i] = math.Abs(c.n0) / math.Sqrt(w.factor*c.q0)
+		if math.IsNaN(ts[i]) {
+			ts[i] = 0
+		}
+	}
+	slices.Sort(ts)
+	q := math.Inf(1)
+	if at := int(math.Ceil(level*float64(len(ts)+1))) - 1; at < len(ts) {
+		q = ts[at]
+	}
+	return p, (est - q*se) / unit, (est + q*se) / unit, nil
+}
+
+// along is d = L'c of coefficient j, or of a combination behind the coefficients.
+func (a *adjusted) along(j int) []float64 {
+	d := make([]float64, a.m)
+	for q := range d {
+		d[q] = a.d[q*a.k+j]
+	}
+	return d
 }
 
 // bootstrap fills the entry of wcr or wcu, which holds the errors and t of cr1.
@@ -282,13 +284,12 @@ func (f *fitter) bootstrap(e *Errors, kind string, c *clusterSums) error {
 			}
 			continue
 		}
-		d := make([]float64, w.m)
-		for q := range d {
-			d[q] = c.adjusted.d[q*c.adjusted.k+j]
-		}
-		if err := w.infer(f.ctx, e, kind, &b, j, d, f.o.Level); err != nil {
+		p, low, high, err := w.judge(f.ctx, kind, &b, c.adjusted.along(j), x.est[j], 0, float64(e.SE[j]), f.o.Level)
+		if err != nil {
 			return err
 		}
+		e.P[j], e.Log10P[j], e.DF[j] = Number(p), Number(math.Log10(p)), Number(nan)
+		e.Low[j], e.High[j] = Number(low), Number(high)
 		unbounded = unbounded || !e.Low[j].Exists() || !e.High[j].Exists()
 	}
 	if unbounded {
@@ -298,6 +299,24 @@ func (f *fitter) bootstrap(e *Errors, kind string, c *clusterSums) error {
 		e.Overall = nil // it would be that of cr1
 	}
 	return nil
+}
+
+// bootstrapSingle puts draws in the place of t in the test of a single equation.
+func (f *fitter) bootstrapSingle(out *Hypothesis, h *hypothesis, k Kind, e *Errors) error {
+	if out.Reason != nil || e.Bootstrap == nil {
+		return nil
+	}
+	c := f.groups[k.Cluster]
+	j := f.sol.k() + h.single
+	n := Number(nan)
+	if out.DF2 = n; c.adjusted.lone[j] {
+		out.F, out.P, out.T, out.Low, out.High = n, n, n, n, n
+		out.Reason = ptr(fmt.Sprintf("a single cluster decides it: it has no p by %s", e.Name()))
+		return nil
+	}
+	p, low, high, err := c.wild.judge(f.ctx, k.Name, e.Bootstrap, c.adjusted.along(j), float64(out.Estimate), h.values[0], float64(out.SE), f.o.Level)
+	out.P, out.Low, out.High = Number(p), Number(low), Number(high)
+	return err
 }
 
 // checkBootstrap refuses what cannot be drawn.

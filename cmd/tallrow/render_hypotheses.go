@@ -35,7 +35,11 @@ func (v *view) writeHypotheses(b *strings.Builder, n notes) bool {
 		est, se, span = append(est, single[0]), append(se, single[1]), append(span, single[2])
 		f = append(f, digits(float64(h.F), 5))
 		if h.F.Exists() {
-			on = append(on, wholeOr(h.DF1)+" and "+wholeOr(h.DF2))
+			df := wholeOr(h.DF1) + " and " + wholeOr(h.DF2)
+			if h.P.Exists() && !h.DF2.Exists() {
+				df = "draws" // of a bootstrap
+			}
+			on = append(on, df)
 		} else {
 			on = append(on, none)
 		}
