@@ -1,10 +1,12 @@
 package vcov_test
 
 import (
+	"errors"
 	"math"
 	"math/rand/v2"
 	"testing"
 
+	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/vcov"
 )
@@ -142,5 +144,31 @@ func TestBootstrapOfEquations(t *testing.T) {
 		if joint := at(3); joint.F.Exists() || joint.Reason == nil {
 			t.Errorf("two equations by %s: F %v", kind, joint.F)
 		}
+	}
+}
+
+// What keeps numbers of all clusters or periods says so when the memory does not allow
+// it: no draws, and no errors over time.
+func TestKeptNumbersAreBounded(t *testing.T) {
+	const n = 9_000
+	r := rand.New(rand.NewPCG(1, 43))
+	x, y, at := make([]float64, n), make([]float64, n), make([]int64, n)
+	for i := range n {
+		x[i], y[i], at[i] = r.NormFloat64(), r.NormFloat64(), int64(i)
+	}
+	tb := &table{}
+	tb.float("y", y)
+	tb.float("x", x)
+	tb.int("at", at)
+	spec := stream.Spec{Outcome: "y", Terms: []string{"x"}, Keys: []string{"at"}}
+	few := vcov.Options{Memory: 1 << 20, Errors: kinds("cr1", "wcr"), Draws: 99}
+	res := fit(t, tb.source(1000), spec, few)
+	if e := res.Errors[1]; e.Status != "unavailable" || e.Reason == nil || e.P[1].Exists() {
+		t.Errorf("wcr of %d clusters within 1 MiB: %s", n, e.Status)
+	}
+	few.Errors = []vcov.Kind{{Name: "driscoll-kraay", Cluster: 0}}
+	var m *accum.MemoryError
+	if _, err := tryFit(tb.source(1000), spec, few); !errors.As(err, &m) {
+		t.Errorf("driscoll-kraay over %d periods within 1 MiB: %v, want a refusal for memory", n, err)
 	}
 }

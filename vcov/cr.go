@@ -21,8 +21,7 @@ import (
 // with t on G-1 and joint tests (G-q)/((G-1) q) W on F(q, G-q). Time O(K^3).
 func (x *solution) clusterRobust(kind string, c *clusterSums) *estimate {
 	k, g := x.k(), c.groups
-	gf, n := float64(g), float64(x.n)
-	r := &estimate{factor: 1, df: gf - 1}
+	r := &estimate{factor: x.clusterFactor(kind, g), df: float64(g - 1)}
 	meat := c.meat
 	if c.apart != nil {
 		own := *c.apart
@@ -31,7 +30,6 @@ func (x *solution) clusterRobust(kind string, c *clusterSums) *estimate {
 	v := sandwich(x.inverse, meat, k)
 	r.v, r.meat = v, meat
 	if kind == "cr1" {
-		r.factor = gf / (gf - 1) * ((n - 1) / float64(x.df()))
 		for i := range v {
 			v[i] *= r.factor
 		}
@@ -42,6 +40,15 @@ func (x *solution) clusterRobust(kind string, c *clusterSums) *estimate {
 	r.joint = clusterJoint(g)
 	r.noP = x.loneClusters(c.scores)
 	return r
+}
+
+// clusterFactor is G/(G-1) (N-1)/(N-k) for cr1, 1 for cr0.
+func (x *solution) clusterFactor(kind string, groups int) float64 {
+	if kind == "cr0" {
+		return 1
+	}
+	g := float64(groups)
+	return g / (g - 1) * ((float64(x.n) - 1) / float64(x.df()))
 }
 
 // clusterJoint is (G-q)/((G-1) q) W on F(q, G-q) (the scaling of Hotelling 1931).
@@ -88,10 +95,8 @@ func (x *solution) walk(ctx context.Context, sc *accum.Scores, c *clusterSums) e
 			if c.shape != nil {
 				c.shape.add(g)
 			}
-			if c.wild != nil {
-				if c.wild.add(c.adjusted); len(c.wild.h) > wildMemory {
-					c.wild = nil
-				}
+			if c.wild != nil && !c.wild.add(c.adjusted) {
+				c.wild = nil
 			}
 		}
 		x.projectVec(g.S, s)

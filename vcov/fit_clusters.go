@@ -45,14 +45,14 @@ func (f *fitter) clusters() error {
 		if full[key] && sc.Moments() && x.apart == nil && x.k() <= momentsMost {
 			c.adjusted = newAdjusted(x)
 			if f.wants(key, bootstraps) {
-				c.wild = newWild(x)
+				c.wild = newWild(x, f.o.Memory)
 			}
 			if f.o.Shape {
 				c.shape = newShape(c.adjusted, func(k accum.Key) string { return f.d.KeyLabel(key, k.KeyValue) })
 			}
 		}
 		if f.wants(key, overTime) && x.apart == nil {
-			c.lagged = &lagged{col: f.d.Keys[key], k: x.k()}
+			c.lagged = &lagged{col: f.d.Keys[key], k: x.k(), most: f.o.Memory / keptShare}
 		}
 		if err := x.walk(f.ctx, sc, c); err != nil {
 			return err
@@ -112,7 +112,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		x.unavailable(e, "%s takes the second moments of every cluster, kept up to %d columns; the model has %d", k.Name, momentsMost, len(s.Columns))
 		return
 	case bootstraps(k.Name) && sums[0].wild == nil:
-		x.unavailable(e, "%s keeps the second moments of all clusters in memory; for so many cr1 does as well", k.Name)
+		x.unavailable(e, "%s keeps the second moments of all clusters in memory: raise --memory, or take cr1, which does as well for so many", k.Name)
 		return
 	case more && sums[0].adjusted.failed:
 		x.unavailable(e, "the eigenvalues of a cluster's leverages were not found")

@@ -27,10 +27,11 @@ import (
 //
 // Time O(T L K), memory O(T K).
 type lagged struct {
-	col stream.KeyColumn
-	at  []int64   // time of each period
-	s   []float64 // T x K, scores in solved coordinates
-	k   int
+	col  stream.KeyColumn
+	at   []int64   // time of each period
+	s    []float64 // T x K, scores in solved coordinates
+	k    int
+	most int64 // numbers kept
 }
 
 // Lags says how far errors over time reach.
@@ -45,9 +46,6 @@ type Lags struct {
 
 // overTime reports whether a kind is of this family.
 func overTime(kind string) bool { return kind == "driscoll-kraay" }
-
-// mostPeriods bounds the scores kept.
-const mostPeriods = 2_000_000
 
 // timeOf gives a key a place in time: days of dates, whole numbers as they are.
 func timeOf(c stream.KeyColumn, k accum.Key) (int64, bool) {
@@ -88,8 +86,8 @@ func (l *lagged) add(k accum.Key, s []float64) error {
 	if !ok {
 		return fmt.Errorf("driscoll-kraay: %s holds %s, want days or whole numbers that count periods", l.col.Text, stream.FormatKey(l.col, nil, k.KeyValue))
 	}
-	if len(l.at) == mostPeriods {
-		return fmt.Errorf("driscoll-kraay: %s has more than %d periods; use longer ones", l.col.Text, mostPeriods)
+	if need := int64(len(l.s) + len(s)); need > l.most {
+		return &accum.MemoryError{What: fmt.Sprintf("driscoll-kraay keeps the scores of %d periods of %s or more", len(l.at)+1, l.col.Text), Need: need * keptShare, Have: l.most * keptShare}
 	}
 	l.at = append(l.at, t)
 	l.s = append(l.s, s...)

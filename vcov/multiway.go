@@ -68,11 +68,7 @@ func (x *solution) multiway(kind string, w ways, sums []*clusterSums) (r *estima
 	fewest := math.MaxInt
 	var noP []bool
 	for i, c := range sums {
-		f := 1.0
-		g := float64(c.groups)
-		if kind == "cr1" {
-			f = g / (g - 1) * ((float64(x.n) - 1) / float64(x.df()))
-		}
+		f := x.clusterFactor(kind, c.groups)
 		var t, s mat.Dense
 		t.Mul(mat.NewDense(k, k, c.meat), h)
 		s.Mul(h.T(), &t)

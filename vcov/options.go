@@ -4,8 +4,10 @@ import "github.com/tallrow/tallrow/accum"
 
 // Kind asks for standard errors of one kind.
 type Kind struct {
-	Name    string // classical, hc0 .. hc5, hc4m, cr0, cr1
-	Cluster int    // index into Design.Keys for cr0 and cr1, else -1
+	Name string // classical, hc0 .. hc5, hc4m, cr0 .. cr3, wcr, wcu, driscoll-kraay
+	// Cluster is an index into Design.Keys for the kinds with clusters or periods, a
+	// crossed key for cr0 and cr1 in several ways; else -1.
+	Cluster int
 }
 
 // Options say what to compute and how.

@@ -125,7 +125,7 @@ type Residual struct {
 // Errors holds the standard errors of one kind and all that follows from them.
 // Slices run over Result.Terms; what does not exist is NaN (JSON null).
 type Errors struct {
-	Kind      string   `json:"kind"`     // classical, hc0, hc1, ..., cr0, cr1
+	Kind      string   `json:"kind"`     // see Kind.Name
 	Clusters  []string `json:"clusters"` // the clustering expression of a cr kind
 	Groups    []int64  `json:"groups"`   // number of clusters
 	GroupRows *Spread  `json:"group_rows,omitempty"`

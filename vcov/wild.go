@@ -42,6 +42,7 @@ type wild struct {
 	m, g   int
 	h, t   []float64 // of each cluster: m x m, m
 	factor float64   // of cr1
+	most   int64     // numbers kept
 }
 
 // Bootstrap says how a wild bootstrap was done.
@@ -55,21 +56,30 @@ type Bootstrap struct {
 
 const (
 	defaultDraws = 9999
-	fewForSigns  = 12      // clusters below which six-point weights are used
-	mostPatterns = 20      // clusters up to which patterns are counted
-	wildMemory   = 1 << 27 // numbers kept of all clusters
+	fewForSigns  = 12 // clusters below which six-point weights are used
+	mostPatterns = 20 // clusters up to which patterns are counted
 )
 
 // bootstraps reports whether a kind is of this family.
 func bootstraps(kind string) bool { return kind == "wcr" || kind == "wcu" }
 
-func newWild(x *solution) *wild { return &wild{x: x, m: x.rank()} }
+// keptShare is the part of the memory, counted in numbers of 8 bytes, that scores and
+// second moments kept for all clusters or periods may take while their lists grow.
+const keptShare = 64
 
-// add takes in the cluster that a has just taken in.
-func (w *wild) add(a *adjusted) {
+func newWild(x *solution, memory int64) *wild {
+	return &wild{x: x, m: x.rank(), most: memory / keptShare}
+}
+
+// add takes in the cluster that a has just taken in; false if that is too much to keep.
+func (w *wild) add(a *adjusted) bool {
+	if int64(len(w.h)+len(w.t)+len(a.h)+len(a.t)) > w.most {
+		return false
+	}
 	w.g++
 	w.h = append(w.h, a.h...)
 	w.t = append(w.t, a.t...)
+	return true
 }
 
 // curve is t* of a draw as a function of delta: (n0 + n1 delta) / sqrt(c (q0 + q1

@@ -68,7 +68,7 @@ func TestWildDrawsAreRefits(t *testing.T) {
 			}
 		}
 		s, sol := solveMemory(t, []string{"y", "a", "b"}, cols, stream.Spec{Outcome: "y", Terms: []string{"a", "b"}})
-		adj, w := newAdjusted(sol), newWild(sol)
+		adj, w := newAdjusted(sol), newWild(sol, 1<<30)
 		for g := range groups {
 			c := accum.Cluster{A: make([]float64, 9), S: make([]float64, 3)}
 			for i := range n {
