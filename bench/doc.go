@@ -10,7 +10,8 @@
 //     errors from data in memory with gonum (package reference).
 //
 // The program in sidebyside compares the command itself, process against process,
-// also with numpy and an SQL engine, and on data of any size.
+// also with numpy and an SQL engine, and on data of any size. The program in coverage
+// counts how often intervals hold the truth in invented data.
 //
 // Only ratios of one run say something; a machine's clock drifts between runs:
 //

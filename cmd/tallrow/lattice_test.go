@@ -47,6 +47,7 @@ stream gonum.org/v1/gonum golang.org/x/sync < bench/reference
 stream/delimited stream/columnar accum/digest vcov bench/quaydata bench/reference < bench
 stream/delimited stream/columnar bench/reference < bench/sidebyside
 github.com/parquet-go/parquet-go golang.org/x/sync golang.org/x/sys < bench/sidebyside
+stream vcov gonum.org/v1/gonum github.com/google/renameio < bench/coverage
 
 stream/delimited stream/columnar accum/digest vcov bench/quaydata < cmd/tallrow
 github.com/spf13/cobra github.com/spf13/pflag github.com/pelletier/go-toml < cmd/tallrow
