@@ -4,6 +4,7 @@ import (
 	"errors"
 	"math"
 	"math/rand/v2"
+	"runtime"
 	"testing"
 
 	"github.com/tallrow/tallrow/accum"
@@ -126,7 +127,7 @@ func TestBootstrapOfEquations(t *testing.T) {
 		o.Hypotheses = h
 		return fit(t, tb.source(60), stream.Spec{Outcome: outcome, Terms: terms, Keys: []string{"quay"}}, o)
 	}
-	res := with("y", []string{"a", "b"}, "a = 0", "a = 0.25", "a - b = 0", "a = 0, b = 0")
+	res := with("y", []string{"a", "b"}, "a = 0", "a = 0.25", "a - b = 0")
 	other := with("moved", []string{"a", "b"})
 	turned := with("y", []string{"a", "both"}) // a + b both: the coefficient of a is that of a less that of b
 	for i, kind := range []string{"wcr", "wcu"} {
@@ -141,9 +142,82 @@ func TestBootstrapOfEquations(t *testing.T) {
 		check("a = 0", at(0), errorsOf(t, res, kind), 0)
 		check("a = 0.25", at(1), errorsOf(t, other, kind), 0.25)
 		check("a - b = 0", at(2), errorsOf(t, turned, kind), 0)
-		if joint := at(3); joint.F.Exists() || joint.Reason == nil {
-			t.Errorf("two equations by %s: F %v", kind, joint.F)
+	}
+}
+
+// Several equations are tested by the draws too: F is that of cr1, p a share of draws
+// that does not hang on the way the equations are put, on workers or on units, and near
+// that of F where there are many clusters.
+func TestBootstrapOfSeveralEquations(t *testing.T) {
+	tb, a, _ := bootTable(40, 8)
+	b, far := make([]float64, len(a)), make([]float64, len(a))
+	r := rand.New(rand.NewPCG(8, 44))
+	for i := range a {
+		b[i] = r.NormFloat64()
+		far[i] = 1024*a[i] + 4096
+	}
+	tb.float("b", b)
+	tb.float("far", far)
+	hypotheses := []string{"a = 0.875, b = 0.0625", "a + b = 0.9375, a - 2 * b = 0.75", "a = 0.875, b = 0.0625, constant = 1"}
+	with := func(term string, o vcov.Options, h ...string) *vcov.Result {
+		o.Errors, o.Seed, o.Hypotheses = kinds("cr1", "wcr", "wcu"), 3, h
+		return fit(t, tb.source(60), stream.Spec{Outcome: "y", Terms: []string{term, "b"}, Keys: []string{"quay"}}, o)
+	}
+	res := with("a", vcov.Options{Workers: 1}, hypotheses...)
+	for h := range hypotheses {
+		cr1 := res.Hypotheses[3*h]
+		for i, kind := range []string{"wcr", "wcu"} {
+			got := res.Hypotheses[3*h+1+i]
+			if got.Errors != kind+"(quay)" || got.F != cr1.F || got.DF1 != cr1.DF1 || got.DF2.Exists() || got.Reason != nil {
+				t.Errorf("%+v beside %+v", got, cr1)
+			}
+			// 10,000 draws: a share p has the error sqrt(p(1-p)/10,000), at most 0.005.
+			if math.Abs(float64(got.P-cr1.P)) > 0.1 || got.P < 0.01 || got.P > 0.99 {
+				t.Errorf("%s of %s: p %v, by F %v", got.Errors, got.Text, got.P, cr1.P)
+			}
+			if n := float64(got.P) * 10_000; math.Abs(n-math.Round(n)) > 1e-9 {
+				t.Errorf("p %v is no share of 10,000", got.P)
+			}
 		}
+	}
+	for i := range 3 {
+		if x, y := res.Hypotheses[i], res.Hypotheses[3+i]; i > 0 && x.P != y.P || !near(float64(x.F), float64(y.F), float64(x.F), 1e-10) {
+			t.Errorf("in other words: %+v and %+v", x, y)
+		}
+	}
+	units := with("far", vcov.Options{Passes: 1}, "far = 0.0008544921875, b = 0.0625")
+	exact := with("a", vcov.Options{}, "a = 0.875, b = 0.0625")
+	for i, h := range units.Hypotheses {
+		if want := exact.Hypotheses[i]; i > 0 && h.P != want.P || !near(float64(h.F), float64(want.F), float64(want.F), 1e-9) {
+			t.Errorf("in other units: %+v and %+v", h, want)
+		}
+	}
+	first := fixed(t, res)
+	defer runtime.GOMAXPROCS(runtime.GOMAXPROCS(0))
+	for _, n := range []int{1, 2, 3, 8} {
+		runtime.GOMAXPROCS(n) // draws take as many
+		if other := fixed(t, with("a", vcov.Options{Workers: n}, hypotheses...)); other != first {
+			t.Errorf("%d workers: %s\none: %s", n, other, first)
+		}
+	}
+}
+
+// All patterns of signs: p of several equations is a share of pairs of patterns, the
+// data themselves among them, whatever seed and draws.
+func TestBootstrapOfSeveralEquationsByAllPatterns(t *testing.T) {
+	tb, _, _ := bootTable(9, 5)
+	o := vcov.Options{Errors: kinds("wcr"), BootWeights: "signs", Hypotheses: []string{"constant = 0, a = 0", "constant = 1000, a = -50"}}
+	spec := stream.Spec{Outcome: "y", Terms: []string{"a"}, Keys: []string{"quay"}}
+	one := fit(t, tb.source(40), spec, o)
+	o.Seed, o.Draws = 77, 600
+	two := fit(t, tb.source(40), spec, o)
+	for i, h := range one.Hypotheses {
+		if n := float64(h.P) * 256; n != math.Trunc(n) || n < 1 || h.P != two.Hypotheses[i].P {
+			t.Errorf("%s: p %v and %v", h.Text, h.P, two.Hypotheses[i].P)
+		}
+	}
+	if p := one.Hypotheses[1].P; p > 0.1 {
+		t.Errorf("p %v of what is far from the data", p)
 	}
 }
 

@@ -120,6 +120,11 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	case overTime(k.Name) && x.apart != nil:
 		x.unavailable(e, "a category with too many levels stands apart, and the scores of periods are kept over all columns")
 		return
+	case overTime(k.Name) && !f.o.AutoLags && f.o.Lags >= sums[0].lagged.span():
+		// Scores add up to zero over all periods: such a reach would leave almost nothing.
+		n := sums[0].lagged.span()
+		x.unavailable(e, "%d lags reach beyond the data: %s spans %d periods, so that at most %d are possible", f.o.Lags, f.d.Keys[k.Cluster].Text, n, n-1)
+		return
 	case len(w.dims) > 1 && x.apart != nil:
 		x.unavailable(e, "a category with too many levels stands apart; clusters of one dimension are possible")
 		return

@@ -539,8 +539,6 @@ func (x *solution) test(h *hypothesis, e *Errors, r *estimate, level float64) Hy
 			why = *e.Reason
 		}
 		return none("%s: %s", e.Name(), why)
-	case bootstraps(e.Kind) && q > 1:
-		return none("%s is of single equations", e.Name())
 	case x.perfect:
 		return none("the terms give the outcome exactly: errors are 0")
 	}

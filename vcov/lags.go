@@ -167,10 +167,7 @@ func (l *lagged) meat(o *Lags) []float64 {
 // (q = 1), parzen and quadratic (q = 2).
 func (l *lagged) choose(kernel string, constant int) Lags {
 	n := len(l.at)
-	span := 1.0
-	if n > 0 {
-		span = float64(l.at[n-1]-l.at[0]) + 1
-	}
+	span := math.Max(1, float64(l.span()))
 	series := make([]float64, n)
 	for i := range series {
 		for j, v := range l.score(i) {
@@ -206,7 +203,7 @@ func (l *lagged) choose(kernel string, constant int) Lags {
 	if math.IsNaN(b) || b < 0 {
 		b = 0
 	}
-	b = min(b, span)
+	b = min(b, span-1)
 	if kernel == "quadratic" {
 		return Lags{Kernel: kernel, Bandwidth: Number(max(b, 1e-3)), Chosen: true}
 	}
@@ -229,6 +226,14 @@ func (l *lagged) reach(o *Options, constant int) Lags {
 	}
 	out.Periods = int64(len(l.at))
 	return out
+}
+
+// span is the number of periods from the first to the last.
+func (l *lagged) span() int64 {
+	if len(l.at) == 0 {
+		return 0
+	}
+	return l.at[len(l.at)-1] - l.at[0] + 1
 }
 
 // driscollKraay is the estimate from the scores of periods.

@@ -59,7 +59,7 @@ func (f *fitter) result() *Result {
 		for i, h := range x.hypotheses {
 			t := x.test(h, &e, x.judged, f.o.Level)
 			if bootstraps(k.Name) {
-				f.fail = cmp.Or(f.fail, f.bootstrapSingle(&t, h, k, &e))
+				f.fail = cmp.Or(f.fail, f.bootstrapTest(&t, h, k, &e))
 			}
 			tests[i] = append(tests[i], t)
 		}

@@ -35,6 +35,7 @@ import (
 // Weights are signs (Rademacher) or the six points +-sqrt(1/2), +-1, +-sqrt(3/2) of
 // Webb (2023), which suit fewer than 12 clusters. They follow from the seed, the draw
 // and the place of the cluster in order of key, so that nothing hangs on workers.
+// Several equations at once are tested by the same draws, see joint.
 //
 // Time O(draws G m K), memory O(G m^2 + draws).
 type wild struct {
@@ -160,12 +161,38 @@ func (w *wild) curves(ctx context.Context, b *Bootstrap, d []float64, size float
 		beta[g] = dot(d, q[g*m:(g+1)*m]) / size
 	}
 	out := make([]curve, b.Draws)
+	err := b.each(ctx, n, func() func(int, []float64) {
+		w0, w1 := make([]float64, m), make([]float64, m)
+		return func(draw int, v []float64) {
+			clear(w0)
+			clear(w1)
+			for g, x := range v {
+				axpy(x, w.t[g*m:(g+1)*m], w0)
+				axpy(x/size, q[g*m:(g+1)*m], w1)
+			}
+			c := curve{n0: dot(d, w0), n1: dot(d, w1)}
+			for g, x := range v {
+				a0 := x*alpha[g] - dot(q[g*m:(g+1)*m], w0)
+				a1 := x*beta[g] - dot(q[g*m:(g+1)*m], w1)
+				c.q0 = math.FMA(a0, a0, c.q0)
+				c.q1 = math.FMA(2*a0, a1, c.q1)
+				c.q2 = math.FMA(a1, a1, c.q2)
+			}
+			out[draw] = c
+		}
+	})
+	return out, err
+}
+
+// each calls for every draw, with its weights of n clusters, a function of the worker
+// that has taken it.
+func (b *Bootstrap) each(ctx context.Context, n int, worker func() func(draw int, v []float64)) error {
 	const part = 64
 	var next atomic.Int64
 	var workers sync.WaitGroup
 	for range runtime.GOMAXPROCS(0) {
 		workers.Go(func() {
-			v, w0, w1 := make([]float64, n), make([]float64, m), make([]float64, m)
+			do, v := worker(), make([]float64, n)
 			for ctx.Err() == nil {
 				from := int(next.Add(part)) - part
 				if from >= b.Draws {
@@ -173,27 +200,21 @@ func (w *wild) curves(ctx context.Context, b *Bootstrap, d []float64, size float
 				}
 				for i := from; i < min(from+part, b.Draws); i++ {
 					b.weights(i, v)
-					clear(w0)
-					clear(w1)
-					for g, x := range v {
-						axpy(x, w.t[g*m:(g+1)*m], w0)
-						axpy(x/size, q[g*m:(g+1)*m], w1)
-					}
-					c := curve{n0: dot(d, w0), n1: dot(d, w1)}
-					for g, x := range v {
-						a0 := x*alpha[g] - dot(q[g*m:(g+1)*m], w0)
-						a1 := x*beta[g] - dot(q[g*m:(g+1)*m], w1)
-						c.q0 = math.FMA(a0, a0, c.q0)
-						c.q1 = math.FMA(2*a0, a1, c.q1)
-						c.q2 = math.FMA(a1, a1, c.q2)
-					}
-					out[i] = c
+					do(i, v)
 				}
 			}
 		})
 	}
 	workers.Wait()
-	return out, ctx.Err()
+	return ctx.Err()
+}
+
+// share is p where n draws are beyond what was observed.
+func (b *Bootstrap) share(n int) float64 {
+	if b.All {
+		return float64(n) / float64(b.Draws)
+	}
+	return float64(1+n) / float64(b.Draws+1)
 }
 
 // chance is p of |t| at delta.
@@ -205,10 +226,7 @@ func (b *Bootstrap) chance(cs []curve, delta, at, se, factor float64) float64 {
 			n++
 		}
 	}
-	if b.All {
-		return float64(n) / float64(len(cs))
-	}
-	return float64(1+n) / float64(len(cs)+1)
+	return b.share(n)
 }
 
 // ends returns the interval of all delta with p(delta) > alpha that holds 0, as
@@ -311,10 +329,13 @@ func (f *fitter) bootstrap(e *Errors, kind string, c *clusterSums) error {
 	return nil
 }
 
-// bootstrapSingle puts draws in the place of t in the test of a single equation.
-func (f *fitter) bootstrapSingle(out *Hypothesis, h *hypothesis, k Kind, e *Errors) error {
+// bootstrapTest puts draws in the place of t or F in the test of a hypothesis.
+func (f *fitter) bootstrapTest(out *Hypothesis, h *hypothesis, k Kind, e *Errors) error {
 	if out.Reason != nil || e.Bootstrap == nil {
 		return nil
+	}
+	if h.single < 0 {
+		return f.bootstrapJoint(out, h, k, e)
 	}
 	c := f.groups[k.Cluster]
 	j := f.sol.k() + h.single
