@@ -105,7 +105,7 @@ func run(ctx context.Context, args []string, out, errw io.Writer) int {
 	}
 	var text bytes.Buffer
 	bad := render(&text, counts)
-	fmt.Fprintf(&text, "\nSeed %d; %v with %d workers.\n", *seed, time.Since(start).Round(time.Second), *workers)
+	fmt.Fprintf(&text, "\nSeed %d; workers: %d; %v.\n", *seed, *workers, time.Since(start).Round(time.Second))
 	out.Write(text.Bytes())
 	if *output != "" {
 		if err := renameio.WriteFile(*output, text.Bytes(), 0o644); err != nil {
