@@ -15,6 +15,10 @@ type epoch struct {
 	gram     []float64 // packed, width columns
 	gramLow  []float64 // what gram leaves off, in extended arithmetic
 	fourth   []float64
+	gramX    superVec // gram and fourth, exact
+	fourX    superVec
+	extended bool
+	unit     int // of keyed sums
 	tables   []*keyTable
 	pairs    []*pairTable
 	clusters []*groupStore
@@ -81,6 +85,7 @@ func joinWorkers(ws []*firstWorker) (*epoch, error) {
 		}
 		w.budget.drop(held)
 	}
+	e.gramX, e.fourX, e.extended, e.unit = w.gramX, w.fourX, w.wide != nil, w.budget.unit
 	e.gram = make([]float64, len(w.gram))
 	if w.wide != nil {
 		e.gramLow = make([]float64, len(w.gram))

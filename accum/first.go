@@ -60,6 +60,11 @@ type budget struct {
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
 }
 
+func newBudget(l *layout, needs *Needs, o *Options, unit int) *budget {
+	return &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
+		dense: cmp.Or(o.Dense, DenseColumns), workers: max(1, o.Workers), num: newNumbering(l), keep: needs.Keep}
+}
+
 // clusterStores makes the stores of the second moments of clusters in one frame.
 func (b *budget) clusterStores(l *layout, needs *Needs) []*groupStore {
 	stores := make([]*groupStore, len(l.design.Keys))
@@ -357,9 +362,8 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Rows.Store(0)
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
-	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
-		dense: cmp.Or(o.Dense, DenseColumns), workers: max(1, o.Workers), num: newNumbering(l),
-		pool: newGroupPool(&o), keep: needs.Keep || !src.Info().Rewindable}
+	b := newBudget(l, &needs, &o, unit)
+	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable
 	defer func() {
 		if s == nil || s.pool != b.pool {
 			b.pool.close()

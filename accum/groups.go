@@ -16,6 +16,8 @@ const fewBytes = 8 << 20
 // a key lies in memory; nothing that is returned depends on either.
 var textSeed = maphash.MakeSeed()
 
+func textHash(s string) uint64 { return maphash.String(textSeed, s) }
+
 // groups sums the rows of one worker by the keys of a clustering. Within a fold
 // the rows of a key are added in row order in float64; at its end the partial sums
 // are rounded to fixed point and added to the store, which all workers share.
@@ -115,7 +117,7 @@ func (g *groups) take(v *stream.Vector, n int) {
 			g.dict, g.hashes = v.Dict, g.hashes[:0]
 		}
 		for i := len(g.hashes); i < len(v.Dict.Values); i++ {
-			g.hashes = append(g.hashes, maphash.String(textSeed, v.Dict.Values[i]))
+			g.hashes = append(g.hashes, textHash(v.Dict.Values[i]))
 		}
 		for r, c := range v.Code[:n] {
 			k, s := g.hashes[c], v.Dict.Values[c]
@@ -261,7 +263,7 @@ func (g *groups) hand() error {
 	keys := make([]uint64, g.in.size())
 	for id := range keys {
 		if g.store.text {
-			keys[id] = maphash.String(textSeed, g.in.texts[id])
+			keys[id] = textHash(g.in.texts[id])
 		} else {
 			keys[id] = uint64(g.in.vals[id])
 		}

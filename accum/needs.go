@@ -16,6 +16,9 @@ type Needs struct {
 	// Keep holds the clusters' second moments however many they are, on scratch if
 	// need be: they are wanted for themselves.
 	Keep bool
+	// Retain keeps all sums in the state as they were added up, for State.Records; an
+	// input without used rows is then no error.
+	Retain bool
 }
 
 // Options say how to scan.

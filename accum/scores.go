@@ -4,6 +4,7 @@ import (
 	"errors"
 	"math"
 
+	"github.com/tallrow/tallrow/accum/internal/kernel"
 	"github.com/tallrow/tallrow/stream"
 )
 
@@ -102,37 +103,28 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 		return nil, errors.New("accum: the sums of these clusters were not kept")
 	}
 	l := s.lay
-	p := l.p0 + 2
+	w := s.epochWidth()
+	p := s.epochTerms() + 2 // of the epochs
 	k := l.p0 + 1
 	sc := &Scores{P: k, Lone: make([]bool, k), LoneZero: make([]bool, k), Gross: make([]float64, k), kind: l.design.Keys[key].Kind, moments: moments}
-	lone := newLoneTracker(l.p0)
-	at := s.denseAt()
+	lone := newLoneTracker(p - 2)
 	ths := make([][]float64, len(s.epochs)) // theta in each epoch's frame
 	for i, e := range s.epochs {
 		lone.mergeFrom(e.lone[key])
 		sc.stores = append(sc.stores, e.clusters[key])
-		th := make([]float64, p)
-		for a := range p {
-			for b := range p {
-				th[b] += theta[at[a]] * s.maps[i][a*l.width+b]
-			}
-		}
-		ths[i] = th
+		ths[i] = s.epochTheta(i, theta)
 	}
 	nonzero, zero := lone.lone()
-	copy(sc.Lone[1:], nonzero)
-	copy(sc.LoneZero[1:], zero)
-	z := make([]float64, p*(p+1)/2)
-	vec, mag := make([]float64, k), make([]float64, k)
-	block := make([]float64, k*k)
-	maps := make([][]float64, len(s.epochs)) // of (1, u) alone
-	for i := range maps {
-		m := make([]float64, k*k)
-		for a := range k {
-			copy(m[a*k:(a+1)*k], s.maps[i][a*l.width:])
+	for j := range l.p0 {
+		n := j
+		if s.base != nil {
+			n = s.from[j]
 		}
-		maps[i] = m
+		sc.Lone[1+j], sc.LoneZero[1+j] = nonzero[n], zero[n]
 	}
+	z := make([]float64, p*(p+1)/2)
+	vec, mag := make([]float64, p), make([]float64, p)
+	block, half := make([]float64, p*p), make([]float64, k*p)
 	sc.form = func(c *Cluster, parts []groupPart) {
 		dst := c.S
 		clear(dst)
@@ -143,7 +135,7 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 			for q, f := range parts[i].sums {
 				z[q] = f.float(unit)
 			}
-			for a := range k {
+			for a := range p {
 				vec[a], mag[a] = 0, 0
 				for b := range p {
 					lo, hi := min(a, b), max(a, b)
@@ -154,8 +146,11 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 			}
 			for a := range k {
 				var m float64
-				for b := range k {
-					x := j[a*l.width+b]
+				for b := range p {
+					x := j[a*w+b]
+					if x == 0 {
+						continue
+					}
 					dst[a] += x * vec[b]
 					m += max(x, -x) * mag[b]
 				}
@@ -164,19 +159,26 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 			if !moments {
 				continue
 			}
-			for a := range k {
+			same := s.base == nil && s.epochs[parts[i].tag].frame == s.Frame
+			if same {
+				for a := range k {
+					for b := range a + 1 {
+						x := z[a*(a+1)/2+b]
+						c.A[a*k+b] += x
+						if a != b {
+							c.A[b*k+a] += x
+						}
+					}
+				}
+				continue
+			}
+			for a := range p {
 				for b := range a + 1 {
 					x := z[a*(a+1)/2+b]
-					block[a*k+b], block[b*k+a] = x, x
+					block[a*p+b], block[b*p+a] = x, x
 				}
 			}
-			moved := block
-			if s.epochs[parts[i].tag].frame != s.Frame {
-				moved = congruence(maps[parts[i].tag], block, k)
-			}
-			for q, x := range moved {
-				c.A[q] += x
-			}
+			congruent(c.A, j, w, block, half, k, p)
 		}
 	}
 	return sc, nil
@@ -188,6 +190,9 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 // leverages to find such rows. whitener is as in RowPass. Infinite with categories.
 func (s *State) LeverageBound(whitener []float64) float64 {
 	if len(s.Groups) > 0 {
+		return math.Inf(1)
+	}
+	if s.base != nil {
 		return math.Inf(1)
 	}
 	k, width := s.lay.p0+1, s.lay.width
@@ -215,40 +220,61 @@ func (s *State) Fourth(theta []float64, abs bool) (m []float64, ok bool) {
 	if s.quart == nil {
 		return nil, false
 	}
-	l := s.lay
-	p, k := l.p0+2, l.p0+1
+	w, p, k := s.epochWidth(), s.epochTerms()+2, s.lay.p0+1
 	n := len(s.Columns) + 1
 	m = make([]float64, n*n)
+	half, c2 := make([]float64, k*p), make([]float64, k*k)
 	for i, e := range s.epochs {
 		j := s.maps[i]
-		c := s.quart.contract(e.fourth, s.epochTheta(i, theta, p), k, abs)
-		jk := make([]float64, k*k)
-		for a := range k {
-			for b := range k {
-				x := j[a*l.width+b]
-				if abs {
-					x = max(x, -x)
-				}
-				jk[a*k+b] = x
-			}
+		if abs {
+			j = absolutes(j)
 		}
-		c = congruence(jk, c, k)
+		c := s.quart.contract(e.fourth, s.epochTheta(i, theta), p, abs)
+		clear(c2)
+		congruent(c2, j, w, c, half, k, p)
 		for a := range k {
 			for b := range k {
-				m[a*n+b] += c[a*k+b]
+				m[a*n+b] += c2[a*k+b]
 			}
 		}
 	}
 	return m, true
 }
 
+// congruent adds J A J' to dst, for the leading k x p of J, whose rows are ld long,
+// and A p x p. half has k p numbers.
+func congruent(dst, j []float64, ld int, a, half []float64, k, p int) {
+	for r := range k {
+		row := half[r*p : (r+1)*p]
+		clear(row)
+		for t := range p {
+			if x := j[r*ld+t]; x != 0 {
+				kernel.Axpy(x, a[t*p:(t+1)*p], row)
+			}
+		}
+	}
+	for r := range k {
+		for c := range k {
+			dst[r*k+c] += dotp(half[r*p:(r+1)*p], j[c*ld:c*ld+p])
+		}
+	}
+}
+
+func absolutes(x []float64) []float64 {
+	out := make([]float64, len(x))
+	for i, v := range x {
+		out[i] = math.Abs(v)
+	}
+	return out
+}
+
 // epochTheta is theta over (1, u, v) in the frame of epoch i.
-func (s *State) epochTheta(i int, theta []float64, p int) []float64 {
-	at, j := s.denseAt(), s.maps[i]
+func (s *State) epochTheta(i int, theta []float64) []float64 {
+	at, j, w, p := s.denseAt(), s.maps[i], s.epochWidth(), s.epochTerms()+2
 	th := make([]float64, p)
-	for a := range p {
+	for a := range s.lay.p0 + 2 {
 		for b := range p {
-			th[b] += theta[at[a]] * j[a*s.lay.width+b]
+			th[b] += theta[at[a]] * j[a*w+b]
 		}
 	}
 	return th
@@ -257,9 +283,9 @@ func (s *State) epochTheta(i int, theta []float64, p int) []float64 {
 // FourthPowers is sum e^4 (each row as often as its frequency) from the fourth
 // moments, and the size of what was added up for it.
 func (s *State) FourthPowers(theta []float64) (sum, gross float64) {
-	p := s.lay.p0 + 2
+	p := s.epochTerms() + 2
 	for i, e := range s.epochs {
-		th := s.epochTheta(i, theta, p)
+		th := s.epochTheta(i, theta)
 		net, all := s.quart.contract(e.fourth, th, p, false), s.quart.contract(e.fourth, th, p, true)
 		for a := range p {
 			for b := range p {

@@ -63,6 +63,7 @@ type State struct {
 	Repeated []string
 
 	lay    *layout
+	needs  Needs
 	epochs []*epoch
 	maps   [][]float64 // from each epoch's dense columns to those of Frame
 	checks map[int]segCheck
@@ -75,6 +76,24 @@ type State struct {
 	pairCount []pairCount
 	dense     int
 	pool      *groupPool
+	base      *State // that this one was asked of, see Ask
+	from      []int  // numeric terms of base that are those of this
+}
+
+// epochWidth is the number of columns of z in the epochs, epochTerms that of numeric
+// terms: those of base.
+func (s *State) epochWidth() int {
+	if s.base != nil {
+		return s.base.lay.width
+	}
+	return s.lay.width
+}
+
+func (s *State) epochTerms() int {
+	if s.base != nil {
+		return s.base.lay.p0
+	}
+	return s.lay.p0
 }
 
 // Close gives back what the sums of clusters hold in memory and on scratch; Scores
@@ -164,7 +183,7 @@ func (c *comboIndex) find(levels []int32) int {
 
 // newState joins the epochs. refit is the unit that keyed sums should have.
 func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, b *budget) (s *State, refit int, err error) {
-	s = &State{Design: l.design, lay: l, checks: p.checks, Segments: p.segments, Bytes: p.bytes,
+	s = &State{Design: l.design, lay: l, needs: *needs, checks: p.checks, Segments: p.segments, Bytes: p.bytes,
 		Extended: extended, Read: p.read, Malformed: p.bad, Dropped: b.dropped.Load()}
 	slices.SortFunc(p.problems, func(a, b problem) int {
 		return cmp.Or(cmp.Compare(a.segment, b.segment), cmp.Compare(a.at, b.at))
@@ -192,6 +211,9 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, 
 		s.Weight = float64(s.Rows)
 	}
 	epochs = slices.DeleteFunc(epochs, func(e *epoch) bool { return e.rows == 0 })
+	if s.Rows == 0 && needs.Retain {
+		return s, b.unit, nil
+	}
 	if s.Rows == 0 {
 		return nil, 0, &NoRowsError{Tally: s.Tally, Malformed: s.Malformed}
 	}
@@ -212,8 +234,10 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, 
 		return nil, 0, err
 	}
 	refit = s.refit(b.unit)
-	for _, e := range epochs {
-		e.tables, e.pairs = nil, nil
+	if !needs.Retain {
+		for _, e := range epochs {
+			e.tables, e.pairs, e.gramX, e.fourX = nil, nil, nil, nil
+		}
 	}
 	return s, refit, nil
 }

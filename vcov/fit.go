@@ -104,7 +104,7 @@ func (f *fitter) first() error {
 		return err
 	}
 	lossy := arithmetics[f.o.Arithmetic] == accum.Auto && !s.Extended && s.Frame.Lossy()
-	if (lossy || f.sol.needsFrame()) && f.src.Info().Rewindable {
+	if (lossy || f.sol.needsFrame()) && f.info().Rewindable {
 		s.Close()
 		s, err := accum.Again(f.ctx, f.src, s, f.plan.needs, f.scan)
 		if err != nil {
@@ -187,7 +187,7 @@ func (f *fitter) second() error {
 		f.gross = gross
 		f.loss, f.noise = x.cancellation(f.fourth, gross)
 		if f.loss > lossLimit {
-			if f.src.Info().Rewindable && f.o.Passes != 1 {
+			if f.info().Rewindable && f.o.Passes != 1 {
 				rows = true
 				f.fourth = nil
 				f.note("second-pass", "fourth moments lost digits (relative error up to %.1e); a second pass was made", f.loss)
@@ -200,7 +200,7 @@ func (f *fitter) second() error {
 		rows = true
 		f.note("second-pass", "the clusters' second moments outgrew a sixteenth of --memory; a second pass kept scores only")
 	}
-	if s.Coarse && f.src.Info().Rewindable && len(f.plan.needs.Clusters) > 0 {
+	if s.Coarse && f.info().Rewindable && len(f.plan.needs.Clusters) > 0 {
 		rows = true
 		f.note("second-pass", "the clusters' second moments differ too much in size to keep their digits; a second pass kept scores only")
 	}
@@ -210,7 +210,7 @@ func (f *fitter) second() error {
 	if !rows {
 		return nil
 	}
-	if !f.src.Info().Rewindable {
+	if !f.info().Rewindable {
 		return stream.Usef("the errors asked for need a second pass, and the input can be read once only: give --passes 2 to copy it to --scratch while it is read")
 	}
 	f.route = "row pass"

@@ -22,7 +22,7 @@ func (f *fitter) result() *Result {
 	x, s, d := f.sol, f.state, f.d
 	r := &Result{Format: Format, Version: Version, Outcome: d.OutcomeText(), N: x.n, Rank: x.rank(),
 		Aliased: append([]Alias{}, x.alias...), BaseLevels: x.bases, Hypotheses: []Hypothesis{}, Errors: []Errors{}}
-	info := f.src.Info()
+	info := f.info()
 	r.Input = Input{Fingerprint: s.Fingerprint, Files: info.Files, Bytes: info.Bytes}
 	if r.Input.Bytes < 0 {
 		r.Input.Bytes = s.Bytes

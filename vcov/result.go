@@ -99,8 +99,17 @@ type Rows struct {
 	Malformed  int64            `json:"malformed"`
 	ZeroWeight int64            `json:"zero_weight"`
 	MissingBy  map[string]int64 `json:"missing_by"`
+	// LostElsewhere is of answers from sums: see Lost.
+	LostElsewhere *Lost `json:"lost_elsewhere,omitempty"`
 	// Problems describes the first malformed rows, one line each.
 	Problems []string `json:"-"`
+}
+
+// Lost bounds the missing rows that lack only what the question does not read: sums
+// use the rows in which all that they keep is there.
+type Lost struct {
+	Least int64 `json:"least"`
+	Most  int64 `json:"most"`
 }
 
 // WeightSum says which weights were used; Kind is nil without weights.
@@ -227,6 +236,8 @@ type Run struct {
 	ArithmeticReason string `json:"arithmetic_reason,omitempty"`
 	Workers          int    `json:"workers"`
 	Segments         int64  `json:"segments"`
+	// Digests is how many the sums came from, where no data were read.
+	Digests int `json:"digests,omitempty"`
 	// Unread is what the row filter excludes by statistics and folder names alone:
 	// its rows are among Rows.Excluded, its segments among Segments, its bytes not
 	// among Bytes.

@@ -14,7 +14,7 @@ import (
 )
 
 // commands makes the commands, in the order of the help.
-var commands = []func(*app) *cobra.Command{newFit, newPlan, newColumns}
+var commands = []func(*app) *cobra.Command{newFit, newPlan, newColumns, newDigest, newPool}
 
 // The order above is the order of the help.
 func init() { cobra.EnableCommandSorting = false }
@@ -141,7 +141,7 @@ func addOptions(cmd *cobra.Command, on int) {
 // command line.
 func settingsFor(cmd *cobra.Command, args []string, on int) (*settings, error) {
 	s := newSettings()
-	if on&onModel != 0 && len(args) > 0 && strings.HasSuffix(args[0], ".toml") {
+	if on&onSums != 0 && len(args) > 0 && strings.HasSuffix(args[0], ".toml") {
 		if err := readModel(s, args[0], on); err != nil {
 			return nil, err
 		}

@@ -205,15 +205,20 @@ func (a *app) prepare(ctx context.Context, s *settings) (*prepared, error) {
 		src.Close()
 		return nil, err
 	}
-	p.opts = vcov.Options{
-		Errors: req.withClassical(s.weightKind == "sampling"),
-		Level:  s.level, Hypotheses: s.hypotheses, Adjust: s.adjust, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
-		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags,
-	}
+	p.opts = s.fitOptions(req)
 	p.opts.Workers, p.opts.Memory = s.share(src.Info())
 	p.opts.Scratch = s.scratch
 	p.opts.ClusterMemory = s.clusterMemory()
 	return p, nil
+}
+
+// fitOptions is what the options say of errors and arithmetic.
+func (s *settings) fitOptions(req request) vcov.Options {
+	return vcov.Options{
+		Errors: req.withClassical(s.weightKind == "sampling"),
+		Level:  s.level, Hypotheses: s.hypotheses, Adjust: s.adjust, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
+		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags,
+	}
 }
 
 // headOnly reports whether the input has columns but not one row. Their kinds
@@ -245,6 +250,13 @@ func headOnly(ctx context.Context, src stream.Source) bool {
 
 // fit reads, solves and completes the result with what only the program knows.
 func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
+	names, err := digestsAmong(ctx, s.data)
+	if err != nil {
+		return nil, err
+	}
+	if len(names) > 0 {
+		return a.fromDigests(ctx, s, names)
+	}
 	p, err := a.prepare(ctx, s)
 	if err != nil {
 		return nil, err

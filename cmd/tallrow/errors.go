@@ -14,6 +14,8 @@ func exitCode(err error) int {
 		return exitDone
 	case errors.Is(err, stream.ErrUse):
 		return exitUse
+	case incomplete(err):
+		return exitIncomplete
 	}
 	return exitFailed
 }

@@ -30,8 +30,10 @@ command line says goes before it.`,
 			_, err := a.stdout.Write(resultSchema)
 			return err
 		}
-		if err := s.checkModel(); err != nil {
-			return err
+		if len(s.data) == 0 {
+			if err := s.checkModel(); err != nil {
+				return err
+			}
 		}
 		if err := s.needData(cmd); err != nil {
 			return err
@@ -39,6 +41,20 @@ command line says goes before it.`,
 		out, err := a.openSink(s)
 		if err != nil {
 			return err
+		}
+		if s.eachDigest {
+			x, err := a.eachFit(cmd.Context(), s)
+			if err != nil {
+				return err
+			}
+			if !s.json {
+				return out.write([]byte(x.render(out.width())))
+			}
+			text, err := jsonLine(x)
+			if err != nil {
+				return err
+			}
+			return out.write(text)
 		}
 		f, err := a.fit(cmd.Context(), s)
 		if err != nil {

@@ -20,9 +20,10 @@ const version = vcov.Version
 
 // Exit statuses.
 const (
-	exitDone   = 0
-	exitFailed = 1
-	exitUse    = 2
+	exitDone       = 0
+	exitFailed     = 1
+	exitUse        = 2
+	exitIncomplete = 3 // parts are missing
 )
 
 // grace is how long a cancelled run may take to stop by itself: a read of a

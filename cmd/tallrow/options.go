@@ -27,8 +27,12 @@ const (
 	onFit = 1 << iota
 	onPlan
 	onColumns
+	onDigest
+	onPool
 	onModel = onFit | onPlan
 	onAll   = onFit | onPlan | onColumns
+	onScan  = onAll | onDigest   // that read data
+	onSums  = onModel | onDigest // that have a model
 )
 
 // option is one word of the program. The table below is the only place that
@@ -56,35 +60,35 @@ type value struct {
 func (v value) text() string { return strings.Join(v.parts, ", ") }
 
 // Groups of options, in the order of the help.
-var groups = []string{"Model", "Errors", "Rows", "Reading", "Resources", "Output"}
+var groups = []string{"Model", "Errors", "Rows", "Reading", "Resources", "Digests", "Output"}
 
 var options = []option{
-	{name: "outcome", value: "EXPR", group: "Model", on: onModel, file: true,
+	{name: "outcome", value: "EXPR", group: "Model", on: onSums, file: true,
 		help: "what is explained: a column or an expression such as log(minutes)",
 		set:  func(s *settings, v value) error { s.outcome = strings.TrimSpace(v.text()); return nil }},
-	{name: "terms", value: "LIST", form: formList, group: "Model", on: onModel, file: true,
+	{name: "terms", value: "LIST", form: formList, group: "Model", on: onSums, file: true,
 		help: "terms, separated by commas; each(barge) makes one indicator for each level",
 		set:  func(s *settings, v value) (err error) { s.terms, err = splitExprs(v); return err }},
-	{name: "no-constant", form: formSwitch, group: "Model", on: onModel, file: true, def: "false",
+	{name: "no-constant", form: formSwitch, group: "Model", on: onSums, file: true, def: "false",
 		help: "leave the constant out",
 		set:  func(s *settings, v value) error { return setSwitch(&s.noConstant, v) }},
-	{name: "weight", value: "EXPR", group: "Model", on: onModel, file: true,
+	{name: "weight", value: "EXPR", group: "Model", on: onSums, file: true,
 		help: "weight of a row; needs --weight-kind",
 		set:  func(s *settings, v value) error { s.weight = strings.TrimSpace(v.text()); return nil }},
-	{name: "weight-kind", value: "KIND", group: "Model", on: onModel, file: true,
+	{name: "weight-kind", value: "KIND", group: "Model", on: onSums, file: true,
 		help: "frequency (a row stands for that many), precision (inverse variance) or sampling (inverse chance of being drawn)",
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
-	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onModel, file: true, def: "classical, hc1, and cr1 with --cluster",
+	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onSums, file: true, def: "classical, hc1, and cr1 with --cluster",
 		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not), driscoll-kraay (periods near in time); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
-	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onModel, file: true,
+	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onSums, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
 		set:  func(s *settings, v value) (err error) { s.cluster, err = splitExprs(v); return err }},
 	{name: "hypothesis", value: "EQUATIONS", form: formMany, group: "Errors", on: onModel, file: true,
 		help: "test equations between coefficients under each kind of errors: \"pallets = 0.5\"; several in one, separated by commas, are tested together; may be repeated",
 		set:  func(s *settings, v value) error { s.hypotheses = v.parts; return nil }},
-	{name: "period", value: "EXPR", group: "Errors", on: onModel, file: true,
+	{name: "period", value: "EXPR", group: "Errors", on: onSums, file: true,
 		help: "days or whole numbers in time for driscoll-kraay, such as date(t)",
 		set:  func(s *settings, v value) error { s.period = strings.TrimSpace(v.text()); return nil }},
 	{name: "lags", value: "auto|N", form: formAuto, group: "Errors", on: onModel, file: true, def: "auto",
@@ -112,64 +116,83 @@ var options = []option{
 		help: "probability of the intervals, above 0 and below 1",
 		set:  setLevel},
 
-	{name: "where", value: "EXPR", group: "Rows", on: onModel, file: true,
+	{name: "where", value: "EXPR", group: "Rows", on: onSums, file: true,
 		help: "use only rows for which this holds, such as \"tonnes > 0 && !night\"",
 		set:  func(s *settings, v value) error { s.where = strings.TrimSpace(v.text()); return nil }},
-	{name: "missing", value: "skip|stop", group: "Rows", on: onModel, file: true, def: "skip",
+	{name: "missing", value: "skip|stop", group: "Rows", on: onSums, file: true, def: "skip",
 		help: "what to do with a row with a missing cell",
 		set:  choose(func(s *settings) *string { return &s.missing }, "skip", "stop")},
-	{name: "bad-rows", value: "stop|skip", group: "Rows", on: onAll, file: true, def: "stop",
+	{name: "bad-rows", value: "stop|skip", group: "Rows", on: onScan, file: true, def: "stop",
 		help: "what to do with a row that cannot be read; skipped ones are counted",
 		set:  choose(func(s *settings) *string { return &s.badRows }, "stop", "skip")},
-	{name: "first", value: "N", form: formWhole, group: "Rows", on: onAll, file: true,
+	{name: "first", value: "N", form: formWhole, group: "Rows", on: onScan, file: true,
 		help: "read only the first N rows",
 		set:  setFirst},
 
-	{name: "format", value: "auto|csv|parquet", group: "Reading", on: onAll, file: true, def: "auto",
+	{name: "format", value: "auto|csv|parquet", group: "Reading", on: onScan, file: true, def: "auto",
 		help: "format of the data",
 		set:  choose(func(s *settings) *string { return &s.format }, "auto", "csv", "parquet")},
-	{name: "no-header", form: formSwitch, group: "Reading", on: onAll, file: true, def: "false",
+	{name: "no-header", form: formSwitch, group: "Reading", on: onScan, file: true, def: "false",
 		help: "the first line is data; columns are named c1, c2, ...",
 		set:  func(s *settings, v value) error { return setSwitch(&s.noHeader, v) }},
-	{name: "decimal", value: "point|comma", group: "Reading", on: onAll, file: true, def: "point",
+	{name: "decimal", value: "point|comma", group: "Reading", on: onScan, file: true, def: "point",
 		help: "decimal mark of numbers in text files",
 		set:  choose(func(s *settings) *string { return &s.decimal }, "point", "comma")},
-	{name: "null", value: "LIST", form: formList, group: "Reading", on: onAll, file: true, def: "NA, null, NaN",
+	{name: "null", value: "LIST", form: formList, group: "Reading", on: onScan, file: true, def: "NA, null, NaN",
 		help: "cells that are missing, besides the empty one",
 		set:  setNull},
-	{name: "kinds", value: "LIST", form: formKinds, group: "Reading", on: onAll, file: true,
+	{name: "kinds", value: "LIST", form: formKinds, group: "Reading", on: onScan, file: true,
 		help: "kinds of columns where the first rows mislead: \"crane=text, code=int64\"",
 		set:  setKinds},
-	{name: "zone", value: "ZONE", group: "Reading", on: onModel, file: true, def: "UTC",
+	{name: "zone", value: "ZONE", group: "Reading", on: onSums, file: true, def: "UTC",
 		help: "time zone for hour, weekday, month and date of instants, such as Europe/Rome",
 		set:  setZone},
 
 	{name: "passes", value: "auto|1|2", form: formPasses, group: "Resources", on: onModel, file: true, def: "auto",
 		help: "how often the data are read",
 		set:  setPasses},
-	{name: "arithmetic", value: "auto|double|extended", group: "Resources", on: onModel, file: true, def: "auto",
+	{name: "arithmetic", value: "auto|double|extended", group: "Resources", on: onSums, file: true, def: "auto",
 		help: "extended has twice the digits; auto takes it where terms are so collinear that estimates lose digits",
 		set:  choose(func(s *settings) *string { return &s.arithmetic }, "auto", "double", "extended")},
-	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onAll, file: true, def: "one for each processor",
+	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onScan, file: true, def: "one for each processor",
 		help: "goroutines that read and sum; the result never depends on it",
 		set:  setWorkers},
-	{name: "memory", value: "SIZE", form: formSize, group: "Resources", on: onAll, file: true, def: "half of what the machine gives",
+	{name: "memory", value: "SIZE", form: formSize, group: "Resources", on: onScan, file: true, def: "half of what the machine gives",
 		help: "bound for the whole process, such as 1GiB or 512MB",
 		set:  setMemory},
-	{name: "scratch", value: "DIR", group: "Resources", on: onAll, file: true, def: "the system's folder",
+	{name: "scratch", value: "DIR", group: "Resources", on: onScan, file: true, def: "the system's folder",
 		help: "folder for temporary files: sums of clusters that do not fit --memory, the copy of a pipe that is read twice",
 		set:  func(s *settings, v value) error { s.scratch = v.text(); return nil }},
 	{name: "plan", value: "FILE", group: "Resources", on: onFit,
 		help: "use the plan that `tallrow plan -o FILE` wrote; refused if model or data differ",
 		set:  func(s *settings, v value) error { s.plan = v.text(); return nil }},
 
-	{name: "json", form: formSwitch, group: "Output", on: onAll, def: "false",
+	{name: "keep", value: "LIST", form: formList, group: "Digests", on: onDigest, file: true,
+		help: "further terms or outcomes to keep sums of, for questions not asked now; rows are used where all of them are there",
+		set:  func(s *settings, v value) (err error) { s.keep, err = splitExprs(v); return err }},
+	{name: "part", value: "I/N", group: "Digests", on: onDigest,
+		help: "read part I of N, 0 <= I < N: other machines read the others, and pool joins them",
+		set:  setPart},
+	{name: "frame-from", value: "DIGEST", group: "Digests", on: onDigest,
+		help: "sum in the frame of another digest, so that pooled days stay as small as one",
+		set:  func(s *settings, v value) error { s.frameFrom = v.text(); return nil }},
+	{name: "hide-ids", value: "KEYFILE", group: "Digests", on: onDigest,
+		help: "put keyed hashes (HMAC-SHA-256) in place of cluster ids; the key stays in KEYFILE, 32 bytes or more",
+		set:  func(s *settings, v value) error { s.hideIDs = v.text(); return nil }},
+	{name: "partial", form: formSwitch, group: "Digests", on: onPool, def: "false",
+		help: "join parts although others are missing, to be pooled further",
+		set:  func(s *settings, v value) error { return setSwitch(&s.partial, v) }},
+	{name: "each-digest", form: formSwitch, group: "Digests", on: onFit, def: "false",
+		help: "fit every digest by itself, not their sum: coefficients day by day",
+		set:  func(s *settings, v value) error { return setSwitch(&s.eachDigest, v) }},
+
+	{name: "json", form: formSwitch, group: "Output", on: onScan | onPool, def: "false",
 		help: "print JSON and nothing else",
 		set:  func(s *settings, v value) error { return setSwitch(&s.json, v) }},
-	{name: "output", short: "o", value: "FILE", group: "Output", on: onAll,
+	{name: "output", short: "o", value: "FILE", group: "Output", on: onScan | onPool,
 		help: "write there instead of standard output; the file appears only when it is complete",
 		set:  func(s *settings, v value) error { s.output = v.text(); return nil }},
-	{name: "quiet", form: formSwitch, group: "Output", on: onAll, def: "false",
+	{name: "quiet", form: formSwitch, group: "Output", on: onScan | onPool, def: "false",
 		help: "no progress on standard error",
 		set:  func(s *settings, v value) error { return setSwitch(&s.quiet, v) }},
 	{name: "timings", form: formSwitch, group: "Output", on: onFit, def: "false",
@@ -182,10 +205,9 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions = []string{"unit", "keep", "checkpoint",
-		"hide-ids", "frame-from", "at", "sweep", "part"}
+	laterOptions  = []string{"unit", "checkpoint", "at", "sweep"}
 	laterKinds    = []string{"hac"}
-	laterCommands = []string{"digest", "pool", "launch"}
+	laterCommands = []string{"launch"}
 )
 
 func optionNamed(name string) *option {

@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"runtime"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -56,6 +57,14 @@ type settings struct {
 	lags          int64
 	kernel        string
 	jsonSchema    bool
+
+	keep       []string
+	part       int
+	parts      int // 0: not in parts
+	frameFrom  string
+	hideIDs    string
+	partial    bool
+	eachDigest bool
 
 	// from says where each given option came from, for messages: "--terms" or
 	// "quay.toml line 3: terms".
@@ -227,6 +236,17 @@ func setPasses(s *settings, v value) error {
 	return nil
 }
 
+func setPart(s *settings, v value) error {
+	i, n, ok := strings.Cut(v.text(), "/")
+	part, err := strconv.Atoi(i)
+	parts, err2 := strconv.Atoi(n)
+	if !ok || err != nil || err2 != nil || part < 0 || part >= parts || parts > 1_000_000 {
+		return fmt.Errorf("found %q, want I/N with 0 <= I < N, such as 0/8 for the first of eight", v.text())
+	}
+	s.part, s.parts = part, parts
+	return nil
+}
+
 func setMemory(s *settings, v value) (err error) { s.memory, err = parseSize(v.text()); return err }
 
 func setNull(s *settings, v value) error {
@@ -317,7 +337,7 @@ func (s *settings) checkModel() error {
 // spec is the model for the stream package; keys are the clusterings.
 func (s *settings) spec(req request) stream.Spec {
 	sp := stream.Spec{
-		Outcome: s.outcome, Terms: s.terms, NoConstant: s.noConstant,
+		Outcome: s.outcome, Terms: slices.Concat(s.terms, s.keep), NoConstant: s.noConstant,
 		Weight: s.weight, Where: s.where, Stop: s.missing == "stop",
 		Keys: req.keys, Crossed: req.crossed, Zone: s.zone,
 	}

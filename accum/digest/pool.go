@@ -1,0 +1,230 @@
+package digest
+
+import (
+	"cmp"
+	"errors"
+	"fmt"
+	"slices"
+	"strings"
+
+	"github.com/tallrow/tallrow/accum"
+)
+
+// Pool is the sum of several digests: a stream of the records of all, added where
+// they have the same place. It holds one record of each digest at a time. The result
+// does not depend on order or grouping.
+type Pool struct {
+	Meta    *Meta
+	readers []*Reader
+	heap    []*feed
+	rec     accum.Record
+}
+
+// feed is the records of one digest, with places in the pool.
+type feed struct {
+	r        *Reader
+	sections []int
+	runs     []int
+	rec      accum.Record
+}
+
+// PoolError says why digests do not go together.
+type PoolError struct{ Msg string }
+
+func (e *PoolError) Error() string { return e.Msg }
+
+// NewPool joins digests of one model over disjoint rows. Reader.Meta of them is of no
+// more use afterwards.
+//
+// Errors: *PoolError for another model, a part that is there twice, sources that
+// overlap.
+func NewPool(readers []*Reader) (*Pool, error) {
+	if len(readers) == 0 {
+		return nil, &PoolError{"no digests"}
+	}
+	first := readers[0]
+	p := &Pool{readers: readers, Meta: &Meta{Format: Format, Version: first.Meta.Version, Model: first.Meta.Model}}
+	runs := map[string]*Run{}
+	from := map[string]map[int]string{} // run and part: the file that has it
+	type claim struct{ run, path string }
+	paths, sums := map[string]claim{}, map[string]claim{}
+	for _, r := range readers {
+		if a, b := r.Meta.Model.Fingerprint(), first.Meta.Model.Fingerprint(); a != b {
+			return nil, &PoolError{fmt.Sprintf("%s and %s are of different models: %s", first.Path, r.Path, first.Meta.Model.Differs(&r.Meta.Model))}
+		}
+		p.Meta.Version = max(p.Meta.Version, r.Meta.Version)
+		for _, run := range r.Meta.Runs {
+			have := runs[run.ID]
+			if have == nil {
+				have = &Run{ID: run.ID, Parts: run.Parts, Files: run.Files}
+				runs[run.ID], from[run.ID] = have, map[int]string{}
+				for _, f := range run.Files {
+					if c, ok := paths[f.Path]; ok && f.Checksum != "" && c.run != run.ID {
+						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: both have read %s", c.path, r.Path, f.Path)}
+					}
+					same := fmt.Sprint(f.Size, " ", f.Checksum)
+					if c, ok := sums[same]; ok && f.Checksum != "" && c.run != run.ID {
+						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: %s has the content of a file that the other has read", c.path, r.Path, f.Path)}
+					}
+					paths[f.Path], sums[same] = claim{run.ID, r.Path}, claim{run.ID, r.Path}
+				}
+			}
+			if have.Parts != run.Parts {
+				return nil, &PoolError{fmt.Sprintf("%s: found a run in %d parts, want %d as in another digest", r.Path, run.Parts, have.Parts)}
+			}
+			for _, i := range run.Have {
+				if f, ok := from[run.ID][i]; ok {
+					return nil, &PoolError{fmt.Sprintf("part %d of %d is there twice: in %s and in %s", i, run.Parts, f, r.Path)}
+				}
+				from[run.ID][i] = r.Path
+				have.Have = append(have.Have, i)
+			}
+		}
+	}
+	for _, r := range runs {
+		slices.Sort(r.Have)
+		p.Meta.Runs = append(p.Meta.Runs, r)
+	}
+	slices.SortFunc(p.Meta.Runs, func(a, b *Run) int { return cmp.Compare(a.ID, b.ID) })
+	ids := make([][]string, len(readers))
+	for i, r := range readers {
+		for _, c := range r.Meta.Header.Sections {
+			ids[i] = append(ids[i], c.ID())
+		}
+		if i == 0 {
+			p.Meta.Header = r.Meta.Header
+		} else if err := p.Meta.Header.Join(r.Meta.Header); err != nil {
+			return nil, &PoolError{fmt.Sprintf("%s and %s: %s", first.Path, r.Path, err)}
+		}
+	}
+	var all []string
+	for _, c := range p.Meta.Header.Sections {
+		all = append(all, c.ID())
+	}
+	for i, r := range readers {
+		f := &feed{r: r}
+		for _, id := range ids[i] {
+			f.sections = append(f.sections, slices.Index(all, id))
+		}
+		for _, run := range r.Meta.Runs {
+			f.runs = append(f.runs, slices.IndexFunc(p.Meta.Runs, func(x *Run) bool { return x.ID == run.ID }))
+		}
+		if ok, err := f.next(); err != nil {
+			return nil, err
+		} else if ok {
+			p.heap = append(p.heap, f)
+		}
+	}
+	for i := len(p.heap)/2 - 1; i >= 0; i-- {
+		p.sink(i)
+	}
+	return p, nil
+}
+
+// next reads a record and moves it to its place in the pool.
+func (f *feed) next() (bool, error) {
+	r, err := f.r.Next()
+	if r == nil || err != nil {
+		return false, err
+	}
+	to := func(x *int, places []int) error {
+		if *x < 0 || *x >= len(places) {
+			return &DamageError{f.r.Path, "a row names a section or run that is not there"}
+		}
+		*x = places[*x]
+		return nil
+	}
+	if r.What == accum.SegmentCheck {
+		err = to(&r.Table, f.runs)
+	} else {
+		err = to(&r.Section, f.sections)
+	}
+	f.rec, *r = *r, f.rec // keeps what both have allocated
+	return err == nil, err
+}
+
+// Next returns the next record, nil after the last. It is valid until the next call.
+func (p *Pool) Next() (*accum.Record, error) {
+	if len(p.heap) == 0 {
+		return nil, nil
+	}
+	n := 0
+	for len(p.heap) > 0 && (n == 0 || p.heap[0].rec.Compare(&p.rec) == 0) {
+		f := p.heap[0]
+		if n == 0 {
+			p.rec, f.rec = f.rec, p.rec
+		} else if err := p.rec.Add(&f.rec); err != nil {
+			if errors.Is(err, accum.ErrTwice) {
+				err = &PoolError{fmt.Sprintf("%s: segment %s of its input is also in another digest", f.r.Path, f.rec.Label)}
+			}
+			return nil, err
+		}
+		n++
+		ok, err := f.next()
+		if err != nil {
+			return nil, err
+		}
+		if !ok {
+			p.heap[0] = p.heap[len(p.heap)-1]
+			p.heap = p.heap[:len(p.heap)-1]
+		}
+		p.sink(0)
+	}
+	return &p.rec, nil
+}
+
+func (p *Pool) sink(i int) {
+	h := p.heap
+	for {
+		j := 2*i + 1
+		if j >= len(h) {
+			return
+		}
+		if j+1 < len(h) && h[j+1].rec.Compare(&h[j].rec) < 0 {
+			j++
+		}
+		if h[j].rec.Compare(&h[i].rec) >= 0 {
+			return
+		}
+		h[i], h[j] = h[j], h[i]
+		i = j
+	}
+}
+
+// MissingError lists the parts of runs that are not there.
+type MissingError struct{ Runs []*Run }
+
+func (e *MissingError) Error() string {
+	var list []string
+	for _, r := range e.Runs {
+		list = append(list, fmt.Sprintf("part(s) %s of %d", numbers(r.Missing()), r.Parts))
+	}
+	return "incomplete: " + strings.Join(list, "; ") + " missing"
+}
+
+// numbers gives "0, 3 and 12 more".
+func numbers(list []int) string {
+	var out []string
+	for i, x := range list {
+		if i == 20 {
+			out = append(out, fmt.Sprintf("and %d more", len(list)-i))
+			break
+		}
+		out = append(out, fmt.Sprint(x))
+	}
+	return strings.Join(out, ", ")
+}
+
+// Complete returns a *MissingError if parts of a run are missing.
+func (p *Pool) Complete() error {
+	var e MissingError
+	for _, r := range p.Meta.Runs {
+		if len(r.Missing()) > 0 {
+			e.Runs = append(e.Runs, r)
+		}
+	}
+	if e.Runs == nil {
+		return nil
+	}
+	return &e
+}

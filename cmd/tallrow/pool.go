@@ -1,0 +1,110 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"os"
+
+	"github.com/spf13/cobra"
+
+	"github.com/tallrow/tallrow/accum/digest"
+	"github.com/tallrow/tallrow/stream"
+)
+
+func newPool(a *app) *cobra.Command {
+	cmd := &cobra.Command{
+		Use:   "pool DIGEST... -o DIGEST",
+		Short: "join digests: the parts of a run, the days of a month",
+		Long: `The order does not matter, and digests that were joined can be joined again: the sums are exact. A part that is
+there twice, digests of other models and inputs that overlap are refused; missing parts end with status 3.`,
+		Example: `  tallrow pool part-*.digest -o whole.digest
+  tallrow pool 2026-05/*.digest -o may.digest`,
+	}
+	cmd.DisableFlagsInUseLine = true
+	addOptions(cmd, onPool)
+	cmd.RunE = func(cmd *cobra.Command, args []string) error {
+		s, err := settingsFor(cmd, args, onPool)
+		if err != nil {
+			return err
+		}
+		if err := s.needData(cmd); err != nil {
+			return err
+		}
+		if err := s.needOutput("joined digest"); err != nil {
+			return err
+		}
+		m, err := a.pool(cmd.Context(), s)
+		if m != nil && (err == nil || s.json) {
+			if err := a.tellDigest(s, m); err != nil {
+				return err
+			}
+		}
+		return err
+	}
+	return cmd
+}
+
+// pool joins digests. With an incomplete run it returns what is there and a
+// *digest.MissingError.
+func (a *app) pool(ctx context.Context, s *settings) (*made, error) {
+	names, err := digestsAmong(ctx, s.data)
+	if err != nil {
+		return nil, err
+	}
+	if len(names) == 0 {
+		if _, err := stream.ListFiles(ctx, s.data); err != nil {
+			return nil, err
+		}
+		return nil, stream.Usef("%s: is no digest; pool joins what tallrow digest has made", s.data[0])
+	}
+	rs, shut, err := openDigests(names)
+	if err != nil {
+		return nil, err
+	}
+	defer shut()
+	p, err := digest.NewPool(rs)
+	if err != nil {
+		return nil, err
+	}
+	if err := p.Complete(); err != nil && !s.partial {
+		m := describeDigest(p.Meta, "", 0)
+		m.Digests = len(names)
+		return m, err
+	}
+	w, err := digest.Create(s.output)
+	if err != nil {
+		return nil, writing(s.output, err)
+	}
+	defer a.onExit(w.Abort)()
+	for n := 0; ; n++ {
+		if n%4096 == 0 && ctx.Err() != nil {
+			return nil, ctx.Err()
+		}
+		r, err := p.Next()
+		if err != nil {
+			return nil, err
+		}
+		if r == nil {
+			break
+		}
+		if err := w.Write(r); err != nil {
+			return nil, writing(s.output, err)
+		}
+	}
+	if err := w.Close(p.Meta); err != nil {
+		return nil, writing(s.output, err)
+	}
+	st, err := os.Stat(s.output)
+	if err != nil {
+		return nil, err
+	}
+	m := describeDigest(p.Meta, s.output, st.Size())
+	m.Digests = len(names)
+	return m, nil
+}
+
+// incomplete reports whether parts are missing.
+func incomplete(err error) bool {
+	var m *digest.MissingError
+	return errors.As(err, &m)
+}
