@@ -9,7 +9,6 @@ import (
 	"errors"
 	"fmt"
 	"hash"
-	"io"
 	"os"
 	"path/filepath"
 	"strings"
@@ -36,7 +35,6 @@ type Writer struct {
 	rows []row
 	n    int
 	held int // numbers in the row group
-	last *accum.Record
 }
 
 type teeWriter struct {
@@ -208,5 +206,3 @@ func caught(err *error) {
 		*err = fmt.Errorf("internal error of the Parquet library: %v", x)
 	}
 }
-
-var _ io.Writer = (*teeWriter)(nil)

@@ -86,7 +86,7 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	}
 	if least, most := vcov.LostElsewhere(state, asked.Design, columns); most > 0 {
 		res.Rows.LostElsewhere = &vcov.Lost{Least: least, Most: most}
-		text := fmt.Sprintf("%s", count(most))
+		text := count(most)
 		if least != most {
 			text = fmt.Sprintf("between %s and %s", count(least), count(most))
 		}

@@ -145,8 +145,7 @@ func TestWrongUse(t *testing.T) {
 		{model, "no data"},
 		{[]string{"columns"}, "no data"},
 		{[]string{"columns", ""}, "empty name"},
-		{[]string{"digest", "x.csv"}, "the command digest is not in this version"},
-		{[]string{"pool", "--seed", "3"}, "the command pool is not in this version"},
+		{[]string{"launch", "--seed", "3"}, "the command launch is not in this version"},
 		{[]string{"launch"}, "the command launch is not in this version"},
 		{[]string{"fits", "x"}, `unknown command "fits"; did you mean fit?`},
 		{[]string{"columns", "--terms", "x", "y"}, "--terms is not an option of columns"},
@@ -177,7 +176,7 @@ func TestWrongUse(t *testing.T) {
 }
 
 func TestHelp(t *testing.T) {
-	for _, c := range []string{"fit", "plan", "columns"} {
+	for _, c := range []string{"fit", "plan", "columns", "digest", "pool"} {
 		code, out, errw := try(context.Background(), nil, c, "--help")
 		if code != exitDone || errw != "" {
 			t.Errorf("%s: status %d, stderr %q", c, code, errw)
