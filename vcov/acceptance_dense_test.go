@@ -219,6 +219,28 @@ func (d *dense) adjusted(kind string) *mat.Dense {
 	return d.sandwich(scores, ones)
 }
 
+// pairs is M [sum_ij k(i, j) s_i s_j'] M over all pairs of rows, s_i = w_i e_i x_i.
+func (d *dense) pairs(k func(i, j int) float64) *mat.Dense {
+	meat := mat.NewDense(d.k, d.k, nil)
+	for i, x := range d.x {
+		for j, z := range d.x {
+			t := k(i, j)
+			if t == 0 {
+				continue
+			}
+			t *= d.w[i] * d.e[i] * d.w[j] * d.e[j]
+			for p := range d.k {
+				for q := range d.k {
+					meat.Set(p, q, meat.At(p, q)+t*x[p]*z[q])
+				}
+			}
+		}
+	}
+	var v mat.Dense
+	v.Product(d.m, meat, d.m)
+	return &v
+}
+
 // exponent of HC4 (Cribari-Neto 2004, doi:10.1016/S0167-9473(02)00366-3), HC4m
 // (Cribari-Neto and da Silva 2011) and HC5 (Cribari-Neto, Souza and Vasconcellos
 // 2007) for a row whose leverage is r times the mean.

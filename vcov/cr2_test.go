@@ -11,12 +11,12 @@ import (
 	"github.com/tallrow/tallrow/stream"
 )
 
-// bellMcCaffrey computes CR2, CR3 and Satterthwaite's degrees of freedom from
+// BellMcCaffrey computes CR2, CR3 and Satterthwaite's degrees of freedom from
 // their definitions over rows (Bell & McCaffrey 2002, sections 3 and 4): the
 // symmetric root of the inverse of a cluster's block of I - H, deletion of a
 // cluster, and
-// the trace of the quadratic form, all N x N.
-func bellMcCaffrey(x *mat.Dense, y []float64, group []int, groups int) (cr2, cr3 *mat.Dense, df []float64) {
+// the trace of the quadratic form, all N x N. Exported for tests outside the package.
+func BellMcCaffrey(x *mat.Dense, y []float64, group []int, groups int) (cr2, cr3 *mat.Dense, df []float64) {
 	n, k := x.Dims()
 	var m, b mat.Dense
 	m.Mul(x.T(), x)
@@ -144,7 +144,7 @@ func TestAdjustedClustersAreBellMcCaffrey(t *testing.T) {
 				cols[j] = append(cols[j], v)
 			}
 		}
-		cr2, cr3, df := bellMcCaffrey(x, cols[0], group, groups)
+		cr2, cr3, df := BellMcCaffrey(x, cols[0], group, groups)
 
 		s, sol := solveMemory(t, []string{"y", "a", "b", "c"}, cols, stream.Spec{Outcome: "y", Terms: []string{"a", "b", "c"}})
 		// a + 2 b is the coefficient of a where b is replaced by b - 2a.
@@ -152,7 +152,7 @@ func TestAdjustedClustersAreBellMcCaffrey(t *testing.T) {
 		for i := range n {
 			turned.SetRow(i, []float64{1, x.At(i, 1), x.At(i, 2) - 2*x.At(i, 1), x.At(i, 3)})
 		}
-		_, _, dfTurned := bellMcCaffrey(turned, cols[0], group, groups)
+		_, _, dfTurned := BellMcCaffrey(turned, cols[0], group, groups)
 		list, err := s.Design.ParseHypothesis("a + 2 * b = 1")
 		if err != nil {
 			t.Fatal(err)

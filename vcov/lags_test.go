@@ -7,8 +7,6 @@ import (
 	"math/rand/v2"
 	"testing"
 
-	"gonum.org/v1/gonum/mat"
-
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/vcov"
 )
@@ -80,19 +78,7 @@ func TestDriscollKraayByPairsOfRows(t *testing.T) {
 			lags   int64
 			width  float64
 		}{{"bartlett", 0, 1}, {"bartlett", 5, 6}, {"parzen", 7, 8}, {"quadratic", 3, 3}} {
-			meat := mat.NewDense(3, 3, nil)
-			for i := range n {
-				for j := range n {
-					w := kernelAt(c.kernel, float64(day[i]-day[j])/c.width) * d.e[i] * d.e[j]
-					for p := range 3 {
-						for q := range 3 {
-							meat.Set(p, q, meat.At(p, q)+w*d.x[i][p]*d.x[j][q])
-						}
-					}
-				}
-			}
-			var v mat.Dense
-			v.Product(d.m, meat, d.m)
+			v := d.pairs(func(i, j int) float64 { return kernelAt(c.kernel, float64(day[i]-day[j])/c.width) })
 			for _, passes := range []int{1, 2} {
 				res := fit(t, tb.source(37), spec, vcov.Options{Errors: []vcov.Kind{{Name: "driscoll-kraay", Cluster: 0}}, Kernel: c.kernel, Lags: c.lags, Passes: passes})
 				e := errorsOf(t, res, "driscoll-kraay")

@@ -8,8 +8,6 @@ import (
 	"math/rand/v2"
 	"testing"
 
-	"gonum.org/v1/gonum/mat"
-
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/vcov"
 )
@@ -93,25 +91,14 @@ func TestMultiwayIsPairsThatShareACluster(t *testing.T) {
 			d.w = append(d.w, 1)
 		}
 		d.solve()
-		meat := mat.NewDense(3, 3, nil)
-		for i := range n {
-			for j := range n {
-				share := false
-				for _, k := range keys {
-					share = share || k[i] == k[j]
-				}
-				if !share {
-					continue
-				}
-				for p := range 3 {
-					for q := range 3 {
-						meat.Set(p, q, meat.At(p, q)+d.e[i]*d.e[j]*d.x[i][p]*d.x[j][q])
-					}
+		v := d.pairs(func(i, j int) float64 {
+			for _, k := range keys {
+				if k[i] == k[j] {
+					return 1
 				}
 			}
-		}
-		var v mat.Dense
-		v.Product(d.m, meat, d.m)
+			return 0
+		})
 		for _, passes := range []int{1, 2} {
 			res := waysFit(t, tb, "cr0", len(sizes), vcov.Options{Passes: passes, Workers: 2})
 			e := &res.Errors[1]
