@@ -20,7 +20,8 @@ type dense struct {
 	group []int // cluster of each row
 
 	b            []float64
-	m            *mat.Dense // (X'WX)^-1
+	m            *mat.Dense  // (X'WX)^-1
+	l            [][]float64 // M x of each row
 	e, h         []float64
 	n            float64 // sum of frequency weights, else rows
 	k            int
@@ -55,7 +56,7 @@ func (d *dense) solve() {
 	d.m = mat.NewDense(d.k, d.k, nil)
 	d.m.Mul(&inv, inv.T())
 	d.b = mat.Col(nil, 0, &b)
-	d.e, d.h = make([]float64, rows), make([]float64, rows)
+	d.e, d.h, d.l = make([]float64, rows), make([]float64, rows), nil
 	d.n = float64(rows)
 	if d.kind == stream.Frequency {
 		d.n = 0
@@ -66,6 +67,13 @@ func (d *dense) solve() {
 			fit += v * d.b[j]
 			d.h[i] += q.At(i, j) * q.At(i, j)
 		}
+		l := make([]float64, d.k)
+		for p := range l {
+			for j := range x {
+				l[p] += inv.At(p, j) * q.At(i, j) / math.Sqrt(d.w[i])
+			}
+		}
+		d.l = append(d.l, l)
 		d.e[i] = d.y[i] - fit
 		d.hMost = max(d.hMost, d.h[i])
 		d.rss += d.w[i] * d.e[i] * d.e[i]
@@ -77,19 +85,18 @@ func (d *dense) solve() {
 	}
 }
 
-// sandwich is M meat M for the sum of outer products of the rows of s.
-func (d *dense) sandwich(s [][]float64, f []float64) *mat.Dense {
-	meat := mat.NewDense(d.k, d.k, nil)
-	for i, r := range s {
+// outer is sum f v v' over the rows v of l: where these are M s it is M (sum f s s') M,
+// with more digits left than if the meat were formed first.
+func (d *dense) outer(l [][]float64, f []float64) *mat.Dense {
+	out := mat.NewDense(d.k, d.k, nil)
+	for i, r := range l {
 		for p := range r {
 			for q := range r {
-				meat.Set(p, q, meat.At(p, q)+f[i]*r[p]*r[q])
+				out.Set(p, q, out.At(p, q)+f[i]*r[p]*r[q])
 			}
 		}
 	}
-	var v mat.Dense
-	v.Product(d.m, meat, d.m)
-	return &v
+	return out
 }
 
 // covariance by the definitions: classical s^2 (X'WX)^-1; HC after MacKinnon and
@@ -106,13 +113,13 @@ func (d *dense) covariance(kind string) *mat.Dense {
 		return &v
 	case "cr0", "cr1":
 		sum := map[int][]float64{}
-		for i, x := range d.x {
+		for i, l := range d.l {
 			s := sum[d.group[i]]
 			if s == nil {
 				s = make([]float64, d.k)
 				sum[d.group[i]] = s
 			}
-			for j, v := range x {
+			for j, v := range l {
 				s[j] += d.w[i] * d.e[i] * v
 			}
 		}
@@ -125,7 +132,7 @@ func (d *dense) covariance(kind string) *mat.Dense {
 		for _, v := range sum {
 			s, f = append(s, v), append(f, c)
 		}
-		return d.sandwich(s, f)
+		return d.outer(s, f)
 	}
 	if kind == "cr2" || kind == "cr3" {
 		return d.adjusted(kind)
@@ -147,7 +154,7 @@ func (d *dense) covariance(kind string) *mat.Dense {
 			f[i] *= math.Pow(1-d.h[i], -d.exponent(kind, d.n/k*d.h[i]))
 		}
 	}
-	return d.sandwich(d.x, f)
+	return d.outer(d.l, f)
 }
 
 // adjusted is CR2 or CR3 by the definition of Bell and McCaffrey (2002) over rows:
@@ -208,22 +215,22 @@ func (d *dense) adjusted(kind string) *mat.Dense {
 				p = -1
 			}
 			t := math.Pow(l, p) * mat.Dot(vec.ColView(q), e)
-			for a := range n {
-				for j := range s {
-					s[j] += x.At(a, j) * vec.At(a, q) * t
+			for a, i := range rows {
+				for j, v := range d.l[i] {
+					s[j] += v * root(i) * vec.At(a, q) * t
 				}
 			}
 		}
 		scores, ones = append(scores, s), append(ones, 1)
 	}
-	return d.sandwich(scores, ones)
+	return d.outer(scores, ones)
 }
 
 // pairs is M [sum_ij k(i, j) s_i s_j'] M over all pairs of rows, s_i = w_i e_i x_i.
 func (d *dense) pairs(k func(i, j int) float64) *mat.Dense {
-	meat := mat.NewDense(d.k, d.k, nil)
-	for i, x := range d.x {
-		for j, z := range d.x {
+	out := mat.NewDense(d.k, d.k, nil)
+	for i, x := range d.l {
+		for j, z := range d.l {
 			t := k(i, j)
 			if t == 0 {
 				continue
@@ -231,14 +238,12 @@ func (d *dense) pairs(k func(i, j int) float64) *mat.Dense {
 			t *= d.w[i] * d.e[i] * d.w[j] * d.e[j]
 			for p := range d.k {
 				for q := range d.k {
-					meat.Set(p, q, meat.At(p, q)+t*x[p]*z[q])
+					out.Set(p, q, out.At(p, q)+t*x[p]*z[q])
 				}
 			}
 		}
 	}
-	var v mat.Dense
-	v.Product(d.m, meat, d.m)
-	return &v
+	return out
 }
 
 // exponent of HC4 (Cribari-Neto 2004, doi:10.1016/S0167-9473(02)00366-3), HC4m

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"testing"
 
 	"github.com/tallrow/tallrow/stream"
@@ -132,6 +133,31 @@ func TestLagsAreChosen(t *testing.T) {
 	}
 	if got := chosen(0.5, 1<<20); got != some {
 		t.Errorf("lags %d in other units, %d before", got, some)
+	}
+}
+
+// However few periods there are, what is chosen stays within them: a longer reach would
+// leave errors near zero.
+func TestChosenLagsStayWithinTheData(t *testing.T) {
+	most := int64(math.MinInt64)
+	for seed := range uint64(60) {
+		tb, _, _, _, day := dayTable(rand.New(rand.NewPCG(seed, 54)), 8, 0.9)
+		span := slices.Max(day) - slices.Min(day) + 1
+		if span < 4 {
+			continue
+		}
+		for _, kernel := range []string{"bartlett", "parzen", "quadratic"} {
+			res := fit(t, tb.source(50), stream.Spec{Outcome: "y", Terms: []string{"a"}, Keys: []string{"day"}},
+				vcov.Options{Errors: []vcov.Kind{{Name: "driscoll-kraay", Cluster: 0}}, Kernel: kernel, AutoLags: true})
+			l := errorsOf(t, res, "driscoll-kraay").Lags
+			if l.Lags >= span || float64(l.Bandwidth) > float64(span) {
+				t.Errorf("seed %d, %s: %d lags, bandwidth %v over %d periods", seed, kernel, l.Lags, l.Bandwidth, span)
+			}
+			most = max(most, l.Lags-span)
+		}
+	}
+	if most != -1 {
+		t.Errorf("no design asks for more than it spans; the longest reach is %d periods short of it", -most)
 	}
 }
 

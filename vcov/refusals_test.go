@@ -105,6 +105,61 @@ func TestMoreEquationsThanClusters(t *testing.T) {
 	}
 }
 
+// Two quays of four with the same rows have the same score, so that the scores, which add
+// up to zero, span two dimensions only: three equations have no test though three are
+// fewer than the clusters.
+func TestSingularCovarianceHasNoJointTest(t *testing.T) {
+	tb := refusalTable()
+	n := tb.rows()
+	wind := make([]float64, n)
+	r := rand.New(rand.NewPCG(3, 71))
+	for i := range n {
+		if wind[i] = r.NormFloat64(); i%4 == 3 {
+			wind[i] = wind[i-1]
+			for _, c := range tb.cols[:3] {
+				c.F64[i] = c.F64[i-1]
+			}
+		}
+	}
+	tb.float("wind", wind)
+	spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "wind"}, Keys: []string{"quay"}}
+	for _, passes := range []int{1, 2} {
+		res := fit(t, tb.source(25), spec, vcov.Options{Passes: passes, Errors: kinds("cr0", "cr1", "wcr", "wcu"), Draws: 199, Hypotheses: []string{"pallets = 1, tonnes = 0, wind = 0", "pallets = 1, tonnes = 0"}})
+		for i, e := range res.Errors {
+			joint, two := res.Hypotheses[i], res.Hypotheses[4+i]
+			if want := "the covariance by " + e.Name() + " is singular for these restrictions"; joint.Reason == nil || *joint.Reason != want || joint.P.Exists() || joint.F.Exists() {
+				t.Errorf("%+v, want none because %s", joint, want)
+			}
+			if !two.P.Exists() || two.Reason != nil {
+				t.Errorf("%+v", two)
+			}
+			if e.Overall != nil && (e.Overall.P.Exists() || e.Overall.F.Exists()) {
+				t.Errorf("%s: overall %+v", e.Name(), e.Overall)
+			}
+		}
+	}
+}
+
+// Of four quays, three with as many values of two terms leave the fourth to decide a
+// combination of them: draws cannot test it.
+func TestEquationsThatOneClusterDecides(t *testing.T) {
+	tb := refusalTable()
+	n := tb.rows()
+	depth, cranes := make([]float64, n), make([]float64, n)
+	for i := range n { // orthogonal to 1, depth and cranes over quays: (4, 0, -5, 1)
+		depth[i], cranes[i] = []float64{3, 5, 4, 8}[i%4], []float64{1, 1, 2, 6}[i%4]
+	}
+	tb.float("depth", depth)
+	tb.float("cranes", cranes)
+	spec := stream.Spec{Outcome: "minutes", Terms: []string{"depth", "cranes"}, Keys: []string{"quay"}}
+	res := fit(t, tb.source(25), spec, vcov.Options{Errors: kinds("wcr", "wcu"), Draws: 199, Hypotheses: []string{"depth = 1, cranes = 0", "depth = 1"}})
+	for _, h := range res.Hypotheses {
+		if h.Reason == nil || !strings.Contains(*h.Reason, "a single cluster decides") || h.P.Exists() || h.F.Exists() {
+			t.Errorf("%+v, want none because a single cluster decides it", h)
+		}
+	}
+}
+
 // A row without its cluster or period falls out under every kind of errors and is
 // counted by the column; without any id there is nothing to fit.
 func TestRowsWithoutClusterOrPeriod(t *testing.T) {
