@@ -229,6 +229,33 @@ func TestRowsWithoutClusterOrPeriod(t *testing.T) {
 	}
 }
 
+// What aliased terms add up to is tested with other equations by draws as the terms
+// that are kept are.
+func TestAliasedEquationsByDraws(t *testing.T) {
+	tb := refusalTable()
+	twice := make([]float64, tb.rows())
+	for i := range twice {
+		twice[i] = 2*tb.cols[1].F64[i] + 3
+	}
+	tb.float("twice", twice)
+	spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "twice"}, Keys: []string{"day"}}
+	o := vcov.Options{Errors: kinds("cr1", "wcr", "wcu"), Draws: 199, Hypotheses: []string{
+		"pallets + 2 * twice = 1, tonnes = -1", "pallets = 1, tonnes = -1", "pallets = 1, twice = 0"}}
+	r := fit(t, tb.source(25), spec, o)
+	spec.Terms = []string{"pallets", "tonnes"}
+	o.Hypotheses = o.Hypotheses[1:2]
+	kept := fit(t, tb.source(25), spec, o)
+	for i := range 3 {
+		a, none, want := r.Hypotheses[i], r.Hypotheses[6+i], kept.Hypotheses[i]
+		if !near(float64(a.F), float64(want.F), float64(want.F), 1e-9) || !near(float64(a.P), float64(want.P), 1, 1e-9) || !a.P.Exists() {
+			t.Errorf("%+v, without the aliased term %+v", a, want)
+		}
+		if none.P.Exists() || none.Reason == nil || !strings.Contains(*none.Reason, "twice is aliased") {
+			t.Errorf("%+v", none)
+		}
+	}
+}
+
 // Restrictions of which one follows from the others are counted once, by draws as by F.
 func TestRedundantEquationsByDraws(t *testing.T) {
 	tb := refusalTable()
