@@ -22,6 +22,7 @@ type epoch struct {
 	tables   []*keyTable
 	pairs    []*pairTable
 	clusters []*groupStore
+	cells    *cellStore
 	lone     []*loneTracker
 	reach    float64
 	weight   superSum
@@ -61,6 +62,14 @@ func joinWorkers(ws []*firstWorker) (*epoch, error) {
 		}
 		joinVaried(e.value, e.varied, o.value, o.varied)
 		e.tally.Add(&o.eval.Tally)
+	}
+	if w.cells != nil {
+		e.cells = w.cells.store
+		var all []*cells
+		for _, o := range ws {
+			all = append(all, o.cells)
+		}
+		e.cells.join(all, e.rows)
 	}
 	if !w.budget.dropped.Load() {
 		var held int64
@@ -151,7 +160,7 @@ func (w *epochWorker) end() error {
 		return err
 	}
 	w.epochs = append(w.epochs, e)
-	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""), w.budget.clusterStores(w.lay, w.needs))
+	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""), w.budget.clusterStores(w.lay, w.needs), w.budget.cellStore())
 	w.eval.Tally = stream.Tally{}
 	return nil
 }

@@ -35,6 +35,7 @@ type firstWorker struct {
 	clusters []*groups // nil for keys that are not wanted
 	lone     []*loneTracker
 	zcols    [][]float64
+	cells    *cells // nil unless wanted
 
 	reach   float64 // bound of the sum of w |(1, u)|^2 over any block
 	weight  superSum
@@ -56,6 +57,7 @@ type budget struct {
 	workers int
 	num     *numbering
 	pool    *groupPool
+	cells   *cellSpec   // nil unless unique rows are wanted
 	keep    bool        // cluster sums are never dropped
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
 }
@@ -75,22 +77,31 @@ func (b *budget) clusterStores(l *layout, needs *Needs) []*groupStore {
 	return stores
 }
 
+// cellStore makes the store of the unique rows of an epoch.
+func (b *budget) cellStore() *cellStore {
+	if b.cells == nil {
+		return nil
+	}
+	return &cellStore{cellSpec: b.cells, table: newCellTable(b.cells)}
+}
+
 // newFirstWorkers makes the workers of one epoch.
 func newFirstWorkers(n int, l *layout, f *Frame, extended bool, needs *Needs, b *budget) []*firstWorker {
 	pairs := l.pairTables(b.unit, l.design.Spec.Weight == "")
 	stores := b.clusterStores(l, needs)
+	unique := b.cellStore()
 	ws := make([]*firstWorker, n)
 	for i := range ws {
 		ld := newLoader(l, f)
 		if extended {
 			ld.extend()
 		}
-		ws[i] = newFirstWorker(l, ld, needs, b, pairs, stores)
+		ws[i] = newFirstWorker(l, ld, needs, b, pairs, stores, unique)
 	}
 	return ws
 }
 
-func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pairTable, stores []*groupStore) *firstWorker {
+func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pairTable, stores []*groupStore, unique *cellStore) *firstWorker {
 	w := &firstWorker{loader: ld, needs: needs, budget: b}
 	w.gram = make([]float64, l.width*(l.width+1)/2)
 	w.gramX = make(superVec, len(w.gram))
@@ -122,6 +133,9 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pai
 		w.lone[k] = newLoneTracker(l.p0)
 	}
 	w.zcols = make([][]float64, l.p0+2)
+	if unique != nil {
+		w.cells = newCells(unique)
+	}
 	w.nonzero, w.zero = make([]int64, l.p0), make([]int64, l.p0)
 	w.value, w.varied = make([]float64, l.p0), make([]bool, l.p0)
 	return w
@@ -183,6 +197,11 @@ func (w *firstWorker) add() error {
 			g.take(&w.block.Key[k], n)
 		}
 		w.watch.lap(StageClusters)
+	}
+	if w.cells != nil {
+		levels := w.cats.ids
+		w.cells.add(&w.block, levels, w.col(l.v()))
+		w.watch.lap(StageCells)
 	}
 	// Last, since frequencies overwrite the scaled columns.
 	if w.q != nil {
@@ -274,6 +293,10 @@ func (w *firstWorker) fold() error {
 		return err
 	}
 	w.watch.lap(StageLevels)
+	if w.cells != nil {
+		w.cells.fold()
+		w.watch.lap(StageCells)
+	}
 	if w.budget.dropped.Load() {
 		return nil
 	}
@@ -364,6 +387,13 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Total.Store(src.Info().Bytes)
 	b := newBudget(l, &needs, &o, unit)
 	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable
+	if needs.Cells {
+		// An input that is sampled has shown before that it suits.
+		b.cells = newCellSpec(l, extended || f == nil && o.Arithmetic == Auto, f == nil, b.cluster, b.workers)
+		if o.fewMost > 0 {
+			b.cells.local = o.fewMost
+		}
+	}
 	defer func() {
 		if s == nil || s.pool != b.pool {
 			b.pool.close()

@@ -87,6 +87,15 @@ func (t *keyTable) mergeFrom(o *keyTable, to []int32) {
 	t.join(&o.partials)
 }
 
+// reset empties the table after a fold; its memory stays.
+func (t *keyTable) reset() {
+	t.rows, t.slot = t.rows[:0], t.slot[:0]
+	for _, p := range t.pages {
+		clear(p)
+	}
+	t.partials = partials{}
+}
+
 func (t *keyTable) grow(id int32) {
 	for int(id) >= len(t.slot) {
 		t.slot = append(t.slot, -1)

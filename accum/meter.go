@@ -28,6 +28,7 @@ const (
 	StageSecond                // second moments
 	StageLevels                // sums by category level
 	StageClusters              // sums by cluster
+	StageCells                 // sums by unique row
 	StageFourth                // fourth moments
 	StageRows                  // pass two: residuals, leverages and meats
 	StageJoin                  // join segments and folds
@@ -36,7 +37,7 @@ const (
 
 // String names a stage for reports.
 func (s Stage) String() string {
-	return [stages]string{"read", "terms", "frame", "second moments", "levels", "clusters", "fourth moments", "row pass", "join"}[s]
+	return [stages]string{"read", "terms", "frame", "second moments", "levels", "clusters", "unique rows", "fourth moments", "row pass", "join"}[s]
 }
 
 // Timings adds up where the time of all workers goes, by Stage. Taking the time

@@ -19,6 +19,9 @@ type Needs struct {
 	// Retain keeps all sums in the state as they were added up, for State.Records; an
 	// input without used rows is then no error.
 	Retain bool
+	// Cells asks for unique rows, from which SecondByCells has what a second pass would
+	// have. They are given up, and State.CellsLost is set, where there are too many.
+	Cells bool
 }
 
 // Options say how to scan.
@@ -48,7 +51,7 @@ type Options struct {
 	// For tests.
 	createScratch func(dir string) (scratchFile, error)
 	heldMost      int64 // bytes of sums of clusters in memory
-	fewMost       int   // keys that a worker numbers
+	fewMost       int   // keys that a worker numbers, unique rows that it keeps
 }
 
 // MemoryError says that the sums do not fit.

@@ -26,6 +26,7 @@ type loader struct {
 	lay   *layout
 	frame *Frame
 	eval  *stream.Evaluator
+	seg   stream.Segment // that the batch is of
 	batch stream.Batch
 	block stream.Block
 	z     []float64 // width columns of stride rows
@@ -316,6 +317,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 		}
 	}()
 	ld := w.loading()
+	ld.seg = seg
 	ld.watch.to = p.timings
 	ld.watch.start()
 	defer ld.watch.hand()

@@ -31,6 +31,14 @@ type RowSums struct {
 	// Spread is filled under RowPass.Spread: sum e^2 z over the constant and the
 	// numeric terms, then sum e^4; each row as often as its frequency.
 	Spread []float64
+	// Over counts the rows (frequencies as often as they say) for each of RowPass.Over;
+	// Highest are the rows of largest leverage, none by unique rows.
+	Over    []int64
+	Highest []HighRow
+	// Gross and GrossBlocks are, by unique rows, like Meats and MeatBlocks the size of
+	// what was added up for them.
+	Gross       [][]float64
+	GrossBlocks []Blocks
 	// Passes is 1, or 2 if the keyed sums needed another unit; Bytes is of all.
 	Passes int
 	Bytes  int64
@@ -89,8 +97,12 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 		w.loneRows += o.loneRows
 		w.heavyCount += o.heavyCount
 		w.heavy = append(w.heavy, o.heavy...)
+		for i, c := range o.over {
+			w.over[i] += c
+		}
+		w.highest = append(w.highest, o.highest...)
 	}
-	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Passes: 1, Bytes: p.bytes}
+	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Over: w.over, Highest: highest(w.highest), Passes: 1, Bytes: p.bytes}
 	if rp.Spread {
 		out.Spread = make([]float64, len(w.spread))
 		w.spreadX.values(out.Spread)

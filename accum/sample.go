@@ -27,6 +27,8 @@ type Sample struct {
 	Frame *Frame
 	// Whole says that the sample is the whole input.
 	Whole bool
+	// Cells counts unique rows.
+	Cells CellCount
 }
 
 // TakeSample samples the input for a design, at several places at a time if there
@@ -37,17 +39,13 @@ func TakeSample(ctx context.Context, src stream.Source, d *stream.Design, worker
 		return &Sample{}, nil
 	}
 	l := newLayout(d)
-	f, whole, err := sampleFrame(ctx, src, l, l.shifted(), workers)
-	if err != nil {
-		return nil, err
-	}
-	return &Sample{f, whole}, nil
+	return sampleFrame(ctx, src, l, l.shifted(), workers)
 }
 
-// sampleFrame makes a frame from the first batches at places spread over the
-// input: start, end, middle, quarters, and so on. It returns nil if too few rows
-// were found there although the input is longer.
-func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool, workers int) (f *Frame, whole bool, err error) {
+// sampleFrame makes a frame, and counts unique rows, from the first batches at places spread over the
+// input: start, end, middle, quarters, and so on. The frame is nil if
+// too few rows were found there although the input is longer.
+func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool, workers int) (*Sample, error) {
 	segments := src.Info().Segments
 	spots := sampleSpots
 	if segments >= 0 {
@@ -60,7 +58,7 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool, 
 		var g errgroup.Group
 		g.SetLimit(max(1, workers))
 		for i := range list {
-			list[i] = &spot{rows: newFrameRows(l.nx)}
+			list[i] = &spot{rows: newFrameRows(l.nx), cells: sampleCells{}}
 			g.Go(func() error {
 				errs[i] = list[i].look(ctx, src, l, spread(from+i), batches)
 				return nil
@@ -71,31 +69,33 @@ func sampleFrame(ctx context.Context, src stream.Source, l *layout, shift bool, 
 	}
 	first, err := look(0, 1)
 	if err != nil {
-		return nil, false, err
+		return nil, err
 	}
-	rows := first[0].rows
-	if whole = first[0].ended && segments <= 1; whole { // the end was reached from the start
-		return buildFrame(rows, l.p0, shift), true, nil
+	rows, seen := first[0].rows, first[0].cells
+	if first[0].ended && segments <= 1 { // the end was reached from the start
+		return &Sample{buildFrame(rows, l.p0, shift), true, seen.count()}, nil
 	}
 	for at, to := 1, spots; at < sampleMaxSpots && (at < spots || rows.rows() < sampleRows); to++ {
 		list, err := look(at, to)
 		if err != nil {
-			return nil, false, err
+			return nil, err
 		}
 		for _, s := range list {
 			rows.join(s.rows)
+			seen.join(s.cells)
 		}
 		at = to
 	}
 	if rows.rows() < sampleMin {
-		return nil, false, nil
+		return &Sample{Cells: seen.count()}, nil
 	}
-	return buildFrame(rows, l.p0, shift), false, nil
+	return &Sample{Frame: buildFrame(rows, l.p0, shift), Cells: seen.count()}, nil
 }
 
 // spot is what one place of the input holds.
 type spot struct {
 	rows  *frameRows
+	cells sampleCells
 	ended bool // the input ended there
 }
 
@@ -122,6 +122,7 @@ func (s *spot) look(ctx context.Context, src stream.Source, l *layout, at float6
 		// A row that cannot be used is reported by the scan, with its place.
 		if eval.Eval(&batch, seg.Locate, &block) == nil {
 			s.rows.addBlock(&block, l)
+			s.cells.add(&block, l)
 		}
 	}
 	return ctx.Err()

@@ -40,6 +40,9 @@ type RowPass struct {
 	Heavy bool
 	// Spread asks for RowSums.Spread; not with a group apart.
 	Spread bool
+	// Over asks, if there are leverages, how many rows have one above each of these,
+	// and which rows have the largest (HighestRows of them).
+	Over []float64
 }
 
 const (
@@ -105,6 +108,9 @@ type secondWorker struct {
 	maxLever             float64
 	loneRows, heavyCount int64
 	heavy                []HeavyRow
+	over                 []int64
+	highest              []HighRow
+	cells                *cellPass // nil for rows
 }
 
 // secondCommon is what the workers of pass two share.
@@ -192,6 +198,7 @@ func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *second
 	if rp.Spread {
 		w.spread, w.spreadX, w.squares = make([]float64, l.p0+2), make(superVec, l.p0+2), make([]float64, stride)
 	}
+	w.over = make([]int64, len(rp.Over))
 	w.e, w.h, w.mult = make([]float64, stride), make([]float64, stride), make([]float64, stride)
 	w.zs = make([]float64, len(w.z))
 	return w
@@ -223,6 +230,23 @@ func (w *secondWorker) add() error {
 		kernel.Cross(w.spread, l.p0+1, m, stride, 1, w.z, stride, l.p0+1, n)
 		kernel.Cross(w.spread[l.p0+1:], 1, m, stride, 1, sq, stride, 1, n)
 	}
+	w.addRows(e)
+	for i, k := range rp.Scores {
+		w.loneT[i].add(&w.block.Key[k], w.block.X, n)
+		w.addScores(w.scores[i], w.loneC[i], &w.block.Key[k])
+		if w.apart != nil {
+			w.apart[i].add(w, &w.block.Key[k])
+		}
+	}
+	w.watch.lap(StageClusters)
+	return nil
+}
+
+// addRows adds the rows of the block, with residuals e, to the meats. For unique rows
+// e is the root of the sum of squares of all their residuals.
+func (w *secondWorker) addRows(e []float64) {
+	l, n, rp := w.lay, w.block.Rows, w.pass
+	freq := w.root != nil && l.design.Spec.WeightKind == stream.Frequency
 	h := w.h[:n]
 	clear(h)
 	anyLone := false
@@ -232,6 +256,7 @@ func (w *secondWorker) add() error {
 			if w.root != nil && !freq {
 				h[r] *= w.block.Weight[r]
 			}
+			w.noteLeverage(r, h[r])
 			if 1-h[r] < LoneGap {
 				anyLone = true
 				w.loneRows++
@@ -246,6 +271,9 @@ func (w *secondWorker) add() error {
 	heavy := func(r int) bool { return rp.Heavy && h[r] > HeavyAt && 1-h[r] >= LoneGap }
 	for i, g := range rp.Weights {
 		mult := w.mult[:n]
+		if w.cells != nil && i >= len(rp.Weights)/2 {
+			e = w.cells.gross[:n]
+		}
 		if rp.Whitener == nil {
 			by := math.Sqrt(g(0))
 			kernel.ShiftScale(mult, e, 0, by) // e by; the sum is of no use
@@ -261,7 +289,9 @@ func (w *secondWorker) add() error {
 		switch {
 		case w.root == nil:
 		case freq:
-			kernel.Scale(mult, mult, w.root[:n])
+			if w.cells == nil { // theirs are summed with their frequencies
+				kernel.Scale(mult, mult, w.root[:n])
+			}
 		default:
 			kernel.Scale(mult, mult, w.block.Weight[:n])
 		}
@@ -288,20 +318,13 @@ func (w *secondWorker) add() error {
 			if heavy(r) {
 				w.keepHeavy(r, w.mult[r])
 				w.mult[r] = 0
+			} else if w.cells != nil {
+				w.mult[r] *= math.Sqrt(float64(w.cells.rows(r)))
 			}
 		}
 		w.addMeat(w.light, l.p0+2)
 	}
 	w.watch.lap(StageRows)
-	for i, k := range rp.Scores {
-		w.loneT[i].add(&w.block.Key[k], w.block.X, n)
-		w.addScores(w.scores[i], w.loneC[i], &w.block.Key[k])
-		if w.apart != nil {
-			w.apart[i].add(w, &w.block.Key[k])
-		}
-	}
-	w.watch.lap(StageClusters)
-	return nil
 }
 
 // residuals sets e to sum_c theta_c z_c.
@@ -340,10 +363,16 @@ func (p places) combo(table int, levels []int32) (int32, error) {
 
 // findColumns finds, for each row and group, the internal column of its indicator.
 func (w *secondWorker) findColumns() error {
-	n := w.block.Rows
 	if err := w.cats.number(&w.block); err != nil {
 		return err
 	}
+	w.groupColumns()
+	return nil
+}
+
+// groupColumns is findColumns once combinations have their numbers.
+func (w *secondWorker) groupColumns() {
+	n := w.block.Rows
 	for g := range w.state.Groups {
 		first, parts := int32(w.state.Groups[g].first), int32(len(w.state.Groups[g].Parts))
 		to := w.rowb[g][:n]
@@ -351,7 +380,6 @@ func (w *secondWorker) findColumns() error {
 			to[r] = first + id*parts
 		}
 	}
-	return nil
 }
 
 func (w *secondWorker) leverages(h []float64) {

@@ -59,6 +59,8 @@ type State struct {
 	// Coarse: keyed sums may have lost digits, since their sizes differ too much or
 	// the input cannot be read again.
 	Coarse bool
+	// CellsLost: unique rows were wanted, but were too many or too different in size.
+	CellsLost bool
 	// Repeated says why the pass was done more than once.
 	Repeated []string
 
@@ -69,6 +71,7 @@ type State struct {
 	checks map[int]segCheck
 	stamp  string
 	quart  *quartic
+	cells  *cellRows
 	levels []*interner // global ids = places in Levels
 	combos []*comboIndex
 	place  [][]int32 // place in combos, by the number in pass one
@@ -229,15 +232,19 @@ func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, 
 			return nil, 0, err
 		}
 	}
-	s.indexLevels(b.num)
+	level := s.indexLevels(b.num)
 	if err := s.assemble(); err != nil {
 		return nil, 0, err
 	}
+	s.gatherCells(b.cells, level)
 	refit = s.refit(b.unit)
 	if !needs.Retain {
 		for _, e := range epochs {
 			e.tables, e.pairs, e.gramX, e.fourX = nil, nil, nil, nil
 		}
+	}
+	for _, e := range epochs {
+		e.cells = nil
 	}
 	return s, refit, nil
 }
@@ -255,10 +262,11 @@ func (s *State) fingerprint() {
 	s.Fingerprint = hex.EncodeToString(h.Sum(nil)[:16])
 }
 
-// indexLevels orders levels and combinations by value.
-func (s *State) indexLevels(num *numbering) {
+// indexLevels orders levels and combinations by value. It returns the places of the
+// levels of each category, by number in pass one.
+func (s *State) indexLevels(num *numbering) (level [][]int32) {
 	l := s.lay
-	level := make([][]int32, len(num.levels)) // places of levels, by number
+	level = make([][]int32, len(num.levels))
 	for c, in := range num.levels {
 		order := in.order()
 		level[c] = make([]int32, len(order))
@@ -331,6 +339,7 @@ func (s *State) indexLevels(num *numbering) {
 	if s.Apart != nil { // its columns are numbered behind v
 		s.Groups[apart].first = len(s.Columns) + 1
 	}
+	return level
 }
 
 // assemble fills S, and the sums of the group kept apart, in the last frame.

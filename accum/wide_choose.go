@@ -132,6 +132,6 @@ func chooseAfter(l *layout, epochs []*epoch, shift, ended bool) bool {
 	for _, e := range epochs {
 		n += e.rows
 	}
-	s := Sample{buildFrame(previousRows(l, epochs), l.p0, shift), ended && n <= sampleRows}
+	s := Sample{Frame: buildFrame(previousRows(l, epochs), l.p0, shift), Whole: ended && n <= sampleRows}
 	return s.NeedsExtended()
 }

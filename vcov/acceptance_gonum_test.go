@@ -6,6 +6,7 @@ import (
 	"math"
 	"math/rand/v2"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 
@@ -344,9 +345,22 @@ func forProblems(t *testing.T, count int, do func(t *testing.T, r *rand.Rand, p 
 	}
 }
 
-func onePass(names []string) []string {
+// onePass lists the kinds that one pass gives: by unique rows, those of rows too, but
+// with categories none over clusters.
+func (p *problem) onePass() []string {
 	var out []string
-	for _, n := range names {
+	for _, n := range p.names {
+		if !p.categories() || n[:2] != "cr" {
+			out = append(out, n)
+		}
+	}
+	return out
+}
+
+// fourthMoments lists the kinds without those that take leverages.
+func (p *problem) fourthMoments() []string {
+	var out []string
+	for _, n := range p.names {
 		if n == "hc0" || n == "hc1" || n[:2] != "hc" {
 			out = append(out, n)
 		}
@@ -360,15 +374,16 @@ func TestStreamingEqualsDense(t *testing.T) {
 		segment := []int{512, 700, 1024, 100_000}[r.IntN(4)]
 		res := fit(t, p.tb.source(segment), p.spec, vcov.Options{Errors: kinds(p.names...)})
 		p.compare(t, res, p.names, 1e-10)
-		names := onePass(p.names)
-		o := vcov.Options{Errors: kinds(names...), Passes: 1}
-		if p.categories() {
-			if _, err := tryFit(p.tb.source(segment), p.spec, o); !errors.Is(err, stream.ErrUse) {
-				t.Errorf("one pass over categories: %v, want a refusal", err)
+		for _, names := range [][]string{p.onePass(), p.fourthMoments()} {
+			o := vcov.Options{Errors: kinds(names...), Passes: 1}
+			if p.categories() && slices.ContainsFunc(names, func(n string) bool { return n[:2] == "cr" }) {
+				if _, err := tryFit(p.tb.source(segment), p.spec, o); !errors.Is(err, stream.ErrUse) {
+					t.Errorf("one pass over categories and clusters: %v, want a refusal", err)
+				}
+				continue
 			}
-			return
+			p.compare(t, fit(t, p.tb.source(segment), p.spec, o), names, 1e-10)
 		}
-		p.compare(t, fit(t, p.tb.source(segment), p.spec, o), names, 1e-10)
 	})
 }
 
@@ -407,14 +422,11 @@ func gap(t *testing.T, a, b *vcov.Result, names []string) float64 {
 
 func TestOnePassEqualsTwo(t *testing.T) {
 	forProblems(t, 60, func(t *testing.T, r *rand.Rand, p *problem) {
-		if p.categories() {
-			return // robust errors with categories take two passes
-		}
-		names := onePass(p.names)
+		names := p.onePass()
 		one := fit(t, p.tb.source(700), p.spec, vcov.Options{Errors: kinds(names...), Passes: 1})
 		two := fit(t, p.tb.source(700), p.spec, vcov.Options{Errors: kinds(names...), Passes: 2})
-		if one.Run.Passes != 1 || two.Run.Passes != 2 {
-			t.Fatalf("passes %d and %d, asked 1 and 2", one.Run.Passes, two.Run.Passes)
+		if one.Run.Passes != 1 || two.Run.Passes < 2 { // hc5 may take a third
+			t.Fatalf("passes %d and %d, asked 1 and 2 or more", one.Run.Passes, two.Run.Passes)
 		}
 		if d := gap(t, one, two, names); d > 1e-12 {
 			t.Errorf("one and two passes differ by %.1e", d)
@@ -428,10 +440,7 @@ func TestWorkersDoNotChangeABit(t *testing.T) {
 		for passes := range 3 {
 			names := p.names
 			if passes == 1 {
-				names = onePass(names)
-				if p.categories() {
-					continue
-				}
+				names = p.onePass()
 			}
 			var want string
 			for _, workers := range []int{1, 2, 3, 8} {
@@ -450,13 +459,16 @@ func TestWorkersDoNotChangeABit(t *testing.T) {
 // The same rows from text, from Parquet, from a pipe and from memory.
 func TestEveryWayInGivesTheSame(t *testing.T) {
 	forProblems(t, 24, func(t *testing.T, r *rand.Rand, p *problem) {
-		names := onePass(p.names)
+		names := p.fourthMoments()
+		if r.IntN(2) == 0 {
+			names = p.onePass() // pipes by unique rows
+		}
 		o := vcov.Options{Errors: kinds(names...)}
 		text := p.tb.csv()
 		so := stream.Options{SegmentBytes: 1 << (12 + r.IntN(6)), Kinds: map[string]stream.Kind{"barge": stream.Text, "wet": stream.Float64, "w": stream.Float64}}
 		memory := fit(t, p.tb.source(700), p.spec, o)
 		po := so
-		if p.categories() { // two passes, so the pipe is copied while it is read
+		if p.categories() { // perhaps two passes, so the pipe is copied while it is read
 			po.Spool = filepath.Join(t.TempDir(), "pipe")
 		}
 		results := map[string]*vcov.Result{

@@ -79,6 +79,7 @@ type fitter struct {
 	kinds   []string             // of sums.Meats
 	keys    []int                // of sums.Scores
 	groups  map[int]*clusterSums // by key
+	byCells bool                 // sums are from unique rows
 	heavyOK bool                 // rows of high leverage were summed one by one
 	fourth  []float64
 	gross   []float64 // size of what fourth moments added up for it
@@ -207,6 +208,22 @@ func (f *fitter) second() error {
 	if s.Coarse && len(s.Groups) > 0 {
 		f.note("digits", "the sums of category levels differ too much in size: small ones have lost digits")
 	}
+	if f.plan.needs.Cells && s.CellsLost {
+		rows = true
+		f.note("second-pass", "the regressors take too many values, or residuals of too different size, to keep unique rows; a second pass was made")
+	}
+	if f.plan.needs.Cells && !rows {
+		f.byCells = true
+		if err := f.sumRows(); err != nil || f.cellsEnough() {
+			return err
+		}
+		if !f.info().Rewindable || f.o.Passes == 1 {
+			f.note("digits", "errors by unique rows have about %d digits left: their squares cancel; a second pass would keep them", digits(f.loss))
+			return nil
+		}
+		rows, f.byCells, f.kinds = true, false, nil
+		f.note("second-pass", "sums by unique rows lost digits (relative error up to %.1e); a second pass was made", f.loss)
+	}
 	if !rows {
 		return nil
 	}
@@ -214,6 +231,12 @@ func (f *fitter) second() error {
 		return stream.Usef("the errors asked for need a second pass, and the input can be read once only: give --passes 2 to copy it to --scratch while it is read")
 	}
 	f.route = "row pass"
+	return f.sumRows()
+}
+
+// sumRows sums what depends on single rows, by reading them again or by unique rows.
+func (f *fitter) sumRows() error {
+	x, s := f.sol, f.state
 	rp := accum.RowPass{Theta: x.theta}
 	if s.Extended {
 		rp.ThetaLow = x.thetaLow
@@ -232,7 +255,7 @@ func (f *fitter) second() error {
 			seen[k.Name] = true
 			f.kinds = append(f.kinds, k.Name)
 			lever = lever || leverages(k.Name)
-		case k.Cluster >= 0:
+		case k.Cluster >= 0 && !f.byCells:
 			w, _ := waysOf(f.d, k.Cluster)
 			for _, key := range w.keys {
 				if !slices.Contains(f.keys, key) && !f.kept(key) {
@@ -251,8 +274,11 @@ func (f *fitter) second() error {
 		if lever || s.LeverageBound(w) > 0.5 {
 			rp.Whitener, rp.K = w, m
 		}
+		if lever {
+			rp.Over = x.leverageLimits()
+		}
 	}
-	if !f.plan.needs.Keep {
+	if !f.plan.needs.Keep && !f.byCells {
 		s.Close() // scores come from the second pass
 	}
 	sums, err := f.rowPass(rp)
@@ -266,12 +292,15 @@ func (f *fitter) second() error {
 	}
 	if i := slices.Index(f.kinds, "hc5"); i >= 0 && 0.7*f.perTerm()*most > 4 {
 		again := rp
-		again.Weights, again.Scores = f.weights([]string{"hc5"}, most), nil
+		again.Weights, again.Scores, again.Over = f.weights([]string{"hc5"}, most), nil, nil
 		more, err := f.rowPass(again)
 		if err != nil {
 			return err
 		}
 		sums.Meats[i], sums.MeatBlocks[i] = more.Meats[0], more.MeatBlocks[0]
+		if f.byCells {
+			sums.Gross[i], sums.GrossBlocks[i] = more.Gross[0], more.GrossBlocks[0]
+		}
 		rp.Weights = f.weights(f.kinds, most)
 	}
 	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency && x.apart == nil {
@@ -299,6 +328,9 @@ func (f *fitter) weights(kinds []string, most float64) []func(float64) float64 {
 
 // rowPass is a further pass.
 func (f *fitter) rowPass(rp accum.RowPass) (*accum.RowSums, error) {
+	if f.byCells {
+		return accum.SecondByCells(f.state, rp, f.scan)
+	}
 	sums, err := accum.Second(f.ctx, f.src, f.state, rp, f.scan)
 	if err == nil {
 		f.passes += sums.Passes
@@ -310,7 +342,7 @@ func (f *fitter) rowPass(rp accum.RowPass) (*accum.RowSums, error) {
 // heavy repeats pass two for rows of leverage near 1.
 func (f *fitter) heavy(rp accum.RowPass, most float64) error {
 	rp.Heavy = true
-	rp.Scores = nil
+	rp.Scores, rp.Over = nil, nil
 	sums, err := f.rowPass(rp)
 	if err != nil {
 		return err
@@ -399,6 +431,13 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 		}
 	}
 	r := x.hc(k.Name, meat, blocks)
+	if f.byCells {
+		if f.loss > lossRefuse {
+			x.unavailable(e, "the squares of residuals of unique rows cancel (relative error up to %.1e); use --passes 2", f.loss)
+			return
+		}
+		r, _ = x.cellsLoss(k.Name, f.sums, f.kindAt(k.Name))
+	}
 	if f.sums == nil {
 		r.noise, r.gross = f.noise, x.projectAbs(f.gross)
 	}

@@ -25,6 +25,7 @@ import (
 // times w_i for precision and sampling weights. hc0 and hc1 come from fourth moments
 // in one pass, or from rows in a second; the others need the second pass, and hc5 a
 // third where 0.7 R is above 4: the largest leverage is known only after the second.
+// Where regressors take few values, unique rows give all of them in one (cells.go).
 // Cost O(k^2) a row.
 //
 // A row of leverage 1 has residual 0 and adds nothing; a coefficient that it
@@ -39,8 +40,8 @@ func leverages(kind string) bool {
 	return false
 }
 
-// NeedsRows reports whether errors of a kind always take a pass over the rows after
-// the estimates are known.
+// NeedsRows reports whether errors of a kind take a pass over the rows after the
+// estimates are known, unless there are few unique rows.
 func NeedsRows(kind string) bool { return leverages(kind) }
 
 // rowKind reports whether a kind is of this family.

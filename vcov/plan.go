@@ -38,7 +38,7 @@ type Plan struct {
 	PerPair int64 `json:"per_pair"`
 
 	needs  accum.Needs
-	sample *accum.Sample // nil unless arithmetic hangs on it
+	sample *accum.Sample // nil unless the plan hangs on it
 	rows   bool          // a row pass is needed
 	// moments: the row pass sums the second moments of clusters.
 	moments bool
@@ -68,6 +68,9 @@ const (
 	costKey           = 15.0  // finding the cluster of a row
 	costClusterPair   = 2.0   // second moments of clusters, for each product
 	costScore         = 2.0   // scores of clusters, for each term
+	costCell          = 4.0   // sums of a unique row
+	costCellWord      = 3.0   // finding it, for each number or level that makes it
+	costCellMiss      = 8e-4  // the caches that it misses, for each of them there is
 	maxPipeTerms      = 25    // beyond it fourth moments cost more than a copy of the input
 )
 
@@ -191,16 +194,6 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 			full[e.Cluster] = true
 		}
 	}
-	if o.Passes == 1 && rows {
-		return nil, stream.Usef("passes: %s needs two passes; leave out --passes 1 or that kind of errors", byRow)
-	}
-	if cats && (hc || len(clusters) > 0) {
-		if o.Passes == 1 {
-			return nil, stream.Usef("passes: robust errors with category terms need two passes; leave out --passes 1")
-		}
-		rows = true
-		p.why("robust errors with category terms are summed row by row")
-	}
 	columns := float64(len(d.Uses()))
 	read := columns * costCSVField
 	if info.Format == "parquet" {
@@ -213,6 +206,28 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	second := read + row
 	keys := float64(len(clusters))
 	moments, scores := keys*(costKey+c*(c+1)/2*costClusterPair), keys*(costKey+c*costScore)
+	unique := cellCosts{byRow: rows || cats && hc, one: moments, two: second + scores, other: min(quartic, second)}
+	if len(full) > 0 {
+		unique.two += moments - scores
+	}
+	if (rows || hc) && !(cats && len(clusters) > 0) {
+		if err := p.planCells(ctx, src, d, &o, &unique); err != nil {
+			return nil, err
+		}
+	}
+	if p.needs.Cells {
+		rows, hc = false, false
+	}
+	if o.Passes == 1 && rows {
+		return nil, stream.Usef("passes: %s needs two passes%s; leave out --passes 1 or that kind of errors", byRow, unique.against)
+	}
+	if cats && (hc || len(clusters) > 0) {
+		if o.Passes == 1 {
+			return nil, stream.Usef("passes: robust errors with category terms need two passes%s; leave out --passes 1", unique.against)
+		}
+		rows = true
+		p.why("robust errors with category terms are summed row by row")
+	}
 	if len(clusters) > 0 && len(full) == 0 && !rows && o.Passes == 0 && info.Rewindable {
 		one := moments
 		if hc {
@@ -251,6 +266,10 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	var route []string
 	p.cost("read", read)
 	p.cost("second moments", gram)
+	if p.needs.Cells {
+		p.cost("unique rows", unique.cells)
+		route = append(route, "unique rows")
+	}
 	if hc && !rows {
 		p.needs.Fourth = true
 		p.cost("fourth moments", quartic)
@@ -346,11 +365,10 @@ func (p *Plan) chooseArithmetic(ctx context.Context, src stream.Source, d *strea
 		p.Arithmetic = o.Arithmetic
 		return nil
 	}
-	s, err := accum.TakeSample(ctx, src, d, o.Workers)
+	s, err := p.takeSample(ctx, src, d, &o)
 	if err != nil {
 		return err
 	}
-	p.sample = s
 	switch {
 	case s.Frame == nil:
 		p.Arithmetic = "auto"
@@ -362,6 +380,18 @@ func (p *Plan) chooseArithmetic(ctx context.Context, src stream.Source, d *strea
 		p.Arithmetic = "double"
 	}
 	return nil
+}
+
+// takeSample looks into the input, once.
+func (p *Plan) takeSample(ctx context.Context, src stream.Source, d *stream.Design, o *Options) (*accum.Sample, error) {
+	if p.sample == nil {
+		s, err := accum.TakeSample(ctx, src, d, o.Workers)
+		if err != nil {
+			return nil, err
+		}
+		p.sample = s
+	}
+	return p.sample, nil
 }
 
 // whyExtended says why auto took extended arithmetic.

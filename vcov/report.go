@@ -71,10 +71,14 @@ func (f *fitter) result() *Result {
 	f.shapes(r)
 	f.several(r)
 	r.SpreadTest = f.spreadTest()
+	r.Leverage = f.leverageSummary()
 	f.warnings(r)
 	r.Model = f.model()
 	r.Run = Run{Passes: f.passes, Route: f.route, Arithmetic: "double", Workers: f.o.Workers, Segments: s.Segments, Unread: s.Unread,
 		Bytes: f.bytes, SpilledBytes: f.scan.Meter.Spilled.Load(), SpilledRuns: f.scan.Meter.Runs.Load(), Condition: Number(x.condition())}
+	if f.byCells {
+		r.Run.UniqueRows = s.CellRows()
+	}
 	if s.Extended {
 		r.Run.Arithmetic, r.Run.ArithmeticReason = "extended", whyExtended(s.Frame)
 		if f.o.Arithmetic == "extended" {

@@ -59,6 +59,8 @@ type Result struct {
 	Errors     []Errors          `json:"errors"`
 	Hypotheses []Hypothesis      `json:"hypotheses"`
 	SpreadTest SpreadTest        `json:"spread_test"`
+	// Leverage is there if a kind of errors takes the leverage of every row.
+	Leverage *LeverageSummary `json:"leverage,omitempty"`
 	// Clusterings describe the clusters of each clustering, if asked for.
 	Clusterings []*Clustering `json:"clusterings,omitempty"`
 	Run         Run           `json:"run"`
@@ -230,7 +232,7 @@ type Hypothesis struct {
 // Run says how the numbers came about.
 type Run struct {
 	Passes     int    `json:"passes"`
-	Route      string `json:"route"`      // "second moments", "fourth moments", "row pass", "cluster sums"
+	Route      string `json:"route"`      // "second moments", "fourth moments", "row pass", "cluster sums", "unique rows"
 	Arithmetic string `json:"arithmetic"` // "double" or "extended"
 	// ArithmeticReason says why extended arithmetic was taken; empty for double.
 	ArithmeticReason string `json:"arithmetic_reason,omitempty"`
@@ -247,9 +249,11 @@ type Run struct {
 	PeakBytes int64         `json:"peak_bytes"` // of the process; set by the caller
 	// SpilledBytes were written to scratch, in SpilledRuns sorted runs, because the
 	// sums of clusters did not fit the memory.
-	SpilledBytes int64  `json:"spilled_bytes"`
-	SpilledRuns  int64  `json:"spilled_runs"`
-	Condition    Number `json:"condition"` // of the terms as the sums hold them
+	SpilledBytes int64 `json:"spilled_bytes"`
+	SpilledRuns  int64 `json:"spilled_runs"`
+	// UniqueRows is how many unique rows the errors come from; 0 if from all.
+	UniqueRows int    `json:"unique_rows,omitempty"`
+	Condition  Number `json:"condition"` // of the terms as the sums hold them
 	// Timings says where the time of all workers went, if asked for.
 	Timings []Timing `json:"timings,omitempty"`
 }

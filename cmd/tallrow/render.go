@@ -330,6 +330,9 @@ func (v *view) writeFooter(n notes) {
 		n.add("spread", fmt.Sprintf("test that the spread of the residuals does not go with the terms (Koenker): chi-square %s on %s, p %s",
 			digits(float64(s.Statistic), 5), wholeOr(s.DF), pText(s.P)))
 	}
+	if l := r.Leverage; l != nil {
+		n.add("leverage", leverageText(l))
+	}
 	if t := v.overallText(); t != "" {
 		n.add("together", t)
 	}
@@ -373,6 +376,19 @@ func (v *view) writeFooter(n notes) {
 	if bases := v.otherBases(); bases != "" {
 		n.add("base", bases)
 	}
+}
+
+// leverageText tells which rows pull the fit most.
+func leverageText(l *vcov.LeverageSummary) string {
+	t := fmt.Sprintf("mean %s, largest %s", digits(float64(l.Mean), 3), digits(float64(l.Largest), 3))
+	if len(l.Highest) > 0 {
+		t += " (" + oneLine(l.Highest[0].Row) + ")"
+	}
+	t += fmt.Sprintf("; above twice the mean %s, above three times %s, above 0.5 %s", plural(l.AboveTwice, "row", "rows"), count(l.AboveThreeTimes), count(l.AboveHalf))
+	if l.Above99 > 0 {
+		t += fmt.Sprintf(", above 0.99 %s", count(l.Above99))
+	}
+	return t
 }
 
 // otherBases names the base levels of categories too small for a group line.
