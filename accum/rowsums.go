@@ -39,6 +39,8 @@ type RowSums struct {
 	// what was added up for them.
 	Gross       [][]float64
 	GrossBlocks []Blocks
+	// Series is filled under RowPass.Series.
+	Series *SeriesSums
 	// Passes is 1, or 2 if the keyed sums needed another unit; Bytes is of all.
 	Passes int
 	Bytes  int64

@@ -2,6 +2,7 @@ package accum
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"math"
 	"slices"
@@ -43,6 +44,8 @@ type RowPass struct {
 	// Over asks, if there are leverages, how many rows have one above each of these,
 	// and which rows have the largest (HighestRows of them).
 	Over []float64
+	// Series asks for sums over rows near each other; nil for none.
+	Series *SeriesPass
 }
 
 const (
@@ -94,6 +97,7 @@ type secondWorker struct {
 	loneC  []*loneTracker // for the category columns, by raw value
 	zcols  [][]float64    // what the scores take of a row, the multiplier first
 	apart  []*apartScores // by key, where there is a group apart
+	series *seriesWorker
 
 	e, h, mult []float64
 	ones       []float64
@@ -122,6 +126,7 @@ type secondCommon struct {
 	pairs   [][]*pairTable // by meat: of RowPass.Weights, lone, light
 	stores  []*groupStore  // of scores, by key
 	scores  []*apartCommon // by key, where there is a group apart
+	series  *seriesCommon
 }
 
 func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPool) *secondCommon {
@@ -195,6 +200,9 @@ func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *second
 	for _, c := range all.scores {
 		w.apart = append(w.apart, newApartScores(c))
 	}
+	if all.series != nil {
+		w.series = newSeriesWorker(all.series)
+	}
 	if rp.Spread {
 		w.spread, w.spreadX, w.squares = make([]float64, l.p0+2), make(superVec, l.p0+2), make([]float64, stride)
 	}
@@ -231,6 +239,9 @@ func (w *secondWorker) add() error {
 		kernel.Cross(w.spread[l.p0+1:], 1, m, stride, 1, sq, stride, 1, n)
 	}
 	w.addRows(e)
+	if w.series != nil {
+		w.series.add(w, w.seriesFactors(e))
+	}
 	for i, k := range rp.Scores {
 		w.loneT[i].add(&w.block.Key[k], w.block.X, n)
 		w.addScores(w.scores[i], w.loneC[i], &w.block.Key[k])
@@ -567,6 +578,9 @@ func (w *secondWorker) segment(number int) error {
 			w.heavy[i].segment = number
 		}
 	}
+	if w.series != nil {
+		return w.series.segment(number)
+	}
 	return nil
 }
 
@@ -612,16 +626,33 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 		}
 	}()
 	common := newSecondCommon(s, &rp, unit, &o, pool)
+	if rp.Series != nil {
+		if common.series, err = newSeriesCommon(s, rp.Series, &o); err != nil {
+			return nil, 0, err
+		}
+	}
 	ws := make([]*secondWorker, max(1, o.Workers))
 	bw := make([]blockWorker, len(ws))
 	for i := range ws {
 		ws[i] = newSecondWorker(s, &rp, unit, common)
 		bw[i] = ws[i]
 	}
-	if err := p.run(ctx, bw, nil, scan.Next); err != nil {
-		return nil, 0, err
+	err = p.run(ctx, bw, nil, scan.Next)
+	if c := common.series; c != nil && ctx.Err() == nil {
+		if err == nil {
+			c.rest()
+		}
+		if c.err != nil {
+			err = c.err // of the first segment that does not join
+		}
 	}
-	if err := scan.Close(); err != nil {
+	if cerr := scan.Close(); err == nil {
+		err = cerr
+	}
+	if disorder := new(orderError); errors.As(err, &disorder) {
+		err = disorder.locate(ctx, src, s.Design)
+	}
+	if err != nil {
 		return nil, 0, err
 	}
 	if err := s.unchanged(p); err != nil {
@@ -629,6 +660,11 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	}
 	if out, retry, err = s.joinSecond(ws, &rp, p, unit, common); err != nil {
 		return nil, 0, err
+	}
+	if common.series != nil {
+		if out.Series, err = common.series.finish(s, ws); err != nil {
+			return nil, 0, err
+		}
 	}
 	out.pool = pool
 	return out, retry, nil

@@ -92,6 +92,7 @@ type fitter struct {
 	told    map[string]bool // kinds and terms of warnings that errors were left out
 	route   string
 	fail    error // of the bootstrap
+	series  *series
 }
 
 // first runs pass one, again in a better frame if the data ask for it.
@@ -237,10 +238,7 @@ func (f *fitter) second() error {
 // sumRows sums what depends on single rows, by reading them again or by unique rows.
 func (f *fitter) sumRows() error {
 	x, s := f.sol, f.state
-	rp := accum.RowPass{Theta: x.theta}
-	if s.Extended {
-		rp.ThetaLow = x.thetaLow
-	}
+	rp := accum.RowPass{Theta: x.theta, ThetaLow: f.low()}
 	if x.apart != nil {
 		rp.Eliminated = x.apart.elim
 	}
@@ -267,9 +265,16 @@ func (f *fitter) sumRows() error {
 	rp.Moments = f.plan.moments && x.apart == nil && len(s.Columns) <= momentsMost
 	rp.Scores = f.keys
 	rp.Weights = f.weights(f.kinds, 0)
+	ordered, lastSeries := slices.ContainsFunc(f.o.Errors, func(k Kind) bool { return inOrder(k.Name) }), false
+	if ordered {
+		var err error
+		if rp.Series, lastSeries, err = f.seriesPass(); err != nil {
+			return err
+		}
+	}
 	rp.Spread = x.apart == nil && (x.kind == stream.NoWeight || x.kind == stream.Frequency)
-	if len(rp.Weights) > 0 {
-		// hc0 and hc1 want leverages only to find rows that alone decide a coefficient.
+	if len(rp.Weights) > 0 || rp.Series != nil {
+		// hc0, hc1 and hac want leverages only to find rows that alone decide a coefficient.
 		w, m := x.whitener()
 		if lever || s.LeverageBound(w) > 0.5 {
 			rp.Whitener, rp.K = w, m
@@ -286,6 +291,12 @@ func (f *fitter) sumRows() error {
 		return err
 	}
 	f.sums = sums
+	if sp := rp.Series; sp != nil {
+		rp.Series = nil
+		if err := f.seriesAgain(*sp, sums.Series, lastSeries); err != nil {
+			return err
+		}
+	}
 	most := sums.MaxLeverage
 	if sums.LoneRows > 0 {
 		most = 1
@@ -307,6 +318,14 @@ func (f *fitter) sumRows() error {
 		return f.heavy(rp, most)
 	}
 	return nil
+}
+
+// low is what theta leaves off, for a pass over the rows.
+func (f *fitter) low() []float64 {
+	if !f.state.Extended {
+		return nil
+	}
+	return f.sol.thetaLow
 }
 
 // momentsMost is the number of internal columns up to which a cluster's second
@@ -400,6 +419,8 @@ func (f *fitter) errorsFor(k Kind) Errors {
 		x.infer(&e, x.classical(), f.o.Level, f.o.Covariance)
 	case isCluster:
 		f.cluster(&e, k)
+	case inOrder(k.Name):
+		f.hac(&e)
 	default:
 		f.heteroskedastic(&e, k)
 	}

@@ -146,7 +146,7 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	case bootstraps(k.Name):
 		r = x.clusterRobust("cr1", sums[0])
 	case overTime(k.Name):
-		reach := sums[0].lagged.reach(&f.o, slices.IndexFunc(x.cols, func(u userColumn) bool { return u.term < 0 }))
+		reach := sums[0].lagged.reach(&f.o, x.standardised())
 		e.Lags = &reach
 		r = x.driscollKraay(sums[0].lagged, &reach)
 		r.noP = x.loneClusters(sums[0].scores)

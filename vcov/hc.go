@@ -42,7 +42,7 @@ func leverages(kind string) bool {
 
 // NeedsRows reports whether errors of a kind take a pass over the rows after the
 // estimates are known, unless there are few unique rows.
-func NeedsRows(kind string) bool { return leverages(kind) }
+func NeedsRows(kind string) bool { return leverages(kind) || inOrder(kind) }
 
 // rowKind reports whether a kind is of this family.
 func rowKind(kind string) bool { return kind == "hc0" || kind == "hc1" || leverages(kind) }

@@ -1,11 +1,14 @@
 package vcov
 
 import (
+	"cmp"
 	"fmt"
 	"math"
+	"slices"
 
 	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
+	"gonum.org/v1/gonum/mat"
 )
 
 // Errors when what belongs to periods near each other in time may move together,
@@ -22,8 +25,8 @@ import (
 //	quadratic  25/(12 pi^2 a^2) (sin z/z - cos z), a = j/S, z = 6 pi a/5   Andrews 1991
 //
 // The last reaches over all lags. L (or S) is given or chosen from the data by the rule
-// of Newey & West (1994), on the sum of the scores of all terms but the constant in the
-// coordinates of the solve, where terms have about equal spread: units do not matter.
+// of Newey & West (1994), on the sum of the scores of all terms but the constant, each
+// less its mean (if there is a constant) and over its spread: units do not matter.
 //
 // Time O(T L K), memory O(T K).
 type lagged struct {
@@ -41,7 +44,17 @@ type Lags struct {
 	Lags      int64  `json:"lags"`
 	Bandwidth Number `json:"bandwidth"`
 	Chosen    bool   `json:"chosen"` // by the data
-	Periods   int64  `json:"periods"`
+	// Periods are those with rows; of hac the rows, with units of the one with most.
+	Periods int64 `json:"periods"`
+	// Reach is the largest lag that hac summed under quadratic, whose weights never end;
+	// beyond it they are below 3e-4 of the first, and all together change an error by
+	// about 1e-4 of it. Nil where all were summed.
+	Reach *int64 `json:"reach,omitempty"`
+	// Period and Unit are the expressions that place the rows of hac; nil for the order
+	// of the input, and for one unit. Units is their number.
+	Period *string `json:"period,omitempty"`
+	Unit   *string `json:"unit,omitempty"`
+	Units  int64   `json:"units,omitempty"`
 }
 
 // overTime reports whether a kind is of this family.
@@ -70,12 +83,12 @@ func timeOf(c stream.KeyColumn, k accum.Key) (int64, bool) {
 }
 
 // checkPeriod refuses keys that are no time before anything is read.
-func checkPeriod(c stream.KeyColumn) error {
+func checkPeriod(kind string, c stream.KeyColumn) error {
 	switch {
 	case c.Kind == stream.Time && !c.DateOnly:
-		return stream.Usef("driscoll-kraay: %s is a time to the nanosecond, want days or whole numbers, such as date(%s)", c.Text, c.Text)
+		return stream.Usef("%s: %s is a time to the nanosecond, want days or whole numbers, such as date(%s)", kind, c.Text, c.Text)
 	case c.Kind == stream.Text, c.Kind == stream.Bool:
-		return stream.Usef("driscoll-kraay: %s is %s, want days or whole numbers that count periods", c.Text, c.Kind)
+		return stream.Usef("%s: %s is %s, want days or whole numbers that count periods", kind, c.Text, c.Kind)
 	}
 	return nil
 }
@@ -165,25 +178,14 @@ func (l *lagged) meat(o *Lags) []float64 {
 //
 // n = 4 (T/100)^(2/9), (4/25), (2/25) and c = 1.1447, 2.6614, 1.3221 for bartlett
 // (q = 1), parzen and quadratic (q = 2).
-func (l *lagged) choose(kernel string, constant int) Lags {
+func (l *lagged) choose(kernel string, direction []float64) Lags {
 	n := len(l.at)
 	span := math.Max(1, float64(l.span()))
 	series := make([]float64, n)
 	for i := range series {
-		for j, v := range l.score(i) {
-			if j != constant || l.k == 1 {
-				series[i] += v
-			}
-		}
+		series[i] = dot(direction, l.score(i))
 	}
-	q, c, rate := 1.0, 1.1447, 2.0/9
-	switch kernel {
-	case "parzen":
-		q, c, rate = 2, 2.6614, 4.0/25
-	case "quadratic":
-		q, c, rate = 2, 1.3221, 2.0/25
-	}
-	reach := int64(math.Floor(4 * math.Pow(span/100, rate)))
+	reach := seenLags(kernel, span)
 	sigma := make([]float64, reach+1)
 	from := 0
 	for i := range series {
@@ -194,16 +196,39 @@ func (l *lagged) choose(kernel string, constant int) Lags {
 			sigma[l.at[i]-l.at[p]] += series[i] * series[p]
 		}
 	}
+	return chosenLags(kernel, sigma, span)
+}
+
+// lagRule gives q, c and the rate of n.
+func lagRule(kernel string) (q, c, rate float64) {
+	switch kernel {
+	case "parzen":
+		return 2, 2.6614, 4.0 / 25
+	case "quadratic":
+		return 2, 1.3221, 2.0 / 25
+	}
+	return 1, 1.1447, 2.0 / 9
+}
+
+// seenLags is n, the largest lag that the rule looks at over t periods.
+func seenLags(kernel string, t float64) int64 {
+	_, _, rate := lagRule(kernel)
+	return int64(math.Floor(4 * math.Pow(t/100, rate)))
+}
+
+// chosenLags is the rule from sigma_0 to sigma_n.
+func chosenLags(kernel string, sigma []float64, t float64) Lags {
+	q, c, _ := lagRule(kernel)
 	s0, sq := sigma[0], 0.0
-	for j := int64(1); j <= reach; j++ {
+	for j := 1; j < len(sigma); j++ {
 		s0 += 2 * sigma[j]
 		sq += 2 * math.Pow(float64(j), q) * sigma[j]
 	}
-	b := c * math.Pow(sq/s0*(sq/s0), 1/(2*q+1)) * math.Pow(span, 1/(2*q+1))
+	b := c * math.Pow(sq/s0*(sq/s0), 1/(2*q+1)) * math.Pow(t, 1/(2*q+1))
 	if math.IsNaN(b) || b < 0 {
 		b = 0
 	}
-	b = min(b, span-1)
+	b = min(b, t-1)
 	if kernel == "quadratic" {
 		return Lags{Kernel: kernel, Bandwidth: Number(max(b, 1e-3)), Chosen: true}
 	}
@@ -212,19 +237,62 @@ func (l *lagged) choose(kernel string, constant int) Lags {
 }
 
 // reach is what was asked for or chosen.
-func (l *lagged) reach(o *Options, constant int) Lags {
-	kernel := o.Kernel
-	if kernel == "" {
-		kernel = "bartlett"
-	}
-	out := Lags{Kernel: kernel, Lags: o.Lags, Bandwidth: Number(o.Lags + 1)}
-	switch {
-	case o.AutoLags:
-		out = l.choose(kernel, constant)
-	case kernel == "quadratic":
-		out.Bandwidth = Number(max(float64(o.Lags), 1e-3))
+func (l *lagged) reach(o *Options, direction []float64) Lags {
+	out := o.givenLags()
+	if o.AutoLags {
+		out = l.choose(o.kernel(), direction)
 	}
 	out.Periods = int64(len(l.at))
+	return out
+}
+
+// standardised is the sum of all terms but the constant, each less its mean if there is
+// a constant and over its spread, in solved coordinates; a constant alone is itself.
+func (x *solution) standardised() []float64 {
+	k := x.k()
+	g := x.project(x.sums)
+	// X W = Z Q: the columns of W^-1 are the terms.
+	var terms mat.Dense
+	if err := terms.Inverse(mat.NewDense(k, k, x.w)); err != nil && terms.IsEmpty() {
+		return make([]float64, k)
+	}
+	column := func(j int) []float64 { return mat.Col(nil, j, &terms) }
+	product := func(a, b []float64) (s float64) {
+		for i, v := range a {
+			s += v * dot(g[i*k:(i+1)*k], b)
+		}
+		return s
+	}
+	constant := slices.IndexFunc(x.cols, func(u userColumn) bool { return u.term < 0 })
+	if k == 1 && constant == 0 {
+		return []float64{1}
+	}
+	out := make([]float64, k)
+	for j := range k {
+		if j == constant || math.IsNaN(x.est[j]) {
+			continue
+		}
+		c := column(j)
+		if constant >= 0 {
+			one := column(constant)
+			axpy(-product(one, c)/product(one, one), one, c)
+		}
+		if size := product(c, c); size > 0 {
+			axpy(1/math.Sqrt(size), c, out)
+		}
+	}
+	return out
+}
+
+// kernel is Kernel or its default.
+func (o *Options) kernel() string { return cmp.Or(o.Kernel, "bartlett") }
+
+// givenLags is the reach without AutoLags.
+func (o *Options) givenLags() Lags {
+	out := Lags{Kernel: o.kernel(), Lags: o.Lags, Bandwidth: Number(o.Lags + 1)}
+	if out.Kernel == "quadratic" {
+		out.Bandwidth = Number(max(float64(o.Lags), 1e-3))
+	}
 	return out
 }
 

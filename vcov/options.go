@@ -4,7 +4,7 @@ import "github.com/tallrow/tallrow/accum"
 
 // Kind asks for standard errors of one kind.
 type Kind struct {
-	Name string // classical, hc0 .. hc5, hc4m, cr0 .. cr3, wcr, wcu, driscoll-kraay
+	Name string // classical, hc0 .. hc5, hc4m, cr0 .. cr3, wcr, wcu, driscoll-kraay, hac
 	// Cluster is an index into Design.Keys for the kinds with clusters or periods, a
 	// crossed key for cr0 and cr1 in several ways; else -1.
 	Cluster int
@@ -49,11 +49,13 @@ type Options struct {
 	Draws       int
 	Seed        uint64
 	BootWeights string
-	// Kernel of driscoll-kraay is "bartlett" unless given; Lags its reach in periods,
-	// or chosen by the data with AutoLags.
+	// Kernel of driscoll-kraay and hac is "bartlett" unless given; Lags their reach in
+	// periods (of hac rows, without a period), or chosen by the data with AutoLags.
 	Kernel   string
 	Lags     int64
 	AutoLags bool
+	// Order places rows in time for hac; nil for the order of the input.
+	Order *RowOrder
 	// Shape asks for Result.Clusterings.
 	Shape bool
 	// Timings asks for Run.Timings.

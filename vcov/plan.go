@@ -71,6 +71,7 @@ const (
 	costCell          = 4.0   // sums of a unique row
 	costCellWord      = 3.0   // finding it, for each number or level that makes it
 	costCellMiss      = 8e-4  // the caches that it misses, for each of them there is
+	costLag           = 0.1   // lags of scores, for each term and lag
 	maxPipeTerms      = 25    // beyond it fourth moments cost more than a copy of the input
 )
 
@@ -121,6 +122,10 @@ func (o *Options) validate(d *stream.Design) error {
 	for _, k := range o.Errors {
 		switch k.Name {
 		case "classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5":
+		case "hac":
+			if err := o.checkOrder(d); err != nil {
+				return err
+			}
 		case "cr0", "cr1", "cr2", "cr3", "wcr", "wcu", "driscoll-kraay":
 			if k.Cluster < 0 || k.Cluster >= len(d.Keys) {
 				return stream.Usef("errors: %s needs a clustering", k.Name)
@@ -129,7 +134,7 @@ func (o *Options) validate(d *stream.Design) error {
 			case !ok:
 				return stream.Usef("errors: %s by %s needs the crossing of every set of them", k.Name, d.Keys[k.Cluster].Text)
 			case overTime(k.Name) && len(w.dims) == 1:
-				if err := checkPeriod(d.Keys[k.Cluster]); err != nil {
+				if err := checkPeriod(k.Name, d.Keys[k.Cluster]); err != nil {
 					return err
 				}
 			case len(w.dims) > 1 && k.Name != "cr0" && k.Name != "cr1":
@@ -138,7 +143,7 @@ func (o *Options) validate(d *stream.Design) error {
 				return stream.Usef("errors: %s has no meaning under sampling weights, which say nothing of the spread of a row; cr1 has", k.Name)
 			}
 		default:
-			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2, cr3, wcr, wcu or driscoll-kraay", k.Name)
+			return stream.Usef("errors: found %q, want classical, hc0, hc1, hc2, hc3, hc4, hc4m, hc5, cr0, cr1, cr2, cr3, wcr, wcu, driscoll-kraay or hac", k.Name)
 		}
 	}
 	return nil
@@ -174,6 +179,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	}
 	var hc, rows bool
 	var byRow string
+	ordered := false
 	clusters, full := map[int]bool{}, map[int]bool{}
 	for _, e := range o.Errors {
 		switch e.Name {
@@ -182,6 +188,12 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		case "hc2", "hc3", "hc4", "hc4m", "hc5":
 			rows, byRow = true, e.Name
 			p.why("%s depends on the leverage of every row, which is known only after the first pass", e.Name)
+		case "hac":
+			rows, byRow, ordered = true, e.Name, true
+			p.why("hac takes the scores of rows in order, which are known only after the first pass")
+			if o.AutoLags {
+				p.why("a pass between chooses its lags from autocovariances")
+			}
 		case "cr0", "cr1", "driscoll-kraay":
 			w, _ := waysOf(d, e.Cluster)
 			for _, k := range w.keys {
@@ -210,7 +222,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if len(full) > 0 {
 		unique.two += moments - scores
 	}
-	if (rows || hc) && !(cats && len(clusters) > 0) {
+	if (rows || hc) && !ordered && !(cats && len(clusters) > 0) {
 		if err := p.planCells(ctx, src, d, &o, &unique); err != nil {
 			return nil, err
 		}
@@ -311,6 +323,9 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("second read", read)
 		p.cost("row pass", row+scores)
+		if ordered {
+			p.cost("lags", c*(c+float64(o.Lags))*costLag)
+		}
 		route = append(route, "row pass")
 	}
 	if len(route) == 0 {
@@ -346,6 +361,9 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if p.Arithmetic != "double" {
 		sums += int64(o.Workers) * 2 * 8 * stream.BatchRows * int64(c) * 2
 		p.Costs[1].Share *= costExtended
+	}
+	if ordered && o.Lags < 1<<30 {
+		sums += int64(o.Workers) * 8 * int64(c) * (6*o.Lags + 2*stream.BatchRows)
 	}
 	p.Memory = sums + int64(o.Workers)*info.WorkerBytes
 	var all float64

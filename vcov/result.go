@@ -158,7 +158,7 @@ type Errors struct {
 	Extremes *Extremes `json:"extremes,omitempty"`
 	// Bootstrap says how wcr and wcu were drawn; se and t are those of cr1.
 	Bootstrap *Bootstrap `json:"bootstrap,omitempty"`
-	// Lags says how far driscoll-kraay reached.
+	// Lags says how far driscoll-kraay or hac reached.
 	Lags *Lags `json:"lags,omitempty"`
 	// Covariance is present up to 200 terms, or on request.
 	Covariance [][]Number `json:"covariance,omitempty"`

@@ -177,3 +177,35 @@ func checkBlock(x []float64, stride, rows, cols int) bool {
 // panelRows is how many rows of cols columns fit the first-level cache, for
 // loops that come back to a column.
 func panelRows(cols int) int { return max(4096/cols/32*32, 64) }
+
+// Filter adds a moving combination of x to dst:
+//
+//	dst[r] = fma(taps[j], x[j+r], dst[r])    for j = 0, 1, .. len(taps)-1 in this order
+//
+// It is Combine with columns that overlap. dst must not overlap x. Filter panics when
+// x is shorter than len(dst)+len(taps)-1. O(len(dst) len(taps)) time, no memory.
+func Filter(dst, x, taps []float64) {
+	if len(dst) == 0 || len(taps) == 0 {
+		return
+	}
+	if len(x) < len(dst)+len(taps)-1 {
+		panic(shortX)
+	}
+	chain(1, dst, x, 1, taps, 1, len(taps))
+}
+
+// Correlate adds the products of a with every place of x:
+//
+//	dst[j] += sum_r a[r] x[j+r]    for 0 <= j < len(dst)
+//
+// with the bits that Cross gives. dst must not overlap a or x. Correlate panics when x
+// is shorter than len(dst)+len(a)-1. O(len(dst) len(a)) time, no memory.
+func Correlate(dst, a, x []float64) {
+	if len(dst) == 0 || len(a) == 0 {
+		return
+	}
+	if len(x) < len(dst)+len(a)-1 {
+		panic(shortX)
+	}
+	cross(dst, len(dst), a, len(a), 1, x, 1, len(dst), len(a))
+}
