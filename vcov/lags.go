@@ -8,7 +8,6 @@ import (
 
 	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
-	"gonum.org/v1/gonum/mat"
 )
 
 // Errors when what belongs to periods near each other in time may move together,
@@ -252,11 +251,14 @@ func (x *solution) standardised() []float64 {
 	k := x.k()
 	g := x.project(x.sums)
 	// X W = Z Q: the columns of W^-1 are the terms.
-	var terms mat.Dense
-	if err := terms.Inverse(mat.NewDense(k, k, x.w)); err != nil && terms.IsEmpty() {
-		return make([]float64, k)
+	terms := inverse(x.w, k)
+	column := func(j int) []float64 {
+		c := make([]float64, k)
+		for i := range c {
+			c[i] = terms[i*k+j]
+		}
+		return c
 	}
-	column := func(j int) []float64 { return mat.Col(nil, j, &terms) }
 	product := func(a, b []float64) (s float64) {
 		for i, v := range a {
 			s += v * dot(g[i*k:(i+1)*k], b)
@@ -279,6 +281,42 @@ func (x *solution) standardised() []float64 {
 		}
 		if size := product(c, c); size > 0 {
 			axpy(1/math.Sqrt(size), c, out)
+		}
+	}
+	return out
+}
+
+// inverse is that of a k x k matrix, by Gauss-Jordan elimination with pivots by row. It
+// is plain Go, for the bits of what hangs on it: other libraries have other sums with
+// and without assembly.
+func inverse(m []float64, k int) []float64 {
+	a := slices.Clone(m)
+	out := make([]float64, k*k)
+	for i := range k {
+		out[i*k+i] = 1
+	}
+	for j := range k {
+		p := j
+		for i := j + 1; i < k; i++ {
+			if math.Abs(a[i*k+j]) > math.Abs(a[p*k+j]) {
+				p = i
+			}
+		}
+		for _, b := range [][]float64{a, out} {
+			for c := range k {
+				b[j*k+c], b[p*k+c] = b[p*k+c], b[j*k+c]
+			}
+		}
+		by := 1 / a[j*k+j]
+		for c := range k {
+			a[j*k+c] *= by
+			out[j*k+c] *= by
+		}
+		for i := range k {
+			if t := -a[i*k+j]; i != j && t != 0 {
+				axpy(t, a[j*k:(j+1)*k], a[i*k:(i+1)*k])
+				axpy(t, out[j*k:(j+1)*k], out[i*k:(i+1)*k])
+			}
 		}
 	}
 	return out

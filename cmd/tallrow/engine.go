@@ -217,7 +217,7 @@ func (s *settings) fitOptions(req request) vcov.Options {
 	return vcov.Options{
 		Errors: req.withClassical(s.weightKind == "sampling"),
 		Level:  s.level, Hypotheses: s.hypotheses, Adjust: s.adjust, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
-		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags,
+		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags, Order: req.order,
 	}
 }
 

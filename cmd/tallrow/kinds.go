@@ -9,7 +9,7 @@ import (
 )
 
 // knownKinds are the kinds of errors of this version, in order of refinement.
-var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3", "wcr", "wcu", "driscoll-kraay"}
+var knownKinds = []string{"classical", "hc0", "hc1", "hc2", "hc3", "hc4", "hc4m", "hc5", "cr0", "cr1", "cr2", "cr3", "wcr", "wcu", "driscoll-kraay", "hac"}
 
 // several less the place of a set stands for a kind of several clusterings until
 // all clusterings are known.
@@ -22,6 +22,7 @@ type request struct {
 	// crossed are the sets of keys whose joint clusters are wanted; a kind of several
 	// clusterings has the cluster len(keys) plus the place of its set.
 	crossed [][]int
+	order   *vcov.RowOrder // of hac
 }
 
 // names gives the kinds as words: "cr1(quay)".
@@ -69,6 +70,19 @@ func (r *request) cross(dims []int) int {
 	return at
 }
 
+// key returns the place of an expression among the keys, -1 for none.
+func (r *request) key(text string) int {
+	if text == "" {
+		return -1
+	}
+	c := slices.Index(r.keys, text)
+	if c < 0 {
+		c = len(r.keys)
+		r.keys = append(r.keys, text)
+	}
+	return c
+}
+
 // mostWays bounds the clusterings of one kind: their sets are twice as many for each.
 const mostWays = 4
 
@@ -102,22 +116,23 @@ func (s *settings) parseErrors() (request, error) {
 	} else if len(list) == 0 {
 		return fail("found nothing, want kinds of errors such as \"classical, hc1\"")
 	}
-	clustered, periodUsed := false, false
+	clustered, periodUsed, ordered := false, false, false
 	for _, item := range list {
 		name, args, inPlace, err := splitKind(item)
 		if err != nil {
 			return fail("%s", err)
 		}
 		switch {
-		case slices.Contains(laterKinds, name):
-			return fail("%s is not in this version, which has %s", name, both(knownKinds))
 		case !slices.Contains(knownKinds, name):
 			return fail("no kind of errors is called %q; there are %s%s", name, both(knownKinds), meant(name, knownKinds))
 		}
 		k := vcov.Kind{Name: name, Cluster: -1}
 		overTime := name == "driscoll-kraay"
+		ordered = ordered || name == "hac"
 		isCR := strings.HasPrefix(name, "cr") || strings.HasPrefix(name, "wc") || overTime
 		switch {
+		case name == "hac" && inPlace:
+			return fail("%s: hac takes its order from --period and --unit", item)
 		case !isCR && inPlace:
 			return fail("%s: %s has no clusters; %s(%s) has", item, name, "cr1", strings.Join(args, ", "))
 		case isCR && inPlace && len(args) == 0:
@@ -136,11 +151,7 @@ func (s *settings) parseErrors() (request, error) {
 			clustered = clustered || !overTime
 			var dims []int
 			for _, a := range args {
-				c := slices.Index(r.keys, a)
-				if c < 0 {
-					c = len(r.keys)
-					r.keys = append(r.keys, a)
-				}
+				c := r.key(a)
 				if slices.Contains(dims, c) {
 					return fail("%s: %s is there twice, want it once", item, a)
 				}
@@ -164,13 +175,19 @@ func (s *settings) parseErrors() (request, error) {
 		}
 		r.kinds = append(r.kinds, k)
 	}
+	if ordered {
+		r.order = &vcov.RowOrder{Period: r.key(s.period), Unit: r.key(s.unit)}
+	}
 	for i := range r.kinds {
 		if k := &r.kinds[i]; k.Cluster <= several {
 			k.Cluster = len(r.keys) + several - k.Cluster
 		}
 	}
-	if s.period != "" && !periodUsed {
-		return request{}, stream.Usef("%s %s: no kind of errors uses it; add driscoll-kraay", s.origin("period"), s.period)
+	if s.period != "" && !periodUsed && !ordered {
+		return request{}, stream.Usef("%s %s: no kind of errors uses it; add driscoll-kraay or hac", s.origin("period"), s.period)
+	}
+	if s.unit != "" && !ordered {
+		return request{}, stream.Usef("%s %s: no kind of errors uses it; add hac", s.origin("unit"), s.unit)
 	}
 	if len(s.cluster) > 0 {
 		for _, c := range s.cluster {

@@ -80,7 +80,7 @@ var options = []option{
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
 	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onSums, file: true, def: "classical, hc1, and cr1 with --cluster",
-		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not), driscoll-kraay (periods near in time); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
+		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not), driscoll-kraay (periods near in time), hac (rows near in time); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onSums, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
@@ -89,10 +89,13 @@ var options = []option{
 		help: "test equations between coefficients under each kind of errors: \"pallets = 0.5\"; several in one, separated by commas, are tested together; may be repeated",
 		set:  func(s *settings, v value) error { s.hypotheses = v.parts; return nil }},
 	{name: "period", value: "EXPR", group: "Errors", on: onSums, file: true,
-		help: "days or whole numbers in time for driscoll-kraay, such as date(t)",
+		help: "days or whole numbers in time for driscoll-kraay and hac, such as date(t); hac without one takes the order of the input",
 		set:  func(s *settings, v value) error { s.period = strings.TrimSpace(v.text()); return nil }},
+	{name: "unit", value: "EXPR", group: "Errors", on: onModel, file: true,
+		help: "hac: rows move together within these only; the input is sorted by unit, then period",
+		set:  func(s *settings, v value) error { s.unit = strings.TrimSpace(v.text()); return nil }},
 	{name: "lags", value: "auto|N", form: formAuto, group: "Errors", on: onModel, file: true, def: "auto",
-		help: "how many periods apart errors still move together",
+		help: "how many periods (hac without a period: rows) apart errors still move together",
 		set:  setLags},
 	{name: "kernel", value: "bartlett|parzen|quadratic", group: "Errors", on: onModel, file: true, def: "bartlett",
 		help: "how their weight falls with the distance in time; quadratic is quadratic spectral",
@@ -205,8 +208,7 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions  = []string{"unit", "checkpoint", "at", "sweep"}
-	laterKinds    = []string{"hac"}
+	laterOptions  = []string{"checkpoint", "at", "sweep"}
 	laterCommands = []string{"launch"}
 )
 

@@ -322,6 +322,11 @@ func (v *view) writeFooter(n notes) {
 		seen[c] = true
 		n.add("clusters", clustersText(c, e))
 	}
+	for _, e := range v.shown {
+		if e.Lags != nil {
+			n.add("lags", lagsText(e))
+		}
+	}
 	n.add("fit", v.fitText())
 	if t := v.adjustedText(); t != "" {
 		n.add("adjusted", t)
@@ -468,6 +473,29 @@ func clustersText(name string, e *vcov.Errors) string {
 	if s := e.GroupRows; s != nil {
 		t += fmt.Sprintf("; rows in the smallest %s, in the median one %s, in the largest %s",
 			count(s.Min), halves(float64(s.Median)), count(s.Max))
+	}
+	return t
+}
+
+// lagsText says how far errors over time reach.
+func lagsText(e *vcov.Errors) string {
+	l := e.Lags
+	per := "rows in the order of the input"
+	if e.Kind != "hac" || l.Period != nil {
+		per = "periods"
+	}
+	t := fmt.Sprintf("%s: %s %s, %s kernel", oneLine(e.Name()), count(l.Lags), per, l.Kernel)
+	if l.Kernel == "quadratic" {
+		t = fmt.Sprintf("%s: bandwidth %s %s, quadratic spectral kernel", oneLine(e.Name()), digits(float64(l.Bandwidth), 4), per)
+	}
+	if l.Reach != nil {
+		t += fmt.Sprintf(" summed up to %s", count(*l.Reach))
+	}
+	if l.Chosen {
+		t += ", chosen by the data"
+	}
+	if l.Unit != nil {
+		t += fmt.Sprintf("; within %s of %s", count(l.Units), oneLine(*l.Unit))
 	}
 	return t
 }

@@ -53,6 +53,7 @@ type settings struct {
 	seed          int64
 	drawWeights   string
 	period        string
+	unit          string
 	fixedLags     bool // lags is given
 	lags          int64
 	kernel        string
