@@ -484,9 +484,9 @@ func lagsText(e *vcov.Errors) string {
 	if e.Kind != "hac" || l.Period != nil {
 		per = "periods"
 	}
-	t := fmt.Sprintf("%s: %s %s, %s kernel", oneLine(e.Name()), count(l.Lags), per, l.Kernel)
+	t := fmt.Sprintf("%s: lags up to %s, %s, %s kernel", oneLine(e.Name()), count(l.Lags), per, l.Kernel)
 	if l.Kernel == "quadratic" {
-		t = fmt.Sprintf("%s: bandwidth %s %s, quadratic spectral kernel", oneLine(e.Name()), digits(float64(l.Bandwidth), 4), per)
+		t = fmt.Sprintf("%s: bandwidth %s, %s, quadratic spectral kernel", oneLine(e.Name()), digits(float64(l.Bandwidth), 4), per)
 	}
 	if l.Reach != nil {
 		t += fmt.Sprintf(" summed up to %s", count(*l.Reach))
