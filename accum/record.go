@@ -47,9 +47,18 @@ const (
 	PairSums
 	// ClusterSums are the packed second moments of the rows of one cluster.
 	ClusterSums
+	// Of a second round, over rows when the coefficients are known: MeatSum is an
+	// entry of meat Section, SpreadSum one of RowSums.Spread, MeatLevels and MeatPairs
+	// are by combinations of levels, ScoreSums the score of one cluster.
+	MeatSum
+	SpreadSum
+	MeatLevels
+	MeatPairs
+	ScoreSums
 )
 
-var whatNames = [...]string{"segment", "weight", "second", "fourth", "level", "pair", "cluster"}
+var whatNames = [...]string{"segment", "weight", "second", "fourth", "level", "pair", "cluster",
+	"meat", "spread", "meat-level", "meat-pair", "score"}
 
 func (w What) String() string { return whatNames[w] }
 
@@ -89,7 +98,11 @@ func compareBytes(a, b []byte) int { return cmp.Compare(string(a), string(b)) }
 
 // long reports whether Sums are the limbs of one number.
 func (r *Record) long() bool {
-	return r.What == WeightSum || r.What == SecondMoment || r.What == FourthMoment
+	switch r.What {
+	case WeightSum, SecondMoment, FourthMoment, MeatSum, SpreadSum:
+		return true
+	}
+	return false
 }
 
 // ErrTwice is returned for a segment that was read twice.

@@ -45,7 +45,10 @@ type RowSums struct {
 	Passes int
 	Bytes  int64
 
-	pool *groupPool
+	pool   *groupPool
+	kept   *secondWorker // under RowPass.Retain: the sums as they were added up
+	checks map[int]segCheck
+	read   int64
 }
 
 // Close gives back what Scores hold in memory and on scratch; they cannot be read

@@ -46,6 +46,11 @@ type RowPass struct {
 	Over []float64
 	// Series asks for sums over rows near each other; nil for none.
 	Series *SeriesPass
+	// Retain keeps all sums as they were added up, for RowSums.Records; the source may
+	// then be a part of that of pass one. Base is added to the numbers of its segments
+	// to give those of the state.
+	Retain bool
+	Base   int
 }
 
 const (
@@ -607,7 +612,7 @@ func Second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Options, unit int) (out *RowSums, retry int, err error) {
 	if stamp, err := src.Stamp(); err != nil {
 		return nil, 0, err
-	} else if stamp != s.stamp && src.Info().Sampled {
+	} else if stamp != s.stamp && src.Info().Sampled && !rp.Retain {
 		return nil, 0, &ChangedError{"a file has another size or time"}
 	}
 	p := newPass(o.Meter, o.Timings)
@@ -655,7 +660,12 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 	if err != nil {
 		return nil, 0, err
 	}
-	if err := s.unchanged(p); err != nil {
+	check := s.unchanged
+	if rp.Retain {
+		p.number(rp.Base)
+		check = s.unchangedPart
+	}
+	if err := check(p); err != nil {
 		return nil, 0, err
 	}
 	if out, retry, err = s.joinSecond(ws, &rp, p, unit, common); err != nil {
@@ -667,5 +677,8 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 		}
 	}
 	out.pool = pool
+	if rp.Retain {
+		out.kept, out.checks, out.read = ws[0], p.checks, p.read
+	}
 	return out, retry, nil
 }

@@ -298,13 +298,17 @@ func (s *State) Records(f func(*Record) error, hide Hide) error {
 		}
 	}
 	for i, e := range es {
-		if err := s.levelRecords(i, e, f); err != nil {
-			return err
+		for ti, t := range e.tables {
+			if err := tableRecords(LevelSums, i, ti, t, s.combination, f); err != nil {
+				return err
+			}
 		}
 	}
 	for i, e := range es {
-		if err := s.pairRecords(i, e, f); err != nil {
-			return err
+		for pi, t := range e.pairs {
+			if err := pairTableRecords(PairSums, i, pi, t, &s.lay.pairs[pi], s.combination, f); err != nil {
+				return err
+			}
 		}
 	}
 	for i, e := range es {
@@ -312,7 +316,7 @@ func (s *State) Records(f func(*Record) error, hide Hide) error {
 			if g == nil {
 				continue
 			}
-			if err := s.clusterRecords(i, k, g, f, hide); err != nil {
+			if err := s.clusterRecords(ClusterSums, i, k, g, f, hide); err != nil {
 				return err
 			}
 		}
@@ -320,9 +324,14 @@ func (s *State) Records(f func(*Record) error, hide Hide) error {
 	return nil
 }
 
-// combination encodes a combination of a table, as numbered in pass one.
+// combination encodes a combination of a table, as numbered in pass one;
+// combinationAt as numbered in the state.
 func (s *State) combination(table int, id int32) (key []byte, label string) {
-	levels := s.combos[table].keys[s.place[table][id]]
+	return s.combinationAt(table, s.place[table][id])
+}
+
+func (s *State) combinationAt(table int, id int32) (key []byte, label string) {
+	levels := s.combos[table].keys[id]
 	for i, c := range s.lay.tables[table].cats {
 		k := s.Levels[c][levels[i]]
 		key = appendPart(key, k)
@@ -351,87 +360,81 @@ func wholes(dst []Whole, fs []fixed) []Whole {
 	return dst
 }
 
-func (s *State) levelRecords(section int, e *epoch, f func(*Record) error) error {
-	for ti, t := range e.tables {
-		var rs []*Record
-		for id, n := range t.rows {
-			if n == 0 {
-				continue
-			}
-			r := &Record{What: LevelSums, Section: section, Table: ti, Rows: n, Unit: t.unit, Sums: wholes(nil, t.fix(int32(id)))}
-			r.Key, r.Label = s.combination(ti, int32(id))
-			rs = append(rs, r)
+// tableRecords hands out the sums of a table; place encodes the key of a number.
+func tableRecords(what What, section, table int, t *keyTable, place func(int, int32) ([]byte, string), f func(*Record) error) error {
+	var rs []*Record
+	for id, n := range t.rows {
+		if n == 0 {
+			continue
 		}
-		if err := sortRecords(rs, f); err != nil {
-			return err
-		}
+		r := &Record{What: what, Section: section, Table: table, Rows: n, Unit: t.unit, Sums: wholes(nil, t.fix(int32(id)))}
+		r.Key, r.Label = place(table, int32(id))
+		rs = append(rs, r)
 	}
-	return nil
+	return sortRecords(rs, f)
 }
 
-func (s *State) pairRecords(section int, e *epoch, f func(*Record) error) error {
-	for pi, t := range e.pairs {
-		spec := &s.lay.pairs[pi]
-		var rs []*Record
-		for sh := range t.shards {
-			st := &t.shards[sh].pairStore
-			st.each(t.width, func(a, b, i int) {
-				r := &Record{What: PairSums, Section: section, Table: pi, Unit: t.unit}
-				ka, la := s.combination(spec.g, int32(a*pairShards+sh))
-				kb, lb := s.combination(spec.h, int32(b))
-				r.Key, r.Label = append(ka, kb...), la+" with "+lb
-				if t.width == 0 {
-					r.Rows = st.n[i]
-				} else {
-					r.Sums = wholes(nil, st.sums[i*t.width:(i+1)*t.width])
-				}
-				rs = append(rs, r)
-			})
-		}
-		if err := sortRecords(rs, f); err != nil {
-			return err
-		}
+func pairTableRecords(what What, section, table int, t *pairTable, spec *pairSpec, place func(int, int32) ([]byte, string), f func(*Record) error) error {
+	var rs []*Record
+	for sh := range t.shards {
+		st := &t.shards[sh].pairStore
+		st.each(t.width, func(a, b, i int) {
+			r := &Record{What: what, Section: section, Table: table, Unit: t.unit}
+			ka, la := place(spec.g, int32(a*pairShards+sh))
+			kb, lb := place(spec.h, int32(b))
+			r.Key, r.Label = append(ka, kb...), la+" with "+lb
+			if t.width == 0 {
+				r.Rows = st.n[i]
+			} else {
+				r.Sums = wholes(nil, st.sums[i*t.width:(i+1)*t.width])
+			}
+			rs = append(rs, r)
+		})
 	}
-	return nil
+	return sortRecords(rs, f)
 }
 
 // Hide puts a text in place of a cluster's key; ok is false for keys that stay.
 type Hide func(key int, k Key) (text string, ok bool)
 
-func (s *State) clusterRecords(section, key int, g *groupStore, f func(*Record) error, hide Hide) error {
-	r := Record{What: ClusterSums, Section: section, Table: key, Unit: g.unit}
-	each := func(kind stream.Kind, parts []groupPart, label bool) error {
-		k := Key{Kind: kind}
-		if kind == stream.Text {
-			k.Text = parts[0].text
-		} else {
-			k.Bits = keyOf(kind, parts[0].ord)
-		}
+// storeRecords hands out the sums of a store in order of key; label may be nil.
+func storeRecords(what What, section, table int, g *groupStore, label func(Key) string, f func(*Record) error) error {
+	r := Record{What: what, Section: section, Table: table, Unit: g.unit}
+	return mergeGroups([]*groupStore{g}, func(parts []groupPart) error {
+		k := partKey(g.kind, parts)
 		r.Key, r.Label = appendKey(r.Key[:0], k), ""
-		if label {
-			r.Label = s.Design.KeyLabel(key, k.KeyValue)
+		if label != nil {
+			r.Label = label(k)
 		}
 		r.Rows, r.Sums = parts[0].rows, wholes(r.Sums[:0], parts[0].sums)
 		return f(&r)
+	})
+}
+
+func partKey(kind stream.Kind, parts []groupPart) Key {
+	k := Key{Kind: kind}
+	if kind == stream.Text {
+		k.Text = parts[0].text
+	} else {
+		k.Bits = keyOf(kind, parts[0].ord)
 	}
-	kind := g.kind
+	return k
+}
+
+// clusterRecords is storeRecords of the clusters of a key.
+func (s *State) clusterRecords(what What, section, key int, g *groupStore, f func(*Record) error, hide Hide) error {
+	label := func(k Key) string { return s.Design.KeyLabel(key, k.KeyValue) }
 	if hide == nil {
-		return mergeGroups([]*groupStore{g}, func(parts []groupPart) error { return each(kind, parts, true) })
+		return storeRecords(what, section, key, g, label, f)
 	}
-	if _, ok := hide(key, Key{Kind: kind}); !ok {
-		return mergeGroups([]*groupStore{g}, func(parts []groupPart) error { return each(kind, parts, true) })
+	if _, ok := hide(key, Key{Kind: g.kind}); !ok {
+		return storeRecords(what, section, key, g, label, f)
 	}
 	// Hidden keys sort in another order.
 	to := g.pool.store(stream.Text, g.width, g.unit)
 	in := newGroupLoader(to)
 	err := mergeGroups([]*groupStore{g}, func(parts []groupPart) error {
-		k := Key{Kind: kind}
-		if kind == stream.Text {
-			k.Text = parts[0].text
-		} else {
-			k.Bits = keyOf(kind, parts[0].ord)
-		}
-		text, _ := hide(key, k)
+		text, _ := hide(key, partKey(g.kind, parts))
 		return in.add(Key{stream.Text, stream.KeyValue{Text: text}}, parts[0].rows, parts[0].sums)
 	})
 	if err == nil {
@@ -440,32 +443,36 @@ func (s *State) clusterRecords(section, key int, g *groupStore, f func(*Record) 
 	if err != nil {
 		return err
 	}
-	return mergeGroups([]*groupStore{to}, func(parts []groupPart) error { return each(stream.Text, parts, false) })
+	return storeRecords(what, section, key, to, nil, f)
 }
 
 // Conceal puts hidden keys into what the header knows of single clusters.
 func (h *Header) Conceal(kinds []stream.Kind, hide Hide) {
 	for _, c := range h.Sections {
 		for key, t := range c.Lone {
-			if t == nil {
-				continue
-			}
-			if _, ok := hide(key, Key{Kind: kinds[key]}); !ok {
-				continue
-			}
-			n := *t
-			n.nonzero, n.zero = slices.Clone(t.nonzero), slices.Clone(t.zero)
-			for _, ws := range [][]where{n.nonzero, n.zero} {
-				for i := range ws {
-					if ws[i].in == inOne {
-						text, _ := hide(key, Key{kinds[key], ws[i].key})
-						ws[i].key = stream.KeyValue{Text: text}
-					}
-				}
-			}
-			c.Lone[key] = &n
+			c.Lone[key] = t.conceal(key, kinds[key], hide)
 		}
 	}
+}
+
+func (t *loneTracker) conceal(key int, kind stream.Kind, hide Hide) *loneTracker {
+	if t == nil {
+		return nil
+	}
+	if _, ok := hide(key, Key{Kind: kind}); !ok {
+		return t
+	}
+	n := *t
+	n.nonzero, n.zero = slices.Clone(t.nonzero), slices.Clone(t.zero)
+	for _, ws := range [][]where{n.nonzero, n.zero} {
+		for i := range ws {
+			if ws[i].in == inOne {
+				text, _ := hide(key, Key{kind, ws[i].key})
+				ws[i].key = stream.KeyValue{Text: text}
+			}
+		}
+	}
+	return &n
 }
 
 // Join adds what o knows of other rows. Sections come out in the order of their IDs.
@@ -716,7 +723,7 @@ func (ld *sumsLoader) take(r *Record, p *pass) error {
 			return errPlace
 		}
 		// Runs after the first count on, so that numbers stay apart.
-		n := int(binary.BigEndian.Uint64(r.Key)) + r.Table<<40
+		n := int(binary.BigEndian.Uint64(r.Key)) + RunBase(r.Table)
 		p.checks[n] = segCheck{r.Rows, r.Sums[0].fixed().lo}
 		return nil
 	}
@@ -749,13 +756,7 @@ func (ld *sumsLoader) take(r *Record, p *pass) error {
 		if err != nil {
 			return err
 		}
-		if len(rest) > 0 || len(r.Sums) != t.width || r.Unit != t.unit {
-			return errPlace
-		}
-		t.grow(id)
-		t.rows[id] += r.Rows
-		mergeFixed(t.fix(id), ld.fixed(r.Sums))
-		return nil
+		return ld.level(t, id, rest, r)
 	case PairSums:
 		return ld.pair(e, r)
 	case ClusterSums:
@@ -766,22 +767,38 @@ func (ld *sumsLoader) take(r *Record, p *pass) error {
 		if g == nil {
 			return nil
 		}
-		if len(r.Sums) != g.width || r.Unit != g.unit {
-			return errPlace
-		}
-		k, err := parseKey(g.kind, r.Key)
-		if err != nil {
-			return err
-		}
-		if ld.into == nil {
-			ld.into = map[*groupStore]*groupLoader{}
-		}
-		if ld.into[g] == nil {
-			ld.into[g] = newGroupLoader(g)
-		}
-		return ld.into[g].add(k, r.Rows, ld.fixed(r.Sums))
+		return ld.cluster(g, r)
 	}
 	return errPlace
+}
+
+// level adds a record to combination id of a table.
+func (ld *sumsLoader) level(t *keyTable, id int32, rest []byte, r *Record) error {
+	if len(rest) > 0 || len(r.Sums) != t.width || r.Unit != t.unit {
+		return errPlace
+	}
+	t.grow(id)
+	t.rows[id] += r.Rows
+	mergeFixed(t.fix(id), ld.fixed(r.Sums))
+	return nil
+}
+
+// cluster adds a record to a store.
+func (ld *sumsLoader) cluster(g *groupStore, r *Record) error {
+	if len(r.Sums) != g.width || r.Unit != g.unit {
+		return errPlace
+	}
+	k, err := parseKey(g.kind, r.Key)
+	if err != nil {
+		return err
+	}
+	if ld.into == nil {
+		ld.into = map[*groupStore]*groupLoader{}
+	}
+	if ld.into[g] == nil {
+		ld.into[g] = newGroupLoader(g)
+	}
+	return ld.into[g].add(k, r.Rows, ld.fixed(r.Sums))
 }
 
 func (ld *sumsLoader) end() error {
@@ -834,6 +851,11 @@ func (ld *sumsLoader) pair(e *epoch, r *Record) error {
 	if err != nil {
 		return err
 	}
+	return ld.pairInto(t, a, b, rest, r)
+}
+
+// pairInto adds a record to a pair of a table.
+func (ld *sumsLoader) pairInto(t *pairTable, a, b int32, rest []byte, r *Record) error {
 	if len(rest) > 0 || len(r.Sums) != t.width || t.width > 0 && r.Unit != t.unit {
 		return errPlace
 	}

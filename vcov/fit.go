@@ -238,51 +238,15 @@ func (f *fitter) second() error {
 // sumRows sums what depends on single rows, by reading them again or by unique rows.
 func (f *fitter) sumRows() error {
 	x, s := f.sol, f.state
-	rp := accum.RowPass{Theta: x.theta, ThetaLow: f.low()}
-	if x.apart != nil {
-		rp.Eliminated = x.apart.elim
-	}
-	seen := map[string]bool{}
-	lever := false
-	for _, k := range f.o.Errors {
-		if k.Name == "hc1" {
-			k.Name = "hc0"
-		}
-		switch {
-		case rowKind(k.Name) && !seen[k.Name]:
-			seen[k.Name] = true
-			f.kinds = append(f.kinds, k.Name)
-			lever = lever || leverages(k.Name)
-		case k.Cluster >= 0 && !f.byCells:
-			w, _ := waysOf(f.d, k.Cluster)
-			for _, key := range w.keys {
-				if !slices.Contains(f.keys, key) && !f.kept(key) {
-					f.keys = append(f.keys, key)
-				}
-			}
-		}
-	}
-	rp.Moments = f.plan.moments && x.apart == nil && len(s.Columns) <= momentsMost
-	rp.Scores = f.keys
-	rp.Weights = f.weights(f.kinds, 0)
-	ordered, lastSeries := slices.ContainsFunc(f.o.Errors, func(k Kind) bool { return inOrder(k.Name) }), false
-	if ordered {
+	var series *accum.SeriesPass
+	var lastSeries bool
+	if slices.ContainsFunc(f.o.Errors, func(k Kind) bool { return inOrder(k.Name) }) {
 		var err error
-		if rp.Series, lastSeries, err = f.seriesPass(); err != nil {
+		if series, lastSeries, err = f.seriesPass(); err != nil {
 			return err
 		}
 	}
-	rp.Spread = x.apart == nil && (x.kind == stream.NoWeight || x.kind == stream.Frequency)
-	if len(rp.Weights) > 0 || rp.Series != nil {
-		// hc0, hc1 and hac want leverages only to find rows that alone decide a coefficient.
-		w, m := x.whitener()
-		if lever || s.LeverageBound(w) > 0.5 {
-			rp.Whitener, rp.K = w, m
-		}
-		if lever {
-			rp.Over = x.leverageLimits()
-		}
-	}
+	rp, lever := f.passOver(series)
 	if !f.plan.needs.Keep && !f.byCells {
 		s.Close() // scores come from the second pass
 	}
@@ -318,6 +282,51 @@ func (f *fitter) sumRows() error {
 		return f.heavy(rp, most)
 	}
 	return nil
+}
+
+// passOver says what a pass over the rows sums for the kinds asked for; lever tells
+// whether they need leverages. series are sums over rows near each other, or nil.
+func (f *fitter) passOver(series *accum.SeriesPass) (rp accum.RowPass, lever bool) {
+	x, s := f.sol, f.state
+	rp = accum.RowPass{Theta: x.theta, ThetaLow: f.low()}
+	if x.apart != nil {
+		rp.Eliminated = x.apart.elim
+	}
+	seen := map[string]bool{}
+	for _, k := range f.o.Errors {
+		if k.Name == "hc1" {
+			k.Name = "hc0"
+		}
+		switch {
+		case rowKind(k.Name) && !seen[k.Name]:
+			seen[k.Name] = true
+			f.kinds = append(f.kinds, k.Name)
+			lever = lever || leverages(k.Name)
+		case k.Cluster >= 0 && !f.byCells:
+			w, _ := waysOf(f.d, k.Cluster)
+			for _, key := range w.keys {
+				if !slices.Contains(f.keys, key) && !f.kept(key) {
+					f.keys = append(f.keys, key)
+				}
+			}
+		}
+	}
+	rp.Moments = f.plan.moments && x.apart == nil && len(s.Columns) <= momentsMost
+	rp.Scores = f.keys
+	rp.Weights = f.weights(f.kinds, 0)
+	rp.Series = series
+	rp.Spread = x.apart == nil && (x.kind == stream.NoWeight || x.kind == stream.Frequency)
+	if len(rp.Weights) > 0 || rp.Series != nil {
+		// hc0, hc1 and hac want leverages only to find rows that alone decide a coefficient.
+		w, m := x.whitener()
+		if lever || s.LeverageBound(w) > 0.5 {
+			rp.Whitener, rp.K = w, m
+		}
+		if lever {
+			rp.Over = x.leverageLimits()
+		}
+	}
+	return rp, lever
 }
 
 // low is what theta leaves off, for a pass over the rows.
@@ -444,7 +453,17 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 				meat, blocks = f.sums.Meats[i], f.sums.MeatBlocks[i]
 			}
 		}
-	} else {
+		most := f.sums.MaxLeverage
+		if f.sums.LoneRows > 0 {
+			most = 1
+		}
+		if k.Name == "hc5" && f.src == nil && 0.7*f.perTerm()*most > 4 {
+			x.unavailable(e, "its weights depend on the largest leverage of all rows, which is known only after the second round; fit the data")
+			return
+		}
+	}
+	fourth := meat == nil
+	if fourth {
 		meat = f.fourth
 		if f.loss > lossRefuse {
 			x.unavailable(e, "fourth moments cancel (relative error up to %.1e); use --passes 2", f.loss)
@@ -459,7 +478,7 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 		}
 		r, _ = x.cellsLoss(k.Name, f.sums, f.kindAt(k.Name))
 	}
-	if f.sums == nil {
+	if fourth {
 		r.noise, r.gross = f.noise, x.projectAbs(f.gross)
 	}
 	lone := f.loneTerms()

@@ -90,6 +90,14 @@ type Input struct {
 	Fingerprint string `json:"fingerprint"`
 	Files       int    `json:"files"`
 	Bytes       int64  `json:"bytes"`
+	// Sums says from which sums the result comes, if from digests.
+	Sums *SumsFrom `json:"sums,omitempty"`
+}
+
+// SumsFrom names digests and what identifies their sums.
+type SumsFrom struct {
+	Identity string   `json:"identity"`
+	Digests  []string `json:"digests"` // absolute paths
 }
 
 // Rows accounts for every row: Read is the sum of the others.

@@ -6,8 +6,10 @@
 //
 // One row for each sum or vector of sums, in order of what, section, table and key:
 //
-//	what     text    segment, weight, second, fourth, level, pair, cluster (accum.What)
-//	section  int32   frame in which z is: index into header.sections of the metadata
+//	what     text    segment, weight, second, fourth, level, pair, cluster; of a second
+//	                 round segment, meat, spread, meat-level, meat-pair, score (accum.What)
+//	section  int32   frame in which z is: index into header.sections of the metadata; of a
+//	                 meat its number
 //	table    int32   second: j(j+1)/2 + i of the product z_i z_j; fourth: place of the
 //	                 product; level, pair: table of categories; cluster: clustering;
 //	                 segment: run
@@ -51,12 +53,30 @@ const (
 
 // Meta is what a digest says of itself.
 type Meta struct {
-	Format  string        `json:"format"`
-	Version string        `json:"version"` // of the program
-	Model   Model         `json:"model"`
-	Header  *accum.Header `json:"header"`
+	Format  string `json:"format"`
+	Version string `json:"version"` // of the program
+	Model   Model  `json:"model"`
+	// Header is that of sums of a first reading, Second of a second round; one of them
+	// is null.
+	Header *accum.Header `json:"header"`
+	Second *Second       `json:"second"`
 	// Runs are the scans whose sums it holds, in order of ID.
 	Runs []*Run `json:"runs"`
+}
+
+// Second describes sums over rows at the coefficients of a first round.
+type Second struct {
+	Of     string           `json:"of"` // identity of the sums of the first round
+	Kinds  []Kind           `json:"kinds"`
+	Header *accum.RowHeader `json:"header"`
+	// Places are those of Meta.Runs among the runs of the first round.
+	Places []int `json:"places"`
+}
+
+// Kind is a kind of errors over a key of the model, -1 for none.
+type Kind struct {
+	Name    string `json:"name"`
+	Cluster int    `json:"cluster"`
 }
 
 // Model is the design of the sums.

@@ -52,6 +52,9 @@ func NewPool(readers []*Reader) (*Pool, error) {
 		if a, b := r.Meta.Model.Fingerprint(), first.Meta.Model.Fingerprint(); a != b {
 			return nil, &PoolError{fmt.Sprintf("%s and %s are of different models: %s", first.Path, r.Path, first.Meta.Model.Differs(&r.Meta.Model))}
 		}
+		if (r.Meta.Second == nil) != (first.Meta.Second == nil) {
+			return nil, &PoolError{fmt.Sprintf("%s and %s are of different rounds; fit takes both, pool one", first.Path, r.Path)}
+		}
 		p.Meta.Version = max(p.Meta.Version, r.Meta.Version)
 		for _, run := range r.Meta.Runs {
 			have := runs[run.ID]
@@ -86,6 +89,9 @@ func NewPool(readers []*Reader) (*Pool, error) {
 		p.Meta.Runs = append(p.Meta.Runs, r)
 	}
 	slices.SortFunc(p.Meta.Runs, func(a, b *Run) int { return cmp.Compare(a.ID, b.ID) })
+	if first.Meta.Second != nil {
+		return p, p.secondRound()
+	}
 	ids := make([][]string, len(readers))
 	for i, r := range readers {
 		for _, c := range r.Meta.Header.Sections {
@@ -109,16 +115,60 @@ func NewPool(readers []*Reader) (*Pool, error) {
 		for _, run := range r.Meta.Runs {
 			f.runs = append(f.runs, slices.IndexFunc(p.Meta.Runs, func(x *Run) bool { return x.ID == run.ID }))
 		}
-		if ok, err := f.next(); err != nil {
+		if err := p.push(f); err != nil {
 			return nil, err
-		} else if ok {
-			p.heap = append(p.heap, f)
 		}
 	}
+	p.heapify()
+	return p, nil
+}
+
+func (p *Pool) push(f *feed) error {
+	ok, err := f.next()
+	if ok {
+		p.heap = append(p.heap, f)
+	}
+	return err
+}
+
+func (p *Pool) heapify() {
 	for i := len(p.heap)/2 - 1; i >= 0; i-- {
 		p.sink(i)
 	}
-	return p, nil
+}
+
+// secondRound joins digests of a second round: their places are those of the first.
+func (p *Pool) secondRound() error {
+	first := p.readers[0]
+	all := *first.Meta.Second
+	places := map[string]int{}
+	for i, r := range p.readers {
+		s := r.Meta.Second
+		switch {
+		case s.Of != all.Of:
+			return &PoolError{fmt.Sprintf("%s and %s are of different first rounds", first.Path, r.Path)}
+		case !slices.Equal(s.Kinds, all.Kinds):
+			return &PoolError{fmt.Sprintf("%s and %s were made for different kinds of errors", first.Path, r.Path)}
+		}
+		for j, run := range r.Meta.Runs {
+			places[run.ID] = s.Places[j]
+		}
+		if i > 0 {
+			if err := all.Header.Join(s.Header); err != nil {
+				return &PoolError{fmt.Sprintf("%s and %s: %s", first.Path, r.Path, err)}
+			}
+		}
+		if err := p.push(&feed{r: r}); err != nil {
+			return err
+		}
+	}
+	all.Places = nil
+	for _, run := range p.Meta.Runs {
+		all.Places = append(all.Places, places[run.ID])
+	}
+	p.Meta.Second = &all
+	p.heapify()
+	return nil
 }
 
 // next reads a record and moves it to its place in the pool.
@@ -134,7 +184,9 @@ func (f *feed) next() (bool, error) {
 		*x = places[*x]
 		return nil
 	}
-	if r.What == accum.SegmentCheck {
+	if f.r.Meta.Second != nil {
+		err = nil // places are those of the first round
+	} else if r.What == accum.SegmentCheck {
 		err = to(&r.Table, f.runs)
 	} else {
 		err = to(&r.Section, f.sections)

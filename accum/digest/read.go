@@ -130,7 +130,7 @@ func (r *Reader) open() (err error) {
 	if err := json.Unmarshal([]byte(text), &r.Meta); err != nil {
 		return &DamageError{r.Path, err.Error()}
 	}
-	if r.Meta.Header == nil {
+	if (r.Meta.Header == nil) == (r.Meta.Second == nil) || r.Meta.Second != nil && r.Meta.Second.Header == nil {
 		return &DamageError{r.Path, "its description has no header"}
 	}
 	if err := r.Meta.check(); err != nil {
@@ -143,7 +143,13 @@ func (r *Reader) open() (err error) {
 // check holds the order that pooling relies on.
 func (m *Meta) check() error {
 	last := ""
-	for _, c := range m.Header.Sections {
+	var sections []*accum.Section
+	if m.Header != nil {
+		sections = m.Header.Sections
+	} else if len(m.Second.Places) != len(m.Runs) {
+		return errors.New("its runs have no places")
+	}
+	for _, c := range sections {
 		if c == nil || c.Frame == nil {
 			return errors.New("a section has no frame")
 		}

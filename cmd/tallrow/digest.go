@@ -48,7 +48,14 @@ columns kept, or another kind of errors that its sums allow. --errors says what 
 		if err := s.needOutput("digest"); err != nil {
 			return err
 		}
-		made, err := a.digest(cmd.Context(), s)
+		work := a.digest
+		if s.given("at") {
+			if s.frameFrom != "" {
+				return stream.Usef("--frame-from and --at do not go together: the frame is that of the first round")
+			}
+			work = a.secondRound
+		}
+		made, err := work(cmd.Context(), s)
 		if err != nil {
 			return err
 		}
@@ -80,6 +87,8 @@ type made struct {
 	Rows    vcov.Rows    `json:"rows"`
 	Model   digest.Model `json:"model"`
 	Sums    []string     `json:"sums"`
+	Second  bool         `json:"second_round"`
+	Later   []string     `json:"later"` // kinds asked for that take a second round
 	Frames  int          `json:"frames"`
 	Digests int          `json:"digests,omitempty"` // that were joined
 	Runs    []madeRun    `json:"runs"`
@@ -94,9 +103,14 @@ type madeRun struct {
 }
 
 func describeDigest(m *digest.Meta, name string, size int64) *made {
-	h := m.Header
-	d := &made{Format: "tallrow-pool/1", Bytes: size, Model: m.Model, Sums: sumsOf(m), Frames: len(h.Sections), Runs: []madeRun{},
-		Rows: vcov.Rows{Read: h.Read, Used: h.Tally.Used, Missing: h.Tally.Missing, Excluded: h.Tally.Excluded, Malformed: h.Malformed, ZeroWeight: h.Tally.ZeroWeight, MissingBy: h.Tally.MissingBy}}
+	d := &made{Format: "tallrow-pool/1", Bytes: size, Model: m.Model, Runs: []madeRun{}, Later: []string{}}
+	if h := m.Header; h != nil {
+		d.Sums, d.Frames = sumsOf(m), len(h.Sections)
+		d.Rows = vcov.Rows{Read: h.Read, Used: h.Tally.Used, Missing: h.Tally.Missing, Excluded: h.Tally.Excluded, Malformed: h.Malformed, ZeroWeight: h.Tally.ZeroWeight, MissingBy: h.Tally.MissingBy}
+	} else {
+		d.Sums, d.Second = secondNames(m), true
+		d.Rows.Read = m.Second.Header.Read
+	}
 	if name != "" {
 		d.Output = &name
 	}
@@ -147,7 +161,10 @@ func (a *app) tellDigest(s *settings, m *made) error {
 	if m.Digests > 0 {
 		fmt.Fprintf(&b, ", joined from %s", plural(int64(m.Digests), "digest", "digests"))
 	}
-	fmt.Fprintf(&b, "\nrows: %s read, %s used", count(m.Rows.Read), count(m.Rows.Used))
+	fmt.Fprintf(&b, "\nrows: %s read", count(m.Rows.Read))
+	if !m.Second {
+		fmt.Fprintf(&b, ", %s used", count(m.Rows.Used))
+	}
 	for _, x := range []struct {
 		n    int64
 		what string
@@ -160,7 +177,14 @@ func (a *app) tellDigest(s *settings, m *made) error {
 	if len(m.Model.Kept) > 0 {
 		fmt.Fprintf(&b, "; kept beside: %s", strings.Join(m.Model.Kept, ", "))
 	}
-	fmt.Fprintf(&b, "\nanswers: %s\n", strings.Join(m.Sums, ", "))
+	if m.Second {
+		fmt.Fprintf(&b, "\nsecond round: %s; give it to fit beside the digests of the first\n", strings.Join(m.Sums, ", "))
+	} else {
+		fmt.Fprintf(&b, "\nanswers: %s\n", strings.Join(m.Sums, ", "))
+	}
+	if len(m.Later) > 0 {
+		fmt.Fprintf(&b, "after a second round (--at): %s\n", strings.Join(m.Later, ", "))
+	}
 	for _, r := range m.Runs {
 		if r.Parts > 1 && len(r.Missing) > 0 {
 			fmt.Fprintf(&b, "parts: %d of %d; pool joins them with the others\n", len(r.Have), r.Parts)
@@ -257,6 +281,13 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 	}
 	d := describeDigest(m, s.output, st.Size())
 	d.Format = "tallrow-digest-made/1"
+	_, later, err := vcov.SumsFor(p.design, o)
+	if err != nil {
+		return nil, err
+	}
+	for _, k := range later {
+		d.Later = append(d.Later, p.req.name(k))
+	}
 	return d, nil
 }
 

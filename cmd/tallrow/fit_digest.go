@@ -3,6 +3,7 @@ package main
 import (
 	"context"
 	"fmt"
+	"path/filepath"
 	"slices"
 	"strings"
 	"time"
@@ -25,14 +26,30 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	}
 	defer shut()
 	start := time.Now()
-	p, err := digest.NewPool(rs)
+	one, two := splitRounds(rs)
+	if len(one) == 0 {
+		return nil, stream.Usef("%s is of a second round: name the digests of the first too", names[0])
+	}
+	p, err := digest.NewPool(one)
 	if err != nil {
 		return nil, err
 	}
 	if err := p.Complete(); err != nil {
 		return nil, err
 	}
-	q, err := s.question(p.Meta)
+	var rows *digest.Pool
+	if len(two) > 0 {
+		if rows, err = digest.NewPool(two); err == nil {
+			err = rows.Complete()
+		}
+		if err != nil {
+			return nil, err
+		}
+		if what := p.Meta.Model.Differs(&rows.Meta.Model); what != "" {
+			return nil, stream.Usef("%s is of another model than %s: %s", two[0].Path, one[0].Path, what)
+		}
+	}
+	q, err := s.question(p.Meta, rows)
 	if err != nil {
 		return nil, err
 	}
@@ -46,7 +63,7 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 			}
 		}
 	}
-	kept := accum.Needs{Fourth: p.Meta.Header.Fourth, Clusters: p.Meta.Header.Clusters}
+	kept := vcov.Kept{Fourth: p.Meta.Header.Fourth, Clusters: p.Meta.Header.Clusters}
 	needs := accum.Needs{Keep: true}
 	for _, k := range opts.Errors {
 		switch {
@@ -65,14 +82,28 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 		return nil, err
 	}
 	defer state.Close()
+	identity := sumsIdentity(&p.Meta.Model, state)
+	if rows != nil {
+		if rows.Meta.Second.Of != identity {
+			return nil, stream.Usef("%s is the second round of other digests than %s", two[0].Path, one[0].Path)
+		}
+		kept.Rows, kept.Next = rows.Meta.Second.Header, rows.Next
+		for _, k := range rows.Meta.Second.Kinds {
+			kept.Kinds = append(kept.Kinds, vcov.Kind{Name: k.Name, Cluster: k.Cluster})
+		}
+	}
 	asked, err := state.Ask(q.design)
 	if err != nil {
 		return nil, stream.Usef("%s; the sums have the outcome %s and the terms %s", err, p.Meta.Model.Outcome, strings.Join(slices.Concat(p.Meta.Model.Terms, p.Meta.Model.Kept), ", "))
+	}
+	if asked != state && rows != nil {
+		return nil, stream.Usef("a second round is for the coefficients of the whole model; leave out --outcome and --terms, or the digest %s", two[0].Path)
 	}
 	res, err := vcov.FitSums(ctx, asked, kept, opts)
 	if err != nil {
 		return nil, err
 	}
+	res.Input.Sums = &vcov.SumsFrom{Identity: identity, Digests: absolute(one)}
 	res.Input.Files, res.Input.Bytes = 0, 0
 	for _, r := range p.Meta.Runs {
 		res.Input.Files += len(r.Files)
@@ -104,6 +135,19 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	return &fitted{res, q.req}, nil
 }
 
+// absolute lists the paths of digests.
+func absolute(rs []*digest.Reader) []string {
+	var out []string
+	for _, r := range rs {
+		path, err := filepath.Abs(r.Path)
+		if err != nil {
+			path = r.Path
+		}
+		out = append(out, path)
+	}
+	return out
+}
+
 // question is what is asked of sums.
 type question struct {
 	req    request
@@ -113,7 +157,7 @@ type question struct {
 
 // question binds the options of s to what a digest holds; what s leaves open is as
 // in the digest.
-func (s *settings) question(m *digest.Meta) (*question, error) {
+func (s *settings) question(m *digest.Meta, rows *digest.Pool) (*question, error) {
 	for _, name := range dataOnly {
 		if s.given(name) && !s.agrees(name, &m.Model) {
 			return nil, stream.Usef("%s: fixed when the digest was made; leave it out", s.origin(name))
@@ -131,6 +175,13 @@ func (s *settings) question(m *digest.Meta) (*question, error) {
 	t := *s
 	if !s.given("errors") {
 		t.errors, t.from = sumsOf(m), map[string]string{"errors": "--errors"}
+		if rows != nil {
+			for _, e := range secondNames(rows.Meta) {
+				if !slices.Contains(t.errors, e) {
+					t.errors = append(t.errors, e)
+				}
+			}
+		}
 		if m.Model.WeightKind == "sampling" {
 			t.errors = t.errors[1:]
 		}

@@ -182,6 +182,9 @@ var options = []option{
 	{name: "hide-ids", value: "KEYFILE", group: "Digests", on: onDigest,
 		help: "put keyed hashes (HMAC-SHA-256) in place of cluster ids; the key stays in KEYFILE, 32 bytes or more",
 		set:  func(s *settings, v value) error { s.hideIDs = v.text(); return nil }},
+	{name: "at", value: "RESULT.json", group: "Digests", on: onDigest,
+		help: "a second round over the data of a fit of digests, for errors that depend on single rows: hc2 to hc5, any with categories; fit takes both rounds",
+		set:  func(s *settings, v value) error { s.at = v.text(); return nil }},
 	{name: "partial", form: formSwitch, group: "Digests", on: onPool, def: "false",
 		help: "join parts although others are missing, to be pooled further",
 		set:  func(s *settings, v value) error { return setSwitch(&s.partial, v) }},
@@ -208,7 +211,7 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions  = []string{"checkpoint", "at", "sweep"}
+	laterOptions  = []string{"checkpoint", "sweep"}
 	laterCommands = []string{"launch"}
 )
 

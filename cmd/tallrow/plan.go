@@ -88,6 +88,11 @@ func renderPlan(pf *planFile, width int) string {
 		memory += fmt.Sprintf(", %s for each pair of levels of two categories", sizeText(pf.PerPair))
 	}
 	n.add("memory", memory)
+	size := "about " + sizeText(pf.Digest)
+	if pf.DigestPerCluster > 0 {
+		size += fmt.Sprintf(", and %s for each cluster", sizeText(pf.DigestPerCluster))
+	}
+	n.add("digest", size+", if the sums are kept (tallrow digest)")
 	var costs []string
 	for _, c := range pf.Costs {
 		costs = append(costs, fmt.Sprintf("%s %s", c.What, percent(c.Share)))

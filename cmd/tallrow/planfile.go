@@ -37,8 +37,11 @@ type planFile struct {
 	PerLevel   int64         `json:"memory_per_level"`
 	PerPair    int64         `json:"memory_per_pair"`
 	Bound      int64         `json:"memory_bound"`
-	Costs      []planCost    `json:"costs"`
-	Reasons    []string      `json:"reasons"`
+	// Digest estimates the size of a digest for these errors, and of each cluster in it.
+	Digest           int64      `json:"digest_bytes"`
+	DigestPerCluster int64      `json:"digest_bytes_per_cluster"`
+	Costs            []planCost `json:"costs"`
+	Reasons          []string   `json:"reasons"`
 }
 
 // planReading is how the data are read: part of what must not change.
@@ -97,6 +100,9 @@ func newPlanFile(ctx context.Context, p *prepared, plan *vcov.Plan) (*planFile, 
 		pf.Costs = append(pf.Costs, planCost{c.What, c.Share})
 	}
 	var err error
+	if pf.Digest, pf.DigestPerCluster, err = vcov.DigestSize(p.design, p.opts); err != nil {
+		return nil, err
+	}
 	if pf.Input.Stamp, err = p.stamp(); err != nil {
 		return nil, err
 	}

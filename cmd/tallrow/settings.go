@@ -64,6 +64,7 @@ type settings struct {
 	parts      int // 0: not in parts
 	frameFrom  string
 	hideIDs    string
+	at         string
 	partial    bool
 	eachDigest bool
 

@@ -1,0 +1,150 @@
+package main
+
+import (
+	"context"
+	"encoding/json"
+	"fmt"
+	"math"
+	"os"
+	"path/filepath"
+	"slices"
+	"strings"
+	"testing"
+
+	"github.com/tallrow/tallrow/vcov"
+)
+
+// must runs a command line that has to succeed.
+func must(t *testing.T, args ...string) string {
+	t.Helper()
+	code, out, errw := try(context.Background(), nil, args...)
+	if code != exitDone {
+		t.Fatalf("%q: status %d, stderr %q", args, code, errw)
+	}
+	return out
+}
+
+// fails runs a command line that has to end with a status and a message.
+func fails(t *testing.T, status int, message string, args ...string) {
+	t.Helper()
+	code, out, errw := try(context.Background(), nil, args...)
+	if code != status || !strings.Contains(errw, message) || out != "" {
+		t.Errorf("%q: status %d, stdout %q, stderr %q; want status %d and %q", args, code, out, errw, status, message)
+	}
+}
+
+func result(t *testing.T, name string) *vcov.Result {
+	t.Helper()
+	text, err := os.ReadFile(name)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var r vcov.Result
+	if err := json.Unmarshal(text, &r); err != nil {
+		t.Fatal(err)
+	}
+	return &r
+}
+
+// quays makes the demo's data.
+func quays(t *testing.T, rows int) string {
+	t.Helper()
+	dir := t.TempDir()
+	must(t, "demo", "--rows", fmt.Sprint(rows), "--dir", dir)
+	found, err := filepath.Glob(filepath.Join(dir, "*.parquet"))
+	if err != nil || len(found) != 1 {
+		t.Fatalf("found %q, %v", found, err)
+	}
+	return found[0]
+}
+
+// Two rounds in parts give the bits of a fit in two passes, whatever the number of
+// parts and how they are joined: errors by row, by level, by cluster.
+func TestTwoRounds(t *testing.T) {
+	data := quays(t, 60_000)
+	for _, c := range []struct{ name, terms, weight, errors string }{
+		{"numbers", "pallets, tonnes, night", "", "hc1, hc2, hc3, hc4m, cr0(crane), cr2(quay)"},
+		{"levels", "pallets, each(barge), each(crew) * wet", "", "hc1, hc3, cr1(crane), cr3(quay)"},
+		{"two ways", "tonnes, each(barge)", "", "hc0, cr1(quay, crane)"},
+		{"weights", "pallets, each(barge)", "crew", "hc1, hc3, cr1(crane)"},
+		{"eliminated", "tonnes, each(crane)", "", "hc1, hc3"},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			dir := t.TempDir()
+			in := func(name string) string { return filepath.Join(dir, name) }
+			model := []string{"--outcome", "minutes", "--terms", c.terms, "--errors", c.errors, "--quiet"}
+			if c.weight != "" {
+				model = append(model, "--weight", c.weight, "--weight-kind", "precision")
+			}
+			with := func(command string, more ...string) []string {
+				return slices.Concat([]string{command}, model, []string{data}, more)
+			}
+			must(t, with("fit", "--passes", "2", "--json", "-o", in("whole.json"))...)
+			var ones, twos []string
+			for i := range 3 {
+				name := in(fmt.Sprintf("one-%d.digest", i))
+				must(t, with("digest", "--part", fmt.Sprintf("%d/3", i), "-o", name)...)
+				ones = append(ones, name)
+			}
+			must(t, "pool", ones[2], ones[0], ones[1], "-o", in("one.digest"))
+			must(t, "fit", in("one.digest"), "--json", "--errors", "classical", "-o", in("one.json"))
+			for i := range 4 {
+				name := in(fmt.Sprintf("two-%d.digest", i))
+				must(t, with("digest", "--at", in("one.json"), "--part", fmt.Sprintf("%d/4", i), "-o", name)...)
+				twos = append(twos, name)
+			}
+			must(t, "pool", "--partial", twos[3], twos[0], "-o", in("some.digest"))
+			must(t, "pool", twos[1], in("some.digest"), twos[2], "-o", in("two.digest"))
+			must(t, "pool", twos[0], twos[1], twos[2], twos[3], "-o", in("again.digest"))
+			a, _ := os.ReadFile(in("two.digest"))
+			if b, _ := os.ReadFile(in("again.digest")); string(a) != string(b) {
+				t.Error("grouping shows in the bytes of joined digests")
+			}
+			must(t, "fit", in("one.digest"), in("two.digest"), "--errors", c.errors, "--json", "-o", in("pooled.json"))
+			want, got := result(t, in("whole.json")), result(t, in("pooled.json"))
+			if !slices.Equal(want.Estimates, got.Estimates) {
+				t.Error("estimates differ")
+			}
+			for i, e := range want.Errors {
+				g := got.Errors[i]
+				near := 0.0
+				if c.name == "numbers" && e.Kind == "cr2" {
+					near = 1e-13 // a fit has these second moments from its first pass
+				}
+				same := func(a, b vcov.Number) bool {
+					return a == b || !a.Exists() && !b.Exists() || math.Abs(float64(a-b)) <= near*math.Abs(float64(a))
+				}
+				if e.Name() != g.Name() || e.Status != g.Status || len(e.SE) == 0 || !slices.EqualFunc(e.SE, g.SE, same) {
+					t.Errorf("%s %s: got %s %s %v, want %v", e.Name(), e.Status, g.Name(), g.Status, g.SE, e.SE)
+				}
+			}
+
+			fails(t, exitIncomplete, "missing", "fit", in("one.digest"), twos[0])
+			fails(t, exitUse, "is of a second round", "fit", in("two.digest"))
+			fails(t, exitUse, "whole model", "fit", in("one.digest"), in("two.digest"), "--terms", "")
+			fails(t, exitFailed, "different rounds", "pool", in("one.digest"), in("two.digest"), "-o", in("mixed.digest"))
+			fails(t, exitUse, "is a fit of data", with("digest", "--at", in("whole.json"), "-o", in("x.digest"))...)
+		})
+	}
+}
+
+// A second round is for the rows and the model of the first.
+func TestSecondRoundRefuses(t *testing.T) {
+	data, other := quays(t, 20_000), quays(t, 30_000)
+	dir := t.TempDir()
+	in := func(name string) string { return filepath.Join(dir, name) }
+	model := []string{"--outcome", "minutes", "--terms", "pallets, each(barge)", "--errors", "hc3", "--quiet"}
+	must(t, slices.Concat([]string{"digest"}, model, []string{data, "-o", in("one.digest")})...)
+	must(t, "fit", in("one.digest"), "--errors", "classical", "--json", "-o", in("one.json"))
+	fails(t, exitUse, "second round (tallrow digest --at)", "fit", in("one.digest"), "--errors", "hc3")
+	fails(t, exitUse, "are not an input of the first round", slices.Concat([]string{"digest"}, model, []string{other, "--at", in("one.json"), "-o", in("x.digest")})...)
+	fails(t, exitUse, "terms is", "digest", "--outcome", "minutes", "--terms", "pallets, each(crew)", "--errors", "hc3", data, "--at", in("one.json"), "-o", in("x.digest"))
+	must(t, slices.Concat([]string{"digest"}, model, []string{data, "--at", in("one.json"), "-o", in("two.digest")})...)
+	must(t, slices.Concat([]string{"digest"}, model, []string{other, "-o", in("other.digest")})...)
+	fails(t, exitUse, "is the second round of other digests", "fit", in("other.digest"), in("two.digest"))
+	must(t, slices.Concat([]string{"digest"}, model, []string{other, "-o", in("one.digest")})...)
+	fails(t, exitFailed, "are not what they were", slices.Concat([]string{"digest"}, model, []string{data, "--at", in("one.json"), "-o", in("x.digest")})...)
+	if _, err := os.Stat(in("x.digest")); err == nil {
+		t.Error("a refused run left a file")
+	}
+}
