@@ -92,7 +92,9 @@ func renderPlan(pf *planFile, width int) string {
 	if pf.DigestPerCluster > 0 {
 		size += fmt.Sprintf(", and %s for each cluster", sizeText(pf.DigestPerCluster))
 	}
-	n.add("digest", size+", if the sums are kept (tallrow digest)")
+	if pf.Digest > 0 {
+		n.add("digest", size+", if the sums are kept (tallrow digest)")
+	}
 	var costs []string
 	for _, c := range pf.Costs {
 		costs = append(costs, fmt.Sprintf("%s %s", c.What, percent(c.Share)))
