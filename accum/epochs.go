@@ -229,6 +229,7 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 		for {
 			err = seg.Read(&ld.batch)
 			if err == nil {
+				ld.eval.Segment = seg.Number()
 				err = ld.eval.Eval(&ld.batch, seg.Locate, &ld.block)
 			}
 			if err != nil {

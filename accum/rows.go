@@ -339,6 +339,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 			if err != nil {
 				return err
 			}
+			ld.eval.Segment = seg.Number()
 			if err := ld.eval.Eval(&ld.batch, seg.Locate, &ld.block); err != nil {
 				return err
 			}

@@ -169,7 +169,7 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 			}
 		}
 		see(&g.store.seen, g.store.unit)
-		sc := storeScores(g.store, s.scoreWidth(), rp.Moments)
+		sc := storeScores(g.store, s.scoreWidth(), rp.moments(rp.Scores[i]))
 		sc.Lone, sc.LoneZero = make([]bool, s.allColumns()), make([]bool, s.allColumns())
 		nonzero, zero := w.loneT[i].lone()
 		copy(sc.Lone[1:], nonzero)

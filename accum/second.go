@@ -33,8 +33,9 @@ type RowPass struct {
 	Weights []func(h float64) float64
 	// Scores lists the keys whose clusters' scores sum w e z are wanted.
 	Scores []int
-	// Moments asks for the second moments of those clusters too (no group apart).
-	Moments bool
+	// Moments lists those of Scores whose clusters' second moments are wanted too (no
+	// group apart).
+	Moments []int
 	// Heavy keeps rows of leverage above HeavyAt, but not those of leverage 1,
 	// out of the meats and returns them one by one, with the second moments of
 	// all other rows, so that 1-h can be formed without cancellation.
@@ -52,6 +53,8 @@ type RowPass struct {
 	Retain bool
 	Base   int
 }
+
+func (rp *RowPass) moments(key int) bool { return slices.Contains(rp.Moments, key) }
 
 const (
 	// HeavyAt is the leverage above which 1-h has lost digits worth saving.
@@ -151,7 +154,7 @@ func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPoo
 	}
 	for _, k := range rp.Scores {
 		p := s.scoreWidth()
-		if rp.Moments {
+		if rp.moments(k) {
 			p += p * (p + 1) / 2
 		}
 		c.stores = append(c.stores, pool.store(s.lay.design.Keys[k].Kind, p, unit))
@@ -181,24 +184,24 @@ func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *second
 		w.rowb = append(w.rowb, make([]int32, stride))
 	}
 	add, width, bases := rowAdder(addScaled), l.p0+2, 0
+	var parts []int
 	if len(l.groups) > 0 && s.Apart == nil {
-		var parts []int
 		for i := range l.groups {
 			parts = append(parts, len(l.groups[i].parts))
 			width += len(l.groups[i].parts)
 		}
 		add, bases = addPlaced(l.p0+1, parts), len(l.groups)
-		if rp.Moments {
-			add = addMoments(len(s.Columns), l.p0+1, parts)
+	}
+	for i, st := range all.stores {
+		of, n := add, width
+		if rp.moments(rp.Scores[i]) {
+			columns := l.p0 + 1
+			if parts != nil {
+				columns = len(s.Columns)
+			}
+			of, n = addMoments(columns, l.p0+1, parts), width+1
 		}
-	} else if rp.Moments {
-		add = addMoments(l.p0+1, l.p0+1, nil)
-	}
-	if rp.Moments {
-		width++
-	}
-	for _, st := range all.stores {
-		w.scores = append(w.scores, newGroups(st, width, bases, add))
+		w.scores = append(w.scores, newGroups(st, n, bases, of))
 		w.loneT = append(w.loneT, newLoneTracker(l.p0))
 		w.loneC = append(w.loneC, newLoneTracker(s.allColumns()))
 	}
@@ -249,7 +252,7 @@ func (w *secondWorker) add() error {
 	}
 	for i, k := range rp.Scores {
 		w.loneT[i].add(&w.block.Key[k], w.block.X, n)
-		w.addScores(w.scores[i], w.loneC[i], &w.block.Key[k])
+		w.addScores(w.scores[i], w.loneC[i], k)
 		if w.apart != nil {
 			w.apart[i].add(w, &w.block.Key[k])
 		}
@@ -481,15 +484,15 @@ func (w *secondWorker) keepHeavy(r int, root float64) {
 }
 
 // addScores adds w e z of each row to its cluster.
-func (w *secondWorker) addScores(g *groups, lone *loneTracker, keys *stream.Vector) {
-	l, n := w.lay, w.block.Rows
+func (w *secondWorker) addScores(g *groups, lone *loneTracker, key int) {
+	l, n, keys := w.lay, w.block.Rows, &w.block.Key[key]
 	mult := w.e[:n]
 	if w.root != nil {
 		mult = w.mult[:n]
 		kernel.Scale(mult, w.e[:n], w.block.Weight[:n])
 	}
 	w.zcols = append(w.zcols[:0], mult)
-	if w.pass.Moments {
+	if w.pass.moments(key) {
 		w.zcols = append(w.zcols, w.weights())
 	}
 	for j := range l.p0 + 1 {

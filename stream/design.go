@@ -13,6 +13,7 @@ type Spec struct {
 	Stop       bool           // --missing stop: the first row with a missing cell is an error
 	Keys       []string       // cluster expressions, each one clustering
 	Crossed    [][]int        // clusterings by several of Keys at once: ascending indexes
+	Buckets    *Buckets       // nil for none
 	Zone       *time.Location // for hour, weekday, month, date of instants; nil is UTC
 }
 
@@ -44,6 +45,9 @@ type Design struct {
 	// Parts has, for each of Keys, the keys that it crosses; nil for an expression.
 	// Crossed keys follow the others. Their values are for KeyLabel.
 	Parts [][]int
+	// Buckets is the place in Keys of the key that Spec.Buckets asks for, the last
+	// one; -1 without.
+	Buckets int
 
 	prog *program
 }

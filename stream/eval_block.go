@@ -10,6 +10,9 @@ import (
 type Evaluator struct {
 	// Tally counts the rows of all batches so far.
 	Tally Tally
+	// Segment is the number of the segment whose batches come next; it must be set
+	// where rows are dealt to buckets one by one.
+	Segment int
 
 	prog *program
 	stop bool
@@ -35,6 +38,7 @@ type Evaluator struct {
 	outMarks       []int64
 	outCat, outKey []Vector
 	crossed        []crossing
+	dealer         *dealer // nil without buckets
 	lost           []int64 // by prog.lost, this batch
 	lostRow        []int   // last row counted under the name, plus one
 	valueless      []int64 // by prog.noValue, this batch
@@ -67,8 +71,11 @@ func (d *Design) NewEvaluator() *Evaluator {
 		outX:  make([][]float64, len(p.dense)), outCat: make([]Vector, len(p.cats)), outKey: make([]Vector, len(p.keys)),
 		lost: make([]int64, len(p.lost)), lostRow: make([]int, len(p.lost)), valueless: make([]int64, len(p.noValue)),
 	}
-	for _, parts := range d.Parts[len(p.keys):] {
+	for _, parts := range d.Spec.Crossed {
 		e.crossed = append(e.crossed, crossing{parts: parts})
+	}
+	if d.Buckets >= 0 {
+		e.dealer = &dealer{Buckets: *d.Spec.Buckets}
 	}
 	e.grow(BatchRows)
 	return e

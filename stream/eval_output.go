@@ -37,6 +37,9 @@ func (e *Evaluator) prepare(out *Block) {
 	}
 	out.Cat = slices.Grow(out.Cat[:0], len(p.cats))[:len(p.cats)]
 	n := len(p.keys) + len(e.crossed)
+	if e.dealer != nil {
+		n++
+	}
 	out.Key = slices.Grow(out.Key[:0], n)[:n]
 }
 
@@ -54,6 +57,9 @@ func (e *Evaluator) empty(out *Block) {
 	}
 	for i := range e.crossed {
 		out.Key[len(p.keys)+i] = Vector{Kind: Text}
+	}
+	if e.dealer != nil {
+		out.Key[len(out.Key)-1] = Vector{Kind: Int64}
 	}
 }
 
@@ -133,10 +139,13 @@ func (e *Evaluator) compact(b *Batch, out *Block) {
 	e.cross(out)
 }
 
-// cross fills the crossed keys.
+// cross fills the keys that are made of others.
 func (e *Evaluator) cross(out *Block) {
 	for i := range e.crossed {
 		e.crossed[i].cross(out.Key, out.Rows, &out.Key[len(e.prog.keys)+i])
+	}
+	if e.dealer != nil {
+		e.dealer.deal(e.Segment, out, &out.Key[len(out.Key)-1])
 	}
 }
 

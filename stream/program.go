@@ -256,6 +256,9 @@ func (c *compiler) design() error {
 	if err := c.crossedKeys(); err != nil {
 		return err
 	}
+	if err := c.bucketKey(); err != nil {
+		return err
+	}
 	c.names()
 	return nil
 }
