@@ -92,7 +92,7 @@ func (w *secondWorker) rowMeats() []*meat { return append(slices.Clone(w.meats),
 // RowHeader describes the sums of a pass that was made with RowPass.Retain.
 func (r *RowSums) RowHeader() *RowHeader {
 	w := r.kept
-	h := &RowHeader{Meats: len(w.meats), Scores: list(w.pass.Scores), Moments: w.pass.Moments, Spread: w.pass.Spread, Unit: w.unit,
+	h := &RowHeader{Meats: len(w.meats), Scores: list(w.pass.Scores), Moments: len(w.pass.Moments) > 0, Spread: w.pass.Spread, Unit: w.unit,
 		MaxLeverage: real(r.MaxLeverage), LoneRows: r.LoneRows, HeavyRows: r.HeavyRows, LoneUsed: w.lone.used, Read: r.read, Bytes: r.Bytes,
 		LoneTerms: w.loneT, LoneLevels: w.loneC}
 	for _, m := range w.rowMeats() {
@@ -185,7 +185,7 @@ func LoadRows(ctx context.Context, s *State, rp RowPass, h *RowHeader, next func
 	if s.Apart != nil && len(rp.Scores) > 0 {
 		return nil, errApartRounds
 	}
-	if h.Meats != len(rp.Weights) || !slices.Equal(h.Scores, rp.Scores) || h.Moments != rp.Moments || h.Spread != rp.Spread {
+	if h.Meats != len(rp.Weights) || !slices.Equal(h.Scores, rp.Scores) || h.Moments != (len(rp.Moments) > 0) || h.Spread != rp.Spread {
 		return nil, errHeader
 	}
 	pool := newGroupPool(&o)

@@ -55,7 +55,10 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	if err := f.clusters(); err != nil {
 		return nil, err
 	}
-	r := f.result()
+	r, err := f.result()
+	if err != nil {
+		return nil, err
+	}
 	if f.fail != nil {
 		return nil, f.fail
 	}
@@ -311,7 +314,15 @@ func (f *fitter) passOver(series *accum.SeriesPass) (rp accum.RowPass, lever boo
 			}
 		}
 	}
-	rp.Moments = f.plan.moments && x.apart == nil && len(s.Columns) <= momentsMost
+	if x.apart == nil && len(s.Columns) <= momentsMost {
+		if f.plan.moments {
+			rp.Moments = slices.Clone(f.keys)
+		}
+		if f.plan.deals {
+			f.keys = append(f.keys, f.d.Buckets)
+			rp.Moments = append(rp.Moments, f.d.Buckets)
+		}
+	}
 	rp.Scores = f.keys
 	rp.Weights = f.weights(f.kinds, 0)
 	rp.Series = series

@@ -56,6 +56,10 @@ type Options struct {
 	AutoLags bool
 	// Order places rows in time for hac; nil for the order of the input.
 	Order *RowOrder
+	// Buckets is how many replicates the audit has, LeastBuckets to MostBuckets, or 0
+	// for as many as the data give, up to UsualBuckets. There is one if the design
+	// deals rows to cells (stream.Spec.Buckets), as many as AuditCells says.
+	Buckets int
 	// Shape asks for Result.Clusterings.
 	Shape bool
 	// Timings asks for Run.Timings.

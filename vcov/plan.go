@@ -42,6 +42,8 @@ type Plan struct {
 	rows   bool          // a row pass is needed
 	// moments: the row pass sums the second moments of clusters.
 	moments bool
+	// deals: the row pass sums the buckets of the audit.
+	deals bool
 
 	hypotheses [][]stream.Restriction
 }
@@ -114,6 +116,9 @@ func (o *Options) validate(d *stream.Design) error {
 		return err
 	}
 	if err := o.checkLags(); err != nil {
+		return err
+	}
+	if err := o.checkAudit(d); err != nil {
 		return err
 	}
 	if _, ok := arithmetics[o.Arithmetic]; !ok {
@@ -222,7 +227,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if len(full) > 0 {
 		unique.two += moments - scores
 	}
-	if (rows || hc) && !ordered && !(cats && len(clusters) > 0) {
+	if (rows || hc) && !ordered && !(cats && (len(clusters) > 0 || d.Buckets >= 0)) {
 		if err := p.planCells(ctx, src, d, &o, &unique); err != nil {
 			return nil, err
 		}
@@ -239,6 +244,15 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		}
 		rows = true
 		p.why("robust errors with category terms are summed row by row")
+	}
+	if cats && d.Buckets >= 0 {
+		if o.Passes == 1 {
+			return nil, stream.Usef("passes: the audit with category terms needs two passes; leave out --passes 1")
+		}
+		if !rows {
+			p.why("the buckets of the audit with category terms are summed in a second pass")
+		}
+		rows, p.deals = true, true
 	}
 	if len(clusters) > 0 && len(full) == 0 && !rows && o.Passes == 0 && info.Rewindable {
 		one := moments
@@ -327,6 +341,14 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 			p.cost("lags", c*(c+float64(o.Lags))*costLag)
 		}
 		route = append(route, "row pass")
+	}
+	if d.Buckets >= 0 {
+		if !cats {
+			p.needs.Clusters = append(p.needs.Clusters, d.Buckets)
+			p.needs.Keep = true
+		}
+		p.cost("buckets", costKey+c*(c+1)/2*costClusterPair)
+		route = append(route, "buckets")
 	}
 	if len(route) == 0 {
 		route = append(route, "second moments")

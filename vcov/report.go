@@ -18,7 +18,7 @@ const Version = "0.1.0"
 var weightNames = map[stream.WeightKind]string{stream.Frequency: "frequency", stream.Precision: "precision", stream.Sampling: "sampling"}
 
 // result assembles the plain-data result.
-func (f *fitter) result() *Result {
+func (f *fitter) result() (*Result, error) {
 	x, s, d := f.sol, f.state, f.d
 	r := &Result{Format: Format, Version: Version, Outcome: d.OutcomeText(), N: x.n, Rank: x.rank(),
 		Aliased: append([]Alias{}, x.alias...), BaseLevels: x.bases, Hypotheses: []Hypothesis{}, Errors: []Errors{}}
@@ -70,6 +70,9 @@ func (f *fitter) result() *Result {
 	}
 	f.shapes(r)
 	f.several(r)
+	if err := f.audit(r); err != nil {
+		return nil, err
+	}
 	r.SpreadTest = f.spreadTest()
 	r.Leverage = f.leverageSummary()
 	f.warnings(r)
@@ -85,7 +88,7 @@ func (f *fitter) result() *Result {
 			r.Run.ArithmeticReason = "asked for"
 		}
 	}
-	return r
+	return r, nil
 }
 
 // fitQuality fills residual, R2 and adjusted R2. With mean-1 weights for precision
@@ -224,6 +227,13 @@ func (f *fitter) model() Model {
 	m.Hypotheses, m.Adjust = []string{}, f.o.Adjust
 	for _, h := range f.plan.hypotheses {
 		m.Hypotheses = append(m.Hypotheses, hypothesisText(h))
+	}
+	if b := sp.Buckets; b != nil {
+		by := ""
+		if b.Key >= 0 {
+			by = d.Keys[b.Key].Text
+		}
+		m.Audit = ptr(AuditText(f.o.Buckets, by))
 	}
 	if sp.Stop {
 		m.Missing = "stop"

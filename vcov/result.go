@@ -63,8 +63,10 @@ type Result struct {
 	Leverage *LeverageSummary `json:"leverage,omitempty"`
 	// Clusterings describe the clusters of each clustering, if asked for.
 	Clusterings []*Clustering `json:"clusterings,omitempty"`
-	Run         Run           `json:"run"`
-	Warnings    []Warning     `json:"warnings"`
+	// Audit holds the errors beside those of replicates, if asked for.
+	Audit    *Audit    `json:"audit,omitempty"`
+	Run      Run       `json:"run"`
+	Warnings []Warning `json:"warnings"`
 }
 
 // Model echoes what was asked.
@@ -78,9 +80,10 @@ type Model struct {
 	Cluster    []string `json:"cluster"`
 	Errors     []string `json:"errors"`
 	Hypotheses []string `json:"hypotheses"`
-	Adjust     string   `json:"adjust"`   // "none", "holm" or "bh"
-	Missing    string   `json:"missing"`  // "skip" or "stop"
-	BadRows    string   `json:"bad_rows"` // "skip" or "stop"
+	Adjust     string   `json:"adjust"`          // "none", "holm" or "bh"
+	Audit      *string  `json:"audit,omitempty"` // see AuditText
+	Missing    string   `json:"missing"`         // "skip" or "stop"
+	BadRows    string   `json:"bad_rows"`        // "skip" or "stop"
 	Level      Number   `json:"level"`
 	Zone       string   `json:"zone"`
 }

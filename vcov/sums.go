@@ -203,7 +203,10 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 	if err := f.clusters(); err != nil {
 		return nil, err
 	}
-	r := f.result()
+	r, err := f.result()
+	if err != nil {
+		return nil, err
+	}
 	if f.fail != nil {
 		return nil, f.fail
 	}

@@ -217,7 +217,7 @@ func (s *settings) fitOptions(req request) vcov.Options {
 	return vcov.Options{
 		Errors: req.withClassical(s.weightKind == "sampling"),
 		Level:  s.level, Hypotheses: s.hypotheses, Adjust: s.adjust, Passes: s.passes, Arithmetic: s.arithmetic, Meter: new(accum.Meter), Timings: s.timings, Shape: s.clusterDetail,
-		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags, Order: req.order,
+		Draws: int(s.draws), Seed: uint64(s.seed), BootWeights: s.drawWeights, Kernel: s.kernel, Lags: s.lags, AutoLags: !s.fixedLags, Order: req.order, Buckets: s.audit.buckets,
 	}
 }
 
@@ -292,7 +292,7 @@ func (s *settings) echo(req request) vcov.Model {
 		Outcome: s.outcome, Terms: list(s.terms), Constant: !s.noConstant,
 		Weight: opt(s.weight), WeightKind: opt(s.weightKind), Where: opt(s.where),
 		Cluster: list(req.keys), Errors: list(req.names()), Hypotheses: list(s.hypotheses), Adjust: s.adjust,
-		Missing: s.missing, BadRows: s.badRows, Level: vcov.Number(s.level), Zone: s.zone.String(),
+		Audit: s.auditText(req), Missing: s.missing, BadRows: s.badRows, Level: vcov.Number(s.level), Zone: s.zone.String(),
 	}
 }
 

@@ -36,6 +36,7 @@ func findings(v *view) []string {
 	list = append(list, heavyRows(v)...)
 	list = append(list, clusterShape(v)...)
 	list = append(list, clusterDetail(v)...)
+	list = append(list, auditSays(v)...)
 	list = append(list, lostRows(v.res.Rows)...)
 	if v.truth != nil {
 		list = append(list, againstTruth(v)...)

@@ -20,6 +20,9 @@ var dataOnly = []string{"no-constant", "weight", "weight-kind", "where", "missin
 
 // fromDigests answers the question of s from digests.
 func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fitted, error) {
+	if s.audit.on {
+		return nil, stream.Usef("%s: digests do not keep sums by bucket; fit the data", s.origin("audit"))
+	}
 	rs, shut, err := openDigests(names)
 	if err != nil {
 		return nil, err

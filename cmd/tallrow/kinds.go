@@ -22,7 +22,8 @@ type request struct {
 	// crossed are the sets of keys whose joint clusters are wanted; a kind of several
 	// clusterings has the cluster len(keys) plus the place of its set.
 	crossed [][]int
-	order   *vcov.RowOrder // of hac
+	order   *vcov.RowOrder  // of hac
+	buckets *stream.Buckets // of the audit
 }
 
 // names gives the kinds as words: "cr1(quay)".
@@ -178,6 +179,7 @@ func (s *settings) parseErrors() (request, error) {
 	if ordered {
 		r.order = &vcov.RowOrder{Period: r.key(s.period), Unit: r.key(s.unit)}
 	}
+	r.deal(s.audit, s.cluster)
 	for i := range r.kinds {
 		if k := &r.kinds[i]; k.Cluster <= several {
 			k.Cluster = len(r.keys) + several - k.Cluster

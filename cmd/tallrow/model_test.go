@@ -32,6 +32,7 @@ missing = "stop"
 bad-rows = "skip"
 level = 0.9
 cluster-detail = true
+audit = 40
 draws = 999
 draw-weights = "signs"
 period = "date(t)"
@@ -69,12 +70,12 @@ func TestModelFile(t *testing.T) {
 		outcome: "log(minutes)", terms: []string{"log(pallets)", "max(tonnes, 1)", `each(barge, base="a")`},
 		noConstant: true, errors: []string{"hc1", "cr1"}, cluster: []string{"quay"},
 		hypotheses: []string{"log(pallets) = 1, constant = 0", `each(barge, level="b") = 0`}, adjust: "bh", weight: "n", weightKind: "frequency",
-		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, draws: 999, drawWeights: "signs", seed: 5, period: "date(t)", unit: "crane", fixedLags: true, lags: 3, kernel: "parzen", first: 1000,
+		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, audit: audit{on: true, buckets: 40}, draws: 999, drawWeights: "signs", seed: 5, period: "date(t)", unit: "crane", fixedLags: true, lags: 3, kernel: "parzen", first: 1000,
 		format: "csv", decimal: "comma", null: []string{"-999", "a, b"}, zone: rome,
 		kinds:  map[string]stream.Kind{"crane": stream.Text, "odd, name = x": stream.Int64},
 		passes: 2, arithmetic: "extended", workers: 16, memory: 1 << 30, scratch: "/tmp",
 	}
-	if d := cmp.Diff(want, s, cmp.AllowUnexported(settings{}), cmp.FilterPath(func(p cmp.Path) bool {
+	if d := cmp.Diff(want, s, cmp.AllowUnexported(settings{}, audit{}), cmp.FilterPath(func(p cmp.Path) bool {
 		return p.String() == "from"
 	}, cmp.Ignore()), cmp.Comparer(func(a, b *time.Location) bool { return a.String() == b.String() })); d != "" {
 		t.Error(d)

@@ -50,6 +50,7 @@ func renderText(v *view, width int) string {
 	}
 	v.writeFooter(n)
 	v.writeDetail(&b, n)
+	v.writeAudit(&b, n)
 	if list := findings(v); len(list) > 0 {
 		b.WriteString("\nWhat the errors say\n")
 		for _, f := range list {
@@ -349,6 +350,9 @@ func (v *view) writeFooter(n notes) {
 			}
 			n.add("not given", fmt.Sprintf("%s: %s", e.Name(), oneLine(why)))
 		}
+	}
+	if a := r.Audit; a != nil && a.Reason != nil {
+		n.add("not given", "audit: "+oneLine(*a.Reason))
 	}
 	for i, a := range r.Aliased {
 		if i == maxWarnings {

@@ -49,6 +49,7 @@ type settings struct {
 	quiet         bool
 	timings       bool
 	clusterDetail bool
+	audit         audit
 	draws         int64
 	seed          int64
 	drawWeights   string
@@ -341,7 +342,7 @@ func (s *settings) spec(req request) stream.Spec {
 	sp := stream.Spec{
 		Outcome: s.outcome, Terms: slices.Concat(s.terms, s.keep), NoConstant: s.noConstant,
 		Weight: s.weight, Where: s.where, Stop: s.missing == "stop",
-		Keys: req.keys, Crossed: req.crossed, Zone: s.zone,
+		Keys: req.keys, Crossed: req.crossed, Buckets: req.buckets, Zone: s.zone,
 	}
 	switch s.weightKind {
 	case "frequency":

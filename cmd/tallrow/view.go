@@ -69,6 +69,11 @@ func (v *view) document() *vcov.Result {
 			r.Hypotheses = append(r.Hypotheses, h)
 		}
 	}
+	if r.Audit != nil {
+		a := *r.Audit
+		a.Against = append([]vcov.AuditedError{}, v.audited()...)
+		r.Audit = &a
+	}
 	r.Warnings = []vcov.Warning{}
 	for _, w := range v.res.Warnings {
 		if v.tells(w) {
