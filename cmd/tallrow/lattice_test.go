@@ -48,6 +48,7 @@ stream/delimited stream/columnar accum/digest vcov bench/quaydata bench/referenc
 stream/delimited stream/columnar bench/reference < bench/sidebyside
 github.com/parquet-go/parquet-go golang.org/x/sync golang.org/x/sys < bench/sidebyside
 stream vcov gonum.org/v1/gonum github.com/google/renameio < bench/coverage
+bench/quaydata < bench/days
 
 stream/delimited stream/columnar accum/digest vcov bench/quaydata < cmd/tallrow
 github.com/spf13/cobra github.com/spf13/pflag github.com/pelletier/go-toml < cmd/tallrow
