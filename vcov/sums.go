@@ -165,6 +165,8 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 	for _, k := range o.Errors {
 		switch {
 		case k.Name == "classical":
+		case inOrder(k.Name):
+			return nil, stream.Usef("errors: %s goes by the order of rows, which sums do not keep; fit the data", k.Name)
 		case byRow(k):
 			rows = true
 		case (k.Name == "hc0" || k.Name == "hc1") && kept.Fourth:

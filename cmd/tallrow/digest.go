@@ -203,6 +203,9 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 	if err != nil {
 		return nil, err
 	}
+	if err := refuseDigests(ctx, s.data, "joins digests: tallrow pool"); err != nil {
+		return nil, err
+	}
 	p, err := a.prepare(ctx, s)
 	if err != nil {
 		return nil, err
@@ -410,13 +413,17 @@ func endsSum(name string, size int64) (string, error) {
 }
 
 // digestsAmong lists the files that data name if they are digests. Digests and data
-// together are an error.
-func digestsAmong(ctx context.Context, data []string) ([]string, error) {
+// together are an error. model says that the options name an outcome: then files that
+// are not there are told of later.
+func digestsAmong(ctx context.Context, data []string, model bool) ([]string, error) {
 	if slices.Contains(data, "-") {
 		return nil, nil
 	}
 	list, err := stream.ListFiles(ctx, data)
 	if err != nil {
+		if !model {
+			return nil, err
+		}
 		return nil, nil // told when the data are opened, after the options
 	}
 	var out []string
@@ -432,6 +439,15 @@ func digestsAmong(ctx context.Context, data []string) ([]string, error) {
 		return nil, stream.Usef("%s is a digest and %s is not; want either digests or data", out[0], other)
 	}
 	return out, nil
+}
+
+// refuseDigests is for commands that read data; instead says what takes digests.
+func refuseDigests(ctx context.Context, data []string, instead string) error {
+	names, err := digestsAmong(ctx, data, true)
+	if err == nil && len(names) > 0 {
+		err = stream.Usef("%s: is a digest, want data; what %s", names[0], instead)
+	}
+	return err
 }
 
 // openDigests opens digests; close them all.

@@ -250,7 +250,7 @@ func headOnly(ctx context.Context, src stream.Source) bool {
 
 // fit reads, solves and completes the result with what only the program knows.
 func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
-	names, err := digestsAmong(ctx, s.data)
+	names, err := digestsAmong(ctx, s.data, s.outcome != "")
 	if err != nil {
 		return nil, err
 	}

@@ -22,6 +22,9 @@ for --plan of fit, which then reads in the same way and refuses another model or
 		if err != nil {
 			return err
 		}
+		if err := refuseDigests(cmd.Context(), s.data, "answers from it needs no plan: tallrow fit"); err != nil {
+			return err
+		}
 		if err := s.checkModel(); err != nil {
 			return err
 		}

@@ -47,7 +47,7 @@ there twice, digests of other models and inputs that overlap are refused; missin
 // pool joins digests. With an incomplete run it returns what is there and a
 // *digest.MissingError.
 func (a *app) pool(ctx context.Context, s *settings) (*made, error) {
-	names, err := digestsAmong(ctx, s.data)
+	names, err := digestsAmong(ctx, s.data, false)
 	if err != nil {
 		return nil, err
 	}

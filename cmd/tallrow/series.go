@@ -29,7 +29,7 @@ type seriesFit struct {
 // eachFit fits every digest by itself. A digest without rows has no fit, with the
 // reason; other errors end it.
 func (a *app) eachFit(ctx context.Context, s *settings) (*series, error) {
-	names, err := digestsAmong(ctx, s.data)
+	names, err := digestsAmong(ctx, s.data, false)
 	if err != nil {
 		return nil, err
 	}
