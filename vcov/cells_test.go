@@ -360,3 +360,69 @@ func BenchmarkUniqueRows(b *testing.B) {
 		})
 	}
 }
+
+// Unique rows go with every way of summing and solving: collinear powers of few values,
+// in double and extended arithmetic; many levels, eliminated first; products without
+// their category; no constant.
+func TestUniqueRowsInEveryBasis(t *testing.T) {
+	const n = 9000
+	r := rand.New(rand.NewPCG(16, 1))
+	year, wet, y := make([]float64, n), make([]float64, n), make([]float64, n)
+	barge, quay := make([]string, n), make([]string, n)
+	for i := range n {
+		year[i], wet[i] = float64(2000+r.IntN(12)), float64(r.IntN(2))
+		barge[i], quay[i] = []string{"ark", "deck", "motor"}[r.IntN(3)], fmt.Sprint("q", r.IntN(9))
+		y[i] = 3*(year[i]-2005) + float64(len(barge[i])) + (1+wet[i])*r.NormFloat64()
+	}
+	tb := &table{}
+	tb.float("year", year)
+	tb.float("wet", wet)
+	tb.float("y", y)
+	tb.text("barge", barge)
+	tb.text("quay", quay)
+	src := tb.source(1500)
+	for _, c := range []struct {
+		terms string
+		none  bool
+		o     vcov.Options
+	}{
+		{terms: "year;year*year;wet"},
+		{terms: "year;year*year;wet", o: vcov.Options{Arithmetic: "double"}},
+		{terms: "year;year*year;year*wet", o: vcov.Options{Arithmetic: "extended"}},
+		{terms: "wet;each(quay);each(barge)", o: vcov.Options{Dense: 6}},
+		{terms: "wet;each(quay);each(quay)*wet;each(barge)", o: vcov.Options{Dense: 6}},
+		{terms: "each(barge)*wet;each(quay)"},
+		{terms: "each(barge)*each(quay);wet"},
+		{terms: "each(barge, base=\"none\");wet", none: true},
+		{terms: "wet;year", none: true},
+		{terms: ""},
+	} {
+		spec := stream.Spec{Outcome: "y", NoConstant: c.none}
+		if c.terms != "" {
+			spec.Terms = strings.Split(c.terms, ";")
+		}
+		o := c.o
+		o.Errors = kinds(rowKinds...)
+		one := fit(t, src, spec, o)
+		pipe := fit(t, once{src}, spec, o)
+		o.Passes = 2
+		two := fit(t, src, spec, o)
+		for what, res := range map[string]*vcov.Result{"file": one, "pipe": pipe} {
+			if res.Run.Route != "unique rows" {
+				t.Errorf("%q, %s: route %s", c.terms, what, res.Run.Route)
+			}
+			const limit = 1e-12
+			for _, name := range rowKinds {
+				e, f := errorsOf(t, two, name), errorsOf(t, res, name)
+				for j, se := range e.SE {
+					if !near(float64(f.SE[j]), float64(se), float64(se), limit) || e.P[j].Exists() != f.P[j].Exists() {
+						t.Errorf("%q, %s: %s of %s is %v, in two passes %v", c.terms, what, name, two.Terms[j], f.SE[j], se)
+					}
+				}
+				if (e.Overall == nil) != (f.Overall == nil) || e.Overall != nil && !near(float64(f.Overall.F), float64(e.Overall.F), float64(e.Overall.F), 1e3*limit) {
+					t.Errorf("%q, %s: %s together %+v, in two passes %+v", c.terms, what, name, f.Overall, e.Overall)
+				}
+			}
+		}
+	}
+}
