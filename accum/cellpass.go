@@ -105,10 +105,13 @@ func (w *secondWorker) addCells() error {
 	for r, x := range e {
 		i := from + r
 		m, s1, s2 := c.size[i], c.sum[1][i], c.sum[2][i]
-		sse := max(0, s2-s1*v[r])
+		sse, gross := max(0, s2-s1*v[r]), c.sum[0][i]
+		if c.cellRows.rows[i] == 1 {
+			sse, gross = 0, 0 // as over rows
+		}
 		t := x - v[r]
 		fourth += c.sum[4][i] + t*(4*c.sum[3][i]+t*(6*s2+t*(4*s1+m*t)))
-		c.gross[r] = math.Sqrt(c.sum[0][i] + m*x*x)
+		c.gross[r] = math.Sqrt(gross + m*x*x)
 		e[r] = math.Sqrt(sse + m*x*x)
 	}
 	if rp.Spread {

@@ -51,9 +51,9 @@ type cellSpec struct {
 	width    int // sums
 	kind     stream.WeightKind
 	extended bool
-	most     int // cells
-	local    int // cells up to which a worker keeps them to itself
-	blind    bool
+	most     int         // cells
+	local    int         // cells up to which a worker keeps them to itself
+	blind    bool        // given up early, see fewerCells
 	dropped  atomic.Bool // there were too many
 	done     int         // cells of finished epochs
 }
@@ -87,9 +87,10 @@ func newCellSpec(l *layout, extended, blind bool, bytes int64, workers int) *cel
 func (s *cellSpec) bytes() int64 { return int64(8*s.words + 16*s.width + 12 + 16) }
 
 // CellsHeld is the number of unique rows up to which pass one keeps them for a design,
-// if they may take so many bytes.
-func CellsHeld(d *stream.Design, extended bool, bytes int64) int {
-	return newCellSpec(newLayout(d), extended, false, bytes, 1).most
+// if they may take so many bytes; each takes about as many as it returns with it.
+func CellsHeld(d *stream.Design, bytes int64) (most int, each int64) {
+	s := newCellSpec(newLayout(d), false, false, bytes, 1)
+	return s.most, 2 * s.bytes() // in the table, then in order
 }
 
 // cellTable finds cells by key.
@@ -129,12 +130,12 @@ func (t *cellTable) put(h uint64, key []uint64) int32 {
 		if s == 0 {
 			break
 		}
-		own := t.keys[int(s-1)*t.words : int(s)*t.words]
-		same := true
+		own := t.keys[int(s-1)*t.words:][:len(key)]
+		var differ uint64
 		for i, x := range key {
-			same = same && own[i] == x
+			differ |= own[i] ^ x
 		}
-		if same {
+		if differ == 0 {
 			return s - 1
 		}
 	}

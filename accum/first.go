@@ -388,8 +388,10 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	b := newBudget(l, &needs, &o, unit)
 	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable
 	if needs.Cells {
-		// An input that is sampled has shown before that it suits.
-		b.cells = newCellSpec(l, extended || f == nil && o.Arithmetic == Auto, f == nil, b.cluster, b.workers)
+		// An input that is sampled has shown before that it suits; for one that can be
+		// read once only there may be no other way.
+		blind := f == nil && src.Info().Rewindable
+		b.cells = newCellSpec(l, extended || f == nil && o.Arithmetic == Auto, blind, b.cluster, b.workers)
 		if o.fewMost > 0 {
 			b.cells.local = o.fewMost
 		}

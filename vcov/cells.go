@@ -28,12 +28,12 @@ const (
 
 // cellCosts are what the planner weighs, in nanoseconds a row.
 type cellCosts struct {
-	byRow   bool    // the kinds need leverages, or have categories: else fourth moments do
-	one     float64 // what one pass takes beside unique rows
-	two     float64 // what two passes take instead
-	other   float64 // what the cheaper of fourth moments and a second pass takes
-	cells   float64 // what unique rows take
-	against string  // why they were not chosen, for a message
+	byRow           bool    // the kinds need leverages, or have categories: else fourth moments do
+	one             float64 // what one pass takes beside unique rows
+	two             float64 // what two passes take instead
+	quartic, second float64 // what fourth moments and a second pass take, where they do
+	cells           float64 // what unique rows take
+	against         string  // why they were not chosen, for a message
 }
 
 // planCells chooses unique rows, where they fit and cost less, or nothing else can do
@@ -47,7 +47,7 @@ func (p *Plan) planCells(ctx context.Context, src stream.Source, d *stream.Desig
 		return err
 	}
 	info := src.Info()
-	most := accum.CellsHeld(d, false, o.ClusterMemory)
+	most, each := accum.CellsHeld(d, o.ClusterMemory)
 	c.cells = costCell + costCellWord*float64(len(d.Dense)-1+len(d.Categories))
 	blind := s.Cells.Rows == 0
 	n := s.Cells.Estimate()
@@ -57,7 +57,7 @@ func (p *Plan) planCells(ctx context.Context, src stream.Source, d *stream.Desig
 	case n*aheadCells > float64(most):
 		few = false
 		c.against = fmt.Sprintf(" (its regressors take about %.0f distinct values, too many to keep)", n)
-	case o.Passes == 1: // they fit, and nothing else does
+	case o.Passes == 1 && c.byRow: // they fit, and nothing else does
 	case s.Whole:
 		few = false // so few rows are read twice in no time
 	case info.Rows >= 0:
@@ -69,12 +69,17 @@ func (p *Plan) planCells(ctx context.Context, src stream.Source, d *stream.Desig
 	}
 	one := c.one + c.cells
 	switch {
+	case !c.byRow && o.Passes == 1:
+		p.needs.Cells = few && info.Rewindable && c.cells < c.quartic
 	case !c.byRow:
-		p.needs.Cells = few && o.Passes == 0 && info.Rewindable && one < c.other+c.one
+		p.needs.Cells = few && info.Rewindable && c.cells < min(c.quartic, c.second)
 	case o.Passes == 1 || !info.Rewindable:
 		p.needs.Cells = few || blind
 	default:
 		p.needs.Cells = (few || blind) && one < c.two
+	}
+	if p.needs.Cells {
+		p.PerUnique = each
 	}
 	switch {
 	case !p.needs.Cells:
@@ -101,8 +106,8 @@ func (x *solution) cellsLoss(kind string, sums *accum.RowSums, i int) (r *estima
 	floor := x.zeroVariance()
 	r.noise = make([]float64, len(net))
 	for j := range net {
-		if math.IsNaN(x.est[j]) {
-			continue
+		if math.IsNaN(x.est[j]) || math.IsNaN(net[j]) || math.IsInf(net[j], 0) {
+			continue // powers of 1/(1-h) beyond float64 are not lost by cancelling
 		}
 		r.noise[j] = 64 * 0x1p-53 * gross[j] / r.factor
 		if net[j] <= r.factor*r.noise[j] && r.noise[j] <= harmless(floor[j]) {

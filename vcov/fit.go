@@ -232,6 +232,9 @@ func (f *fitter) second() error {
 		return nil
 	}
 	if !f.info().Rewindable {
+		if s.CellsLost {
+			return stream.Usef("rows with equal regressors are too many, or differ too much, to sum them together in one pass, and the input can be read once only: give --passes 2 to copy it to --scratch while it is read")
+		}
 		return stream.Usef("the errors asked for need a second pass, and the input can be read once only: give --passes 2 to copy it to --scratch while it is read")
 	}
 	f.route = "row pass"
@@ -483,11 +486,11 @@ func (f *fitter) heteroskedastic(e *Errors, k Kind) {
 	}
 	r := x.hc(k.Name, meat, blocks)
 	if f.byCells {
-		if f.loss > lossRefuse {
-			x.unavailable(e, "the squares of residuals of unique rows cancel (relative error up to %.1e); use --passes 2", f.loss)
+		var loss float64
+		if r, loss = x.cellsLoss(k.Name, f.sums, f.kindAt(k.Name)); loss > lossRefuse {
+			x.unavailable(e, "the squares of residuals of unique rows cancel (relative error up to %.1e); use --passes 2", loss)
 			return
 		}
-		r, _ = x.cellsLoss(k.Name, f.sums, f.kindAt(k.Name))
 	}
 	if fourth {
 		r.noise, r.gross = f.noise, x.projectAbs(f.gross)

@@ -33,6 +33,8 @@ type Plan struct {
 	// ClusterMemory is what the sums of clusters may take in memory; beyond it they
 	// go to scratch in sorted runs.
 	ClusterMemory int64 `json:"cluster_memory"`
+	// PerUnique is bytes for each unique row, where those are kept.
+	PerUnique int64 `json:"per_unique_row"`
 	// PerPair is bytes for each pair of levels of two categories, all workers
 	// together.
 	PerPair int64 `json:"per_pair"`
@@ -223,11 +225,11 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	second := read + row
 	keys := float64(len(clusters))
 	moments, scores := keys*(costKey+c*(c+1)/2*costClusterPair), keys*(costKey+c*costScore)
-	unique := cellCosts{byRow: rows || cats && hc, one: moments, two: second + scores, other: min(quartic, second)}
+	unique := cellCosts{byRow: rows || cats && hc, one: moments, two: second + scores, quartic: quartic, second: second}
 	if len(full) > 0 {
 		unique.two += moments - scores
 	}
-	if (rows || hc) && !ordered && !(cats && (len(clusters) > 0 || d.Buckets >= 0)) {
+	if !ordered && !(cats && d.Buckets >= 0) && ((rows || hc) && len(clusters) == 0 || rows && !cats) {
 		if err := p.planCells(ctx, src, d, &o, &unique); err != nil {
 			return nil, err
 		}
@@ -254,7 +256,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		}
 		rows, p.deals = true, true
 	}
-	if len(clusters) > 0 && len(full) == 0 && !rows && o.Passes == 0 && info.Rewindable {
+	if len(clusters) > 0 && len(full) == 0 && !rows && !p.needs.Cells && o.Passes == 0 && info.Rewindable {
 		one := moments
 		if hc {
 			one += quartic

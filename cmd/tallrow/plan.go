@@ -90,6 +90,9 @@ func renderPlan(pf *planFile, width int) string {
 	if pf.PerPair > 0 {
 		memory += fmt.Sprintf(", %s for each pair of levels of two categories", sizeText(pf.PerPair))
 	}
+	if pf.PerUnique > 0 {
+		memory += fmt.Sprintf("; %s for each unique row", sizeText(pf.PerUnique))
+	}
 	n.add("memory", memory)
 	size := "about " + sizeText(pf.Digest)
 	if pf.DigestPerCluster > 0 {

@@ -36,6 +36,7 @@ type planFile struct {
 	Clusters   int64         `json:"memory_clusters"` // beyond it sums of clusters go to scratch
 	PerLevel   int64         `json:"memory_per_level"`
 	PerPair    int64         `json:"memory_per_pair"`
+	PerUnique  int64         `json:"memory_per_unique_row"`
 	Bound      int64         `json:"memory_bound"`
 	// Digest estimates the size of a digest for these errors, and of each cluster in it.
 	Digest           int64      `json:"digest_bytes"`
@@ -93,7 +94,7 @@ func newPlanFile(ctx context.Context, p *prepared, plan *vcov.Plan) (*planFile, 
 		Model: p.s.echo(p.req), Reading: p.s.planReading(),
 		Input: planInput{Format: info.Format, Files: info.Files, Bytes: info.Bytes, Rows: info.Rows, Segments: info.Segments},
 		Terms: list(plan.Terms), Passes: plan.Passes, Route: plan.Route, Arithmetic: plan.Arithmetic,
-		Workers: plan.Workers, Memory: plan.Memory, PerCluster: plan.PerCluster, Clusters: plan.ClusterMemory, PerLevel: plan.PerLevel, PerPair: plan.PerPair, Bound: p.s.memoryBound(),
+		Workers: plan.Workers, Memory: plan.Memory, PerCluster: plan.PerCluster, Clusters: plan.ClusterMemory, PerLevel: plan.PerLevel, PerPair: plan.PerPair, PerUnique: plan.PerUnique, Bound: p.s.memoryBound(),
 		Costs: []planCost{}, Reasons: list(plan.Reasons),
 	}
 	for _, c := range plan.Costs {
