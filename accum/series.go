@@ -26,7 +26,8 @@ import (
 // first and last ones, and what reaches over its border is added in segment order.
 // All sums that meet are exact, so workers do not show.
 //
-// Time O(n P (L + P)) over the places n with gaps filled, L = Reach; memory
+// Time O(n P (L + P)) over the places n with gaps filled, L = Reach; O(n P (P + L/128))
+// for linear weights. Memory
 // O(P (L + 512)) for each worker, and twice P L for each segment that waits for one
 // before it.
 type SeriesPass struct {
@@ -38,6 +39,8 @@ type SeriesPass struct {
 	// Reach is the largest lag; Weights are those of the lags 1 to Reach.
 	Reach   int
 	Weights []float64
+	// Linear says that the weights are 1 - j/(Reach+1), for which running sums do.
+	Linear bool
 	// Direction has P entries.
 	Direction []float64
 }
@@ -628,11 +631,45 @@ func (w *seriesWorker) flush() {
 			// s m' + m s' + s s' is (m + s/2) s' and its transpose.
 			near, s := w.near[j*stride:][:n], w.win[j*w.size:(j+1)*w.size]
 			kernel.Scale(near, s[at:w.end], w.half)
-			kernel.Filter(near, s[at-reach:w.end], c.taps[l-reach:])
+			if c.pass.Linear && l >= linearFrom {
+				c.addLinear(near, s, at)
+			} else {
+				kernel.Filter(near, s[at-reach:w.end], c.taps[l-reach:])
+			}
 		}
 		kernel.Cross(w.sums, c.cols, w.win[at:], w.size, c.cols, w.near, stride, c.cols, n)
 	}
 	w.todo = 0
+}
+
+const (
+	// linearFrom is the reach from which running sums are faster.
+	linearFrom = 64
+	// linearRows is how long they run until they start anew, so that no rounding
+	// gathers in them.
+	linearRows = 128
+)
+
+// addLinear adds to near[r] the weighted sum m of the scores before place at+r, by
+//
+//	m += (L s - R)/(L+1),  R += s - s_{-L}
+//
+// with R the plain sum of the last L scores.
+func (c *seriesCommon) addLinear(near, s []float64, at int) {
+	l := c.pass.Reach
+	fresh, old := float64(l)/float64(l+1), 1/float64(l+1)
+	for len(near) > 0 {
+		n := min(len(near), linearRows)
+		var m [1]float64
+		kernel.Correlate(m[:], c.taps, s[at-l:at])
+		sum := sum4(s[at-l : at])
+		for r, v := range s[at : at+n] {
+			near[r] += m[0]
+			m[0] += float64(fresh*v) - float64(old*sum)
+			sum += v - s[at-l+r]
+		}
+		near, at = near[n:], at+n
+	}
 }
 
 // segment ends a segment.

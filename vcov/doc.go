@@ -14,6 +14,7 @@
 //	classical   t on N - k; joint F = W/q on (q, N - k)
 //	hc0..hc3    t on N - k; hc1 carries N/(N - k); joint F = W/q on (q, N - k)
 //	cr0, cr1    t on G - 1; cr1 carries G/(G-1) (N-1)/(N-k); joint (G-q)/((G-1)q) W on F(q, G-q)
+//	hac         t on N - k; N/(N - k); lags by used rows, or by period with gaps as scores of zero; joint F = W/q on (q, N - k)
 //	hypotheses  a single restriction by t, with the df of cr2's combination; several jointly, as above
 //	R2          centred if the constant lies in the span of the terms, else uncentred
 //	sigma       with weights of mean 1

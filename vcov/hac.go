@@ -23,8 +23,8 @@ import (
 // up to 23,170 periods. What is left out changes an error by about 1e-4 of it.
 //
 // A second pass sums scores with L given; where L is chosen, or may lie beyond the
-// data, another one before it sums autocovariances. Cost O(k (L + k)) a row, memory
-// O(k L) for each worker, see accum.SeriesPass.
+// data, another one before it sums autocovariances. Cost O(k (L + k)) a row, of bartlett
+// O(k^2); memory O(k L) for each worker, see accum.SeriesPass.
 
 // RowOrder says how rows follow each other in time, for hac.
 type RowOrder struct {
@@ -121,6 +121,7 @@ func (f *fitter) weigh(sp *accum.SeriesPass, span int64) error {
 	if err := accum.SeriesFits(len(f.state.Columns), sp.Reach, &f.scan); err != nil {
 		return err
 	}
+	sp.Linear = l.Kernel == "bartlett" && reach < span
 	sp.Weights = make([]float64, sp.Reach)
 	for j := range sp.Weights {
 		sp.Weights[j] = kernelWeight(l.Kernel, float64(j+1), float64(l.Bandwidth))
