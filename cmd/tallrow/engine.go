@@ -34,13 +34,7 @@ func (a *app) open(ctx context.Context, s *settings, o stream.Options) (stream.S
 			return nil, stream.Usef("%s %s: want a folder that exists", s.origin("scratch"), s.scratch)
 		}
 	}
-	// The limit does not count the program itself.
-	debug.SetMemoryLimit(s.memoryBound() - min(baseBytes, s.memoryBound()/8))
-	if os.Getenv("GOGC") == "" {
-		// Most of what is held is buffers that stay: a smaller heap costs little time
-		// and keeps the peak flat where a file has many row groups.
-		debug.SetGCPercent(50)
-	}
+	s.holdMemory()
 	src, err := stream.Open(ctx, s.data, a.stdin, formats(), o)
 	if err != nil {
 		return nil, err
@@ -50,6 +44,17 @@ func (a *app) open(ctx context.Context, s *settings, o stream.Options) (stream.S
 		src = stream.First(src, s.first)
 	}
 	return src, nil
+}
+
+// holdMemory has the collector keep to --memory.
+func (s *settings) holdMemory() {
+	// The limit does not count the program itself.
+	debug.SetMemoryLimit(s.memoryBound() - min(baseBytes, s.memoryBound()/8))
+	if os.Getenv("GOGC") == "" {
+		// Most of what is held is buffers that stay: a smaller heap costs little time
+		// and keeps the peak flat where a file has many row groups.
+		debug.SetGCPercent(50)
+	}
 }
 
 // memoryBound is --memory or its default.

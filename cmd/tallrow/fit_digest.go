@@ -23,6 +23,7 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	if s.audit.on {
 		return nil, stream.Usef("%s: digests do not keep sums by bucket; fit the data", s.origin("audit"))
 	}
+	s.holdMemory()
 	rs, shut, err := openDigests(names)
 	if err != nil {
 		return nil, err
