@@ -21,6 +21,9 @@ func (e *AskError) Error() string { return e.Msg }
 //
 // Errors: *AskError where a term or the outcome is not among those of s.
 func (s *State) Ask(d *stream.Design) (*State, error) {
+	if d.Sweep >= 0 {
+		return nil, &AskError{"the sums do not hold what each unit leaves, whose effects are to be swept out"}
+	}
 	if sameModel(s.Design, d) {
 		return s, nil
 	}

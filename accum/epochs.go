@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"io"
+	"math"
 	"slices"
 
 	"github.com/tallrow/tallrow/stream"
@@ -23,6 +24,7 @@ type epoch struct {
 	pairs    []*pairTable
 	clusters []*groupStore
 	cells    *cellStore
+	units    *groupStore // sums by unit, where effects are swept out
 	lone     []*loneTracker
 	reach    float64
 	weight   superSum
@@ -95,6 +97,14 @@ func joinWorkers(ws []*firstWorker) (*epoch, error) {
 		w.budget.drop(held)
 	}
 	e.gramX, e.fourX, e.extended, e.unit = w.gramX, w.fourX, w.wide != nil, w.budget.unit
+	if w.units != nil {
+		for _, o := range ws {
+			if err := o.units.finish(); err != nil {
+				return nil, err
+			}
+		}
+		e.units = w.units.store
+	}
 	e.gram = make([]float64, len(w.gram))
 	if w.wide != nil {
 		e.gramLow = make([]float64, len(w.gram))
@@ -139,6 +149,9 @@ func (w *epochWorker) add() error {
 		rows.addBlock(&w.block, w.lay)
 		w.frame = buildFrame(rows, w.lay.p0, w.shift)
 		w.next = max(1, 2*w.next)
+		if w.lay.design.Sweep >= 0 {
+			w.next = math.MaxInt // sums of units are of one frame
+		}
 	}
 	w.blocks++
 	return w.firstWorker.add()
@@ -160,7 +173,7 @@ func (w *epochWorker) end() error {
 		return err
 	}
 	w.epochs = append(w.epochs, e)
-	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""), w.budget.clusterStores(w.lay, w.needs), w.budget.cellStore())
+	w.firstWorker = newFirstWorker(w.lay, w.loader, w.needs, w.budget, w.lay.pairTables(w.budget.unit, w.lay.design.Spec.Weight == ""), w.budget.clusterStores(w.lay, w.needs, w.wide != nil), w.budget.cellStore())
 	w.eval.Tally = stream.Tally{}
 	return nil
 }
@@ -168,11 +181,13 @@ func (w *epochWorker) end() error {
 // runEpochs reads a source that cannot be sampled. Within the first segment an
 // epoch is 1, 1, 2, 4, ... blocks, later 1, 2, 4, ... segments; each has a frame
 // from all rows before it and its own first block, so that a file sorted by a
-// term cannot spoil the sums. Under Auto the first segment with used rows is
+// term cannot spoil the sums. Where effects of units are swept out, all epochs have the
+// frame of the first: sums of units cannot be moved without losing digits, which
+// extended arithmetic has to spare. Under Auto the first segment with used rows is
 // summed in extended arithmetic and decides about the rest.
-func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift bool, o Options) (_ []*epoch, extended bool, err error) {
+func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs *Needs, b *budget, shift, once bool, o Options) (_ []*epoch, extended bool, err error) {
 	workers := max(1, o.Workers)
-	decided := o.Arithmetic != Auto
+	decided := o.Arithmetic != Auto || once && l.design.Sweep >= 0
 	extended = o.Arithmetic != Double
 	seg, err := scan.Next(ctx)
 	if errors.Is(err, io.EOF) {
@@ -184,8 +199,8 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 	ew := &epochWorker{shift: shift}
 	ew.firstWorker = newFirstWorkers(1, l, trivialFrame(l), extended, needs, b)[0]
 	ew.eval.Extended(true) // to know what float64 leaves off
-	once := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
-	if err := p.run(ctx, []blockWorker{ew}, &begun{seg: seg}, once); err != nil {
+	none := func(context.Context) (stream.Segment, error) { return nil, io.EOF }
+	if err := p.run(ctx, []blockWorker{ew}, &begun{seg: seg}, none); err != nil {
 		return nil, false, err
 	}
 	tail := ew.eval.Tally // rows that were read but not used still count
@@ -254,6 +269,9 @@ func runEpochs(ctx context.Context, p *pass, scan stream.Scan, l *layout, needs 
 			size = 1 // still nothing to make a frame of
 		}
 		f := buildFrame(rows, l.p0, shift)
+		if i := slices.IndexFunc(epochs, func(e *epoch) bool { return e.rows > 0 }); i >= 0 && l.design.Sweep >= 0 {
+			f = epochs[i].frame
+		}
 		for _, w := range ws {
 			w.frame = f
 		}

@@ -33,9 +33,13 @@ type firstWorker struct {
 	tid    []int32
 
 	clusters []*groups // nil for keys that are not wanted
-	lone     []*loneTracker
-	zcols    [][]float64
-	cells    *cells // nil unless wanted
+	units    *groups   // sums by unit; nil unless effects are swept out
+	// What units take of the rows: columns, and room for weighted ones.
+	unitCols, unitOrder [][]float64
+	unitLow             []float64
+	lone                []*loneTracker
+	zcols               [][]float64
+	cells               *cells // nil unless wanted
 
 	reach   float64 // bound of the sum of w |(1, u)|^2 over any block
 	weight  superSum
@@ -68,11 +72,18 @@ func newBudget(l *layout, needs *Needs, o *Options, unit int) *budget {
 }
 
 // clusterStores makes the stores of the second moments of clusters in one frame.
-func (b *budget) clusterStores(l *layout, needs *Needs) []*groupStore {
-	stores := make([]*groupStore, len(l.design.Keys))
+// The sums of units follow those of the keys.
+func (b *budget) clusterStores(l *layout, needs *Needs, extended bool) []*groupStore {
+	stores := make([]*groupStore, len(l.design.Keys)+1)
 	p := l.p0 + 2
 	for _, k := range needs.Clusters {
 		stores[k] = b.pool.store(l.design.Keys[k].Kind, p*(p+1)/2, b.unit)
+	}
+	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil) {
+		if extended {
+			p *= 2
+		}
+		stores[len(stores)-1] = b.pool.store(l.design.Keys[u].Kind, p, b.unit)
 	}
 	return stores
 }
@@ -88,7 +99,7 @@ func (b *budget) cellStore() *cellStore {
 // newFirstWorkers makes the workers of one epoch.
 func newFirstWorkers(n int, l *layout, f *Frame, extended bool, needs *Needs, b *budget) []*firstWorker {
 	pairs := l.pairTables(b.unit, l.design.Spec.Weight == "")
-	stores := b.clusterStores(l, needs)
+	stores := b.clusterStores(l, needs, extended)
 	unique := b.cellStore()
 	ws := make([]*firstWorker, n)
 	for i := range ws {
@@ -136,6 +147,13 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pai
 	if unique != nil {
 		w.cells = newCells(unique)
 	}
+	if st := stores[len(stores)-1]; st != nil {
+		w.units = newUnitGroups(ld, st)
+		w.unitOrder = make([][]float64, 2*(l.p0+2))
+		if w.wide != nil && w.root != nil {
+			w.unitLow = make([]float64, 2*(l.p0+2)*stride)
+		}
+	}
 	w.nonzero, w.zero = make([]int64, l.p0), make([]int64, l.p0)
 	w.value, w.varied = make([]float64, l.p0), make([]bool, l.p0)
 	return w
@@ -182,6 +200,9 @@ func (w *firstWorker) add() error {
 			p.add(w.cats.rows[s.g][:n], w.cats.rows[s.h][:n], w.zs, s.prods)
 		}
 		w.watch.lap(StageLevels)
+	}
+	if w.units != nil {
+		w.addUnits()
 	}
 	if !w.budget.dropped.Load() {
 		for k, g := range w.clusters {
@@ -300,6 +321,11 @@ func (w *firstWorker) fold() error {
 	if w.budget.dropped.Load() {
 		return nil
 	}
+	if w.units != nil {
+		if err := w.units.fold(); err != nil {
+			return err
+		}
+	}
 	var held int64
 	for _, g := range w.clusters {
 		if g == nil {
@@ -386,7 +412,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
 	b := newBudget(l, &needs, &o, unit)
-	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable
+	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable || d.Sweep >= 0
 	if needs.Cells {
 		// An input that is sampled has shown before that it suits; for one that can be
 		// read once only there may be no other way.
@@ -422,7 +448,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		}
 		epochs = append(epochs, e)
 	} else {
-		if epochs, extended, err = runEpochs(ctx, p, scan, l, &needs, b, shift, o); err != nil {
+		if epochs, extended, err = runEpochs(ctx, p, scan, l, &needs, b, shift, !src.Info().Rewindable, o); err != nil {
 			return nil, err
 		}
 	}
@@ -445,6 +471,11 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	}
 	if refit != unit {
 		s.Coarse = true
+	}
+	if d.Sweep >= 0 {
+		if err := s.sweep(); err != nil {
+			return nil, err
+		}
 	}
 	return s, nil
 }

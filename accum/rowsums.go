@@ -16,6 +16,9 @@ type RowSums struct {
 	MeatBlocks []Blocks
 	LoneBlocks Blocks
 	Scores     []*Scores
+	// Nested tells for each of Scores whether every unit whose effects are swept out
+	// lies in one cluster; nil without a sweep. Not known of crossed keys.
+	Nested []bool
 	// MaxLeverage is the largest leverage that is not 1.
 	MaxLeverage float64
 	// LoneRows counts rows of leverage 1; LoneGram is the sum of their w z z',
@@ -187,6 +190,12 @@ func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, c
 			need, best = need || over, max(best, unit)
 		}
 		s.loneBases(w.loneC[i].nonzero, sc.LoneZero)
+		if common.scales != nil {
+			sc.unscale(common.scales, s.lay.v())
+		}
+		if s.Swept != nil {
+			out.Nested = append(out.Nested, common.nested(s, rp.Scores[i]))
+		}
 		out.Scores = append(out.Scores, sc)
 	}
 	switch {

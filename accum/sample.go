@@ -191,7 +191,7 @@ func trivialFrame(l *layout) *Frame {
 // shifted reports whether numeric terms may be shifted: the constant must lie in
 // the span of the terms as they are written.
 func (l *layout) shifted() bool {
-	return !l.design.Spec.NoConstant || l.carrier() >= 0
+	return !l.design.Spec.NoConstant || l.design.Sweep >= 0 || l.carrier() >= 0
 }
 
 // carrier returns the term that is a single category with all its levels, whose

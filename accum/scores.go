@@ -29,6 +29,7 @@ type Scores struct {
 	moments bool
 	// form fills S, and A if there is one, from the sums of a cluster.
 	form func(c *Cluster, parts []groupPart)
+	skip func(parts []groupPart) bool // clusters that do not count; nil for none
 }
 
 // Cluster is the rows of one key.
@@ -59,6 +60,9 @@ func (sc *Scores) Each(f func(c *Cluster) error) error {
 		c.A = make([]float64, sc.P*sc.P)
 	}
 	return mergeGroups(sc.stores, func(parts []groupPart) error {
+		if sc.skip != nil && sc.skip(parts) {
+			return nil
+		}
 		c.Rows = 0
 		for i := range parts {
 			c.Rows += parts[i].rows
@@ -121,6 +125,10 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 			n = s.from[j]
 		}
 		sc.Lone[1+j], sc.LoneZero[1+j] = nonzero[n], zero[n]
+	}
+	if s.Swept != nil {
+		s.sweptScores(sc, theta)
+		return sc, nil
 	}
 	z := make([]float64, p*(p+1)/2)
 	vec, mag := make([]float64, p), make([]float64, p)

@@ -117,6 +117,8 @@ type secondWorker struct {
 	spreadX superVec
 	squares []float64
 
+	swept *sweeper // nil unless effects of units are swept out
+
 	maxLever             float64
 	loneRows, heavyCount int64
 	heavy                []HeavyRow
@@ -135,6 +137,8 @@ type secondCommon struct {
 	stores  []*groupStore  // of scores, by key
 	scores  []*apartCommon // by key, where there is a group apart
 	series  *seriesCommon
+	owners  []*owners // of units, where effects are swept out
+	scales  []float64 // see State.sweptScales
 }
 
 func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPool) *secondCommon {
@@ -144,6 +148,9 @@ func newSecondCommon(s *State, rp *RowPass, unit int, o *Options, pool *groupPoo
 		if s.Apart != nil {
 			c.lever = newApartLever(rp.Eliminated, c.quad)
 		}
+	}
+	if s.means != nil {
+		c.owners, c.scales = newOwners(s, rp.Scores), s.sweptScales()
 	}
 	for range len(rp.Weights) + 2 {
 		ts := s.lay.pairTables(unit, false)
@@ -217,6 +224,10 @@ func newSecondWorker(s *State, rp *RowPass, unit int, all *secondCommon) *second
 	w.over = make([]int64, len(rp.Over))
 	w.e, w.h, w.mult = make([]float64, stride), make([]float64, stride), make([]float64, stride)
 	w.zs = make([]float64, len(w.z))
+	if s.means != nil {
+		w.swept = newSweeper(s, all.owners)
+		clear(w.z[:stride]) // the constant is swept out too
+	}
 	return w
 }
 
@@ -226,6 +237,11 @@ func (w *secondWorker) add() error {
 	w.load()
 	if err := w.findColumns(); err != nil {
 		return err
+	}
+	if w.swept != nil {
+		if err := w.sweep(); err != nil || w.block.Rows == 0 {
+			return err
+		}
 	}
 	w.watch.lap(StageLevels)
 	l, n, rp := w.lay, w.block.Rows, w.pass
@@ -272,6 +288,9 @@ func (w *secondWorker) addRows(e []float64) {
 	if rp.Whitener != nil {
 		w.leverages(h)
 		for r := range h {
+			if w.swept != nil {
+				h[r] += w.swept.inv(w.swept.ids[r])
+			}
 			if w.root != nil && !freq {
 				h[r] *= w.block.Weight[r]
 			}
@@ -491,12 +510,22 @@ func (w *secondWorker) addScores(g *groups, lone *loneTracker, key int) {
 		mult = w.mult[:n]
 		kernel.Scale(mult, w.e[:n], w.block.Weight[:n])
 	}
+	by := w.all.scales
+	if by != nil {
+		scaleColumn(w.mult[:n], mult, by[l.v()])
+		mult = w.mult[:n]
+	}
 	w.zcols = append(w.zcols[:0], mult)
 	if w.pass.moments(key) {
 		w.zcols = append(w.zcols, w.weights())
 	}
 	for j := range l.p0 + 1 {
-		w.zcols = append(w.zcols, w.col(j))
+		z := w.col(j)
+		if by != nil && by[j] != 1 {
+			z = w.zs[j*stride:][:n]
+			scaleColumn(z, w.col(j), by[j])
+		}
+		w.zcols = append(w.zcols, z)
 	}
 	for i := range l.groups {
 		for p, c := range l.groups[i].parts {
@@ -627,6 +656,12 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 		return nil, 0, err
 	}
 	defer scan.Close()
+	if s.Swept != nil {
+		if s.means == nil {
+			return nil, 0, errors.New("accum: pass two takes the means of units, and KeepMeans was not called")
+		}
+		o.Memory -= min(o.Memory/2, s.means.memory())
+	}
 	pool := newGroupPool(&o)
 	defer func() {
 		if out == nil {

@@ -33,6 +33,10 @@ type State struct {
 	// S is the (P+1) x (P+1) matrix of second moments of the internal columns and
 	// v, row by row, P = len(Columns). Weighted.
 	S []float64
+	// Swept is there where effects of units were swept out: S and Wide are then the
+	// moments within units, in which the constant is zero, and Rows, Freq, Weight and
+	// Tally.Used leave out units of one row.
+	Swept *Swept
 	// Apart is the group of categories whose columns are kept apart, since there
 	// are too many for a dense matrix; nil if all are among Columns.
 	Apart *Apart
@@ -79,8 +83,9 @@ type State struct {
 	pairCount []pairCount
 	dense     int
 	pool      *groupPool
-	base      *State // that this one was asked of, see Ask
-	from      []int  // numeric terms of base that are those of this
+	base      *State     // that this one was asked of, see Ask
+	from      []int      // numeric terms of base that are those of this
+	means     *unitMeans // see KeepMeans
 }
 
 // epochWidth is the number of columns of z in the epochs, epochTerms that of numeric
@@ -163,6 +168,9 @@ func (s *State) Shifted() bool { return s.lay.shifted() }
 // as doubles can tell, so that it repeats the constant. False without shifts.
 func (s *State) Constant(j int) bool {
 	f := s.Frame
+	if s.Swept != nil {
+		return s.Swept.Constant[j]
+	}
 	if !s.lay.shifted() || (f.White && f.T[j*f.Terms+j] != 1) {
 		return false
 	}
@@ -568,6 +576,9 @@ func (s *State) refit(unit int) int {
 				need = need || over || coarse
 				best = max(best, t.betterUnit(s.pairRows(i)))
 			}
+		}
+		if e.units != nil {
+			see(&e.units.seen, e.units.unit)
 		}
 		for _, t := range e.clusters {
 			if t != nil && !s.Dropped {

@@ -14,6 +14,7 @@ type Spec struct {
 	Keys       []string       // cluster expressions, each one clustering
 	Crossed    [][]int        // clusterings by several of Keys at once: ascending indexes
 	Buckets    *Buckets       // nil for none
+	Sweep      string         // units whose effects are swept out, "" for none; the constant is swept out with them
 	Zone       *time.Location // for hour, weekday, month, date of instants; nil is UTC
 }
 
@@ -42,6 +43,9 @@ type Design struct {
 	Categories []Category
 	// Keys are the clusterings, as in Block.Key.
 	Keys []KeyColumn
+	// Sweep is the key among Keys whose effects are swept out, -1 without. Spec.Keys
+	// stand first.
+	Sweep int
 	// Parts has, for each of Keys, the keys that it crosses; nil for an expression.
 	// Crossed keys follow the others. Their values are for KeyLabel.
 	Parts [][]int

@@ -15,6 +15,7 @@ const (
 	roleWeight  = "weight"
 	roleWhere   = "where"
 	roleKey     = "cluster"
+	roleSweep   = "sweep"
 )
 
 // binder resolves the names of one expression and checks its types.
@@ -71,6 +72,8 @@ func (b *binder) bind(n *node) error {
 		case roleTerm:
 		case roleKey:
 			return b.errorf(n.pos, "found %s; a cluster is named by %s alone", n, n.args[0])
+		case roleSweep:
+			return b.errorf(n.pos, "found %s; units are named by %s alone", n, n.args[0])
 		default:
 			return b.errorf(n.pos, "found %s, which can only stand in the terms", n)
 		}

@@ -206,6 +206,9 @@ func (c *compiler) design() error {
 	if spec.Weight != "" && spec.WeightKind == NoWeight {
 		return Usef("the weight %s has no kind, want frequency, precision or sampling", quoteExpr(spec.Weight, 0))
 	}
+	if len(spec.Terms) == 0 && spec.Sweep != "" {
+		return Usef("the model has no terms beside the effects of %s that are swept out, want at least one", spec.Sweep)
+	}
 	if len(spec.Terms) == 0 && spec.NoConstant {
 		return Usef("the model has neither terms nor a constant, want at least one term")
 	}
@@ -253,6 +256,9 @@ func (c *compiler) design() error {
 		col, out := c.key(n)
 		d.Keys, p.keys = append(d.Keys, col), append(p.keys, out)
 	}
+	if err := c.sweep(); err != nil {
+		return err
+	}
 	if err := c.crossedKeys(); err != nil {
 		return err
 	}
@@ -260,6 +266,33 @@ func (c *compiler) design() error {
 		return err
 	}
 	c.names()
+	return nil
+}
+
+// sweep finds or adds the key whose effects are swept out.
+func (c *compiler) sweep() error {
+	d, spec := c.d, &c.d.Spec
+	d.Sweep = -1
+	if spec.Sweep == "" {
+		return nil
+	}
+	if len(d.Categories) > 0 {
+		return Usef("the effects of %s are swept out, and each(%s) is a category: this version sweeps beside numeric terms only; write its levels out as terms, such as %s == \"...\"",
+			spec.Sweep, d.Categories[0].Text, d.Categories[0].Text)
+	}
+	n, err := c.read(roleSweep, spec.Sweep)
+	if err != nil {
+		return err
+	}
+	if !n.readsColumn() {
+		return c.bind.errorf(0, "the units whose effects are swept out read no column, want an expression that does")
+	}
+	if d.Sweep = slices.IndexFunc(d.Keys, func(k KeyColumn) bool { return k.Text == n.String() }); d.Sweep < 0 {
+		col, out := c.key(n)
+		d.Sweep = len(d.Keys)
+		d.Keys, c.prog.keys = append(d.Keys, col), append(c.prog.keys, out)
+	}
+	spec.NoConstant = true // it is a sum of the units' indicators
 	return nil
 }
 

@@ -210,6 +210,9 @@ func (d *dense) adjusted(kind string) *mat.Dense {
 		eig.VectorsTo(&vec)
 		s := make([]float64, d.k)
 		for q, l := range eig.Values(nil) {
+			if l < 1e-9 {
+				continue // a column lives in the cluster: the pseudo-inverse
+			}
 			p := -0.5
 			if kind == "cr3" {
 				p = -1

@@ -159,7 +159,7 @@ type HighRow struct {
 
 // leverageLimits are the leverages above which rows are counted.
 func (x *solution) leverageLimits() []float64 {
-	mean := float64(x.rank()) / float64(x.n)
+	mean := float64(int64(x.rank())+x.swept()) / float64(x.n)
 	return []float64{2 * mean, 3 * mean, 0.5, 0.99}
 }
 

@@ -21,7 +21,7 @@ import (
 // with t on G-1 and joint tests (G-q)/((G-1) q) W on F(q, G-q). Time O(K^3).
 func (x *solution) clusterRobust(kind string, c *clusterSums) *estimate {
 	k, g := x.k(), c.groups
-	r := &estimate{factor: x.clusterFactor(kind, g), df: float64(g - 1)}
+	r := &estimate{factor: x.clusterFactor(kind, g, c.nested), df: float64(g - 1)}
 	meat := c.meat
 	if c.apart != nil {
 		own := *c.apart
@@ -42,13 +42,17 @@ func (x *solution) clusterRobust(kind string, c *clusterSums) *estimate {
 	return r
 }
 
-// clusterFactor is G/(G-1) (N-1)/(N-k) for cr1, 1 for cr0.
-func (x *solution) clusterFactor(kind string, groups int) float64 {
+// clusterFactor is G/(G-1) (N-1)/(N-k) for cr1, 1 for cr0. Effects that are swept out
+// count in k unless each unit lies in one cluster.
+func (x *solution) clusterFactor(kind string, groups int, nested bool) float64 {
 	if kind == "cr0" {
 		return 1
 	}
-	g := float64(groups)
-	return g / (g - 1) * ((float64(x.n) - 1) / float64(x.df()))
+	g, df := float64(groups), x.df()
+	if nested {
+		df += x.swept()
+	}
+	return g / (g - 1) * ((float64(x.n) - 1) / float64(df))
 }
 
 // clusterJoint is (G-q)/((G-1) q) W on F(q, G-q) (the scaling of Hotelling 1931).
@@ -66,6 +70,7 @@ func clusterJoint(g int) func(float64, int) (float64, float64, bool, string) {
 type clusterSums struct {
 	scores    *accum.Scores
 	groups    int
+	nested    bool // every unit whose effects are swept out lies in one cluster
 	rows      *Spread
 	meat      []float64  // sum_g s_g s_g' in solved coordinates
 	apart     *apartMeat // where a group of categories is kept apart

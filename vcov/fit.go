@@ -109,6 +109,9 @@ func (f *fitter) first() error {
 		return err
 	}
 	lossy := arithmetics[f.o.Arithmetic] == accum.Auto && !s.Extended && s.Frame.Lossy()
+	if f.sweepLossy() {
+		return f.sweepAgain()
+	}
 	if (lossy || f.sol.needsFrame()) && f.info().Rewindable {
 		s.Close()
 		s, err := accum.Again(f.ctx, f.src, s, f.plan.needs, f.scan)
@@ -209,6 +212,11 @@ func (f *fitter) second() error {
 		rows = true
 		f.note("second-pass", "the clusters' second moments differ too much in size to keep their digits; a second pass kept scores only")
 	}
+	if s.Swept != nil && !rows && len(f.plan.needs.Clusters) > 0 && 0x1p-53*s.Swept.Spread > lossLimit && f.info().Rewindable && f.o.Passes != 1 {
+		rows = true
+		f.plan.moments, f.plan.needs.Keep = f.plan.needs.Keep, false
+		f.note("second-pass", "what varies within %s is too small beside what varies between for the second moments of each; a second pass was made", x.unit())
+	}
 	if s.Coarse && len(s.Groups) > 0 {
 		f.note("digits", "the sums of category levels differ too much in size: small ones have lost digits")
 	}
@@ -253,6 +261,11 @@ func (f *fitter) sumRows() error {
 		}
 	}
 	rp, lever := f.passOver(series)
+	if s.Swept != nil {
+		if err := s.KeepMeans(f.o.Memory / meansShare); err != nil {
+			return err
+		}
+	}
 	if !f.plan.needs.Keep && !f.byCells {
 		s.Close() // scores come from the second pass
 	}
@@ -284,7 +297,7 @@ func (f *fitter) sumRows() error {
 		}
 		rp.Weights = f.weights(f.kinds, most)
 	}
-	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency && x.apart == nil {
+	if lever && sums.HeavyRows > 0 && sums.HeavyRows <= 1000 && x.kind != stream.Frequency && x.apart == nil && s.Swept == nil {
 		return f.heavy(rp, most)
 	}
 	return nil
@@ -329,11 +342,11 @@ func (f *fitter) passOver(series *accum.SeriesPass) (rp accum.RowPass, lever boo
 	rp.Scores = f.keys
 	rp.Weights = f.weights(f.kinds, 0)
 	rp.Series = series
-	rp.Spread = x.apart == nil && (x.kind == stream.NoWeight || x.kind == stream.Frequency)
+	rp.Spread = x.apart == nil && s.Swept == nil && (x.kind == stream.NoWeight || x.kind == stream.Frequency)
 	if len(rp.Weights) > 0 || rp.Series != nil {
 		// hc0, hc1 and hac want leverages only to find rows that alone decide a coefficient.
 		w, m := x.whitener()
-		if lever || s.LeverageBound(w) > 0.5 {
+		if lever || s.Swept != nil || s.LeverageBound(w) > 0.5 {
 			rp.Whitener, rp.K = w, m
 		}
 		if lever {
@@ -356,7 +369,9 @@ func (f *fitter) low() []float64 {
 const momentsMost = 150
 
 // perTerm is N/k.
-func (f *fitter) perTerm() float64 { return float64(f.sol.n) / float64(max(1, f.sol.rank())) }
+func (f *fitter) perTerm() float64 {
+	return float64(f.sol.n) / float64(max(1, int64(f.sol.rank())+f.sol.swept()))
+}
 
 // weights are the functions g of kinds, of the leverage.
 func (f *fitter) weights(kinds []string, most float64) []func(float64) float64 {
@@ -426,7 +441,7 @@ func (f *fitter) errorsFor(k Kind) Errors {
 		}
 	}
 	if x.df() <= 0 {
-		x.unavailable(&e, "%d rows for %d terms leave no degrees of freedom", x.n, x.rank())
+		x.unavailable(&e, "%d rows for %d terms leave no degrees of freedom", x.n, int64(x.rank())+x.swept())
 		return e
 	}
 	switch {

@@ -41,7 +41,7 @@ func (f *fitter) clusters() error {
 		if sc == nil {
 			continue
 		}
-		c := &clusterSums{}
+		c := &clusterSums{nested: f.nested(key)}
 		if full[key] && sc.Moments() && x.apart == nil && x.k() <= momentsMost {
 			c.adjusted = newAdjusted(x)
 			if f.wants(key, bootstraps) {
@@ -89,6 +89,9 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	}
 	more := adjusts(k.Name) || bootstraps(k.Name)
 	switch {
+	case more && s.Swept != nil && !missing && !sums[0].nested:
+		x.unavailable(e, "%s needs clusters that hold all rows of each %s, whose effects are swept out; here some of them have rows in several clusters", k.Name, x.unit())
+		return
 	case x.perfect:
 		df := 1.0
 		if !missing {
@@ -174,6 +177,14 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 	if x.apart != nil && x.rank() < fewest {
 		f.note("no-joint-test", "%s has no joint test of all terms: clusters join the levels of %s, which was eliminated", e.Name(), x.apart.text())
 	}
+}
+
+// nested reports whether every unit whose effects are swept out lies in one cluster.
+func (f *fitter) nested(key int) bool {
+	if i := slices.Index(f.keys, key); f.sums != nil && i >= 0 && f.sums.Nested != nil {
+		return f.sums.Nested[i]
+	}
+	return f.state.Swept != nil && key == f.d.Sweep
 }
 
 // kept reports whether pass one holds the second moments of a key for good.

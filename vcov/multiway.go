@@ -67,8 +67,13 @@ func (x *solution) multiway(kind string, w ways, sums []*clusterSums) (r *estima
 	h := mat.NewDense(k, m, half)
 	fewest := math.MaxInt
 	var noP []bool
+	// Effects that are swept out count in the factors of all sets or of none.
+	nested := false
 	for i, c := range sums {
-		f := x.clusterFactor(kind, c.groups)
+		nested = nested || c.nested && slices.Contains(w.dims, w.keys[i])
+	}
+	for i, c := range sums {
+		f := x.clusterFactor(kind, c.groups, nested)
 		var t, s mat.Dense
 		t.Mul(mat.NewDense(k, k, c.meat), h)
 		s.Mul(h.T(), &t)

@@ -168,6 +168,9 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if err := o.validate(d); err != nil {
 		return nil, err
 	}
+	if err := o.planSweep(d); err != nil {
+		return nil, err
+	}
 	hypotheses, err := o.parseHypotheses(d)
 	if err != nil {
 		return nil, err
@@ -213,6 +216,12 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 			full[e.Cluster] = true
 		}
 	}
+	if d.Sweep >= 0 && !rows {
+		if byRow = o.rowSweep(d); byRow != "" {
+			rows = true
+			p.why("%s takes the means of units off every row, which are known only after the first pass", byRow)
+		}
+	}
 	columns := float64(len(d.Uses()))
 	read := columns * costCSVField
 	if info.Format == "parquet" {
@@ -229,7 +238,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if len(full) > 0 {
 		unique.two += moments - scores
 	}
-	if !ordered && !(cats && d.Buckets >= 0) && ((rows || hc) && len(clusters) == 0 || rows && !cats) {
+	if !ordered && d.Sweep < 0 && !(cats && d.Buckets >= 0) && ((rows || hc) && len(clusters) == 0 || rows && !cats) {
 		if err := p.planCells(ctx, src, d, &o, &unique); err != nil {
 			return nil, err
 		}
@@ -256,7 +265,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		}
 		rows, p.deals = true, true
 	}
-	if len(clusters) > 0 && len(full) == 0 && !rows && !p.needs.Cells && o.Passes == 0 && info.Rewindable {
+	if len(clusters) > 0 && len(full) == 0 && !rows && d.Sweep < 0 && !p.needs.Cells && o.Passes == 0 && info.Rewindable {
 		one := moments
 		if hc {
 			one += quartic
@@ -306,10 +315,10 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if len(full) > 0 {
 		p.why("cr2, cr3, the bootstrap and the description of clusters take the second moments of every cluster")
 	}
-	if len(full) > 0 && cats {
+	if len(full) > 0 && (cats || d.Sweep >= 0 && rows) {
 		p.moments = true
 	}
-	if len(clusters) > 0 && (!rows || len(full) > 0 && !cats) {
+	if len(clusters) > 0 && (!rows || len(full) > 0 && !p.moments) {
 		for i := range d.Keys {
 			if clusters[i] && !rows || full[i] {
 				p.needs.Clusters = append(p.needs.Clusters, i)
@@ -322,6 +331,8 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		route = append(route, "cluster sums")
 		switch {
 		case p.needs.Keep: // the reason stands above
+		case d.Sweep >= 0:
+			p.why("each %s keeps its second moments: errors that join its rows need no second pass", d.Keys[d.Sweep].Text)
 		case info.Rewindable:
 			p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass keeps scores only")
 		default:
@@ -351,6 +362,13 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		}
 		p.cost("buckets", costKey+c*(c+1)/2*costClusterPair)
 		route = append(route, "buckets")
+	}
+	if d.Sweep >= 0 {
+		p.units(d, rows, int64(c)-1)
+		if len(p.needs.Clusters) == 0 {
+			p.cost("unit sums", costKey+c*costScore)
+			route = append([]string{"unit sums"}, route...)
+		}
 	}
 	if len(route) == 0 {
 		route = append(route, "second moments")
@@ -405,6 +423,11 @@ func (p *Plan) chooseArithmetic(ctx context.Context, src stream.Source, d *strea
 	switch o.Arithmetic {
 	case "double", "extended":
 		p.Arithmetic = o.Arithmetic
+		return nil
+	}
+	if d.Sweep >= 0 && !src.Info().Rewindable {
+		p.Arithmetic = "extended"
+		p.why("the input can be read once only, and whether what varies within %s is small beside what varies between is not known before", d.Keys[d.Sweep].Text)
 		return nil
 	}
 	s, err := p.takeSample(ctx, src, d, &o)

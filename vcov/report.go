@@ -29,6 +29,10 @@ func (f *fitter) result() (*Result, error) {
 	}
 	r.Rows = Rows{Read: s.Read, Used: s.Tally.Used, Missing: s.Tally.Missing, Excluded: s.Tally.Excluded,
 		Malformed: s.Malformed, ZeroWeight: s.Tally.ZeroWeight, MissingBy: s.Tally.MissingBy}
+	if s.Swept != nil {
+		r.Rows.Singleton = s.Swept.Singletons
+		r.Sweep = &Sweep{Units: x.unit(), Effects: s.Swept.Units}
+	}
 	if r.Rows.MissingBy == nil {
 		r.Rows.MissingBy = map[string]int64{}
 	}
@@ -83,7 +87,7 @@ func (f *fitter) result() (*Result, error) {
 		r.Run.UniqueRows = s.CellRows()
 	}
 	if s.Extended {
-		r.Run.Arithmetic, r.Run.ArithmeticReason = "extended", whyExtended(s.Frame)
+		r.Run.Arithmetic, r.Run.ArithmeticReason = "extended", f.whyExtended(s.Frame)
 		if f.o.Arithmetic == "extended" {
 			r.Run.ArithmeticReason = "asked for"
 		}
@@ -96,6 +100,9 @@ func (f *fitter) result() (*Result, error) {
 //
 //	sd^2 = RSS (N / sum w) / (N - k),  R2 = 1 - RSS/TSS,
 //	adjusted R2 = 1 - (1 - R2) (N - c)/(N - k),  c = 1 if centred, else 0.
+//
+// Where effects of units are swept out TSS is about the means of the units, c their
+// number and k with them.
 func (f *fitter) fitQuality(r *Result) {
 	x := f.sol
 	s2 := x.state.Frame.YInv * x.state.Frame.YInv
@@ -119,9 +126,13 @@ func (f *fitter) fitQuality(r *Result) {
 		r.R2Kind, c = "centred", 1
 	}
 	tss := x.outcomeSquares(centred) / s2
-	total := x.outcomeSquares(false) / s2
+	least := perfectShare * perfectShare * x.outcomeSquares(false) / s2
+	if x.state.Swept != nil {
+		r.R2Kind, c = "within", float64(x.swept())
+		least = x.sweptNoise() / s2
+	}
 	r.R2, r.R2Adjusted = Number(nan), Number(nan)
-	if tss > perfectShare*perfectShare*total {
+	if tss > least {
 		r2 := 1 - rss/tss
 		r.R2 = Number(r2)
 		if df > 0 {
@@ -141,10 +152,14 @@ func (f *fitter) warnings(r *Result) {
 		r.Warnings = append(r.Warnings, Warning{Code: "perfect-fit", Text: "the terms give the outcome exactly: errors are 0, and t and p do not exist"})
 	}
 	if x.df() <= 0 {
-		r.Warnings = append(r.Warnings, Warning{Code: "no-degrees-of-freedom", Text: fmt.Sprintf("%d rows for %d terms: there are no errors", x.n, x.rank())})
+		r.Warnings = append(r.Warnings, Warning{Code: "no-degrees-of-freedom", Text: fmt.Sprintf("%d rows for %d terms: there are no errors", x.n, int64(x.rank())+x.swept())})
 	}
 	if !r.R2.Exists() && !x.perfect {
-		r.Warnings = append(r.Warnings, Warning{Code: "constant-outcome", Text: "the outcome is the same in every used row; R2 does not exist"})
+		where := "every used row"
+		if s.Swept != nil {
+			where = "all rows of each " + x.unit()
+		}
+		r.Warnings = append(r.Warnings, Warning{Code: "constant-outcome", Text: fmt.Sprintf("the outcome is the same in %s; R2 does not exist", where)})
 	}
 	for i := range r.Errors {
 		e := &r.Errors[i]
@@ -182,6 +197,7 @@ func (f *fitter) warnings(r *Result) {
 		}
 		r.Warnings = append(r.Warnings, lone...)
 	}
+	f.tellSweep()
 	r.Warnings = append(r.Warnings, f.warn...)
 }
 
@@ -212,8 +228,11 @@ func (f *fitter) model() Model {
 	if sp.Where != "" {
 		m.Where = ptr(d.WhereText())
 	}
+	if d.Sweep >= 0 {
+		m.Sweep = ptr(d.Keys[d.Sweep].Text)
+	}
 	for i, k := range d.Keys {
-		if d.Parts[i] == nil {
+		if d.Parts[i] == nil && (i != d.Sweep || f.clustersBy(i)) {
 			m.Cluster = append(m.Cluster, k.Text)
 		}
 	}

@@ -55,10 +55,12 @@ type Result struct {
 	Residual   Residual          `json:"residual"`
 	R2         Number            `json:"r2"`
 	R2Adjusted Number            `json:"r2_adjusted"`
-	R2Kind     string            `json:"r2_kind"` // "centred" or "uncentred"
-	Errors     []Errors          `json:"errors"`
-	Hypotheses []Hypothesis      `json:"hypotheses"`
-	SpreadTest SpreadTest        `json:"spread_test"`
+	R2Kind     string            `json:"r2_kind"` // "centred", "uncentred" or "within"
+	// Sweep says what was swept out; nil if nothing was.
+	Sweep      *Sweep       `json:"sweep,omitempty"`
+	Errors     []Errors     `json:"errors"`
+	Hypotheses []Hypothesis `json:"hypotheses"`
+	SpreadTest SpreadTest   `json:"spread_test"`
 	// Leverage is there if a kind of errors takes the leverage of every row.
 	Leverage *LeverageSummary `json:"leverage,omitempty"`
 	// Clusterings describe the clusters of each clustering, if asked for.
@@ -74,6 +76,7 @@ type Model struct {
 	Outcome    string   `json:"outcome"`
 	Terms      []string `json:"terms"`
 	Constant   bool     `json:"constant"`
+	Sweep      *string  `json:"sweep,omitempty"` // units whose effects are swept out
 	Weight     *string  `json:"weight"`
 	WeightKind *string  `json:"weight_kind"` // "frequency", "precision", "sampling"
 	Where      *string  `json:"where"`
@@ -86,6 +89,13 @@ type Model struct {
 	BadRows    string   `json:"bad_rows"`        // "skip" or "stop"
 	Level      Number   `json:"level"`
 	Zone       string   `json:"zone"`
+}
+
+// Sweep says whose effects were swept out of outcome and terms. Effects counts them:
+// units of more than one row.
+type Sweep struct {
+	Units   string `json:"units"` // expression
+	Effects int64  `json:"effects"`
 }
 
 // Input identifies what was read.
@@ -111,6 +121,7 @@ type Rows struct {
 	Excluded   int64            `json:"excluded"`
 	Malformed  int64            `json:"malformed"`
 	ZeroWeight int64            `json:"zero_weight"`
+	Singleton  int64            `json:"singleton"` // units of one row, whose effects are swept out
 	MissingBy  map[string]int64 `json:"missing_by"`
 	// LostElsewhere is of answers from sums: see Lost.
 	LostElsewhere *Lost `json:"lost_elsewhere,omitempty"`

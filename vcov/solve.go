@@ -68,7 +68,15 @@ func solve(b *basis) *solution {
 	if b.sel == nil || b.apart != nil {
 		gross = b.projectAbs(absolute(s.S))
 	}
-	x.e = eliminateGross(g, gross, k, aliasPivot)
+	limit := gross // what cancelled in float64
+	if s.Swept != nil {
+		gross = b.projectAbs(absolute(s.Swept.Total))
+		limit = gross
+		if s.Extended {
+			limit = scaled(gross, 0x1p-50)
+		}
+	}
+	x.e = eliminateGross(g, limit, k, aliasPivot)
 	for _, j := range x.e.kept {
 		r := x.e.pivots[j]
 		if gross != nil {
@@ -82,6 +90,9 @@ func solve(b *basis) *solution {
 	x.svv = svv
 	if b.apart != nil {
 		x.svv = s.S[p*(p+1)+p] // what rounding in rss is measured by
+	}
+	if s.Swept != nil && !s.Extended {
+		x.svv = s.Swept.Total[p*(p+1)+p]
 	}
 	if x.extended() {
 		x.refine()
@@ -120,8 +131,16 @@ func (x *solution) rank() int {
 	return len(x.e.kept)
 }
 
-// df is N - k.
-func (x *solution) df() int64 { return x.n - int64(x.rank()) }
+// df is N - k, with effects that are swept out among the k.
+func (x *solution) df() int64 { return x.n - int64(x.rank()) - x.swept() }
+
+// swept is the number of effects that are swept out.
+func (x *solution) swept() int64 {
+	if s := x.state.Swept; s != nil {
+		return s.Units
+	}
+	return 0
+}
 
 // outcomeSquares is the weighted sum of squares of the outcome in units 1/YInv^2,
 // about its mean if centred.
@@ -147,6 +166,9 @@ func (x *solution) outcomeSquares(centred bool) float64 {
 	if !centred {
 		return max(0, q)
 	}
+	if s.Swept != nil {
+		return max(0, q) // about the means of units
+	}
 	if s.Shifted() || x.apart != nil {
 		return max(0, q-one*one/s.S[0])
 	}
@@ -169,7 +191,7 @@ func (x *solution) outcomeSquares(centred bool) float64 {
 // constantSpanned reports whether the constant is a combination of the terms.
 func (x *solution) constantSpanned() bool {
 	s := x.state
-	if !s.Design.Spec.NoConstant || s.Carrier() >= 0 {
+	if !s.Design.Spec.NoConstant || s.Carrier() >= 0 || s.Swept != nil {
 		return true
 	}
 	return x.besideConstant() <= aliasPivot*s.S[0]
@@ -317,6 +339,9 @@ func (x *solution) aliases() {
 			}
 			x.depend = append(x.depend, dependence{a, mat.Col(nil, 0, &c)})
 			whole := size(v)
+			if x.state.Swept != nil && whole <= 1e-9*x.sizeBefore(mat.Col(nil, a, &r)) {
+				whole = 0 // it does not vary within units
+			}
 			for t, p := range x.e.kept {
 				ct := c.AtVec(t)
 				if math.Abs(ct)*norms[t] > 1e-8*whole && whole > 0 {
@@ -448,8 +473,8 @@ func (x *solution) settle() {
 // needsFrame reports whether the frame fits the whole data so badly that digits
 // are lost, and a pass in a frame made from all rows would save them.
 func (x *solution) needsFrame() bool {
-	if x.perfect {
-		return false
+	if x.perfect || x.state.Swept != nil {
+		return false // see sweepLossy
 	}
 	most := 1e3
 	if x.state.Extended {
@@ -465,13 +490,17 @@ func (x *solution) warnings() []Warning {
 		for _, a := range x.alias {
 			names = append(names, a.Term)
 		}
-		ws = append(ws, Warning{Code: "aliased", Text: fmt.Sprintf("%s are linear combinations of others or zero in every used row; they have no estimate", list(names, 6))})
+		ws = append(ws, Warning{Code: "aliased", Text: fmt.Sprintf("%s are linear combinations of others or zero in every used row%s; they have no estimate", list(names, 6),
+			map[bool]string{true: " less the means of units"}[x.state.Swept != nil])})
 	}
 	for _, a := range x.alias {
 		if len(x.alias) > maxAlike {
 			break
 		}
 		text := fmt.Sprintf("%s is zero in every used row; it has no estimate", a.Term)
+		if x.state.Swept != nil {
+			text = fmt.Sprintf("%s does not vary within %s, whose effects are swept out; it has no estimate", a.Term, x.unit())
+		}
 		if len(a.DependsOn) > 0 {
 			text = fmt.Sprintf("%s is a linear combination of %s; it has no estimate", a.Term, list(a.DependsOn, 6))
 		}

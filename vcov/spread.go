@@ -36,6 +36,8 @@ func (f *fitter) spreadTest() SpreadTest {
 		return none("there are no degrees of freedom")
 	case x.perfect:
 		return none("the terms give the outcome exactly")
+	case s.Swept != nil:
+		return none("there is none with effects that are swept out")
 	case x.apart != nil:
 		return none("there is none with so many category levels")
 	case f.sums != nil:

@@ -20,6 +20,9 @@ func SumsFor(d *stream.Design, o Options) (needs accum.Needs, later []Kind, err 
 	if err := o.validate(d); err != nil {
 		return needs, nil, err
 	}
+	if d.Sweep >= 0 {
+		return needs, nil, stream.Usef("sweep: a digest does not keep what each value of %s leaves; sweep its effects out of the data", d.Keys[d.Sweep].Text)
+	}
 	cats := slices.ContainsFunc(d.Terms, func(t stream.Term) bool { return len(t.Categories) > 0 })
 	for _, k := range o.Errors {
 		switch {

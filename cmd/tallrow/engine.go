@@ -121,6 +121,9 @@ func (a *app) wantsSpool(s *settings, req request) bool {
 		if vcov.NeedsRows(k.Name) {
 			return true
 		}
+		if s.sweep != "" && k.Name != "classical" && (k.Cluster < 0 || k.Cluster >= len(req.keys) || req.keys[k.Cluster] != s.sweep) {
+			return true // rows less the means of their units
+		}
 	}
 	for _, t := range s.terms {
 		if strings.Contains(t, "each(") {
@@ -294,9 +297,9 @@ func (s *settings) echo(req request) vcov.Model {
 		return &t
 	}
 	return vcov.Model{
-		Outcome: s.outcome, Terms: list(s.terms), Constant: !s.noConstant,
+		Outcome: s.outcome, Terms: list(s.terms), Constant: !s.noConstant && s.sweep == "", Sweep: opt(s.sweep),
 		Weight: opt(s.weight), WeightKind: opt(s.weightKind), Where: opt(s.where),
-		Cluster: list(req.keys), Errors: list(req.names()), Hypotheses: list(s.hypotheses), Adjust: s.adjust,
+		Cluster: list(req.keys[:req.clusters:req.clusters]), Errors: list(req.names()), Hypotheses: list(s.hypotheses), Adjust: s.adjust,
 		Audit: s.auditText(req), Missing: s.missing, BadRows: s.badRows, Level: vcov.Number(s.level), Zone: s.zone.String(),
 	}
 }

@@ -167,6 +167,9 @@ func (s *settings) question(m *digest.Meta, rows *digest.Pool) (*question, error
 			return nil, stream.Usef("%s: fixed when the digest was made; leave it out", s.origin(name))
 		}
 	}
+	if s.sweep != "" {
+		return nil, stream.Usef("%s: a digest does not keep what each value of %s leaves; sweep its effects out of the data", s.origin("sweep"), s.sweep)
+	}
 	q := &question{}
 	var err error
 	if q.whole, err = m.Model.Design(); err != nil {

@@ -24,6 +24,9 @@ type request struct {
 	crossed [][]int
 	order   *vcov.RowOrder  // of hac
 	buckets *stream.Buckets // of the audit
+	// clusters is how many of keys errors are asked for by; the units whose effects are
+	// swept out may follow.
+	clusters int
 }
 
 // names gives the kinds as words: "cr1(quay)".
@@ -111,8 +114,14 @@ func (s *settings) parseErrors() (request, error) {
 		if s.weightKind == "sampling" {
 			list = []string{"hc1"}
 		}
-		if len(s.cluster) > 0 {
+		switch {
+		case len(s.cluster) > 0:
 			list = append(list, "cr1")
+		case s.sweep != "":
+			list = append(list, "cr1("+s.sweep+")")
+		}
+		if s.sweep != "" {
+			list = slices.DeleteFunc(list, func(k string) bool { return k == "hc1" }) // see vcov's warning of few rows
 		}
 	} else if len(list) == 0 {
 		return fail("found nothing, want kinds of errors such as \"classical, hc1\"")
@@ -180,6 +189,10 @@ func (s *settings) parseErrors() (request, error) {
 		r.order = &vcov.RowOrder{Period: r.key(s.period), Unit: r.key(s.unit)}
 	}
 	r.deal(s.audit, s.cluster)
+	r.clusters = len(r.keys)
+	if s.sweep != "" && !slices.Contains(r.keys, s.sweep) {
+		r.keys = append(r.keys, s.sweep)
+	}
 	for i := range r.kinds {
 		if k := &r.kinds[i]; k.Cluster <= several {
 			k.Cluster = len(r.keys) + several - k.Cluster

@@ -21,6 +21,7 @@ terms = [
   "each(barge, base=\"a\")",
 ]
 no-constant = true
+sweep = "crane"
 errors = "hc1, cr1"
 cluster = ["quay"]
 hypothesis = ["log(pallets) = 1, constant = 0", "each(barge, level=\"b\") = 0"]
@@ -68,7 +69,7 @@ func TestModelFile(t *testing.T) {
 	}
 	want := &settings{
 		outcome: "log(minutes)", terms: []string{"log(pallets)", "max(tonnes, 1)", `each(barge, base="a")`},
-		noConstant: true, errors: []string{"hc1", "cr1"}, cluster: []string{"quay"},
+		noConstant: true, sweep: "crane", errors: []string{"hc1", "cr1"}, cluster: []string{"quay"},
 		hypotheses: []string{"log(pallets) = 1, constant = 0", `each(barge, level="b") = 0`}, adjust: "bh", weight: "n", weightKind: "frequency",
 		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, audit: audit{on: true, buckets: 40}, draws: 999, drawWeights: "signs", seed: 5, period: "date(t)", unit: "crane", fixedLags: true, lags: 3, kernel: "parzen", first: 1000,
 		format: "csv", decimal: "comma", null: []string{"-999", "a, b"}, zone: rome,

@@ -72,6 +72,9 @@ var options = []option{
 	{name: "no-constant", form: formSwitch, group: "Model", on: onSums, file: true, def: "false",
 		help: "leave the constant out",
 		set:  func(s *settings, v value) error { return setSwitch(&s.noConstant, v) }},
+	{name: "sweep", value: "EXPR", group: "Model", on: onModel, file: true,
+		help: "units, such as crane: an effect of each is swept out of outcome and terms, however many there are, and the constant with them; beside numeric terms",
+		set:  func(s *settings, v value) error { s.sweep = strings.TrimSpace(v.text()); return nil }},
 	{name: "weight", value: "EXPR", group: "Model", on: onSums, file: true,
 		help: "weight of a row; needs --weight-kind",
 		set:  func(s *settings, v value) error { s.weight = strings.TrimSpace(v.text()); return nil }},
@@ -79,7 +82,7 @@ var options = []option{
 		help: "frequency (a row stands for that many), precision (inverse variance) or sampling (inverse chance of being drawn)",
 		set:  choose(func(s *settings) *string { return &s.weightKind }, "frequency", "precision", "sampling")},
 
-	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onSums, file: true, def: "classical, hc1, and cr1 with --cluster",
+	{name: "errors", value: "LIST", form: formList, group: "Errors", on: onSums, file: true, def: "classical, hc1, and cr1 with --cluster; with --sweep classical and cr1, by its units unless --cluster is given",
 		help: "kinds of errors: classical, hc0 to hc5, hc4m, cr0 to cr3, wcr, wcu (wild cluster bootstrap, hypothesis imposed or not), driscoll-kraay (periods near in time), hac (rows near in time); cr1(quay) names its clusters in place, cr1(quay, crane) two ways at once; the last one leads",
 		set:  func(s *settings, v value) (err error) { s.errors, err = splitExprs(v); return err }},
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onSums, file: true,
@@ -214,7 +217,7 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions  = []string{"checkpoint", "sweep"}
+	laterOptions  = []string{"checkpoint"}
 	laterCommands = []string{"launch"}
 )
 

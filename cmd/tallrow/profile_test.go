@@ -294,6 +294,11 @@ func TestWantsSpool(t *testing.T) {
 		{[]string{"terms", "x", "errors", "hc3"}, "-", true},
 		{[]string{"terms", "x", "errors", "hc3", "passes", "1"}, "-", false},
 		{[]string{"terms", "each(x)"}, "-", true},
+		{[]string{"terms", "x", "sweep", "g"}, "-", false},
+		{[]string{"terms", "x", "sweep", "g", "errors", "classical, cr1(g)"}, "-", false},
+		{[]string{"terms", "x", "sweep", "g", "errors", "hc1"}, "-", true},
+		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(q)"}, "-", true},
+		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(g, q)"}, "-", true},
 		{[]string{"terms", strings.Repeat("x, ", 25) + "x"}, "-", true},
 	} {
 		s := given(t, c.words...)

@@ -76,6 +76,9 @@ func (v *view) termCount() string {
 		}
 		return "the constant and " + plural(k, "term", "terms")
 	}
+	if s := v.res.Sweep; s != nil {
+		return fmt.Sprintf("%s, the effects of %s swept out,", plural(k, "term", "terms"), oneLine(s.Units))
+	}
 	return plural(k, "term", "terms")
 }
 
@@ -307,6 +310,13 @@ func (v *view) writeFooter(n notes) {
 	if more := r.Rows.Malformed - int64(len(r.Rows.Problems)); more > 0 && len(r.Rows.Problems) > 0 {
 		n.add("", fmt.Sprintf("and %s more", count(more)))
 	}
+	if s := r.Sweep; s != nil {
+		t := fmt.Sprintf("an effect of each of %s of %s", plural(s.Effects, "value", "values"), oneLine(s.Units))
+		if n := r.Rows.Singleton; n > 0 {
+			t += fmt.Sprintf("; %s left out, alone in their unit", plural(n, "row", "rows"))
+		}
+		n.add("swept out", t)
+	}
 	if r.Weight.Kind != nil {
 		w := *r.Weight.Kind + " weights"
 		if r.Model.Weight != nil {
@@ -360,7 +370,11 @@ func (v *view) writeFooter(n notes) {
 			break
 		}
 		if len(a.DependsOn) == 0 {
-			n.add("aliased", oneLine(a.Term)+" is zero in every row: it has no estimate")
+			why := " is zero in every row: it has no estimate"
+			if r.Sweep != nil {
+				why = fmt.Sprintf(" does not vary within %s: it has no estimate", oneLine(r.Sweep.Units))
+			}
+			n.add("aliased", oneLine(a.Term)+why)
 		} else {
 			n.add("aliased", fmt.Sprintf("%s follows exactly from %s: it has no estimate", oneLine(a.Term), both(shortList(a.DependsOn, 8))))
 		}
@@ -430,6 +444,9 @@ func rowsText(r vcov.Rows) string {
 	}
 	if r.ZeroWeight > 0 {
 		lost = append(lost, count(r.ZeroWeight)+" with weight zero")
+	}
+	if r.Singleton > 0 {
+		lost = append(lost, count(r.Singleton)+" alone in their unit")
 	}
 	if len(lost) == 0 {
 		return t + ", none lost"

@@ -18,6 +18,7 @@ type settings struct {
 	outcome    string
 	terms      []string
 	noConstant bool
+	sweep      string
 	weight     string
 	weightKind string
 	where      string
@@ -334,6 +335,9 @@ func (s *settings) checkModel() error {
 	if s.weight == "" && s.weightKind != "" {
 		return stream.Usef("%s without --weight", s.origin("weight-kind"))
 	}
+	if s.sweep == "" && s.given("sweep") {
+		return stream.Usef("%s: found nothing, want units such as crane", s.origin("sweep"))
+	}
 	return nil
 }
 
@@ -342,7 +346,7 @@ func (s *settings) spec(req request) stream.Spec {
 	sp := stream.Spec{
 		Outcome: s.outcome, Terms: slices.Concat(s.terms, s.keep), NoConstant: s.noConstant,
 		Weight: s.weight, Where: s.where, Stop: s.missing == "stop",
-		Keys: req.keys, Crossed: req.crossed, Buckets: req.buckets, Zone: s.zone,
+		Keys: req.keys, Crossed: req.crossed, Sweep: s.sweep, Buckets: req.buckets, Zone: s.zone,
 	}
 	switch s.weightKind {
 	case "frequency":
