@@ -14,6 +14,15 @@ type Buckets struct {
 	Cells int
 }
 
+// Cell is the cell of a value of the key.
+func (b *Buckets) Cell(k Kind, v KeyValue) int64 { return b.of(hashKey(k, v)) }
+
+// of is the cell of a hash: the share of 2^64 that it falls into.
+func (b *Buckets) of(hash uint64) int64 {
+	cell, _ := bits.Mul64(hash, uint64(b.Cells))
+	return int64(cell)
+}
+
 // MostCells bounds Buckets.Cells.
 const MostCells = 1 << 16
 
@@ -43,7 +52,7 @@ func (d *dealer) deal(segment int, b *Block, out *Vector) {
 	v := &b.Key[d.Key]
 	if v.Kind != Text {
 		for i := range dst {
-			dst[i] = d.of(hashKey(v.Kind, v.Key(i)))
+			dst[i] = d.Cell(v.Kind, v.Key(i))
 		}
 		return
 	}
@@ -51,17 +60,11 @@ func (d *dealer) deal(segment int, b *Block, out *Vector) {
 		d.dict, d.cell = v.Dict, d.cell[:0]
 	}
 	for i := len(d.cell); i < len(v.Dict.Values); i++ {
-		d.cell = append(d.cell, d.of(hashKey(Text, KeyValue{Text: v.Dict.Values[i]})))
+		d.cell = append(d.cell, d.Cell(Text, KeyValue{Text: v.Dict.Values[i]}))
 	}
 	for i, c := range v.Code[:n] {
 		dst[i] = d.cell[c]
 	}
-}
-
-// of is the cell of a hash: the share of 2^64 that it falls into.
-func (d *dealer) of(hash uint64) int64 {
-	cell, _ := bits.Mul64(hash, uint64(d.Cells))
-	return int64(cell)
 }
 
 // hashKey is a fixed hash of kind and value of a key. Texts go through FNV-1a

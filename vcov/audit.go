@@ -120,15 +120,24 @@ func AuditText(buckets int, by string) string {
 	return n + "(" + cmp.Or(by, "rows") + ")"
 }
 
+// dealt says how rows or clusters are dealt to cells; nil if there is no audit.
+func (o *Options) dealt(d *stream.Design) *stream.Buckets {
+	if o.Deal != nil {
+		return o.Deal
+	}
+	return d.Spec.Buckets
+}
+
 func (o *Options) checkAudit(d *stream.Design) error {
+	deal := o.dealt(d)
 	switch {
-	case o.Buckets == 0 && d.Buckets < 0:
+	case o.Buckets == 0 && deal == nil:
 		return nil
-	case d.Buckets < 0:
+	case deal == nil:
 		return stream.Usef("audit: found %d buckets, but the design deals no rows to cells", o.Buckets)
 	case o.Buckets != 0 && (o.Buckets < LeastBuckets || o.Buckets > MostBuckets):
 		return stream.Usef("audit: found %d buckets, want %d to %d", o.Buckets, LeastBuckets, MostBuckets)
-	case d.Spec.Buckets.Key < 0 && d.Spec.WeightKind == stream.Frequency && d.Spec.Weight != "":
+	case deal.Key < 0 && d.Spec.WeightKind == stream.Frequency && d.Spec.Weight != "":
 		return stream.Usef("audit: a row with a frequency weight stands for several, which buckets of rows cannot part; deal whole clusters, such as auto(quay)")
 	}
 	return nil
@@ -143,7 +152,8 @@ type bucket struct {
 
 // audit fills r.Audit if the design has buckets.
 func (f *fitter) audit(r *Result) error {
-	if f.d.Buckets < 0 {
+	deal := f.o.dealt(f.d)
+	if deal == nil {
 		return nil
 	}
 	x := f.sol
@@ -154,13 +164,13 @@ func (f *fitter) audit(r *Result) error {
 	a := &Audit{Clusters: []string{}, DF: Number(nan), Level: Number(f.o.Level), Status: "ok", TermDF: none, Against: []AuditedError{},
 		RandomGroups: ReplicateErrors{SE: none}, DeleteGroup: ReplicateErrors{SE: none}}
 	r.Audit = a
-	if k := f.d.Spec.Buckets.Key; k >= 0 {
+	if k := deal.Key; k >= 0 {
 		a.Clusters = append(a.Clusters, f.d.Keys[k].Text)
 	}
 	if f.o.Buckets > 0 {
 		a.Asked = ptr(f.o.Buckets)
 	}
-	why, err := f.replicate(a)
+	why, err := f.replicate(a, deal)
 	if err != nil {
 		return err
 	}
@@ -186,7 +196,7 @@ func (f *fitter) audit(r *Result) error {
 
 // replicate fills in the replicate errors, in order of coefficients, or says why there
 // are none.
-func (f *fitter) replicate(a *Audit) (why string, err error) {
+func (f *fitter) replicate(a *Audit, deal *stream.Buckets) (why string, err error) {
 	x, s := f.sol, f.state
 	switch {
 	case x.df() <= 0:
@@ -198,16 +208,27 @@ func (f *fitter) replicate(a *Audit) (why string, err error) {
 	case len(s.Columns) > momentsMost:
 		return fmt.Sprintf("the audit takes the second moments of every bucket, kept up to %d columns; the model has %d", momentsMost, len(s.Columns)), nil
 	}
+	key, cellOf := f.d.Buckets, func(k accum.Key) int64 { return int64(k.Bits) }
+	if f.o.Deal != nil {
+		key, cellOf = deal.Key, func(k accum.Key) int64 { return deal.Cell(k.Kind, k.KeyValue) }
+	}
 	var sc *accum.Scores
-	if i := slices.Index(f.keys, f.d.Buckets); f.sums != nil && i >= 0 {
+	if i := slices.Index(f.keys, key); f.sums != nil && i >= 0 && f.sums.Scores[i].Moments() {
 		sc = f.sums.Scores[i]
 	} else if s.Coarse {
 		return "the buckets' sums differ too much in size to keep their digits", nil
-	} else if sc, err = s.Scores(f.d.Buckets, x.theta, true); err != nil {
+	} else if sc, err = s.Scores(key, x.theta, true); err != nil {
 		return "", err
 	}
-	if err := sc.Each(func(*accum.Cluster) error { a.Cells++; return nil }); err != nil {
+	held := make([]bool, deal.Cells)
+	if err := sc.Each(func(c *accum.Cluster) error { held[cellOf(c.Key)] = true; return f.ctx.Err() }); err != nil {
 		return "", err
+	}
+	place := make([]int, deal.Cells) // of cells in order, with gaps left out
+	for i, h := range held {
+		if place[i] = a.Cells; h {
+			a.Cells++
+		}
 	}
 	a.Buckets = min(cmp.Or(f.o.Buckets, UsualBuckets), a.Cells/perBucket)
 	if a.Buckets < LeastBuckets {
@@ -224,11 +245,10 @@ func (f *fitter) replicate(a *Audit) (why string, err error) {
 	}
 	a.DF = Number(a.Buckets - 1)
 	list := make([]bucket, a.Buckets)
-	cell, p := 0, sc.P
+	p := sc.P
 	err = sc.Each(func(c *accum.Cluster) error {
-		// Cells come in order of hash: in turn, each bucket gets as many.
-		b := &list[cell%a.Buckets]
-		cell++
+		// In turn, in order of hash: each bucket gets as many cells.
+		b := &list[place[cellOf(c.Key)]%a.Buckets]
 		if b.s == nil {
 			b.a, b.s = make([]float64, (p+1)*(p+1)), make([]float64, p)
 		}
@@ -347,7 +367,7 @@ func (f *fitter) judge(a *Audit, r *Result, e *Errors, k Kind) AuditedError {
 	own := false // the kind holds together what the buckets hold together
 	if k.Cluster >= 0 {
 		w, _ := waysOf(f.d, k.Cluster)
-		own = len(w.dims) == 1 && w.dims[0] == f.d.Spec.Buckets.Key && !overTime(k.Name)
+		own = len(w.dims) == 1 && w.dims[0] == f.o.dealt(f.d).Key && !overTime(k.Name)
 	}
 	out.Cut = !whole && !own
 	tests := 0
@@ -387,7 +407,7 @@ func (f *fitter) judge(a *Audit, r *Result, e *Errors, k Kind) AuditedError {
 
 // instead names the kind to use where the audit finds fault with kind k, "" for none.
 func (f *fitter) instead(k Kind, own, small bool) string {
-	b := f.d.Spec.Buckets.Key
+	b := f.o.dealt(f.d).Key
 	if b >= 0 && !own {
 		return "cr1(" + f.d.Keys[b].Text + ")"
 	}

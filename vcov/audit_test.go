@@ -275,6 +275,21 @@ func TestAuditBits(t *testing.T) {
 	}
 }
 
+func TestAuditSpilled(t *testing.T) {
+	tb := quayData(6, 20_000, 9000, 1)
+	spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "crew"}, Keys: []string{"quay"}, Buckets: &stream.Buckets{Cells: 2048}}
+	want := fit(t, tb.source(3000), spec, vcov.Options{Errors: kinds("hc1", "cr3"), Memory: 1 << 30})
+	for _, workers := range []int{1, 3} {
+		r := fit(t, tb.source(3000), spec, vcov.Options{Errors: kinds("hc1", "cr3"), Memory: 1 << 20, Workers: workers, Scratch: t.TempDir(), ClusterMemory: 1 << 26})
+		if r.Run.SpilledRuns == 0 || want.Run.SpilledRuns != 0 || r.Audit.Buckets != 50 {
+			t.Errorf("%d runs on scratch, %d with memory to spare, %d buckets", r.Run.SpilledRuns, want.Run.SpilledRuns, r.Audit.Buckets)
+		}
+		if fixed(t, r) != fixed(t, want) {
+			t.Errorf("%d workers: other bits where sums went to scratch", workers)
+		}
+	}
+}
+
 func TestAuditThatCannotBe(t *testing.T) {
 	tb := quayData(4, 600, 20, 1)
 	spec := stream.Spec{Outcome: "minutes", Terms: []string{"pallets"}, Keys: []string{"quay"}, Buckets: &stream.Buckets{Cells: 2048}}

@@ -1,6 +1,9 @@
 package vcov
 
-import "github.com/tallrow/tallrow/accum"
+import (
+	"github.com/tallrow/tallrow/accum"
+	"github.com/tallrow/tallrow/stream"
+)
 
 // Kind asks for standard errors of one kind.
 type Kind struct {
@@ -58,8 +61,10 @@ type Options struct {
 	Order *RowOrder
 	// Buckets is how many replicates the audit has, LeastBuckets to MostBuckets, or 0
 	// for as many as the data give, up to UsualBuckets. There is one if the design
-	// deals rows to cells (stream.Spec.Buckets), as many as AuditCells says.
+	// deals rows to cells (stream.Spec.Buckets), as many as AuditCells says; of FitSums
+	// if Deal deals the clusters of a key that the sums hold.
 	Buckets int
+	Deal    *stream.Buckets
 	// Shape asks for Result.Clusterings.
 	Shape bool
 	// Timings asks for Run.Timings.

@@ -247,7 +247,7 @@ func (f *fitter) model() Model {
 	for _, h := range f.plan.hypotheses {
 		m.Hypotheses = append(m.Hypotheses, hypothesisText(h))
 	}
-	if b := sp.Buckets; b != nil {
+	if b := f.o.dealt(d); b != nil {
 		by := ""
 		if b.Key >= 0 {
 			by = d.Keys[b.Key].Text

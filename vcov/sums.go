@@ -190,6 +190,16 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 			return nil, stream.Usef("errors: %s depends on every row, which these sums do not hold; make a second round (tallrow digest --at), or fit the data", k.Name)
 		}
 	}
+	if o.Deal != nil {
+		switch key := o.Deal.Key; {
+		case key < 0:
+			return nil, stream.Usef("audit: rows cannot be dealt to buckets where only their sums are left; deal clusters that are held, such as auto(quay), or fit the data")
+		case !slices.Contains(kept.Clusters, key):
+			return nil, stream.Usef("audit: it needs the second moments of the clusters of %s, which were not kept; make the digest with --errors \"cr1(%s)\"", d.Keys[key].Text, d.Keys[key].Text)
+		case !slices.Contains(f.plan.needs.Clusters, key):
+			f.plan.needs.Clusters = append(f.plan.needs.Clusters, key)
+		}
+	}
 	if err := f.solve(s); err != nil {
 		return nil, err
 	}

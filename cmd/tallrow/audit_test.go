@@ -1,7 +1,9 @@
 package main
 
 import (
+	"bytes"
 	"encoding/json"
+	"math"
 	"path/filepath"
 	"strings"
 	"testing"
@@ -89,6 +91,43 @@ func TestAuditCommand(t *testing.T) {
 	out = readmeRun(t, []string{"fit", "--outcome", "minutes", "--terms", "pallets", "--errors", "hc1", "--audit", "auto(barge)", data})
 	if !strings.Contains(out, "not given audit: the clusters of barge fill") {
 		t.Errorf("few clusters:\n%s", out)
+	}
+}
+
+// Digests that hold clusters answer for buckets of them as the data do, also for fewer
+// terms than they were made for.
+func TestAuditOfDigests(t *testing.T) {
+	data := filepath.Join("..", "..", "testdata", "quays", "unloading.csv")
+	held := filepath.Join(t.TempDir(), "quays.tallrow")
+	readmeRun(t, []string{"digest", "--outcome", "minutes", "--terms", "pallets, tonnes, crew", "--errors", "hc1, cr1(quay)", "--where", "tonnes > 0 && crew > 0", "-o", held, data})
+	for _, terms := range []string{"pallets, tonnes, crew", "crew, pallets"} {
+		ask := []string{"fit", "--outcome", "minutes", "--terms", terms, "--errors", "hc1", "--audit", "auto(quay)", "--json"}
+		var want, got vcov.Result
+		for _, x := range []struct {
+			to   *vcov.Result
+			args []string
+		}{{&want, []string{"--where", "tonnes > 0 && crew > 0", data}}, {&got, []string{held}}} {
+			text := readmeRun(t, append(ask[:len(ask):len(ask)], x.args...))
+			if err := validate(t, compiledSchema(t), []byte(text)); err != nil {
+				t.Fatal(err)
+			}
+			if err := json.Unmarshal([]byte(text), x.to); err != nil {
+				t.Fatal(err)
+			}
+		}
+		near := cmp.Comparer(func(a, b vcov.Number) bool { return a == b || math.Abs(float64(a/b)-1) < 1e-10 })
+		if d := cmp.Diff(want.Audit, got.Audit, near); d != "" {
+			t.Errorf("%s: (-data +digest)\n%s", terms, d)
+		}
+		if *got.Model.Audit != "auto(quay)" || got.Audit.Status != "ok" {
+			t.Errorf("%s: %+v", terms, got.Audit)
+		}
+	}
+	for by, want := range map[string]string{"auto(rows)": "only their sums are left", "auto(crane)": "holds no sums of clusters by crane"} {
+		var out, errs bytes.Buffer
+		if run(t.Context(), []string{"fit", "--outcome", "minutes", "--terms", "crew", "--errors", "hc1", "--audit", by, held}, strings.NewReader(""), &out, &errs) != 2 || !strings.Contains(errs.String(), want) {
+			t.Errorf("%s: %s", by, errs.String())
+		}
 	}
 }
 

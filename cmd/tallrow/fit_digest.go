@@ -20,9 +20,6 @@ var dataOnly = []string{"no-constant", "weight", "weight-kind", "where", "missin
 
 // fromDigests answers the question of s from digests.
 func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fitted, error) {
-	if s.audit.on {
-		return nil, stream.Usef("%s: digests do not keep sums by bucket; fit the data", s.origin("audit"))
-	}
 	s.holdMemory()
 	rs, shut, err := openDigests(names)
 	if err != nil {
@@ -67,6 +64,15 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 			}
 		}
 	}
+	if b := q.req.buckets; b != nil {
+		deal := *b
+		if deal.Key >= 0 {
+			if deal.Key, err = q.key(p.Meta, deal.Key); err != nil {
+				return nil, err
+			}
+		}
+		opts.Deal = &deal
+	}
 	kept := vcov.Kept{Fourth: p.Meta.Header.Fourth, Clusters: p.Meta.Header.Clusters}
 	needs := accum.Needs{Keep: true}
 	for _, k := range opts.Errors {
@@ -80,6 +86,9 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 				}
 			}
 		}
+	}
+	if d := opts.Deal; d != nil && slices.Contains(kept.Clusters, d.Key) && !slices.Contains(needs.Clusters, d.Key) {
+		needs.Clusters = append(needs.Clusters, d.Key)
 	}
 	state, err := accum.Load(ctx, q.whole, p.Meta.Header, p.Next, needs, accum.Options{Workers: s.workers, Memory: opts.Memory, Scratch: s.scratch})
 	if err != nil {
