@@ -19,8 +19,8 @@ import (
 // unit with most of them.
 //
 // The weights of the quadratic spectral kernel never end: lags are summed up to 20 S,
-// and further as long as reach times periods is below 2^29, which takes in all of them
-// up to 23,170 periods. What is left out changes an error by about 1e-4 of it.
+// and further as long as reach times rows (periods, if more) is below 2^29, which takes
+// in all of them up to 23,170 rows. What is left out changes an error by about 1e-4 of it.
 //
 // A second pass sums scores with L given; where L is chosen, or may lie beyond the
 // data, another one before it sums autocovariances. Cost O(k (L + k)) a row, of bartlett
@@ -33,7 +33,7 @@ type RowOrder struct {
 	Period, Unit int
 }
 
-// quadraticWork is reach times periods up to which the quadratic spectral kernel is
+// quadraticWork is reach times rows up to which the quadratic spectral kernel is
 // summed beyond 20 bandwidths.
 const quadraticWork = 1 << 29
 
@@ -111,7 +111,7 @@ func (f *fitter) weigh(sp *accum.SeriesPass, span int64) error {
 	l := &f.series.lags
 	reach := l.Lags
 	if l.Kernel == "quadratic" {
-		reach = max(int64(math.Ceil(20*float64(l.Bandwidth))), quadraticWork/span)
+		reach = max(int64(math.Ceil(20*float64(l.Bandwidth))), quadraticWork/max(span, f.state.Rows))
 		if reach < span-1 {
 			l.Reach = &reach
 		}

@@ -351,9 +351,9 @@ func TestHACRunningSums(t *testing.T) {
 		s := newSeriesTable(rand.New(rand.NewPCG(uint64(i), 73)), (o.quays+1)/2, 1000, 0.9, 0.03)
 		for _, lags := range []int64{63, 64, 200, 399} {
 			v := s.byPairs(o.order, false, "bartlett", float64(lags+1))
-			for _, segment := range []int{90, 1e6} {
+			for segment, arithmetic := range map[int]string{90: "double", 1e6: "extended"} {
 				res := fit(t, s.tb.source(segment), stream.Spec{Outcome: "y", Terms: []string{"a", "b"}, Keys: []string{"day", "quay"}},
-					vcov.Options{Errors: hacKind(), Order: o.order, Lags: lags})
+					vcov.Options{Errors: hacKind(), Order: o.order, Lags: lags, Arithmetic: arithmetic})
 				e := errorsOf(t, res, "hac")
 				for i := range 3 {
 					for j := range 3 {
@@ -465,6 +465,49 @@ func TestHACRefusals(t *testing.T) {
 		case c.want != "" && (e.Status == "ok" || !strings.Contains(*e.Reason, c.want)):
 			t.Errorf("%d lags: %v, want %s", c.lags, e.Reason, c.want)
 		}
+	}
+}
+
+// Beyond the bound of work the weights of the quadratic kernel are cut off, which is
+// told and hardly shows.
+func TestHACQuadraticIsCut(t *testing.T) {
+	if testing.Short() {
+		t.Skip("sums all pairs of 30,000 rows")
+	}
+	s := newSeriesTable(rand.New(rand.NewPCG(3, 74)), 1, 40_000, 0.5, 0)
+	n := len(s.y)
+	if n < 24_000 {
+		t.Fatalf("%d rows are too few to be cut", n)
+	}
+	d := &dense{y: s.y}
+	mean := 0.0
+	for i := range n {
+		mean += s.a[i] / float64(n)
+	}
+	for i := range n {
+		d.x, d.w = append(d.x, []float64{1, s.a[i] - mean}), append(d.w, 1)
+	}
+	d.solve()
+	sums := make([]float64, n) // by lag
+	var size float64
+	for i := range n {
+		size += d.x[i][1] * d.x[i][1]
+		for j := range i + 1 {
+			sums[i-j] += d.e[i] * d.x[i][1] * d.e[j] * d.x[j][1]
+		}
+	}
+	v := sums[0]
+	for j := 1; j < n; j++ {
+		v += 2 * kernelAt("quadratic", float64(j)/7) * sums[j]
+	}
+	want := math.Sqrt(v*float64(n)/float64(n-2)) / size
+	res := fit(t, s.tb.source(5000), stream.Spec{Outcome: "y", Terms: []string{"a"}}, vcov.Options{Errors: hacKind(), Kernel: "quadratic", Lags: 7})
+	e := errorsOf(t, res, "hac")
+	if e.Lags.Reach == nil || *e.Lags.Reach >= int64(n) || *e.Lags.Reach < 140 {
+		t.Fatalf("reach %+v of %d rows", e.Lags, n)
+	}
+	if got := float64(e.SE[1]); math.Abs(got-want) > 2e-4*want {
+		t.Errorf("%v, from all lags %v", got, want)
 	}
 }
 
