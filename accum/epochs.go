@@ -119,14 +119,25 @@ func joinWorkers(ws []*firstWorker) (*epoch, error) {
 	return e, nil
 }
 
-// joinVaried joins what is known of the nonzero cells of numeric terms: one of
-// them (0: there is none) and whether they differ.
+// joinVaried joins what is known of the nonzero cells of numeric terms: whether they
+// differ, and if not their value (0: there is none, or it is of no more use).
 func joinVaried(value []float64, varied []bool, v []float64, d []bool) {
 	for j, x := range v {
 		if value[j] == 0 {
 			value[j] = x
 		}
 		varied[j] = varied[j] || d[j] || (x != 0 && x != value[j])
+	}
+	settleVaried(value, varied)
+}
+
+// settleVaried forgets the cells that came first where others differ: which those were
+// depends on workers and on the order of joining.
+func settleVaried(value []float64, varied []bool) {
+	for j, d := range varied {
+		if d {
+			value[j] = 0
+		}
 	}
 }
 

@@ -381,4 +381,6 @@ func (p *pass) number(base int) {
 
 // RunBase is what is added to the segment numbers of a run of a state that was loaded
 // from several.
-func RunBase(run int) int { return run << 40 }
+func RunBase(run int) int { return run << runShift }
+
+const runShift = 40

@@ -198,7 +198,13 @@ func (t *loneTracker) MarshalJSON() ([]byte, error) {
 		}
 		return out
 	}
-	return json.Marshal(loneDoc{list(t.nonzero), list(t.zero), t.value})
+	value := slices.Clone(t.value)
+	for j := range value {
+		if t.zero[j].in == inMany { // it is of no more use, and which came first is chance
+			value[j] = 0
+		}
+	}
+	return json.Marshal(loneDoc{list(t.nonzero), list(t.zero), value})
 }
 
 func (t *loneTracker) UnmarshalJSON(b []byte) error {
@@ -230,7 +236,8 @@ func (s *State) Header() *Header {
 		Bytes: s.Bytes, Unread: s.Unread, Problems: s.Problems}
 	for _, e := range s.retained() {
 		c := &Section{Frame: e.frame, Extended: e.extended, Unit: e.unit, Rows: e.rows, Freq: e.freq, Reach: real(e.reach),
-			NonZero: e.nonzero, Value: e.value, Varied: e.varied, Lone: e.lone}
+			NonZero: e.nonzero, Value: slices.Clone(e.value), Varied: e.varied, Lone: e.lone}
+		settleVaried(c.Value, c.Varied)
 		for _, t := range e.tables {
 			c.Tables = append(c.Tables, t.partials)
 		}
@@ -263,8 +270,8 @@ func (s *State) retained() []*epoch {
 func (s *State) Records(f func(*Record) error, hide Hide) error {
 	var r Record
 	for _, n := range slices.Sorted(maps.Keys(s.checks)) {
-		c := s.checks[n]
-		r = Record{What: SegmentCheck, Key: binary.BigEndian.AppendUint64(nil, uint64(n)), Label: strconv.Itoa(n), Rows: c.rows, Sums: []Whole{fixed{0, c.sum}.whole()}}
+		c, run, n := s.checks[n], n>>runShift, n&(RunBase(1)-1)
+		r = Record{What: SegmentCheck, Table: run, Key: binary.BigEndian.AppendUint64(nil, uint64(n)), Label: strconv.Itoa(n), Rows: c.rows, Sums: []Whole{fixed{0, c.sum}.whole()}}
 		if err := f(&r); err != nil {
 			return err
 		}

@@ -34,7 +34,6 @@ import (
 	"crypto/sha256"
 	"encoding/hex"
 	"encoding/json"
-	"errors"
 	"fmt"
 	"slices"
 	"time"
@@ -216,9 +215,6 @@ func (m *Model) Design() (*stream.Design, error) {
 	d, err := stream.NewDesign(spec, schema)
 	if err != nil {
 		return nil, err
-	}
-	if len(m.Hidden) != len(d.Keys) {
-		return nil, errors.New("hidden keys do not fit the keys")
 	}
 	for i, h := range m.Hidden {
 		if h {

@@ -13,6 +13,7 @@ import (
 	"strings"
 
 	"github.com/parquet-go/parquet-go"
+	"github.com/parquet-go/parquet-go/format"
 
 	"github.com/tallrow/tallrow/accum"
 )
@@ -35,8 +36,8 @@ type Reader struct {
 
 const readRows = 64
 
-// Is reports whether a file calls itself a digest. It reads the end of the file only
-// and trusts nothing else of it.
+// Is reports whether a file calls itself a digest, be it damaged. It reads the ends of
+// the file only and trusts nothing else of it.
 func Is(name string) bool {
 	f, err := os.Open(name)
 	if err != nil {
@@ -47,9 +48,14 @@ func Is(name string) bool {
 	if err != nil || !st.Mode().IsRegular() {
 		return false
 	}
-	_, ok := footer(f, st.Size())
-	return ok
+	tail, ok := footer(f, st.Size())
+	head := make([]byte, len(magic))
+	f.ReadAt(head, 0) // a file without a head has other bytes there
+	return ok && (string(head) == magic || bytes.HasSuffix(tail, []byte(magic)))
 }
+
+// magic is at both ends of a Parquet file.
+const magic = "PAR1"
 
 // footer returns the last bytes of a Parquet file that has a checksum of ours.
 func footer(f *os.File, size int64) ([]byte, bool) {
@@ -136,19 +142,64 @@ func (r *Reader) open() (err error) {
 	if err := r.Meta.check(); err != nil {
 		return &DamageError{r.Path, err.Error()}
 	}
+	if err := r.shape(pf); err != nil {
+		return &DamageError{r.Path, err.Error()}
+	}
 	r.r = parquet.NewGenericReader[row](pf)
 	return nil
 }
 
-// check holds the order that pooling relies on.
-func (m *Meta) check() error {
-	last := ""
-	var sections []*accum.Section
-	if m.Header != nil {
-		sections = m.Header.Sections
-	} else if len(m.Second.Places) != len(m.Runs) {
-		return errors.New("its runs have no places")
+// shape holds the columns and their compression to what Writer makes: the library
+// reads more, and takes memory for it that the file does not bound.
+func (r *Reader) shape(pf *parquet.File) error {
+	if want := parquet.SchemaOf(row{}).String(); pf.Schema().String() != want {
+		return errors.New("its columns are not those of a digest")
 	}
+	for _, g := range pf.Metadata().RowGroups {
+		for _, c := range g.Columns {
+			m := &c.MetaData
+			if m.Codec != format.Zstd {
+				return fmt.Errorf("found columns with the compression %s, want ZSTD", m.Codec)
+			}
+			if m.TotalCompressedSize < 0 || m.TotalCompressedSize > r.Size || m.DataPageOffset < 0 || m.DataPageOffset > r.Size {
+				return errors.New("a column reaches beyond its end")
+			}
+		}
+	}
+	return nil
+}
+
+// mostParts is the largest number of parts of a run.
+const mostParts = 1_000_000
+
+// check holds what the rest of the program relies on without looking again.
+func (m *Meta) check() error {
+	if err := m.Model.check(); err != nil {
+		return err
+	}
+	var sections []*accum.Section
+	var clusters []int
+	if m.Header != nil {
+		sections, clusters = m.Header.Sections, m.Header.Clusters
+	} else {
+		if len(m.Second.Places) != len(m.Runs) {
+			return errors.New("its runs have no places")
+		}
+		if slices.ContainsFunc(m.Second.Places, func(i int) bool { return i < 0 || i > mostParts }) {
+			return errors.New("its runs are out of place")
+		}
+		for _, k := range m.Second.Kinds {
+			if k.Cluster < -1 || k.Cluster >= len(m.Model.Hidden) {
+				return errors.New("it has errors by a key that is not there")
+			}
+		}
+	}
+	for i, k := range clusters {
+		if k < 0 || k >= len(m.Model.Hidden) || i > 0 && k <= clusters[i-1] {
+			return errors.New("it has clusters of a key that is not there")
+		}
+	}
+	last := ""
 	for _, c := range sections {
 		if c == nil || c.Frame == nil {
 			return errors.New("a section has no frame")
@@ -165,8 +216,31 @@ func (m *Meta) check() error {
 			return errors.New("its runs are out of order")
 		}
 		last = r.ID
-		if !slices.IsSorted(r.Have) || len(r.Have) > 0 && (r.Have[0] < 0 || r.Have[len(r.Have)-1] >= r.Parts) {
-			return errors.New("its parts are out of order")
+		if r.Parts < 1 || r.Parts > mostParts {
+			return fmt.Errorf("found a run in %d parts", r.Parts)
+		}
+		for i, n := range r.Have {
+			if n < 0 || n >= r.Parts || i > 0 && n <= r.Have[i-1] {
+				return errors.New("its parts are out of order")
+			}
+		}
+	}
+	return nil
+}
+
+// check holds the lengths and places of keys.
+func (m *Model) check() error {
+	if len(m.Hidden) != len(m.Keys)+len(m.Crossed) {
+		return errors.New("hidden keys do not fit the keys")
+	}
+	for _, c := range m.Crossed {
+		for i, k := range c {
+			if k < 0 || k >= len(m.Keys) || i > 0 && k <= c[i-1] {
+				return errors.New("it crosses a key that is not there")
+			}
+		}
+		if len(c) < 2 {
+			return errors.New("it crosses fewer than two keys")
 		}
 	}
 	return nil

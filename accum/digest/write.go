@@ -118,16 +118,20 @@ func (w *Writer) Close(m *Meta) (err error) {
 			w.Abort()
 		}
 	}()
+	text, err := json.Marshal(m)
+	if err != nil {
+		return err
+	}
+	return w.finish(string(text))
+}
+
+func (w *Writer) finish(text string) error {
 	if w.n > 0 {
 		if err := w.flush(); err != nil {
 			return err
 		}
 	}
-	text, err := json.Marshal(m)
-	if err != nil {
-		return err
-	}
-	w.w.SetKeyValueMetadata(metaKey, string(text))
+	w.w.SetKeyValueMetadata(metaKey, text)
 	w.w.SetKeyValueMetadata(hashKey, strings.Repeat("0", 2*sha256.Size))
 	if err := w.w.Close(); err != nil {
 		return err
