@@ -2,6 +2,7 @@ package accum
 
 import (
 	"encoding/binary"
+	"hash/fnv"
 	"math"
 
 	"github.com/tallrow/tallrow/stream"
@@ -27,13 +28,15 @@ func (c CellCount) Estimate() float64 {
 	return float64(c.Distinct) + once*(once-1)/(2*float64(c.Twice+1))
 }
 
-// sampleCells counts rows by what makes them equal, as cells do.
-type sampleCells map[string]int64
+// sampleCells counts rows by what makes them equal, as cells do: by hashes, since what
+// they tell is an estimate anyway, but by the same ones in every run.
+type sampleCells map[[16]byte]int64
 
 func (s sampleCells) add(b *stream.Block, l *layout) {
 	var key []byte
 	number := func(x float64) { key = binary.LittleEndian.AppendUint64(key, math.Float64bits(x+0)) }
 	weighted := b.Weight != nil && l.design.Spec.WeightKind != stream.Frequency
+	h := fnv.New128a()
 	for r := range b.Rows {
 		key = key[:0]
 		for j := range l.nx {
@@ -48,7 +51,11 @@ func (s sampleCells) add(b *stream.Block, l *layout) {
 		if weighted {
 			number(b.Weight[r])
 		}
-		s[string(key)]++
+		h.Reset()
+		h.Write(key)
+		var sum [16]byte
+		h.Sum(sum[:0])
+		s[sum]++
 	}
 }
 

@@ -43,8 +43,8 @@ func TestCellTable(t *testing.T) {
 
 // Estimates worked out by hand from the formula of Chao (1984).
 func TestCellCount(t *testing.T) {
-	s := sampleCells{"a": 1, "b": 1, "c": 1, "d": 2, "e": 5}
-	o := sampleCells{"c": 4, "f": 1}
+	s := sampleCells{{'a'}: 1, {'b'}: 1, {'c'}: 1, {'d'}: 2, {'e'}: 5}
+	o := sampleCells{{'c'}: 4, {'f'}: 1}
 	s.join(o)
 	c := s.count()
 	if (c != CellCount{Rows: 15, Distinct: 6, Once: 3, Twice: 1}) || c.Estimate() != 6+3*2./(2*2) {

@@ -39,6 +39,13 @@
 // Scores.Each merges runs and memory while it walks over the clusters. Adding is
 // associative, so that does not show in the bits either.
 //
+// # Unique rows
+//
+// Where Needs.Cells asks for it, rows with equal regressors are summed together (cells):
+// their number and the sums of powers of v. SecondByCells makes of them, once the
+// coefficients are known, what Second makes of rows. How many are kept hangs on a bound
+// of bytes that does not depend on workers; whether there were more is the same for all.
+//
 // # Limits
 //
 // One worker holds its own tables by level, joined at the end; pairs of levels of

@@ -101,8 +101,8 @@ func TestUniqueRows(t *testing.T) {
 					continue
 				}
 				t.Run(fmt.Sprintf("weight=%d,cats=%v,offset=%g", kind, cats, offset), func(t *testing.T) {
-					tb, spec, d := discrete(8000, kind, offset, cats)
-					src := tb.source(1300)
+					tb, spec, d := discrete(5000, kind, offset, cats)
+					src := tb.source(900)
 					o := vcov.Options{Errors: kinds(rowKinds...), Workers: 2}
 					one := fit(t, src, spec, o)
 					if one.Run.Passes != 1 || one.Run.Route != "unique rows" || one.Run.UniqueRows == 0 {
