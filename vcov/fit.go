@@ -222,7 +222,9 @@ func (f *fitter) second() error {
 	}
 	if f.plan.needs.Cells && s.CellsLost {
 		rows = true
-		f.note("second-pass", "the regressors take too many values, or residuals of too different size, to keep unique rows; a second pass was made")
+		if f.plan.sample.Cells.Rows > 0 { // else it was but a try
+			f.note("second-pass", "the regressors take too many values, or residuals of too different size, to keep unique rows; a second pass was made")
+		}
 	}
 	if f.plan.needs.Cells && !rows {
 		f.byCells = true
