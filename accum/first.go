@@ -389,6 +389,9 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	if len(l.groups) > 0 && (needs.Fourth || len(needs.Clusters) > 0) {
 		return nil, errors.New("accum: fourth moments and cluster sums of categories need a second pass")
 	}
+	if d.Sweep >= 0 && len(l.groups) > 0 {
+		return nil, errors.New("accum: effects are swept out of numeric terms only")
+	}
 	stamp, err := src.Stamp()
 	if err != nil {
 		return nil, err

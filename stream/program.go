@@ -276,10 +276,6 @@ func (c *compiler) sweep() error {
 	if spec.Sweep == "" {
 		return nil
 	}
-	if len(d.Categories) > 0 {
-		return Usef("the effects of %s are swept out, and each(%s) is a category: this version sweeps beside numeric terms only; write its levels out as terms, such as %s == \"...\"",
-			spec.Sweep, d.Categories[0].Text, d.Categories[0].Text)
-	}
 	n, err := c.read(roleSweep, spec.Sweep)
 	if err != nil {
 		return err

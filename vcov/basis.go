@@ -35,6 +35,7 @@ type basis struct {
 	wide   *wideBasis
 	bases  map[string]string
 	notes  []Warning
+	listed *listed   // categories beside a sweep, written out as numeric terms
 	apart  *apart    // the group of categories kept apart, nil if there is none
 	sums   []float64 // internal second moments, less what the group apart takes
 }

@@ -36,10 +36,27 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	if err != nil {
 		return nil, err
 	}
-	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, told: map[string]bool{},
+	var l *listed
+	if d.Sweep >= 0 && len(d.Categories) > 0 {
+		if l, err = listLevels(ctx, src, d, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter}); err != nil {
+			return nil, err
+		}
+		d = l.design
+		numeric := o
+		numeric.Hypotheses = nil
+		asked := p.hypotheses
+		if p, err = PlanFit(ctx, src, d, numeric); err != nil {
+			return nil, err
+		}
+		p.hypotheses = asked
+	}
+	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, listed: l, told: map[string]bool{},
 		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
 	if f.scan.Meter == nil {
 		f.scan.Meter = new(accum.Meter)
+	}
+	if l != nil {
+		f.passes, f.bytes = l.passes, l.bytes
 	}
 	defer f.close()
 	if o.Timings {
@@ -75,6 +92,7 @@ type fitter struct {
 	d       *stream.Design
 	o       Options
 	plan    *Plan
+	listed  *listed // nil unless categories stand beside a sweep
 	scan    accum.Options
 	state   *accum.State
 	sol     *solution
@@ -172,6 +190,9 @@ func (f *fitter) solve(s *accum.State) error {
 	b, err := newBasis(s)
 	if err != nil {
 		return err
+	}
+	if f.listed != nil {
+		f.listed.name(b)
 	}
 	f.state, f.sol = s, solve(b)
 	return f.sol.resolve(f.plan.hypotheses)

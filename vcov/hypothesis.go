@@ -300,6 +300,9 @@ func (x *solution) apartHypothesis(h *hypothesis, rhs []*big.Rat, j int) error {
 
 // columnsOf lists the coefficients that a part of a restriction stands for.
 func (x *solution) columnsOf(p stream.RestrictionPart) ([]int, error) {
+	if x.listed != nil {
+		return x.listed.columnsOf(p)
+	}
 	s, d := x.state, x.state.Design
 	levels := make([]int32, len(p.Levels))
 	for i, v := range p.Levels {

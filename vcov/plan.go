@@ -180,7 +180,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	k, groups, cats := 1, 0, false
 	for _, t := range d.Terms {
 		p.Terms = append(p.Terms, t.Text)
-		if len(t.Categories) > 0 {
+		if len(t.Categories) > 0 && d.Sweep < 0 {
 			cats = true
 			groups++
 		} else {
@@ -387,6 +387,11 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 			p.PerPair = max(p.PerPair, 16*int64(meats))
 		}
 		p.why("beyond %d levels and terms in all, the category with most levels is eliminated before the solve; the others make dense matrices", o.dense())
+	}
+	if d.Sweep >= 0 && len(d.Categories) > 0 {
+		p.Passes++
+		p.cost("levels", read)
+		p.why("a first reading lists the levels of categories; each is then a numeric term, up to %d of them", mostListed)
 	}
 	p.Route = strings.Join(route, ", ")
 	sums := int64(o.Workers) * (560*int64(c*(c+1)/2) + 2*8*stream.BatchRows*int64(c))

@@ -218,8 +218,12 @@ func (f *fitter) model() Model {
 	d, sp := f.d, f.d.Spec
 	m := Model{Outcome: d.OutcomeText(), Terms: []string{}, Constant: !sp.NoConstant, Cluster: []string{}, Errors: []string{},
 		Missing: "skip", BadRows: "stop", Level: Number(f.o.Level), Zone: "UTC"}
-	for i := range d.Terms {
-		m.Terms = append(m.Terms, d.Terms[i].Text)
+	terms := d.Terms
+	if f.listed != nil {
+		terms = f.listed.state.Design.Terms
+	}
+	for i := range terms {
+		m.Terms = append(m.Terms, terms[i].Text)
 	}
 	if sp.Weight != "" {
 		m.Weight = ptr(d.WeightText())

@@ -164,6 +164,9 @@ func (o *Options) planSweep(d *stream.Design) error {
 	if d.Sweep < 0 {
 		return nil
 	}
+	if o.Passes == 1 && len(d.Categories) > 0 {
+		return stream.Usef("passes: categories beside effects of %s that are swept out take a reading of their levels first; leave out --passes 1", d.Keys[d.Sweep].Text)
+	}
 	if d.Buckets >= 0 {
 		return stream.Usef("audit: not for effects that are swept out of %s in this version", d.Keys[d.Sweep].Text)
 	}

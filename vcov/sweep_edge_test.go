@@ -37,7 +37,7 @@ func TestSweepRefusals(t *testing.T) {
 		change func(*stream.Spec, *vcov.Options)
 		want   string
 	}{
-		{func(s *stream.Spec, o *vcov.Options) { s.Terms = []string{"each(barge)"} }, "each(barge)"},
+		{func(s *stream.Spec, o *vcov.Options) { s.Terms = []string{"each(barge)"}; o.Passes = 1 }, "a reading of their levels"},
 		{func(s *stream.Spec, o *vcov.Options) { s.Terms = nil }, "no terms beside the effects of crane"},
 		{func(s *stream.Spec, o *vcov.Options) { s.Sweep = "1 + 2" }, "read no column"},
 		{func(s *stream.Spec, o *vcov.Options) { s.Sweep = "each(crane)" }, "units are named by crane alone"},

@@ -73,7 +73,7 @@ var options = []option{
 		help: "leave the constant out",
 		set:  func(s *settings, v value) error { return setSwitch(&s.noConstant, v) }},
 	{name: "sweep", value: "EXPR", group: "Model", on: onModel, file: true,
-		help: "units, such as crane: an effect of each is swept out of outcome and terms, however many there are, and the constant with them; beside numeric terms",
+		help: "units, such as crane: an effect of each is swept out of outcome and terms, however many there are, and the constant with them",
 		set:  func(s *settings, v value) error { s.sweep = strings.TrimSpace(v.text()); return nil }},
 	{name: "weight", value: "EXPR", group: "Model", on: onSums, file: true,
 		help: "weight of a row; needs --weight-kind",
