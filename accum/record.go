@@ -32,7 +32,8 @@ type What uint8
 // The kinds of records, in the order in which they are handed out.
 const (
 	// SegmentCheck identifies what a segment held: Key is its number, Sums[0] a hash
-	// of its column sums, Table the run that read it.
+	// of its column sums, Table the run that read it. Of text in byte ranges Sums[1]
+	// is stream.Quotes.
 	SegmentCheck What = iota
 	// WeightSum is the sum of the weights.
 	WeightSum
@@ -82,7 +83,7 @@ type Record struct {
 	Key     []byte
 	Label   string // Key in words, "" where there is none
 	Rows    int64
-	// Sums are in units of 2^Unit. SegmentCheck, WeightSum, SecondMoment and
+	// Sums are in units of 2^Unit. WeightSum, SecondMoment and
 	// FourthMoment are one number each, exact however long: the sum over i of
 	// Sums[i] 2^(96 i).
 	Unit int

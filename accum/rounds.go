@@ -271,6 +271,9 @@ var errApartRounds = errors.New("a category with too many levels stands apart: c
 func (s *State) unchangedPart(p *pass) error {
 	for n, q := range p.checks {
 		if c, ok := s.checks[n]; !ok || q != c {
+			if was, is := s.quotes[n], p.quotes[n]; was != 0 && is != 0 && was != is {
+				return &ChangedError{fmt.Sprintf("segment %d begins inside quotes in one round and outside in the other; read this part with --quotes count", n)}
+			}
 			return &ChangedError{fmt.Sprintf("segment %d holds other values", n)}
 		}
 	}
@@ -377,6 +380,11 @@ func (p *pass) number(base int) {
 		checks[n+base] = c
 	}
 	p.checks = checks
+	quotes := map[int]stream.Quotes{}
+	for n, q := range p.quotes {
+		quotes[n+base] = q
+	}
+	p.quotes = quotes
 }
 
 // RunBase is what is added to the segment numbers of a run of a state that was loaded

@@ -213,6 +213,7 @@ type pass struct {
 	segments int64
 	unread   stream.Unread
 	checks   map[int]segCheck
+	quotes   map[int]stream.Quotes // of segments of text
 }
 
 type problem struct {
@@ -224,7 +225,7 @@ func newPass(m *Meter, t *Timings) *pass {
 	if m == nil {
 		m = new(Meter)
 	}
-	return &pass{meter: m, timings: t, errAt: math.MaxInt, checks: map[int]segCheck{}}
+	return &pass{meter: m, timings: t, errAt: math.MaxInt, checks: map[int]segCheck{}, quotes: map[int]stream.Quotes{}}
 }
 
 func (p *pass) fail(segment int, err error) {
@@ -378,6 +379,9 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 	p.mu.Lock()
 	defer p.mu.Unlock()
 	p.checks[seg.Number()] = ld.check(seen)
+	if t.Quotes != 0 {
+		p.quotes[seg.Number()] = t.Quotes
+	}
 	p.read += t.Rows
 	p.bad += t.Malformed
 	p.segments++

@@ -73,6 +73,7 @@ type State struct {
 	epochs []*epoch
 	maps   [][]float64 // from each epoch's dense columns to those of Frame
 	checks map[int]segCheck
+	quotes map[int]stream.Quotes
 	stamp  string
 	quart  *quartic
 	cells  *cellRows
@@ -194,7 +195,7 @@ func (c *comboIndex) find(levels []int32) int {
 
 // newState joins the epochs. refit is the unit that keyed sums should have.
 func newState(l *layout, needs *Needs, p *pass, epochs []*epoch, extended bool, b *budget) (s *State, refit int, err error) {
-	s = &State{Design: l.design, lay: l, needs: *needs, checks: p.checks, Segments: p.segments, Bytes: p.bytes,
+	s = &State{Design: l.design, lay: l, needs: *needs, checks: p.checks, quotes: p.quotes, Segments: p.segments, Bytes: p.bytes,
 		Extended: extended, Read: p.read, Malformed: p.bad, Dropped: b.dropped.Load()}
 	slices.SortFunc(p.problems, func(a, b problem) int {
 		return cmp.Or(cmp.Compare(a.segment, b.segment), cmp.Compare(a.at, b.at))

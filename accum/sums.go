@@ -13,6 +13,7 @@ import (
 	"math"
 	"slices"
 	"strconv"
+	"strings"
 
 	"github.com/tallrow/tallrow/stream"
 )
@@ -270,8 +271,12 @@ func (s *State) retained() []*epoch {
 func (s *State) Records(f func(*Record) error, hide Hide) error {
 	var r Record
 	for _, n := range slices.Sorted(maps.Keys(s.checks)) {
+		q := s.quotes[n]
 		c, run, n := s.checks[n], n>>runShift, n&(RunBase(1)-1)
 		r = Record{What: SegmentCheck, Table: run, Key: binary.BigEndian.AppendUint64(nil, uint64(n)), Label: strconv.Itoa(n), Rows: c.rows, Sums: []Whole{fixed{0, c.sum}.whole()}}
+		if q != 0 {
+			r.Sums = append(r.Sums, fixed{0, uint64(q)}.whole())
+		}
 		if err := f(&r); err != nil {
 			return err
 		}
@@ -411,7 +416,7 @@ func storeRecords(what What, section, table int, g *groupStore, label func(Key) 
 		k := partKey(g.kind, parts)
 		r.Key, r.Label = appendKey(r.Key[:0], k), ""
 		if label != nil {
-			r.Label = label(k)
+			r.Label = strings.Clone(label(k)) // the text of k is overwritten
 		}
 		r.Rows, r.Sums = parts[0].rows, wholes(r.Sums[:0], parts[0].sums)
 		return f(&r)
@@ -726,12 +731,15 @@ var errPlace = errors.New("a record has no place in the model")
 
 func (ld *sumsLoader) take(r *Record, p *pass) error {
 	if r.What == SegmentCheck {
-		if len(r.Key) != 8 || len(r.Sums) != 1 {
+		if len(r.Key) != 8 || len(r.Sums) < 1 || len(r.Sums) > 2 {
 			return errPlace
 		}
 		// Runs after the first count on, so that numbers stay apart.
 		n := int(binary.BigEndian.Uint64(r.Key)) + RunBase(r.Table)
 		p.checks[n] = segCheck{r.Rows, r.Sums[0].fixed().lo}
+		if len(r.Sums) == 2 {
+			p.quotes[n] = stream.Quotes(r.Sums[1].fixed().lo)
+		}
 		return nil
 	}
 	if r.Section < 0 || r.Section >= len(ld.epochs) {

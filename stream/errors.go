@@ -34,6 +34,7 @@ func Usef(format string, args ...any) error {
 type Position struct {
 	File   string
 	Line   int64 // 1-based line of a text file in which the row starts
+	Offset int64 `json:",omitzero"` // of its first byte, where the lines before were not counted
 	Row    int64 // 1-based data row within the file
 	Group  int   // 1-based row group
 	Column string
@@ -45,6 +46,9 @@ func (p Position) String() string {
 	b.WriteString(p.File)
 	if p.Line > 0 {
 		fmt.Fprintf(&b, " line %d", p.Line)
+	}
+	if p.Offset > 0 {
+		fmt.Fprintf(&b, " offset %d", p.Offset)
 	}
 	if p.Group > 0 {
 		fmt.Fprintf(&b, " row group %d", p.Group)

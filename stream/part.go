@@ -26,7 +26,11 @@ func (p *part) Scan(ctx context.Context, uses []Use) (Scan, error) {
 
 // ScanWhere implements Pruner.
 func (p *part) ScanWhere(ctx context.Context, uses []Use, where Filter) (Scan, error) {
-	s, err := scanWhere(ctx, p.Source, uses, where)
+	open := scanSome
+	if p.n == 1 {
+		open = scanWhere
+	}
+	s, err := open(ctx, p.Source, uses, where)
 	if err != nil {
 		return nil, err
 	}
@@ -42,6 +46,37 @@ func (p *part) SampleWhere(ctx context.Context, uses []Use, at float64, where Fi
 func (p *part) Unread(ctx context.Context, uses []Use, where Filter) (Unread, error) {
 	return unread(ctx, p.Source, uses, where)
 }
+
+// Skipper is a source in which what a segment holds depends on those before it.
+type Skipper interface {
+	Source
+	// ScanSome is Scan, with a Filter as Pruner has it, for who reads only some
+	// segments and closes the others: it does not read these, but guesses from the
+	// text of a segment what it depends on. SegmentTally.Quotes says what was taken
+	// for granted, so that the guesses can be proven when all parts are there.
+	ScanSome(ctx context.Context, uses []Use, f Filter) (Scan, error)
+}
+
+func scanSome(ctx context.Context, src Source, uses []Use, f Filter) (Scan, error) {
+	if s, ok := as[Skipper](src); ok {
+		return s.ScanSome(ctx, uses, f)
+	}
+	return scanWhere(ctx, src, uses, f)
+}
+
+// Quotes says how a segment of delimited text was read; 0 for others. Whether a
+// segment begins inside quotes is whether an odd number of quotes stands before it
+// in its file, so that the segments of a file prove each other.
+type Quotes uint8
+
+// The bits of Quotes. QuotesKnown is set in all that is not 0, QuotesFirst in the
+// first segment of a file, which begins outside.
+const (
+	QuotesKnown  Quotes = 1 << iota
+	QuotesInside        // it was read as beginning inside quotes
+	QuotesOdd           // it holds an odd number of quotes
+	QuotesFirst
+)
 
 type partScan struct {
 	Scan

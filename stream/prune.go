@@ -57,35 +57,36 @@ func (u *Unread) Add(o Unread) {
 // wrapper is a source that reads as another one does.
 type wrapper interface{ unwrap() Source }
 
-func asPruner(src Source) (Pruner, bool) {
+// as finds out whether a source, or the one that it reads as, is a T.
+func as[T Source](src Source) (t T, ok bool) {
 	for {
-		if p, ok := src.(Pruner); ok {
-			return p, true
+		if t, ok = src.(T); ok {
+			return t, true
 		}
 		w, ok := src.(wrapper)
 		if !ok {
-			return nil, false
+			return t, false
 		}
 		src = w.unwrap()
 	}
 }
 
 func scanWhere(ctx context.Context, src Source, uses []Use, f Filter) (Scan, error) {
-	if p, ok := asPruner(src); ok && f != nil {
+	if p, ok := as[Pruner](src); ok && f != nil {
 		return p.ScanWhere(ctx, uses, f)
 	}
 	return src.Scan(ctx, uses)
 }
 
 func sampleWhere(ctx context.Context, src Source, uses []Use, at float64, f Filter) (Segment, error) {
-	if p, ok := asPruner(src); ok && f != nil {
+	if p, ok := as[Pruner](src); ok && f != nil {
 		return p.SampleWhere(ctx, uses, at, f)
 	}
 	return src.Sample(ctx, uses, at)
 }
 
 func unread(ctx context.Context, src Source, uses []Use, f Filter) (Unread, error) {
-	if p, ok := asPruner(src); ok && f != nil {
+	if p, ok := as[Pruner](src); ok && f != nil {
 		return p.Unread(ctx, uses, f)
 	}
 	return Unread{}, nil

@@ -91,6 +91,8 @@ type SegmentTally struct {
 	// file of which no row is read.
 	Excluded int64
 	Files    int64
+	// Quotes says how text was read; it is there when the segment has been read.
+	Quotes Quotes
 	// Problems describes the first malformed rows, at most MaxProblems.
 	Problems []*RowError
 }
@@ -150,6 +152,9 @@ type Options struct {
 	// Scratch is the folder for temporary files ("" for the system's): a
 	// Parquet file on a pipe is copied there whole.
 	Scratch string
+	// CountQuotes: ScanSome counts all quotes before a segment of text and does not
+	// guess whether it begins inside quotes.
+	CountQuotes bool
 	// SegmentBytes is the length of a CSV segment; 0 means 4 MiB. Only tests
 	// change it.
 	SegmentBytes int

@@ -334,10 +334,21 @@ func (u *union) Scan(ctx context.Context, uses []Use) (Scan, error) {
 }
 
 func (u *union) ScanWhere(ctx context.Context, uses []Use, f Filter) (Scan, error) {
+	return u.scan(ctx, uses, f, scanWhere)
+}
+
+// ScanSome implements Skipper.
+func (u *union) ScanSome(ctx context.Context, uses []Use, f Filter) (Scan, error) {
+	return u.scan(ctx, uses, f, scanSome)
+}
+
+type scanFunc func(ctx context.Context, src Source, uses []Use, f Filter) (Scan, error)
+
+func (u *union) scan(ctx context.Context, uses []Use, f Filter, open scanFunc) (Scan, error) {
 	if err := u.check(uses); err != nil {
 		return nil, err
 	}
-	s := &unionScan{u: u, ctx: ctx, uses: slices.Clone(uses), where: f, turn: make(chan struct{}, 1)}
+	s := &unionScan{u: u, ctx: ctx, uses: slices.Clone(uses), where: f, open: open, turn: make(chan struct{}, 1)}
 	// Pipes say now, not in the middle, that they cannot be read again.
 	for i, m := range u.members {
 		if !m.pipe {
@@ -359,6 +370,7 @@ type unionScan struct {
 	ctx   context.Context
 	uses  []Use
 	where Filter
+	open  scanFunc      // of a file
 	turn  chan struct{} // held while the fields below are used
 
 	file   int // of the union, the next to start
@@ -389,7 +401,7 @@ func (s *unionScan) start(ctx context.Context, i int) (*fileScan, error) {
 		return nil, err
 	}
 	inner, from := s.u.memberUses(m, s.uses)
-	sc, err := scanWhere(s.ctx, src, inner, s.u.memberFilter(m, s.uses, from, s.where))
+	sc, err := s.open(s.ctx, src, inner, s.u.memberFilter(m, s.uses, from, s.where))
 	if err != nil {
 		m.release()
 		return nil, err

@@ -20,6 +20,11 @@
 //	unit     int32
 //	sums     list of decimal(38, 0)
 //
+// A segment has the hash of its column sums, and if it is a byte range of text a second
+// number of bits: 1 always, 2 if it was read as beginning inside quotes, 4 if it holds
+// an odd number of quotes, 8 if it is the first of its file. With these pooling proves
+// that all parts have read the text as it is, see stream.Quotes.
+//
 // A level, pair or cluster has one sum for each element, sums[i] 2^unit, clusters the
 // upper triangle of sum w z z' column by column. A weight, second or fourth moment is
 // one number, the sum over i of sums[i] 2^(unit + 96 i): exact, however many rows.

@@ -18,6 +18,7 @@ type Pool struct {
 	readers []*Reader
 	heap    []*feed
 	rec     accum.Record
+	quotes  *quoteChain // nil when all segments have been seen
 }
 
 // feed is the records of one digest, with places in the pool.
@@ -92,6 +93,7 @@ func NewPool(readers []*Reader) (*Pool, error) {
 	if first.Meta.Second != nil {
 		return p, p.secondRound()
 	}
+	p.quotes = &quoteChain{runs: p.Meta.Runs}
 	ids := make([][]string, len(readers))
 	for i, r := range readers {
 		for _, c := range r.Meta.Header.Sections {
@@ -196,7 +198,28 @@ func (f *feed) next() (bool, error) {
 }
 
 // Next returns the next record, nil after the last. It is valid until the next call.
+//
+// Errors: *PoolError for a segment that is there twice, or that was not read from where
+// it begins; *DamageError; those of the files.
 func (p *Pool) Next() (*accum.Record, error) {
+	r, err := p.merge()
+	if err != nil || p.quotes == nil {
+		return r, err
+	}
+	if r != nil && r.What == accum.SegmentCheck {
+		err = p.quotes.see(r)
+	} else {
+		err = p.quotes.end()
+		p.quotes = nil
+	}
+	if err != nil {
+		return nil, err
+	}
+	return r, nil
+}
+
+// merge adds the records of one place.
+func (p *Pool) merge() (*accum.Record, error) {
 	if len(p.heap) == 0 {
 		return nil, nil
 	}

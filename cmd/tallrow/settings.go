@@ -64,6 +64,7 @@ type settings struct {
 	keep       []string
 	part       int
 	parts      int // 0: not in parts
+	quotes     string
 	frameFrom  string
 	hideIDs    string
 	at         string
@@ -363,6 +364,6 @@ func (s *settings) spec(req request) stream.Spec {
 func (s *settings) reading() stream.Options {
 	return stream.Options{
 		Format: s.format, NoHeader: s.noHeader, DecimalComma: s.decimal == "comma",
-		Null: s.null, Kinds: s.kinds, SkipBad: s.badRows == "skip", Scratch: s.scratch,
+		Null: s.null, Kinds: s.kinds, SkipBad: s.badRows == "skip", Scratch: s.scratch, CountQuotes: s.quotes == "count",
 	}.WithDefaults()
 }

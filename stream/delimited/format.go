@@ -151,11 +151,22 @@ func segments(first, size int64, length int) int64 {
 }
 
 func (s *source) Scan(ctx context.Context, uses []stream.Use) (stream.Scan, error) {
+	return s.scan(ctx, uses, false)
+}
+
+// ScanSome implements stream.Skipper. Compressed text and pipes are read whole.
+func (s *source) ScanSome(ctx context.Context, uses []stream.Use, _ stream.Filter) (stream.Scan, error) {
+	return s.scan(ctx, uses, !s.o.CountQuotes)
+}
+
+func (s *source) scan(ctx context.Context, uses []stream.Use, guess bool) (stream.Scan, error) {
 	if err := s.check(uses); err != nil {
 		return nil, err
 	}
 	if ra, size := s.plain(); ra != nil {
-		return newPlainScan(ctx, s, uses, ra, size), nil
+		p := newPlainScan(ctx, s, uses, ra, size)
+		p.guess = guess
+		return p, nil
 	}
 	if s.in.File != nil {
 		t, err := s.reopen(ctx)

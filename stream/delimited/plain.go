@@ -22,6 +22,9 @@ const readChunk = 256 << 10
 // waits only for ranges that another goroutine is counting at that moment, which
 // needs nobody else; ranges that nobody has begun it counts itself. So no order
 // of reading or closing segments can block.
+//
+// With guess set the ranges before a segment are counted only if its own text does
+// not say whether it starts inside quotes, see startInside.
 type plainScan struct {
 	ctx   context.Context
 	src   *source
@@ -29,6 +32,7 @@ type plainScan struct {
 	ra    io.ReaderAt
 	size  int64
 	count int
+	guess bool
 
 	mu      sync.Mutex
 	next    int
@@ -220,11 +224,20 @@ func (p *plainScan) load(s *segment) error {
 	if err != nil {
 		return err
 	}
-	st, err := p.start(k)
-	if err != nil {
-		return err
+	var st startState
+	guessed := false
+	if p.guess && k > 0 {
+		if st.inside, guessed, err = p.guessStart(lo, buf); err != nil {
+			return err
+		}
 	}
-	from, first, line := lo, 0, st.line
+	if !guessed {
+		if st, err = p.start(k); err != nil {
+			return err
+		}
+	}
+	s.tally.Quotes = quotesOf(k, st.inside, c.quotes)
+	from, first, lines := lo, 0, int64(0)
 	if k > 0 {
 		from, first = lo-1, 1
 		if st.inside || buf[0] != '\n' {
@@ -232,10 +245,21 @@ func (p *plainScan) load(s *segment) error {
 				return nil
 			}
 		}
-		line += lineAt(buf[1:], first-1) - 1
+		lines = lineAt(buf[1:], first-1) - 1
 	}
 	buf, s.parser.cut, err = p.src.finish(p.ra, buf, hi, p.size, st.inside != (c.quotes&1 == 1))
-	s.setText(buf, first, from+int64(first), line)
+	s.setText(buf, first, from+int64(first), st.line+lines)
+	if guessed {
+		s.line = 0
+		s.verify = func() error {
+			counted, err := p.start(k)
+			if err == nil && counted.inside != st.inside {
+				err = p.src.guessedWrong(lo, counted.inside)
+			}
+			s.line = counted.line + lines
+			return err
+		}
+	}
 	return err
 }
 

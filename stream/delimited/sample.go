@@ -122,7 +122,7 @@ func (s *source) guessInside(b []byte) bool {
 // evidence is what follows from an assumption about b[1].
 type evidence struct {
 	contradiction int // index of the first quote that cannot stand there
-	good, bad     int // rows before it with the right and a wrong number of fields
+	good, bad     int // rows before it that fit the schema and others
 }
 
 func (s *source) suppose(b []byte, inside bool) evidence {
@@ -166,11 +166,39 @@ func (s *source) suppose(b []byte, inside bool) evidence {
 			continue
 		}
 		var f fault
-		if cells, _, f = t.row(0, cells); f == sound && len(cells) == len(s.head.schema.Columns) {
+		if cells, _, f = t.row(0, cells); f == sound && s.fits(cells) {
 			e.good++
 		} else {
 			e.bad++
 		}
 	}
 	return e
+}
+
+// fits reports whether a row has as many cells as there are columns, none of them
+// a misfit.
+func (s *source) fits(cells []cell) bool {
+	if len(cells) != len(s.head.schema.Columns) {
+		return false
+	}
+	for j, c := range s.head.schema.Columns {
+		if c.Kind == stream.Text {
+			continue
+		}
+		val, ok := trim(cells[j].val), true
+		switch {
+		case !cells[j].quoted && s.rules.missing(val), isNaN(val):
+		case c.Kind == stream.Bool:
+			_, ok = parseBool(val)
+		case c.Kind == stream.Time:
+			_, _, _, ok = parseTime(val)
+		default:
+			_, status := scan.ParseFloat(val, s.rules.point)
+			ok = status == scan.OK
+		}
+		if !ok {
+			return false
+		}
+	}
+	return true
 }

@@ -24,10 +24,13 @@ type segment struct {
 	load func(*segment) error
 	// more fetches further text of a sample; nil for a segment of a scan.
 	more func(*segment) error
-	buf  []byte
-	base int64 // offset of the first byte of the text
-	line int64 // its line; 0 if unknown
-	pos  int
+	// verify counts the quotes and lines before the segment, if it was only guessed
+	// that it begins outside or inside of quotes: an error if that was wrong.
+	verify func() error
+	buf    []byte
+	base   int64 // offset of the first byte of the text
+	line   int64 // its line; 0 if unknown
+	pos    int
 
 	skipBad bool
 	silent  bool // malformed rows are not counted
@@ -162,6 +165,12 @@ func (s *segment) malformed(i, next int) bool {
 		p.bad = trouble{fault: tooLong, at: i}
 	}
 	if endless || !s.skipBad {
+		if s.verify != nil {
+			// The row may be sound, and the guess at fault.
+			if s.err = s.verify(); s.err != nil {
+				return false
+			}
+		}
 		s.err = s.describe(i, end)
 		return false
 	}
@@ -178,34 +187,41 @@ func (s *segment) malformed(i, next int) bool {
 // quotes, nowhere.
 func (s *segment) describe(i, end int) *stream.RowError {
 	p, b := &s.parser, s.parser.bad
-	line := s.Locate(s.base + int64(i)).Line
+	pos := s.Locate(s.base + int64(i))
+	line := pos.Line
 	if b.fault == misfit {
 		p.scratch = p.scratch[:0]
 		val, _, _, _ := p.cell(b.at)
+		pos.Column = b.out.schema.Name
 		return &stream.RowError{
-			Pos:   stream.Position{File: s.src.in.Name, Line: line, Column: b.out.schema.Name},
+			Pos:   pos,
 			Found: shorten(val),
 			Want:  want(b.out.schema, b.out.number, b.status, p.rules),
 		}
 	}
 	e := faultError(s.src.in.Name, &p.tokens, i, b.at, b.fault, p.columns, line)
+	e.Pos = pos
 	if b.fault != bareQuote && b.fault != afterQuote {
 		return e
 	}
 	// Other rows may hide in a row whose quotes are out of step.
 	if end < 0 {
 		e.Found += " (by its quotes the row has no end)"
-	} else if last := lineAt(p.text[i:], end-i) + line - 2; last > line {
+	} else if more := lineAt(p.text[i:], end-i) - 2; more > 0 && line == 0 {
+		e.Found += fmt.Sprintf(" (by its quotes the row runs on over %d lines)", more+1)
+	} else if last := line + more; more > 0 {
 		e.Found += fmt.Sprintf(" (by its quotes the row runs on to line %d)", last)
 	}
 	return e
 }
 
-// Locate finds the line of a mark.
+// Locate finds the line of a mark; its offset if the segment's start was guessed.
 func (s *segment) Locate(mark int64) stream.Position {
 	pos := stream.Position{File: s.src.in.Name}
 	if i := mark - s.base; s.line > 0 && i >= 0 && i <= int64(len(s.parser.text)) {
 		pos.Line = s.line + lineAt(s.parser.text, int(i)) - 1
+	} else if s.verify != nil && s.line == 0 {
+		pos.Offset = mark // to count lines is to read the file
 	} else if ra, size := s.src.plain(); ra != nil && mark <= size {
 		pos.Line = lineIn(ra, mark)
 	}
