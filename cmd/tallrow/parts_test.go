@@ -209,6 +209,73 @@ func TestTextPartsGuessedWrong(t *testing.T) {
 	}
 }
 
+// Whatever stands in the cells, parts give the whole or say that they do not.
+func TestTextPartsAreNeverWrongInSilence(t *testing.T) {
+	r := rand.New(rand.NewPCG(11, 12))
+	same, refused := 0, 0
+	for range 20 {
+		var b strings.Builder
+		b.WriteString("minutes,pallets,quay,note\n")
+		row := func(note string) {
+			fmt.Fprintf(&b, "%.1f,%d,q%d,%s\n", 90+r.NormFloat64(), r.IntN(60), r.IntN(5), note)
+		}
+		for range 40 + r.IntN(40) {
+			switch r.IntN(12) {
+			case 0: // a table
+				b.WriteString("90,1,q1,\"")
+				quote := []string{"wet", `""wet""`}[r.IntN(2)]
+				for range r.IntN(150) {
+					row([]string{"dry", "", quote}[r.IntN(3)])
+				}
+				b.WriteString("\"\n")
+			case 1: // delimiters and ends of rows
+				row(`"` + strings.Repeat([]string{",", "\n", ",\n", `"",""`, "\n\"\"\n"}[r.IntN(5)], r.IntN(200)) + `"`)
+			default:
+				row([]string{"", `""`, `"wet, cold"`, "dry"}[r.IntN(4)])
+			}
+		}
+		name := filepath.Join(t.TempDir(), "quay.csv")
+		if err := os.WriteFile(name, []byte(b.String()), 0o600); err != nil {
+			t.Fatal(err)
+		}
+		o := stream.Options{SegmentBytes: 200 + r.IntN(1500)}
+		one, err := gathered(t, []string{name}, o, 0, 1)
+		if err != nil {
+			t.Fatal(err)
+		}
+		want, err := pooled(t, []*digest.Reader{one})
+		if err != nil {
+			t.Fatal(err)
+		}
+		n := 2 + r.IntN(4)
+		var rs []*digest.Reader
+		for i := range n {
+			var part *digest.Reader
+			if part, err = gathered(t, []string{name}, o, i, n); err != nil {
+				break
+			}
+			rs = append(rs, part)
+		}
+		got := ""
+		if err == nil {
+			got, err = pooled(t, rs)
+		}
+		switch {
+		case err != nil && strings.Contains(err.Error(), "--quotes count"):
+			refused++
+		case err != nil:
+			t.Fatal(err)
+		case got != want:
+			t.Fatalf("other sums and no error for\n%s", b.String())
+		default:
+			same++
+		}
+	}
+	if same < 5 || refused < 5 {
+		t.Errorf("%d the same, %d refused: want some of both", same, refused)
+	}
+}
+
 // The same from the command line: a refused pool leaves nothing.
 func TestTextPartsCommand(t *testing.T) {
 	r := rand.New(rand.NewPCG(9, 10))

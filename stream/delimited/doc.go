@@ -22,6 +22,11 @@
 // file or a pipe are cut by one reader and parsed in parallel (see serialScan).
 // Marks are byte offsets into the uncompressed text.
 //
+// A part of a plain file is read without the rest of it: each segment tells by its
+// own text whether it begins inside quotes (see startInside) and says in
+// SegmentTally.Quotes what it took for granted. Lines before it are not counted
+// then, except for the message that ends the reading; others give the offset.
+//
 // # Cells
 //
 // Kinds come from the first 1,000 rows within the first mebibyte, see guess. In

@@ -125,34 +125,36 @@ type evidence struct {
 	good, bad     int // rows before it that fit the schema and others
 }
 
-func (s *source) suppose(b []byte, inside bool) evidence {
+// contradiction returns the index of the first quote that cannot stand where it does
+// if b[1] is inside quotes or not, math.MaxInt if there is none.
+func (s *source) contradiction(b []byte, inside bool) int {
 	delim := s.head.delim
-	e := evidence{contradiction: math.MaxInt}
-	state := inside
 	for i := 1; ; {
 		k := bytes.IndexByte(b[i:], '"')
 		if k < 0 || i+k+1 >= len(b) {
-			break
+			return math.MaxInt
 		}
 		i += k + 1 // after the quote
-		if state {
+		if inside {
 			if b[i] == '"' {
 				if i++; i == len(b) {
-					break
+					return math.MaxInt
 				}
 				continue
 			}
 			if c := b[i]; c != delim && c != '\n' && c != '\r' {
-				e.contradiction = i - 1
-				break
+				return i - 1
 			}
 		} else if c := b[i-2]; c != delim && c != '\n' && (i > 2 || c != '"') {
 			// Between the two quotes of a doubled one the state is outside.
-			e.contradiction = i - 1
-			break
+			return i - 1
 		}
-		state = !state
+		inside = !inside
 	}
+}
+
+func (s *source) suppose(b []byte, inside bool) evidence {
+	e := evidence{contradiction: s.contradiction(b, inside)}
 	rows := b[1:]
 	end, _ := scan.RowEnd(rows, 0, inside)
 	var cells []cell
@@ -161,7 +163,7 @@ func (s *source) suppose(b []byte, inside bool) evidence {
 		if end, _ = scan.RowEnd(rows, start, false); end < 0 || end >= e.contradiction {
 			break
 		}
-		t := tokens{text: rows[start:end], delim: delim}
+		t := tokens{text: rows[start:end], delim: s.head.delim}
 		if t.blank(0) != 0 {
 			continue
 		}

@@ -1,6 +1,7 @@
 package delimited
 
 import (
+	"bytes"
 	"math"
 
 	"github.com/tallrow/tallrow/stream"
@@ -17,35 +18,35 @@ const (
 
 // startInside reports whether b[1] is inside quotes, if the text from there on
 // says so. In a text without malformed rows only one of the two assumptions can be
-// contradicted by the place of a quote. If neither is, all of b has been looked at,
-// and one must make rows that fit the schema and the other none to speak of; if
+// contradicted by the place of a quote. If neither is, by no quote in b, one must
+// make rows that fit the schema, and the other none to speak of; if
 // both are, the one that lasts longer must have made such rows before.
 //
 // It is a guess all the same: a cell may hold a table. Time in proportion to the
 // text up to the first contradiction.
 func (s *source) startInside(b []byte) (inside, sure bool) {
-	for n := lookBack; ; n *= 8 {
-		in, out := s.suppose(b[:min(n, len(b))], true), s.suppose(b[:min(n, len(b))], false)
-		inside = in.contradiction > out.contradiction
-		keep, drop := out, in
-		if inside {
-			keep, drop = in, out
+	in, out := s.suppose(b[:min(lookBack, len(b))], true), s.suppose(b[:min(lookBack, len(b))], false)
+	for n := lookBack; n < len(b) && in.contradiction == math.MaxInt && out.contradiction == math.MaxInt; n *= 8 {
+		if bytes.IndexByte(b[n:], '"') < 0 {
+			break
 		}
-		switch {
-		case keep.contradiction == math.MaxInt && drop.contradiction == math.MaxInt:
-			if n < len(b) {
-				continue
-			}
-			if in.good > out.good {
-				inside, keep, drop = true, in, out
-			}
-			return inside, keep.rows() && drop.good*10 <= keep.good
-		case keep.contradiction == math.MaxInt:
-			return inside, keep.good >= 10*keep.bad
-		default:
-			return inside, keep.rows() && drop.good == 0
-		}
+		in, out = s.suppose(b[:min(8*n, len(b))], true), s.suppose(b[:min(8*n, len(b))], false)
 	}
+	inside = in.contradiction > out.contradiction
+	if in.contradiction == out.contradiction {
+		inside = in.good > out.good
+	}
+	keep, drop := out, in
+	if inside {
+		keep, drop = in, out
+	}
+	switch {
+	case drop.contradiction == math.MaxInt:
+		return inside, keep.rows() && 10*drop.good <= keep.good
+	case keep.contradiction == math.MaxInt:
+		return inside, keep.good >= 10*keep.bad
+	}
+	return inside, keep.rows() && drop.good == 0
 }
 
 // rows reports whether the assumption makes rows of the text.

@@ -208,3 +208,49 @@ func (s *suite) stamp(t *testing.T, src stream.Source) {
 		t.Errorf("stamp %q became %q", first, second)
 	}
 }
+
+func (s *suite) parts(t *testing.T, src stream.Source) {
+	if !src.Info().Rewindable {
+		return
+	}
+	ctx := context.Background()
+	whole, err := s.scan(ctx, src, s.all(), 1)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, n := range []int{2, 3, 7} {
+		seen := make([]bool, len(whole))
+		for i := range n {
+			sc, err := stream.Part(src, i, n).Scan(ctx, s.all())
+			if err != nil {
+				t.Fatalf("part %d of %d: %v", i, n, err)
+			}
+			for {
+				seg, err := sc.Next(ctx)
+				if err == io.EOF {
+					break
+				}
+				var p part
+				if err == nil {
+					p, err = s.drain(seg, s.all())
+				}
+				if err != nil {
+					t.Fatalf("part %d of %d: %v", i, n, err)
+				}
+				if p.number%n != i || p.number >= len(whole) || seen[p.number] {
+					t.Fatalf("part %d of %d has segment %d of %d, or has it twice", i, n, p.number, len(whole))
+				}
+				seen[p.number] = true
+				if !slices.Equal(p.rows, whole[p.number].rows) {
+					t.Fatalf("part %d of %d: segment %d has other rows than in the whole", i, n, p.number)
+				}
+			}
+			if err := sc.Close(); err != nil {
+				t.Fatal(err)
+			}
+		}
+		if k := slices.Index(seen, false); k >= 0 {
+			t.Fatalf("segment %d is in none of %d parts", k, n)
+		}
+	}
+}

@@ -37,6 +37,7 @@ const limit = 30 * time.Second
 //  9. Locate names the file (and the row within it, if it knows).
 //  10. A scan can be closed early, and a cancelled one ends.
 //  11. Stamps of an unchanged input are equal.
+//  12. Parts have the segments of the whole, with the same rows.
 //
 // open is called several times and must return a fresh source over the same
 // input each time; the suite closes it.
@@ -79,6 +80,7 @@ func TestSource(t *testing.T, open func(t *testing.T) stream.Source, want Table)
 	law("early close", s.earlyClose)
 	law("cancel", s.cancel)
 	law("stamp", s.stamp)
+	law("parts", s.parts)
 }
 
 func cells(v *stream.Vector) int {
