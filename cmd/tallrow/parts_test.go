@@ -128,6 +128,11 @@ func TestTextPartsAreTheWhole(t *testing.T) {
 			if s := fmt.Sprintf("What:%s", accum.SegmentCheck); strings.Count(want, s) < 3 {
 				t.Fatalf("fewer than 3 of %q", s)
 			}
+			for q := range 12 {
+				if label := fmt.Sprintf("Key:%v Label:q%d ", []byte(fmt.Sprintf("q%d", q)), q); !strings.Contains(want, label) {
+					t.Errorf("no %q", label)
+				}
+			}
 			var rs []*digest.Reader
 			for i := range n {
 				part, err := gathered(t, []string{dir}, o, (i+1)%n, n)
@@ -320,5 +325,21 @@ func TestTextPartsCommand(t *testing.T) {
 	got, want := result(t, in("pooled.json")), result(t, in("whole.json"))
 	if got.Rows.Used != want.Rows.Used || fmt.Sprint(got.Estimates, got.Errors[0].SE) != fmt.Sprint(want.Estimates, want.Errors[0].SE) {
 		t.Errorf("%d rows, %v; want %d, %v", got.Rows.Used, got.Estimates, want.Rows.Used, want.Estimates)
+	}
+
+	// A second round guesses the same and is held to the first.
+	must(t, "fit", in("whole.digest"), "--errors", "classical", "--json", "-o", in("first.json"))
+	second := func(i int, more ...string) []string {
+		return append(part(i, more...), "--errors", "hc3", "--at", in("first.json"))
+	}
+	for i := range 2 {
+		must(t, second(i)...)
+	}
+	fails(t, exitFailed, "segment 2 begins inside quotes in one round and outside in the other; read this part with --quotes count", second(2)...)
+	must(t, second(2, "--quotes", "count")...)
+	must(t, "fit", in("whole.digest"), in("0.digest"), in("1.digest"), in("2.digest"), "--errors", "hc3", "--json", "-o", in("pooled.json"))
+	must(t, "fit", "--outcome", "minutes", "--terms", "pallets", "--quiet", in("quay.csv"), "--errors", "hc3", "--passes", "2", "--json", "-o", in("whole.json"))
+	if got, want := result(t, in("pooled.json")), result(t, in("whole.json")); fmt.Sprint(got.Errors[0].SE) != fmt.Sprint(want.Errors[0].SE) {
+		t.Errorf("hc3 %v, want %v", got.Errors[0].SE, want.Errors[0].SE)
 	}
 }
