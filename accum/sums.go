@@ -44,6 +44,7 @@ type Section struct {
 
 	Rows    int64   `json:"rows"`
 	Freq    int64   `json:"frequencies"`
+	All     int64   `json:"all"` // of which NonZero are counted: rows, or frequencies
 	Reach   real    `json:"reach"`
 	NonZero []int64 `json:"nonzero"`
 	Value   reals   `json:"value"`
@@ -53,6 +54,31 @@ type Section struct {
 	Tables   []partials     `json:"tables"`
 	Pairs    []partials     `json:"pairs"`
 	Clusters []partials     `json:"clusters"` // by key
+}
+
+// plain leaves nothing in the description that hangs on which worker saw which rows:
+// counts that are only known to be two or more of both kinds, cells that stand for
+// many.
+func (s *Section) plain() {
+	for j, n := range s.NonZero {
+		if n >= 2 && n <= s.All-2 {
+			s.NonZero[j], s.Varied[j] = 2, true // nothing hangs on their values
+		}
+	}
+	settleVaried(s.Value, s.Varied)
+	for i, t := range s.Lone {
+		if t == nil {
+			continue
+		}
+		u := *t
+		u.value = slices.Clone(t.value)
+		for j := range u.value {
+			if u.zero[j].in == inMany {
+				u.value[j] = 0
+			}
+		}
+		s.Lone[i] = &u
+	}
 }
 
 // ID identifies the frame, the unit and the arithmetic of a section: sections with
@@ -237,7 +263,11 @@ func (s *State) Header() *Header {
 		Bytes: s.Bytes, Unread: s.Unread, Problems: s.Problems}
 	for _, e := range s.retained() {
 		c := &Section{Frame: e.frame, Extended: e.extended, Unit: e.unit, Rows: e.rows, Freq: e.freq, Reach: real(e.reach),
-			NonZero: e.nonzero, Value: slices.Clone(e.value), Varied: e.varied, Lone: e.lone}
+			NonZero: slices.Clone(e.nonzero), Value: slices.Clone(e.value), Varied: e.varied, Lone: slices.Clone(e.lone)}
+		if c.All = e.rows; s.Design.Spec.WeightKind == stream.Frequency && s.Design.Spec.Weight != "" {
+			c.All = e.freq
+		}
+		c.plain()
 		settleVaried(c.Value, c.Varied)
 		for _, t := range e.tables {
 			c.Tables = append(c.Tables, t.partials)
@@ -525,6 +555,7 @@ func (s *Section) join(o *Section) error {
 	}
 	s.Rows += o.Rows
 	s.Freq += o.Freq
+	s.All += o.All
 	s.Reach = max(s.Reach, o.Reach)
 	s.NonZero = slices.Clone(s.NonZero)
 	for j, n := range o.NonZero {
@@ -546,6 +577,7 @@ func (s *Section) join(o *Section) error {
 			p[0][i].join(&p[1][i])
 		}
 	}
+	s.plain()
 	return nil
 }
 
