@@ -64,6 +64,9 @@ type budget struct {
 	cells   *cellSpec   // nil unless unique rows are wanted
 	keep    bool        // cluster sums are never dropped
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
+	// besideUnits are the stores of cluster sums where those of units are not dropped
+	// with them.
+	besideUnits []*groupStore
 }
 
 func newBudget(l *layout, needs *Needs, o *Options, unit int) *budget {
@@ -79,7 +82,12 @@ func (b *budget) clusterStores(l *layout, needs *Needs, extended bool) []*groupS
 	for _, k := range needs.Clusters {
 		stores[k] = b.pool.store(l.design.Keys[k].Kind, p*(p+1)/2, b.unit)
 	}
-	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil) {
+	if u := l.design.Sweep; u >= 0 && !b.keep {
+		for _, k := range needs.Clusters {
+			b.besideUnits = append(b.besideUnits, stores[k])
+		}
+	}
+	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil || !b.keep) {
 		if extended {
 			p *= 2
 		}
@@ -318,13 +326,13 @@ func (w *firstWorker) fold() error {
 		w.cells.fold()
 		w.watch.lap(StageCells)
 	}
-	if w.budget.dropped.Load() {
-		return nil
-	}
 	if w.units != nil {
 		if err := w.units.fold(); err != nil {
 			return err
 		}
+	}
+	if w.budget.dropped.Load() {
+		return nil
 	}
 	var held int64
 	for _, g := range w.clusters {
@@ -344,7 +352,12 @@ func (w *firstWorker) fold() error {
 // drop gives up the second moments of clusters beyond their share. held must depend
 // on the number of clusters alone, so that the same data always take the same route.
 func (b *budget) drop(held int64) {
-	if held > b.cluster && !b.keep && !b.dropped.Swap(true) {
+	if held <= b.cluster || b.keep || b.dropped.Swap(true) {
+		return
+	}
+	if b.besideUnits != nil {
+		b.pool.drop(b.besideUnits)
+	} else {
 		b.pool.close()
 	}
 }
@@ -415,7 +428,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	p.meter.Bytes.Store(0)
 	p.meter.Total.Store(src.Info().Bytes)
 	b := newBudget(l, &needs, &o, unit)
-	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable || d.Sweep >= 0
+	b.pool, b.keep = newGroupPool(&o), needs.Keep || !src.Info().Rewindable
 	if needs.Cells {
 		// An input that is sampled has shown before that it suits; for one that can be
 		// read once only there may be no other way.

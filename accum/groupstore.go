@@ -85,6 +85,30 @@ func (p *groupPool) close() {
 	p.stores, p.idle, p.closed = nil, nil, true
 }
 
+// drop gives back what the sums of some stores hold; what is added to them later is
+// forgotten.
+func (p *groupPool) drop(stores []*groupStore) {
+	p.mu.Lock()
+	defer p.mu.Unlock()
+	if p.closed {
+		return
+	}
+	for _, s := range stores {
+		s.closeRuns()
+		for i := range s.tables {
+			p.held.Add(-s.tables[i].empty(s))
+		}
+		s.tables = [groupParts]groupTable{}
+		s.keys.Store(0)
+		s.texts.Store(0)
+		s.dropped = true
+	}
+	p.stores = slices.DeleteFunc(p.stores, func(s *groupStore) bool { return s.dropped })
+	p.idleMu.Lock()
+	defer p.idleMu.Unlock()
+	clear(p.idle)
+}
+
 // relieve writes stores to scratch until half of the bound is free.
 func (p *groupPool) relieve() error {
 	p.mu.Lock()
@@ -115,13 +139,14 @@ type groupStore struct {
 	head  int // elements of a record before the sums
 	shift int // records of a page, as a power of two
 
-	tables [groupParts]groupTable
-	keys   atomic.Int64 // in memory
-	texts  atomic.Int64 // their bytes
-	runs   []*run
-	file   *runFile      // that the next run goes to
-	seen   partials      // of all workers that have finished
-	warmed atomic.Uint64 // see groupTable
+	tables  [groupParts]groupTable
+	keys    atomic.Int64 // in memory
+	texts   atomic.Int64 // their bytes
+	dropped bool         // under pool.mu
+	runs    []*run
+	file    *runFile      // that the next run goes to
+	seen    partials      // of all workers that have finished
+	warmed  atomic.Uint64 // see groupTable
 }
 
 // groupTable is a partition: an open-addressing table of records. The first
@@ -181,7 +206,7 @@ func (b *groupBatch) reset() {
 func (s *groupStore) add(p int, b *groupBatch) error {
 	s.pool.mu.RLock()
 	var grew int64
-	if !s.pool.closed {
+	if !s.pool.closed && !s.dropped {
 		grew = s.tables[p].add(s, b)
 	}
 	s.pool.mu.RUnlock()

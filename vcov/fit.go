@@ -225,6 +225,15 @@ func (f *fitter) second() error {
 			}
 		}
 	}
+	if s.Swept != nil && s.Dropped && !rows && s.KeepMeans(f.o.Memory/meansShare) != nil {
+		f.note("frame-renewed", "the first pass was repeated: the second moments of each %s outgrew a sixteenth of --memory, and the means for a second pass do not fit either; the moments went to scratch", x.unit())
+		f.plan.needs.Keep = true
+		s.Close()
+		if err := f.first(); err != nil {
+			return err
+		}
+		x, s = f.sol, f.state
+	}
 	if len(f.plan.needs.Clusters) > 0 && s.Dropped {
 		rows = true
 		f.note("second-pass", "the clusters' second moments outgrew a sixteenth of --memory; a second pass kept scores only")

@@ -324,7 +324,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 				p.needs.Clusters = append(p.needs.Clusters, i)
 			}
 		}
-		p.needs.Keep = len(full) > 0
+		p.needs.Keep = len(full) > 0 || d.Sweep >= 0 && o.Passes == 1
 		p.PerCluster = accum.ClusterBytes(int(c * (c + 1) / 2))
 		p.ClusterMemory = accum.HeldClusters(o.Memory)
 		p.cost("cluster sums", moments)
@@ -332,7 +332,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		switch {
 		case p.needs.Keep: // the reason stands above
 		case d.Sweep >= 0:
-			p.why("each %s keeps its second moments: errors that join its rows need no second pass", d.Keys[d.Sweep].Text)
+			p.why("each %s keeps its second moments, so that errors that join its rows need no second pass; beyond a sixteenth of --memory one is made with its means, if those fit", d.Keys[d.Sweep].Text)
 		case info.Rewindable:
 			p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass keeps scores only")
 		default:

@@ -370,18 +370,26 @@ func TestSweepOffsets(t *testing.T) {
 func TestSweepWorkersAndMemory(t *testing.T) {
 	p := drawPanel(rand.New(rand.NewPCG(2, 2)), 20_000, stream.NoWeight)
 	src := p.table().source(3000)
-	for name, ks := range map[string][]vcov.Kind{
-		"units":    append(kinds("classical"), vcov.Kind{Name: "cr1", Cluster: 0}),
-		"rows":     append(kinds("hc1", "hc2"), vcov.Kind{Name: "cr1", Cluster: 1}, vcov.Kind{Name: "cr1", Cluster: 0}),
-		"one pass": kinds("classical"),
+	for name, c := range map[string]struct {
+		kinds  []vcov.Kind
+		keep   int64 // of clusters' second moments
+		passes int
+	}{
+		"units":         {append(kinds("classical"), vcov.Kind{Name: "cr1", Cluster: 0}), 1 << 30, 1},
+		"units dropped": {append(kinds("classical"), vcov.Kind{Name: "cr1", Cluster: 0}), 1 << 16, 2},
+		"rows":          {append(kinds("hc1", "hc2"), vcov.Kind{Name: "cr1", Cluster: 1}, vcov.Kind{Name: "cr1", Cluster: 0}), 1 << 30, 2},
+		"one pass":      {kinds("classical"), 1 << 30, 1},
 	} {
 		for _, arithmetic := range []string{"double", "extended"} {
 			var want string
 			for _, workers := range []int{1, 2, 3, 8} {
 				for _, memory := range []int64{1 << 30, 5 << 20} {
-					r := fit(t, src, p.spec(stream.NoWeight), vcov.Options{Errors: ks, Workers: workers, Memory: memory, Scratch: t.TempDir(), Arithmetic: arithmetic})
+					r := fit(t, src, p.spec(stream.NoWeight), vcov.Options{Errors: c.kinds, Workers: workers, Memory: memory, ClusterMemory: c.keep, Scratch: t.TempDir(), Arithmetic: arithmetic})
 					if spilled := r.Run.SpilledRuns > 0; spilled != (memory < 1<<30) {
 						t.Errorf("%s: %d runs went to scratch with %d bytes", name, r.Run.SpilledRuns, memory)
+					}
+					if r.Run.Passes != c.passes {
+						t.Errorf("%s: %d passes", name, r.Run.Passes)
 					}
 					if got := fixed(t, r); want == "" {
 						want = got
@@ -392,9 +400,20 @@ func TestSweepWorkersAndMemory(t *testing.T) {
 			}
 		}
 	}
+	// Where neither the units' second moments nor their means fit, the former go to scratch.
+	o := vcov.Options{Errors: append(kinds("classical"), vcov.Kind{Name: "cr1", Cluster: 0}), Scratch: t.TempDir()}
+	all := fit(t, src, p.spec(stream.NoWeight), o)
+	o.Memory = 2 << 20
+	few := fit(t, src, p.spec(stream.NoWeight), o)
+	if few.Run.SpilledRuns == 0 || few.Run.Passes != 2 || few.Run.Route != "cluster sums" {
+		t.Errorf("%+v", few.Run)
+	}
+	for j := range 3 {
+		close2(t, "error from scratch", few.Errors[1].SE[j], float64(all.Errors[1].SE[j]), 1e-12)
+	}
 	_, err := tryFit(src, p.spec(stream.NoWeight), vcov.Options{Errors: kinds("hc1"), Memory: 1 << 20, Scratch: t.TempDir(), Workers: 1})
-	var few *accum.MemoryError
-	if !errors.As(err, &few) || !strings.Contains(err.Error(), "crane") {
+	var short *accum.MemoryError
+	if !errors.As(err, &short) || !strings.Contains(err.Error(), "crane") {
 		t.Errorf("means that do not fit: %v", err)
 	}
 }
