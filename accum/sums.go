@@ -268,7 +268,6 @@ func (s *State) Header() *Header {
 			c.All = e.freq
 		}
 		c.plain()
-		settleVaried(c.Value, c.Varied)
 		for _, t := range e.tables {
 			c.Tables = append(c.Tables, t.partials)
 		}

@@ -230,7 +230,7 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 	if arithmetic != "" {
 		o.Arithmetic = arithmetic
 	}
-	files, err := inputFiles(ctx, s.data)
+	files, err := s.inputFiles(ctx)
 	if err != nil {
 		return nil, err
 	}
@@ -373,14 +373,18 @@ func (s *settings) frame(m *digest.Model) (*accum.Sample, string, error) {
 // headBytes is how much of each end of a file its checksum covers.
 const checkedBytes = 64 << 10
 
-// inputFiles describes the files that are read.
-func inputFiles(ctx context.Context, data []string) ([]digest.File, error) {
-	list, err := stream.ListFiles(ctx, data)
+// inputFiles describes the files that are read. None of them may be the output.
+func (s *settings) inputFiles(ctx context.Context) ([]digest.File, error) {
+	list, err := stream.ListFiles(ctx, s.data)
 	if err != nil {
 		return nil, err
 	}
+	to, toErr := os.Stat(s.output)
 	var out []digest.File
 	for _, f := range list {
+		if in, err := os.Stat(f.Path); err == nil && toErr == nil && os.SameFile(in, to) {
+			return nil, stream.Usef("%s %s: would write over the data", s.origin("output"), s.output)
+		}
 		d := digest.File{Path: f.Path, Size: f.Size, Time: f.Time}
 		if f.Size >= 0 {
 			if abs, err := filepath.Abs(f.Path); err == nil {

@@ -99,7 +99,7 @@ func (a *app) secondRound(ctx context.Context, s *settings) (*made, error) {
 	if len(o.Errors) == 0 {
 		return nil, stream.Usef("--at: classical errors need no second round; ask for others with --errors")
 	}
-	files, err := inputFiles(ctx, s.data)
+	files, err := s.inputFiles(ctx)
 	if err != nil {
 		return nil, err
 	}
