@@ -225,13 +225,7 @@ func (t *loneTracker) MarshalJSON() ([]byte, error) {
 		}
 		return out
 	}
-	value := slices.Clone(t.value)
-	for j := range value {
-		if t.zero[j].in == inMany { // it is of no more use, and which came first is chance
-			value[j] = 0
-		}
-	}
-	return json.Marshal(loneDoc{list(t.nonzero), list(t.zero), value})
+	return json.Marshal(loneDoc{list(t.nonzero), list(t.zero), t.value})
 }
 
 func (t *loneTracker) UnmarshalJSON(b []byte) error {
@@ -487,8 +481,13 @@ func (s *State) clusterRecords(what What, section, key int, g *groupStore, f fun
 	return storeRecords(what, section, key, to, nil, f)
 }
 
-// Conceal puts hidden keys into what the header knows of single clusters.
+// Conceal puts hidden keys into what the header knows of single clusters, and leaves out
+// what was found in rows that could not be read.
 func (h *Header) Conceal(kinds []stream.Kind, hide Hide) {
+	h.Problems = slices.Clone(h.Problems)
+	for i, p := range h.Problems {
+		h.Problems[i] = &stream.RowError{Pos: p.Pos, Found: "(hidden)", Want: p.Want}
+	}
 	for _, c := range h.Sections {
 		for key, t := range c.Lone {
 			c.Lone[key] = t.conceal(key, kinds[key], hide)

@@ -84,6 +84,7 @@ type KeyColumn struct {
 	Kind     Kind
 	Zoned    bool
 	DateOnly bool
+	Hidden   bool // hashes stand for the values, which labels do not show
 }
 
 // Block is the used rows of one batch: inside --where, nothing missing,

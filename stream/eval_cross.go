@@ -138,7 +138,7 @@ func splitKey(kind Kind, s string) (KeyValue, string, error) {
 // KeyLabel is the label of a value of Keys[key]: FormatKey, and for a crossed key
 // the labels of its parts joined by " and ".
 func (d *Design) KeyLabel(key int, v KeyValue) string {
-	if d.Parts[key] == nil {
+	if d.Parts[key] == nil || d.Keys[key].Hidden {
 		return FormatKey(d.Keys[key], d.Spec.Zone, v)
 	}
 	var labels []string

@@ -48,6 +48,9 @@ func CompareKeys(k Kind, a, b KeyValue) int {
 // ISO 8601 with as many decimals of the second as it has, or the text itself. An
 // instant is shown in the zone (nil is UTC) with its offset, Z for UTC.
 func FormatKey(c KeyColumn, zone *time.Location, v KeyValue) string {
+	if c.Hidden {
+		return "(hidden)"
+	}
 	switch c.Kind {
 	case Text:
 		return v.Text

@@ -84,6 +84,8 @@ func timeOf(c stream.KeyColumn, k accum.Key) (int64, bool) {
 // checkPeriod refuses keys that are no time before anything is read.
 func checkPeriod(kind string, c stream.KeyColumn) error {
 	switch {
+	case c.Hidden:
+		return stream.Usef("%s: the values of %s are hidden, want days or whole numbers; make the digest with these errors, which leaves its periods readable", kind, c.Text)
 	case c.Kind == stream.Time && !c.DateOnly:
 		return stream.Usef("%s: %s is a time to the nanosecond, want days or whole numbers, such as date(%s)", kind, c.Text, c.Text)
 	case c.Kind == stream.Text, c.Kind == stream.Bool:

@@ -250,15 +250,16 @@ func LostElsewhere(s *accum.State, d *stream.Design, columns []string) (least, m
 		own[d.Terms[i].Text] = true
 	}
 	own[d.OutcomeText()] = true
-	var inside, outside int64
+	var inside, largest, outside int64
 	for name, n := range s.Tally.MissingBy {
 		if read[name] || own[name] {
 			inside += n
+			largest = max(largest, n)
 		} else {
 			outside += n
 		}
 	}
-	return max(0, s.Tally.Missing-inside), min(s.Tally.Missing, outside)
+	return max(0, s.Tally.Missing-inside), min(s.Tally.Missing-largest, outside)
 }
 
 // KeysOf lists the keys whose clusters errors by a key need: itself, or every set of

@@ -127,6 +127,8 @@ type File struct {
 	Size     int64  `json:"size"`
 	Time     string `json:"time,omitempty"`
 	Checksum string `json:"checksum,omitempty"`
+	// Empty says that it holds no rows: others with the same bytes are no overlap.
+	Empty bool `json:"empty,omitempty"`
 }
 
 // Missing lists the parts that are not there.
@@ -223,7 +225,7 @@ func (m *Model) Design() (*stream.Design, error) {
 	}
 	for i, h := range m.Hidden {
 		if h {
-			d.Keys[i].Kind, d.Keys[i].Zoned, d.Keys[i].DateOnly = stream.Text, false, false
+			d.Keys[i] = stream.KeyColumn{Text: d.Keys[i].Text, Kind: stream.Text, Hidden: true}
 		}
 	}
 	return d, nil
@@ -244,8 +246,13 @@ func (m *Model) Differs(o *Model) string {
 			return "model"
 		}
 	}
-	for _, k := range []string{"outcome", "terms", "kept", "no_constant", "weight", "weight_kind", "where", "missing", "zone", "keys", "crossed", "hidden", "hidden_by", "columns"} {
+	for _, k := range []string{"outcome", "terms", "kept", "no_constant", "weight", "weight_kind", "where", "missing", "zone", "keys", "crossed", "hidden_by", "hidden", "columns"} {
 		if x, y := fmt.Sprint(a[k]), fmt.Sprint(b[k]); x != y {
+			if k == "hidden_by" && m.HiddenBy != "" && o.HiddenBy != "" {
+				return "the ids are hidden by two secrets (--hide-ids)"
+			} else if k == "hidden_by" {
+				return "the ids of one are hidden (--hide-ids) and those of the other are not"
+			}
 			return fmt.Sprintf("%s is %s in one and %s in the other", k, x, y)
 		}
 	}

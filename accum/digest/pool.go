@@ -67,7 +67,7 @@ func NewPool(readers []*Reader) (*Pool, error) {
 						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: both have read %s", c.path, r.Path, f.Path)}
 					}
 					same := fmt.Sprint(f.Size, " ", f.Checksum)
-					if c, ok := sums[same]; ok && f.Checksum != "" && c.run != run.ID {
+					if c, ok := sums[same]; ok && f.Checksum != "" && !f.Empty && c.run != run.ID {
 						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: %s has the content of a file that the other has read", c.path, r.Path, f.Path)}
 					}
 					paths[f.Path], sums[same] = claim{run.ID, r.Path}, claim{run.ID, r.Path}

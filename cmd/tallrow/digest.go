@@ -1,6 +1,7 @@
 package main
 
 import (
+	"bytes"
 	"context"
 	"crypto/hmac"
 	"crypto/sha256"
@@ -13,6 +14,7 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
+	"unicode/utf8"
 
 	"github.com/spf13/cobra"
 
@@ -218,9 +220,8 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 	o := p.opts
 	o.Errors = p.req.kinds
 	if hide != nil {
-		model.HiddenBy = by
-		for i := range model.Hidden {
-			model.Hidden[i] = !ordersTime(o.Errors, p.design, i)
+		if err := hideKeys(&model, p.design, o.Errors, by); err != nil {
+			return nil, err
 		}
 	}
 	sample, arithmetic, err := s.frame(&model)
@@ -256,6 +257,11 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 	}
 	defer state.Close()
 	m := &digest.Meta{Format: digest.Format, Version: vcov.Version, Model: model, Header: state.Header()}
+	if h := m.Header; parts == 1 && h.Read == 0 && h.Unread.Rows == 0 {
+		for i := range files {
+			files[i].Empty = true
+		}
+	}
 	run := &digest.Run{Parts: parts, Have: []int{s.part}, Files: files}
 	content := stamp
 	if parts == 1 {
@@ -309,6 +315,21 @@ func hash(parts ...string) string {
 // ordersTime reports whether the values of a key are wanted in order of time.
 func ordersTime(kinds []vcov.Kind, d *stream.Design, key int) bool {
 	return slices.ContainsFunc(kinds, func(k vcov.Kind) bool { return k.Name == "driscoll-kraay" && k.Cluster == key })
+}
+
+// hideKeys notes the keys that are hidden: all but the periods of driscoll-kraay, whose
+// order in time is wanted.
+func hideKeys(m *digest.Model, d *stream.Design, kinds []vcov.Kind, by string) error {
+	m.HiddenBy = by
+	for i := range m.Hidden {
+		m.Hidden[i] = !ordersTime(kinds, d, i)
+		for _, c := range d.Categories {
+			if m.Hidden[i] && c.KeyColumn.Text == d.Keys[i].Text {
+				return stream.Usef("--hide-ids: each(%s) has the values of %s in the names of its coefficients, so they cannot be hidden; leave out that term, or the errors by %s", c.Text, d.Keys[i].Text, d.Keys[i].Text)
+			}
+		}
+	}
+	return nil
 }
 
 // leastKey is the fewest bytes of a secret.
@@ -393,10 +414,21 @@ func (s *settings) inputFiles(ctx context.Context) ([]digest.File, error) {
 			if d.Checksum, err = endsSum(f.Path, f.Size); err != nil {
 				return nil, err
 			}
+			d.Empty = !s.noHeader && f.Size <= checkedBytes && noSecondLine(f.Path)
 		}
 		out = append(out, d)
 	}
 	return out, nil
+}
+
+// noSecondLine reports whether a file is a text without a second line.
+func noSecondLine(name string) bool {
+	b, err := os.ReadFile(name)
+	if err != nil || !utf8.Valid(b) || bytes.HasPrefix(b, []byte("PAR1")) {
+		return false // compressed, or no text
+	}
+	i := bytes.IndexByte(b, '\n')
+	return i < 0 || i == len(b)-1
 }
 
 // endsSum is the SHA-256 of the ends of a file.

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"crypto/sha256"
 	"encoding/json"
 	"fmt"
 	"math"
@@ -11,8 +12,11 @@ import (
 	"strings"
 	"testing"
 
+	"github.com/tallrow/tallrow/accum"
+	"github.com/tallrow/tallrow/accum/digest"
 	"github.com/tallrow/tallrow/stream"
 	"github.com/tallrow/tallrow/stream/columnar"
+	"github.com/tallrow/tallrow/vcov"
 )
 
 // unloadings writes a Parquet file for each of some days, in groups of 200 rows, and
@@ -304,5 +308,161 @@ func TestAsk(t *testing.T) {
 				t.Errorf("%s", strings.Join(d, "\n"))
 			}
 		})
+	}
+}
+
+// With hidden ids digests answer as those with open ones do, up to the order in which
+// clusters are summed, and hold no id; days and parts made with one secret still fit.
+func TestHiddenIDs(t *testing.T) {
+	data := unloadings(t, 3, 900)
+	dir := t.TempDir()
+	in := func(name string) string { return filepath.Join(dir, name) }
+	if err := os.WriteFile(in("secret"), []byte(strings.Repeat("quay of secrets ", 3)), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	const errs = "hc1, cr1(quay), cr2(barge), cr1(quay, barge), cr1(berth), driscoll-kraay(day)"
+	model := []string{"--outcome", "minutes", "--terms", "pallets, tonnes", "--errors", errs, "--quiet"}
+	must(t, slices.Concat([]string{"digest", data, "-o", in("open")}, model)...)
+	must(t, slices.Concat([]string{"digest", data, "-o", in("whole"), "--hide-ids", in("secret")}, model)...)
+	var parts []string
+	for i := range 3 {
+		parts = append(parts, in(fmt.Sprint(i)))
+		must(t, slices.Concat([]string{"digest", data, "-o", parts[i], "--part", fmt.Sprintf("%d/3", i), "--hide-ids", in("secret")}, model)...)
+	}
+	must(t, slices.Concat([]string{"pool", "-o", in("pooled")}, parts)...)
+	ask := []string{"fit", "--json", "--cluster-detail", "--lags", "2", "--errors", errs}
+	want := must(t, append(ask, in("open"))...)
+	whole := must(t, append(ask, in("whole"))...)
+	if d := differences(t, whole, must(t, append(ask, in("pooled"))...), 0); len(d) > 0 {
+		t.Errorf("parts with hidden ids: %s", strings.Join(d, "\n"))
+	}
+	shown := 0
+	for _, d := range differences(t, want, whole, 1e-13) {
+		if !strings.HasSuffix(d, " and (hidden)") || !strings.Contains(d, "cluster.: ") {
+			t.Errorf("hidden and open: %s", d)
+		}
+		shown++
+	}
+	if shown == 0 {
+		t.Error("no label of a cluster was hidden")
+	}
+
+	for _, name := range append(parts, in("whole"), in("pooled")) {
+		raw, err := os.ReadFile(name)
+		if err != nil {
+			t.Fatal(err)
+		}
+		r, err := digest.Open(name)
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer r.Close()
+		text := string(raw)
+		hidden, open := 0, 0
+		for {
+			rec, err := r.Next()
+			if err != nil {
+				t.Fatal(err)
+			}
+			if rec == nil {
+				break
+			}
+			if rec.What != accum.ClusterSums {
+				continue
+			}
+			text += string(rec.Key) + "\n" + rec.Label + "\n"
+			if r.Meta.Model.Hidden[rec.Table] {
+				if hidden++; rec.Label != "" || len(rec.Key) != 32 {
+					t.Fatalf("a hidden id has the key %q and the label %q", rec.Key, rec.Label)
+				}
+			} else if open++; !strings.HasPrefix(rec.Label, "2024-") {
+				t.Fatalf("a period has the label %q", rec.Label)
+			}
+		}
+		for _, id := range []string{"canal", "deck", "hatch", "motor"} {
+			if strings.Contains(text, id) {
+				t.Errorf("%s holds the id %s", filepath.Base(name), id)
+			}
+		}
+		if hidden == 0 || open == 0 {
+			t.Errorf("%d hidden and %d open clusters", hidden, open)
+		}
+		if st, err := os.Stat(name); err != nil || st.Mode().Perm() != 0o600 {
+			t.Errorf("mode %v, %v", st.Mode(), err)
+		}
+	}
+}
+
+// Digests of every version of the format stay readable, with the numbers that they had
+// when they were made, which are those of the data. They are never made anew: a new
+// version brings new files and new entries of locked.json.
+func TestOldDigests(t *testing.T) {
+	dir := filepath.Join("..", "..", "accum", "digest", "testdata")
+	text, err := os.ReadFile(filepath.Join(dir, "locked.json"))
+	if err != nil {
+		t.Fatal(err)
+	}
+	var locked map[string]struct {
+		Estimates []float64
+		SE        map[string][]float64
+	}
+	if err := json.Unmarshal(text, &locked); err != nil {
+		t.Fatal(err)
+	}
+	sums := map[string]string{
+		"numbers-1": "a93893b2f2ef16cbf894ae1f053b31f76e9dc1e8f57669fe981bd5e36093e49b",
+		"levels-1":  "a240fb1781ee3d7b022783d44bea0f24b39fc02c01736b43585b9a77419ad7d7",
+	}
+	fresh := map[string][]string{
+		"numbers": {"--terms", "pallets, tonnes, wet", "--weight", "crew", "--weight-kind", "frequency", "--lags", "2", "--errors", "hc1, cr1(berth), cr2(barge), cr1(berth, barge), driscoll-kraay(start)"},
+		"levels":  {"--terms", "pallets, each(barge), each(barge) * tonnes, each(wet)", "--errors", "classical"},
+	}
+	if len(locked) != len(sums) {
+		t.Errorf("%d files are locked, want %d", len(locked), len(sums))
+	}
+	for name, want := range locked {
+		file := filepath.Join(dir, name+".digest")
+		raw, err := os.ReadFile(file)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if got := fmt.Sprintf("%x", sha256.Sum256(raw)); got != sums[name] {
+			t.Errorf("%s has the SHA-256 %s, want %s: it must stay as it was", name, got, sums[name])
+		}
+		kind, _, _ := strings.Cut(name, "-")
+		options := fresh[kind]
+		at := slices.Index(options, "--errors")
+		ask := slices.Concat([]string{"fit", "--json", file}, options[at:])
+		if i := slices.Index(options, "--lags"); i >= 0 {
+			ask = append(ask, options[i:i+2]...)
+		}
+		for from, args := range map[string][]string{
+			"the digest": ask,
+			"its data":   slices.Concat([]string{"fit", "--json", "--outcome", "minutes", filepath.Join(dir, "unloading.csv")}, options),
+		} {
+			var got vcov.Result
+			if err := json.Unmarshal([]byte(must(t, args...)), &got); err != nil {
+				t.Fatal(err)
+			}
+			near := func(what string, a []float64, b []vcov.Number) {
+				t.Helper()
+				if len(a) != len(b) {
+					t.Fatalf("%s from %s: %s has %d numbers, want %d", name, from, what, len(b), len(a))
+				}
+				for i := range a {
+					if !(math.Abs(a[i]-float64(b[i])) <= 1e-12*math.Abs(a[i])) {
+						t.Errorf("%s from %s: %s %d is %v, was %v", name, from, what, i, b[i], a[i])
+					}
+				}
+			}
+			near("estimate", want.Estimates, got.Estimates)
+			if len(got.Errors) != len(want.SE) {
+				t.Errorf("%s from %s: %d kinds of errors, want %d", name, from, len(got.Errors), len(want.SE))
+			}
+			for i := range got.Errors {
+				e := &got.Errors[i]
+				near(e.Name(), want.SE[e.Name()], e.SE)
+			}
+		}
 	}
 }

@@ -109,6 +109,27 @@ func TestScripts(t *testing.T) {
 				ts.Check(err)
 				ts.Check(os.WriteFile(ts.MkAbs(args[0]), data, 0o644))
 			},
+			// cut FILE N TO copies the first N bytes of a file.
+			"cut": func(ts *testscript.TestScript, neg bool, args []string) {
+				if neg || len(args) != 3 {
+					ts.Fatalf("usage: cut file n to")
+				}
+				n, err := strconv.Atoi(args[1])
+				ts.Check(err)
+				data := []byte(ts.ReadFile(args[0]))
+				ts.Check(os.WriteFile(ts.MkAbs(args[2]), data[:n], 0o644))
+			},
+			// mode FILE OCTAL checks who may read a file.
+			"mode": func(ts *testscript.TestScript, neg bool, args []string) {
+				if neg || len(args) != 2 {
+					ts.Fatalf("usage: mode file octal")
+				}
+				st, err := os.Stat(ts.MkAbs(args[0]))
+				ts.Check(err)
+				if got := fmt.Sprintf("%o", st.Mode().Perm()); got != args[1] {
+					ts.Fatalf("%s has mode %s, want %s", args[0], got, args[1])
+				}
+			},
 			// valid checks the last output against the schema of results.
 			"valid": func(ts *testscript.TestScript, neg bool, args []string) {
 				ts.Check(validate(t, compiledSchema(t), []byte(ts.ReadFile("stdout"))))

@@ -108,9 +108,10 @@ func (a *app) secondRound(ctx context.Context, s *settings) (*made, error) {
 		return nil, err
 	}
 	model := digest.NewModel(p.design, p.src.Schema(), len(s.keep))
-	model.HiddenBy = by
-	for i := range model.Hidden {
-		model.Hidden[i] = hide != nil && !ordersTime(p.req.kinds, p.design, i)
+	if hide != nil {
+		if err := hideKeys(&model, p.design, p.req.kinds, by); err != nil {
+			return nil, err
+		}
 	}
 	first, err := s.readRound(ctx, p.design, &model, o)
 	if err != nil {
