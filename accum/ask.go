@@ -21,11 +21,11 @@ func (e *AskError) Error() string { return e.Msg }
 //
 // Errors: *AskError where a term or the outcome is not among those of s.
 func (s *State) Ask(d *stream.Design) (*State, error) {
-	if d.Sweep >= 0 {
-		return nil, &AskError{"the sums do not hold what each unit leaves, whose effects are to be swept out"}
-	}
 	if sameModel(s.Design, d) {
 		return s, nil
+	}
+	if d.Sweep >= 0 || s.Design.Sweep >= 0 {
+		return nil, &AskError{"where effects are swept out, only the whole model can be asked for"}
 	}
 	if s.Apart != nil {
 		return nil, &AskError{"a category with too many levels stands apart; only the whole model can be asked for"}
@@ -121,7 +121,7 @@ func (s *State) Ask(d *stream.Design) (*State, error) {
 
 // sameModel reports whether two designs have the same sums in the same order.
 func sameModel(a, b *stream.Design) bool {
-	if a.OutcomeText() != b.OutcomeText() || a.Spec.NoConstant != b.Spec.NoConstant || len(a.Terms) != len(b.Terms) {
+	if a.OutcomeText() != b.OutcomeText() || a.Spec.NoConstant != b.Spec.NoConstant || a.Spec.Sweep != b.Spec.Sweep || len(a.Terms) != len(b.Terms) {
 		return false
 	}
 	for i := range a.Terms {

@@ -87,7 +87,7 @@ func (b *budget) clusterStores(l *layout, needs *Needs, extended bool) []*groupS
 			b.besideUnits = append(b.besideUnits, stores[k])
 		}
 	}
-	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil || !b.keep) {
+	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil || !b.keep || needs.Retain) {
 		if extended {
 			p *= 2
 		}
@@ -488,7 +488,7 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 	if refit != unit {
 		s.Coarse = true
 	}
-	if d.Sweep >= 0 {
+	if d.Sweep >= 0 && !needs.Retain { // what is retained is swept when it is loaded
 		if err := s.sweep(); err != nil {
 			return nil, err
 		}

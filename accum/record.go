@@ -56,10 +56,13 @@ const (
 	MeatLevels
 	MeatPairs
 	ScoreSums
+	// UnitSums are sums of w z over the rows of a unit whose effect is swept out, in
+	// extended arithmetic with what they leave off behind them.
+	UnitSums
 )
 
 var whatNames = [...]string{"segment", "weight", "second", "fourth", "level", "pair", "cluster",
-	"meat", "spread", "meat-level", "meat-pair", "score"}
+	"meat", "spread", "meat-level", "meat-pair", "score", "unit"}
 
 func (w What) String() string { return whatNames[w] }
 

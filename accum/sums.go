@@ -54,6 +54,7 @@ type Section struct {
 	Tables   []partials     `json:"tables"`
 	Pairs    []partials     `json:"pairs"`
 	Clusters []partials     `json:"clusters"` // by key
+	Units    *partials      `json:"units,omitempty"`
 }
 
 // plain leaves nothing in the description that hangs on which worker saw which rows:
@@ -275,6 +276,10 @@ func (s *State) Header() *Header {
 				c.Clusters = append(c.Clusters, g.seen)
 			}
 		}
+		if e.units != nil {
+			seen := e.units.seen
+			c.Units = &seen
+		}
 		h.Sections = append(h.Sections, c)
 	}
 	return h
@@ -354,6 +359,14 @@ func (s *State) Records(f func(*Record) error, hide Hide) error {
 			if err := s.clusterRecords(ClusterSums, i, k, g, f, hide); err != nil {
 				return err
 			}
+		}
+	}
+	for i, e := range es {
+		if e.units == nil {
+			continue
+		}
+		if err := s.clusterRecords(UnitSums, i, s.lay.design.Sweep, e.units, f, hide); err != nil {
+			return err
 		}
 	}
 	return nil
@@ -570,6 +583,11 @@ func (s *Section) join(o *Section) error {
 			s.Lone[k].mergeFrom(t)
 		}
 	}
+	if (s.Units == nil) != (o.Units == nil) {
+		return errSections
+	} else if s.Units != nil {
+		s.Units.join(o.Units)
+	}
 	for _, p := range [][2][]partials{{s.Tables, o.Tables}, {s.Pairs, o.Pairs}, {s.Clusters, o.Clusters}} {
 		for i := range p[1] {
 			p[0][i].join(&p[1][i])
@@ -699,6 +717,11 @@ func Load(ctx context.Context, d *stream.Design, h *Header, next func() (*Record
 	}
 	s.pool = b.pool
 	s.Coarse = s.Coarse || refit != b.unit
+	if d.Sweep >= 0 && s.Rows > 0 {
+		if err := s.sweep(); err != nil {
+			return nil, err
+		}
+	}
 	return s, nil
 }
 
@@ -710,6 +733,17 @@ type sumsLoader struct {
 	epochs []*epoch
 	into   map[*groupStore]*groupLoader
 	fix    []fixed
+}
+
+// errSweptFrames: sums of units cannot be moved to another frame.
+var errSweptFrames = &AskError{"effects are swept out of sums in one frame; make the digests with --frame-from one of them"}
+
+// frame is that of the sections so far, f if there is none.
+func (ld *sumsLoader) frame(f *Frame) *Frame {
+	if len(ld.epochs) > 0 {
+		return ld.epochs[0].frame
+	}
+	return f
 }
 
 var errHeader = errors.New("the description of the sums does not fit the model")
@@ -740,6 +774,17 @@ func (ld *sumsLoader) section(c *Section, b *budget, frames map[string]*Frame) (
 		t := newKeyTable(len(l.tables[i].prods), c.Unit)
 		t.partials = c.Tables[i]
 		e.tables = append(e.tables, t)
+	}
+	if k := l.design.Sweep; k >= 0 {
+		if c.Units == nil || f != ld.frame(f) || len(ld.epochs) > 0 && c.Extended != ld.epochs[0].extended {
+			return nil, errSweptFrames
+		}
+		n := l.p0 + 2
+		if c.Extended {
+			n *= 2
+		}
+		e.units = b.pool.store(l.design.Keys[k].Kind, n, c.Unit)
+		e.units.seen = *c.Units
 	}
 	e.pairs = l.pairTables(c.Unit, l.design.Spec.Weight == "")
 	for i, t := range e.pairs {
@@ -804,6 +849,11 @@ func (ld *sumsLoader) take(r *Record, p *pass) error {
 		return ld.level(t, id, rest, r)
 	case PairSums:
 		return ld.pair(e, r)
+	case UnitSums:
+		if e.units == nil || r.Table != ld.lay.design.Sweep {
+			return errPlace
+		}
+		return ld.cluster(e.units, r)
 	case ClusterSums:
 		if r.Table < 0 || r.Table >= len(e.clusters) {
 			return errPlace

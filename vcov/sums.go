@@ -21,7 +21,8 @@ func SumsFor(d *stream.Design, o Options) (needs accum.Needs, later []Kind, err 
 		return needs, nil, err
 	}
 	if d.Sweep >= 0 {
-		return needs, nil, stream.Usef("sweep: a digest does not keep what each value of %s leaves; sweep its effects out of the data", d.Keys[d.Sweep].Text)
+		err := sumsSwept(d, o, &needs)
+		return needs, nil, err
 	}
 	cats := slices.ContainsFunc(d.Terms, func(t stream.Term) bool { return len(t.Categories) > 0 })
 	for _, k := range o.Errors {
@@ -48,6 +49,25 @@ func SumsFor(d *stream.Design, o Options) (needs accum.Needs, later []Kind, err 
 	return needs, later, nil
 }
 
+// sumsSwept is SumsFor where effects of units are swept out: classical errors, and those
+// by the units from their second moments.
+func sumsSwept(d *stream.Design, o Options, needs *accum.Needs) error {
+	unit := d.Keys[d.Sweep].Text
+	if len(d.Categories) > 0 {
+		return stream.Usef("sweep: a digest keeps no categories beside effects that are swept out of %s; fit the data", unit)
+	}
+	for _, k := range o.Errors {
+		switch {
+		case k.Name == "classical":
+		case k.Cluster == d.Sweep && !overTime(k.Name):
+			needs.Clusters = []int{d.Sweep}
+		default:
+			return stream.Usef("errors: where effects are swept out of %s, a digest keeps classical errors and those by %[1]s; for %s fit the data", unit, k.Name)
+		}
+	}
+	return nil
+}
+
 // Gather reads the source once and leaves the sums that SumsFor names, with all that
 // State.Header and State.Records hand out. sample, if not nil, has the frame to sum in.
 // Close the state.
@@ -57,7 +77,11 @@ func Gather(ctx context.Context, src stream.Source, d *stream.Design, o Options,
 	if err != nil {
 		return nil, err
 	}
-	return accum.First(ctx, src, d, needs, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: sample})
+	arithmetic := arithmetics[o.Arithmetic]
+	if d.Sweep >= 0 && arithmetic == accum.Auto {
+		arithmetic = accum.Extended // what varies within units is known when all rows are read
+	}
+	return accum.First(ctx, src, d, needs, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetic, Sample: sample})
 }
 
 // Kept is what sums allow: those of one pass, and of a second round, if there are any.
@@ -163,6 +187,11 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 		return kept.Rows != nil && slices.ContainsFunc(kept.Kinds, func(o Kind) bool {
 			return o == k || o.Name == "hc0" && k.Name == "hc1" || o.Name == "hc1" && k.Name == "hc0"
 		})
+	}
+	if d.Sweep >= 0 {
+		if err := sumsSwept(d, o, new(accum.Needs)); err != nil {
+			return nil, err
+		}
 	}
 	rows := false
 	for _, k := range o.Errors {

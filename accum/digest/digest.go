@@ -89,6 +89,7 @@ type Model struct {
 	Terms      []string `json:"terms"` // without those kept
 	Kept       []string `json:"kept"`  // columns kept beside, in the order in which they follow the terms
 	NoConstant bool     `json:"no_constant"`
+	Sweep      string   `json:"sweep,omitempty"` // units whose effects are swept out
 	Weight     string   `json:"weight"`
 	WeightKind string   `json:"weight_kind"`
 	Where      string   `json:"where"`
@@ -148,7 +149,7 @@ var weightKinds = map[stream.WeightKind]string{stream.NoWeight: "", stream.Frequ
 // the model.
 func NewModel(d *stream.Design, schema *stream.Schema, kept int) Model {
 	s := &d.Spec
-	m := Model{Outcome: d.Dense[len(d.Dense)-1], Terms: []string{}, Kept: []string{}, NoConstant: s.NoConstant, Weight: s.Weight, WeightKind: weightKinds[s.WeightKind],
+	m := Model{Outcome: d.Dense[len(d.Dense)-1], Terms: []string{}, Kept: []string{}, NoConstant: s.NoConstant, Sweep: s.Sweep, Weight: s.Weight, WeightKind: weightKinds[s.WeightKind],
 		Where: s.Where, Missing: "skip", Zone: "UTC", Keys: []string{}, Crossed: s.Crossed, Hidden: make([]bool, len(d.Keys)), Columns: []Column{}}
 	if s.Stop {
 		m.Missing = "stop"
@@ -209,7 +210,7 @@ func (m *Model) Design() (*stream.Design, error) {
 	if err != nil {
 		return nil, err
 	}
-	spec := stream.Spec{Outcome: m.Outcome, Terms: slices.Concat(m.Terms, m.Kept), NoConstant: m.NoConstant, Weight: m.Weight, Where: m.Where,
+	spec := stream.Spec{Outcome: m.Outcome, Terms: slices.Concat(m.Terms, m.Kept), NoConstant: m.NoConstant, Sweep: m.Sweep, Weight: m.Weight, Where: m.Where,
 		Stop: m.Missing == "stop", Keys: m.Keys, Crossed: m.Crossed}
 	for k, name := range weightKinds {
 		if name == m.WeightKind {
@@ -246,7 +247,7 @@ func (m *Model) Differs(o *Model) string {
 			return "model"
 		}
 	}
-	for _, k := range []string{"outcome", "terms", "kept", "no_constant", "weight", "weight_kind", "where", "missing", "zone", "keys", "crossed", "hidden_by", "hidden", "columns"} {
+	for _, k := range []string{"outcome", "terms", "kept", "no_constant", "sweep", "weight", "weight_kind", "where", "missing", "zone", "keys", "crossed", "hidden_by", "hidden", "columns"} {
 		if x, y := fmt.Sprint(a[k]), fmt.Sprint(b[k]); x != y {
 			if k == "hidden_by" && m.HiddenBy != "" && o.HiddenBy != "" {
 				return "the ids are hidden by two secrets (--hide-ids)"

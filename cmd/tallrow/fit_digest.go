@@ -16,7 +16,7 @@ import (
 
 // dataOnly are the options that say how data are read, and what is fixed once sums
 // are made.
-var dataOnly = []string{"no-constant", "weight", "weight-kind", "where", "missing", "bad-rows", "first", "format", "no-header", "decimal", "null", "kinds", "zone", "passes", "arithmetic", "plan", "timings"}
+var dataOnly = []string{"no-constant", "sweep", "weight", "weight-kind", "where", "missing", "bad-rows", "first", "format", "no-header", "decimal", "null", "kinds", "zone", "passes", "arithmetic", "plan", "timings"}
 
 // fromDigests answers the question of s from digests.
 func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fitted, error) {
@@ -176,9 +176,6 @@ func (s *settings) question(m *digest.Meta, rows *digest.Pool) (*question, error
 			return nil, stream.Usef("%s: fixed when the digest was made; leave it out", s.origin(name))
 		}
 	}
-	if s.sweep != "" {
-		return nil, stream.Usef("%s: a digest does not keep what each value of %s leaves; sweep its effects out of the data", s.origin("sweep"), s.sweep)
-	}
 	q := &question{}
 	var err error
 	if q.whole, err = m.Model.Design(); err != nil {
@@ -189,6 +186,7 @@ func (s *settings) question(m *digest.Meta, rows *digest.Pool) (*question, error
 		return nil, err
 	}
 	t := *s
+	t.sweep = "" // that of the digest
 	if !s.given("errors") {
 		t.errors, t.from = sumsOf(m), map[string]string{"errors": "--errors"}
 		if rows != nil {
@@ -234,6 +232,8 @@ func (s *settings) agrees(name string, m *digest.Model) bool {
 	switch name {
 	case "no-constant":
 		return s.noConstant == m.NoConstant
+	case "sweep":
+		return strings.Join(strings.Fields(s.sweep), "") == strings.Join(strings.Fields(m.Sweep), "")
 	case "weight":
 		return s.weight == m.Weight
 	case "weight-kind":

@@ -72,7 +72,7 @@ var options = []option{
 	{name: "no-constant", form: formSwitch, group: "Model", on: onSums, file: true, def: "false",
 		help: "leave the constant out",
 		set:  func(s *settings, v value) error { return setSwitch(&s.noConstant, v) }},
-	{name: "sweep", value: "EXPR", group: "Model", on: onModel, file: true,
+	{name: "sweep", value: "EXPR", group: "Model", on: onSums, file: true,
 		help: "units, such as crane: an effect of each is swept out of outcome and terms, however many there are, and the constant with them",
 		set:  func(s *settings, v value) error { s.sweep = strings.TrimSpace(v.text()); return nil }},
 	{name: "weight", value: "EXPR", group: "Model", on: onSums, file: true,

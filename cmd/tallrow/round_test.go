@@ -148,3 +148,53 @@ func TestSecondRoundRefuses(t *testing.T) {
 		t.Error("a refused run left a file")
 	}
 }
+
+// Sums of units add up: parts and days in one frame answer as the data do, with hidden
+// units too.
+func TestSweptDigests(t *testing.T) {
+	data, other := quays(t, 60_000), quays(t, 50_000)
+	dir := t.TempDir()
+	in := func(name string) string { return filepath.Join(dir, name) }
+	if err := os.WriteFile(in("key"), []byte(strings.Repeat("k", 40)), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	model := []string{"--outcome", "minutes", "--terms", "pallets, tonnes, wet", "--sweep", "crane", "--errors", "classical, cr1(crane), cr3(crane)", "--quiet"}
+	with := func(command string, more ...string) []string { return slices.Concat([]string{command}, model, more) }
+	must(t, with("fit", data, "--passes", "1", "--arithmetic", "extended", "--json", "-o", in("whole.json"))...)
+	for i := range 3 {
+		must(t, with("digest", data, "--part", fmt.Sprintf("%d/3", i), "-o", in(fmt.Sprintf("part-%d.digest", i)))...)
+		must(t, with("digest", data, "--part", fmt.Sprintf("%d/3", i), "--hide-ids", in("key"), "-o", in(fmt.Sprintf("hidden-%d.digest", i)))...)
+	}
+	must(t, "fit", in("part-2.digest"), in("part-0.digest"), in("part-1.digest"), "--json", "--errors", "classical, cr1(crane), cr3(crane)", "-o", in("parts.json"))
+	must(t, "fit", in("hidden-2.digest"), in("hidden-0.digest"), in("hidden-1.digest"), "--json", "--errors", "classical, cr1(crane), cr3(crane)", "-o", in("hidden.json"))
+	want := result(t, in("whole.json"))
+	compare := func(name string, near float64) {
+		got := result(t, in(name))
+		same := func(a, b vcov.Number) bool {
+			return math.Abs(float64(a-b)) <= near*math.Abs(float64(a)) || a == b
+		}
+		if !slices.EqualFunc(want.Estimates, got.Estimates, same) || want.Rows.Used != got.Rows.Used || want.Rows.Singleton != got.Rows.Singleton || *want.Sweep != *got.Sweep {
+			t.Errorf("%s: %v of %d rows, want %v of %d", name, got.Estimates, got.Rows.Used, want.Estimates, want.Rows.Used)
+		}
+		for i, e := range want.Errors {
+			if g := got.Errors[i]; e.Status != "ok" || g.Status != "ok" || !slices.EqualFunc(e.SE, g.SE, same) || e.Factor != g.Factor {
+				t.Errorf("%s: %s: %v, want %v", name, e.Name(), g.SE, e.SE)
+			}
+		}
+	}
+	compare("parts.json", 0)
+	compare("hidden.json", 1e-13) // the order of units is another
+
+	must(t, with("digest", data, "-o", in("may.digest"))...)
+	must(t, with("digest", other, "-o", in("alone.digest"))...)
+	must(t, with("digest", other, "--frame-from", in("may.digest"), "-o", in("june.digest"))...)
+	fails(t, exitFailed, "make the digests with --frame-from", "fit", in("may.digest"), in("alone.digest"))
+	must(t, "fit", in("may.digest"), in("june.digest"), "--json", "--errors", "classical, cr1(crane), cr3(crane)", "-o", in("days.json"))
+	must(t, with("fit", data, other, "--passes", "1", "--arithmetic", "extended", "--json", "-o", in("both.json"))...)
+	want = result(t, in("both.json"))
+	compare("days.json", 1e-11)
+
+	fails(t, exitUse, "only the whole model", "fit", in("may.digest"), "--terms", "pallets")
+	fails(t, exitUse, "fixed when the digest was made", "fit", in("may.digest"), "--sweep", "quay")
+	fails(t, exitUse, "for hc1 fit the data", "digest", data, "--outcome", "minutes", "--terms", "pallets", "--sweep", "crane", "--errors", "hc1", "-o", in("x.digest"))
+}
