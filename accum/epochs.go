@@ -39,32 +39,12 @@ type epoch struct {
 // joinWorkers joins the sums of workers exactly: the order does not show.
 func joinWorkers(ws []*firstWorker) (*epoch, error) {
 	w := ws[0]
+	for _, o := range ws[1:] {
+		w.join(o)
+	}
 	e := &epoch{frame: w.frame, tables: w.tables, pairs: pairTablesOf(w.pairs), clusters: make([]*groupStore, len(w.clusters)),
 		lone: w.lone, reach: w.reach, weight: w.weight, freq: w.freq, rows: w.rows, nonzero: w.nonzero, value: w.value, varied: w.varied}
 	e.tally.Add(&w.eval.Tally)
-	for _, o := range ws[1:] {
-		w.gramX.merge(o.gramX)
-		if w.q != nil {
-			w.fourX.merge(o.fourX)
-		}
-		for i, t := range o.tables {
-			e.tables[i].mergeFrom(t, same(len(t.rows)))
-		}
-		for k, t := range o.lone {
-			if t != nil {
-				e.lone[k].mergeFrom(t)
-			}
-		}
-		e.reach = max(e.reach, o.reach)
-		e.weight.merge(&o.weight)
-		e.freq += o.freq
-		e.rows += o.rows
-		for j, n := range o.nonzero {
-			e.nonzero[j] += n
-		}
-		joinVaried(e.value, e.varied, o.value, o.varied)
-		e.tally.Add(&o.eval.Tally)
-	}
 	if w.cells != nil {
 		e.cells = w.cells.store
 		var all []*cells
@@ -117,6 +97,32 @@ func joinWorkers(ws []*firstWorker) (*epoch, error) {
 		w.fourX.values(e.fourth)
 	}
 	return e, nil
+}
+
+// join adds the sums that o keeps to itself, but those of clusters and unique rows.
+func (w *firstWorker) join(o *firstWorker) {
+	w.gramX.merge(o.gramX)
+	if w.q != nil {
+		w.fourX.merge(o.fourX)
+	}
+	for i, t := range o.tables {
+		w.tables[i].mergeFrom(t, same(len(t.rows)))
+	}
+	for k, t := range o.lone {
+		if t != nil {
+			w.lone[k].mergeFrom(t)
+		}
+	}
+	w.reach = max(w.reach, o.reach)
+	w.weight.merge(&o.weight)
+	w.freq += o.freq
+	w.rows += o.rows
+	for j, n := range o.nonzero {
+		w.nonzero[j] += n
+		w.zero[j] += o.zero[j]
+	}
+	joinVaried(w.value, w.varied, o.value, o.varied)
+	w.eval.Tally.Add(&o.eval.Tally)
 }
 
 // joinVaried joins what is known of the nonzero cells of numeric terms: whether they

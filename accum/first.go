@@ -455,6 +455,9 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		for i := range ws {
 			bw[i] = ws[i]
 		}
+		if p.saves, err = o.Checkpoint.savesFirst(p, ws, &needs); err != nil {
+			return nil, err
+		}
 		if err := p.run(ctx, bw, nil, scan.Next); err != nil {
 			return nil, err
 		}
@@ -463,6 +466,8 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 			return nil, err
 		}
 		epochs = append(epochs, e)
+	} else if o.Checkpoint != nil {
+		return nil, o.Checkpoint.fail("the first rows of the input do not say how to sum it, so that sums cannot be taken up again; leave --checkpoint out")
 	} else {
 		if epochs, extended, err = runEpochs(ctx, p, scan, l, &needs, b, shift, !src.Info().Rewindable, o); err != nil {
 			return nil, err

@@ -47,6 +47,9 @@ type Options struct {
 	Arithmetic Arithmetic
 	// Sample, if not nil, is what TakeSample gave for the same input and design.
 	Sample *Sample
+	// Checkpoint, if not nil, keeps the sums of finished segments and has those that it
+	// found left out. The input must be one that can be sampled.
+	Checkpoint *Checkpoint
 
 	// For tests.
 	createScratch func(dir string) (scratchFile, error)

@@ -202,6 +202,7 @@ type blockWorker interface {
 type pass struct {
 	meter   *Meter
 	timings *Timings
+	saves   *saver // nil without a checkpoint
 
 	mu       sync.Mutex
 	errAt    int // number of the segment of the error, or maxInt
@@ -247,6 +248,10 @@ func (p *pass) failed(segment int) bool {
 // finished, and the error of the lowest segment is returned. With start set the
 // first worker starts with that segment.
 func (p *pass) run(ctx context.Context, workers []blockWorker, start *begun, next func(context.Context) (stream.Segment, error)) error {
+	if p.saves.finished() {
+		return nil
+	}
+	next = p.saves.skip(next)
 	g, ctx := errgroup.WithContext(ctx)
 	var nextMu sync.Mutex
 	done := false
@@ -272,33 +277,52 @@ func (p *pass) run(ctx context.Context, workers []blockWorker, start *begun, nex
 					err = fmt.Errorf("internal error while summing: %v", x)
 				}
 			}()
-			for first := true; ; first = false {
-				var seg stream.Segment
-				var from begun
-				if first && i == 0 && start != nil {
-					seg, from = start.seg, *start
-				} else if seg, err = take(); errors.Is(err, io.EOF) {
-					return nil
-				} else if err != nil {
-					if ctx.Err() != nil {
-						return ctx.Err()
+			one := func(from begun) (more, clean bool, err error) {
+				p.saves.enter()
+				defer func() { p.saves.leave(clean) }()
+				seg := from.seg
+				if seg == nil {
+					if seg, err = take(); errors.Is(err, io.EOF) {
+						return false, true, nil
 					}
-					p.fail(math.MaxInt-1, err)
-					return nil
 				}
-				if err := p.segment(ctx, w, seg, from); err != nil {
-					if ctx.Err() != nil {
-						return ctx.Err()
+				if err == nil {
+					if err = p.segment(ctx, w, seg, from); err == nil {
+						return true, !p.failed(seg.Number()), nil
 					}
-					p.fail(seg.Number(), err)
+				}
+				if ctx.Err() != nil {
+					return false, false, ctx.Err()
+				}
+				if seg == nil {
+					p.fail(math.MaxInt-1, err)
+					return false, false, nil
+				}
+				p.fail(seg.Number(), err)
+				return true, false, nil
+			}
+			var from begun
+			if i == 0 && start != nil {
+				from = *start
+			}
+			for more := true; more; from = (begun{}) {
+				if more, _, err = one(from); err != nil {
+					return err
+				}
+				if err := p.saves.save(p, false); err != nil {
+					return err
 				}
 			}
+			return nil
 		})
 	}
 	if err := g.Wait(); err != nil {
 		return err
 	}
-	return p.err
+	if p.err != nil {
+		return p.err
+	}
+	return p.saves.save(p, true)
 }
 
 // begun is a segment that was opened and perhaps read into: some batches without

@@ -82,33 +82,38 @@ func (s *State) unchanged(p *pass) error {
 	return nil
 }
 
+// join adds the sums that o keeps to itself, but those of clusters.
+func (w *secondWorker) join(o *secondWorker) {
+	mine := w.allMeats()
+	for k, m := range o.allMeats() {
+		if !m.used {
+			continue
+		}
+		mine[k].used = true
+		mine[k].gramX.merge(m.gramX)
+		for i, t := range m.tables {
+			mine[k].tables[i].mergeFrom(t, same(len(t.rows)))
+		}
+	}
+	for i := range o.scores {
+		w.loneT[i].mergeFrom(o.loneT[i])
+		w.loneC[i].mergeFrom(o.loneC[i])
+	}
+	w.spreadX.merge(o.spreadX)
+	w.maxLever = max(w.maxLever, o.maxLever)
+	w.loneRows += o.loneRows
+	w.heavyCount += o.heavyCount
+	w.heavy = append(w.heavy, o.heavy...)
+	for i, c := range o.over {
+		w.over[i] += c
+	}
+	w.highest = append(w.highest, o.highest...)
+}
+
 func (s *State) joinSecond(ws []*secondWorker, rp *RowPass, p *pass, unit int, common *secondCommon) (*RowSums, int, error) {
 	w := ws[0]
 	for _, o := range ws[1:] {
-		mine := w.allMeats()
-		for k, m := range o.allMeats() {
-			if !m.used {
-				continue
-			}
-			mine[k].used = true
-			mine[k].gramX.merge(m.gramX)
-			for i, t := range m.tables {
-				mine[k].tables[i].mergeFrom(t, same(len(t.rows)))
-			}
-		}
-		for i := range o.scores {
-			w.loneT[i].mergeFrom(o.loneT[i])
-			w.loneC[i].mergeFrom(o.loneC[i])
-		}
-		w.spreadX.merge(o.spreadX)
-		w.maxLever = max(w.maxLever, o.maxLever)
-		w.loneRows += o.loneRows
-		w.heavyCount += o.heavyCount
-		w.heavy = append(w.heavy, o.heavy...)
-		for i, c := range o.over {
-			w.over[i] += c
-		}
-		w.highest = append(w.highest, o.highest...)
+		w.join(o)
 	}
 	out := &RowSums{MaxLeverage: w.maxLever, LoneRows: w.loneRows, HeavyRows: w.heavyCount, Over: w.over, Highest: highest(w.highest), Passes: 1, Bytes: p.bytes}
 	if rp.Spread {

@@ -680,6 +680,9 @@ func second(ctx context.Context, src stream.Source, s *State, rp RowPass, o Opti
 		ws[i] = newSecondWorker(s, &rp, unit, common)
 		bw[i] = ws[i]
 	}
+	if p.saves, err = o.Checkpoint.savesSecond(p, ws); err != nil {
+		return nil, 0, err
+	}
 	err = p.run(ctx, bw, nil, scan.Next)
 	if c := common.series; c != nil && ctx.Err() == nil {
 		if err == nil {

@@ -38,7 +38,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 	}
 	var l *listed
 	if d.Sweep >= 0 && len(d.Categories) > 0 {
-		if l, err = listLevels(ctx, src, d, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter}); err != nil {
+		if l, err = listLevels(ctx, src, d, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Checkpoint: o.Checkpoint}); err != nil {
 			return nil, err
 		}
 		d = l.design
@@ -51,7 +51,7 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		p.hypotheses = asked
 	}
 	f := &fitter{ctx: ctx, src: src, d: d, o: o, plan: p, listed: l, told: map[string]bool{},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Clusters: o.ClusterMemory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetics[o.Arithmetic], Sample: p.sample, Checkpoint: o.Checkpoint}}
 	if f.scan.Meter == nil {
 		f.scan.Meter = new(accum.Meter)
 	}

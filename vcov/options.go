@@ -69,4 +69,7 @@ type Options struct {
 	Shape bool
 	// Timings asks for Run.Timings.
 	Timings bool
+	// Checkpoint, if not nil, keeps the sums of finished segments, for a run that goes on
+	// after it was stopped. Not for hac, nor for an input that cannot be sampled.
+	Checkpoint *accum.Checkpoint
 }

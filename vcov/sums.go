@@ -81,7 +81,7 @@ func Gather(ctx context.Context, src stream.Source, d *stream.Design, o Options,
 	if d.Sweep >= 0 && arithmetic == accum.Auto {
 		arithmetic = accum.Extended // what varies within units is known when all rows are read
 	}
-	return accum.First(ctx, src, d, needs, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetic, Sample: sample})
+	return accum.First(ctx, src, d, needs, accum.Options{Workers: o.Workers, Memory: o.Memory, Dense: o.Dense, Scratch: o.Scratch, Meter: o.Meter, Arithmetic: arithmetic, Sample: sample, Checkpoint: o.Checkpoint})
 }
 
 // Kept is what sums allow: those of one pass, and of a second round, if there are any.
@@ -99,7 +99,7 @@ func forRows(ctx context.Context, s *accum.State, o Options) (*fitter, error) {
 		return nil, err
 	}
 	f := &fitter{ctx: ctx, d: s.Design, o: o, told: map[string]bool{}, route: "sums", plan: &Plan{Route: "sums"},
-		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Scratch: o.Scratch, Meter: o.Meter}}
+		scan: accum.Options{Workers: o.Workers, Memory: o.Memory, Scratch: o.Scratch, Meter: o.Meter, Checkpoint: o.Checkpoint}}
 	if f.scan.Meter == nil {
 		f.scan.Meter = new(accum.Meter)
 	}
