@@ -581,13 +581,17 @@ func gatherSecond(ws []*secondWorker) error {
 // savesFirst begins pass one.
 func (c *Checkpoint) savesFirst(p *pass, ws []*firstWorker, needs *Needs) (*saver, error) {
 	w := ws[0]
+	var clusters int64 // a bound that decides what is given up
+	if !needs.Keep || needs.Cells {
+		clusters = w.budget.cluster
+	}
 	return c.saves(p, struct {
 		Frame    *Frame
 		Extended bool
 		Unit     int
 		Needs    Needs
 		Clusters int64
-	}{w.frame, w.wide != nil, w.budget.unit, *needs, w.budget.cluster},
+	}{w.frame, w.wide != nil, w.budget.unit, *needs, clusters},
 		func() error { return gatherFirst(ws) }, func(a *archive) { a.first(w) })
 }
 

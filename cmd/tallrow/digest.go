@@ -61,7 +61,10 @@ columns kept, or another kind of errors that its sums allow. --errors says what 
 		if err != nil {
 			return err
 		}
-		return a.tellDigest(s, made)
+		if err := a.tellDigest(s, made); err != nil || made.done == nil {
+			return err
+		}
+		return made.done()
 	}
 	return cmd
 }
@@ -94,6 +97,8 @@ type made struct {
 	Frames  int          `json:"frames"`
 	Digests int          `json:"digests,omitempty"` // that were joined
 	Runs    []madeRun    `json:"runs"`
+
+	done func() error // see prepared
 }
 
 type madeRun struct {
@@ -217,6 +222,9 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 		return nil, stream.Usef("--part: this input cannot be read in parts; want files that are neither compressed text nor pipes")
 	}
 	model := digest.NewModel(p.design, p.src.Schema(), len(s.keep))
+	if err := a.openCheckpoint(ctx, s, p, "digest", onDigest); err != nil {
+		return nil, err
+	}
 	o := p.opts
 	o.Errors = p.req.kinds
 	if hide != nil {
@@ -289,7 +297,7 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 		return nil, err
 	}
 	d := describeDigest(m, s.output, st.Size())
-	d.Format = "tallrow-digest-made/1"
+	d.Format, d.done = "tallrow-digest-made/1", p.done
 	_, later, err := vcov.SumsFor(p.design, o)
 	if err != nil {
 		return nil, err

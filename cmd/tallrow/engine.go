@@ -150,8 +150,9 @@ func (a *app) newSpool(s *settings) (string, error) {
 
 // fitted is a result with what was asked for.
 type fitted struct {
-	res *vcov.Result
-	req request
+	res  *vcov.Result
+	req  request
+	done func() error // see prepared
 }
 
 // prepared is an opened input with the model bound to it.
@@ -162,6 +163,7 @@ type prepared struct {
 	src    stream.Source
 	design *stream.Design
 	opts   vcov.Options
+	done   func() error // of the checkpoint, once the result is out; nil without one
 }
 
 // prepare opens the data and binds the model. The source must be closed.
@@ -263,6 +265,9 @@ func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
 		return nil, err
 	}
 	if len(names) > 0 {
+		if err := s.noCheckpoint("digests are read in moments, there is nothing to keep; leave it out"); err != nil {
+			return nil, err
+		}
 		return a.fromDigests(ctx, s, names)
 	}
 	p, err := a.prepare(ctx, s)
@@ -270,6 +275,9 @@ func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
 		return nil, err
 	}
 	defer p.src.Close()
+	if err := a.openCheckpoint(ctx, s, p, "fit", onFit); err != nil {
+		return nil, err
+	}
 	stop := a.watch(s, p.opts.Meter)
 	res, err := vcov.Fit(ctx, p.src, p.design, p.opts)
 	stop()
@@ -285,7 +293,7 @@ func (a *app) fit(ctx context.Context, s *settings) (*fitted, error) {
 	if n := p.src.Info().Skipped; n > 0 {
 		res.Warnings = append(res.Warnings, vcov.Warning{Code: "skipped-files", Text: fmt.Sprintf("%s in folders passed over because the name starts with _ or .", plural(int64(n), "file", "files"))})
 	}
-	return &fitted{res, p.req}, nil
+	return &fitted{res, p.req, p.done}, nil
 }
 
 // echo says in full what was asked.

@@ -43,6 +43,9 @@ command line says goes before it.`,
 			return err
 		}
 		if s.eachDigest {
+			if err := s.noCheckpoint("does not go with --each-digest: digests are read in moments"); err != nil {
+				return err
+			}
 			x, err := a.eachFit(cmd.Context(), s)
 			if err != nil {
 				return err
@@ -61,14 +64,16 @@ command line says goes before it.`,
 			return err
 		}
 		v := newView(f.res, f.req.names())
+		var text []byte
 		if !s.json {
-			return out.write([]byte(renderText(v, out.width())))
-		}
-		text, err := jsonLine(v.document())
-		if err != nil {
+			text = []byte(renderText(v, out.width()))
+		} else if text, err = jsonLine(v.document()); err != nil {
 			return err
 		}
-		return out.write(text)
+		if err := out.write(text); err != nil || f.done == nil {
+			return err
+		}
+		return f.done()
 	}
 	return cmd
 }

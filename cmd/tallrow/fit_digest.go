@@ -145,7 +145,7 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	res.Run.Seconds = vcov.Number(time.Since(start).Seconds())
 	res.Run.Digests = len(names)
 	res.Run.PeakBytes = peakBytes()
-	return &fitted{res, q.req}, nil
+	return &fitted{res: res, req: q.req}, nil
 }
 
 // absolute lists the paths of digests.

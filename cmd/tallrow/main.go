@@ -120,6 +120,8 @@ type app struct {
 	quit     bool     // cleaned up: nothing may be registered any more
 	cleaners []func() // last registered first
 	progress *progress
+
+	checkpoint string // its file; "" without one
 }
 
 // onExit registers f to run once when the run ends, however it ends. The

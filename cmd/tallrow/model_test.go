@@ -113,7 +113,7 @@ func TestModelKinds(t *testing.T) {
 func TestModelRefuses(t *testing.T) {
 	for _, c := range []struct{ text, want string }{
 		{"outcome = \"minutes\"\ntrems = \"a\"\n", `m.toml line 2: unknown key "trems"; did you mean terms?`},
-		{"\ncheckpoint = 3\n", "m.toml line 2: checkpoint is not in this version"},
+		{"\ncheckpoint = 3\n", "m.toml line 2: checkpoint belongs on the command line: --checkpoint"},
 		{"lags = 1.5\n", "m.toml line 1: lags: found 1.5, want \"auto\" or a whole number"},
 		{"lags = -1\n", "m.toml line 1: lags: found \"-1\""},
 		{"arithmetic = \"wide\"\n", "m.toml line 1: arithmetic: found \"wide\", want auto, double or extended"},

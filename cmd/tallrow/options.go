@@ -172,6 +172,9 @@ var options = []option{
 	{name: "scratch", value: "DIR", group: "Resources", on: onScan, file: true, def: "the system's folder",
 		help: "folder for temporary files: sums of clusters that do not fit --memory, the copy of a pipe that is read twice",
 		set:  func(s *settings, v value) error { s.scratch = v.text(); return nil }},
+	{name: "checkpoint", value: "FILE", group: "Resources", on: onFit | onDigest,
+		help: "keep the sums of what is read in FILE, every 30 seconds: after a stop of any kind the same command goes on from there and ends with the same bits; FILE is removed when the run is done",
+		set:  func(s *settings, v value) error { s.checkpoint = v.text(); return nil }},
 	{name: "plan", value: "FILE", group: "Resources", on: onFit,
 		help: "use the plan that `tallrow plan -o FILE` wrote; refused if model or data differ",
 		set:  func(s *settings, v value) error { s.plan = v.text(); return nil }},
@@ -220,7 +223,7 @@ var options = []option{
 
 // later names what is known and refused: it must never be ignored.
 var (
-	laterOptions  = []string{"checkpoint"}
+	laterOptions  = []string{}
 	laterCommands = []string{"launch"}
 )
 

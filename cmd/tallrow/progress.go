@@ -107,7 +107,7 @@ func describe(pass int32, rows int64, took time.Duration) string {
 // howFar says where an interrupted run was.
 func (a *app) howFar() string {
 	a.mu.Lock()
-	p := a.progress
+	p, kept := a.progress, a.checkpoint
 	a.mu.Unlock()
 	if p == nil {
 		return " before reading began; nothing was written"
@@ -120,6 +120,9 @@ func (a *app) howFar() string {
 	s := fmt.Sprintf(" in pass %d after %s", pass, plural(rows, "row", "rows"))
 	if total > 0 {
 		s += fmt.Sprintf(" (%s of the bytes)", percent(float64(min(bytes, total))/float64(total)))
+	}
+	if st, err := os.Stat(kept); kept != "" && err == nil && st.Size() > 0 {
+		return s + "; no result was written; the same command goes on from " + kept
 	}
 	return s + "; nothing was written"
 }

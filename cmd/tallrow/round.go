@@ -94,6 +94,9 @@ func (a *app) secondRound(ctx context.Context, s *settings) (*made, error) {
 	if !p.src.Info().Rewindable {
 		return nil, stream.Usef("--at: this input can be read only once, and the first round has read it")
 	}
+	if err := a.openCheckpoint(ctx, s, p, "digest", onDigest); err != nil {
+		return nil, err
+	}
 	o := p.opts
 	o.Errors = slices.DeleteFunc(slices.Clone(p.req.kinds), func(k vcov.Kind) bool { return k.Name == "classical" })
 	if len(o.Errors) == 0 {
@@ -166,7 +169,7 @@ func (a *app) secondRound(ctx context.Context, s *settings) (*made, error) {
 		return nil, err
 	}
 	d := describeDigest(m, s.output, st.Size())
-	d.Format = "tallrow-digest-made/1"
+	d.Format, d.done = "tallrow-digest-made/1", p.done
 	return d, nil
 }
 

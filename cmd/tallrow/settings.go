@@ -70,7 +70,10 @@ type settings struct {
 	at         string
 	partial    bool
 	eachDigest bool
+	checkpoint string
 
+	// raw has the texts of the given options.
+	raw map[string]string
 	// from says where each given option came from, for messages: "--terms" or
 	// "quay.toml line 3: terms".
 	from map[string]string
@@ -82,6 +85,7 @@ func newSettings() *settings {
 		missing: "skip", badRows: "stop", level: 0.95, adjust: "none", arithmetic: "auto",
 		format: "auto", decimal: "point", zone: time.UTC,
 		workers: runtime.GOMAXPROCS(0),
+		raw:     map[string]string{},
 		from:    map[string]string{},
 	}
 }
@@ -91,7 +95,7 @@ func (s *settings) give(o *option, v value, from string) error {
 	if err := o.set(s, v); err != nil {
 		return stream.Usef("%s: %s", from, err)
 	}
-	s.from[o.name] = from
+	s.raw[o.name], s.from[o.name] = v.text(), from
 	return nil
 }
 
