@@ -46,6 +46,11 @@
 // coefficients are known, what Second makes of rows. How many are kept hangs on a bound
 // of bytes that does not depend on workers; whether there were more is the same for all.
 //
+// # Checkpoints
+//
+// Since joining is exact, the sums of any set of finished segments, in whatever order,
+// are a place to go on from: see Checkpoint.
+//
 // # Limits
 //
 // One worker holds its own tables by level, joined at the end; pairs of levels of

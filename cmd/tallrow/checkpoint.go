@@ -157,7 +157,7 @@ func (s *settings) facts(ctx context.Context, command string, on int) ([]accum.F
 		}
 		facts = append(facts, accum.Fact{Name: "--" + o.name, Value: strconv.Quote(text)})
 	}
-	files, err := inputFiles(ctx, s.data)
+	files, err := s.inputFiles(ctx)
 	if err != nil {
 		return nil, err
 	}
