@@ -554,20 +554,26 @@ func (a *archive) pass(p *pass) {
 		}
 	}
 	n := a.count(len(p.checks))
-	one := func(number int, c segCheck) (int, segCheck) {
+	one := func(number int, c segCheck, q stream.Quotes) {
+		quotes := uint64(q)
 		a.int(&number)
 		a.int64(&c.rows)
 		a.word(&c.sum)
-		return number, c
+		a.word(&quotes)
+		if a.reading() && a.err == nil {
+			p.checks[number] = c
+			if quotes != 0 {
+				p.quotes[number] = stream.Quotes(quotes)
+			}
+		}
 	}
 	if !a.reading() {
 		for number, c := range p.checks {
-			one(number, c)
+			one(number, c, p.quotes[number])
 		}
 		return
 	}
 	for i := 0; i < n && a.err == nil; i++ {
-		number, c := one(0, segCheck{})
-		p.checks[number] = c
+		one(0, segCheck{}, 0)
 	}
 }

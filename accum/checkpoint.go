@@ -15,6 +15,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"sync"
 	"sync/atomic"
@@ -582,16 +583,18 @@ func gatherSecond(ws []*secondWorker) error {
 func (c *Checkpoint) savesFirst(p *pass, ws []*firstWorker, needs *Needs) (*saver, error) {
 	w := ws[0]
 	var clusters int64 // a bound that decides what is given up
-	if !needs.Keep || needs.Cells {
+	if len(needs.Clusters) > 0 && !needs.Keep || needs.Cells {
 		clusters = w.budget.cluster
 	}
+	spec := &w.lay.design.Spec
 	return c.saves(p, struct {
+		Model    []string
 		Frame    *Frame
 		Extended bool
 		Unit     int
 		Needs    Needs
 		Clusters int64
-	}{w.frame, w.wide != nil, w.budget.unit, *needs, clusters},
+	}{slices.Concat([]string{spec.Outcome, spec.Weight, spec.Where, spec.Sweep, ""}, spec.Terms, []string{""}, spec.Keys), w.frame, w.wide != nil, w.budget.unit, *needs, clusters},
 		func() error { return gatherFirst(ws) }, func(a *archive) { a.first(w) })
 }
 
