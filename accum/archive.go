@@ -443,12 +443,10 @@ func (a *archive) first(w *firstWorker) {
 	a.bool(&dropped)
 	if dropped && a.reading() && a.err == nil {
 		b.dropped.Store(true)
-		b.pool.close()
+		b.giveUp()
 	}
-	for _, g := range append(w.clusters[:len(w.clusters):len(w.clusters)], w.units) {
-		if g != nil && !dropped {
-			a.store(g.store)
-		}
+	for _, g := range w.keyed() {
+		a.store(g.store)
 	}
 	a.float(&w.reach)
 	one := []superSum{w.weight}

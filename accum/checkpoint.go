@@ -510,15 +510,25 @@ func (g *groups) settle() error {
 	return nil
 }
 
-// gather brings the sums of all workers to the first, between segments. The others
+// keyed lists the sums of clusters and units that are not given up.
+func (w *firstWorker) keyed() (list []*groups) {
+	for _, g := range w.clusters {
+		if g != nil && !w.budget.dropped.Load() {
+			list = append(list, g)
+		}
+	}
+	if w.units != nil {
+		list = append(list, w.units)
+	}
+	return list
+}
+
+// gatherFirst brings the sums of all workers to the first, between segments. The others
 // begin anew.
 func gatherFirst(ws []*firstWorker) error {
 	w := ws[0]
 	for _, o := range ws {
-		for _, g := range append(o.clusters[:len(o.clusters):len(o.clusters)], o.units) {
-			if g == nil || w.budget.dropped.Load() {
-				continue
-			}
+		for _, g := range o.keyed() {
 			if err := g.settle(); err != nil {
 				return err
 			}

@@ -352,9 +352,12 @@ func (w *firstWorker) fold() error {
 // drop gives up the second moments of clusters beyond their share. held must depend
 // on the number of clusters alone, so that the same data always take the same route.
 func (b *budget) drop(held int64) {
-	if held <= b.cluster || b.keep || b.dropped.Swap(true) {
-		return
+	if held > b.cluster && !b.keep && !b.dropped.Swap(true) {
+		b.giveUp()
 	}
+}
+
+func (b *budget) giveUp() {
 	if b.besideUnits != nil {
 		b.pool.drop(b.besideUnits)
 	} else {
