@@ -17,10 +17,10 @@ import (
 )
 
 // anyway lists the options that touch no sum: a run may go on with others.
-var anyway = []string{"workers", "memory", "scratch", "level", "adjust", "output", "json", "quiet", "timings", "cluster-detail", "checkpoint"}
+var anyway = []string{"workers", "hide-ids", "memory", "scratch", "level", "adjust", "output", "json", "quiet", "timings", "cluster-detail", "checkpoint"}
 
 // contents lists the options that name a file of which the content counts.
-var contents = []string{"plan", "frame-from", "hide-ids", "at"}
+var contents = []string{"plan", "frame-from", "at"}
 
 // saveEvery is a variable of the environment for tests: save after so many segments.
 const saveEvery = "TALLROW_CHECKPOINT_SEGMENTS"
