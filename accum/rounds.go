@@ -62,6 +62,7 @@ func (h *RowHeader) Join(o *RowHeader) error {
 			}
 			p[0].mergeFrom(p[1])
 		}
+		h.LoneTerms[i], h.LoneLevels[i] = h.LoneTerms[i].plain(), h.LoneLevels[i].plain()
 	}
 	join := func(a, b []partials) error {
 		if len(a) != len(b) {
@@ -94,7 +95,10 @@ func (r *RowSums) RowHeader() *RowHeader {
 	w := r.kept
 	h := &RowHeader{Meats: len(w.meats), Scores: list(w.pass.Scores), Moments: len(w.pass.Moments) > 0, Spread: w.pass.Spread, Unit: w.unit,
 		MaxLeverage: real(r.MaxLeverage), LoneRows: r.LoneRows, HeavyRows: r.HeavyRows, LoneUsed: w.lone.used, Read: r.read, Bytes: r.Bytes,
-		LoneTerms: w.loneT, LoneLevels: w.loneC}
+	}
+	for i := range w.scores {
+		h.LoneTerms, h.LoneLevels = append(h.LoneTerms, w.loneT[i].plain()), append(h.LoneLevels, w.loneC[i].plain())
+	}
 	for _, m := range w.rowMeats() {
 		ts, ps := []partials{}, []partials{}
 		for _, t := range m.tables {

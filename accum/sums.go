@@ -68,18 +68,23 @@ func (s *Section) plain() {
 	}
 	settleVaried(s.Value, s.Varied)
 	for i, t := range s.Lone {
-		if t == nil {
-			continue
-		}
-		u := *t
-		u.value = slices.Clone(t.value)
-		for j := range u.value {
-			if u.zero[j].in == inMany {
-				u.value[j] = 0
-			}
-		}
-		s.Lone[i] = &u
+		s.Lone[i] = t.plain()
 	}
+}
+
+// plain is t without cells that are of no more use: which came first is chance.
+func (t *loneTracker) plain() *loneTracker {
+	if t == nil {
+		return nil
+	}
+	u := *t
+	u.value = slices.Clone(t.value)
+	for j := range u.value {
+		if u.zero[j].in == inMany {
+			u.value[j] = 0
+		}
+	}
+	return &u
 }
 
 // ID identifies the frame, the unit and the arithmetic of a section: sections with
