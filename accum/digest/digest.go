@@ -119,6 +119,9 @@ type Run struct {
 	Parts int    `json:"parts"`
 	Have  []int  `json:"have"`
 	Files []File `json:"files"`
+	// Content identifies the used cells of a run that was not made in parts, so that a
+	// pipe is known again; empty if there are none.
+	Content string `json:"content,omitempty"`
 }
 
 // File is an input file as it was found. Checksum is the SHA-256 of its first and

@@ -48,7 +48,7 @@ func NewPool(readers []*Reader) (*Pool, error) {
 	runs := map[string]*Run{}
 	from := map[string]map[int]string{} // run and part: the file that has it
 	type claim struct{ run, path string }
-	paths, sums := map[string]claim{}, map[string]claim{}
+	paths, sums, cells := map[string]claim{}, map[string]claim{}, map[string]string{}
 	for _, r := range readers {
 		if a, b := r.Meta.Model.Fingerprint(), first.Meta.Model.Fingerprint(); a != b {
 			return nil, &PoolError{fmt.Sprintf("%s and %s are of different models: %s", first.Path, r.Path, first.Meta.Model.Differs(&r.Meta.Model))}
@@ -60,7 +60,7 @@ func NewPool(readers []*Reader) (*Pool, error) {
 		for _, run := range r.Meta.Runs {
 			have := runs[run.ID]
 			if have == nil {
-				have = &Run{ID: run.ID, Parts: run.Parts, Files: run.Files}
+				have = &Run{ID: run.ID, Parts: run.Parts, Files: run.Files, Content: run.Content}
 				runs[run.ID], from[run.ID] = have, map[int]string{}
 				for _, f := range run.Files {
 					if c, ok := paths[f.Path]; ok && f.Checksum != "" && c.run != run.ID {
@@ -72,6 +72,10 @@ func NewPool(readers []*Reader) (*Pool, error) {
 					}
 					paths[f.Path], sums[same] = claim{run.ID, r.Path}, claim{run.ID, r.Path}
 				}
+				if c, ok := cells[run.Content]; ok && run.Content != "" {
+					return nil, &PoolError{fmt.Sprintf("%s and %s overlap: they have used the same cells, perhaps once from a file and once from a pipe", c, r.Path)}
+				}
+				cells[run.Content] = r.Path
 			}
 			if have.Parts != run.Parts {
 				return nil, &PoolError{fmt.Sprintf("%s: found a run in %d parts, want %d as in another digest", r.Path, run.Parts, have.Parts)}

@@ -275,6 +275,9 @@ func (a *app) digest(ctx context.Context, s *settings) (*made, error) {
 	if parts == 1 {
 		content += state.Fingerprint
 	}
+	if parts == 1 && m.Header.Tally.Used > 0 {
+		run.Content = state.Fingerprint
+	}
 	run.ID = hash(model.Fingerprint(), content, fmt.Sprint(parts))
 	m.Runs = []*digest.Run{run}
 	var veil accum.Hide

@@ -4,6 +4,7 @@ import (
 	"context"
 	"encoding/json"
 	"fmt"
+	"io"
 	"math"
 	"os"
 	"path/filepath"
@@ -197,4 +198,23 @@ func TestSweptDigests(t *testing.T) {
 	fails(t, exitUse, "only the whole model", "fit", in("may.digest"), "--terms", "pallets")
 	fails(t, exitUse, "fixed when the digest was made", "fit", in("may.digest"), "--sweep", "quay")
 	fails(t, exitUse, "for hc1 fit the data", "digest", data, "--outcome", "minutes", "--terms", "pallets", "--sweep", "crane", "--errors", "hc1", "-o", in("x.digest"))
+}
+
+// The same rows from a file and from a pipe are found out.
+func TestSameRowsTwice(t *testing.T) {
+	dir := t.TempDir()
+	in := func(name string) string { return filepath.Join(dir, name) }
+	data := filepath.Join("..", "..", "testdata", "quays", "unloading.csv")
+	model := []string{"digest", "--outcome", "minutes", "--terms", "pallets", "--quiet"}
+	must(t, slices.Concat(model, []string{data, "-o", in("file.digest")})...)
+	f, err := os.Open(data)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer f.Close()
+	pipe := struct{ io.Reader }{f} // not a file for the program
+	if code, _, errw := try(context.Background(), pipe, slices.Concat(model, []string{"-", "-o", in("pipe.digest")})...); code != exitDone {
+		t.Fatal(errw)
+	}
+	fails(t, exitFailed, "they have used the same cells", "pool", in("file.digest"), in("pipe.digest"), "-o", in("both.digest"))
 }
