@@ -2,6 +2,7 @@ package accum
 
 import (
 	"bytes"
+	"cmp"
 	"context"
 	"crypto/sha256"
 	"encoding/binary"
@@ -55,6 +56,8 @@ type Section struct {
 	Pairs    []partials     `json:"pairs"`
 	Clusters []partials     `json:"clusters"` // by key
 	Units    *partials      `json:"units,omitempty"`
+
+	id string // see ID
 }
 
 // plain leaves nothing in the description that hangs on which worker saw which rows:
@@ -87,9 +90,12 @@ func (t *loneTracker) plain() *loneTracker {
 	return &u
 }
 
-// ID identifies the frame, the unit and the arithmetic of a section: sections with
-// one ID are added.
+// ID identifies the frame, the unit and the arithmetic of a section, which must not be
+// changed afterwards: sections with one ID are added.
 func (s *Section) ID() string {
+	if s.id != "" {
+		return s.id
+	}
 	b, err := json.Marshal(struct {
 		F *Frame
 		X bool
@@ -99,7 +105,8 @@ func (s *Section) ID() string {
 		panic(err) // plain data
 	}
 	h := sha256.Sum256(b)
-	return hex.EncodeToString(h[:16])
+	s.id = hex.EncodeToString(h[:16])
+	return s.id
 }
 
 // real is a float64 that keeps its value in JSON, NaN and infinities included.
@@ -292,10 +299,11 @@ func (s *State) Header() *Header {
 
 // retained lists the epochs in the order of their IDs.
 func (s *State) retained() []*epoch {
-	es := slices.Clone(s.epochs)
-	id := func(e *epoch) string { return (&Section{Frame: e.frame, Extended: e.extended, Unit: e.unit}).ID() }
-	slices.SortFunc(es, func(a, b *epoch) int { return compareBytes([]byte(id(a)), []byte(id(b))) })
-	return es
+	ids := map[*epoch]string{}
+	for _, e := range s.epochs {
+		ids[e] = (&Section{Frame: e.frame, Extended: e.extended, Unit: e.unit}).ID()
+	}
+	return slices.SortedFunc(maps.Keys(ids), func(a, b *epoch) int { return cmp.Compare(ids[a], ids[b]) })
 }
 
 // Records calls f with every record of a state that was made with Needs.Retain, in
@@ -533,7 +541,7 @@ func (t *loneTracker) conceal(key int, kind stream.Kind, hide Hide) *loneTracker
 	return &n
 }
 
-// Join adds what o knows of other rows. Sections come out in the order of their IDs.
+// Join adds what o knows of other rows. Sections are in the order of their IDs.
 func (h *Header) Join(o *Header) error {
 	if h.Fourth != o.Fourth || !slices.Equal(h.Clusters, o.Clusters) {
 		return errors.New("they hold different sums")
@@ -544,20 +552,21 @@ func (h *Header) Join(o *Header) error {
 	h.Segments += o.Segments
 	h.Bytes += o.Bytes
 	h.Unread.Add(o.Unread)
-	h.Problems = append(h.Problems, o.Problems...)
+	// Whatever the order of joining, the first ones by place are kept.
+	h.Problems = slices.Concat(h.Problems, o.Problems)
+	slices.SortStableFunc(h.Problems, func(a, b *stream.RowError) int {
+		p, q := &a.Pos, &b.Pos
+		return cmp.Or(cmp.Compare(p.File, q.File), cmp.Compare(p.Group, q.Group), cmp.Compare(p.Line, q.Line), cmp.Compare(p.Offset, q.Offset),
+			cmp.Compare(p.Row, q.Row), cmp.Compare(p.Column, q.Column), cmp.Compare(a.Found, b.Found))
+	})
 	h.Problems = h.Problems[:min(len(h.Problems), stream.MaxProblems)]
-	byID := map[string]*Section{}
-	for _, c := range slices.Concat(h.Sections, o.Sections) {
-		id := c.ID()
-		if byID[id] == nil {
-			byID[id] = c
-		} else if err := byID[id].join(c); err != nil {
+	for _, c := range o.Sections {
+		i, ok := slices.BinarySearchFunc(h.Sections, c.ID(), func(s *Section, id string) int { return cmp.Compare(s.ID(), id) })
+		if !ok {
+			h.Sections = slices.Insert(h.Sections, i, c)
+		} else if err := h.Sections[i].join(c); err != nil {
 			return err
 		}
-	}
-	h.Sections = nil
-	for _, id := range slices.Sorted(maps.Keys(byID)) {
-		h.Sections = append(h.Sections, byID[id])
 	}
 	return nil
 }
@@ -667,11 +676,18 @@ func Load(ctx context.Context, d *stream.Design, h *Header, next func() (*Record
 	}()
 	ld := &sumsLoader{lay: l, num: b.num, needs: &needs}
 	p := newPass(nil, nil)
+	if need := ld.bytes(h); need > o.Memory {
+		return nil, &MemoryError{What: fmt.Sprintf("%d frames of %d numeric columns", len(h.Sections), l.p0+1), Need: need, Have: o.Memory}
+	}
+	extended := len(h.Sections) > 0 && !slices.ContainsFunc(h.Sections, func(c *Section) bool { return !c.Extended })
 	frames := map[string]*Frame{}
 	for i, c := range h.Sections {
 		e, err := ld.section(c, b, frames)
 		if err != nil {
 			return nil, fmt.Errorf("section %d: %w", i, err)
+		}
+		if extended {
+			e.gramLow = make([]float64, len(e.gram))
 		}
 		ld.epochs = append(ld.epochs, e)
 	}
@@ -699,23 +715,10 @@ func Load(ctx context.Context, d *stream.Design, h *Header, next func() (*Record
 	for i, q := range h.Problems {
 		p.problems = append(p.problems, problem{i, 0, q})
 	}
-	extended := len(ld.epochs) > 0 && !slices.ContainsFunc(ld.epochs, func(e *epoch) bool { return !e.extended })
 	if len(ld.epochs) == 0 {
 		return nil, &NoRowsError{Tally: tally, Malformed: h.Malformed}
 	}
 	ld.epochs[0].tally = tally
-	for _, e := range ld.epochs {
-		if extended {
-			e.gramLow = make([]float64, len(e.gram))
-			e.gramX.wides(e.gram, e.gramLow)
-		} else {
-			e.gramX.values(e.gram)
-		}
-		if needs.Fourth {
-			e.fourth = make([]float64, len(e.fourX))
-			e.fourX.values(e.fourth)
-		}
-	}
 	s, refit, err := newState(l, &needs, p, ld.epochs, extended, b)
 	if err != nil {
 		return nil, err
@@ -738,6 +741,21 @@ type sumsLoader struct {
 	epochs []*epoch
 	into   map[*groupStore]*groupLoader
 	fix    []fixed
+	one    superSum
+}
+
+// bytes bounds what the numbers of all sections take, before they are believed.
+func (ld *sumsLoader) bytes(h *Header) int64 {
+	each := 16.0
+	if ld.needs.Retain {
+		each += 8*superDigits + 8
+	}
+	n := float64(ld.lay.width) * float64(ld.lay.width+1) / 2
+	if ld.needs.Fourth {
+		p := float64(ld.lay.p0 + 2)
+		n += p * (p + 1) * (p + 2) * (p + 3) / 24
+	}
+	return int64(min(each*n*float64(len(h.Sections)), 1<<60))
 }
 
 // errSweptFrames: sums of units cannot be moved to another frame.
@@ -770,10 +788,12 @@ func (ld *sumsLoader) section(c *Section, b *budget, frames map[string]*Frame) (
 	}
 	e := &epoch{frame: f, extended: c.Extended, unit: c.Unit, rows: c.Rows, freq: c.Freq, reach: float64(c.Reach),
 		nonzero: c.NonZero, value: c.Value, varied: c.Varied, lone: c.Lone, clusters: make([]*groupStore, len(l.design.Keys))}
-	e.gramX = make(superVec, l.width*(l.width+1)/2)
-	e.gram = make([]float64, len(e.gramX))
+	e.gram = make([]float64, l.width*(l.width+1)/2)
 	if ld.needs.Fourth {
-		e.fourX = make(superVec, newQuartic(l.p0+2).size())
+		e.fourth = make([]float64, newQuartic(l.p0+2).size())
+	}
+	if ld.needs.Retain {
+		e.gramX, e.fourX = make(superVec, len(e.gram)), make(superVec, len(e.fourth))
 	}
 	for i := range l.tables {
 		t := newKeyTable(len(l.tables[i].prods), c.Unit)
@@ -826,22 +846,35 @@ func (ld *sumsLoader) take(r *Record, p *pass) error {
 		return errPlace
 	}
 	e := ld.epochs[r.Section]
-	number := func(v superVec) error {
-		if r.Table < 0 || r.Table >= len(v) {
+	number := func(v superVec, hi, lo []float64) error {
+		if r.Table < 0 || r.Table >= len(hi) {
 			return errPlace
 		}
-		return v[r.Table].setLimbs(r)
+		x := &ld.one
+		if v != nil {
+			x = &v[r.Table]
+		}
+		if err := x.setLimbs(r); err != nil {
+			return err
+		}
+		if lo == nil {
+			hi[r.Table] = x.value()
+		} else {
+			w := x.wide()
+			hi[r.Table], lo[r.Table] = w.Hi, w.Lo
+		}
+		return nil
 	}
 	switch r.What {
 	case WeightSum:
 		return e.weight.setLimbs(r)
 	case SecondMoment:
-		return number(e.gramX)
+		return number(e.gramX, e.gram, e.gramLow)
 	case FourthMoment:
 		if !ld.needs.Fourth {
 			return nil
 		}
-		return number(e.fourX)
+		return number(e.fourX, e.fourth, nil)
 	case LevelSums:
 		if r.Table < 0 || r.Table >= len(e.tables) {
 			return errPlace

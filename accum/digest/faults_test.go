@@ -177,7 +177,7 @@ func use(names ...string) error {
 // Damage under a right checksum: a file that somebody made so. Errors are welcome,
 // panics are not; nor is memory without end.
 func TestForgedBytes(t *testing.T) {
-	for _, shape := range []string{"precision", "products", "clusters"} {
+	for _, shape := range []string{"precision", "products", "clusters", "swept"} {
 		name, _, _ := small(t, shape)
 		whole, err := os.ReadFile(name)
 		if err != nil {
@@ -263,7 +263,7 @@ func hostile(doc any, f func()) {
 func TestForgedDescription(t *testing.T) {
 	dir := t.TempDir()
 	other, _, _ := small(t, "clusters")
-	for _, shape := range []string{"clusters", "crossed clusters", "products"} {
+	for _, shape := range []string{"clusters", "crossed clusters", "products", "swept"} {
 		_, m, x := small(t, shape)
 		text, err := json.Marshal(m)
 		if err != nil {

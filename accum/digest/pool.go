@@ -63,10 +63,14 @@ func NewPool(readers []*Reader) (*Pool, error) {
 				have = &Run{ID: run.ID, Parts: run.Parts, Files: run.Files, Content: run.Content}
 				runs[run.ID], from[run.ID] = have, map[int]string{}
 				for _, f := range run.Files {
-					if c, ok := paths[f.Path]; ok && f.Checksum != "" && c.run != run.ID {
-						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: both have read %s", c.path, r.Path, f.Path)}
-					}
 					same := fmt.Sprint(f.Size, " ", f.Checksum)
+					if c, ok := paths[f.Path]; ok && f.Checksum != "" && c.run != run.ID {
+						what := ""
+						if s, ok := sums[same]; !ok || s.run != c.run {
+							what = ", which was not the same then; if it held other rows, give it a name of its own and make its digest again"
+						}
+						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: both have read %s%s", c.path, r.Path, f.Path, what)}
+					}
 					if c, ok := sums[same]; ok && f.Checksum != "" && !f.Empty && c.run != run.ID {
 						return nil, &PoolError{fmt.Sprintf("%s and %s overlap: %s has the content of a file that the other has read", c.path, r.Path, f.Path)}
 					}
