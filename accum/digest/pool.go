@@ -207,8 +207,8 @@ func (f *feed) next() (bool, error) {
 
 // Next returns the next record, nil after the last. It is valid until the next call.
 //
-// Errors: *PoolError for a segment that is there twice, or that was not read from where
-// it begins; *DamageError; those of the files.
+// Errors: *PoolError for a segment that is there twice, *QuoteError for one that was not
+// read from where it begins; *DamageError; those of the files.
 func (p *Pool) Next() (*accum.Record, error) {
 	r, err := p.merge()
 	if err != nil || p.quotes == nil {

@@ -59,7 +59,18 @@ func (c *quoteChain) see(r *accum.Record) error {
 	return nil
 }
 
-// end returns a *PoolError if a segment was not read from where it begins.
+// QuoteError is the *PoolError of parts that were not read from where they begin.
+type QuoteError struct {
+	Err   *PoolError
+	Again []int // parts to make again, quotes counted
+}
+
+func (e *QuoteError) Error() string { return e.Err.Error() }
+
+// Unwrap gives the *PoolError.
+func (e *QuoteError) Unwrap() error { return e.Err }
+
+// end returns a *QuoteError if a segment was not read from where it begins.
 func (c *quoteChain) end() error {
 	if len(c.wrong) == 0 {
 		return nil
@@ -87,5 +98,5 @@ func (c *quoteChain) end() error {
 		}
 	}
 	slices.Sort(again)
-	return &PoolError{fmt.Sprintf("by the quotes in all parts %s: make part(s) %s of %d again with --quotes count", strings.Join(list, ", "), numbers(again), parts)}
+	return &QuoteError{&PoolError{fmt.Sprintf("by the quotes in all parts %s: make part(s) %s of %d again with --quotes count", strings.Join(list, ", "), numbers(again), parts)}, again}
 }

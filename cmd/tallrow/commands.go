@@ -14,7 +14,7 @@ import (
 )
 
 // commands makes the commands, in the order of the help.
-var commands = []func(*app) *cobra.Command{newFit, newPlan, newColumns, newDigest, newPool}
+var commands = []func(*app) *cobra.Command{newFit, newPlan, newColumns, newDigest, newPool, newLaunch}
 
 // The order above is the order of the help.
 func init() { cobra.EnableCommandSorting = false }

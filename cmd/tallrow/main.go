@@ -120,6 +120,7 @@ type app struct {
 	quit     bool     // cleaned up: nothing may be registered any more
 	cleaners []func() // last registered first
 	progress *progress
+	jobs     string // what goes on elsewhere when this run is cut short
 
 	checkpoint string // its file; "" without one
 }

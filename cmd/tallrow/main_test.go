@@ -147,6 +147,8 @@ func TestScripts(t *testing.T) {
 				}
 				ts.Check(os.WriteFile(ts.MkAbs(args[0]), text, 0o644))
 			},
+			"sums": scriptSums,
+			"same": scriptSame,
 		},
 	})
 }
@@ -170,8 +172,8 @@ func TestWrongUse(t *testing.T) {
 		{model, "no data"},
 		{[]string{"columns"}, "no data"},
 		{[]string{"columns", ""}, "empty name"},
-		{[]string{"launch", "--seed", "3"}, "the command launch is not in this version"},
-		{[]string{"launch"}, "the command launch is not in this version"},
+		{[]string{"launch", "--seed", "3"}, "no outcome"},
+		{[]string{"launch", "--workers", "3"}, "--workers is not an option of launch"},
 		{[]string{"fits", "x"}, `unknown command "fits"; did you mean fit?`},
 		{[]string{"columns", "--terms", "x", "y"}, "--terms is not an option of columns"},
 		{[]string{"--nothing"}, "unknown option --nothing"},
@@ -201,7 +203,7 @@ func TestWrongUse(t *testing.T) {
 }
 
 func TestHelp(t *testing.T) {
-	for _, c := range []string{"fit", "plan", "columns", "digest", "pool"} {
+	for _, c := range []string{"fit", "plan", "columns", "digest", "pool", "launch"} {
 		code, out, errw := try(context.Background(), nil, c, "--help")
 		if code != exitDone || errw != "" {
 			t.Errorf("%s: status %d, stderr %q", c, code, errw)

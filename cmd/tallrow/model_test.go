@@ -74,9 +74,9 @@ func TestModelFile(t *testing.T) {
 		where: "tonnes > 0 && !night", missing: "stop", badRows: "skip", level: 0.9, clusterDetail: true, audit: audit{on: true, buckets: 40}, draws: 999, drawWeights: "signs", seed: 5, period: "date(t)", unit: "crane", fixedLags: true, lags: 3, kernel: "parzen", first: 1000,
 		format: "csv", decimal: "comma", null: []string{"-999", "a, b"}, zone: rome,
 		kinds:  map[string]stream.Kind{"crane": stream.Text, "odd, name = x": stream.Int64},
-		passes: 2, arithmetic: "extended", workers: 16, memory: 1 << 30, scratch: "/tmp",
+		passes: 2, arithmetic: "extended", workers: 16, memory: 1 << 30, scratch: "/tmp", launch: newSettings().launch,
 	}
-	if d := cmp.Diff(want, s, cmp.AllowUnexported(settings{}, audit{}), cmp.FilterPath(func(p cmp.Path) bool {
+	if d := cmp.Diff(want, s, cmp.AllowUnexported(settings{}, launchSettings{}, audit{}), cmp.FilterPath(func(p cmp.Path) bool {
 		return p.String() == "from" || p.String() == "raw"
 	}, cmp.Ignore()), cmp.Comparer(func(a, b *time.Location) bool { return a.String() == b.String() })); d != "" {
 		t.Error(d)

@@ -29,10 +29,12 @@ const (
 	onColumns
 	onDigest
 	onPool
+	onLaunch
 	onModel = onFit | onPlan
 	onAll   = onFit | onPlan | onColumns
-	onScan  = onAll | onDigest   // that read data
-	onSums  = onModel | onDigest // that have a model
+	onScan  = onAll | onDigest | onLaunch   // that read data
+	onSums  = onModel | onDigest | onLaunch // that have a model
+	onAsk   = onModel | onLaunch            // that ask for errors
 )
 
 // option is one word of the program. The table below is the only place that
@@ -60,7 +62,7 @@ type value struct {
 func (v value) text() string { return strings.Join(v.parts, ", ") }
 
 // Groups of options, in the order of the help.
-var groups = []string{"Model", "Errors", "Rows", "Reading", "Resources", "Digests", "Output"}
+var groups = []string{"Model", "Errors", "Rows", "Reading", "Resources", "Digests", "Launch", "Output"}
 
 var options = []option{
 	{name: "outcome", value: "EXPR", group: "Model", on: onSums, file: true,
@@ -88,7 +90,7 @@ var options = []option{
 	{name: "cluster", value: "EXPR", form: formList, group: "Errors", on: onSums, file: true,
 		help: "rows that move together: a column or an expression such as date(t)",
 		set:  func(s *settings, v value) (err error) { s.cluster, err = splitExprs(v); return err }},
-	{name: "hypothesis", value: "EQUATIONS", form: formMany, group: "Errors", on: onModel, file: true,
+	{name: "hypothesis", value: "EQUATIONS", form: formMany, group: "Errors", on: onAsk, file: true,
 		help: "test equations between coefficients under each kind of errors: \"pallets = 0.5\"; several in one, separated by commas, are tested together; may be repeated",
 		set:  func(s *settings, v value) error { s.hypotheses = v.parts; return nil }},
 	{name: "period", value: "EXPR", group: "Errors", on: onSums, file: true,
@@ -97,31 +99,31 @@ var options = []option{
 	{name: "unit", value: "EXPR", group: "Errors", on: onModel, file: true,
 		help: "hac: rows move together within these only; the input is sorted by unit, then period",
 		set:  func(s *settings, v value) error { s.unit = strings.TrimSpace(v.text()); return nil }},
-	{name: "lags", value: "auto|N", form: formAuto, group: "Errors", on: onModel, file: true, def: "auto",
+	{name: "lags", value: "auto|N", form: formAuto, group: "Errors", on: onAsk, file: true, def: "auto",
 		help: "how many periods (hac without a period: rows) apart errors still move together",
 		set:  setLags},
-	{name: "kernel", value: "bartlett|parzen|quadratic", group: "Errors", on: onModel, file: true, def: "bartlett",
+	{name: "kernel", value: "bartlett|parzen|quadratic", group: "Errors", on: onAsk, file: true, def: "bartlett",
 		help: "how their weight falls with the distance in time; quadratic is quadratic spectral",
 		set:  choose(func(s *settings) *string { return &s.kernel }, "bartlett", "parzen", "quadratic")},
-	{name: "draws", value: "N", form: formWhole, group: "Errors", on: onModel, file: true, def: "9999",
+	{name: "draws", value: "N", form: formWhole, group: "Errors", on: onAsk, file: true, def: "9999",
 		help: "draws of wcr and wcu; with few clusters all patterns of signs instead",
 		set:  setDraws},
-	{name: "draw-weights", value: "auto|signs|six-point", group: "Errors", on: onModel, file: true, def: "auto",
+	{name: "draw-weights", value: "auto|signs|six-point", group: "Errors", on: onAsk, file: true, def: "auto",
 		help: "what draws multiply clusters by; auto is six-point below 12 clusters",
 		set:  choose(func(s *settings) *string { return &s.drawWeights }, "auto", "signs", "six-point")},
-	{name: "seed", value: "N", form: formWhole, group: "Errors", on: onModel, file: true, def: "0",
+	{name: "seed", value: "N", form: formWhole, group: "Errors", on: onAsk, file: true, def: "0",
 		help: "other draws for every N",
 		set:  setSeed},
-	{name: "cluster-detail", form: formSwitch, group: "Errors", on: onModel, file: true, def: "false",
+	{name: "cluster-detail", form: formSwitch, group: "Errors", on: onAsk, file: true, def: "false",
 		help: "describe the clusters: how many count, what hangs on single ones",
 		set:  func(s *settings, v value) error { return setSwitch(&s.clusterDetail, v) }},
-	{name: "audit", value: "auto|N", form: formAuto, group: "Errors", on: onModel, file: true,
+	{name: "audit", value: "auto|N", form: formAuto, group: "Errors", on: onAsk, file: true,
 		help: "hold every kind of errors against replicates: N disjoint buckets (8 to 512) of whole clusters, without clusters of rows; auto takes up to 50; auto(quay), 40(quay) or auto(rows) say what they keep together",
 		set:  setAudit},
-	{name: "adjust", value: "none|holm|bh", group: "Errors", on: onModel, file: true, def: "none",
+	{name: "adjust", value: "none|holm|bh", group: "Errors", on: onAsk, file: true, def: "none",
 		help: "adjust the p of the terms for their number: holm against any false finding, bh against their share among the findings",
 		set:  choose(func(s *settings) *string { return &s.adjust }, "none", "holm", "bh")},
-	{name: "level", value: "P", form: formNumber, group: "Errors", on: onModel, file: true, def: "0.95",
+	{name: "level", value: "P", form: formNumber, group: "Errors", on: onAsk, file: true, def: "0.95",
 		help: "probability of the intervals, above 0 and below 1",
 		set:  setLevel},
 
@@ -134,7 +136,7 @@ var options = []option{
 	{name: "bad-rows", value: "stop|skip", group: "Rows", on: onScan, file: true, def: "stop",
 		help: "what to do with a row that cannot be read; skipped ones are counted",
 		set:  choose(func(s *settings) *string { return &s.badRows }, "stop", "skip")},
-	{name: "first", value: "N", form: formWhole, group: "Rows", on: onScan, file: true,
+	{name: "first", value: "N", form: formWhole, group: "Rows", on: onAll | onDigest, file: true,
 		help: "read only the first N rows",
 		set:  setFirst},
 
@@ -163,7 +165,7 @@ var options = []option{
 	{name: "arithmetic", value: "auto|double|extended", group: "Resources", on: onSums, file: true, def: "auto",
 		help: "extended has twice the digits; auto takes it where terms are so collinear that estimates lose digits",
 		set:  choose(func(s *settings) *string { return &s.arithmetic }, "auto", "double", "extended")},
-	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onScan, file: true, def: "one for each processor",
+	{name: "workers", value: "N", form: formWhole, group: "Resources", on: onAll | onDigest, file: true, def: "one for each processor",
 		help: "goroutines that read and sum; the result never depends on it",
 		set:  setWorkers},
 	{name: "memory", value: "SIZE", form: formSize, group: "Resources", on: onScan, file: true, def: "half of what the machine gives",
@@ -179,19 +181,19 @@ var options = []option{
 		help: "use the plan that `tallrow plan -o FILE` wrote; refused if model or data differ",
 		set:  func(s *settings, v value) error { s.plan = v.text(); return nil }},
 
-	{name: "keep", value: "LIST", form: formList, group: "Digests", on: onDigest, file: true,
+	{name: "keep", value: "LIST", form: formList, group: "Digests", on: onDigest | onLaunch, file: true,
 		help: "further terms or outcomes to keep sums of, for questions not asked now; rows are used where all of them are there",
 		set:  func(s *settings, v value) (err error) { s.keep, err = splitExprs(v); return err }},
 	{name: "part", value: "I/N", group: "Digests", on: onDigest,
 		help: "read part I of N, 0 <= I < N: other machines read the others, and pool joins them",
 		set:  setPart},
-	{name: "quotes", value: "guess|count", group: "Digests", on: onDigest, def: "guess",
+	{name: "quotes", value: "guess|count", group: "Digests", on: onDigest | onLaunch, def: "guess",
 		help: "how a --part of CSV finds out which of its text is inside quotes: from that text, which pool proves or refuses, or by reading all before it",
 		set:  choose(func(s *settings) *string { return &s.quotes }, "guess", "count")},
-	{name: "frame-from", value: "DIGEST", group: "Digests", on: onDigest,
+	{name: "frame-from", value: "DIGEST", group: "Digests", on: onDigest | onLaunch,
 		help: "sum in the frame of another digest, so that pooled days stay as small as one",
 		set:  func(s *settings, v value) error { s.frameFrom = v.text(); return nil }},
-	{name: "hide-ids", value: "KEYFILE", group: "Digests", on: onDigest,
+	{name: "hide-ids", value: "KEYFILE", group: "Digests", on: onDigest | onLaunch,
 		help: "put keyed hashes (HMAC-SHA-256) in place of cluster ids; the key stays in KEYFILE, 32 bytes or more",
 		set:  func(s *settings, v value) error { s.hideIDs = v.text(); return nil }},
 	{name: "at", value: "RESULT.json", group: "Digests", on: onDigest,
@@ -203,6 +205,31 @@ var options = []option{
 	{name: "each-digest", form: formSwitch, group: "Digests", on: onFit, def: "false",
 		help: "fit every digest by itself, not their sum: coefficients day by day",
 		set:  func(s *settings, v value) error { return setSwitch(&s.eachDigest, v) }},
+
+	{name: "parts", value: "N", form: formWhole, group: "Launch", on: onLaunch,
+		help: "how many parts the data are read in, each by a task of its own",
+		set:  setWhole(func(s *settings) *int { return &s.launch.parts }, maxParts)},
+	{name: "folder", value: "DIR", group: "Launch", on: onLaunch, def: "the result's name and .launch",
+		help: "folder for the state of the run, its digests and logs; all machines must see it",
+		set:  func(s *settings, v value) error { s.launch.folder = v.text(); return nil }},
+	{name: "cpus", value: "N", form: formWhole, group: "Launch", on: onLaunch, def: "1",
+		help: "processors for each task",
+		set:  setWhole(func(s *settings) *int { return &s.launch.cpus }, 4096)},
+	{name: "time", value: "TIME", group: "Launch", on: onLaunch, def: "1h",
+		help: "limit for each part, such as 90m or 1d12h: a task that nobody ends ends then",
+		set:  setTime},
+	{name: "tries", value: "N", form: formWhole, group: "Launch", on: onLaunch, def: "3",
+		help: "how often missing parts are submitted before launch gives up",
+		set:  setWhole(func(s *settings) *int { return &s.launch.tries }, 1000)},
+	{name: "submit-with", value: "WORDS", form: formMany, group: "Launch", on: onLaunch,
+		help: "further words for sbatch, such as \"--partition=night --account=quays\"; may be repeated",
+		set:  setSubmitWith},
+	{name: "resume", value: "DIR", group: "Launch", on: onLaunch,
+		help: "go on with the run in that folder, as the same command in the same place does",
+		set:  func(s *settings, v value) error { s.launch.resume = v.text(); return nil }},
+	{name: "dry-run", form: formSwitch, group: "Launch", on: onLaunch, def: "false",
+		help: "print the scripts and commands, submit nothing, write nothing",
+		set:  func(s *settings, v value) error { return setSwitch(&s.launch.dryRun, v) }},
 
 	{name: "json", form: formSwitch, group: "Output", on: onScan | onPool, def: "false",
 		help: "print JSON and nothing else",
@@ -224,7 +251,7 @@ var options = []option{
 // later names what is known and refused: it must never be ignored.
 var (
 	laterOptions  = []string{}
-	laterCommands = []string{"launch"}
+	laterCommands = []string{}
 )
 
 func optionNamed(name string) *option {

@@ -106,5 +106,6 @@ func (a *app) pool(ctx context.Context, s *settings) (*made, error) {
 // incomplete reports whether parts are missing.
 func incomplete(err error) bool {
 	var m *digest.MissingError
-	return errors.As(err, &m)
+	var l *lostParts
+	return errors.As(err, &m) || errors.As(err, &l)
 }

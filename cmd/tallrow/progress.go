@@ -107,8 +107,11 @@ func describe(pass int32, rows int64, took time.Duration) string {
 // howFar says where an interrupted run was.
 func (a *app) howFar() string {
 	a.mu.Lock()
-	p, kept := a.progress, a.checkpoint
+	p, kept, jobs := a.progress, a.checkpoint, a.jobs
 	a.mu.Unlock()
+	if jobs != "" {
+		return jobs
+	}
 	if p == nil {
 		return " before reading began; nothing was written"
 	}

@@ -72,6 +72,8 @@ type settings struct {
 	eachDigest bool
 	checkpoint string
 
+	launch launchSettings
+
 	// raw has the texts of the given options.
 	raw map[string]string
 	// from says where each given option came from, for messages: "--terms" or
@@ -86,6 +88,7 @@ func newSettings() *settings {
 		format: "auto", decimal: "point", zone: time.UTC,
 		workers: runtime.GOMAXPROCS(0),
 		raw:     map[string]string{},
+		launch:  launchSettings{cpus: 1, tries: 3, limit: time.Hour},
 		from:    map[string]string{},
 	}
 }
