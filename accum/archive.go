@@ -552,26 +552,27 @@ func (a *archive) pass(p *pass) {
 		}
 	}
 	n := a.count(len(p.checks))
-	one := func(number int, c segCheck, q stream.Quotes) {
+	one := func(number int, c segCheck, q stream.Quotes, lines int64) {
 		quotes := uint64(q)
 		a.int(&number)
 		a.int64(&c.rows)
 		a.word(&c.sum)
 		a.word(&quotes)
+		a.int64(&lines)
 		if a.reading() && a.err == nil {
 			p.checks[number] = c
 			if quotes != 0 {
-				p.quotes[number] = stream.Quotes(quotes)
+				p.quotes[number], p.lines[number] = stream.Quotes(quotes), lines
 			}
 		}
 	}
 	if !a.reading() {
 		for number, c := range p.checks {
-			one(number, c, p.quotes[number])
+			one(number, c, p.quotes[number], p.lines[number])
 		}
 		return
 	}
 	for i := 0; i < n && a.err == nil; i++ {
-		one(0, segCheck{}, 0)
+		one(0, segCheck{}, 0, 0)
 	}
 }

@@ -287,7 +287,7 @@ type saver struct {
 	c      *Checkpoint
 	number int    // of the pass, from 0
 	sums   string // identifies what is summed
-	done   map[int]bool
+	done   map[int]stream.SegmentTally
 	join   func() error   // brings all sums to the first worker
 	visit  func(*archive) // writes or reads those
 
@@ -326,9 +326,9 @@ func (c *Checkpoint) saves(p *pass, what any, join func() error, visit func(*arc
 		}
 		return nil, c.fail("%v"+startAgain, a.err)
 	}
-	k.done = map[int]bool{}
+	k.done = map[int]stream.SegmentTally{}
 	for n := range p.checks {
-		k.done[n] = true
+		k.done[n] = stream.SegmentTally{Quotes: p.quotes[n], Lines: p.lines[n]}
 	}
 	p.meter.Rows.Store(p.read)
 	p.meter.Bytes.Store(p.bytes)
@@ -348,10 +348,14 @@ func (k *saver) skip(next func(context.Context) (stream.Segment, error)) func(co
 	return func(ctx context.Context) (stream.Segment, error) {
 		for {
 			seg, err := next(ctx)
-			if err != nil || !k.done[seg.Number()] {
-				return seg, err
+			if err != nil {
+				return nil, err
 			}
-			if err := seg.Close(); err != nil {
+			known, ok := k.done[seg.Number()]
+			if !ok {
+				return seg, nil
+			}
+			if err := stream.PassOver(seg, known); err != nil {
 				return nil, err
 			}
 		}

@@ -215,6 +215,7 @@ type pass struct {
 	unread   stream.Unread
 	checks   map[int]segCheck
 	quotes   map[int]stream.Quotes // of segments of text
+	lines    map[int]int64         // of the same
 }
 
 type problem struct {
@@ -226,7 +227,7 @@ func newPass(m *Meter, t *Timings) *pass {
 	if m == nil {
 		m = new(Meter)
 	}
-	return &pass{meter: m, timings: t, errAt: math.MaxInt, checks: map[int]segCheck{}, quotes: map[int]stream.Quotes{}}
+	return &pass{meter: m, timings: t, errAt: math.MaxInt, checks: map[int]segCheck{}, quotes: map[int]stream.Quotes{}, lines: map[int]int64{}}
 }
 
 func (p *pass) fail(segment int, err error) {
@@ -404,7 +405,7 @@ func (p *pass) segment(ctx context.Context, w blockWorker, seg stream.Segment, f
 	defer p.mu.Unlock()
 	p.checks[seg.Number()] = ld.check(seen)
 	if t.Quotes != 0 {
-		p.quotes[seg.Number()] = t.Quotes
+		p.quotes[seg.Number()], p.lines[seg.Number()] = t.Quotes, t.Lines
 	}
 	p.read += t.Rows
 	p.bad += t.Malformed

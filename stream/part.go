@@ -78,6 +78,22 @@ const (
 	QuotesFirst
 )
 
+// Passer is a segment of which later ones need to know something: it can be told by who
+// has read it in an earlier scan of the same input.
+type Passer interface {
+	Segment
+	// Pass is Close of a segment that is not read. t is what Tally said at its end.
+	Pass(t SegmentTally) error
+}
+
+// PassOver closes a segment that was read in an earlier scan, see Passer.
+func PassOver(seg Segment, t SegmentTally) error {
+	if p, ok := seg.(Passer); ok {
+		return p.Pass(t)
+	}
+	return seg.Close()
+}
+
 type partScan struct {
 	Scan
 	i, n int

@@ -91,8 +91,10 @@ type SegmentTally struct {
 	// file of which no row is read.
 	Excluded int64
 	Files    int64
-	// Quotes says how text was read; it is there when the segment has been read.
+	// Quotes says how text was read, Lines how many newlines are in it; they are there
+	// when the segment has been read.
 	Quotes Quotes
+	Lines  int64
 	// Problems describes the first malformed rows, at most MaxProblems.
 	Problems []*RowError
 }

@@ -528,6 +528,15 @@ func (g *unionSegment) Close() error {
 	return firstErr(g.Segment.Close(), g.end(false))
 }
 
+// Pass implements Passer.
+func (g *unionSegment) Pass(t SegmentTally) error {
+	if g.closed {
+		return nil
+	}
+	g.closed = true
+	return firstErr(PassOver(g.Segment, t), g.end(false))
+}
+
 // unionColumns puts the columns of a file and its folder columns in the order
 // of the uses.
 type unionColumns struct {

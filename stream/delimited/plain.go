@@ -86,6 +86,12 @@ func (p *plainScan) Next(ctx context.Context) (stream.Segment, error) {
 	}
 	s := newSegment(p.ctx, p.src, p.uses, p.next)
 	s.load = p.load
+	k := p.next
+	s.pass = func(t stream.SegmentTally) {
+		if p.take(k) {
+			p.publish(k, t.Quotes&stream.QuotesOdd != 0, int(t.Lines), nil)
+		}
+	}
 	p.next++
 	return s, nil
 }
@@ -236,7 +242,7 @@ func (p *plainScan) load(s *segment) error {
 			return err
 		}
 	}
-	s.tally.Quotes = quotesOf(k, st.inside, c.quotes)
+	s.tally.Quotes, s.tally.Lines = quotesOf(k, st.inside, c.quotes), int64(c.lines)
 	from, first, lines := lo, 0, int64(0)
 	if k > 0 {
 		from, first = lo-1, 1

@@ -24,6 +24,8 @@ type segment struct {
 	load func(*segment) error
 	// more fetches further text of a sample; nil for a segment of a scan.
 	more func(*segment) error
+	// pass takes what is known of the range of a segment that is not read; may be nil.
+	pass func(stream.SegmentTally)
 	// verify counts the quotes and lines before the segment, if it was only guessed
 	// that it begins outside or inside of quotes: an error if that was wrong.
 	verify func() error
@@ -252,6 +254,14 @@ func (s *segment) Close() error {
 	}
 	s.src.release(s.buf)
 	s.buf, s.parser.text = nil, nil
-	s.load, s.more = nil, nil
+	s.load, s.more, s.pass = nil, nil, nil
 	return nil
+}
+
+// Pass implements stream.Passer.
+func (s *segment) Pass(t stream.SegmentTally) error {
+	if s.pass != nil && t.Quotes != 0 {
+		s.pass(t)
+	}
+	return s.Close()
 }
