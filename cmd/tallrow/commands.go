@@ -21,9 +21,6 @@ func init() { cobra.EnableCommandSorting = false }
 
 // execute parses the command line and runs the command.
 func (a *app) execute(ctx context.Context, args []string) error {
-	if len(args) > 0 && slices.Contains(laterCommands, args[0]) {
-		return stream.Usef("the command %s is not in this version", args[0])
-	}
 	root := &cobra.Command{
 		Use:               "tallrow",
 		Short:             "linear models over data too large for memory, with errors that hold when spread is uneven or rows move together",
@@ -72,10 +69,7 @@ func flagError(cmd *cobra.Command, err error) error {
 		if gone.GetSpecifiedShortnames() != "" {
 			return stream.Usef("unknown option -%s", name)
 		}
-		switch {
-		case slices.Contains(laterOptions, name):
-			return stream.Usef("--%s is not in this version", name)
-		case optionNamed(name) != nil:
+		if optionNamed(name) != nil {
 			return stream.Usef("--%s is not an option of %s", name, cmd.Name())
 		}
 		var known []string

@@ -188,12 +188,6 @@ func TestWrongUse(t *testing.T) {
 		{with("-o", ".", "x.csv"), "is not a plain file"},
 		{[]string{"fit", "none.toml", "x.csv"}, "model file none.toml: no such file"},
 	}
-	for _, o := range laterOptions {
-		cases = append(cases, struct {
-			args []string
-			want string
-		}{with("--"+o+"=1", "x.csv"), "--" + o + " is not in this version"})
-	}
 	for _, c := range cases {
 		code, out, errw := try(context.Background(), strings.NewReader(""), c.args...)
 		if code != exitUse || out != "" || !strings.Contains(errw, c.want) || !strings.HasPrefix(errw, "tallrow: ") || strings.Count(errw, "\n") != 1 {
@@ -207,11 +201,6 @@ func TestHelp(t *testing.T) {
 		code, out, errw := try(context.Background(), nil, c, "--help")
 		if code != exitDone || errw != "" {
 			t.Errorf("%s: status %d, stderr %q", c, code, errw)
-		}
-		for _, l := range laterOptions {
-			if strings.Contains(out, "--"+l+" ") {
-				t.Errorf("%s: the help offers --%s", c, l)
-			}
 		}
 		golden(t, "help/"+c+".txt", out)
 	}

@@ -4,7 +4,6 @@ import (
 	"errors"
 	"fmt"
 	"os"
-	"slices"
 	"strconv"
 	"strings"
 
@@ -169,9 +168,6 @@ func (m *modelWalk) keyValue(key []string, line int, v *unstable.Node) error {
 // unknown refuses a key, offering the nearest one.
 func (m *modelWalk) unknown(key []string, line int) error {
 	name := strings.Join(key, ".")
-	if slices.Contains(laterOptions, name) {
-		return stream.Usef("%s line %d: %s is not in this version", m.file, line, name)
-	}
 	if o := optionNamed(name); o != nil {
 		if o.file {
 			return stream.Usef("%s line %d: found a table %s, want %s", m.file, line, name, wanted(o))

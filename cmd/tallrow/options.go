@@ -248,12 +248,6 @@ var options = []option{
 		set:  func(s *settings, v value) error { return setSwitch(&s.jsonSchema, v) }},
 }
 
-// later names what is known and refused: it must never be ignored.
-var (
-	laterOptions  = []string{}
-	laterCommands = []string{}
-)
-
 func optionNamed(name string) *option {
 	for i := range options {
 		if options[i].name == name {

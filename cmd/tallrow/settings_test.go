@@ -256,16 +256,11 @@ func TestNearest(t *testing.T) {
 // The reference for readers is made from the table of options.
 func TestModelReference(t *testing.T) { golden(t, "model_reference.md", reference()) }
 
-// Every option is complete, and no option of a later version is offered.
+// Every option is complete.
 func TestOptionTable(t *testing.T) {
 	for _, o := range options {
 		if o.help == "" || o.set == nil || o.on == 0 || (o.value == "") != (o.form == formSwitch) {
 			t.Errorf("--%s is not complete", o.name)
-		}
-		for _, l := range laterOptions {
-			if l == o.name {
-				t.Errorf("--%s is refused and offered", l)
-			}
 		}
 		known := false
 		for _, g := range groups {
