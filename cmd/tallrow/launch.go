@@ -167,11 +167,14 @@ func (l *launcher) begin(cmd *cobra.Command, args []string) error {
 		if err != nil {
 			return err
 		}
-		if _, err := os.Lstat(d); err != nil && strings.ContainsAny(strings.TrimSuffix(abs, filepath.Clean(d)), "*?[") {
-			return stream.Usef("%s: the folder it is looked for in has a name with *, ? or [; name the files themselves", d)
+		if here, err := os.Getwd(); err != nil || !filepath.IsAbs(d) && strings.ContainsAny(here, "*?[") {
+			if _, err := os.Lstat(d); err != nil {
+				return stream.Usef("%s: is a pattern, and so would be the name of this folder, %s, before it; name the files themselves", d, here)
+			}
 		}
 		r.Data = append(r.Data, abs)
 	}
+	s.data = r.Data // tasks name them like this, and key=value folders above them count too
 	if r.Digest, r.Fit, err = optionsFor(cmd, s); err != nil {
 		return err
 	}

@@ -32,6 +32,7 @@ const launchFormat = "tallrow-launch/1"
 //	parts/part-I.digest    what a task leaves, complete or not at all
 //	second/part-I.digest   the same of a second round
 //	whole.digest           the parts joined; second.digest; first.json between them
+//	checkpoints/           of parts under way
 //	status-R               how the last pool-R.sh ended
 //	logs/                  what tasks have printed
 //	lock                   held by the launch that follows the run
@@ -174,10 +175,11 @@ func (l *launcher) save() error {
 	if err := put("launch.json", string(text)+"\n"); err != nil {
 		return err
 	}
-	for _, d := range []string{"logs", "parts", "second"} {
-		if d == "second" && r.Rounds < 2 {
-			continue
-		}
+	dirs := []string{"logs", "checkpoints", "parts"}
+	if r.Rounds > 1 {
+		dirs = append(dirs, "second")
+	}
+	for _, d := range dirs {
 		if err := os.MkdirAll(l.path(d), 0o755); err != nil {
 			return fmt.Errorf("making a folder: %s", err)
 		}
@@ -276,15 +278,18 @@ func (l *launcher) dropBad(ctx context.Context, round int) error {
 	return l.save()
 }
 
-// tidy removes what killed tasks have left of files they were writing.
-func (l *launcher) tidy(round int) {
-	list, err := os.ReadDir(l.partsDir(round))
-	if err != nil {
-		return
-	}
-	for _, e := range list {
-		if n := e.Name(); strings.HasPrefix(n, ".part-") && strings.HasSuffix(n, ".tmp") {
-			os.Remove(filepath.Join(l.partsDir(round), n))
+// tidy removes what killed tasks have left, once all is done.
+func (l *launcher) tidy() {
+	os.RemoveAll(l.path("checkpoints"))
+	for round := 1; round <= l.r.Rounds; round++ {
+		list, err := os.ReadDir(l.partsDir(round))
+		if err != nil {
+			continue
+		}
+		for _, e := range list {
+			if n := e.Name(); strings.HasPrefix(n, ".part-") && strings.HasSuffix(n, ".tmp") {
+				os.Remove(filepath.Join(l.partsDir(round), n))
+			}
 		}
 	}
 }
@@ -335,7 +340,7 @@ func quoted(w string) string {
 
 // resources are the options that keep a command within what its job is given.
 func (l *launcher) resources() []string {
-	words := []string{"--quiet", fmt.Sprintf("--workers=%d", l.r.Job.CPUs)}
+	words := []string{fmt.Sprintf("--workers=%d", l.r.Job.CPUs)}
 	if l.r.Job.Memory > 0 {
 		words = append(words, fmt.Sprintf("--memory=%d", l.r.Job.Memory))
 	}
@@ -365,19 +370,30 @@ func (l *launcher) partScript(round int) string {
 	if round == 2 {
 		words = append(words, "--at="+l.path("first.json"))
 	}
+	// A task that is killed or moved goes on where it was. A program that fails by itself
+	// gives up its checkpoint: that may be what it has failed of. Hidden ids would stand
+	// in it as they are.
+	keep, drop := "", ""
+	if !slices.ContainsFunc(words, func(w string) bool { return strings.HasPrefix(w, "--hide-ids=") }) {
+		keep = fmt.Sprintf(` --checkpoint %s/part-$i-%d-%d-%t`, quoted(l.path("checkpoints")), round, r.Job.Memory, r.CountQuotes)
+		drop = fmt.Sprintf("\n      if [ \"$failed\" = 1 ]; then rm -f%s; fi", strings.TrimPrefix(keep, " --checkpoint"))
+	}
 	return fmt.Sprintf(`#!/bin/sh
 # Task t of %[1]d reads parts t, t + %[1]d, ... of %[2]d, but for those that are there.
 i=$SLURM_ARRAY_TASK_ID
-failed=0
+status=0
 while [ "$i" -lt %[2]d ]; do
   part=%[3]s/part-$i.digest
   if [ ! -e "$part" ]; then
-    %[4]s --part "$i/%[2]d" -o "$part" -- %[5]s || failed=$?
+    %[4]s --part "$i/%[2]d" -o "$part"%[6]s -- %[5]s || {
+      failed=$?
+      status=$failed%[7]s
+    }
   fi
   i=$((i + %[1]d))
 done
-exit $failed
-`, r.Tasks, r.Parts, quoted(l.partsDir(round)), command(words...), command(r.Data...))
+exit $status
+`, r.Tasks, r.Parts, quoted(l.partsDir(round)), command(words...), command(r.Data...), keep, drop)
 }
 
 func (l *launcher) poolScript(round int) string {

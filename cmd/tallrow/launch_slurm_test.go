@@ -285,6 +285,39 @@ func TestSlurm(t *testing.T) {
 		s.right(t, "killed.json")
 	})
 
+	t.Run("killed with a checkpoint", func(t *testing.T) {
+		t.Setenv("TALLROW_CHECKPOINT_SEGMENTS", "1") // sbatch hands it on
+		frozen := s.freeze(t, "kept.json.launch", 1, 4)
+		l := s.start(t, s.args("kept.json")...)
+		pid := frozen()
+		for saved := ""; saved == ""; {
+			sendTo(t, pid, syscall.SIGCONT)
+			time.Sleep(10 * time.Millisecond)
+			sendTo(t, pid, syscall.SIGSTOP)
+			if list, _ := filepath.Glob(filepath.Join(s.work, "kept.json.launch", "checkpoints", "part-1-*")); len(list) > 0 {
+				saved = list[0]
+			}
+		}
+		sendTo(t, pid, syscall.SIGKILL)
+		l.ends(exitDone)
+		logs, err := filepath.Glob(filepath.Join(s.work, "kept.json.launch", "logs", "part-*_1.txt"))
+		if err != nil {
+			t.Fatal(err)
+		}
+		wentOn := 0
+		for _, name := range logs {
+			text, err := os.ReadFile(name)
+			if err != nil {
+				t.Fatal(err)
+			}
+			wentOn += bytes.Count(text, []byte("going on from "))
+		}
+		if len(logs) != 2 || wentOn != 1 || l.count(`^submitted \d+: 1 part of 4$`) != 1 {
+			t.Errorf("%d logs, %d times gone on; launch said:\n%s", len(logs), wentOn, l.said())
+		}
+		s.right(t, "kept.json")
+	})
+
 	t.Run("script killed", func(t *testing.T) {
 		pid := s.freeze(t, "script.json.launch", 2, 4)
 		l := s.start(t, s.args("script.json")...)

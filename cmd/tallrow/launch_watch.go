@@ -101,9 +101,7 @@ func (l *launcher) run(ctx context.Context) error {
 		}
 	}
 	l.clearLine()
-	for round := 1; round <= r.Rounds; round++ {
-		l.tidy(round)
-	}
+	l.tidy()
 	if l.s.json {
 		text, err := jsonLine(map[string]any{"format": "tallrow-launch-done/1", "output": r.Result, "folder": l.dir, "parts": r.Parts, "rounds": r.Rounds, "already": already})
 		if err != nil {
