@@ -355,7 +355,13 @@ func (k *saver) write(p *pass, last bool) (fatal, err error) {
 	if err := f.Sync(); err != nil {
 		return nil, err
 	}
-	if err := os.Rename(f.Name(), c.name); err != nil {
+	if err := f.Close(); err != nil {
+		return nil, err
+	}
+	c.Close() // not every system replaces an open file
+	err = os.Rename(f.Name(), c.name)
+	c.file, _ = os.Open(c.name) // of the save before if this one failed; passes are copied from there
+	if err != nil {
 		return nil, err
 	}
 	kept = true
@@ -363,8 +369,7 @@ func (k *saver) write(p *pass, last bool) (fatal, err error) {
 		d.Sync() // not every file system can
 		d.Close()
 	}
-	c.Close()
-	c.file, c.index = f, x
+	c.index = x
 	c.cost.Saves++
 	c.cost.Bytes = out.n + sha256.Size
 	return nil, nil
