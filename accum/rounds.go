@@ -171,8 +171,12 @@ func (r *RowSums) Records(run int, f func(*Record) error, hide Hide) error {
 			}
 		}
 	}
+	byKey := map[int]*groups{} // kinds of errors name them in any order
 	for i, g := range w.scores {
-		if err := s.clusterRecords(ScoreSums, 0, w.pass.Scores[i], g.store, f, hide); err != nil {
+		byKey[w.pass.Scores[i]] = g
+	}
+	for _, k := range slices.Sorted(maps.Keys(byKey)) {
+		if err := s.clusterRecords(ScoreSums, 0, k, byKey[k].store, f, hide); err != nil {
 			return err
 		}
 	}

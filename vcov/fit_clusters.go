@@ -30,9 +30,11 @@ func (f *fitter) clusters() error {
 			continue
 		}
 		var sc *accum.Scores
-		if i := slices.Index(f.keys, key); f.sums != nil && i >= 0 {
+		summed := slices.Contains(f.plan.needs.Clusters, key)
+		both := summed && f.src == nil // of two rounds, the first has more unless the second has moments
+		if i := slices.Index(f.keys, key); f.sums != nil && i >= 0 && (!both || f.sums.Scores[i].Moments()) {
 			sc = f.sums.Scores[i]
-		} else if slices.Contains(f.plan.needs.Clusters, key) {
+		} else if summed {
 			var err error
 			if sc, err = s.Scores(key, x.theta, full[key]); err != nil {
 				continue // errorsFor says so

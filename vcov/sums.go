@@ -144,7 +144,7 @@ func SecondRound(ctx context.Context, src stream.Source, s *accum.State, base in
 // rows takes in the sums of a second round.
 func (f *fitter) rows(kept *Kept) error {
 	o := f.o
-	o.Errors = kept.Kinds
+	o.Errors, o.Shape = kept.Kinds, false // as they were when the sums were made
 	g, err := forRows(f.ctx, f.state, o)
 	if err != nil {
 		return err
@@ -193,13 +193,20 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 			return nil, err
 		}
 	}
+	held := func(k Kind) bool { // second moments of its clusters
+		return !slices.ContainsFunc(KeysOf(d, k.Cluster), func(key int) bool { return !slices.Contains(kept.Clusters, key) })
+	}
 	rows := false
 	for _, k := range o.Errors {
+		moments := k.Cluster >= 0 && o.wantsMoments(d, k)
 		switch {
 		case k.Name == "classical":
 		case inOrder(k.Name):
 			return nil, stream.Usef("errors: %s goes by the order of rows, which sums do not keep; fit the data", k.Name)
-		case byRow(k):
+		case byRow(k) && !(moments && held(k)):
+			if moments && !kept.Rows.Moments {
+				return nil, stream.Usef("--cluster-detail: needs second moments of the clusters of %s, which a second round keeps for cr2 and cr3 only; leave it out, or fit the data", d.Keys[k.Cluster].Text)
+			}
 			rows = true
 		case (k.Name == "hc0" || k.Name == "hc1") && kept.Fourth:
 			f.plan.needs.Fourth = true

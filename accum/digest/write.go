@@ -34,7 +34,9 @@ type Writer struct {
 	w    *parquet.GenericWriter[row]
 	rows []row
 	n    int
-	held int // numbers in the row group
+	held int          // numbers in the row group
+	prev accum.Record // place of the record before
+	seen bool
 }
 
 type teeWriter struct {
@@ -73,9 +75,15 @@ func Create(name string) (*Writer, error) {
 	return w, nil
 }
 
-// Write adds a record. Records must come in order.
+// Write adds a record. Records must come in order; others are an error, so that no
+// digest is made that cannot be read.
 func (w *Writer) Write(r *accum.Record) (err error) {
 	defer caught(&err)
+	if w.seen && w.prev.Compare(r) >= 0 {
+		return fmt.Errorf("internal error: the %s sums of table %d are out of order", r.What, r.Table)
+	}
+	w.seen = true
+	w.prev.What, w.prev.Section, w.prev.Table, w.prev.Key = r.What, r.Section, r.Table, append(w.prev.Key[:0], r.Key...)
 	if w.n == len(w.rows) {
 		if err := w.flush(); err != nil {
 			return err

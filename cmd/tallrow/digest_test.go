@@ -470,3 +470,29 @@ func TestOldDigests(t *testing.T) {
 		}
 	}
 }
+
+// Both rounds together: keys in any order, clusters described from what the first round
+// keeps, and refused where only scores are there.
+func TestRoundsTogether(t *testing.T) {
+	data := unloadings(t, 3, 900)
+	dir := t.TempDir()
+	in := func(name string) string { return filepath.Join(dir, name) }
+	rounds := func(terms, errors string) (fit []string, one, two string) {
+		t.Helper()
+		model := []string{"--outcome", "minutes", "--terms", terms, "--errors", errors, data, "--quiet"}
+		must(t, slices.Concat([]string{"digest", "-o", in("one")}, model)...)
+		must(t, "fit", in("one"), "--errors", "classical", "--json", "-o", in("one.json"))
+		must(t, slices.Concat([]string{"digest", "--at", in("one.json"), "-o", in("two")}, model)...)
+		return slices.Concat([]string{"fit", "--json"}, model), in("one"), in("two")
+	}
+	const errs = "cr1(quay, barge), cr1(berth), hc3, cr1(barge)"
+	fit, one, two := rounds("pallets, tonnes", errs)
+	want := must(t, append(fit, "--cluster-detail")...)
+	got := must(t, "fit", "--json", "--errors", errs, "--cluster-detail", one, two)
+	if d := differences(t, want, got, 1e-12, "leverage"); len(d) > 0 {
+		t.Errorf("%s", strings.Join(d, "\n"))
+	}
+	_, one, two = rounds("pallets, each(barge)", "hc1, cr1(quay)")
+	must(t, "fit", one, two)
+	fails(t, exitUse, "--cluster-detail: needs second moments of the clusters of quay", "fit", one, two, "--cluster-detail")
+}
