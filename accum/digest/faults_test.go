@@ -7,9 +7,11 @@ import (
 	"encoding/hex"
 	"encoding/json"
 	"errors"
+	"maps"
 	"math/rand/v2"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 
@@ -238,7 +240,8 @@ func hostile(doc any, f func()) {
 		set(v)
 		switch v := v.(type) {
 		case map[string]any:
-			for k, x := range v {
+			for _, k := range slices.Sorted(maps.Keys(v)) {
+				x := v[k]
 				walk(x, func(y any) { v[k] = y })
 				delete(v, k)
 				f()
@@ -253,8 +256,8 @@ func hostile(doc any, f func()) {
 		}
 	}
 	m := doc.(map[string]any)
-	for k, x := range m {
-		walk(x, func(y any) { m[k] = y })
+	for _, k := range slices.Sorted(maps.Keys(m)) {
+		walk(m[k], func(y any) { m[k] = y })
 	}
 }
 
