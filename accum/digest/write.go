@@ -21,6 +21,8 @@ import (
 
 const (
 	writeRows = 256
+	// pageBytes is small, since pooling holds a page of each column of every digest.
+	pageBytes = 64 << 10
 	// groupNumbers ends a row group, so that a writer holds at most so many sums.
 	groupNumbers = 1 << 20
 )
@@ -71,7 +73,7 @@ func Create(name string) (*Writer, error) {
 		return nil, err
 	}
 	w := &Writer{name: name, file: f, tee: &teeWriter{f: f, hash: sha256.New()}, rows: make([]row, writeRows)}
-	w.w = parquet.NewGenericWriter[row](w.tee, parquet.Compression(&zstd.Codec{Level: zstd.SpeedFastest}), parquet.CreatedBy("tallrow", "", ""))
+	w.w = parquet.NewGenericWriter[row](w.tee, parquet.Compression(&zstd.Codec{Level: zstd.SpeedFastest}), parquet.PageBufferSize(pageBytes), parquet.CreatedBy("tallrow", "", ""))
 	return w, nil
 }
 
