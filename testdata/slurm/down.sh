@@ -3,6 +3,11 @@
 set -u
 dir=$1
 export SLURM_CONF=$dir/slurm.conf
+running=no
+for p in $(cat "$dir"/run/*.pid 2>/dev/null); do
+  if kill -0 "$p" 2>/dev/null; then running=yes; fi
+done
+if [ "$running" = no ]; then exit 0; fi
 timeout 10 scancel --state=PENDING 2>/dev/null
 timeout 10 scancel --state=RUNNING 2>/dev/null
 for _ in $(seq 50); do
