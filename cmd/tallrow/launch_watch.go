@@ -94,6 +94,9 @@ func (l *launcher) run(ctx context.Context) error {
 	if err := l.save(); err != nil {
 		return err
 	}
+	if l.terminal() { // an interrupt is told on a line of its own
+		defer l.a.onExit(func() { fmt.Fprint(l.a.stderr, "\r\x1b[K") })()
+	}
 	already := l.finished(r.Rounds)
 	for round := 1; round <= r.Rounds && !already; round++ {
 		if err := l.round(ctx, round); err != nil {
