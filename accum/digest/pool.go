@@ -34,17 +34,18 @@ type PoolError struct{ Msg string }
 
 func (e *PoolError) Error() string { return e.Msg }
 
-// NewPool joins digests of one model over disjoint rows. Reader.Meta of them is of no
-// more use afterwards.
+// Together checks from their descriptions alone whether digests go together, and
+// returns what all of them are: NewPool without headers and sums. Readers may be
+// closed.
 //
 // Errors: *PoolError for another model, a part that is there twice, sources that
 // overlap.
-func NewPool(readers []*Reader) (*Pool, error) {
+func Together(readers []*Reader) (*Meta, error) {
 	if len(readers) == 0 {
 		return nil, &PoolError{"no digests"}
 	}
 	first := readers[0]
-	p := &Pool{readers: readers, Meta: &Meta{Format: Format, Version: first.Meta.Version, Model: first.Meta.Model}}
+	m := &Meta{Format: Format, Version: first.Meta.Version, Model: first.Meta.Model}
 	runs := map[string]*Run{}
 	from := map[string]map[int]string{} // run and part: the file that has it
 	type claim struct{ run, path string }
@@ -56,7 +57,7 @@ func NewPool(readers []*Reader) (*Pool, error) {
 		if (r.Meta.Second == nil) != (first.Meta.Second == nil) {
 			return nil, &PoolError{fmt.Sprintf("%s and %s are of different rounds; fit takes both, pool one", first.Path, r.Path)}
 		}
-		p.Meta.Version = max(p.Meta.Version, r.Meta.Version)
+		m.Version = max(m.Version, r.Meta.Version)
 		for _, run := range r.Meta.Runs {
 			have := runs[run.ID]
 			if have == nil {
@@ -95,9 +96,23 @@ func NewPool(readers []*Reader) (*Pool, error) {
 	}
 	for _, r := range runs {
 		slices.Sort(r.Have)
-		p.Meta.Runs = append(p.Meta.Runs, r)
+		m.Runs = append(m.Runs, r)
 	}
-	slices.SortFunc(p.Meta.Runs, func(a, b *Run) int { return cmp.Compare(a.ID, b.ID) })
+	slices.SortFunc(m.Runs, func(a, b *Run) int { return cmp.Compare(a.ID, b.ID) })
+	return m, nil
+}
+
+// NewPool joins digests of one model over disjoint rows. Reader.Meta of them is of no
+// more use afterwards.
+//
+// Errors: those of Together and of the files.
+func NewPool(readers []*Reader) (*Pool, error) {
+	m, err := Together(readers)
+	if err != nil {
+		return nil, err
+	}
+	first := readers[0]
+	p := &Pool{readers: readers, Meta: m}
 	if first.Meta.Second != nil {
 		return p, p.secondRound()
 	}

@@ -136,6 +136,13 @@ func (a *app) wantsSpool(s *settings, req request) bool {
 // newSpool names a new file in the scratch folder that is removed when the run
 // ends, however it ends.
 func (a *app) newSpool(s *settings) (string, error) {
+	dir, err := a.scratchFolder(s)
+	return filepath.Join(dir, "pipe"), err
+}
+
+// scratchFolder makes a folder in the scratch folder that is removed when the run ends,
+// however it ends.
+func (a *app) scratchFolder(s *settings) (string, error) {
 	dir := s.scratch
 	if dir == "" {
 		dir = os.TempDir()
@@ -145,7 +152,7 @@ func (a *app) newSpool(s *settings) (string, error) {
 		return "", fmt.Errorf("scratch folder %s: %s", dir, plainPathError(err))
 	}
 	a.onExit(func() { os.RemoveAll(own) })
-	return filepath.Join(own, "pipe"), nil
+	return own, nil
 }
 
 // fitted is a result with what was asked for.

@@ -21,7 +21,7 @@ var dataOnly = []string{"no-constant", "sweep", "weight", "weight-kind", "where"
 // fromDigests answers the question of s from digests.
 func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fitted, error) {
 	s.holdMemory()
-	rs, shut, err := openDigests(names)
+	rs, ones, shut, err := a.openDigests(ctx, s, names)
 	if err != nil {
 		return nil, err
 	}
@@ -116,7 +116,7 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	if err != nil {
 		return nil, err
 	}
-	res.Input.Sums = &vcov.SumsFrom{Identity: identity, Digests: absolute(one)}
+	res.Input.Sums = &vcov.SumsFrom{Identity: identity, Digests: absolute(ones)}
 	res.Input.Files, res.Input.Bytes = 0, 0
 	for _, r := range p.Meta.Runs {
 		res.Input.Files += len(r.Files)
@@ -148,15 +148,14 @@ func (a *app) fromDigests(ctx context.Context, s *settings, names []string) (*fi
 	return &fitted{res: res, req: q.req}, nil
 }
 
-// absolute lists the paths of digests.
-func absolute(rs []*digest.Reader) []string {
+// absolute makes paths absolute.
+func absolute(names []string) []string {
 	var out []string
-	for _, r := range rs {
-		path, err := filepath.Abs(r.Path)
-		if err != nil {
-			path = r.Path
+	for _, n := range names {
+		if path, err := filepath.Abs(n); err == nil {
+			n = path
 		}
-		out = append(out, path)
+		out = append(out, n)
 	}
 	return out
 }

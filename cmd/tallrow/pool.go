@@ -57,7 +57,7 @@ func (a *app) pool(ctx context.Context, s *settings) (*made, error) {
 		}
 		return nil, stream.Usef("%s: is no digest; pool joins what tallrow digest has made", s.data[0])
 	}
-	rs, shut, err := openDigests(names)
+	rs, _, shut, err := a.openDigests(ctx, s, names)
 	if err != nil {
 		return nil, err
 	}
@@ -71,34 +71,11 @@ func (a *app) pool(ctx context.Context, s *settings) (*made, error) {
 		m.Digests = len(names)
 		return m, err
 	}
-	w, err := digest.Create(s.output)
-	if err != nil {
-		return nil, writing(s.output, err)
-	}
-	defer a.onExit(w.Abort)()
-	for n := 0; ; n++ {
-		if n%4096 == 0 && ctx.Err() != nil {
-			return nil, ctx.Err()
-		}
-		r, err := p.Next()
-		if err != nil {
-			return nil, err
-		}
-		if r == nil {
-			break
-		}
-		if err := w.Write(r); err != nil {
-			return nil, writing(s.output, err)
-		}
-	}
-	if err := w.Close(p.Meta); err != nil {
-		return nil, writing(s.output, err)
-	}
-	st, err := os.Stat(s.output)
+	size, err := a.writePool(ctx, p, s.output)
 	if err != nil {
 		return nil, err
 	}
-	m := describeDigest(p.Meta, s.output, st.Size())
+	m := describeDigest(p.Meta, s.output, size)
 	m.Digests = len(names)
 	return m, nil
 }
@@ -108,4 +85,36 @@ func incomplete(err error) bool {
 	var m *digest.MissingError
 	var l *lostParts
 	return errors.As(err, &m) || errors.As(err, &l)
+}
+
+// writePool writes a pool to a new digest and returns its size.
+func (a *app) writePool(ctx context.Context, p *digest.Pool, name string) (int64, error) {
+	w, err := digest.Create(name)
+	if err != nil {
+		return 0, writing(name, err)
+	}
+	defer a.onExit(w.Abort)()
+	for n := 0; ; n++ {
+		if n%4096 == 0 && ctx.Err() != nil {
+			return 0, ctx.Err()
+		}
+		r, err := p.Next()
+		if err != nil {
+			return 0, err
+		}
+		if r == nil {
+			break
+		}
+		if err := w.Write(r); err != nil {
+			return 0, writing(name, err)
+		}
+	}
+	if err := w.Close(p.Meta); err != nil {
+		return 0, writing(name, err)
+	}
+	st, err := os.Stat(name)
+	if err != nil {
+		return 0, err
+	}
+	return st.Size(), nil
 }

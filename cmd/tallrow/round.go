@@ -22,7 +22,7 @@ type firstRound struct {
 
 // readRound loads the sums that a result was made from, for the design of the data,
 // whose model m must be that of the digests.
-func (s *settings) readRound(ctx context.Context, d *stream.Design, m *digest.Model, o vcov.Options) (*firstRound, error) {
+func (a *app) readRound(ctx context.Context, s *settings, d *stream.Design, m *digest.Model, o vcov.Options) (*firstRound, error) {
 	from := s.origin("at") + " " + s.at
 	text, err := os.ReadFile(s.at)
 	if err != nil {
@@ -40,7 +40,7 @@ func (s *settings) readRound(ctx context.Context, d *stream.Design, m *digest.Mo
 	if res.Input.Sums == nil {
 		return nil, stream.Usef("%s: is a fit of data, want one of digests: the first round", from)
 	}
-	rs, shut, err := openDigests(res.Input.Sums.Digests)
+	rs, _, shut, err := a.openDigests(ctx, s, res.Input.Sums.Digests)
 	if err != nil {
 		return nil, fmt.Errorf("%s: the digests of the first round: %w", from, err)
 	}
@@ -116,7 +116,7 @@ func (a *app) secondRound(ctx context.Context, s *settings) (*made, error) {
 			return nil, err
 		}
 	}
-	first, err := s.readRound(ctx, p.design, &model, o)
+	first, err := a.readRound(ctx, s, p.design, &model, o)
 	if err != nil {
 		return nil, err
 	}

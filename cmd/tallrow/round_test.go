@@ -218,3 +218,52 @@ func TestSameRowsTwice(t *testing.T) {
 	}
 	fails(t, exitFailed, "they have used the same cells", "pool", in("file.digest"), in("pipe.digest"), "-o", in("both.digest"))
 }
+
+// More digests than are open at a time are joined by groups, with the same bytes.
+func TestManyDigests(t *testing.T) {
+	dir := t.TempDir()
+	in := func(name string) string { return filepath.Join(dir, name) }
+	var names []string
+	for i := range poolMost + 3 {
+		data, name := in(fmt.Sprintf("%03d.csv", i)), in(fmt.Sprintf("%03d.digest", i))
+		rows := "quay,pallets,minutes\n"
+		for r := range 5 {
+			rows += fmt.Sprintf("%d,%d,%d\n", (i+r)%7, i*r%11+r, 3*i+r*r)
+		}
+		if err := os.WriteFile(data, []byte(rows), 0o600); err != nil {
+			t.Fatal(err)
+		}
+		args := []string{"digest", "--outcome", "minutes", "--terms", "pallets", "--cluster", "quay", "--quiet", data, "-o", name}
+		if i > 0 {
+			args = append(args, "--frame-from", names[0])
+		}
+		must(t, args...)
+		names = append(names, name)
+	}
+	must(t, slices.Concat([]string{"pool"}, names, []string{"-o", in("all.digest")})...)
+	must(t, slices.Concat([]string{"pool"}, names[:70], []string{"-o", in("some.digest")})...)
+	must(t, slices.Concat([]string{"pool"}, names[70:], []string{in("some.digest"), "-o", in("again.digest")})...)
+	a, _ := os.ReadFile(in("all.digest"))
+	if b, _ := os.ReadFile(in("again.digest")); len(a) == 0 || string(a) != string(b) {
+		t.Error("grouping shows in the bytes")
+	}
+	must(t, slices.Concat([]string{"fit"}, names, []string{"--json", "-o", in("many.json")})...)
+	must(t, "fit", in("all.digest"), "--json", "-o", in("one.json"))
+	many, one := result(t, in("many.json")), result(t, in("one.json"))
+	if !slices.Equal(many.Estimates, one.Estimates) || !slices.Equal(many.Errors[2].SE, one.Errors[2].SE) || len(many.Input.Sums.Digests) != len(names) || many.Rows.Used != int64(5*len(names)) {
+		t.Errorf("%v %v of %d digests, want %v %v of %d", many.Estimates, many.Errors[2].SE, len(many.Input.Sums.Digests), one.Estimates, one.Errors[2].SE, len(names))
+	}
+	if err := os.WriteFile(in("copy.digest"), mustRead(t, names[4]), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	fails(t, exitFailed, "part 0 of 1 is there twice: in "+names[4], slices.Concat([]string{"pool"}, names, []string{in("copy.digest"), "-o", in("x.digest")})...)
+}
+
+func mustRead(t *testing.T, name string) []byte {
+	t.Helper()
+	b, err := os.ReadFile(name)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return b
+}
