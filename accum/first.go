@@ -32,8 +32,9 @@ type firstWorker struct {
 	pairs  []*pairBuffer // into tables common to the workers of an epoch
 	tid    []int32
 
-	clusters []*groups // nil for keys that are not wanted
-	units    *groups   // sums by unit; nil unless effects are swept out
+	clusters []*groups     // nil for keys that are not wanted
+	units    *groups       // sums by unit; nil unless effects are swept out
+	owners   []*sharedView // of units, by budget.nested
 	// What units take of the rows: columns, and room for weighted ones.
 	unitCols, unitOrder [][]float64
 	unitLow             []float64
@@ -64,14 +65,24 @@ type budget struct {
 	cells   *cellSpec   // nil unless unique rows are wanted
 	keep    bool        // cluster sums are never dropped
 	dropped atomic.Bool // cluster sums outgrew their share and were dropped
+	// nested are the keys whose clusters may hold whole units of swept effects.
+	nested []*sharedKeys
 	// besideUnits are the stores of cluster sums where those of units are not dropped
 	// with them.
 	besideUnits []*groupStore
 }
 
 func newBudget(l *layout, needs *Needs, o *Options, unit int) *budget {
-	return &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
+	b := &budget{memory: o.Memory, cluster: cmp.Or(o.Clusters, o.Memory/16), unit: unit,
 		dense: cmp.Or(o.Dense, DenseColumns), workers: max(1, o.Workers), num: newNumbering(l), keep: needs.Keep}
+	if d := l.design; d.Sweep >= 0 && !needs.Retain {
+		for _, k := range needs.Clusters {
+			if k != d.Sweep {
+				b.nested = append(b.nested, newSharedKeys(d, k))
+			}
+		}
+	}
+	return b
 }
 
 // clusterStores makes the stores of the second moments of clusters in one frame.
@@ -87,11 +98,13 @@ func (b *budget) clusterStores(l *layout, needs *Needs, extended bool) []*groupS
 			b.besideUnits = append(b.besideUnits, stores[k])
 		}
 	}
-	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil || !b.keep || needs.Retain) {
+	if u := l.design.Sweep; u >= 0 && (extended || stores[u] == nil || !b.keep || needs.Retain || len(b.nested) > 0) {
 		if extended {
 			p *= 2
 		}
-		stores[len(stores)-1] = b.pool.store(l.design.Keys[u].Kind, p, b.unit)
+		st := b.pool.store(l.design.Keys[u].Kind, p+len(b.nested), b.unit)
+		st.owners = len(b.nested)
+		stores[len(stores)-1] = st
 	}
 	return stores
 }
@@ -157,6 +170,9 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pai
 	}
 	if st := stores[len(stores)-1]; st != nil {
 		w.units = newUnitGroups(ld, st)
+		for _, k := range b.nested {
+			w.owners = append(w.owners, k.view())
+		}
 		w.unitOrder = make([][]float64, 2*(l.p0+2))
 		if w.wide != nil && w.root != nil {
 			w.unitLow = make([]float64, 2*(l.p0+2)*stride)
@@ -330,6 +346,11 @@ func (w *firstWorker) fold() error {
 		if err := w.units.fold(); err != nil {
 			return err
 		}
+		for _, v := range w.owners {
+			if err := v.check(w.lay.design, w.budget); err != nil {
+				return err
+			}
+		}
 	}
 	if w.budget.dropped.Load() {
 		return nil
@@ -497,7 +518,9 @@ func first(ctx context.Context, src stream.Source, d *stream.Design, needs Needs
 		s.Coarse = true
 	}
 	if d.Sweep >= 0 && !needs.Retain { // what is retained is swept when it is loaded
+		s.newNests(b, &o)
 		if err := s.sweep(); err != nil {
+			s.Close()
 			return nil, err
 		}
 	}

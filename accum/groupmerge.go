@@ -10,9 +10,10 @@ type groupPart struct {
 
 // cursor walks over sums in order of key.
 type cursor struct {
-	tag  int
-	cur  *groupSums // nil at the end
-	next func() (*groupSums, error)
+	tag    int
+	owners int
+	cur    *groupSums // nil at the end
+	next   func() (*groupSums, error)
 }
 
 // mergeGroups calls f for each key of the stores in order of key, with its sums in
@@ -24,10 +25,10 @@ func mergeGroups(stores []*groupStore, f func([]groupPart) error) error {
 	defer close(stop)
 	for tag, s := range stores {
 		for _, r := range s.runs {
-			cs = append(cs, &cursor{tag: tag, next: r.reader(stop)})
+			cs = append(cs, &cursor{tag: tag, owners: s.owners, next: r.reader(stop)})
 		}
 		if s.keys.Load() > 0 {
-			cs = append(cs, &cursor{tag: tag, next: s.reader()})
+			cs = append(cs, &cursor{tag: tag, owners: s.owners, next: s.reader()})
 		}
 	}
 	return mergeCursors(cs, f)
@@ -39,7 +40,7 @@ func mergeRuns(runs []*run, f func([]groupPart) error) error {
 	stop := make(chan struct{})
 	defer close(stop)
 	for _, r := range runs {
-		cs = append(cs, &cursor{next: r.reader(stop)})
+		cs = append(cs, &cursor{owners: r.store.owners, next: r.reader(stop)})
 	}
 	return mergeCursors(cs, f)
 }
@@ -73,7 +74,7 @@ func mergeCursors(cs []*cursor, f func([]groupPart) error) (err error) {
 			}
 			if n > 0 && parts[n-1].tag == c.tag {
 				parts[n-1].rows += c.cur.rows
-				mergeFixed(parts[n-1].sums, c.cur.sums)
+				mergeSums(parts[n-1].sums, c.cur.sums, c.owners)
 			} else {
 				if n == len(parts) {
 					parts = append(parts, groupPart{})

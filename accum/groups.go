@@ -202,6 +202,7 @@ func (g *groups) fold() error {
 	if !g.many && keys <= g.fewKeys() {
 		g.in = newInterner(g.store.kind)
 		g.few = newKeyTable(g.store.width, g.store.unit)
+		g.few.owners = g.store.owners
 		g.ids = make([]int32, stream.BatchRows)
 	}
 	return nil
@@ -253,7 +254,7 @@ func (g *groups) gather(runs []int32) {
 		g.add(b.part[d*w:(d+1)*w], g.rows[from*g.width:to*g.width], g.base[from*g.bases:to*g.bases], to-from)
 	}
 	for d := range b.key {
-		g.seen.see(b.part[d*w : (d+1)*w])
+		g.seen.see(b.part[d*w : (d+1)*w-g.store.owners])
 	}
 }
 

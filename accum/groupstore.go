@@ -134,10 +134,12 @@ type groupStore struct {
 	pool  *groupPool
 	kind  stream.Kind
 	text  bool
-	width int
+	width int // of the sums, owners included
 	unit  int
-	head  int // elements of a record before the sums
-	shift int // records of a page, as a power of two
+	// owners is the number of elements behind the sums that are no sums, see owner.
+	owners int
+	head   int // elements of a record before the sums
+	shift  int // records of a page, as a power of two
 
 	tables  [groupParts]groupTable
 	keys    atomic.Int64 // in memory
@@ -252,9 +254,9 @@ func (t *groupTable) add(s *groupStore, b *groupBatch) (grew int64) {
 			rec := t.record(s, int(b.ids[i]))
 			rec[0].hi += b.rows[i]
 			if len(b.part) > 0 {
-				addFixed(rec[s.head:], b.part[int(i)*w:int(i+1)*w], s.unit) // partials know what did not fit
+				addSums(rec[s.head:], b.part[int(i)*w:int(i+1)*w], s.unit, s.owners) // partials know what did not fit
 			} else {
-				mergeFixed(rec[s.head:], b.fix[int(i)*w:int(i+1)*w])
+				mergeSums(rec[s.head:], b.fix[int(i)*w:int(i+1)*w], s.owners)
 			}
 		}
 	}

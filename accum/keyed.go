@@ -13,10 +13,11 @@ const pageKeys = 256 // keys in one page of fixed-point sums
 // and is then rounded once to 128-bit fixed point. Adding fixed-point numbers is
 // associative, so the sums do not depend on which worker saw which segment.
 type keyTable struct {
-	width int
-	unit  int
-	rows  []int64
-	pages [][]fixed
+	width  int
+	unit   int
+	owners int // as in groupStore
+	rows   []int64
+	pages  [][]fixed
 
 	slot    []int32 // place in part, by id; -1 outside this fold
 	touched []int32
@@ -54,8 +55,8 @@ func (t *keyTable) at(id int32) []float64 {
 func (t *keyTable) flush() {
 	for i, id := range t.touched {
 		part := t.part[i*t.width : (i+1)*t.width]
-		t.see(part)
-		if !addFixed(t.fix(id), part, t.unit) {
+		t.see(part[:t.width-t.owners])
+		if !addSums(t.fix(id), part, t.unit, t.owners) {
 			t.bad = true
 		}
 		t.slot[id] = -1

@@ -11,7 +11,8 @@ type Needs struct {
 	// Fourth asks for fourth moments (no categories).
 	Fourth bool
 	// Clusters lists the indexes of design keys whose clusters' second moments
-	// are wanted (no categories).
+	// are wanted (no categories). Where effects of units are swept out, those of
+	// other clusters are of use only if State.Nested.
 	Clusters []int
 	// Keep holds the clusters' second moments however many they are, on scratch if
 	// need be: they are wanted for themselves.

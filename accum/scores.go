@@ -126,7 +126,13 @@ func (s *State) Scores(key int, theta []float64, moments bool) (*Scores, error) 
 		}
 		sc.Lone[1+j], sc.LoneZero[1+j] = nonzero[n], zero[n]
 	}
-	if s.Swept != nil {
+	switch n := s.nest(key); {
+	case n != nil && n.split:
+		return nil, errors.New("accum: rows of a unit lie in several of these clusters")
+	case n != nil:
+		s.nestedScores(sc, theta, n)
+		return sc, nil
+	case s.Swept != nil:
 		s.sweptScores(sc, theta)
 		return sc, nil
 	}

@@ -116,7 +116,7 @@ func (s *groupStore) compact() error {
 		g := parts[0].groupSums
 		for _, p := range parts[1:] {
 			g.rows += p.rows
-			mergeFixed(g.sums, p.sums)
+			mergeSums(g.sums, p.sums, s.owners)
 		}
 		e.add(&g, s.text)
 		w.keys++

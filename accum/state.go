@@ -87,6 +87,8 @@ type State struct {
 	base      *State     // that this one was asked of, see Ask
 	from      []int      // numeric terms of base that are those of this
 	means     *unitMeans // see KeepMeans
+	nests     []*nest    // keys whose clusters may hold whole units, see Nested
+	nestPool  *groupPool
 }
 
 // epochWidth is the number of columns of z in the epochs, epochTerms that of numeric
@@ -110,6 +112,9 @@ func (s *State) epochTerms() int {
 func (s *State) Close() {
 	if s.pool != nil {
 		s.pool.close()
+	}
+	if s.nestPool != nil {
+		s.nestPool.close()
 	}
 }
 
@@ -545,13 +550,7 @@ func (s *State) placePairs(m *sums, tables []*pairTable, place [][]int32) {
 
 // refit returns the unit that the keyed sums should have had.
 func (s *State) refit(unit int) int {
-	n := len(s.Columns) + 1
-	size := math.Inf(1)
-	for j := range n {
-		if d := s.S[j*n+j]; d > 0 {
-			size = math.Min(size, d)
-		}
-	}
+	size := s.smallest()
 	if a := s.Apart; a != nil {
 		for i := 0; i < len(a.D); i += a.Parts * a.Parts {
 			for p := range a.Parts {
@@ -593,6 +592,18 @@ func (s *State) refit(unit int) int {
 		return best
 	}
 	return unit
+}
+
+// smallest is the smallest second moment of an internal column.
+func (s *State) smallest() float64 {
+	n := len(s.Columns) + 1
+	size := math.Inf(1)
+	for j := range n {
+		if d := s.S[j*n+j]; d > 0 {
+			size = math.Min(size, d)
+		}
+	}
+	return size
 }
 
 // pairRows bounds the rows of one pair of combinations.

@@ -49,13 +49,14 @@ const wideUnit = 0x1p60
 
 // newUnitGroups makes the sums of units of one worker.
 func newUnitGroups(ld *loader, st *groupStore) *groups {
+	n := st.width - st.owners
 	switch {
 	case ld.wide != nil:
-		return newGroups(st, st.width, 0, addWide(st.unit))
+		return newGroups(st, n, st.owners, addOwned(addWide(st.unit), st.owners))
 	case ld.root != nil:
-		return newGroups(st, st.width+1, 0, addScaled)
+		return newGroups(st, n+1, st.owners, addOwned(addScaled, st.owners))
 	}
-	return newGroups(st, st.width, 0, addPlain)
+	return newGroups(st, n, st.owners, addOwned(addPlain, st.owners))
 }
 
 // addPlain adds a row's numbers.
@@ -130,8 +131,13 @@ func (w *firstWorker) addUnits() {
 		}
 		w.unitCols = cols
 	}
-	rows, _ := w.units.room(n)
+	rows, base := w.units.room(n)
 	transpose(rows, len(cols), 0, cols)
+	for i, v := range w.owners {
+		for r, c := range v.number(&w.block.Key[v.key], n) {
+			base[r*len(w.owners)+i] = c
+		}
+	}
 	w.units.take(key, n)
 	w.watch.lap(StageClusters)
 }
@@ -149,7 +155,8 @@ func (f fixed) wide(unit int) Wide {
 // unitSums is the sums of one unit.
 type unitSums struct {
 	groupPart
-	sums []Wide // of w z, z = (1, u, v); the first is W_g
+	sums   []Wide  // of w z, z = (1, u, v); the first is W_g
+	owners []int32 // numbers of the clusters that it lies in, -1 for several
 }
 
 // single reports whether the unit is one row, which is no spread within it.
@@ -171,17 +178,23 @@ func (s *State) eachUnit(f func(u *unitSums) error) error {
 		stores = append(stores, st)
 	}
 	k := s.lay.p0 + 2
-	u := &unitSums{sums: make([]Wide, k)}
+	u := &unitSums{sums: make([]Wide, k), owners: make([]int32, len(s.nests))}
+	joined := make([]fixed, len(s.nests))
 	return mergeGroups(stores, func(parts []groupPart) error {
 		u.groupPart = parts[0]
 		clear(u.sums)
+		clear(joined)
 		for i := range parts {
 			p := &parts[i]
+			sums := len(p.sums) - stores[p.tag].owners
+			for j, o := range p.sums[sums:] {
+				joined[j].joinOwner(o)
+			}
 			if i > 0 {
 				u.rows += p.rows
 			}
 			unit := stores[p.tag].unit
-			low := !packed[p.tag] && len(p.sums) == 2*k
+			low := !packed[p.tag] && sums == 2*k
 			for j := range u.sums {
 				at := j
 				if packed[p.tag] {
@@ -193,6 +206,9 @@ func (s *State) eachUnit(f func(u *unitSums) error) error {
 				}
 				u.sums[j] = u.sums[j].Add(x)
 			}
+		}
+		for j, o := range joined {
+			u.owners[j] = int32(o.lo) // -1 of manyOwners
 		}
 		return f(u)
 	})
@@ -237,11 +253,19 @@ func (s *State) sweep() error {
 				z[j*stride+n] = x.Hi / root.Hi
 			}
 		}
+		for i, nest := range s.nests {
+			if err := nest.add(u.owners[i], u.single(kind), z, n); err != nil {
+				return err
+			}
+		}
 		if n++; n == stream.BatchRows {
 			flush()
 		}
 		return nil
 	})
+	if err == nil {
+		err = s.endNests(s.smallest())
+	}
 	if err != nil {
 		return err
 	}
@@ -313,9 +337,8 @@ func (s *State) sweep() error {
 // sweptScores forms the scores of units, and their second moments within, from the
 // second moments of their rows.
 func (s *State) sweptScores(sc *Scores, theta []float64) {
-	l := s.lay
-	p, k := l.p0+2, l.p0+1
-	kind := l.design.Spec.WeightKind
+	kind := s.lay.design.Spec.WeightKind
+	p := s.lay.p0 + 2
 	z := make([]float64, p*(p+1)/2)
 	sc.skip = func(parts []groupPart) bool {
 		var rows int64
@@ -326,7 +349,7 @@ func (s *State) sweptScores(sc *Scores, theta []float64) {
 		}
 		return rows == 1 && (kind != stream.Frequency || w == 1)
 	}
-	sc.form = func(c *Cluster, parts []groupPart) {
+	s.withinScores(sc, theta, func(_ *Cluster, parts []groupPart, within, gross []float64) {
 		clear(z)
 		for i := range parts {
 			unit := sc.stores[parts[i].tag].unit
@@ -334,21 +357,37 @@ func (s *State) sweptScores(sc *Scores, theta []float64) {
 				z[q] += f.float(unit)
 			}
 		}
-		at := func(a, b int) (within, gross float64) {
-			if a == 0 || b == 0 {
-				return 0, 0
+		q := 0
+		for hi := range p {
+			for lo := range hi + 1 {
+				y := z[lo*(lo+1)/2] / z[0] * z[hi*(hi+1)/2]
+				within[q], gross[q] = z[q]-y, math.Abs(z[q])+math.Abs(y)
+				q++
 			}
-			lo, hi := min(a, b), max(a, b)
-			x := z[hi*(hi+1)/2+lo]
-			y := z[lo*(lo+1)/2] / z[0] * z[hi*(hi+1)/2]
-			return x - y, math.Abs(x) + math.Abs(y)
 		}
+	})
+}
+
+// withinScores forms scores from second moments within units, packed. fill sets them,
+// and the size of what was added up for each, from zeros.
+func (s *State) withinScores(sc *Scores, theta []float64, fill func(c *Cluster, parts []groupPart, within, gross []float64)) {
+	p, k := s.lay.p0+2, s.lay.p0+1
+	within, gross := make([]float64, p*(p+1)/2), make([]float64, p*(p+1)/2)
+	sc.form = func(c *Cluster, parts []groupPart) {
+		clear(within)
+		clear(gross)
+		fill(c, parts, within, gross)
 		for a := range k {
 			var sum, mag float64
 			for b := range p {
-				x, m := at(a, b)
-				sum = math.FMA(theta[b], x, sum)
-				mag = math.FMA(math.Abs(theta[b]), m, mag)
+				var x float64
+				if a > 0 && b > 0 { // the constant is swept out
+					lo, hi := min(a, b), max(a, b)
+					q := hi*(hi+1)/2 + lo
+					x = within[q]
+					sum = math.FMA(theta[b], x, sum)
+					mag = math.FMA(math.Abs(theta[b]), gross[q], mag)
+				}
 				if c.A != nil && b < k {
 					c.A[a*k+b] = x
 				}

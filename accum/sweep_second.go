@@ -4,7 +4,6 @@ import (
 	"fmt"
 	"hash/maphash"
 	"math"
-	"sync"
 	"sync/atomic"
 
 	"github.com/tallrow/tallrow/stream"
@@ -159,7 +158,7 @@ type sweeper struct {
 func newSweeper(s *State, owners []*owners) *sweeper {
 	w := &sweeper{unitMeans: s.means, key: s.Design.Keys[s.Design.Sweep].Text, ids: make([]int32, stride)}
 	for _, o := range owners {
-		w.owners = append(w.owners, &ownerView{owners: o, in: newInterner(o.in.kind), ids: make([]int32, stride)})
+		w.owners = append(w.owners, &ownerView{o, o.view()})
 	}
 	return w
 }
@@ -255,7 +254,7 @@ func (w *secondWorker) sweep() error {
 		}
 	}
 	for _, o := range s.owners {
-		o.see(&w.block.Key[o.key], ids)
+		o.see(&w.block.Key[o.owners.key], ids)
 	}
 	return nil
 }
@@ -323,10 +322,8 @@ func (w *secondWorker) compact() {
 // owners remembers for each unit the first cluster that it was met in, and whether any
 // unit was met in two: that is a fact of the data, in whatever order they are read.
 type owners struct {
-	key   int
-	mu    sync.Mutex
-	in    *interner
-	of    []atomic.Uint32 // number of the cluster + 1, by unit
+	*sharedKeys
+	of    []atomic.Int32 // number of the cluster, by unit
 	split atomic.Bool
 }
 
@@ -336,34 +333,25 @@ func newOwners(s *State, keys []int) (list []*owners) {
 	d := s.Design
 	for _, k := range keys {
 		if k != d.Sweep && d.Parts[k] == nil {
-			list = append(list, &owners{key: k, in: newInterner(d.Keys[k].Kind), of: make([]atomic.Uint32, s.means.count)})
+			list = append(list, &owners{sharedKeys: newSharedKeys(d, k), of: make([]atomic.Int32, s.means.count)})
 		}
 	}
 	return list
 }
 
-// ownerView is one worker's: clusters have numbers of its own, and those of all.
+// ownerView is one worker's.
 type ownerView struct {
 	*owners
-	in     *interner
-	ids    []int32
-	common []uint32
+	*sharedView
 }
 
 func (o *ownerView) see(v *stream.Vector, units []int32) {
 	if o.split.Load() {
 		return
 	}
-	o.in.ids(v, len(units), o.ids)
-	if from := len(o.common); from < o.in.size() {
-		o.mu.Lock()
-		for id := from; id < o.in.size(); id++ {
-			o.common = append(o.common, uint32(o.owners.in.put(o.in.key(int32(id))))+1)
-		}
-		o.mu.Unlock()
-	}
+	ids := o.number(v, len(units))
 	for r, u := range units {
-		c := o.common[o.ids[r]]
+		c := ids[r]
 		if of := o.of[u].Load(); of != c && (of != 0 || !o.of[u].CompareAndSwap(0, c) && o.of[u].Load() != c) {
 			o.split.Store(true)
 			return

@@ -225,6 +225,11 @@ func (f *fitter) second() error {
 			}
 		}
 	}
+	if key := f.splitKey(); key >= 0 && !rows && f.info().Rewindable && f.o.Passes != 1 {
+		rows = true
+		f.plan.moments, f.plan.needs.Keep = f.plan.needs.Keep, false
+		f.note("second-pass", "rows of some %s lie in several clusters of %s, so that a second pass took the means off every row", x.unit(), f.d.Keys[key].Text)
+	}
 	if s.Swept != nil && s.Dropped && !rows && s.KeepMeans(f.o.Memory/meansShare) != nil {
 		f.note("frame-renewed", "the first pass was repeated: the second moments of each %s outgrew a sixteenth of --memory, and the means for a second pass do not fit either; the moments went to scratch", x.unit())
 		f.plan.needs.Keep = true
@@ -234,7 +239,7 @@ func (f *fitter) second() error {
 		}
 		x, s = f.sol, f.state
 	}
-	if len(f.plan.needs.Clusters) > 0 && s.Dropped {
+	if len(f.plan.needs.Clusters) > 0 && s.Dropped && !(s.Swept != nil && rows) {
 		rows = true
 		f.note("second-pass", "the clusters' second moments outgrew a sixteenth of --memory; a second pass kept scores only")
 	}

@@ -101,6 +101,9 @@ func (f *fitter) cluster(e *Errors, k Kind) {
 		}
 		x.infer(e, x.nothing(df), f.o.Level, f.o.Covariance)
 		return
+	case missing && s.Swept != nil && slices.Contains(f.plan.needs.Clusters, k.Cluster) && !s.Nested(k.Cluster):
+		x.unavailable(e, "rows of some %s lie in several clusters of %s, which takes a second pass with the means of each; use --passes 2", x.unit(), f.d.Keys[k.Cluster].Text)
+		return
 	case missing:
 		x.unavailable(e, "the sums of the clusters were not kept")
 		return
@@ -186,7 +189,7 @@ func (f *fitter) nested(key int) bool {
 	if i := slices.Index(f.keys, key); f.sums != nil && i >= 0 && f.sums.Nested != nil {
 		return f.sums.Nested[i]
 	}
-	return f.state.Swept != nil && key == f.d.Sweep
+	return f.state.Nested(key)
 }
 
 // kept reports whether pass one holds the second moments of a key for good.

@@ -72,6 +72,7 @@ const (
 	costKey           = 15.0  // finding the cluster of a row
 	costClusterPair   = 2.0   // second moments of clusters, for each product
 	costScore         = 2.0   // scores of clusters, for each term
+	costMean          = 2.0   // taking the mean of a unit off, for each term
 	costCell          = 4.0   // sums of a unique row
 	costCellWord      = 3.0   // finding it, for each number or level that makes it
 	costCellMiss      = 8e-4  // the caches that it misses, for each of them there is
@@ -238,6 +239,9 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	if len(full) > 0 {
 		unique.two += moments - scores
 	}
+	if d.Sweep >= 0 && !rows {
+		rows = p.planOuter(d, &o, info, moments+costKey, unique.two+costKey+c*costMean)
+	}
 	if !ordered && d.Sweep < 0 && !(cats && d.Buckets >= 0) && ((rows || hc) && len(clusters) == 0 || rows && !cats) {
 		if err := p.planCells(ctx, src, d, &o, &unique); err != nil {
 			return nil, err
@@ -331,6 +335,8 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 		route = append(route, "cluster sums")
 		switch {
 		case p.needs.Keep: // the reason stands above
+		case d.Sweep >= 0 && !slices.Contains(p.needs.Clusters, d.Sweep):
+			p.why("clusters keep their second moments; beyond a sixteenth of --memory a second pass is made with the means of each %s, if those fit", d.Keys[d.Sweep].Text)
 		case d.Sweep >= 0:
 			p.why("each %s keeps its second moments, so that errors that join its rows need no second pass; beyond a sixteenth of --memory one is made with its means, if those fit", d.Keys[d.Sweep].Text)
 		case info.Rewindable:
@@ -365,7 +371,7 @@ func PlanFit(ctx context.Context, src stream.Source, d *stream.Design, o Options
 	}
 	if d.Sweep >= 0 {
 		p.units(d, rows, int64(c)-1)
-		if len(p.needs.Clusters) == 0 {
+		if !slices.Contains(p.needs.Clusters, d.Sweep) {
 			p.cost("unit sums", costKey+c*costScore)
 			route = append([]string{"unit sums"}, route...)
 		}

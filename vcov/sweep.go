@@ -3,6 +3,7 @@ package vcov
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"github.com/tallrow/tallrow/accum"
 	"github.com/tallrow/tallrow/stream"
@@ -182,23 +183,72 @@ func (o *Options) planSweep(d *stream.Design) error {
 }
 
 // rowSweep names a kind of errors that needs the rows less the means of their units:
-// all but classical errors and those by the units themselves.
+// all but classical errors, those by the units themselves, and those of one way, which
+// clusters may give that hold whole units.
 func (o *Options) rowSweep(d *stream.Design) string {
 	for _, k := range o.Errors {
 		switch {
 		case rowKind(k.Name):
 			return k.Name
-		case k.Cluster >= 0 && k.Cluster != d.Sweep:
+		case k.Cluster >= 0 && k.Cluster != d.Sweep && (overTime(k.Name) || d.Parts[k.Cluster] != nil):
 			return k.Name + "(" + d.Keys[k.Cluster].Text + ")"
 		}
 	}
 	return ""
 }
 
+// outerSweep names a kind of errors by clusters that must hold whole units, unless rows
+// are read again less the means of their units.
+func (o *Options) outerSweep(d *stream.Design) string {
+	for _, k := range o.Errors {
+		if k.Cluster >= 0 && k.Cluster != d.Sweep {
+			return k.Name + "(" + d.Keys[k.Cluster].Text + ")"
+		}
+	}
+	return ""
+}
+
+// planOuter decides whether errors by clusters beyond the units get a second pass, given
+// what either way costs a row.
+func (p *Plan) planOuter(d *stream.Design, o *Options, info stream.Info, one, two float64) (rows bool) {
+	by, unit := o.outerSweep(d), d.Keys[d.Sweep].Text
+	switch {
+	case by == "" || o.Passes == 2:
+		return false // nothing to decide here
+	case o.Passes == 1 || !info.Rewindable:
+		p.why("each %s keeps which clusters its rows lie in: %s takes one pass if all lie in one cluster, and is not given else", unit, by)
+		return false
+	case two < one:
+		p.why("%s takes the means of units off every row in a second pass (about %.0f ns a row), which is cheaper than second moments of clusters in the first (about %.0f)", by, two, one)
+		return true
+	}
+	p.why("each %s keeps which clusters its rows lie in: %s takes one pass if all lie in one cluster (about %.0f ns a row), else a second (about %.0f)", unit, by, one, two)
+	return false
+}
+
+// splitKey is a clustering whose sums of pass one are of no use, since rows of a unit lie
+// in several of its clusters; -1 for none.
+func (f *fitter) splitKey() int {
+	for _, key := range f.plan.needs.Clusters {
+		if f.state.Swept != nil && !f.state.Nested(key) {
+			return key
+		}
+	}
+	return -1
+}
+
 // units tells what units take, for c columns.
 func (p *Plan) units(d *stream.Design, rows bool, c int64) {
-	text, each := d.Keys[d.Sweep].Text, accum.ClusterBytes(int(c+1))
-	if len(p.needs.Clusters) > 0 {
+	outer := int64(len(p.needs.Clusters))
+	own := slices.Contains(p.needs.Clusters, d.Sweep)
+	if own {
+		outer--
+	}
+	text, each := d.Keys[d.Sweep].Text, accum.ClusterBytes(int(c+1+outer))
+	switch {
+	case own && outer > 0:
+		each += p.PerCluster
+	case own:
 		each = p.PerCluster
 	}
 	p.why("the effects of %s are swept out of the sums: what each value keeps takes about %d bytes, beyond five eighths of --memory on scratch", text, each)

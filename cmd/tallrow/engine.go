@@ -121,7 +121,7 @@ func (a *app) wantsSpool(s *settings, req request) bool {
 		if vcov.NeedsRows(k.Name) {
 			return true
 		}
-		if s.sweep != "" && k.Name != "classical" && (k.Cluster < 0 || k.Cluster >= len(req.keys) || req.keys[k.Cluster] != s.sweep) {
+		if s.sweep != "" && k.Name != "classical" && (k.Cluster < 0 || k.Cluster >= len(req.keys) || k.Name == "driscoll-kraay") {
 			return true // rows less the means of their units
 		}
 	}
