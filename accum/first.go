@@ -169,7 +169,7 @@ func newFirstWorker(l *layout, ld *loader, needs *Needs, b *budget, pairs []*pai
 		w.cells = newCells(unique)
 	}
 	if st := stores[len(stores)-1]; st != nil {
-		w.units = newUnitGroups(ld, st)
+		w.units = newUnitGroups(ld, st, b)
 		for _, k := range b.nested {
 			w.owners = append(w.owners, k.view())
 		}

@@ -58,7 +58,8 @@ type State struct {
 	Unread   stream.Unread // counted as read and excluded, and among Segments, but not read
 	// Fingerprint identifies the used cells of the input.
 	Fingerprint string
-	// Dropped: cluster sums were wanted and outgrew their share of memory.
+	// Dropped: cluster sums were wanted and outgrew their share of memory, or are of no
+	// use (see Nested).
 	Dropped bool
 	// Coarse: keyed sums may have lost digits, since their sizes differ too much or
 	// the input cannot be read again.

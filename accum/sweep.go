@@ -48,15 +48,15 @@ func (e *SingletonsError) Error() string {
 const wideUnit = 0x1p60
 
 // newUnitGroups makes the sums of units of one worker.
-func newUnitGroups(ld *loader, st *groupStore) *groups {
+func newUnitGroups(ld *loader, st *groupStore, b *budget) *groups {
 	n := st.width - st.owners
 	switch {
 	case ld.wide != nil:
-		return newGroups(st, n, st.owners, addOwned(addWide(st.unit), st.owners))
+		return newGroups(st, n, st.owners, addOwned(addWide(st.unit), st.owners, b.giveUp))
 	case ld.root != nil:
-		return newGroups(st, n+1, st.owners, addOwned(addScaled, st.owners))
+		return newGroups(st, n+1, st.owners, addOwned(addScaled, st.owners, b.giveUp))
 	}
-	return newGroups(st, n, st.owners, addOwned(addPlain, st.owners))
+	return newGroups(st, n, st.owners, addOwned(addPlain, st.owners, b.giveUp))
 }
 
 // addPlain adds a row's numbers.

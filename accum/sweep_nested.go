@@ -57,8 +57,9 @@ func mergeSums(dst, src []fixed, owners int) {
 	}
 }
 
-// addOwned lets add see the numbers of a row, and joins the row's owners.
-func addOwned(add rowAdder, owners int) rowAdder {
+// addOwned lets add see the numbers of a row, and joins the row's owners. It calls split
+// where rows of a unit have two within a fold.
+func addOwned(add rowAdder, owners int, split func()) rowAdder {
 	if owners == 0 {
 		return add
 	}
@@ -72,8 +73,10 @@ func addOwned(add rowAdder, owners int) rowAdder {
 				case x:
 				case 0:
 					own[i] = x
+				case -1:
 				default:
 					own[i] = -1
+					split()
 				}
 			}
 		}
@@ -119,6 +122,14 @@ func (v *sharedView) number(cells *stream.Vector, n int) []int32 {
 		ids[r] = v.common[id]
 	}
 	return ids
+}
+
+// giveUp drops the second moments of clusters that do not hold whole units, unless there
+// is no second pass. Folds are cut by the input, so that it hangs on that alone.
+func (b *budget) giveUp() {
+	if !b.keep && !b.dropped.Swap(true) {
+		b.pool.drop(b.besideUnits)
+	}
 }
 
 // numbersShare of the memory is what the numbers of clusters may take.

@@ -297,7 +297,10 @@ func TestWantsSpool(t *testing.T) {
 		{[]string{"terms", "x", "sweep", "g"}, "-", false},
 		{[]string{"terms", "x", "sweep", "g", "errors", "classical, cr1(g)"}, "-", false},
 		{[]string{"terms", "x", "sweep", "g", "errors", "hc1"}, "-", true},
-		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(q)"}, "-", true},
+		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(q)"}, "-", false},
+		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(q)", "passes", "2"}, "-", true},
+		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(q), hc1"}, "-", true},
+		{[]string{"terms", "x", "sweep", "g", "errors", "driscoll-kraay(q)"}, "-", true},
 		{[]string{"terms", "x", "sweep", "g", "errors", "cr1(g, q)"}, "-", true},
 		{[]string{"terms", strings.Repeat("x, ", 25) + "x"}, "-", true},
 	} {
