@@ -425,6 +425,9 @@ func (a *archive) first(w *firstWorker) {
 		a.super(w.fourX...)
 	}
 	a.numbering(b.num)
+	for _, s := range b.nested {
+		a.interner(s.in)
+	}
 	for _, t := range w.tables {
 		a.table(t)
 	}
@@ -492,7 +495,7 @@ func (a *archive) second(w *secondWorker) {
 		for i := range o.of {
 			x := uint64(o.of[i].Load())
 			a.word(&x)
-			o.of[i].Store(uint32(x))
+			o.of[i].Store(int32(x))
 		}
 		split := o.split.Load()
 		a.bool(&split)

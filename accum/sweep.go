@@ -52,11 +52,11 @@ func newUnitGroups(ld *loader, st *groupStore, b *budget) *groups {
 	n := st.width - st.owners
 	switch {
 	case ld.wide != nil:
-		return newGroups(st, n, st.owners, addOwned(addWide(st.unit), st.owners, b.giveUp))
+		return newGroups(st, n, st.owners, addOwned(addWide(st.unit), st.owners, b.split))
 	case ld.root != nil:
-		return newGroups(st, n+1, st.owners, addOwned(addScaled, st.owners, b.giveUp))
+		return newGroups(st, n+1, st.owners, addOwned(addScaled, st.owners, b.split))
 	}
-	return newGroups(st, n, st.owners, addOwned(addPlain, st.owners, b.giveUp))
+	return newGroups(st, n, st.owners, addOwned(addPlain, st.owners, b.split))
 }
 
 // addPlain adds a row's numbers.

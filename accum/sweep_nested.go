@@ -124,11 +124,12 @@ func (v *sharedView) number(cells *stream.Vector, n int) []int32 {
 	return ids
 }
 
-// giveUp drops the second moments of clusters that do not hold whole units, unless there
-// is no second pass. Folds are cut by the input, so that it hangs on that alone.
-func (b *budget) giveUp() {
+// split gives up the second moments of clusters where some do not hold whole units,
+// unless there is no second pass. Folds are cut by the input, so that it hangs on that
+// alone.
+func (b *budget) split() {
 	if !b.keep && !b.dropped.Swap(true) {
-		b.pool.drop(b.besideUnits)
+		b.giveUp()
 	}
 }
 

@@ -132,6 +132,8 @@ func TestStopAndGo(t *testing.T) {
 		{"clusters given up", tb.source(1024), stream.Spec{Outcome: "minutes", Terms: x, Keys: []string{"berth"}}, vcov.Options{Errors: kinds("cr1"), ClusterMemory: 2000, Passes: 0}, true},
 		{"spilled", wide.source(1024), stream.Spec{Outcome: "minutes", Terms: x, Keys: []string{"berth", "crew"}, Crossed: [][]int{{0, 1}}}, vcov.Options{Errors: kinds("cr1:2"), Memory: 600 << 10, ClusterMemory: 1 << 23, Passes: 1}, false},
 		{"swept, clusters given up", units.source(512), stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "wet"}, Sweep: "crane", Keys: []string{"crane", "quay"}}, vcov.Options{Errors: kinds("classical", "cr1"), ClusterMemory: 20 << 10}, true},
+		{"swept, clusters of whole units", units.source(512), stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "wet"}, Sweep: "crane", Keys: []string{"crane", "quay"}}, vcov.Options{Errors: kinds("classical", "cr2:1", "cr1:1", "cr1"), Passes: 1}, false},
+		{"swept, clusters that split units", units.source(512), stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "wet"}, Sweep: "crane", Keys: []string{"crane", "night", "quay"}}, vcov.Options{Errors: kinds("classical", "cr1:1", "cr1:2")}, true},
 		{"swept, with categories", units.source(512), stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "each(night)"}, Sweep: "crane", Keys: []string{"crane", "quay"}}, vcov.Options{Errors: kinds("classical", "hc1", "cr1:1")}, true},
 		{"swept", units.source(512), stream.Spec{Outcome: "minutes", Terms: []string{"pallets", "tonnes", "wet"}, Sweep: "crane", Keys: []string{"crane", "quay"}}, vcov.Options{Errors: kinds("classical", "hc1", "hc3", "cr1", "cr1:1")}, true},
 	}
