@@ -210,6 +210,8 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 			rows = true
 		case (k.Name == "hc0" || k.Name == "hc1") && kept.Fourth:
 			f.plan.needs.Fourth = true
+		case len(d.Categories) > 0:
+			return nil, stream.Usef("errors: %s with category terms is summed row by row, when the coefficients are known; make a second round (tallrow digest --at), or fit the data", k.Name)
 		case k.Name == "hc0" || k.Name == "hc1":
 			return nil, stream.Usef("errors: %s needs fourth moments, which these sums do not hold; make the digest with --errors %s, or a second round with --at", k.Name, k.Name)
 		case k.Cluster >= 0:
