@@ -129,15 +129,7 @@ func (s *superSum) value() float64 {
 	case s.special == seenNegInf:
 		return math.Inf(-1)
 	}
-	t := *s
-	t.carry()
-	neg := t.digit[superDigits-1] < 0
-	if neg {
-		for i := range t.digit {
-			t.digit[i] = -t.digit[i]
-		}
-		t.carry()
-	}
+	t, neg := s.magnitude()
 	top := superDigits - 1
 	for top > 0 && t.digit[top] == 0 {
 		top--
@@ -156,6 +148,19 @@ func (s *superSum) value() float64 {
 		rest |= d
 	}
 	return roundBits(neg, hi, lo, rest != 0, 32*first-1074)
+}
+
+// magnitude returns |s| with digits carried, and whether s is negative.
+func (s *superSum) magnitude() (t superSum, neg bool) {
+	t = *s
+	t.carry()
+	if neg = t.digit[superDigits-1] < 0; neg {
+		for i := range t.digit {
+			t.digit[i] = -t.digit[i]
+		}
+		t.carry()
+	}
+	return t, neg
 }
 
 // roundBits returns ±(hi:lo + r) 2^exp rounded to nearest, ties to even, where r

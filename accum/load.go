@@ -91,20 +91,8 @@ func Load(ctx context.Context, d *stream.Design, h *Header, next func() (*Record
 		}
 		ld.epochs = append(ld.epochs, e)
 	}
-	for n := 0; ; n++ {
-		r, err := next()
-		if err != nil {
-			return nil, err
-		}
-		if r == nil {
-			break
-		}
-		if n%4096 == 0 && ctx.Err() != nil {
-			return nil, ctx.Err()
-		}
-		if err := ld.take(r, p); err != nil {
-			return nil, fmt.Errorf("%s sums of table %d: %w", r.What, r.Table, err)
-		}
+	if err := takeAll(ctx, next, func(r *Record) error { return ld.take(r, p) }); err != nil {
+		return nil, err
 	}
 	if err := ld.end(); err != nil {
 		return nil, err
@@ -131,6 +119,22 @@ func Load(ctx context.Context, d *stream.Design, h *Header, next func() (*Record
 		}
 	}
 	return s, nil
+}
+
+// takeAll takes every record that next hands out.
+func takeAll(ctx context.Context, next func() (*Record, error), take func(*Record) error) error {
+	for n := 0; ; n++ {
+		r, err := next()
+		if r == nil || err != nil {
+			return err
+		}
+		if n%4096 == 0 && ctx.Err() != nil {
+			return ctx.Err()
+		}
+		if err := take(r); err != nil {
+			return fmt.Errorf("%s sums of table %d: %w", r.What, r.Table, err)
+		}
+	}
 }
 
 // sumsLoader puts records into epochs.

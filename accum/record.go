@@ -147,15 +147,7 @@ const limbDigits = 3
 // limbs appends the sum as whole numbers of up to 96 bits, all of its sign, without
 // zeros at either end: a form that hangs on the value alone.
 func (s *superSum) limbs(dst []Whole) (unit int, _ []Whole) {
-	t := *s
-	t.carry()
-	neg := t.digit[superDigits-1] < 0
-	if neg {
-		for i := range t.digit {
-			t.digit[i] = -t.digit[i]
-		}
-		t.carry()
-	}
+	t, neg := s.magnitude()
 	first, top := 0, superDigits-1
 	for top >= 0 && t.digit[top] == 0 {
 		top--

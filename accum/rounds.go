@@ -231,20 +231,8 @@ func LoadRows(ctx context.Context, s *State, rp RowPass, h *RowHeader, next func
 	p := newPass(nil, nil)
 	p.bytes = h.Bytes
 	ld := &rowsLoader{sumsLoader: sumsLoader{lay: s.lay, num: nil}, s: s, w: w, meats: meats}
-	for n := 0; ; n++ {
-		r, err := next()
-		if err != nil {
-			return nil, err
-		}
-		if r == nil {
-			break
-		}
-		if n%4096 == 0 && ctx.Err() != nil {
-			return nil, ctx.Err()
-		}
-		if err := ld.take(r, p); err != nil {
-			return nil, fmt.Errorf("%s sums of table %d: %w", r.What, r.Table, err)
-		}
+	if err := takeAll(ctx, next, func(r *Record) error { return ld.take(r, p) }); err != nil {
+		return nil, err
 	}
 	if err := ld.end(); err != nil {
 		return nil, err

@@ -149,27 +149,15 @@ func (a *app) secondRound(ctx context.Context, s *settings) (*made, error) {
 	r := &digest.Run{Parts: parts, Have: []int{s.part}, Files: files, ID: hash(model.Fingerprint(), stamp, fmt.Sprint(parts), m.Second.Of)}
 	m.Runs = []*digest.Run{r}
 	m.Second.Places = []int{run}
-	var veil accum.Hide
-	if hide != nil {
-		kinds := make([]stream.Kind, len(p.design.Keys))
-		for i := range kinds {
-			kinds[i] = p.design.Keys[i].Kind
-		}
-		veil = func(key int, k accum.Key) (string, bool) { return hide(k), model.Hidden[key] }
+	veil, kinds := hidden(p.design, &model, hide)
+	if veil != nil {
 		m.Second.Header.Conceal(kinds, veil)
 	}
-	if err := sums.Records(run, w.Write, veil); err != nil {
-		return nil, writing(s.output, err)
-	}
-	if err := w.Close(m); err != nil {
-		return nil, writing(s.output, err)
-	}
-	st, err := os.Stat(s.output)
+	d, err := s.finish(w, m, sums.Records(run, w.Write, veil))
 	if err != nil {
 		return nil, err
 	}
-	d := describeDigest(m, s.output, st.Size())
-	d.Format, d.done = "tallrow-digest-made/1", p.done
+	d.done = p.done
 	return d, nil
 }
 
