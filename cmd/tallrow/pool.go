@@ -57,6 +57,13 @@ func (a *app) pool(ctx context.Context, s *settings) (*made, error) {
 		}
 		return nil, stream.Usef("%s: is no digest; pool joins what tallrow digest has made", s.data[0])
 	}
+	if out, err := os.Stat(s.output); err == nil {
+		for _, n := range names {
+			if in, err := os.Stat(n); err == nil && os.SameFile(in, out) {
+				return nil, stream.Usef("%s %s: would write over one of the digests", s.origin("output"), s.output)
+			}
+		}
+	}
 	rs, _, shut, err := a.openDigests(ctx, s, names)
 	if err != nil {
 		return nil, err

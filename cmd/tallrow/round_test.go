@@ -216,6 +216,7 @@ func TestSameRowsTwice(t *testing.T) {
 	if code, _, errw := try(context.Background(), pipe, slices.Concat(model, []string{"-", "-o", in("pipe.digest")})...); code != exitDone {
 		t.Fatal(errw)
 	}
+	fails(t, exitUse, "would write over one of the digests", "pool", in("file.digest"), "-o", in("file.digest"))
 	fails(t, exitFailed, "they have used the same cells", "pool", in("file.digest"), in("pipe.digest"), "-o", in("both.digest"))
 }
 
