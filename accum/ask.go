@@ -78,7 +78,7 @@ func (s *State) Ask(d *stream.Design) (*State, error) {
 	a := *s
 	a.Design, a.lay, a.Extended, a.Wide, a.base = d, l, false, nil, s
 	a.Frame = buildFrame(s.askedRows(l, from, outcome), l.p0, l.shifted())
-	b := askMap(full, s.Frame, l, a.Frame, from, outcome)
+	b := frameMap(full, s.Frame, l, a.Frame, from, outcome)
 	a.maps = make([][]float64, len(s.epochs))
 	for i := range s.epochs {
 		a.maps[i] = rectangle(b, s.maps[i], l.width, full.width)
@@ -204,69 +204,6 @@ func (s *State) askedRows(l *layout, from []int, outcome int) *frameRows {
 		}
 	}
 	return r
-}
-
-// askMap is the l.width x full.width matrix B with z' = B z.
-func askMap(full *layout, f *Frame, l *layout, to *Frame, from []int, outcome int) []float64 {
-	w := full.width
-	b := make([]float64, l.width*w)
-	b[0] = 1
-	var back []float64
-	if f.White {
-		back = invertUpper(f.T, full.p0, full.p0)
-	}
-	// scaled is the raw column n less shift, times inv, over (1, u) of the full frame.
-	scaled := func(n int, shift, inv float64) []float64 {
-		row := make([]float64, w)
-		r := inv / f.Inv[n]
-		row[0] = (f.Shift[n] - shift) * inv
-		if f.White {
-			for a := 0; a <= n; a++ {
-				row[1+a] = back[a*full.p0+n] * r
-			}
-		} else {
-			row[1+n] = r
-		}
-		return row
-	}
-	c := make([][]float64, l.p0)
-	for j, n := range from {
-		c[j] = scaled(n, to.Shift[j], to.Inv[j])
-	}
-	for k := range l.p0 {
-		row := b[(1+k)*w : (2+k)*w]
-		for i := 0; i <= k; i++ {
-			t := 0.0
-			switch {
-			case to.White:
-				t = to.T[i*l.p0+k]
-			case i == k:
-				t = 1
-			}
-			if t != 0 {
-				for a, x := range c[i] {
-					row[a] += t * x
-				}
-			}
-		}
-	}
-	row := b[l.v()*w : (l.v()+1)*w]
-	if outcome >= 0 {
-		copy(row, scaled(outcome, to.YShift, to.YInv))
-	} else {
-		r := to.YInv / f.YInv
-		row[0] = (f.YShift - to.YShift) * to.YInv
-		row[full.v()] = r
-		for a, h := range f.H {
-			row[1+a] = r * h
-		}
-	}
-	for k, h := range to.H {
-		for a := range w {
-			row[a] -= h * b[(1+k)*w+a]
-		}
-	}
-	return b
 }
 
 // rectangle returns A B for A m x n and B n x n.

@@ -6,35 +6,58 @@ import "github.com/tallrow/tallrow/accum/internal/kernel"
 // row in two frames.
 func denseMap(l *layout, from, to *Frame) []float64 {
 	w := l.width
-	j := make([]float64, w*w)
 	if from == to {
+		j := make([]float64, w*w)
 		for i := range w {
 			j[i*w+i] = 1
 		}
 		return j
 	}
-	j[0] = 1
-	// c in units of from, as combinations of its (1, u).
-	var back []float64
-	if from.White {
-		back = invertUpper(from.T, l.p0, l.p0)
+	every := make([]int, l.p0)
+	for i := range every {
+		every[i] = i
 	}
-	c := make([][]float64, l.p0) // rows of length p0+1
-	for i := range l.p0 {
-		row := make([]float64, l.p0+1)
-		r := to.Inv[i] / from.Inv[i]
-		row[0] = (from.Shift[i] - to.Shift[i]) * to.Inv[i]
-		if from.White {
-			for a := 0; a <= i; a++ {
-				row[1+a] = back[a*l.p0+i] * r
+	j := frameMap(l, from, l, to, every, -1)
+	for f, d := range l.factors {
+		i := l.p0 + 2 + f
+		j[i*w] = (from.Shift[d] - to.Shift[d]) * to.Inv[d]
+		j[i*w+i] = to.Inv[d] / from.Inv[d]
+	}
+	return j
+}
+
+// frameMap is the l.width x full.width matrix B with z' = B z for the same row: z in
+// frame f of layout full, z' in frame to of layout l, whose numeric terms are terms
+// from of full and whose outcome is that of full (outcome -1) or a term of it. The rows
+// of factors are left zero.
+func frameMap(full *layout, f *Frame, l *layout, to *Frame, from []int, outcome int) []float64 {
+	w := full.width
+	b := make([]float64, l.width*w)
+	b[0] = 1
+	var back []float64
+	if f.White {
+		back = invertUpper(f.T, full.p0, full.p0)
+	}
+	// scaled is the raw column n less shift, times inv, over (1, u) of the full frame.
+	scaled := func(n int, shift, inv float64) []float64 {
+		row := make([]float64, w)
+		r := inv / f.Inv[n]
+		row[0] = (f.Shift[n] - shift) * inv
+		if f.White {
+			for a := 0; a <= n; a++ {
+				row[1+a] = back[a*full.p0+n] * r
 			}
 		} else {
-			row[1+i] = r
+			row[1+n] = r
 		}
-		c[i] = row
+		return row
+	}
+	c := make([][]float64, l.p0)
+	for j, n := range from {
+		c[j] = scaled(n, to.Shift[j], to.Inv[j])
 	}
 	for k := range l.p0 {
-		row := j[(1+k)*w:]
+		row := b[(1+k)*w : (2+k)*w]
 		for i := 0; i <= k; i++ {
 			t := 0.0
 			switch {
@@ -43,33 +66,30 @@ func denseMap(l *layout, from, to *Frame) []float64 {
 			case i == k:
 				t = 1
 			}
-			if t == 0 {
-				continue
-			}
-			for a, x := range c[i] {
-				row[a] += t * x
+			if t != 0 {
+				for a, x := range c[i] {
+					row[a] += t * x
+				}
 			}
 		}
 	}
-	// y = YShift + (v + H u) / YInv in both frames.
-	r := to.YInv / from.YInv
-	row := j[l.v()*w:]
-	row[0] = (from.YShift - to.YShift) * to.YInv
-	row[l.v()] = r
-	for a, h := range from.H {
-		row[1+a] = r * h
+	row := b[l.v()*w : (l.v()+1)*w]
+	if outcome >= 0 {
+		copy(row, scaled(outcome, to.YShift, to.YInv))
+	} else {
+		r := to.YInv / f.YInv
+		row[0] = (f.YShift - to.YShift) * to.YInv
+		row[full.v()] = r
+		for a, h := range f.H {
+			row[1+a] = r * h
+		}
 	}
 	for k, h := range to.H {
-		for a := range l.p0 + 1 {
-			row[a] -= h * j[(1+k)*w+a]
+		for a := range w {
+			row[a] -= h * b[(1+k)*w+a]
 		}
 	}
-	for f, d := range l.factors {
-		i := l.p0 + 2 + f
-		j[i*w] = (from.Shift[d] - to.Shift[d]) * to.Inv[d]
-		j[i*w+i] = to.Inv[d] / from.Inv[d]
-	}
-	return j
+	return b
 }
 
 // congruence returns J A J' for n x n matrices.

@@ -140,7 +140,7 @@ func takeAll(ctx context.Context, next func() (*Record, error), take func(*Recor
 // sumsLoader puts records into epochs.
 type sumsLoader struct {
 	lay    *layout
-	num    *numbering
+	num    numberer
 	needs  *Needs
 	epochs []*epoch
 	into   map[*groupStore]*groupLoader

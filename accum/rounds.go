@@ -230,7 +230,7 @@ func LoadRows(ctx context.Context, s *State, rp RowPass, h *RowHeader, next func
 	w.maxLever, w.loneRows, w.heavyCount = float64(h.MaxLeverage), h.LoneRows, h.HeavyRows
 	p := newPass(nil, nil)
 	p.bytes = h.Bytes
-	ld := &rowsLoader{sumsLoader: sumsLoader{lay: s.lay, num: nil}, s: s, w: w, meats: meats}
+	ld := &rowsLoader{sumsLoader: sumsLoader{lay: s.lay, num: places{s}}, w: w, meats: meats}
 	if err := takeAll(ctx, next, func(r *Record) error { return ld.take(r, p) }); err != nil {
 		return nil, err
 	}
@@ -279,28 +279,8 @@ func (s *State) unchangedPart(p *pass) error {
 // rowsLoader puts the records of a pass over rows into a worker.
 type rowsLoader struct {
 	sumsLoader
-	s     *State
 	w     *secondWorker
 	meats []*meat
-}
-
-// placeOf finds the combination of a table that key starts with.
-func (ld *rowsLoader) placeOf(table int, key []byte) (id int32, rest []byte, err error) {
-	cats := ld.lay.tables[table].cats
-	levels := make([]int32, len(cats))
-	for i, c := range cats {
-		var k Key
-		if k, key, err = parsePart(ld.lay.design.Categories[c].Kind, key); err != nil {
-			return 0, nil, err
-		}
-		if levels[i] = ld.s.levels[c].find(k); levels[i] < 0 {
-			return 0, nil, errPlace
-		}
-	}
-	if id = int32(ld.s.combos[table].find(levels)); id < 0 {
-		return 0, nil, errPlace
-	}
-	return id, key, nil
 }
 
 func (ld *rowsLoader) take(r *Record, p *pass) error {
@@ -334,7 +314,7 @@ func (ld *rowsLoader) take(r *Record, p *pass) error {
 		if r.Table < 0 || r.Table >= len(m.tables) {
 			return errPlace
 		}
-		id, rest, err := ld.placeOf(r.Table, r.Key)
+		id, rest, err := ld.combo(r.Table, r.Key)
 		if err != nil {
 			return err
 		}
@@ -344,11 +324,11 @@ func (ld *rowsLoader) take(r *Record, p *pass) error {
 			return errPlace
 		}
 		spec := &ld.lay.pairs[r.Table]
-		a, rest, err := ld.placeOf(spec.g, r.Key)
+		a, rest, err := ld.combo(spec.g, r.Key)
 		if err != nil {
 			return err
 		}
-		b, rest, err := ld.placeOf(spec.h, rest)
+		b, rest, err := ld.combo(spec.h, rest)
 		if err != nil {
 			return err
 		}

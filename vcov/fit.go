@@ -69,18 +69,27 @@ func Fit(ctx context.Context, src stream.Source, d *stream.Design, o Options) (*
 		return nil, err
 	}
 	begin := time.Now()
+	r, err := f.answer()
+	if err != nil {
+		return nil, err
+	}
+	f.timings(r, time.Since(begin))
+	r.Run.Seconds = Number(time.Since(start).Seconds())
+	return r, nil
+}
+
+// answer is the result of all sums that the passes have left.
+func (f *fitter) answer() (*Result, error) {
 	if err := f.clusters(); err != nil {
 		return nil, err
 	}
 	r, err := f.result()
+	if err == nil {
+		err = f.fail
+	}
 	if err != nil {
 		return nil, err
 	}
-	if f.fail != nil {
-		return nil, f.fail
-	}
-	f.timings(r, time.Since(begin))
-	r.Run.Seconds = Number(time.Since(start).Seconds())
 	return r, nil
 }
 

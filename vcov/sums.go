@@ -106,11 +106,8 @@ func forRows(ctx context.Context, s *accum.State, o Options) (*fitter, error) {
 	for _, k := range o.Errors {
 		f.plan.moments = f.plan.moments || o.wantsMoments(s.Design, k)
 	}
-	if err := f.solve(s); err != nil {
+	if err := f.solveSums(s); err != nil {
 		return nil, err
-	}
-	if len(s.Groups) > 0 || f.sol.rss == f.sol.svv {
-		f.sol.settle()
 	}
 	return f, nil
 }
@@ -238,11 +235,8 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 			f.plan.needs.Clusters = append(f.plan.needs.Clusters, key)
 		}
 	}
-	if err := f.solve(s); err != nil {
+	if err := f.solveSums(s); err != nil {
 		return nil, err
-	}
-	if len(s.Groups) > 0 || f.sol.rss == f.sol.svv {
-		f.sol.settle()
 	}
 	f.sumLoss()
 	if err := f.second(); err != nil {
@@ -253,18 +247,23 @@ func FitSums(ctx context.Context, s *accum.State, kept Kept, o Options) (*Result
 			return nil, err
 		}
 	}
-	if err := f.clusters(); err != nil {
-		return nil, err
-	}
-	r, err := f.result()
+	r, err := f.answer()
 	if err != nil {
 		return nil, err
 	}
-	if f.fail != nil {
-		return nil, f.fail
-	}
 	r.Run.Seconds = Number(time.Since(start).Seconds())
 	return r, nil
+}
+
+// solveSums solves a state that cannot be summed anew in another frame.
+func (f *fitter) solveSums(s *accum.State) error {
+	if err := f.solve(s); err != nil {
+		return err
+	}
+	if len(s.Groups) > 0 || f.sol.rss == f.sol.svv {
+		f.sol.settle()
+	}
+	return nil
 }
 
 // info is what is known of the input; nothing of one that only sums are left of.

@@ -176,9 +176,6 @@ func (w *Writer) Abort() {
 	}
 }
 
-// Temporary is the name that the file has until it is complete.
-func (w *Writer) Temporary() string { return w.file.Name() }
-
 func syncDir(name string) error {
 	d, err := os.Open(name)
 	if err != nil {
